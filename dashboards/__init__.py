@@ -1,0 +1,1 @@
+"""Published tables in, static HTML out. No arithmetic that a published table does not hold."""

@@ -1,0 +1,180 @@
+"""programme.toml: what a programme may set, with defaults, limits and meanings.
+
+Settings that change results are part of the analysis fingerprint; settings that change only execution are not.
+The template that `burdenline init` writes is made from the same dataclasses, so no setting exists in two places.
+"""
+
+from __future__ import annotations
+
+import difflib
+import tomllib
+from dataclasses import Field, asdict, dataclass, field, fields
+from pathlib import Path
+from typing import Any
+from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+
+class SettingsError(ValueError):
+    """programme.toml cannot be used; the message names the file, the key, what was found and what is expected."""
+
+
+def _setting(default: Any, meaning: str, low: float | None = None, high: float | None = None) -> Any:
+    return field(default=default, metadata={"meaning": meaning, "low": low, "high": high})
+
+
+@dataclass(frozen=True)
+class ProgrammeSettings:
+    """Who runs the programme and where."""
+
+    name: str = _setting("unnamed programme", "name on the pages")
+    zone: str = _setting("UTC", "IANA time zone of patients whose register row has none")
+
+
+@dataclass(frozen=True)
+class DetectorSettings:
+    """Changes results: part of the fingerprint."""
+
+    bigeminy_min_cycles: int = _setting(3, "ectopic-normal pairs in a row that make bigeminy", 2, 20)
+    trigeminy_min_cycles: int = _setting(3, "ectopic-normal-normal triples in a row that make trigeminy", 2, 20)
+    pause_ms: int = _setting(2000, "RR interval that counts as a pause, ms", 1000, 10000)
+    full_pause_tolerance_pct: float = _setting(8.0, "how far a full compensatory pause may miss 2 sinus cycles, %", 1, 20)
+
+
+@dataclass(frozen=True)
+class WearSettings:
+    """What counts as a valid day and as enough of them. Common practice, no standard exists."""
+
+    min_analysable_h_per_day: float = _setting(10.0, "analysable hours that make a valid day", 0.05, 23)
+    min_days_per_period: int = _setting(2, "valid days that a period needs for a verdict", 1, 60)
+
+
+@dataclass(frozen=True)
+class ChangeSettings:
+    """How baseline, settling and after periods are cut and judged."""
+
+    baseline_days: int = _setting(28, "days before the therapy event that may serve as baseline", 1, 365)
+    after_days: int = _setting(90, "days after settling that may serve as the after period", 1, 730)
+    settling_days_medication: int = _setting(7, "days after a medication event that are left out", 0, 365)
+    settling_days_ablation: int = _setting(14, "days after an ablation that are left out", 0, 365)
+    settling_days_other: int = _setting(7, "days after any other event that are left out", 0, 365)
+    success_limit_pct: float = _setting(80.0, "reduction that the programme calls success, %", 1, 99.9)
+
+
+@dataclass(frozen=True)
+class AttentionSettings:
+    """Reference lines of the attention list; never a verdict."""
+
+    v_burden_pct: float = _setting(10.0, "ventricular burden of a valid day, %", 0.1, 100)
+    run_beats: int = _setting(3, "beats of a ventricular run", 3, 100)
+    fast_run_bpm: float = _setting(120.0, "rate of a ventricular run, 1/min", 60, 300)
+    pause_ms: int = _setting(3000, "pause, ms", 1000, 10000)
+
+
+@dataclass(frozen=True)
+class InboxSettings:
+    """When a file in the inbox may be touched, and how large an archive may grow."""
+
+    quiet_s: float = _setting(0.0, "seconds that a file must have stayed unchanged", 0, 86400)
+    done_marker: str = _setting("", "suffix of a marker file that says a delivery is complete, empty for none")
+    accepted_files: str = _setting("leave", "what happens to accepted files: leave or remove")
+
+
+@dataclass(frozen=True)
+class WorkersSettings:
+    """Execution only: never changes a result."""
+
+    processes: int = _setting(1, "recordings analysed at the same time on this host", 1, 256)
+
+
+RESULT_SECTIONS = ("detector",)
+
+
+@dataclass(frozen=True)
+class Settings:
+    """All sections of programme.toml."""
+
+    programme: ProgrammeSettings = field(default_factory=ProgrammeSettings)
+    detector: DetectorSettings = field(default_factory=DetectorSettings)
+    wear: WearSettings = field(default_factory=WearSettings)
+    change: ChangeSettings = field(default_factory=ChangeSettings)
+    attention: AttentionSettings = field(default_factory=AttentionSettings)
+    inbox: InboxSettings = field(default_factory=InboxSettings)
+    workers: WorkersSettings = field(default_factory=WorkersSettings)
+
+
+def load(path: Path) -> Settings:
+    """Read and check programme.toml; raises SettingsError with file, key, found and expected."""
+    try:
+        raw = tomllib.loads(path.read_text(encoding="utf-8"))
+    except FileNotFoundError:
+        raise SettingsError(
+            f"{path} not found: this is not a programme folder; `burdenline init {path.parent}` makes one"
+        ) from None
+    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as problem:
+        raise SettingsError(f"{path}: not readable as TOML: {problem}") from None
+    sections = {section.name: section.default_factory for section in fields(Settings)}
+    _refuse_unknown(path, "section", raw, list(sections))
+    return Settings(**{name: _section(path, name, kind, raw.get(name, {})) for name, kind in sections.items()})
+
+
+def _section(path: Path, name: str, kind: Any, raw: Any) -> Any:
+    if not isinstance(raw, dict):
+        raise SettingsError(f"{path}: {name} is {raw!r}; expected a section [{name}]")
+    known = {setting.name: setting for setting in fields(kind)}
+    _refuse_unknown(path, f"[{name}] setting", raw, list(known))
+    return kind(**{key: _value(f"{path}: [{name}] {key}", known[key], value) for key, value in raw.items()})
+
+
+def _value(where: str, setting: Field[Any], value: Any) -> Any:
+    expected = type(setting.default)
+    if expected is float and type(value) is int:
+        value = float(value)
+    if type(value) is not expected:
+        raise SettingsError(f"{where} = {value!r}; expected a value like {setting.default!r}")
+    low, high = setting.metadata["low"], setting.metadata["high"]
+    if low is not None and not low <= value <= high:
+        raise SettingsError(f"{where} = {value}; expected {low} to {high} ({setting.metadata['meaning']})")
+    if setting.name == "zone":
+        check_zone(where, value)
+    if setting.name == "accepted_files" and value not in ("leave", "remove"):
+        raise SettingsError(f"{where} = {value!r}; expected leave or remove")
+    return value
+
+
+def check_zone(where: str, zone: str) -> None:
+    """Refuse a zone that the time zone database does not know."""
+    try:
+        ZoneInfo(zone)
+    except (ZoneInfoNotFoundError, ValueError, OSError):
+        raise SettingsError(f"{where} = {zone!r}; expected an IANA time zone such as Europe/Lisbon") from None
+
+
+def _refuse_unknown(path: Path, what: str, found: dict[str, Any], known: list[str]) -> None:
+    for name in found:
+        if name not in known:
+            near = difflib.get_close_matches(name, known, n=1)
+            hint = f"did you mean {near[0]}?" if near else f"known: {', '.join(known)}"
+            raise SettingsError(f"{path}: unknown {what} {name}; {hint}")
+
+
+def template(name: str, zone: str) -> str:
+    """Text of a programme.toml with every setting at its default and its meaning beside it."""
+    lines = ["# Settings of this programme. Delete a line to use its default; an unknown name is refused.", ""]
+    for section in fields(Settings):
+        lines.append(f"[{section.name}]")
+        values = asdict(section.default_factory())  # type: ignore[misc]  # every section has a factory
+        if section.name == "programme":
+            values |= {"name": name, "zone": zone}
+        for setting in fields(section.default_factory):  # type: ignore[arg-type]
+            lines.append(f"{setting.name} = {_toml(values[setting.name])}  # {setting.metadata['meaning']}")
+        lines.append("")
+    return "\n".join(lines)
+
+
+def _toml(value: Any) -> str:
+    return '"' + value.replace("\\", "\\\\").replace('"', '\\"') + '"' if isinstance(value, str) else str(value)
+
+
+def result_settings(settings: Settings) -> dict[str, Any]:
+    """The settings that change results, for the fingerprint."""
+    return {section: asdict(getattr(settings, section)) for section in RESULT_SECTIONS}

@@ -1,0 +1,1 @@
+"""Column dictionary, immutable parts, ledger, SQL models, checks and publication. Knows nothing of signals or pages."""

@@ -1,0 +1,348 @@
+"""The one column dictionary: every column's type, unit and meaning, and every table's grain and columns.
+
+DDL, part validation, COMMENTs, the `data_dictionary` table and its page are all made from here.
+A column name means the same thing in every table that carries it.
+Instants are UTC without zone in storage (`TIMESTAMP`, microseconds); the zone stands in its own column.
+Missing is NULL, never 0.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+
+@dataclass(frozen=True)
+class Column:
+    """One column name with its DuckDB type, unit ('' when it has none) and meaning in one sentence."""
+
+    name: str
+    type: str
+    unit: str
+    meaning: str
+
+
+@dataclass(frozen=True)
+class Table:
+    """One table: what a row is, which columns identify a row, which columns it has (names from COLUMNS)."""
+
+    name: str
+    grain: str
+    key: tuple[str, ...]
+    columns: tuple[str, ...]
+
+
+def _dictionary(*rows: tuple[str, str, str, str]) -> dict[str, Column]:
+    named = {row[0]: Column(*row) for row in rows}
+    if len(named) != len(rows):
+        raise ValueError("a column is described twice in the dictionary")
+    return named
+
+
+COLUMNS: dict[str, Column] = _dictionary(
+    # identity
+    ("patient_code", "VARCHAR", "", "Pseudonymous code of the patient, as in the register."),
+    ("delivery_id", "VARCHAR", "", "Code of one arrived file set: derived from its bytes and its name."),
+    ("recording_id", "VARCHAR", "", "Code of one wearing of one patch: device serial and first day of the wear."),
+    ("device_serial", "VARCHAR", "", "Serial of the patch, as in the register."),
+    ("therapy_id", "VARCHAR", "", "Code of one therapy event of the register."),
+    ("fingerprint", "VARCHAR", "", "Hash of the detector version and of every setting that changes results."),
+    ("segment", "SMALLINT", "", "Number of the gap-free segment within the recording, from 0."),
+    # deliveries
+    ("file_name", "VARCHAR", "", "File name as delivered when it holds only register codes; masked otherwise."),
+    ("file_bytes", "BIGINT", "bytes", "Size of the delivered file or file set."),
+    ("content_sha256", "VARCHAR", "", "SHA-256 of the delivered bytes."),
+    ("signal_sha256", "VARCHAR", "", "SHA-256 of samples and rate, the same under any header."),
+    ("received_utc", "TIMESTAMP", "UTC", "Modification time of the delivered file."),
+    ("status", "VARCHAR", "", "accepted, waiting, skipped or quarantined."),
+    ("code", "VARCHAR", "", "Reason code when the delivery was not accepted."),
+    ("reason", "VARCHAR", "", "What was found, what was expected and what to do, in one sentence."),
+    ("format", "VARCHAR", "", "File format recognised from the bytes."),
+    ("findings", "VARCHAR", "", "Codes of oddities that were accepted, separated by blanks."),
+    # recordings and segments
+    ("start_utc", "TIMESTAMP", "UTC", "First instant."),
+    ("end_utc", "TIMESTAMP", "UTC", "Instant after the last sample."),
+    ("zone", "VARCHAR", "", "IANA time zone in which local days and hours are counted."),
+    ("zone_source", "VARCHAR", "", "Where the zone came from: file, patient or programme."),
+    ("fs_hz", "DOUBLE", "Hz", "Sampling rate."),
+    ("lead", "VARCHAR", "", "Lead label as written in the file."),
+    ("mv_per_count", "DOUBLE", "mV", "Millivolts per stored count."),
+    ("count_at_zero_mv", "DOUBLE", "counts", "Stored count that stands for 0 mV."),
+    ("segment_count", "SMALLINT", "", "Number of gap-free segments."),
+    ("sample_count", "BIGINT", "samples", "Number of samples."),
+    ("recorded_h", "DOUBLE", "h", "Hours that hold samples."),
+    ("worn_h", "DOUBLE", "h", "Hours with the patch connected to the skin."),
+    ("analysable_h", "DOUBLE", "h", "Hours worn, connected and clean enough to classify beats."),
+    ("recorded_s", "DOUBLE", "s", "Seconds that hold samples."),
+    ("worn_s", "DOUBLE", "s", "Seconds with the patch connected to the skin."),
+    ("analysable_s", "DOUBLE", "s", "Seconds worn, connected and clean enough to classify beats."),
+    ("block", "INTEGER", "", "Number of the stored sample block within the segment, from 0."),
+    ("difference", "SMALLINT", "counts", "Sample minus the one before, modulo 65,536; the block's first stands whole."),
+    # beats
+    ("sample", "BIGINT", "samples", "Index of the R peak within its segment, from 0."),
+    ("beat_utc", "TIMESTAMP", "UTC", "Instant of the R peak."),
+    ("rr_before_ms", "REAL", "ms", "Time since the beat before, NULL after a gap."),
+    ("rr_after_ms", "REAL", "ms", "Time to the beat after, NULL before a gap."),
+    ("beat_class", "VARCHAR", "", "N normal, S supraventricular ectopic, V ventricular ectopic, F fusion, Q unclassifiable."),
+    ("class_probability", "REAL", "", "Estimated probability that the class is right."),
+    ("family", "SMALLINT", "", "Number of the shape family within the recording, -1 for none."),
+    ("qrs_width_ms", "REAL", "ms", "QRS width of the beat or the family's averaged beat."),
+    ("amplitude_mv", "REAL", "mV", "R amplitude against the local baseline, signed."),
+    ("polarity", "TINYINT", "", "1 upright, -1 inverted main deflection."),
+    ("coupling_ms", "REAL", "ms", "Coupling interval of a premature beat, NULL for others."),
+    ("prematurity_pct", "REAL", "%", "How much earlier than expected from the local normal interval; negative is late."),
+    ("pause_kind", "VARCHAR", "", "Pause after an ectopic beat: full, reset or interpolated; NULL when none applies."),
+    ("r_on_t_index", "REAL", "", "Coupling interval over the estimated QT interval; small values lie on the T wave."),
+    ("is_escape", "BOOLEAN", "", "Late ventricular beat that ends a pause; it is not premature."),
+    ("is_analysable", "BOOLEAN", "", "The beat lies in analysable time and counts in numerator and denominator."),
+    # families
+    ("family_class", "VARCHAR", "", "Class that most beats of the family carry."),
+    ("beat_count", "BIGINT", "beats", "Number of beats."),
+    ("share_pct", "DOUBLE", "%", "Share of the recording's analysable beats."),
+    ("shape_mv", "REAL[]", "mV", "Averaged beat from 280 ms before to 440 ms after the R peak, 125 values a second."),
+    ("mean_coupling_ms", "REAL", "ms", "Mean coupling interval of the family's premature beats."),
+    ("coupling_spread_ms", "REAL", "ms", "90th minus 10th percentile of the coupling interval."),
+    # episodes
+    ("episode_kind", "VARCHAR", "", "couplet, run, sv_run, bigeminy, trigeminy, pause or irregular."),
+    ("first_sample", "BIGINT", "samples", "First sample within the segment."),
+    ("last_sample", "BIGINT", "samples", "Last sample within the segment."),
+    ("duration_s", "DOUBLE", "s", "Length in seconds."),
+    ("rate_bpm", "REAL", "1/min", "Mean rate of the beats of the episode."),
+    # quality
+    ("quality_reason", "VARCHAR", "", "Why the window is not analysable: flat, rail, noise, lead_off or missing."),
+    # tallies
+    ("quarter_utc", "TIMESTAMP", "UTC", "Start of the quarter of an hour."),
+    ("hour_utc", "TIMESTAMP", "UTC", "Start of the hour."),
+    ("local_day", "DATE", "", "Calendar day at the patient's place."),
+    ("clock_hour", "SMALLINT", "h", "Hour of the day at the patient's place, 0 to 23."),
+    ("day_h", "DOUBLE", "h", "Length of the local calendar day: 23, 24 or 25 hours."),
+    ("n_beats", "BIGINT", "beats", "Analysable beats of class N."),
+    ("s_beats", "BIGINT", "beats", "Analysable beats of class S."),
+    ("v_beats", "BIGINT", "beats", "Analysable beats of class V."),
+    ("f_beats", "BIGINT", "beats", "Analysable beats of class F."),
+    ("q_beats", "BIGINT", "beats", "Analysable beats of class Q."),
+    ("all_beats", "BIGINT", "beats", "Analysable beats of all classes: the denominator of every burden."),
+    ("rr_sum_s", "DOUBLE", "s", "Sum of the RR intervals that count for the mean rate."),
+    ("rr_count", "BIGINT", "", "Number of RR intervals that count for the mean rate."),
+    ("mean_rate_bpm", "DOUBLE", "1/min", "Mean heart rate: 60 over the mean RR interval between analysable beats."),
+    ("couplets", "BIGINT", "", "Ventricular couplets that begin here."),
+    ("runs", "BIGINT", "", "Ventricular runs of three or more beats that begin here."),
+    ("sv_runs", "BIGINT", "", "Supraventricular runs of three or more beats that begin here."),
+    ("pauses", "BIGINT", "", "Pauses that begin here."),
+    ("longest_run_beats", "BIGINT", "beats", "Beats of the longest ventricular run."),
+    ("fastest_run_bpm", "REAL", "1/min", "Rate of the fastest ventricular run."),
+    ("longest_pause_ms", "REAL", "ms", "Longest pause."),
+    ("bigeminy_s", "DOUBLE", "s", "Seconds in ventricular bigeminy."),
+    ("trigeminy_s", "DOUBLE", "s", "Seconds in ventricular trigeminy."),
+    ("irregular_s", "DOUBLE", "s", "Seconds of irregular rhythm that looks like atrial fibrillation (context only)."),
+    ("v_burden_pct", "DOUBLE", "%", "Ventricular ectopic beats per 100 analysable beats (fusion beats not counted)."),
+    ("s_burden_pct", "DOUBLE", "%", "Supraventricular ectopic beats per 100 analysable beats."),
+    ("v_per_h", "DOUBLE", "1/h", "Ventricular ectopic beats per analysable hour."),
+    ("clock_hours_covered", "SMALLINT", "h", "Clock hours with at least 15 analysable minutes."),
+    ("is_valid_day", "BOOLEAN", "", "The day has at least the programme's minimum of analysable hours."),
+    # therapies, periods, changes
+    ("therapy_kind", "VARCHAR", "", "medication_start, medication_stop, dose_change, ablation or other."),
+    ("therapy_detail", "VARCHAR", "", "Substance and dose, or the procedure, as written in the register."),
+    ("therapy_day", "DATE", "", "Local day of the therapy event."),
+    ("period", "VARCHAR", "", "baseline, settling or after."),
+    ("first_day", "DATE", "", "First local day of the span."),
+    ("last_day", "DATE", "", "Last local day of the span."),
+    ("wear_days", "BIGINT", "d", "Days with any wear."),
+    ("valid_days", "BIGINT", "d", "Days that reach the minimum of analysable hours."),
+    ("clock_coverage_pct", "DOUBLE", "%", "Share of the 24 clock hours with analysable time in the span."),
+    ("measure", "VARCHAR", "", "What is compared: v_burden_pct, v_per_h, s_burden_pct or mean_rate_bpm."),
+    ("baseline_value", "DOUBLE", "as the measure", "Value before the therapy event, standardised over clock hours."),
+    ("after_value", "DOUBLE", "as the measure", "Value after the settling time, standardised over clock hours."),
+    ("baseline_days", "BIGINT", "d", "Valid days used before the therapy event."),
+    ("after_days", "BIGINT", "d", "Valid days used after the settling time."),
+    ("baseline_analysable_h", "DOUBLE", "h", "Analysable hours used before."),
+    ("after_analysable_h", "DOUBLE", "h", "Analysable hours used after."),
+    ("baseline_clock_coverage_pct", "DOUBLE", "%", "Share of the 24 clock hours covered before."),
+    ("after_clock_coverage_pct", "DOUBLE", "%", "Share of the 24 clock hours covered after."),
+    ("baseline_rate_bpm", "DOUBLE", "1/min", "Mean heart rate before."),
+    ("after_rate_bpm", "DOUBLE", "1/min", "Mean heart rate after."),
+    ("ratio", "DOUBLE", "", "After over baseline."),
+    ("ratio_low", "DOUBLE", "", "Lower end of the 95 % interval of the ratio."),
+    ("ratio_high", "DOUBLE", "", "Upper end of the 95 % interval of the ratio."),
+    ("change_pct", "DOUBLE", "%", "100 x (ratio - 1)."),
+    ("chance_fall_limit_pct", "DOUBLE", "%", "Smallest fall that spontaneous variation would not explain, one-sided 95 %."),
+    ("chance_rise_limit_pct", "DOUBLE", "%", "Smallest rise that spontaneous variation would not explain, one-sided 95 %."),
+    ("success_probability_pct", "DOUBLE", "%", "Probability that the true reduction exceeds the programme's success limit."),
+    ("variance_source", "VARCHAR", "", "Where the day-to-day variance came from: patient, programme or both."),
+    ("verdict", "VARCHAR", "", "fell_beyond_chance, rose_beyond_chance, within_chance or too_little_wear."),
+    # attention, reviews, runs
+    ("attention_code", "VARCHAR", "", "Reason code of the attention list."),
+    ("attention_reason", "VARCHAR", "", "Why the patient needs a look, in one sentence with its figures."),
+    ("since_day", "DATE", "", "Local day since when the reason holds."),
+    ("attention_rank", "INTEGER", "", "Order on the attention list, 1 first."),
+    ("reader_code", "VARCHAR", "", "Code of the person who over-read."),
+    ("reviewed_utc", "TIMESTAMP", "UTC", "Instant of the review."),
+    ("decision", "VARCHAR", "", "What the reader decided."),
+    ("run_id", "VARCHAR", "", "Code of one run of the nightly flow."),
+    ("finished_utc", "TIMESTAMP", "UTC", "Instant at which the run ended."),
+    ("accepted_count", "BIGINT", "", "Deliveries accepted in the run."),
+    ("waiting_count", "BIGINT", "", "Deliveries that wait."),
+    ("skipped_count", "BIGINT", "", "Deliveries skipped in the run."),
+    ("quarantined_count", "BIGINT", "", "Deliveries quarantined in the run."),
+    ("outcome", "VARCHAR", "", "published, published_with_refusals or not_published."),
+    ("detector_version", "VARCHAR", "", "Version of the detector."),
+    ("settings_json", "VARCHAR", "", "Settings that change results, as JSON."),
+    ("is_published", "BOOLEAN", "", "This fingerprint is the one that the trend tables show."),
+    # strips
+    ("strip_reason", "VARCHAR", "", "Rule by which the strip was chosen."),
+    ("samples_mv", "REAL[]", "mV", "Samples of the strip."),
+    ("beat_samples", "BIGINT[]", "samples", "R peaks within the strip, from its first sample."),
+    ("beat_classes", "VARCHAR[]", "", "Classes of those beats."),
+    # dictionary
+    ("table_name", "VARCHAR", "", "Name of a published table."),
+    ("column_name", "VARCHAR", "", "Name of a column."),
+    ("column_type", "VARCHAR", "", "DuckDB type of the column."),
+    ("unit", "VARCHAR", "", "Unit of the column."),
+    ("meaning", "VARCHAR", "", "Meaning of the column."),
+    ("grain", "VARCHAR", "", "What one row of the table is."),
+)
+
+
+def _tables(*tables: Table) -> dict[str, Table]:
+    for table in tables:
+        unknown = [name for name in (*table.key, *table.columns) if name not in COLUMNS]
+        if unknown or not set(table.key) <= set(table.columns):
+            raise ValueError(f"table {table.name}: columns {unknown} are not in the dictionary, or its key is not")
+    return {table.name: table for table in tables}
+
+
+_COUNTS = ("n_beats", "s_beats", "v_beats", "f_beats", "q_beats", "all_beats")
+_RHYTHM = (
+    "couplets", "runs", "sv_runs", "pauses", "longest_run_beats", "fastest_run_bpm", "longest_pause_ms",
+    "bigeminy_s", "trigeminy_s", "irregular_s",
+)  # fmt: skip
+_DELIVERY = (
+    "delivery_id", "file_name", "file_bytes", "content_sha256", "received_utc", "status", "code", "reason",
+    "format", "findings", "recording_id", "signal_sha256",
+)  # fmt: skip
+_RECORDING = (
+    "recording_id", "device_serial", "start_utc", "end_utc", "zone", "zone_source", "fs_hz", "lead", "mv_per_count",
+    "count_at_zero_mv", "segment_count", "sample_count", "recorded_h", "findings",
+)  # fmt: skip
+
+# Tables of the lake: parts land here, keyed by recording or by run, and are never changed in place.
+LAKE: dict[str, Table] = _tables(
+    Table("deliveries", "one row per file set that arrived", ("delivery_id",), _DELIVERY),
+    Table("recordings", "one row per wearing of one patch", ("recording_id",), _RECORDING),
+    Table(
+        "segments", "one row per gap-free stretch of a recording", ("recording_id", "segment"),
+        ("recording_id", "segment", "start_utc", "end_utc", "sample_count", "delivery_id"),
+    ),
+    Table(
+        "signal", "one row per sample, one part per block of a segment", (),
+        ("difference",),
+    ),
+    Table(
+        "beats", "one row per detected QRS", ("recording_id", "segment", "sample"),
+        ("recording_id", "fingerprint", "segment", "sample", "beat_utc", "rr_before_ms", "rr_after_ms", "beat_class",
+         "class_probability", "family", "qrs_width_ms", "amplitude_mv", "polarity", "coupling_ms", "prematurity_pct",
+         "pause_kind", "r_on_t_index", "is_escape", "is_analysable"),
+    ),
+    Table(
+        "families", "one row per shape family of a recording", ("recording_id", "family"),
+        ("recording_id", "fingerprint", "family", "family_class", "beat_count", "share_pct", "qrs_width_ms",
+         "amplitude_mv", "mean_coupling_ms", "coupling_spread_ms", "shape_mv"),
+    ),
+    Table(
+        "episodes", "one row per couplet, run, bigeminy or trigeminy stretch, pause or irregular stretch",
+        ("recording_id", "episode_kind", "segment", "first_sample"),
+        ("recording_id", "fingerprint", "episode_kind", "segment", "first_sample", "last_sample", "start_utc", "end_utc",
+         "beat_count", "duration_s", "rate_bpm"),
+    ),
+    Table(
+        "quality_windows", "one row per stretch that is not analysable", ("recording_id", "segment", "first_sample"),
+        ("recording_id", "fingerprint", "segment", "first_sample", "last_sample", "start_utc", "end_utc", "duration_s",
+         "quality_reason"),
+    ),
+    Table(
+        "quarter_hours", "one row per recording and quarter of a UTC hour that holds samples",
+        ("recording_id", "quarter_utc"),
+        ("recording_id", "fingerprint", "quarter_utc", "recorded_s", "worn_s", "analysable_s", *_COUNTS, "rr_sum_s",
+         "rr_count", *_RHYTHM),
+    ),
+    Table(
+        "strips", "one row per ECG strip kept for the pages", ("recording_id", "segment", "first_sample"),
+        ("recording_id", "fingerprint", "segment", "first_sample", "start_utc", "fs_hz", "strip_reason", "beat_class",
+         "samples_mv", "beat_samples", "beat_classes"),
+    ),
+    Table(
+        "fingerprints", "one row per detector version and result settings that made beats", ("fingerprint",),
+        ("fingerprint", "detector_version", "settings_json"),
+    ),
+    Table(
+        "runs_of_flow", "one row per run of the nightly flow that had something to do", ("run_id",),
+        ("run_id", "finished_utc", "accepted_count", "waiting_count", "skipped_count", "quarantined_count", "outcome"),
+    ),
+)  # fmt: skip
+
+# Tables of a publication, in the order in which a reader of the database meets them.
+PUBLISHED: dict[str, Table] = _tables(
+    Table("patients", "one row per patient of the register", ("patient_code",), ("patient_code", "zone")),
+    Table("deliveries", "one row per file set that arrived", ("delivery_id",), _DELIVERY),
+    Table(
+        "recordings", "one row per wearing of one patch", ("recording_id",),
+        ("recording_id", "patient_code", *_RECORDING[1:], "worn_h", "analysable_h", "all_beats", "v_beats",
+         "v_burden_pct", "fingerprint"),
+    ),
+    LAKE["segments"],
+    LAKE["beats"],
+    LAKE["families"],
+    LAKE["episodes"],
+    LAKE["quality_windows"],
+    LAKE["strips"],
+    Table(
+        "hours", "one row per recording and UTC hour", ("recording_id", "hour_utc"),
+        ("recording_id", "patient_code", "hour_utc", "recorded_s", "worn_s", "analysable_s", *_COUNTS, "mean_rate_bpm",
+         *_RHYTHM),
+    ),
+    Table(
+        "local_hours", "one row per patient, local day and clock hour with wear",
+        ("patient_code", "local_day", "clock_hour"),
+        ("patient_code", "local_day", "clock_hour", "worn_s", "analysable_s", *_COUNTS, "mean_rate_bpm", "couplets",
+         "runs", "v_burden_pct", "v_per_h"),
+    ),
+    Table(
+        "wear_days", "one row per patient and local calendar day with wear", ("patient_code", "local_day"),
+        ("patient_code", "local_day", "day_h", "recorded_h", "worn_h", "analysable_h", "clock_hours_covered",
+         "is_valid_day", *_COUNTS, "v_burden_pct", "s_burden_pct", "v_per_h", "mean_rate_bpm", *_RHYTHM),
+    ),
+    Table(
+        "therapies", "one row per therapy event of the register", ("therapy_id",),
+        ("therapy_id", "patient_code", "therapy_kind", "therapy_detail", "therapy_day"),
+    ),
+    Table(
+        "periods", "one row per patient, therapy event and period", ("patient_code", "therapy_id", "period"),
+        ("patient_code", "therapy_id", "period", "first_day", "last_day", "wear_days", "valid_days", "worn_h",
+         "analysable_h", "clock_coverage_pct", "all_beats", "v_beats", "s_beats", "v_burden_pct", "s_burden_pct",
+         "v_per_h", "mean_rate_bpm"),
+    ),
+    Table(
+        "changes", "one row per patient, therapy event and measure", ("patient_code", "therapy_id", "measure"),
+        ("patient_code", "therapy_id", "measure", "baseline_value", "after_value", "baseline_days", "after_days",
+         "baseline_analysable_h", "after_analysable_h", "baseline_clock_coverage_pct", "after_clock_coverage_pct",
+         "baseline_rate_bpm", "after_rate_bpm", "ratio", "ratio_low", "ratio_high", "change_pct",
+         "chance_fall_limit_pct", "chance_rise_limit_pct", "success_probability_pct", "variance_source", "verdict",
+         "reason"),
+    ),
+    Table(
+        "attention", "one row per patient and reason for a look", ("patient_code", "attention_code"),
+        ("attention_rank", "patient_code", "attention_code", "attention_reason", "since_day"),
+    ),
+    Table(
+        "reviews", "one row per decision of an over-reader", ("recording_id", "segment", "sample", "reader_code"),
+        ("recording_id", "segment", "sample", "reader_code", "reviewed_utc", "decision"),
+    ),
+    LAKE["runs_of_flow"],
+    Table(
+        "fingerprints", "one row per detector version and result settings that made beats", ("fingerprint",),
+        ("fingerprint", "detector_version", "settings_json", "is_published"),
+    ),
+    Table(
+        "data_dictionary", "one row per published table and column", ("table_name", "column_name"),
+        ("table_name", "grain", "column_name", "column_type", "unit", "meaning"),
+    ),
+)  # fmt: skip
