@@ -67,6 +67,9 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("lead", "VARCHAR", "", "Lead label as written in the file."),
     ("mv_per_count", "DOUBLE", "mV", "Millivolts per stored count."),
     ("count_at_zero_mv", "DOUBLE", "counts", "Stored count that stands for 0 mV."),
+    ("rail_low_count", "INTEGER", "counts", "Lowest count the recorder can store; a run of it is clipped signal."),
+    ("rail_high_count", "INTEGER", "counts", "Highest count the recorder can store; a run of it is clipped signal."),
+    ("missing_count", "INTEGER", "counts", "Count that stands for a missing sample, NULL when the format has none."),
     ("segment_count", "SMALLINT", "", "Number of gap-free segments."),
     ("sample_count", "BIGINT", "samples", "Number of samples."),
     ("recorded_h", "DOUBLE", "h", "Hours that hold samples."),
@@ -221,7 +224,7 @@ _DELIVERY = (
 )  # fmt: skip
 _RECORDING = (
     "recording_id", "device_serial", "start_utc", "end_utc", "zone", "zone_source", "fs_hz", "lead", "mv_per_count",
-    "count_at_zero_mv", "segment_count", "sample_count", "recorded_h", "findings",
+    "count_at_zero_mv", "rail_low_count", "rail_high_count", "missing_count", "segment_count", "sample_count", "recorded_h", "findings",
 )  # fmt: skip
 
 # Tables of the lake: parts land here, keyed by recording or by run, and are never changed in place.

@@ -1,0 +1,178 @@
+"""Landed recording in, landed beats out: run the detector over the lake's samples and write its results as parts.
+
+No detection happens here, only reading, naming and landing.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+from collections.abc import Callable, Mapping, Sequence
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import polars as pl
+
+from detectors.analyse import DETECTOR_VERSION, analyse_recording
+from detectors.results import PAUSE_KINDS, Analysis, Segment
+from detectors.strips import beats_within, choose_strips
+from detectors.tally import quarter_hours
+from flows.settings import Settings, result_settings
+from warehouse.parts import Part, SignalReader, write_part
+from warehouse.schema import LAKE
+
+DERIVED_TABLES = ("beats", "families", "episodes", "quality_windows", "quarter_hours", "strips")
+
+
+def fingerprint_of(settings: Settings) -> str:
+    """Name the detector version and all settings that change results by 12 hex digits."""
+    return hashlib.sha256(_fingerprint_text(settings).encode()).hexdigest()[:12]
+
+
+def _fingerprint_text(settings: Settings) -> str:
+    return json.dumps({"detector": DETECTOR_VERSION, "settings": result_settings(settings)}, sort_keys=True)
+
+
+def fingerprint_part(lake: Path, settings: Settings) -> Part:
+    """Land the row that spells out the fingerprint."""
+    name = fingerprint_of(settings)
+    row = {
+        "fingerprint": name,
+        "detector_version": DETECTOR_VERSION,
+        "settings_json": json.dumps(result_settings(settings), sort_keys=True),
+    }
+    return write_part(lake, "fingerprints", name, pl.DataFrame([row]), fingerprint=name)
+
+
+def analyse_landed(
+    lake: Path,
+    recording: Mapping[str, Any],
+    segments: pl.DataFrame,
+    signal: Sequence[Part],
+    settings: Settings,
+    progress: Callable[[int], None] | None = None,
+) -> Analysis:
+    """Run the detector over one landed recording; `recording` and `segments` are rows of the lake tables."""
+    reader = SignalReader(lake, signal)
+    return analyse_recording(
+        [
+            Segment(int(row["sample_count"]), lambda a, b, number=int(row["segment"]): reader.read(number, a, b))
+            for row in segments.sort("segment").iter_rows(named=True)
+        ],
+        fs_hz=recording["fs_hz"],
+        mv_per_count=recording["mv_per_count"],
+        count_at_zero_mv=recording["count_at_zero_mv"],
+        progress=progress,
+        **result_settings(settings)["detector"],
+    )
+
+
+def land_analysis(
+    lake: Path,
+    recording: Mapping[str, Any],
+    segments: pl.DataFrame,
+    signal: Sequence[Part],
+    analysis: Analysis,
+    fingerprint: str,
+) -> dict[tuple[str, str], list[Part]]:
+    """Write the derived tables of one recording as parts; returns what the ledger must commit."""
+    recording_id = recording["recording_id"]
+    start_us = segments.sort("segment")["start_utc"].dt.timestamp("us").to_numpy()
+    frames = {
+        "beats": _beats(analysis, start_us),
+        "families": _families(analysis),
+        "episodes": _spans(analysis.episodes._asdict(), analysis.fs_hz, start_us),
+        "quality_windows": _spans(analysis.quality._asdict(), analysis.fs_hz, start_us),
+        "quarter_hours": _quarter_hours(analysis, start_us),
+        "strips": _strips(analysis, start_us, recording, SignalReader(lake, signal)),
+    }
+    return {
+        (table, recording_id): [
+            write_part(lake, table, recording_id, _conform(table, frame, recording_id, fingerprint), fingerprint=fingerprint)
+        ]
+        for table, frame in frames.items()
+    }
+
+
+def _conform(table: str, frame: pl.DataFrame, recording_id: str, fingerprint: str) -> pl.DataFrame:
+    named = frame.with_columns(pl.lit(recording_id).alias("recording_id"), pl.lit(fingerprint).alias("fingerprint"))
+    return named.select(LAKE[table].columns)
+
+
+def _instants(start_us: np.ndarray, segment: np.ndarray, sample: np.ndarray, fs_hz: float) -> pl.Series:
+    instant_us = start_us[segment] + np.rint(sample * (1e6 / fs_hz)).astype(np.int64)
+    return pl.Series(instant_us, dtype=pl.Int64).cast(pl.Datetime("us"))
+
+
+def _number_or_null(frame: pl.DataFrame) -> pl.DataFrame:
+    return frame.with_columns(pl.col(pl.Float32, pl.Float64).fill_nan(None))
+
+
+def _beats(analysis: Analysis, start_us: np.ndarray) -> pl.DataFrame:
+    beats = analysis.beats
+    frame = pl.DataFrame(beats._asdict()).with_columns(
+        _instants(start_us, beats.segment, beats.sample, analysis.fs_hz).alias("beat_utc"),
+        pl.Series("pause_kind", np.array([*PAUSE_KINDS])[beats.pause_kind]).replace("", None),
+    )
+    return _number_or_null(frame)
+
+
+def _families(analysis: Analysis) -> pl.DataFrame:
+    families = analysis.families._asdict()
+    shapes = pl.Series("shape_mv", families.pop("shape_mv").tolist(), dtype=pl.List(pl.Float32))
+    numbers = pl.Series("family", np.arange(len(shapes)), dtype=pl.Int16)
+    return _number_or_null(pl.DataFrame(families)).with_columns(numbers, shapes)
+
+
+def _spans(columns: dict[str, np.ndarray], fs_hz: float, start_us: np.ndarray) -> pl.DataFrame:
+    segment, first, end = columns["segment"], columns["first_sample"], columns["last_sample"] + 1
+    frame = pl.DataFrame(columns).with_columns(
+        _instants(start_us, segment, first, fs_hz).alias("start_utc"),
+        _instants(start_us, segment, end, fs_hz).alias("end_utc"),
+        pl.Series("duration_s", columns.get("duration_s", (end - first) / fs_hz), dtype=pl.Float64),
+    )
+    return _number_or_null(frame)
+
+
+def _quarter_hours(analysis: Analysis, start_us: np.ndarray) -> pl.DataFrame:
+    columns = quarter_hours(analysis, start_us)._asdict()
+    quarter_utc = pl.Series("quarter_utc", columns.pop("quarter_us"), dtype=pl.Int64).cast(pl.Datetime("us"))
+    return _number_or_null(pl.DataFrame(columns).with_columns(quarter_utc))
+
+
+def _strips(
+    analysis: Analysis, start_us: np.ndarray, recording: Mapping[str, Any], reader: SignalReader
+) -> pl.DataFrame:
+    rows = []
+    for strip in choose_strips(analysis):
+        counts = reader.read(strip.segment, strip.first_sample, strip.first_sample + strip.n_samples)
+        beats = beats_within(analysis, strip)
+        instant_us = start_us[strip.segment] + round(strip.first_sample * 1e6 / analysis.fs_hz)
+        rows.append(
+            {
+                "segment": strip.segment,
+                "first_sample": strip.first_sample,
+                "start_utc": int(instant_us),
+                "fs_hz": analysis.fs_hz,
+                "strip_reason": strip.strip_reason,
+                "beat_class": strip.beat_class,
+                "samples_mv": ((counts - recording["count_at_zero_mv"]) * recording["mv_per_count"]).tolist(),
+                "beat_samples": (analysis.beats.sample[beats] - strip.first_sample).tolist(),
+                "beat_classes": analysis.beats.beat_class[beats].tolist(),
+            }
+        )
+    return pl.DataFrame(rows, schema=_STRIP_TYPES).with_columns(pl.col("start_utc").cast(pl.Datetime("us")))
+
+
+_STRIP_TYPES = {
+    "segment": pl.Int16,
+    "first_sample": pl.Int64,
+    "start_utc": pl.Int64,
+    "fs_hz": pl.Float64,
+    "strip_reason": pl.String,
+    "beat_class": pl.String,
+    "samples_mv": pl.List(pl.Float32),
+    "beat_samples": pl.List(pl.Int64),
+    "beat_classes": pl.List(pl.String),
+}
