@@ -22,7 +22,7 @@ from flows.settings import Settings, result_settings
 from warehouse.parts import Part, SignalReader, write_part
 from warehouse.schema import LAKE
 
-DERIVED_TABLES = ("beats", "families", "episodes", "quality_windows", "quarter_hours", "strips")
+DERIVED_TABLES = ("beats", "families", "episodes", "quality_windows", "findings", "quarter_hours", "strips")
 
 
 def fingerprint_of(settings: Settings) -> str:
@@ -63,9 +63,16 @@ def analyse_landed(
         fs_hz=recording["fs_hz"],
         mv_per_count=recording["mv_per_count"],
         count_at_zero_mv=recording["count_at_zero_mv"],
+        rails=_rails(recording),
+        missing_count=recording["missing_count"],
         progress=progress,
         **result_settings(settings)["detector"],
     )
+
+
+def _rails(recording: Mapping[str, Any]) -> tuple[int, int] | None:
+    low, high = recording["rail_low_count"], recording["rail_high_count"]
+    return None if low is None or high is None else (low, high)
 
 
 def land_analysis(
@@ -84,6 +91,7 @@ def land_analysis(
         "families": _families(analysis),
         "episodes": _spans(analysis.episodes._asdict(), analysis.fs_hz, start_us),
         "quality_windows": _spans(analysis.quality._asdict(), analysis.fs_hz, start_us),
+        "findings": _findings(analysis),
         "quarter_hours": _quarter_hours(analysis, start_us),
         "strips": _strips(analysis, start_us, recording, SignalReader(lake, signal)),
     }
@@ -133,6 +141,11 @@ def _spans(columns: dict[str, np.ndarray], fs_hz: float, start_us: np.ndarray) -
         pl.Series("duration_s", columns.get("duration_s", (end - first) / fs_hz), dtype=pl.Float64),
     )
     return _number_or_null(frame)
+
+
+def _findings(analysis: Analysis) -> pl.DataFrame:
+    rows = [(finding.code, finding.detail) for finding in analysis.findings]
+    return pl.DataFrame(rows, schema={"finding_code": pl.String, "finding_detail": pl.String}, orient="row")
 
 
 def _quarter_hours(analysis: Analysis, start_us: np.ndarray) -> pl.DataFrame:

@@ -112,6 +112,9 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("rate_bpm", "REAL", "1/min", "Mean rate of the beats of the episode."),
     # quality
     ("quality_reason", "VARCHAR", "", "Why the window is not analysable: flat, rail, noise, lead_off or missing."),
+    # findings
+    ("finding_code", "VARCHAR", "", "Code of something about the whole recording that a reader of its numbers must know."),
+    ("finding_detail", "VARCHAR", "", "The finding in one sentence with its figures."),
     # tallies
     ("quarter_utc", "TIMESTAMP", "UTC", "Start of the quarter of an hour."),
     ("hour_utc", "TIMESTAMP", "UTC", "Start of the hour."),
@@ -262,6 +265,10 @@ LAKE: dict[str, Table] = _tables(
          "quality_reason"),
     ),
     Table(
+        "findings", "one row per recording and finding of the detector", ("recording_id", "finding_code"),
+        ("recording_id", "fingerprint", "finding_code", "finding_detail"),
+    ),
+    Table(
         "quarter_hours", "one row per recording and quarter of a UTC hour that holds samples",
         ("recording_id", "quarter_utc"),
         ("recording_id", "fingerprint", "quarter_utc", "recorded_s", "worn_s", "analysable_s", *_COUNTS, "rr_sum_s",
@@ -296,6 +303,7 @@ PUBLISHED: dict[str, Table] = _tables(
     LAKE["families"],
     LAKE["episodes"],
     LAKE["quality_windows"],
+    LAKE["findings"],
     LAKE["strips"],
     Table(
         "hours", "one row per recording and UTC hour", ("recording_id", "hour_utc"),
