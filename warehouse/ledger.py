@@ -1,0 +1,201 @@
+"""The ledger: which parts of the lake are in force. One Delta table, one transaction per commit, many committers.
+
+Every commit appends rows for the loads it names; a load is the set of parts of one (table, key). The rows of a load's
+latest commit are in force, older ones are history. A row's `commit` is the Delta version that brought it: a commit is
+only accepted as exactly the next version, so two committers can never overwrite each other; the slower one looks again.
+Rows that are history are dropped when the table is written anew every COMPACT_FILES commits.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import time
+from collections.abc import Collection, Mapping, Sequence
+from pathlib import Path
+from typing import NamedTuple
+
+import polars as pl
+from deltalake import CommitProperties, DeltaTable, write_deltalake
+from deltalake.exceptions import DeltaError
+
+from warehouse import schema
+from warehouse.parts import Part, write_whole
+
+LAYOUT = 1
+"""Number of the lake's layout; raised when an older program could no longer read what a newer one wrote."""
+
+COMPACT_FILES = 40
+_READ_BYTES = 2**22
+
+_ROW_SCHEMA: dict[str, pl.DataType] = {
+    "commit": pl.Int64(),
+    "table": pl.String(),
+    "key": pl.String(),
+    "path": pl.String(),  # NULL: the load was withdrawn
+    "sha256": pl.String(),
+    "rows": pl.Int64(),
+    "bytes": pl.Int64(),
+    "fingerprint": pl.String(),
+    "segment": pl.Int16(),
+    "block": pl.Int32(),
+}
+
+
+class LedgerError(RuntimeError):
+    """The ledger cannot be opened or written; the message says what was found and what to do."""
+
+
+class Damage(NamedTuple):
+    """A part in force whose file is not what was landed."""
+
+    path: str
+    problem: str
+
+
+class Ledger:
+    """The parts in force of one lake. Opening a lake that has none yet makes an empty ledger."""
+
+    def __init__(self, lake: Path) -> None:
+        self._lake = lake
+        self._delta = _open_or_create(lake)
+        self._rows: tuple[int, pl.DataFrame] = (-1, pl.DataFrame(schema=_ROW_SCHEMA))
+
+    @property
+    def version(self) -> int:
+        """Number of the latest commit, whoever made it."""
+        self._delta.update_incremental()
+        return self._delta.version()
+
+    def parts(self, table: str | None = None, key: str | None = None) -> list[Part]:
+        """Parts in force, of one table and one key where given, ordered by table, key, segment, block and path."""
+        rows = _in_force(self._read())
+        if table is not None:
+            rows = rows.filter(pl.col("table") == table)
+        if key is not None:
+            rows = rows.filter(pl.col("key") == key)
+        return [Part(*row) for row in rows.select(Part._fields).iter_rows()]
+
+    def commit(self, loads: Mapping[tuple[str, str], Sequence[Part]], *, note: str = "") -> int:
+        """Make the named loads hold exactly the given parts, all at once; an empty sequence withdraws a load.
+
+        Other loads stay as they are. Returns the number of the commit. When another committer was faster, the commit
+        is tried again on top of theirs. Raises LedgerError for parts of another load and for parts without a file.
+        """
+        self._check(loads)
+        while True:
+            version = self.version
+            try:
+                self._append(version + 1, loads, note)
+                return version + 1
+            except DeltaError as problem:
+                if self.version == version:
+                    raise LedgerError(f"cannot write the ledger of {self._lake}: {problem}") from problem
+
+    def _append(self, commit: int, loads: Mapping[tuple[str, str], Sequence[Part]], note: str) -> None:
+        rows = _load_rows(commit, loads)
+        compact = len(self._delta.file_uris()) >= COMPACT_FILES
+        if compact:
+            rows = _in_force(pl.concat([self._read(), rows]))
+        write_deltalake(
+            self._delta,
+            rows,
+            mode="overwrite" if compact else "append",
+            commit_properties=CommitProperties(custom_metadata={"note": note}, max_commit_retries=0),
+        )
+
+    def _check(self, loads: Mapping[tuple[str, str], Sequence[Part]]) -> None:
+        for (table, key), parts in loads.items():
+            if table not in schema.LAKE:
+                raise LedgerError(f"unknown lake table {table!r}; known: {', '.join(schema.LAKE)}")
+            for part in parts:
+                if (part.table, part.key) != (table, key):
+                    raise LedgerError(f"{part.path} belongs to load {part.table}/{part.key}, not to {table}/{key}")
+                if not (self._lake / part.path).is_file():
+                    raise LedgerError(f"{part.path} is not in {self._lake}; write the part before it is committed")
+
+    def _read(self) -> pl.DataFrame:
+        version = self.version
+        if self._rows[0] != version:
+            files = self._delta.file_uris()
+            rows = pl.read_parquet(files).select(list(_ROW_SCHEMA)) if files else pl.DataFrame(schema=_ROW_SCHEMA)
+            self._rows = (version, rows)
+        return self._rows[1]
+
+
+def _load_rows(commit: int, loads: Mapping[tuple[str, str], Sequence[Part]]) -> pl.DataFrame:
+    named = [part for parts in loads.values() for part in parts]
+    withdrawn = [load for load, parts in loads.items() if not parts]
+    rows = [(commit, *part) for part in named] + [(commit, *load, *[None] * 7) for load in withdrawn]
+    return pl.DataFrame(rows, schema={"commit": pl.Int64(), **{n: _ROW_SCHEMA[n] for n in Part._fields}}, orient="row")
+
+
+def _in_force(rows: pl.DataFrame) -> pl.DataFrame:
+    latest = rows.filter(pl.col("commit") == pl.col("commit").max().over("table", "key"))
+    return latest.filter(pl.col("path").is_not_null()).sort("table", "key", "segment", "block", "path")
+
+
+def _open_or_create(lake: Path) -> DeltaTable:
+    folder, layout_file = lake / "ledger", lake / "layout.json"
+    if layout_file.exists():
+        _check_layout(layout_file)
+        if not DeltaTable.is_deltatable(str(folder)):
+            raise LedgerError(
+                f"{folder} is gone, but {lake} holds landed parts; restore the ledger folder from a copy, "
+                f"or remove {lake} whole and run again over the inbox"
+            )
+        return DeltaTable(folder)
+    folder.mkdir(parents=True, exist_ok=True)
+    delta = DeltaTable.create(
+        folder,
+        schema=pl.Schema(_ROW_SCHEMA),
+        mode="ignore",
+        name="ledger",
+        description="which parts of the lake are in force",
+        # The log is the audit trail of every load, so it is never shortened.
+        configuration={"delta.enableExpiredLogCleanup": "false"},
+    )
+    write_whole(layout_file, json.dumps({"layout": LAYOUT}).encode())
+    return delta
+
+
+def _check_layout(layout_file: Path) -> None:
+    found = json.loads(layout_file.read_text(encoding="utf-8")).get("layout")
+    if found != LAYOUT:
+        raise LedgerError(f"{layout_file}: layout {found}; this version of burdenline reads layout {LAYOUT}")
+
+
+def verify(lake: Path) -> list[Damage]:
+    """Every part in force whose file is missing or whose bytes are not those that were landed."""
+    damages = []
+    for part in Ledger(lake).parts():
+        path = lake / part.path
+        if not path.is_file():
+            damages.append(Damage(part.path, "missing"))
+        elif _sha256(path) != part.sha256:
+            damages.append(Damage(part.path, "bytes changed after it landed"))
+    return damages
+
+
+def _sha256(path: Path) -> str:
+    digest = hashlib.sha256()
+    with path.open("rb") as file:
+        while piece := file.read(_READ_BYTES):
+            digest.update(piece)
+    return digest.hexdigest()
+
+
+def tidy(lake: Path, grace_s: float, *, keep: Collection[str] = ()) -> list[str]:
+    """Remove part files that are neither in force nor in `keep` and older than `grace_s`; returns their paths.
+
+    `keep` holds paths relative to the lake that a publication or a data cut still reads. The grace time protects parts
+    that a running load has written and not yet committed.
+    """
+    # Files are listed before the ledger is read: a part committed in between is then in force, not missed.
+    oldest_s = time.time() - grace_s
+    files = [path for table in schema.LAKE for path in (lake / table).glob("*/*") if path.stat().st_mtime <= oldest_s]
+    wanted = {part.path for part in Ledger(lake).parts()} | set(keep)
+    removed = [path for path in files if path.relative_to(lake).as_posix() not in wanted]
+    for path in removed:
+        path.unlink(missing_ok=True)
+    return sorted(path.relative_to(lake).as_posix() for path in removed)
