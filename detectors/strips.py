@@ -1,4 +1,7 @@
-"""Choose the short stretches of ECG that a reader looks at before believing a number. The rules are fixed; no chance is involved."""
+"""Choose the short stretches of ECG that a reader looks at before believing a number.
+
+The rules are fixed; no chance is involved.
+"""
 
 from __future__ import annotations
 
@@ -28,8 +31,8 @@ class Strip(NamedTuple):
 def choose_strips(analysis: Analysis) -> list[Strip]:
     """Return at most MAX_STRIPS strips of STRIP_S seconds that do not overlap, most telling first.
 
-    Order: longest and fastest run, longest pause, first couplet, longest bigeminy, then for V, S and F the typical and the
-    least certain beat of the largest families, then one stretch of the commonest normal rhythm.
+    Order: longest and fastest run, longest pause, fastest couplet, longest bigeminy, then for V, S and F the typical and
+    the least certain beat of the largest families, then one stretch around the middle normal beat.
     A strip is centred on its beat or begins one second before its episode, and is cut at the segment's ends.
     """
     chosen: list[Strip] = []

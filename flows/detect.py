@@ -13,8 +13,8 @@ from typing import Any
 
 import numpy as np
 import polars as pl
-
 from detectors.analyse import DETECTOR_VERSION, analyse_recording
+
 from detectors.results import PAUSE_KINDS, Analysis, Segment
 from detectors.strips import beats_within, choose_strips
 from detectors.tally import quarter_hours
@@ -97,7 +97,9 @@ def land_analysis(
     }
     return {
         (table, recording_id): [
-            write_part(lake, table, recording_id, _conform(table, frame, recording_id, fingerprint), fingerprint=fingerprint)
+            write_part(
+                lake, table, recording_id, _conform(table, frame, recording_id, fingerprint), fingerprint=fingerprint
+            )
         ]
         for table, frame in frames.items()
     }

@@ -37,7 +37,9 @@ class DetectorSettings:
     bigeminy_min_cycles: int = _setting(3, "ectopic-normal pairs in a row that make bigeminy", 2, 20)
     trigeminy_min_cycles: int = _setting(3, "ectopic-normal-normal triples in a row that make trigeminy", 2, 20)
     pause_ms: int = _setting(2000, "RR interval that counts as a pause, ms", 1000, 10000)
-    full_pause_tolerance_pct: float = _setting(8.0, "how far a full compensatory pause may miss 2 sinus cycles, %", 1, 20)
+    full_pause_tolerance_pct: float = _setting(
+        8.0, "how far a full compensatory pause may miss 2 sinus cycles, %", 1, 20
+    )
 
 
 @dataclass(frozen=True)

@@ -1,0 +1,140 @@
+"""The whole job over one programme folder: what arrived, what is new in it, what it means, what is published.
+
+`run` and the scheduled flow are this one composition; only who executes `analyse_all` differs.
+"""
+
+from __future__ import annotations
+
+import multiprocessing
+from collections.abc import Callable, Iterator, Sequence
+from concurrent.futures import ProcessPoolExecutor, as_completed
+from dataclasses import asdict, dataclass
+from pathlib import Path
+from typing import Any
+
+from flows import settings as programme_settings
+from flows.lock import folder_lock
+from flows.progress import Reporter, Silent
+from flows.settings import Settings
+
+DONE, FAILED, USAGE, DONE_WITH_REFUSALS = 0, 1, 2, 3
+
+
+@dataclass(frozen=True)
+class Outcome:
+    """What one run did."""
+
+    outcome: str  # published, published_with_refusals or unchanged
+    accepted: int
+    waiting: int
+    skipped: int
+    quarantined: int
+    analysed_recordings: int
+    pages: str
+    database: str
+
+    @property
+    def exit_code(self) -> int:
+        """0 done, 3 done with refusals."""
+        return DONE_WITH_REFUSALS if self.quarantined else DONE
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain values for --json."""
+        return asdict(self)
+
+
+@dataclass(frozen=True)
+class Work:
+    """One recording to analyse: everything that a worker process needs, picklable."""
+
+    folder: Path
+    recording_id: str
+    settings: Settings
+
+
+Analyse = Callable[[Sequence[Work], Reporter], Iterator[dict]]
+
+
+def run(
+    folder: Path, *, reporter: Reporter | None = None, wait_s: float = 0.0, analyse_all: Analyse | None = None
+) -> Outcome:
+    """Bring the published tables and pages of a programme folder up to date with inbox, register and settings.
+
+    Raises SettingsError, RegisterError, FolderBusy, LedgerError or CheckFailed; the publication then stays as it was.
+    """
+    from flows import ingest, publication, register
+    from warehouse.ledger import Ledger
+
+    reporter = reporter or Silent()
+    settings = programme_settings.load(folder / "programme.toml")
+    with folder_lock(folder, wait_s):
+        people = register.load(folder, settings.programme.zone)
+        ledger = Ledger(folder / "lake")
+        arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)
+        work = [Work(folder, recording_id, settings) for recording_id in unanalysed(ledger, settings)]
+        for loads in (analyse_all or analyse_here)(work, reporter):
+            ledger.commit(loads, note="detect")
+        changed = publication.refresh(folder, settings, people, ledger, arrivals, reporter.say)
+    return Outcome(
+        outcome=_outcome(changed, arrivals.quarantined),
+        accepted=arrivals.accepted,
+        waiting=arrivals.waiting,
+        skipped=arrivals.skipped,
+        quarantined=arrivals.quarantined,
+        analysed_recordings=len(work),
+        pages=str(folder / "published" / "site" / "index.html"),
+        database=str(folder / "published" / "burdenline.duckdb"),
+    )
+
+
+def _outcome(changed: bool, quarantined: int) -> str:
+    if not changed:
+        return "unchanged"
+    return "published_with_refusals" if quarantined else "published"
+
+
+def unanalysed(ledger: Any, settings: Settings) -> list[str]:
+    """Recordings that hold samples but no tallies under the present fingerprint, in order."""
+    from flows.detect import fingerprint_of
+
+    name = fingerprint_of(settings)
+    done = {part.key for part in ledger.parts("quarter_hours") if part.fingerprint == name}
+    return sorted({part.key for part in ledger.parts("recordings")} - done)
+
+
+def analyse_here(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
+    """Analyse recordings on this host, one after the other or in the processes that the settings allow."""
+    processes = min(len(work), work[0].settings.workers.processes) if work else 0
+    if processes <= 1:
+        yield from (analyse_one(item, reporter) for item in work)
+        return
+    # Fresh processes: a fork would inherit the threads of polars in an unknown state.
+    with ProcessPoolExecutor(processes, mp_context=multiprocessing.get_context("spawn")) as pool:
+        running = {pool.submit(analyse_one, item): item for item in work}
+        for number, finished in enumerate(as_completed(running), start=1):
+            reporter.say(f"  analysed {running[finished].recording_id} ({number} of {len(work)})")
+            yield finished.result()
+
+
+def analyse_one(item: Work, reporter: Reporter | None = None) -> dict:
+    """Run the detector over one landed recording and write its parts; returns the loads to commit.
+
+    Doing it twice writes the same files, so a worker that dies can simply be repeated.
+    """
+    from flows import detect
+    from warehouse.ledger import Ledger
+    from warehouse.parts import read_part
+
+    lake = item.folder / "lake"
+    ledger = Ledger(lake)
+    recording = read_part(lake, ledger.parts("recordings", item.recording_id)[0]).row(0, named=True)
+    segments = read_part(lake, ledger.parts("segments", item.recording_id)[0])
+    signal = ledger.parts("signal", item.recording_id)
+    with (reporter or Silent()).recording(item.recording_id, recording["recorded_h"]) as advance:
+        per_hour = 3600.0 * recording["fs_hz"]
+        analysis = detect.analyse_landed(
+            lake, recording, segments, signal, item.settings, lambda samples: advance(samples / per_hour)
+        )
+    name = detect.fingerprint_of(item.settings)
+    loads = detect.land_analysis(lake, recording, segments, signal, analysis, name)
+    return loads | {("fingerprints", name): [detect.fingerprint_part(lake, item.settings)]}
