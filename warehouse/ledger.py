@@ -1,7 +1,8 @@
 """The ledger: which parts of the lake are in force. One Delta table, one transaction per commit, many committers.
 
-Every commit appends rows for the loads it names; a load is the set of parts of one (table, key). The rows of a load's
-latest commit are in force, older ones are history. A row's `commit` is the Delta version that brought it: a commit is
+Every commit appends rows for the loads it names; a load is the set of parts of one table, key and fingerprint, so that
+the results of two detector versions can stand side by side. The rows of a load's latest commit are in force, older ones
+are history. A row's `commit` is the Delta version that brought it: a commit is
 only accepted as exactly the next version, so two committers can never overwrite each other; the slower one looks again.
 Rows that are history are dropped when the table is written anew every COMPACT_FILES commits.
 """
@@ -77,10 +78,11 @@ class Ledger:
         return [Part(*row) for row in rows.select(Part._fields).iter_rows()]
 
     def commit(self, loads: Mapping[tuple[str, str], Sequence[Part]], *, note: str = "") -> int:
-        """Make the named loads hold exactly the given parts, all at once; an empty sequence withdraws a load.
+        """Make the named loads hold exactly the given parts, all at once; `loads` maps (table, key) to parts.
 
-        Other loads stay as they are. Returns the number of the commit. When another committer was faster, the commit
-        is tried again on top of theirs. Raises LedgerError for parts of another load and for parts without a file.
+        Parts of the same table and key under another fingerprint stay; an empty sequence withdraws those of every
+        fingerprint. Other loads stay as they are. Returns the number of the commit. When another committer was faster,
+        it is tried again on top of theirs. Raises LedgerError for parts of another load and for parts without a file.
         """
         self._check(loads)
         while True:
@@ -131,8 +133,11 @@ def _load_rows(commit: int, loads: Mapping[tuple[str, str], Sequence[Part]]) -> 
 
 
 def _in_force(rows: pl.DataFrame) -> pl.DataFrame:
-    latest = rows.filter(pl.col("commit") == pl.col("commit").max().over("table", "key"))
-    return latest.filter(pl.col("path").is_not_null()).sort("table", "key", "segment", "block", "path")
+    commit, is_withdrawal = pl.col("commit"), pl.col("path").is_null()
+    withdrawn = commit.filter(is_withdrawal).max().over("table", "key").fill_null(-1)
+    latest = commit.max().over("table", "key", "fingerprint")
+    in_force = rows.filter((commit == latest) & (commit > withdrawn))
+    return in_force.sort("table", "key", "fingerprint", "segment", "block", "path")
 
 
 def _open_or_create(lake: Path) -> DeltaTable:

@@ -2,7 +2,8 @@
 
 A part is one load of one table: the beats of a recording, a block of a segment's samples, the row of a delivery.
 Its path is `<table>/<key>/<first 16 hex of its SHA-256>.parquet`, so the same rows always land under the same name and
-a changed byte can be found. Which parts are in force is the ledger's business, not this module's.
+a changed byte can be found. Where the key is a recording its folder is called `recording_id=<key>`, so that a query
+over many parts for one recording opens only that recording's. Which parts are in force is the ledger's business.
 """
 
 from __future__ import annotations
@@ -26,7 +27,7 @@ BLOCK_SAMPLES = 2**22
 """Samples of a full signal block: 8 MB decoded, 4.7 h at 250 Hz. Fixed, because block numbers are stored."""
 
 _ROW_GROUP_ROWS = 100_000
-_KEY_PATTERN = re.compile(r"[A-Za-z0-9][A-Za-z0-9._@+=-]{0,120}")
+_KEY_PATTERN = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,120}")
 _TEMP_PREFIX = ".writing-"
 
 
@@ -173,7 +174,9 @@ def _land(lake: Path, part: Part, content: memoryview) -> Part:
     if not _KEY_PATTERN.fullmatch(part.key):
         raise PartError(f"{part.table}: key {part.key!r} is not safe in a path; expected {_KEY_PATTERN.pattern}")
     sha256 = hashlib.sha256(content).hexdigest()
-    path = f"{part.table}/{part.key}/{sha256[:16]}.parquet"
+    keyed_by_recording = schema.LAKE[part.table].key[:1] == ("recording_id",)
+    folder = f"recording_id={part.key}" if keyed_by_recording else part.key
+    path = f"{part.table}/{folder}/{sha256[:16]}.parquet"
     write_whole(lake / path, content)
     return part._replace(path=path, sha256=sha256, bytes=len(content))
 

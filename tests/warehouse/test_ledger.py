@@ -48,6 +48,24 @@ def test_a_commit_replaces_exactly_the_loads_it_names(tmp_path: Path) -> None:
     assert book.parts("fingerprints", "a") == book.parts("beats") == []
 
 
+def test_fingerprints_stand_side_by_side(tmp_path: Path) -> None:
+    """A load under another fingerprint replaces nothing; a withdrawal takes both; later loads count again."""
+    book = Ledger(tmp_path)
+    old, new = (write_part(tmp_path, "findings", "r", _findings(name), fingerprint=name) for name in ("old", "new"))
+    book.commit(_load(old))
+    book.commit(_load(new))
+    assert book.parts("findings", "r") == [new, old]
+    book.commit({("findings", "r"): []})
+    assert book.parts() == []
+    book.commit(_load(old))
+    assert book.parts() == [old]
+
+
+def _findings(fingerprint: str) -> pl.DataFrame:
+    row = {"recording_id": "r", "fingerprint": fingerprint, "finding_code": "noisy", "finding_detail": "x"}
+    return pl.DataFrame([row])
+
+
 def test_signal_parts_come_in_order(tmp_path: Path) -> None:
     """Blocks are listed by segment and block, whatever order they were committed in."""
     book = Ledger(tmp_path)

@@ -39,7 +39,7 @@ def test_the_same_rows_land_under_the_same_name(tmp_path: Path) -> None:
     first = parts.write_part(tmp_path, "segments", "r", SEGMENTS)
     assert parts.write_part(tmp_path, "segments", "r", SEGMENTS) == first
     parts.write_part(tmp_path, "segments", "r", SEGMENTS.head(1))
-    assert len(list((tmp_path / "segments" / "r").iterdir())) == 2
+    assert len(list(tmp_path.glob("segments/recording_id=r/*.parquet"))) == 2
 
 
 @pytest.mark.parametrize(
