@@ -31,7 +31,7 @@ class Strip(NamedTuple):
 def choose_strips(analysis: Analysis) -> list[Strip]:
     """Return at most MAX_STRIPS strips of STRIP_S seconds that do not overlap, most telling first.
 
-    Order: longest and fastest run, longest pause, fastest couplet, longest bigeminy, then for V, S and F the typical and
+    Order: longest and fastest run, longest pause, fastest couplet, longest bigeminy, then for V, S, F the typical and
     the least certain beat of the largest families, then one stretch around the middle normal beat.
     A strip is centred on its beat or begins one second before its episode, and is cut at the segment's ends.
     """

@@ -61,7 +61,7 @@ def _sentence(problem: Exception) -> str:
 def _parser() -> argparse.ArgumentParser:
     parser = argparse.ArgumentParser(
         prog="burdenline",
-        description="Ectopy burden of multi-day single-lead patch recordings: per patient and day, before and after therapy.",
+        description="Ectopy burden of patch recordings, per patient and day, and whether it changed after therapy.",
         epilog=PURPOSE,
     )
     parser.add_argument("--version", action="version", version=_Version())

@@ -9,13 +9,18 @@ import multiprocessing
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor, as_completed
 from dataclasses import asdict, dataclass
+from datetime import UTC, datetime
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 from flows import settings as programme_settings
 from flows.lock import folder_lock
 from flows.progress import Reporter, Silent
 from flows.settings import Settings
+
+if TYPE_CHECKING:
+    from flows.ingest import Arrivals
+    from warehouse.ledger import Ledger
 
 DONE, FAILED, USAGE, DONE_WITH_REFUSALS = 0, 1, 2, 3
 
@@ -74,7 +79,14 @@ def run(
         work = [Work(folder, recording_id, settings) for recording_id in unanalysed(ledger, settings)]
         for loads in (analyse_all or analyse_here)(work, reporter):
             ledger.commit(loads, note="detect")
-        changed = publication.refresh(folder, settings, people, ledger, arrivals, reporter.say)
+        run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
+        if arrivals.changed or work:
+            _note_run(run_id, folder, ledger, arrivals, _outcome(True, arrivals.quarantined))
+        try:
+            changed = publication.refresh(folder, settings, people, ledger, reporter.say)
+        except publication.CheckFailed:
+            _note_run(run_id, folder, ledger, arrivals, "not_published")
+            raise
     return Outcome(
         outcome=_outcome(changed, arrivals.quarantined),
         accepted=arrivals.accepted,
@@ -93,7 +105,26 @@ def _outcome(changed: bool, quarantined: int) -> str:
     return "published_with_refusals" if quarantined else "published"
 
 
-def unanalysed(ledger: Any, settings: Settings) -> list[str]:
+def _note_run(run_id: str, folder: Path, ledger: Ledger, arrivals: Arrivals, outcome: str) -> None:
+    """Keep one row about this run; a run that found nothing to do leaves no row."""
+    import polars as pl
+
+    from warehouse.parts import write_part
+
+    row = {
+        "run_id": run_id,
+        "finished_utc": datetime.now(UTC).replace(tzinfo=None),
+        "accepted_count": arrivals.accepted,
+        "waiting_count": arrivals.waiting,
+        "skipped_count": arrivals.skipped,
+        "quarantined_count": arrivals.quarantined,
+        "outcome": outcome,
+    }
+    part = write_part(folder / "lake", "runs_of_flow", run_id, pl.DataFrame([row]))
+    ledger.commit({("runs_of_flow", run_id): [part]}, note="run")
+
+
+def unanalysed(ledger: Ledger, settings: Settings) -> list[str]:
     """Recordings that hold samples but no tallies under the present fingerprint, in order."""
     from flows.detect import fingerprint_of
 

@@ -1,0 +1,102 @@
+"""From landed parts to the published database and pages: build, compare periods, check, publish.
+
+Nothing is published when a check returns a row; the publication of the day before then stays.
+"""
+
+from __future__ import annotations
+
+import tempfile
+from collections.abc import Callable
+from dataclasses import asdict
+from importlib.metadata import version
+from pathlib import Path
+
+import polars as pl
+
+from dashboards.site import build_site
+from flows import detect, trends
+from flows.register import Register
+from flows.settings import ChangeSettings, Settings
+from warehouse.build import TrendBuild
+from warehouse.ledger import Ledger
+from warehouse.publish import publish
+
+SHOWN_ROWS = 3
+
+
+class CheckFailed(RuntimeError):
+    """A claim about the published tables does not hold; the message names the claim and its first rows."""
+
+
+def refresh(folder: Path, settings: Settings, people: Register, ledger: Ledger, say: Callable[[str], None]) -> bool:
+    """Build all tables from the parts in force, check them, publish them with their pages; returns whether anything changed.
+
+    Raises CheckFailed when a check returns a row.
+    """
+    say("building tables")
+    register = _register_frames(people, settings.change)
+    with (
+        tempfile.TemporaryDirectory(prefix="build-", dir=folder / "lake") as workdir,
+        TrendBuild(
+            folder / "lake",
+            ledger.parts(),
+            register=register,
+            settings=_model_settings(settings),
+            fingerprint=detect.fingerprint_of(settings),
+            workdir=Path(workdir),
+        ) as build,
+    ):
+        _run_models(build, settings)
+        _check(build)
+        say("publishing")
+        return publish(
+            build,
+            folder / "published",
+            site=lambda published, site: build_site(
+                published, site, programme_name=settings.programme.name, version=version("burdenline")
+            ),
+            stamp={"version": version("burdenline"), "settings": asdict(settings)},
+        )
+
+
+def _run_models(build: TrendBuild, settings: Settings) -> None:
+    build.run_models("staging")
+    build.run_models("intermediate")
+    tables = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
+    build.add("changes", trends.changes(**tables, change=settings.change, wear=settings.wear))
+    build.run_models("marts")
+
+
+def _check(build: TrendBuild) -> None:
+    failures = build.check()
+    if failures:
+        told = "; ".join(f"{failure.claim}: {failure.rows.head(SHOWN_ROWS).to_dicts()}" for failure in failures)
+        raise CheckFailed(
+            f"not published, {len(failures)} of the checks in warehouse/checks returned rows, the publication before stays: {told}"
+        )
+
+
+def _register_frames(people: Register, change: ChangeSettings) -> dict[str, pl.DataFrame]:
+    return {
+        "patients": people.patients,
+        "wears": people.wears.select("recording_id", "device_serial", "patient_code", "from_utc", "to_utc"),
+        "therapies": people.therapies.with_columns(_settling_days(change).alias("settling_days")),
+    }
+
+
+def _settling_days(change: ChangeSettings) -> pl.Expr:
+    kind = pl.col("therapy_kind")
+    return (
+        pl.when(kind == "ablation")
+        .then(change.settling_days_ablation)
+        .when(kind.is_in(["medication_start", "medication_stop", "dose_change"]))
+        .then(change.settling_days_medication)
+        .otherwise(change.settling_days_other)
+        .cast(pl.Int32)
+    )
+
+
+def _model_settings(settings: Settings) -> dict[str, float | int | str]:
+    attention = {f"attention_{name}": value for name, value in asdict(settings.attention).items()}
+    periods = {"baseline_days": settings.change.baseline_days, "after_days": settings.change.after_days}
+    return asdict(settings.wear) | periods | attention
