@@ -1,0 +1,142 @@
+"""Cutting a segment into chunks with guards, and finding beats and noise in one chunk.
+
+A chunk is cut on whole blocks of the QRS level and read with a guard on both sides that is longer than the reach of every
+rule, so that a beat is the same beat wherever the cuts fall and a beat near a cut is counted once.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from typing import NamedTuple
+
+import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
+from numpy.typing import NDArray
+
+from detectors import qrs, signal
+from detectors.results import SHAPE_AFTER_MS, SHAPE_BEFORE_MS, Segment
+from detectors.signal import WORKING_FS_HZ
+
+SHAPE_BEFORE = round(SHAPE_BEFORE_MS / 1000 * WORKING_FS_HZ)
+SHAPE_AFTER = round(SHAPE_AFTER_MS / 1000 * WORKING_FS_HZ)
+SHAPE_LENGTH = SHAPE_BEFORE + SHAPE_AFTER
+GUARD_BLOCKS = round(qrs.GUARD_S * WORKING_FS_HZ / qrs.BLOCK)
+FLAT_MV = 0.012  # a block that moves less than this is flat
+
+
+class Scale(NamedTuple):
+    """How stored counts become millivolts, and which counts are no measurement."""
+
+    fs_hz: float
+    mv_per_count: float
+    count_at_zero_mv: float
+    rails: tuple[int, int] | None
+    missing_count: int | None
+
+
+class Blocks(NamedTuple):
+    """Signal quality per block of 1.536 s. Arrays of shape (n_blocks,)."""
+
+    is_flat: NDArray[np.bool_]
+    is_rail: NDArray[np.bool_]
+    is_missing: NDArray[np.bool_]
+    noise: NDArray[np.float32]  # mean slope energy outside QRS complexes, mV, NaN when there is no such time
+    level: NDArray[np.float32]  # QRS level, mV; inf where unknown
+
+
+class ChunkBeats(NamedTuple):
+    """Beats of one chunk. Arrays of shape (n_beats,)."""
+
+    working: NDArray[np.float64]  # position in working samples from the begin of the segment
+    energy: NDArray[np.float32]
+    share: NDArray[np.float32]  # energy over the local QRS level
+    shape_mv: NDArray[np.float32]  # shape (n_beats, SHAPE_LENGTH)
+
+
+def cuts(n_samples: int, fs_hz: float, chunk_s: float) -> Iterator[tuple[int, int]]:
+    """Half-open ranges of working samples that cover a segment; the last may be shorter and end inside a block."""
+    n_working = signal.working_length(n_samples, fs_hz)
+    step = max(1, round(chunk_s * WORKING_FS_HZ / qrs.BLOCK)) * qrs.BLOCK
+    for begin in range(0, n_working, step):
+        yield begin, min(begin + step, n_working)
+
+
+def read_chunk(segment: Segment, begin: int, end: int, scale: Scale) -> tuple[ChunkBeats, Blocks]:
+    """Beats and block quality of working samples `begin` to `end`; nothing of the guards is returned."""
+    n_working = signal.working_length(segment.n_samples, scale.fs_hz)
+    first = max(0, begin - GUARD_BLOCKS * qrs.BLOCK)
+    last = min(n_working, end + GUARD_BLOCKS * qrs.BLOCK)
+    span = signal.stored_span(first, last, scale.fs_hz, segment.n_samples)
+    counts = segment.read(*span)
+    flags = _flags(counts, first, last, span[0], scale)
+    boxes = signal.box_averages(_without_gaps(counts, scale), first, last, scale.fs_hz)
+    boxes -= np.float32(scale.count_at_zero_mv)
+    boxes *= np.float32(scale.mv_per_count)
+    beats, noise, level = _find(boxes, flags)
+    keep = (beats.working + first >= begin) & (beats.working + first < end)
+    inner = slice((begin - first) // qrs.BLOCK, (begin - first) // qrs.BLOCK + -(-(end - begin) // qrs.BLOCK))
+    kept = ChunkBeats(beats.working[keep] + first, beats.energy[keep], beats.share[keep], beats.shape_mv[keep])
+    return kept, Blocks(*(flag[inner] for flag in flags), noise[inner], level[inner])
+
+
+def _find(
+    boxes: NDArray[np.float32], flags: tuple[NDArray[np.bool_], ...]
+) -> tuple[ChunkBeats, NDArray[np.float32], NDArray[np.float32]]:
+    n_blocks = flags[0].size
+    tail = n_blocks * qrs.BLOCK - boxes.size
+    padded = np.pad(boxes, (0, tail), mode="edge")
+    found = qrs.envelope(padded)
+    level = qrs.block_level(found.energy, ~(flags[0] | flags[1] | flags[2]))
+    candidates = qrs.peaks(found.energy, level)
+    beat = qrs.choose(candidates)
+    working = qrs.fiducials(found.slope, candidates.cell[beat])
+    inside = working < boxes.size
+    beat, working = beat[inside], working[inside]
+    noise = _noise(found.energy, candidates.cell[beat], n_blocks)
+    framed = np.pad(padded, (SHAPE_BEFORE, SHAPE_AFTER), mode="edge")
+    shapes = sliding_window_view(framed, SHAPE_LENGTH)[np.rint(working).astype(np.int64)]
+    return ChunkBeats(working, candidates.energy[beat], candidates.share[beat], shapes), noise, level
+
+
+def _noise(energy: NDArray[np.float32], cell: NDArray[np.int64], n_blocks: int) -> NDArray[np.float32]:
+    """Mean energy per block outside 160 ms around the beats."""
+    outside = np.ones(energy.size, dtype=np.float32)
+    for offset in range(-4, 6):
+        outside[np.clip(cell + offset, 0, energy.size - 1)] = 0
+    total = (energy * outside).reshape(n_blocks, -1).sum(axis=1)
+    count = outside.reshape(n_blocks, -1).sum(axis=1)
+    return np.divide(total, count, out=np.full(n_blocks, np.nan, dtype=np.float32), where=count > 5)
+
+
+def _without_gaps(counts: NDArray[np.int16], scale: Scale) -> NDArray[np.int16]:
+    """Missing counts replaced by the value before them, so that they make no edge."""
+    if scale.missing_count is None:
+        return counts
+    missing = counts == scale.missing_count
+    if not missing.any():
+        return counts
+    known = np.where(missing, 0, np.arange(counts.size))
+    np.maximum.accumulate(known, out=known)
+    filled = counts[known]
+    filled[: int(np.argmin(missing))] = filled[int(np.argmin(missing))]
+    return filled
+
+
+def _flags(
+    counts: NDArray[np.int16], first: int, last: int, offset: int, scale: Scale
+) -> tuple[NDArray[np.bool_], NDArray[np.bool_], NDArray[np.bool_]]:
+    """Flat, rail and missing flags per block of working samples `first` to `last`."""
+    n_blocks = -(-(last - first) // qrs.BLOCK)
+    edges = (
+        np.floor((first + np.arange(n_blocks) * qrs.BLOCK) * (scale.fs_hz / WORKING_FS_HZ)).astype(np.int64) - offset
+    )
+    edges = np.minimum(edges, max(counts.size - 1, 0))
+    lowest = np.minimum.reduceat(counts, edges).astype(np.int64)
+    highest = np.maximum.reduceat(counts, edges).astype(np.int64)
+    is_flat = (highest - lowest) * abs(scale.mv_per_count) < FLAT_MV
+    is_missing = np.zeros(n_blocks, dtype=bool)
+    if scale.missing_count is not None and lowest.min() <= scale.missing_count <= highest.max():
+        is_missing = np.logical_or.reduceat(counts == scale.missing_count, edges)
+    low, high = scale.rails if scale.rails is not None else (-(2**15), 2**15 - 1)
+    is_rail = ((lowest <= low) | (highest >= high)) & ~is_missing
+    return is_flat, is_rail, is_missing

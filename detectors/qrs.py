@@ -1,0 +1,156 @@
+"""Where the QRS complexes are: slope energy, a level that follows the signal, T-wave and gap rules.
+
+Everything has a bounded reach in time (see GUARD_S), so chunks with that much overlap give the same beats as one long read.
+After Pan & Tompkins, IEEE Trans Biomed Eng 1985;32:230 (doi:10.1109/TBME.1985.325532). Differs from it: second difference
+instead of band-pass and derivative, absolute value instead of square, the level is a median of block maxima on both sides
+instead of a running estimate, so that one huge beat or a burst does not deafen the detector.
+"""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
+from numpy.typing import NDArray
+
+from detectors.signal import WORKING_FS_HZ
+
+LAG = 4  # working samples, 32 ms: the second difference passes 5 to 25 Hz and nothing of drift
+CELL = 4  # working samples per envelope value, 32 ms
+BLOCK_CELLS = 48  # envelope values per block, 1.536 s: holds at least one beat above 39 a minute
+BLOCK = CELL * BLOCK_CELLS  # working samples per block
+LOCAL_BLOCKS = 7
+LONG_BLOCKS = 41
+GUARD_S = 60.0
+
+THRESHOLD = 0.32  # of the local level
+LOW_THRESHOLD = 0.13  # of the local level, for the search in gaps
+REFRACTORY_S = 0.22
+T_WAVE_S = 0.40
+T_WAVE_RATIO = 0.45  # a T wave has less slope than this share of its QRS
+
+
+class Envelope(NamedTuple):
+    """Slope of the signal and its energy over one QRS length."""
+
+    slope: NDArray[np.float32]  # shape (n_working,), second difference, mV
+    energy: NDArray[np.float32]  # shape (n_working // CELL,), sum of |slope| over 96 ms, mV
+
+
+def envelope(signal_mv: NDArray[np.float32]) -> Envelope:
+    """Second difference of the smoothed working signal, and its absolute sum over 96 ms once every 32 ms."""
+    slope = np.zeros_like(signal_mv)
+    smooth = signal_mv[:-2] + signal_mv[2:]
+    smooth += signal_mv[1:-1]
+    smooth += signal_mv[1:-1]
+    inner = slope[LAG + 1 : -LAG - 1]
+    np.add(smooth[LAG:-LAG], smooth[LAG:-LAG], out=inner)
+    inner -= smooth[: -2 * LAG]
+    inner -= smooth[2 * LAG :]
+    inner *= np.float32(0.25)
+    size = np.abs(slope[: slope.size // CELL * CELL])
+    cells = (size[0::4] + size[1::4]) + (size[2::4] + size[3::4])
+    energy = cells.copy()
+    energy[1:] += cells[:-1]
+    energy[:-1] += cells[1:]
+    return Envelope(slope, energy)
+
+
+def block_level(energy: NDArray[np.float32], is_usable: NDArray[np.bool_]) -> NDArray[np.float32]:
+    """QRS level per block: median of block maxima near by, held near the median of the minute.
+
+    `energy` has whole blocks, `is_usable` shape (n_blocks,) leaves flat or missing blocks out. Returns shape (n_blocks,), mV.
+    """
+    highest = energy.reshape(-1, BLOCK_CELLS).max(axis=1)
+    highest = np.where(is_usable, highest, np.float32(np.nan))
+    near = _running_median(highest, LOCAL_BLOCKS)
+    far = _running_median(highest, LONG_BLOCKS)
+    return np.nan_to_num(np.clip(near, 0.4 * far, 2.5 * far), nan=np.inf)
+
+
+def _running_median(values: NDArray[np.float32], width: int) -> NDArray[np.float32]:
+    half = width // 2
+    padded = np.concatenate([np.full(half, np.nan), values, np.full(half, np.nan)]).astype(np.float32)
+    windows = np.sort(sliding_window_view(padded, width), axis=1)  # NaN sorts last
+    known = width - np.isnan(windows).sum(axis=1)
+    middle = windows[np.arange(values.size), np.maximum(known - 1, 0) // 2]
+    return np.where(known > 0, middle, np.float32(np.nan))
+
+
+class Peaks(NamedTuple):
+    """Candidates: local maxima of the energy. Arrays of shape (n_peaks,)."""
+
+    cell: NDArray[np.int64]
+    energy: NDArray[np.float32]
+    share: NDArray[np.float32]  # energy over the local level
+
+
+def peaks(energy: NDArray[np.float32], level: NDArray[np.float32]) -> Peaks:
+    """Local maxima of the energy above the low threshold."""
+    middle = energy[1:-1]
+    limit = np.repeat(level * np.float32(LOW_THRESHOLD), BLOCK_CELLS)[1:-1]
+    cell = np.flatnonzero((middle > energy[:-2]) & (middle >= energy[2:]) & (middle > limit)) + 1
+    height = energy[cell]
+    return Peaks(cell, height, height / level[cell // BLOCK_CELLS])
+
+
+def choose(candidates: Peaks) -> NDArray[np.int64]:
+    """Indices of the candidates that are QRS complexes, ascending."""
+    beat = np.flatnonzero(candidates.share > THRESHOLD)
+    beat = _without_weaker_neighbours(candidates, beat)
+    for _ in range(2):
+        beat = _with_gaps_searched(candidates, beat)
+    return beat
+
+
+def _without_weaker_neighbours(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Drop what is too close to a stronger candidate, and T waves; three rounds, each looking at neighbours only."""
+    for _ in range(3):
+        if beat.size < 2:
+            break
+        gap_s = np.diff(candidates.cell[beat]) * (CELL / WORKING_FS_HZ)
+        energy = candidates.energy[beat]
+        later_is_weaker = energy[1:] < energy[:-1]
+        close = gap_s < REFRACTORY_S
+        t_wave = (gap_s < T_WAVE_S) & (energy[1:] < T_WAVE_RATIO * energy[:-1])
+        drop = np.zeros(beat.size, dtype=bool)
+        drop[1:] |= (close & later_is_weaker) | t_wave
+        drop[:-1] |= close & ~later_is_weaker
+        beat = beat[~drop]
+    return beat
+
+
+def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Add the strongest low candidate of every gap that is half again as long as its neighbours."""
+    if beat.size < 4:
+        return beat
+    cell = candidates.cell[beat]
+    gap = np.diff(cell)
+    usual = _running_median(gap.astype(np.float32), 9)
+    is_long = gap > np.maximum(1.5 * usual, 0.6 * WORKING_FS_HZ / CELL)
+    between = np.searchsorted(cell, candidates.cell, side="right") - 1
+    inside = (between >= 0) & (between < gap.size)
+    slot = np.clip(between, 0, gap.size - 1)
+    after_s = (candidates.cell - cell[slot]) * (CELL / WORKING_FS_HZ)
+    before_s = (cell[slot + 1] - candidates.cell) * (CELL / WORKING_FS_HZ)
+    free = inside & is_long[slot] & (after_s > REFRACTORY_S) & (before_s > REFRACTORY_S)
+    free &= (after_s > T_WAVE_S) | (candidates.energy > T_WAVE_RATIO * candidates.energy[beat[slot]])
+    found = np.flatnonzero(free)
+    if found.size == 0:
+        return beat
+    order = np.lexsort((candidates.energy[found], between[found]))
+    is_last = np.append(np.diff(between[found][order]) > 0, True)
+    return np.sort(np.concatenate([beat, found[order][is_last]]))
+
+
+def fiducials(slope: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np.float64]:
+    """Working position of the steepest bend within 64 ms of each energy peak, refined by a parabola. Shape (n_beats,)."""
+    reach = 2 * CELL
+    begin = np.clip(cell * CELL + CELL // 2 - reach, 1, slope.size - 2 * reach - 2)
+    rows = np.abs(sliding_window_view(slope, 2 * reach + 1)[begin])
+    at = begin + rows.argmax(axis=1)
+    left, middle, right = np.abs(slope[at - 1]), np.abs(slope[at]), np.abs(slope[at + 1])
+    bend = left - 2 * middle + right
+    shift = np.divide(0.5 * (left - right), bend, out=np.zeros_like(bend), where=bend < 0)
+    return at + np.clip(shift, -0.5, 0.5).astype(np.float64)

@@ -1,0 +1,103 @@
+"""Timing of beats: RR intervals, the usual interval near by, prematurity, pauses, R-on-T, irregularity. Beats only, no samples."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
+from numpy.typing import NDArray
+
+from detectors.results import PAUSE_KINDS
+
+USUAL_REACH_BEATS = 12
+USUAL_STEP_BEATS = 4
+INTERPOLATED_LIMIT = 1.25  # of the usual interval
+QT_AT_60_PER_MIN_MS = 400.0  # from memory: upper middle of normal heart-rate corrected QT, verify before relying on it
+ESCAPE_LIMIT = 1.15  # of the usual interval
+
+
+def rr_intervals_ms(
+    segment: NDArray[np.integer], sample: NDArray[np.floating], fs_hz: float, has_gap_before: NDArray[np.bool_]
+) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    """RR before and after each beat, ms, shape (n_beats,), NaN at the ends of a segment and across a gap in the signal."""
+    before = np.full(sample.size, np.nan, dtype=np.float32)
+    after = before.copy()
+    if sample.size > 1:
+        rr = np.diff(sample) * (1000 / fs_hz)
+        rr[(np.diff(segment) != 0) | has_gap_before[1:]] = np.nan
+        before[1:] = rr
+        after[:-1] = rr
+    return before, after
+
+
+def usual_rr_ms(rr_ms: NDArray[np.float32], quantile: float = 0.5) -> NDArray[np.float32]:
+    """Quantile of the RR intervals of about 12 beats on either side, shape (n_beats,), ms; 800 ms when nothing is known.
+
+    Computed at every fourth beat and interpolated: rhythm changes more slowly than that.
+    """
+    if rr_ms.size == 0:
+        return rr_ms
+    reach, step = USUAL_REACH_BEATS, USUAL_STEP_BEATS
+    fill = np.full(reach, np.nan, dtype=np.float32)
+    padded = np.concatenate([fill, rr_ms, fill, fill[: step - 1]])
+    windows = np.sort(sliding_window_view(padded, 2 * reach + 1)[::step], axis=1)  # NaN sorts last
+    known = 2 * reach + 1 - np.isnan(windows).sum(axis=1)
+    at = np.rint(quantile * np.maximum(known - 1, 0)).astype(np.int64)
+    coarse = np.where(known > 0, windows[np.arange(known.size), at], np.float32(np.nan))
+    is_known = ~np.isnan(coarse)
+    if not is_known.any():
+        return np.full(rr_ms.size, 800.0, dtype=np.float32)
+    grid = np.arange(known.size) * step
+    return np.interp(np.arange(rr_ms.size), grid[is_known], coarse[is_known]).astype(np.float32)
+
+
+def pause_kinds(
+    before_ms: NDArray[np.float32],
+    after_ms: NDArray[np.float32],
+    usual_ms: NDArray[np.float32],
+    is_premature: NDArray[np.bool_],
+    tolerance_pct: float,
+) -> NDArray[np.int8]:
+    """Pause after each premature ectopic beat, index into PAUSE_KINDS, shape (n_beats,).
+
+    Full: the two intervals around the beat fill two sinus cycles, short of them by at most `tolerance_pct` of one cycle
+    (the tolerance is convention). Interpolated: they fill little more than one cycle. Reset: in between.
+    """
+    cycles = (before_ms + after_ms) / usual_ms
+    kind = np.zeros(before_ms.size, dtype=np.int8)
+    judged = is_premature & ~np.isnan(cycles)
+    kind[judged] = PAUSE_KINDS.index("reset")
+    kind[judged & (cycles >= 2 - tolerance_pct / 100)] = PAUSE_KINDS.index("full")
+    kind[judged & (cycles <= INTERPOLATED_LIMIT)] = PAUSE_KINDS.index("interpolated")
+    return kind
+
+
+def r_on_t_index(coupling_ms: NDArray[np.float32], usual_ms: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Coupling interval over the QT interval estimated from the usual RR, shape (n_beats,); below 1 the beat meets the T wave.
+
+    QT after Fridericia (cube root of RR). Index: Winkle 1977. NaN where there is no coupling interval.
+    """
+    return (coupling_ms / (QT_AT_60_PER_MIN_MS * np.cbrt(usual_ms / 1000))).astype(np.float32)
+
+
+def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_beats: int = 16) -> NDArray[np.float32]:
+    """Share of successive RR differences above 8 % near each beat, shape (n_beats,), 0 to 1; high in atrial fibrillation.
+
+    Only intervals between plain (not ectopic) beats count; 0 where fewer than 8 are near.
+    """
+    n_beats = rr_ms.size
+    if n_beats < 3:
+        return np.zeros(n_beats, dtype=np.float32)
+    is_known = is_plain & ~np.isnan(rr_ms)
+    is_known[1:] &= is_plain[:-1]
+    jump = np.zeros(n_beats, dtype=bool)
+    counted = np.zeros(n_beats, dtype=bool)
+    counted[1:] = is_known[1:] & is_known[:-1]
+    jump[1:] = np.abs(np.diff(rr_ms)) > 0.08 * np.minimum(rr_ms[1:], rr_ms[:-1])
+    seen = _near_sum(counted, reach_beats)
+    return np.where(seen >= 8, _near_sum(jump & counted, reach_beats) / np.maximum(seen, 1), 0).astype(np.float32)
+
+
+def _near_sum(flag: NDArray[np.bool_], reach: int) -> NDArray[np.int64]:
+    total = np.concatenate([[0], np.cumsum(flag)])
+    index = np.arange(flag.size)
+    return total[np.minimum(index + reach + 1, flag.size)] - total[np.maximum(index - reach, 0)]
