@@ -29,9 +29,9 @@ class CheckFailed(RuntimeError):
 
 
 def refresh(folder: Path, settings: Settings, people: Register, ledger: Ledger, say: Callable[[str], None]) -> bool:
-    """Build all tables from the parts in force, check them, publish them with their pages; returns whether anything changed.
+    """Build all tables from the parts in force, check them, publish them with their pages.
 
-    Raises CheckFailed when a check returns a row.
+    Returns whether anything changed. Raises CheckFailed when a check returns a row.
     """
     say("building tables")
     register = _register_frames(people, settings.change)
@@ -72,7 +72,8 @@ def _check(build: TrendBuild) -> None:
     if failures:
         told = "; ".join(f"{failure.claim}: {failure.rows.head(SHOWN_ROWS).to_dicts()}" for failure in failures)
         raise CheckFailed(
-            f"not published, {len(failures)} of the checks in warehouse/checks returned rows, the publication before stays: {told}"
+            f"not published: {len(failures)} checks of warehouse/checks returned rows; "
+            f"the publication before stays: {told}"
         )
 
 
