@@ -223,7 +223,8 @@ def compare_runs(
 
     `ectopy` "V": V and F beats make runs, and a stretch of marked ventricular fibrillation counts as a run of the
     longest counted length. "S": S beats make runs, and so do N beats within marked atrial fibrillation or flutter;
-    such a stretch is at least of the longest counted length. Source of the method: ANSI/AAMI EC57, run-by-run comparison.
+    such a stretch is at least of the longest counted length.
+    Source of the method: ANSI/AAMI EC57, run-by-run comparison.
     """
     if ectopy not in ("V", "S"):
         raise ValueError(f"ectopy = {ectopy!r}; expected 'V' or 'S'")
