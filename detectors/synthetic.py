@@ -129,7 +129,8 @@ def recording(
 ) -> Iterator[Hour]:
     """Yield a recording hour by hour, the last piece shorter when `hours` is not whole.
 
-    `start_clock_h` is the local time of the first sample; it places the day pattern.
+    `start_clock_h` is the local time of the first sample in hours since some midnight; it places the day pattern, and
+    with the seed it settles chance: pieces of one wear share their day's chance and differ in all else.
     """
     n_samples = round(hours * HOUR_S * fs_hz)
     if n_samples < 1:
@@ -138,8 +139,8 @@ def recording(
     waiting, at_s = _no_beats(), 0.5
     for number, first in enumerate(range(0, n_samples, per_hour)):
         end = min(first + per_hour, n_samples)
-        rng = np.random.default_rng([seed, number])
         clock_h = start_clock_h + number
+        rng = np.random.default_rng([seed, round(clock_h * HOUR_S)])
         share = _ventricular_share(rhythm, clock_h, seed, rng)
         made, at_s = _beats_until(rhythm, share, clock_h, at_s, end / fs_hz + 1.0, fs_hz, rng)
         known = TrueBeats(*(np.concatenate(pair) for pair in zip(waiting, made, strict=True)))
