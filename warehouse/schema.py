@@ -61,7 +61,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     # recordings and segments
     ("start_utc", "TIMESTAMP", "UTC", "First instant."),
     ("end_utc", "TIMESTAMP", "UTC", "Instant after the last sample."),
-    ("zone", "VARCHAR", "", "IANA time zone in which local days and hours are counted."),
+    ("zone", "VARCHAR", "", "IANA time zone: of the patient's local days, or in which the recorder's clock was read."),
     ("zone_source", "VARCHAR", "", "Where the zone came from: file, patient or programme."),
     ("fs_hz", "DOUBLE", "Hz", "Sampling rate."),
     ("lead", "VARCHAR", "", "Lead label as written in the file."),
@@ -85,14 +85,24 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("beat_utc", "TIMESTAMP", "UTC", "Instant of the R peak."),
     ("rr_before_ms", "REAL", "ms", "Time since the beat before, NULL after a gap."),
     ("rr_after_ms", "REAL", "ms", "Time to the beat after, NULL before a gap."),
-    ("beat_class", "VARCHAR", "", "N normal, S supraventricular ectopic, V ventricular ectopic, F fusion, Q unclassifiable."),
+    (
+        "beat_class",
+        "VARCHAR",
+        "",
+        "N normal, S supraventricular ectopic, V ventricular ectopic, F fusion, Q unclassifiable.",
+    ),
     ("class_probability", "REAL", "", "Estimated probability that the class is right."),
     ("family", "SMALLINT", "", "Number of the shape family within the recording, -1 for none."),
     ("qrs_width_ms", "REAL", "ms", "QRS width of the beat or the family's averaged beat."),
     ("amplitude_mv", "REAL", "mV", "R amplitude against the local baseline, signed."),
     ("polarity", "TINYINT", "", "1 upright, -1 inverted main deflection."),
     ("coupling_ms", "REAL", "ms", "Coupling interval of a premature beat, NULL for others."),
-    ("prematurity_pct", "REAL", "%", "How much earlier than expected from the local normal interval; negative is late."),
+    (
+        "prematurity_pct",
+        "REAL",
+        "%",
+        "How much earlier than expected from the local normal interval; negative is late.",
+    ),
     ("pause_kind", "VARCHAR", "", "Pause after an ectopic beat: full, reset or interpolated; NULL when none applies."),
     ("r_on_t_index", "REAL", "", "Coupling interval over the estimated QT interval; small values lie on the T wave."),
     ("is_escape", "BOOLEAN", "", "Late ventricular beat that ends a pause; it is not premature."),
@@ -113,7 +123,12 @@ COLUMNS: dict[str, Column] = _dictionary(
     # quality
     ("quality_reason", "VARCHAR", "", "Why the window is not analysable: flat, rail, noise, lead_off or missing."),
     # findings
-    ("finding_code", "VARCHAR", "", "Code of something about the whole recording that a reader of its numbers must know."),
+    (
+        "finding_code",
+        "VARCHAR",
+        "",
+        "Code of something about the whole recording that a reader of its numbers must know.",
+    ),
     ("finding_detail", "VARCHAR", "", "The finding in one sentence with its figures."),
     # tallies
     ("quarter_utc", "TIMESTAMP", "UTC", "Start of the quarter of an hour."),
@@ -170,9 +185,24 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("ratio_low", "DOUBLE", "", "Lower end of the 95 % interval of the ratio."),
     ("ratio_high", "DOUBLE", "", "Upper end of the 95 % interval of the ratio."),
     ("change_pct", "DOUBLE", "%", "100 x (ratio - 1)."),
-    ("chance_fall_limit_pct", "DOUBLE", "%", "Smallest fall that spontaneous variation would not explain, one-sided 95 %."),
-    ("chance_rise_limit_pct", "DOUBLE", "%", "Smallest rise that spontaneous variation would not explain, one-sided 95 %."),
-    ("success_probability_pct", "DOUBLE", "%", "Probability that the true reduction exceeds the programme's success limit."),
+    (
+        "chance_fall_limit_pct",
+        "DOUBLE",
+        "%",
+        "Smallest fall that spontaneous variation would not explain, one-sided 95 %.",
+    ),
+    (
+        "chance_rise_limit_pct",
+        "DOUBLE",
+        "%",
+        "Smallest rise that spontaneous variation would not explain, one-sided 95 %.",
+    ),
+    (
+        "success_probability_pct",
+        "DOUBLE",
+        "%",
+        "Probability that the true reduction exceeds the programme's success limit.",
+    ),
     ("variance_source", "VARCHAR", "", "Where the day-to-day variance came from: patient, programme or both."),
     ("verdict", "VARCHAR", "", "fell_beyond_chance, rose_beyond_chance, within_chance or too_little_wear."),
     # attention, reviews, runs
@@ -198,8 +228,14 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("samples_mv", "REAL[]", "mV", "Samples of the strip."),
     ("beat_samples", "BIGINT[]", "samples", "R peaks within the strip, from its first sample."),
     ("beat_classes", "VARCHAR[]", "", "Classes of those beats."),
+    # parts
+    ("part_key", "VARCHAR", "", "Load that the part belongs to: a recording, a delivery, a run or a fingerprint."),
+    ("part_path", "VARCHAR", "", "Path of the part's file, relative to the lake."),
+    ("part_sha256", "VARCHAR", "", "SHA-256 of the part's bytes."),
+    ("part_rows", "BIGINT", "", "Rows of the part."),
+    ("part_bytes", "BIGINT", "bytes", "Size of the part's file."),
     # dictionary
-    ("table_name", "VARCHAR", "", "Name of a published table."),
+    ("table_name", "VARCHAR", "", "Name of a table of the publication or, for a part, of the lake."),
     ("column_name", "VARCHAR", "", "Name of a column."),
     ("column_type", "VARCHAR", "", "DuckDB type of the column."),
     ("unit", "VARCHAR", "", "Unit of the column."),
@@ -284,6 +320,10 @@ LAKE: dict[str, Table] = _tables(
         ("fingerprint", "detector_version", "settings_json"),
     ),
     Table(
+        "reviews", "one row per decision of an over-reader", ("recording_id", "segment", "sample", "reader_code"),
+        ("recording_id", "segment", "sample", "reader_code", "reviewed_utc", "decision"),
+    ),
+    Table(
         "runs_of_flow", "one row per run of the nightly flow that had something to do", ("run_id",),
         ("run_id", "finished_utc", "accepted_count", "waiting_count", "skipped_count", "quarantined_count", "outcome"),
     ),
@@ -343,14 +383,16 @@ PUBLISHED: dict[str, Table] = _tables(
         "attention", "one row per patient and reason for a look", ("patient_code", "attention_code"),
         ("attention_rank", "patient_code", "attention_code", "attention_reason", "since_day"),
     ),
-    Table(
-        "reviews", "one row per decision of an over-reader", ("recording_id", "segment", "sample", "reader_code"),
-        ("recording_id", "segment", "sample", "reader_code", "reviewed_utc", "decision"),
-    ),
+    LAKE["reviews"],
     LAKE["runs_of_flow"],
     Table(
         "fingerprints", "one row per detector version and result settings that made beats", ("fingerprint",),
         ("fingerprint", "detector_version", "settings_json", "is_published"),
+    ),
+    Table(
+        "parts", "one row per part of the lake behind the publication", ("part_path",),
+        ("table_name", "part_key", "part_path", "part_sha256", "part_rows", "part_bytes", "fingerprint", "segment",
+         "block"),
     ),
     Table(
         "data_dictionary", "one row per published table and column", ("table_name", "column_name"),
