@@ -214,42 +214,42 @@ def _content(lake: Path, part: Part, check_hash: bool) -> bytes:
 
 
 class SignalReader:
-    """Samples of one recording, read piece by piece from its signal parts; the last decoded block is kept."""
+    """Samples of one recording, read piece by piece from its signal parts; the last decoded block is kept.
+
+    The blocks of a segment follow each other in the order of their number and may be of any length up to BLOCK_SAMPLES.
+    """
 
     def __init__(self, lake: Path, parts: Iterable[Part], *, check_hash: bool = False) -> None:
         self._lake = lake
         self._check_hash = check_hash
-        self._blocks = {(p.segment, p.block): p for p in parts if p.table == "signal"}
+        self._blocks: dict[int, list[Part]] = {}
+        for part in sorted((p for p in parts if p.table == "signal"), key=lambda part: (part.segment, part.block)):
+            self._blocks.setdefault(part.segment or 0, []).append(part)
+        self._ends = {segment: np.cumsum([p.rows for p in blocks]) for segment, blocks in self._blocks.items()}
         self._decoded: tuple[Part | None, NDArray[np.int16]] = (None, np.empty(0, np.int16))
 
     @property
     def segment_samples(self) -> dict[int, int]:
         """Number of samples of each segment."""
-        lengths: dict[int, int] = {}
-        for part in self._blocks.values():
-            lengths[part.segment or 0] = lengths.get(part.segment or 0, 0) + part.rows
-        return dict(sorted(lengths.items()))
+        return {segment: int(ends[-1]) for segment, ends in self._ends.items()}
 
     def read(self, segment: int, a: int, b: int) -> NDArray[np.int16]:
         """Samples a (included) to b (excluded) of a segment as int16 counts, shape (b - a,)."""
-        if not 0 <= a <= b:
-            raise PartError(f"segment {segment}: samples {a} to {b} asked; expected 0 <= first <= last")
+        length = self.segment_samples.get(segment, 0)
+        if not 0 <= a <= b <= length:
+            raise PartError(f"segment {segment} has {length} samples; samples {a} to {b} were asked")
         samples = np.empty(b - a, np.int16)
         at = a
         while at < b:
-            block, offset = divmod(at, BLOCK_SAMPLES)
-            piece = self._block(segment, block)[offset : offset + b - at]
-            if not piece.size:
-                raise PartError(f"segment {segment} ends at sample {at}; samples {a} to {b} were asked")
+            number = int(np.searchsorted(self._ends[segment], at, side="right"))
+            part = self._blocks[segment][number]
+            offset = at - (int(self._ends[segment][number]) - part.rows)
+            piece = self._block(part)[offset : offset + b - at]
             samples[at - a : at - a + piece.size] = piece
             at += piece.size
         return samples
 
-    def _block(self, segment: int, block: int) -> NDArray[np.int16]:
-        part = self._blocks.get((segment, block))
-        if part is None:
-            known = sorted(self.segment_samples.items())
-            raise PartError(f"segment {segment} block {block} is not in the parts; (segment, samples): {known}")
+    def _block(self, part: Part) -> NDArray[np.int16]:
         if self._decoded[0] != part:
             difference = pl.read_parquet(_content(self._lake, part, self._check_hash)).to_series().to_numpy()
             self._decoded = (part, np.cumsum(difference, dtype=np.int16))
