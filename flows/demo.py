@@ -1,0 +1,187 @@
+"""An invented programme: a network of clinics on an invented coast, its patients, patches and therapies.
+
+Nobody in it exists. The signals come from `detectors.synthetic` and are written as EDF+ files, so that everything
+after the inbox is the real job. The patches of the story sample 20 minutes in every 3 hours to save power; that keeps
+the demo short and makes each file an EDF+D with one segment per window.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Callable, Iterator
+from datetime import datetime, timedelta
+from pathlib import Path
+from typing import NamedTuple
+
+import numpy as np
+
+from detectors import synthetic
+from detectors.synthetic import Noise, Rhythm
+from flows.edf_write import EdfHeader, Piece, write_edf
+from flows.programme import make_folder
+
+NAME = "Saltmarsh Coast Clinics (invented)"
+ZONE = "Europe/Lisbon"
+MIN_ANALYSABLE_H_PER_DAY = 1.5  # a full day of the story's patches holds 2.7 hours
+WINDOW_S, EVERY_S = 1200, 3 * 3600
+
+_FIRST_DAY = datetime(2026, 2, 2)  # noqa: DTZ001  days of the story are local days
+_WORN = Noise(lead_off_per_h=0.15)
+
+
+class Wear(NamedTuple):
+    """One patch on one patient: from 10:00 of a day of the story."""
+
+    day: int
+    days: int
+    rhythm: Rhythm
+
+
+class Therapy(NamedTuple):
+    """One row of therapies.csv."""
+
+    day: int
+    kind: str
+    detail: str
+
+
+class Patient(NamedTuple):
+    """One invented patient and what the demo shows with them."""
+
+    code: str
+    shows: str
+    wears: tuple[Wear, ...]
+    therapies: tuple[Therapy, ...] = ()
+    zone: str = ""
+    fs_hz: int = 125
+
+
+def _patients() -> tuple[Patient, ...]:
+    one_focus = Rhythm(v_share_pct=14.0, rate_bpm=76)
+    fluctuating = Rhythm(v_share_pct=8.0, v_day_sd=0.55, v_family_weights=(0.0, 1.0), rate_bpm=70)
+    outflow = Rhythm(v_share_pct=22.0, v_family_weights=(0.95, 0.0, 0.05), rate_bpm=68)
+    recurring = Rhythm(v_share_pct=18.0, v_family_weights=(0.0, 0.9, 0.1), couplet_share=0.12, run_share=0.03)
+    short_wear = Rhythm(v_share_pct=11.0, v_family_weights=(0.5, 0.5), rate_bpm=80)
+    slowed = Rhythm(v_share_pct=9.0, v_family_weights=(0.0, 0.0, 1.0), rate_bpm=86, v_day_sd=0.15)
+    stopped = Rhythm(v_share_pct=2.0, rate_bpm=62, v_day_sd=0.15)
+    atrial = Rhythm(v_share_pct=0.4, s_share_pct=4.0, rate_bpm=74)
+    medication, ablation = "medication_start", "ablation"
+    return (
+        Patient("HB-101", "beta-blocker responder", (
+            Wear(1, 6, one_focus),
+            Wear(18, 6, one_focus._replace(v_share_pct=2.2, rate_bpm=66)),
+            Wear(52, 6, one_focus._replace(v_share_pct=1.8, rate_bpm=65)),
+        ), (Therapy(8, medication, "bisoprolol 5 mg daily"),), fs_hz=250),
+        Patient("HB-102", "no response, the burden only fluctuates", (
+            Wear(2, 6, fluctuating), Wear(20, 6, fluctuating),
+        ), (Therapy(9, medication, "flecainide 50 mg twice daily"),)),
+        Patient("HB-103", "rises after a medication is stopped", (
+            Wear(3, 6, stopped), Wear(22, 6, stopped._replace(v_share_pct=9.0, rate_bpm=71)),
+        ), (Therapy(10, "medication_stop", "metoprolol 50 mg daily"),)),
+        Patient("LT-201", "ablation success", (
+            Wear(4, 6, outflow), Wear(29, 6, outflow._replace(v_share_pct=0.4)),
+            Wear(66, 6, outflow._replace(v_share_pct=0.3)),
+        ), (Therapy(12, ablation, "right ventricular outflow tract"),), fs_hz=250),
+        Patient("LT-202", "early recurrence after ablation", (
+            Wear(5, 6, recurring), Wear(30, 6, recurring._replace(v_share_pct=1.0)),
+            Wear(51, 6, recurring._replace(v_share_pct=15.0)),
+        ), (Therapy(13, ablation, "left ventricular summit"),)),
+        Patient("DN-301", "too little wear after therapy", (
+            Wear(6, 6, short_wear), Wear(26, 1, short_wear._replace(v_share_pct=4.0)),
+        ), (Therapy(15, medication, "metoprolol 50 mg daily"),)),
+        Patient("DN-302", "the heart rate fell, the ectopy did not", (
+            Wear(7, 6, slowed), Wear(27, 6, slowed._replace(rate_bpm=62)),
+        ), (Therapy(16, "dose_change", "ivabradine 5 to 7.5 mg twice daily"),), zone="Atlantic/Azores"),
+        Patient("DN-303", "atrial ectopy, then an irregular rhythm; no therapy", (
+            Wear(8, 5, atrial), Wear(40, 3, atrial._replace(atrial_fibrillation=True, s_share_pct=0.0)),
+        )),
+    )  # fmt: skip
+
+
+def make_programme(folder: Path, *, seed: int = 2026, say: Callable[[str], None] | None = None) -> None:
+    """Make a programme folder with settings, register and an inbox of EDF+ files, two of which must be refused.
+
+    The same seed gives the same bytes and file times. Raises FileExistsError when `folder` is a programme already.
+    """
+    make_folder(folder, NAME, ZONE)
+    settings = folder / "programme.toml"
+    default = "min_analysable_h_per_day = 10.0"
+    text = settings.read_text(encoding="utf-8")
+    settings.write_text(text.replace(default, f"min_analysable_h_per_day = {MIN_ANALYSABLE_H_PER_DAY}"), "utf-8")
+    patients = _patients()
+    _write_register(folder / "register", patients)
+    for number, patient in enumerate(patients):
+        if say:
+            say(f"{patient.code}: {patient.shows}")
+        for wear in patient.wears:
+            _write_wear(folder / "inbox", patient, wear, seed + 1000 * number + wear.day)
+    _write_refused(folder / "inbox")
+
+
+def write_long_recording(path: Path, *, days: float = 14.0, fs_hz: int = 250, seed: int = 1) -> None:
+    """One continuous EDF+C recording without gaps, for benchmarks; 14 days at 250 Hz are 605 MB."""
+    rhythm = Rhythm(v_share_pct=8.0, v_family_weights=(0.7, 0.3), s_share_pct=0.5)
+    hours = synthetic.recording(rhythm, _WORN, fs_hz=fs_hz, hours=days * 24, seed=seed)
+    header = EdfHeader("HB-900", "SK9000", _FIRST_DAY, fs_hz, synthetic.MV_PER_COUNT)
+    write_edf(path, header, (Piece(n * 3_600_000, hour.counts) for n, hour in enumerate(hours)))
+
+
+def _serial(patient: Patient, wear: Wear) -> str:
+    return f"SK{patient.code[-3:]}{wear.day:02d}"
+
+
+def _start(wear: Wear) -> datetime:
+    return _FIRST_DAY + timedelta(days=wear.day, hours=10)
+
+
+def _write_register(register: Path, patients: tuple[Patient, ...]) -> None:
+    rows: dict[str, list[str]] = {"patients.csv": [], "wears.csv": [], "therapies.csv": []}
+    for patient in patients:
+        rows["patients.csv"].append(f"{patient.code},{patient.zone}")
+        for wear in patient.wears:
+            start, end = _start(wear), _start(wear) + timedelta(days=wear.days)
+            rows["wears.csv"].append(
+                f"{_serial(patient, wear)},{patient.code},{start:%Y-%m-%dT%H:%M},{end:%Y-%m-%dT%H:%M},"
+            )
+        for number, therapy in enumerate(patient.therapies, 1):
+            at = _FIRST_DAY + timedelta(days=therapy.day, hours=9)
+            rows["therapies.csv"].append(
+                f"{patient.code}-T{number},{patient.code},{therapy.kind},{therapy.detail},{at:%Y-%m-%dT%H:%M}"
+            )
+    for name, lines in rows.items():
+        with (register / name).open("a", encoding="utf-8") as file:
+            file.writelines(line + "\n" for line in lines)
+
+
+def _write_wear(inbox: Path, patient: Patient, wear: Wear, seed: int) -> None:
+    start = _start(wear)
+    header = EdfHeader(patient.code, _serial(patient, wear), start, patient.fs_hz, synthetic.MV_PER_COUNT)
+    path = inbox / f"{header.device_serial}_{start:%Y%m%d}.edf"
+    write_edf(path, header, _windows(wear, patient.fs_hz, seed))
+    _set_time(path, start + timedelta(days=wear.days + 2))
+
+
+def _windows(wear: Wear, fs_hz: int, seed: int) -> Iterator[Piece]:
+    for elapsed_s in range(0, wear.days * 86_400, EVERY_S):
+        clock_h = 10 + elapsed_s / 3600
+        pieces = synthetic.recording(
+            wear.rhythm, _WORN, fs_hz=fs_hz, hours=WINDOW_S / 3600, start_clock_h=clock_h, seed=seed
+        )
+        yield Piece(elapsed_s * 1000, np.concatenate([piece.counts for piece in pieces]))
+
+
+def _set_time(path: Path, arrived: datetime) -> None:
+    """Date the file as if it had arrived then, so that two demos are the same to the last byte."""
+    seconds = (arrived - datetime(1970, 1, 1)).total_seconds()  # noqa: DTZ001  both without zone
+    os.utime(path, (seconds, seconds))
+
+
+def _write_refused(inbox: Path) -> None:
+    """A login page saved under the name of an export, and a file whose two amplitude limits are equal."""
+    page = inbox / "SK30144_20260318.edf"
+    page.write_text("<!doctype html><html><title>Sign in</title><p>Your session has ended.</html>\n", encoding="utf-8")
+    _set_time(page, _FIRST_DAY + timedelta(days=46))
+    flat = inbox / "SK20360_20260403.edf"
+    start = _FIRST_DAY + timedelta(days=60, hours=10)
+    write_edf(flat, EdfHeader("LT-203", "SK20360", start, 125, 0.0), [Piece(0, np.zeros(125 * 60, np.int16))])
+    _set_time(flat, start + timedelta(days=2))
