@@ -58,6 +58,7 @@ class BeatScore(NamedTuple):
     matrix: NDArray[np.int64]  # shape (7, 7), REFERENCE_ROWS by TEST_COLUMNS
     rms_rr_error_ms: float
     shutdown_s: float  # scored time in which the test labelling was shut down
+    true_class: NDArray[np.int64]  # per test beat: index into REFERENCE_ROWS of what it met, -1 when not scored
 
 
 class RunScore(NamedTuple):
@@ -130,6 +131,7 @@ def compare_beats(
         _matrix(match, scored, truth, found),
         _rms_difference(match, scored, true_rr, found_rr[said]) * 1000.0 / fs_hz,
         float((shut[:, 1] - shut[:, 0]).sum() / fs_hz),
+        _true_class(match, scored, truth, found, said),
     )
 
 
@@ -348,16 +350,33 @@ def _from_start(
     return scored
 
 
-def _matrix(match: Match, scored: NDArray[np.bool_], truth: _Labels, found: _Labels) -> NDArray[np.int64]:
-    reference, test = match.reference[scored], match.test[scored]
-    missed, extra = test < 0, reference < 0
-    row, column = np.empty(missed.shape, np.int64), np.empty(missed.shape, np.int64)
+def _rows(reference: NDArray[np.int64], test: NDArray[np.int64], truth: _Labels, found: _Labels) -> NDArray[np.int64]:
+    """Row of the matrix for each decision: the reference beat's class, or why there is none."""
+    extra = reference < 0
+    row = np.empty(extra.shape, np.int64)
     row[~extra] = truth.beat_class[reference[~extra]]
     row[extra] = np.where(_inside(found.sample[test[extra]], truth.shutdown), _SHUT, _NONE)
+    return row
+
+
+def _true_class(
+    match: Match, scored: NDArray[np.bool_], truth: _Labels, found: _Labels, said: NDArray[np.bool_]
+) -> NDArray[np.int64]:
+    with_test = scored & (match.test >= 0)
+    test = match.test[with_test]
+    true_class = np.full(said.shape, -1, np.int64)
+    true_class[np.flatnonzero(said)[test]] = _rows(match.reference[with_test], test, truth, found)
+    return true_class
+
+
+def _matrix(match: Match, scored: NDArray[np.bool_], truth: _Labels, found: _Labels) -> NDArray[np.int64]:
+    reference, test = match.reference[scored], match.test[scored]
+    missed = test < 0
+    column = np.empty(missed.shape, np.int64)
     column[~missed] = found.beat_class[test[~missed]]
     column[missed] = np.where(_inside(truth.sample[reference[missed]], found.shutdown), _SHUT, _NONE)
     matrix = np.zeros((len(REFERENCE_ROWS), len(TEST_COLUMNS)), np.int64)
-    np.add.at(matrix, (row, column), 1)
+    np.add.at(matrix, (_rows(reference, test, truth, found), column), 1)
     return matrix
 
 

@@ -174,6 +174,14 @@ class TestOptions:
         score = scoring.compare_beats(beats, beats, fs_hz=250, n_samples=500, learning_s=0)
         assert score.matrix.sum() == 3
 
+    def test_what_each_test_beat_met(self):
+        """Each test beat tells the class of its reference beat, none, or that it was not scored."""
+        reference = scoring.beat_annotations([50, 250, 450], ["N", "V", "N"])
+        test = scoring.beat_annotations([50, 252, 350, 452], ["N", "N", "V", "N"])
+        score = scoring.compare_beats(reference, test, fs_hz=250, n_samples=500, learning_s=0.5)
+        met = [scoring.REFERENCE_ROWS[row] if row >= 0 else "-" for row in score.true_class]
+        assert met == ["-", "V", "O", "N"]
+
     def test_no_beats_at_all(self):
         """Two empty lists give an empty matrix and no error."""
         nothing = scoring.beat_annotations([], [])
