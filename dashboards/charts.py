@@ -1,0 +1,257 @@
+"""Figures as plain plotly.js values (data and layout), drawn in the browser as SVG.
+
+Colours are names of the style sheet's variables ('--v', '--wear'); the page puts in the colour of the scheme in force
+when it draws, so one figure serves light, dark and print. No number is computed here that a table does not hold.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from datetime import date, datetime, timedelta
+from itertools import pairwise
+from typing import Any, TypedDict
+from zoneinfo import ZoneInfo
+
+import polars as pl
+
+from dashboards import words
+
+
+class Figure(TypedDict):
+    """What plotly.js needs to draw one chart."""
+
+    data: list[dict[str, Any]]
+    layout: dict[str, Any]
+
+
+FONT = {"family": "system-ui, sans-serif", "size": 12, "color": "--ink"}
+GREY = {"gridcolor": "--line", "linecolor": "--line", "zeroline": False, "tickcolor": "--line"}
+CLASS_COLOURS = {"V": "--v", "S": "--s"}
+
+
+def _layout(height: int, **more: Any) -> dict[str, Any]:
+    return {
+        "height": height,
+        "margin": {"l": 58, "r": 14, "t": 34, "b": 46},
+        "font": FONT,
+        "paper_bgcolor": "rgba(0,0,0,0)",
+        "plot_bgcolor": "rgba(0,0,0,0)",
+        "hoverlabel": {"bgcolor": "--sheet", "bordercolor": "--line", "font": FONT},
+        "legend": {"orientation": "h", "x": 0, "y": 1.0, "yanchor": "bottom", "font": {**FONT, "size": 11}},
+        **more,
+    }
+
+
+def _axis(title: str, domain: tuple[float, float], **more: Any) -> dict[str, Any]:
+    text = {"text": title, "font": {**FONT, "size": 11}, "standoff": 6}
+    return {**GREY, "title": text, "domain": list(domain), "rangemode": "tozero", "fixedrange": True, **more}
+
+
+def timeline(wear_days: pl.DataFrame, therapies: pl.DataFrame, periods: pl.DataFrame, changes: pl.DataFrame) -> Figure:
+    """One day axis for a patient: burden, hours that carry it, heart rate; therapy marks and gaps run through all."""
+    burden = [_burden_days(wear_days, valid=True), _burden_days(wear_days, valid=False)]
+    data = [trace for trace in burden if trace["x"]] + [*_wear_bars(wear_days), _rate_days(wear_days)]
+    first, last = _span(wear_days, therapies)
+    layout = _layout(
+        520,
+        xaxis={**GREY, "type": "date", "range": [str(first), str(last)], "anchor": "y3", "showgrid": True,
+               "hoverformat": "%a %-d %b %Y", "tickformat": "%-d %b\n%Y"},
+        yaxis=_axis("V burden, %", (0.50, 1.0)),
+        yaxis2=_axis("hours", (0.25, 0.44), range=[0, 25], tickvals=[0, 8, 16, 24]),
+        yaxis3=_axis("rate, /min", (0.0, 0.19), rangemode="normal"),
+        barmode="overlay",
+        bargap=0.15,
+        hovermode="x unified",
+        shapes=[*_gap_shapes(wear_days), *_period_shapes(periods, changes), *_therapy_shapes(therapies)],
+        annotations=_therapy_notes(therapies),
+    )  # fmt: skip
+    return Figure(data=data, layout=layout)
+
+
+def _burden_days(wear_days: pl.DataFrame, *, valid: bool) -> dict[str, Any]:
+    rows = wear_days.filter((pl.col("is_valid_day") == valid) & pl.col("v_burden_pct").is_not_null())
+    marker = {"color": "--v" if valid else "--sheet", "size": 8, "line": {"color": "--v", "width": 1.5}}
+    return {
+        "type": "scatter",
+        "mode": "markers",
+        "name": "V burden, valid day" if valid else "V burden, day with too few analysable hours",
+        "x": _days(rows["local_day"]),
+        "y": _values(rows["v_burden_pct"], 3),
+        "customdata": rows.select("v_beats", "all_beats", pl.col("analysable_h").round(1)).rows(),
+        "hovertemplate": "%{y:.2f} %: %{customdata[0]:,} V of %{customdata[1]:,} beats in %{customdata[2]} h"
+        "<extra></extra>",
+        "marker": marker | {"symbol": "circle"},
+    }
+
+
+def _wear_bars(wear_days: pl.DataFrame) -> list[dict[str, Any]]:
+    x = _days(wear_days["local_day"])
+    bars = [("worn_h", "worn", "--worn"), ("analysable_h", "analysable", "--wear")]
+    return [
+        {"type": "bar", "name": name, "x": x, "y": _values(wear_days[column], 2), "yaxis": "y2",
+         "marker": {"color": colour}, "hovertemplate": f"%{{y:.1f}} h {name}<extra></extra>"}
+        for column, name, colour in bars
+    ]  # fmt: skip
+
+
+def _rate_days(wear_days: pl.DataFrame) -> dict[str, Any]:
+    rows = wear_days.filter(pl.col("mean_rate_bpm").is_not_null())
+    return {
+        "type": "scatter",
+        "mode": "markers",
+        "name": "mean heart rate",
+        "x": _days(rows["local_day"]),
+        "y": _values(rows["mean_rate_bpm"], 1),
+        "yaxis": "y3",
+        "marker": {"color": "--rate", "size": 7, "symbol": "diamond"},
+        "hovertemplate": "%{y:.0f} /min<extra></extra>",
+    }
+
+
+def _span(wear_days: pl.DataFrame, therapies: pl.DataFrame) -> tuple[datetime, datetime]:
+    known = [*wear_days["local_day"], *therapies["therapy_day"].drop_nulls()]
+    half_day = timedelta(hours=18)
+    return _midnight(min(known)) - half_day, _midnight(max(known)) + half_day
+
+
+def _midnight(day: date) -> datetime:
+    return datetime(day.year, day.month, day.day)  # noqa: DTZ001  # plotly axes have no zone; this is a local day
+
+
+def _gap_shapes(wear_days: pl.DataFrame) -> Iterable[dict[str, Any]]:
+    """Shade the days between two wear days on which nothing was worn."""
+    half_day = timedelta(hours=12)
+    for before, after in pairwise(wear_days["local_day"].sort().to_list()):
+        if (after - before).days > 1:
+            yield {"type": "rect", "layer": "below", "xref": "x", "yref": "paper", "y0": 0, "y1": 1,
+                   "x0": str(_midnight(before) + half_day), "x1": str(_midnight(after) - half_day),
+                   "line": {"width": 0}, "fillcolor": "--gap"}  # fmt: skip
+
+
+def _period_shapes(periods: pl.DataFrame, changes: pl.DataFrame) -> Iterable[dict[str, Any]]:
+    """Draw the values that the verdict compares as level lines over the days that they stand for."""
+    values = changes.filter(pl.col("measure") == "v_burden_pct")
+    spans = periods.join(values.select("therapy_id", "baseline_value", "after_value"), on="therapy_id")
+    for row in spans.filter(pl.col("period") != "settling").iter_rows(named=True):
+        value = row[f"{row['period']}_value"]
+        if value is not None and row["first_day"] is not None:
+            yield {"type": "line", "xref": "x", "yref": "y", "x0": str(row["first_day"]), "x1": str(row["last_day"]),
+                   "y0": value, "y1": value, "line": {"color": "--v", "width": 2, "dash": "dot"}}  # fmt: skip
+
+
+def _therapy_shapes(therapies: pl.DataFrame) -> Iterable[dict[str, Any]]:
+    for moment in therapies["therapy_day"].drop_nulls():
+        yield {"type": "line", "xref": "x", "yref": "paper", "x0": str(moment), "x1": str(moment), "y0": 0, "y1": 1,
+               "line": {"color": "--therapy", "width": 1.5}}  # fmt: skip
+
+
+def _therapy_notes(therapies: pl.DataFrame) -> list[dict[str, Any]]:
+    rows = therapies.drop_nulls("therapy_day").sort("therapy_day").iter_rows(named=True)
+    font = {**FONT, "size": 11, "color": "--therapy"}
+    return [
+        {"x": str(row["therapy_day"]), "y": 0.995 - 0.055 * (order % 3), "xref": "x", "yref": "paper",
+         "xanchor": "left", "yanchor": "top", "xshift": 4, "showarrow": False, "font": font,
+         "text": _as_text(words.therapy(row["therapy_kind"], row["therapy_detail"]))}
+        for order, row in enumerate(rows)
+    ]  # fmt: skip
+
+
+def _as_text(words_of_others: str) -> str:
+    """Plotly reads a small markup in its texts; text from a register must stay text, and short."""
+    short = words_of_others if len(words_of_others) <= 40 else words_of_others[:39] + "…"
+    return short.replace("&", "&amp;").replace("<", "&lt;").replace(">", "&gt;")
+
+
+def clock_map(local_hours: pl.DataFrame) -> Figure:
+    """Day across, clock hour down, colour for burden; an hour without an analysable beat stays empty."""
+    span = local_hours.select(pl.date_range(pl.col("local_day").min(), pl.col("local_day").max()))
+    day_list = span.to_series().to_list()  # unworn days too, so that every column is one day wide
+    cells = {(row[0], row[1]): row[2:] for row in local_hours.select(
+        "local_day", "clock_hour", pl.col("v_burden_pct").round(3), "v_beats", "all_beats",
+        (pl.col("analysable_s") / 60).round(0).cast(pl.Int32)).iter_rows()}  # fmt: skip
+    grid = [[cells.get((day, hour), (None, None, None, None)) for day in day_list] for hour in range(24)]
+    trace = {
+        "type": "heatmap",
+        "x": [str(day) for day in day_list],
+        "y": list(range(24)),
+        "z": [[cell[0] for cell in row] for row in grid],
+        "customdata": [[cell[1:] for cell in row] for row in grid],
+        "colorscale": [[0, "--heat-0"], [0.25, "--heat-1"], [0.5, "--heat-2"], [0.75, "--heat-3"], [1, "--heat-4"]],
+        "zmin": 0,
+        "xgap": 1,
+        "ygap": 1,
+        "hoverongaps": False,
+        "hovertemplate": "%{x|%a %-d %b %Y}, %{y}:00–%{y}:59: %{z:.2f} %<br>"
+        "%{customdata[0]:,} V of %{customdata[1]:,} beats in %{customdata[2]} analysable min<extra></extra>",
+        "colorbar": {"title": {"text": "%", "side": "top"}, "thickness": 10, "outlinewidth": 0, "len": 1},
+    }
+    layout = _layout(
+        380,
+        xaxis={**GREY, "type": "date", "tickformat": "%-d %b\n%Y", "showgrid": False, "fixedrange": True},
+        yaxis=_axis("clock hour", (0, 1), autorange="reversed", tickvals=list(range(0, 24, 3)), rangemode="normal",
+                    showgrid=False),
+    )  # fmt: skip
+    layout["margin"] = {**layout["margin"], "t": 12}
+    return Figure(data=[trace], layout=layout)
+
+
+def wearing(hours: pl.DataFrame, zone: str) -> Figure:
+    """Hour by hour through one recording: minutes that could be analysed, ectopic beats, heart rate."""
+    hours = hours.upsample("hour_utc", every="1h")  # an hour without samples is a gap, not a step
+    x = _on_the_clock(hours["hour_utc"], zone)
+    middle = 30 * 60 * 1000
+    minutes = [
+        ("recorded_s", "recorded", "--gap"),
+        ("worn_s", "worn", "--worn"),
+        ("analysable_s", "analysable", "--wear"),
+    ]
+    data: list[dict[str, Any]] = [
+        {"type": "bar", "name": name, "x": x, "y": _values(hours[column] / 60, 1), "yaxis": "y2", "offset": 0,
+         "width": 2 * middle, "marker": {"color": colour}, "hovertemplate": f"%{{y:.0f}} min {name}<extra></extra>"}
+        for column, name, colour in minutes
+    ]  # fmt: skip
+    data += [_hourly_beats(hours, x, beat_class, middle * place, middle) for place, beat_class in enumerate(("V", "S"))]
+    data.append(
+        {"type": "scatter", "mode": "lines", "name": "mean heart rate", "x": x, "y": _values(hours["mean_rate_bpm"], 1),
+         "yaxis": "y3", "line": {"color": "--rate", "width": 1.5, "shape": "hv"}, "connectgaps": False,
+         "hovertemplate": "%{y:.0f} /min<extra></extra>"}
+    )  # fmt: skip
+    layout = _layout(
+        480,
+        xaxis={**GREY, "type": "date", "anchor": "y3", "hoverformat": "%a %-d %b, %H h", "tickformat": "%H h\n%-d %b"},
+        yaxis=_axis("beats in the hour", (0.54, 1.0)),
+        yaxis2=_axis("minutes", (0.27, 0.47), range=[0, 61], tickvals=[0, 30, 60]),
+        yaxis3=_axis("rate, /min", (0.0, 0.20), rangemode="normal"),
+        barmode="overlay",
+        hovermode="x unified",
+    )
+    return Figure(data=data, layout=layout)
+
+
+def _hourly_beats(hours: pl.DataFrame, x: list[str], beat_class: str, offset: int, width: int) -> dict[str, Any]:
+    return {
+        "type": "bar",
+        "name": f"{beat_class} beats in the hour",
+        "x": x,
+        "y": hours[f"{beat_class.lower()}_beats"].to_list(),
+        "offset": offset,
+        "width": width,
+        "marker": {"color": CLASS_COLOURS[beat_class]},
+        "customdata": hours["all_beats"].to_list(),
+        "hovertemplate": f"%{{y:,}} {beat_class} of %{{customdata:,}} beats<extra></extra>",
+    }
+
+
+def _on_the_clock(instants_utc: pl.Series, zone: str) -> list[str]:
+    """Return instants on the local clock of the first one; the clock is not turned when daylight saving changes."""
+    first = words.local_time(instants_utc[0], zone)
+    offset = first.utcoffset() or ZoneInfo(zone).utcoffset(None) or timedelta(0)
+    return [str(instant + offset) for instant in instants_utc]
+
+
+def _days(series: pl.Series) -> list[str]:
+    return [str(day) for day in series]
+
+
+def _values(series: pl.Series, digits: int) -> list[float | None]:
+    return series.cast(pl.Float64).fill_nan(None).round(digits).to_list()

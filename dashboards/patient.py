@@ -1,0 +1,153 @@
+"""A patient's page: one day axis for everything, what changed after each therapy event, shapes and strips behind it."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+from typing import Any
+
+import polars as pl
+
+from dashboards import addresses, charts, strips, words
+from dashboards.tables import Tables
+
+FAMILIES_SHOWN = 5  # of each recording
+STRIPS_SHOWN = 4  # of the first and of the last recording
+ECTOPIC = ("V", "F", "S")
+
+
+def context(tables: Tables, patient_code: str) -> dict[str, Any]:
+    """Return everything that the page of one patient shows."""
+    rows = {name: tables.of_patient(name, patient_code) for name in Tables.BY_PATIENT}
+    wear_days = rows["wear_days"].sort("local_day")
+    therapies = rows["therapies"].sort("therapy_day", "therapy_id")
+    recordings = rows["recordings"].sort("start_utc", "recording_id")
+    events = [_event(row, rows["changes"], rows["periods"]) for row in therapies.rows(named=True)]
+    measured = wear_days.drop_nulls("v_burden_pct")
+    return {
+        "patient": tables.patients.row(by_predicate=pl.col("patient_code") == patient_code, named=True),
+        "wear_days": wear_days.rows(named=True),
+        "first_day": wear_days["local_day"].min(),
+        "last_day": wear_days["local_day"].max(),
+        "valid_days": wear_days.filter(pl.col("is_valid_day")).height,
+        "attention": rows["attention"].sort("attention_rank", "attention_code").rows(named=True),
+        "events": events,
+        "headline": headline(events, measured),
+        "finding": range_words(measured),
+        "timeline": charts.timeline(wear_days, therapies, rows["periods"], rows["changes"])
+        if wear_days.height
+        else None,
+        "clock_map": charts.clock_map(rows["local_hours"]) if measured.height else None,
+        "densest": _densest(rows["local_hours"]),
+        "clock_hours": _by_clock(rows["local_hours"]),
+        "recordings": [_recording(tables, row) for row in recordings.rows(named=True)],
+        "strips": list(_strips(tables, recordings)),
+    }
+
+
+def data_files(tables: Tables, patient_code: str) -> dict[str, pl.DataFrame]:
+    """Return the downloads of the page by name."""
+    names = ("wear_days", "local_hours", "therapies", "periods", "changes", "recordings")
+    files = {name: tables.of_patient(name, patient_code) for name in names}
+    recordings = files["recordings"].sort("start_utc")["recording_id"]
+    families = [tables.of_recording("families", recording_id).drop("shape_mv") for recording_id in recordings]
+    return files | ({"families": pl.concat(families)} if families else {})
+
+
+def headline(events: list[dict[str, Any]], measured: pl.DataFrame) -> str:
+    """Return the answer for the latest therapy event, or the range of burden when there is none."""
+    changes = [(event, event["changes"]["v_burden_pct"]) for event in events if "v_burden_pct" in event["changes"]]
+    if not changes:
+        return range_words(measured)
+    event, change = changes[-1]
+    return words.sentence(f"{change_words(change)} after {event['name']}")
+
+
+def range_words(measured: pl.DataFrame) -> str:
+    """Return what the timeline shows, in one sentence that names its figures."""
+    if measured.is_empty():
+        return "No analysable beat yet: ventricular burden is not known"
+    low, high = measured["v_burden_pct"].min(), measured["v_burden_pct"].max()
+    on_days = words.counted(measured.height, "wear day")
+    return f"Ventricular burden between {words.number(low, 1)} and {words.number(high, 1)} % on {on_days}"  # type: ignore[arg-type]
+
+
+def change_words(change: dict[str, Any]) -> str:
+    """Return a change in words: the verdict, never without the two values it compares."""
+    name, unit, _ = words.MEASURES[change["measure"]]
+    if change["verdict"] == "too_little_wear":
+        return f"{name.lower()}: too little wear to judge a change"
+    before, after = (words.number(change[f"{side}_value"], 1) for side in ("baseline", "after"))
+    verb = {"fell_beyond_chance": "fell beyond chance", "rose_beyond_chance": "rose beyond chance"}
+    said = verb.get(change["verdict"], "did not change more than chance explains")
+    return f"{name.lower()} {said}, {before} → {after} {unit}"
+
+
+def _event(therapy: dict[str, Any], changes: pl.DataFrame, periods: pl.DataFrame) -> dict[str, Any]:
+    of_event = pl.col("therapy_id") == therapy["therapy_id"]
+    ordered = changes.filter(of_event).rows(named=True)
+    by_measure = {row["measure"]: row for row in ordered}
+    spans = {row["period"]: row for row in periods.filter(of_event).rows(named=True)}
+    return {
+        "name": words.therapy(therapy["therapy_kind"], therapy["therapy_detail"]),
+        "day": therapy["therapy_day"],
+        "therapy_id": therapy["therapy_id"],
+        "changes": {measure: by_measure[measure] for measure in words.MEASURES if measure in by_measure},
+        "periods": [spans[period] for period in ("baseline", "settling", "after") if period in spans],
+    }
+
+
+def _densest(local_hours: pl.DataFrame) -> dict[str, Any] | None:
+    """Return the local hour with the highest burden."""
+    known = local_hours.drop_nulls("v_burden_pct").sort("v_burden_pct", "local_day", "clock_hour")
+    return known.row(-1, named=True) if known.height else None
+
+
+def _by_clock(local_hours: pl.DataFrame) -> list[dict[str, Any]]:
+    """Return the rows of the table beneath the map: one per day, its burden by clock hour."""
+    if local_hours.is_empty():
+        return []
+    wide = local_hours.pivot("clock_hour", index="local_day", values="v_burden_pct", sort_columns=True).sort(
+        "local_day"
+    )
+    return [{"local_day": row[0], "hours": dict(zip(wide.columns[1:], row[1:], strict=True))} for row in wide.rows()]
+
+
+def _recording(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
+    families = tables.of_recording("families", recording["recording_id"]).sort(
+        "beat_count", "family", descending=[True, False]
+    )
+    ectopic = families.filter(pl.col("family_class").is_in(ECTOPIC)).head(FAMILIES_SHOWN)
+    return recording | {
+        "page": addresses.recording_page(recording["recording_id"]),
+        "families": draw_families(ectopic),
+        "families_count": families.height,
+    }
+
+
+def draw_families(families: pl.DataFrame) -> list[dict[str, Any]]:
+    """Return family rows with the drawing of their averaged beat."""
+    return [
+        row | {"drawing": strips.draw_shape(row["shape_mv"]) if row["shape_mv"] else None}
+        for row in families.rows(named=True)
+    ]
+
+
+def _strips(tables: Tables, recordings: pl.DataFrame) -> Iterable[dict[str, Any]]:
+    """Yield the first strips with ectopic beats of the first and the last recording."""
+    ends = (
+        list(dict.fromkeys(recordings["recording_id"].gather([0, recordings.height - 1]))) if recordings.height else []
+    )
+    for recording_id in ends:
+        kept = tables.large("strips", recording_id).filter(pl.col("beat_class").is_in(ECTOPIC)).head(STRIPS_SHOWN)
+        zone = recordings.row(by_predicate=pl.col("recording_id") == recording_id, named=True)["zone"]
+        yield from draw_rows(kept, zone)
+
+
+def draw_rows(rows: pl.DataFrame, zone: str) -> list[dict[str, Any]]:
+    """Return strip rows with their drawing and their local time."""
+    drawings = strips.draw_strips(rows)
+    kept = rows.drop("samples_mv", "beat_samples", "beat_classes").rows(named=True)
+    return [
+        row | {"drawing": drawing, "zone": zone, "page": addresses.recording_page(row["recording_id"])}
+        for row, drawing in zip(kept, drawings, strict=True)
+    ]

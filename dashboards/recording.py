@@ -1,0 +1,81 @@
+"""A recording's page: what could be analysed, the shapes found, the hours, and the strips behind the counts."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import polars as pl
+
+from dashboards import addresses, charts, words
+from dashboards.patient import ECTOPIC, draw_families, draw_rows
+from dashboards.tables import Tables
+
+EPISODES_SHOWN = 60
+WINDOWS_SHOWN = 40
+FAMILIES_SHOWN = 16
+LISTED_EPISODES = ("run", "sv_run", "pause", "bigeminy", "trigeminy", "irregular")
+
+
+def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
+    """Return everything that the page of one recording (a row of `recordings`) shows."""
+    recording_id, zone = recording["recording_id"], recording["zone"]
+    hours = tables.of_recording("hours", recording_id).sort("hour_utc")
+    families = tables.of_recording("families", recording_id).sort("beat_count", "family", descending=[True, False])
+    episodes = tables.large("episodes", recording_id)
+    windows = tables.large("quality_windows", recording_id).sort("duration_s", "start_utc", descending=[True, False])
+    drawn = draw_rows(tables.large("strips", recording_id), zone)
+    return {
+        "recording": recording,
+        "patient_page": addresses.patient_page(recording["patient_code"]) if recording["patient_code"] else None,
+        "findings": _findings(recording, tables.of_recording("findings", recording_id)),
+        "segments": tables.of_recording("segments", recording_id).sort("segment").rows(named=True),
+        "hours": hours.rows(named=True),
+        "wearing": charts.wearing(hours, zone) if hours.height else None,
+        "families": draw_families(families.head(FAMILIES_SHOWN)),
+        "families_count": families.height,
+        "episode_counts": _counts(episodes, "episode_kind"),
+        "episodes": _longest(episodes),
+        "episodes_shown": EPISODES_SHOWN,
+        "windows": windows.head(WINDOWS_SHOWN).rows(named=True),
+        "windows_count": windows.height,
+        "strips": [(name, of_class) for name, of_class in _by_class(drawn) if of_class],
+    }
+
+
+def data_files(tables: Tables, recording_id: str) -> dict[str, pl.DataFrame]:
+    """Return the downloads of the page by name."""
+    return {
+        "hours": tables.of_recording("hours", recording_id),
+        "families": tables.of_recording("families", recording_id).drop("shape_mv"),
+        "episodes": tables.large("episodes", recording_id),
+        "quality_windows": tables.large("quality_windows", recording_id),
+    }
+
+
+def _findings(recording: dict[str, Any], of_detector: pl.DataFrame) -> list[str]:
+    """Return what a reader of the numbers must know: oddities of the file, then findings of the detector."""
+    of_file = [words.sentence(words.plain(code)) for code in (recording["findings"] or "").split()]
+    return of_file + [
+        f"{words.sentence(words.plain(code))}: {detail}" if detail else words.sentence(words.plain(code))
+        for code, detail in of_detector.select("finding_code", "finding_detail").iter_rows()
+    ]
+
+
+def _counts(frame: pl.DataFrame, column: str) -> dict[str, int]:
+    return dict(frame.group_by(column).len().sort(column).rows())
+
+
+def _longest(episodes: pl.DataFrame) -> list[dict[str, Any]]:
+    listed = episodes.filter(pl.col("episode_kind").is_in(LISTED_EPISODES))
+    return (
+        listed.sort("duration_s", "start_utc", descending=[True, False])
+        .head(EPISODES_SHOWN)
+        .sort("start_utc", "episode_kind")
+        .rows(named=True)
+    )
+
+
+def _by_class(drawn: list[dict[str, Any]]) -> list[tuple[str, list[dict[str, Any]]]]:
+    titles = {beat_class: f"{words.sentence(words.CLASSES[beat_class])} beats" for beat_class in ECTOPIC}
+    groups = [(title, [strip for strip in drawn if strip["beat_class"] == key]) for key, title in titles.items()]
+    return [*groups, ("Other rhythm", [strip for strip in drawn if strip["beat_class"] not in ECTOPIC])]

@@ -1,0 +1,110 @@
+"""ECG drawn to paper scale: numbers in, SVG path text out; the templates place the paths.
+
+Drawing unit is 0.1 mm: at 25 mm/s one unit is 4 ms, at 10 mm/mV one unit is 0.01 mV (common practice for paper ECG).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from typing import Any, NamedTuple
+
+import polars as pl
+
+UNITS_PER_MM = 10
+UNITS_PER_S = 25 * UNITS_PER_MM
+UNITS_PER_MV = 10 * UNITS_PER_MM
+SHAPE_FS_HZ = 125
+SHAPE_BEFORE_S = 0.28
+LETTER_ROOM = 6 * UNITS_PER_MM  # above the trace, for the class letters
+GRID = 5 * UNITS_PER_MM  # heights are whole large squares
+LOWEST, HIGHEST = -3 * UNITS_PER_MV, 4 * UNITS_PER_MV
+
+
+class Mark(NamedTuple):
+    """A beat's class letter at its place."""
+
+    x: int
+    beat_class: str
+
+
+class Drawing(NamedTuple):
+    """One trace in drawing units: its path, its box, where 0 mV lies and the marks above it."""
+
+    path: str
+    width: int
+    height: int
+    zero_y: int
+    marks: tuple[Mark, ...] = ()
+    is_cut: bool = False  # part of the trace lies beyond the box
+
+
+def draw_strips(strips: pl.DataFrame) -> list[Drawing]:
+    """Return one drawing per row of `strips` (fs_hz, samples_mv, beat_samples, beat_classes).
+
+    The median of a strip is taken as its 0 mV line. At most two points stand in a column of one unit, so that a fast
+    sampled strip costs no more than its lowest and highest values.
+    """
+    if strips.is_empty():
+        return []
+    points = _points(strips.select("samples_mv", "fs_hz"))
+    return [
+        _drawing(path, low, high, round(len(row["samples_mv"]) / row["fs_hz"] * UNITS_PER_S), _marks(row))
+        for row, (path, low, high) in zip(strips.iter_rows(named=True), points, strict=True)
+    ]
+
+
+def draw_shape(shape_mv: Sequence[float]) -> Drawing:
+    """Return the drawing of a family's averaged beat (SHAPE_FS_HZ values a second, 0 mV is the first value's level)."""
+    frame = pl.DataFrame({"samples_mv": [list(shape_mv)], "fs_hz": [float(SHAPE_FS_HZ)]})
+    ((path, low, high),) = _points(frame)
+    return _drawing(path, low, high, round(len(shape_mv) / SHAPE_FS_HZ * UNITS_PER_S), ())
+
+
+def _points(traces: pl.DataFrame) -> list[tuple[str, int, int]]:
+    """Return path text, lowest and highest y (mV units, upwards) of each row, computed for all rows at once."""
+    long = (
+        traces.with_row_index("row")
+        .explode("samples_mv", empty_as_null=True)
+        .with_columns(x=((pl.int_range(pl.len()).over("row")) * UNITS_PER_S / pl.col("fs_hz")).round().cast(pl.Int32))
+        .with_columns(mv=pl.col("samples_mv") - pl.col("samples_mv").median().over("row"))
+        .with_columns(y=(pl.col("mv") * UNITS_PER_MV).round().cast(pl.Int32))
+        .drop_nulls("y")
+    )
+    long = long.filter(
+        (pl.len().over("row", "x") <= 2)
+        | (pl.col("y") == pl.col("y").min().over("row", "x"))
+        | (pl.col("y") == pl.col("y").max().over("row", "x"))
+    )
+    return _paths(traces.height, long)
+
+
+def _paths(count: int, long: pl.DataFrame) -> list[tuple[str, int, int]]:
+    """Join the points of each row into one path of relative steps; a step over missing samples lifts the pen."""
+    step = pl.col("x").diff().over("row")
+    rise = -pl.col("y").diff().over("row")
+    widest = 2 * pl.col("x").diff().over("row").median().over("row").clip(1)
+    text = (
+        pl.when(step.is_null() | (step > widest))
+        .then(pl.format("M{} {}l", "x", -pl.col("y")))
+        .otherwise(pl.format("{} {} ", step, rise))
+    )
+    joined = (
+        long.with_columns(text=text)
+        .group_by("row", maintain_order=True)
+        .agg(pl.col("text").str.join(""), low=pl.col("y").min(), high=pl.col("y").max())
+    )
+    found = {row: (path, low, high) for row, path, low, high in joined.iter_rows()}
+    return [found.get(row, ("", 0, 0)) for row in range(count)]
+
+
+def _drawing(path: str, low: int, high: int, width: int, marks: tuple[Mark, ...]) -> Drawing:
+    """Fit the box to the trace in whole large squares, between fixed limits."""
+    bottom = max(min(low, -GRID), LOWEST)
+    top = min(max(high, 2 * GRID), HIGHEST)
+    below, above = -(bottom // GRID) * GRID, -(-top // GRID) * GRID
+    return Drawing(path, width, below + above + LETTER_ROOM, above + LETTER_ROOM, marks, low < bottom or high > top)
+
+
+def _marks(row: dict[str, Any]) -> tuple[Mark, ...]:
+    pairs = zip(row["beat_samples"] or (), row["beat_classes"] or (), strict=True)
+    return tuple(Mark(round(sample / row["fs_hz"] * UNITS_PER_S), beat_class) for sample, beat_class in pairs)
