@@ -8,7 +8,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from detectors import scoring
+from detectors import annotations, scoring, scoring_runs
 
 CASES = json.loads((Path(__file__).parents[1] / "oracle_cases.json").read_text())["cases"]
 STATISTIC_NAMES = {
@@ -27,7 +27,7 @@ RUN_SIDES = {"sensitivity": "se", "positive predictivity": "ppv"}
 
 def labels(rows):
     sample, symbol, aux, subtype = zip(*rows, strict=True)
-    return scoring.Annotations(
+    return annotations.Annotations(
         np.array(sample, np.int64),
         np.array(symbol),
         np.array(subtype, np.int64),
@@ -42,7 +42,7 @@ def beat_score(case):
 
 
 def run_score(case, ectopy):
-    return scoring.compare_runs(
+    return scoring_runs.compare_runs(
         labels(case["ref"]), labels(case["test"]), fs_hz=case["fs"], n_samples=case["n_samples"], ectopy=ectopy
     )
 
@@ -95,7 +95,7 @@ class TestReferenceComparators:
     @pytest.mark.parametrize("ectopy", ["V", "S"])
     def test_every_run_statistic(self, case, ectopy):
         """Couplets, short and long runs have the reference comparator's ratios."""
-        found = scoring.run_statistics(run_score(case, ectopy))
+        found = scoring_runs.run_statistics(run_score(case, ectopy))
         for length, length_name in RUN_NAMES.items():
             for side, side_name in RUN_SIDES.items():
                 # Source: reference comparator rxr (WFDB), oracle_cases.json
@@ -150,41 +150,41 @@ class TestOptions:
     def test_escape_beats_as_the_comparator_maps_them(self):
         """Supraventricular escape beats are S by default."""
         # Source: reference comparator bxb (WFDB), oracle_cases.json k11
-        assert "".join(scoring.CLASSES[i] for i in scoring.beat_classes(self.symbols)) == "SSSVN"
+        assert "".join(annotations.CLASSES[i] for i in annotations.beat_classes(self.symbols)) == "SSSVN"
 
     def test_escape_beats_as_normal(self):
         """Supraventricular escape beats are N when asked; a ventricular escape beat stays V."""
         # from memory: de Chazal et al., IEEE Trans Biomed Eng 2004;51:1196 put e and j in N
-        assert "".join(scoring.CLASSES[i] for i in scoring.beat_classes(self.symbols, escape_as="N")) == "NNNVN"
+        assert "".join(annotations.CLASSES[i] for i in annotations.beat_classes(self.symbols, escape_as="N")) == "NNNVN"
 
     def test_unknown_escape_map_is_refused(self):
         """Another class for escape beats is refused with what was expected."""
         with pytest.raises(ValueError, match="escape_as = 'V'; expected 'S'"):
-            scoring.beat_classes(self.symbols, escape_as="V")
+            annotations.beat_classes(self.symbols, escape_as="V")
 
     def test_unknown_ectopy_is_refused(self):
         """Runs of another class are refused with what was expected."""
-        nothing = scoring.beat_annotations([], [])
+        nothing = annotations.beat_annotations([], [])
         with pytest.raises(ValueError, match="ectopy = 'N'; expected"):
-            scoring.compare_runs(nothing, nothing, fs_hz=250, n_samples=10, ectopy="N")
+            scoring_runs.compare_runs(nothing, nothing, fs_hz=250, n_samples=10, ectopy="N")
 
     def test_without_learning_period(self):
         """A learning period of 0 s scores the first beat too."""
-        beats = scoring.beat_annotations([50, 250, 450], ["N", "V", "N"])
+        beats = annotations.beat_annotations([50, 250, 450], ["N", "V", "N"])
         score = scoring.compare_beats(beats, beats, fs_hz=250, n_samples=500, learning_s=0)
         assert score.matrix.sum() == 3
 
     def test_what_each_test_beat_met(self):
         """Each test beat tells the class of its reference beat, none, or that it was not scored."""
-        reference = scoring.beat_annotations([50, 250, 450], ["N", "V", "N"])
-        test = scoring.beat_annotations([50, 252, 350, 452], ["N", "N", "V", "N"])
+        reference = annotations.beat_annotations([50, 250, 450], ["N", "V", "N"])
+        test = annotations.beat_annotations([50, 252, 350, 452], ["N", "N", "V", "N"])
         score = scoring.compare_beats(reference, test, fs_hz=250, n_samples=500, learning_s=0.5)
         met = [scoring.REFERENCE_ROWS[row] if row >= 0 else "-" for row in score.true_class]
         assert met == ["-", "V", "O", "N"]
 
     def test_no_beats_at_all(self):
         """Two empty lists give an empty matrix and no error."""
-        nothing = scoring.beat_annotations([], [])
+        nothing = annotations.beat_annotations([], [])
         score = scoring.compare_beats(nothing, nothing, fs_hz=250, n_samples=500, learning_s=0)
         assert score.matrix.sum() == 0 and score.rms_rr_error_ms == 0
 
@@ -195,7 +195,7 @@ beat_lists = st.lists(
 
 
 def as_annotations(beats):
-    return scoring.beat_annotations([at for at, _ in beats], [name for _, name in beats])
+    return annotations.beat_annotations([at for at, _ in beats], [name for _, name in beats])
 
 
 @given(beat_lists, beat_lists)
