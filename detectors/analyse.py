@@ -173,11 +173,12 @@ def _finish(
     is_good = quality.is_outside(bad, joined.segment, sample)
     gap = quality.has_gap_before(bad, joined.segment, sample)
     before, after = rhythm.rr_intervals_ms(joined.segment, position, fs_hz, gap)
-    usual = rhythm.usual_rr_ms(before)
-    evidence = classify.Evidence(
-        joined.family, joined.nearest, joined.likeness, before / usual, after / usual, joined.features
+    usual = rhythm.usual_rr_ms(before, after)
+    labels = classify.classify(
+        classify.Timing(before / usual, after / usual),
+        classify.Match(joined.family, joined.nearest, joined.likeness),
+        book.shape_mv,
     )
-    labels = classify.classify(evidence, book.shape_mv)
     beats = _beats(joined, sample, before, after, usual, labels, book, is_good, options)
     table = _families(beats, book, labels)
     irregular = rhythm.irregularity(before, (beats.beat_class == "N") & is_good)
@@ -236,7 +237,7 @@ def _beats(
 ) -> Beats:
     early = np.nan_to_num(100 * (1 - before / usual), nan=0.0)
     is_ectopic = np.isin(labels.beat_class, ("V", "S"))
-    is_premature = is_ectopic & (early > 100 * (1 - classify.PREMATURE))
+    is_premature = is_ectopic & (early > 100 * (1 - classify.EARLY))
     coupling = np.where(is_premature, before, np.float32(np.nan)).astype(np.float32)
     widths = np.append(features.qrs_width_ms(book.shape_mv), np.float32(0))
     in_family = joined.family >= 0

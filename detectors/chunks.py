@@ -87,15 +87,32 @@ def _find(
     padded = np.pad(boxes, (0, tail), mode="edge")
     found = qrs.envelope(padded)
     level = qrs.block_level(found.energy, ~(flags[0] | flags[1] | flags[2]))
-    candidates = qrs.peaks(found.energy, level)
+    candidates = qrs.peaks(padded, found.energy, level)
     beat = qrs.choose(candidates)
     working = qrs.fiducials(found.slope, candidates.cell[beat])
     inside = working < boxes.size
     beat, working = beat[inside], working[inside]
     noise = _noise(found.energy, candidates.cell[beat], n_blocks)
-    framed = np.pad(padded, (SHAPE_BEFORE, SHAPE_AFTER), mode="edge")
-    shapes = sliding_window_view(framed, SHAPE_LENGTH)[np.rint(working).astype(np.int64)]
+    shapes = _shapes(padded, working)
     return ChunkBeats(working, candidates.energy[beat], candidates.share[beat], shapes), noise, level
+
+
+def _shapes(signal_mv: NDArray[np.float32], working: NDArray[np.float64]) -> NDArray[np.float32]:
+    """Stretch around each beat, shape (n_beats, SHAPE_LENGTH), at its exact position by cubic interpolation."""
+    framed = np.pad(signal_mv, (SHAPE_BEFORE + 1, SHAPE_AFTER + 2), mode="edge")
+    whole = np.floor(working).astype(np.int64)
+    part = (working - whole).astype(np.float32)[:, None]
+    rows = sliding_window_view(framed, SHAPE_LENGTH + 3)[whole]
+    weights = (
+        -part * (part - 1) * (part - 2) / 6,
+        (part + 1) * (part - 1) * (part - 2) / 2,
+        -(part + 1) * part * (part - 2) / 2,
+        (part + 1) * part * (part - 1) / 6,
+    )
+    shapes = rows[:, :SHAPE_LENGTH] * weights[0]
+    for shift in (1, 2, 3):
+        shapes += rows[:, shift : SHAPE_LENGTH + shift] * weights[shift]
+    return shapes
 
 
 def _noise(energy: NDArray[np.float32], cell: NDArray[np.int64], n_blocks: int) -> NDArray[np.float32]:

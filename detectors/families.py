@@ -12,10 +12,12 @@ from detectors.chunks import SHAPE_BEFORE, SHAPE_LENGTH
 CORE_BEFORE = 15  # working samples, 120 ms
 CORE_AFTER = 20  # working samples, 160 ms
 LAGS = tuple(range(-4, 5))  # working samples, 32 ms either way
-SAME_FAMILY = 0.90
-SAME_PROTOTYPE = 0.95
+LOOSEST = 0.90  # correlation that a family asks of its beats when they scatter much
+TIGHTEST = 0.97  # and when they scatter little
+SCATTER_ALLOWED = 4.0  # times the median distance of a family's own beats
+SAME_PROTOTYPE = 0.97
 AMPLITUDE_LIMIT = 2.0
-MOST_FAMILIES = 24
+MOST_FAMILIES = 32
 SEED_SAMPLE = 256
 
 
@@ -61,18 +63,30 @@ def cluster(shape_mv: NDArray[np.float32]) -> LocalFamilies:
     """Group one batch of beats, shape (n_beats, SHAPE_LENGTH), into at most MOST_FAMILIES families, biggest first."""
     unit, size = core(shape_mv)
     prototypes = np.empty((0, shape_mv.shape[1]), dtype=np.float32)
+    limits: list[float] = []
     free = np.arange(shape_mv.shape[0])
     while free.size >= 2 and prototypes.shape[0] < MOST_FAMILIES:
         seed = _seed(unit, size, shape_mv, free)
         if seed is None:
             break
-        for _ in range(2):
+        limit = LOOSEST
+        for _ in range(3):
             match, lag = likeness(unit[free], size[free], seed[None])
-            is_member = match[:, 0] > SAME_FAMILY
+            is_member = match[:, 0] > limit
+            if not is_member.any():
+                break
             seed = _mean_shape(shape_mv, free[is_member], lag[is_member, 0])
+            limit = _limit(match[is_member, 0])
+        is_member[np.flatnonzero(free == free[0])] |= not is_member.any()
         prototypes = np.vstack([prototypes, seed[None]])
+        limits.append(limit)
         free = free[~is_member]
-    return _assign(shape_mv, unit, size, _merge(prototypes))
+    return _assign(shape_mv, unit, size, prototypes, np.array(limits, dtype=np.float32))
+
+
+def _limit(match: NDArray[np.float32]) -> float:
+    """Correlation that a family asks of its beats, from how much they scatter."""
+    return float(np.clip(1 - SCATTER_ALLOWED * np.median(1 - match), LOOSEST, TIGHTEST))
 
 
 def _seed(
@@ -81,7 +95,7 @@ def _seed(
     """The free beat with most look-alikes among an even sample of the free beats; None when there is none."""
     sample = free[:: max(1, free.size // SEED_SAMPLE)]
     match, _ = likeness(unit[sample], size[sample], shape_mv[sample])
-    friends = (match > SAME_FAMILY).sum(axis=0)
+    friends = (match > LOOSEST).sum(axis=0)
     best = int(friends.argmax())
     return shape_mv[sample[best]] if friends[best] >= 2 else None
 
@@ -95,19 +109,12 @@ def _mean_shape(
     return (total / max(member.size, 1)).astype(np.float32)
 
 
-def _merge(prototypes: NDArray[np.float32]) -> NDArray[np.float32]:
-    """Leave out prototypes that an earlier one already stands for."""
-    kept: list[int] = []
-    if prototypes.shape[0]:
-        match, _ = likeness(*core(prototypes), prototypes)
-        for row in range(prototypes.shape[0]):
-            if all(match[row, other] <= SAME_PROTOTYPE for other in kept):
-                kept.append(row)
-    return prototypes[kept]
-
-
 def _assign(
-    shape_mv: NDArray[np.float32], unit: NDArray[np.float32], size: NDArray[np.float32], prototypes: NDArray[np.float32]
+    shape_mv: NDArray[np.float32],
+    unit: NDArray[np.float32],
+    size: NDArray[np.float32],
+    prototypes: NDArray[np.float32],
+    limits: NDArray[np.float32],
 ) -> LocalFamilies:
     n_beats = shape_mv.shape[0]
     if prototypes.shape[0] == 0:
@@ -118,7 +125,7 @@ def _assign(
     nearest = match.argmax(axis=1)
     row = np.arange(n_beats)
     like, lag = match[row, nearest], lag_of[row, nearest]
-    family = np.where(like > SAME_FAMILY, nearest, -1)
+    family = np.where(like > limits[nearest], nearest, -1)
     used = np.unique(family[family >= 0])
     shapes = np.array([_mean_shape(shape_mv, np.flatnonzero(family == f), lag[family == f]) for f in used])
     count = np.array([(family == f).sum() for f in used], dtype=np.int64)

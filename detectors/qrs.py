@@ -26,9 +26,15 @@ GUARD_S = 60.0
 
 THRESHOLD = 0.32  # of the local level
 LOW_THRESHOLD = 0.13  # of the local level, for the search in gaps
-REFRACTORY_S = 0.22
-T_WAVE_S = 0.40
-T_WAVE_RATIO = 0.45  # a T wave has less slope than this share of its QRS
+REFRACTORY_S = 0.24
+T_WAVE_S = 0.38
+T_WAVE_ENERGY = 0.8  # a T wave has less energy than this share of its QRS
+T_WAVE_SHARPNESS = 0.45  # and bends less sharply than this share of its QRS
+EARLY_S = 0.30  # so early, a weak second peak belongs to the same QRS
+EARLY_ENERGY = 0.6
+LONG_GAP = 1.5  # of the usual interval: any candidate in it is looked at
+SHORT_GAP = 1.2  # of the usual interval: only sharp ones
+SHARP_IN_GAP = 0.5
 
 
 class Envelope(NamedTuple):
@@ -84,15 +90,23 @@ class Peaks(NamedTuple):
     cell: NDArray[np.int64]
     energy: NDArray[np.float32]
     share: NDArray[np.float32]  # energy over the local level
+    sharpness: NDArray[
+        np.float32
+    ]  # largest second difference over 16 ms near by, mV: high for QRS, low for T and P waves
 
 
-def peaks(energy: NDArray[np.float32], level: NDArray[np.float32]) -> Peaks:
+def peaks(signal_mv: NDArray[np.float32], energy: NDArray[np.float32], level: NDArray[np.float32]) -> Peaks:
     """Local maxima of the energy above the low threshold."""
     middle = energy[1:-1]
     limit = np.repeat(level * np.float32(LOW_THRESHOLD), BLOCK_CELLS)[1:-1]
     cell = np.flatnonzero((middle > energy[:-2]) & (middle >= energy[2:]) & (middle > limit)) + 1
     height = energy[cell]
-    return Peaks(cell, height, height / level[cell // BLOCK_CELLS])
+    return Peaks(cell, height, height / level[cell // BLOCK_CELLS], _sharpness(signal_mv, cell))
+
+
+def _sharpness(signal_mv: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np.float32]:
+    rows = sliding_window_view(signal_mv, 24)[np.clip(cell * CELL + CELL // 2 - 12, 0, signal_mv.size - 24)]
+    return np.abs(rows[:, 2:-2] + rows[:, 2:-2] - rows[:, :-4] - rows[:, 4:]).max(axis=1, initial=0)
 
 
 def choose(candidates: Peaks) -> NDArray[np.int64]:
@@ -110,15 +124,23 @@ def _without_weaker_neighbours(candidates: Peaks, beat: NDArray[np.int64]) -> ND
         if beat.size < 2:
             break
         gap_s = np.diff(candidates.cell[beat]) * (CELL / WORKING_FS_HZ)
-        energy = candidates.energy[beat]
+        energy, sharpness = candidates.energy[beat], candidates.sharpness[beat]
         later_is_weaker = energy[1:] < energy[:-1]
         close = gap_s < REFRACTORY_S
-        t_wave = (gap_s < T_WAVE_S) & (energy[1:] < T_WAVE_RATIO * energy[:-1])
+        t_wave = _is_t_wave(gap_s, energy[1:] / energy[:-1], sharpness[1:] / sharpness[:-1])
         drop = np.zeros(beat.size, dtype=bool)
         drop[1:] |= (close & later_is_weaker) | t_wave
         drop[:-1] |= close & ~later_is_weaker
         beat = beat[~drop]
     return beat
+
+
+def _is_t_wave(
+    after_s: NDArray[np.float64], energy: NDArray[np.float32], sharpness: NDArray[np.float32]
+) -> NDArray[np.bool_]:
+    """T waves among candidates `after_s` after a QRS, with their energy and sharpness over those of the QRS."""
+    blunt = (after_s < T_WAVE_S) & (sharpness < T_WAVE_SHARPNESS) & (energy < T_WAVE_ENERGY)
+    return blunt | ((after_s < EARLY_S) & (energy < EARLY_ENERGY))
 
 
 def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[np.int64]:
@@ -128,14 +150,16 @@ def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[n
     cell = candidates.cell[beat]
     gap = np.diff(cell)
     usual = _running_median(gap.astype(np.float32), 9)
-    is_long = gap > np.maximum(1.5 * usual, 0.6 * WORKING_FS_HZ / CELL)
     between = np.searchsorted(cell, candidates.cell, side="right") - 1
     inside = (between >= 0) & (between < gap.size)
     slot = np.clip(between, 0, gap.size - 1)
     after_s = (candidates.cell - cell[slot]) * (CELL / WORKING_FS_HZ)
     before_s = (cell[slot + 1] - candidates.cell) * (CELL / WORKING_FS_HZ)
-    free = inside & is_long[slot] & (after_s > REFRACTORY_S) & (before_s > REFRACTORY_S)
-    free &= (after_s > T_WAVE_S) | (candidates.energy > T_WAVE_RATIO * candidates.energy[beat[slot]])
+    energy = candidates.energy / candidates.energy[beat[slot]]
+    sharpness = candidates.sharpness / candidates.sharpness[beat[slot]]
+    needed = np.where(sharpness > SHARP_IN_GAP, SHORT_GAP, LONG_GAP) * usual[slot]
+    free = inside & (gap[slot] > needed) & (after_s > REFRACTORY_S) & (before_s > REFRACTORY_S)
+    free &= ~_is_t_wave(after_s, energy, sharpness)
     found = np.flatnonzero(free)
     if found.size == 0:
         return beat

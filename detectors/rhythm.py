@@ -29,19 +29,22 @@ def rr_intervals_ms(
     return before, after
 
 
-def usual_rr_ms(rr_ms: NDArray[np.float32], quantile: float = 0.5) -> NDArray[np.float32]:
-    """Quantile of the RR intervals of about 12 beats on either side, shape (n_beats,), ms; 800 ms when nothing is known.
+def usual_rr_ms(before_ms: NDArray[np.float32], after_ms: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Usual interval near each beat, shape (n_beats,), ms; 800 ms when nothing is known.
 
-    Computed at every fourth beat and interpolated: rhythm changes more slowly than that.
+    Median over about 12 beats on either side of the mean of the intervals before and after a beat: that mean stays at the
+    sinus cycle in bigeminy with full pauses, where the median interval does not. Computed at every fourth beat and
+    interpolated: rhythm changes more slowly than that.
     """
-    if rr_ms.size == 0:
-        return rr_ms
+    if before_ms.size == 0:
+        return before_ms
+    rr_ms = (before_ms + after_ms) / 2
     reach, step = USUAL_REACH_BEATS, USUAL_STEP_BEATS
     fill = np.full(reach, np.nan, dtype=np.float32)
     padded = np.concatenate([fill, rr_ms, fill, fill[: step - 1]])
     windows = np.sort(sliding_window_view(padded, 2 * reach + 1)[::step], axis=1)  # NaN sorts last
     known = 2 * reach + 1 - np.isnan(windows).sum(axis=1)
-    at = np.rint(quantile * np.maximum(known - 1, 0)).astype(np.int64)
+    at = np.maximum(known - 1, 0) // 2
     coarse = np.where(known > 0, windows[np.arange(known.size), at], np.float32(np.nan))
     is_known = ~np.isnan(coarse)
     if not is_known.any():
