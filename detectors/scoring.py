@@ -20,6 +20,7 @@ MATCH_WINDOW_S = 0.15
 LEARNING_S = 300.0
 
 _N, _S, _V, _F, _Q, _NONE, _SHUT = range(7)
+_NOTHING = np.zeros((0, 2), np.int64)
 
 
 class Ratio(NamedTuple):
@@ -58,10 +59,12 @@ def compare_beats(
     n_samples: int,
     learning_s: float = LEARNING_S,
     escape_as: str = "S",
+    left_out: NDArray[np.int64] | None = None,
 ) -> BeatScore:
     """Count which test beat stands for which reference beat, class by class.
 
-    The first `learning_s` are not scored. Source of the method: ANSI/AAMI EC57, beat-by-beat comparison.
+    The first `learning_s` are not scored, nor is what lies in the spans `left_out`, shape (n, 2), first to last sample.
+    A pair lies where its reference beat lies. Source of the method: ANSI/AAMI EC57, beat-by-beat comparison.
     The RR error is taken at every decision, unmatched beats included, as the standard's comparator does.
     """
     truth, found = sorted_out(reference, n_samples, escape_as), sorted_out(test, n_samples, escape_as)
@@ -70,7 +73,8 @@ def compare_beats(
     said = ~inside(found.sample, truth.fibrillation)  # beats within marked fibrillation say nothing about the test
     found = found._replace(sample=found.sample[said], beat_class=found.beat_class[said])
     match = match_beats(truth.sample, found.sample, window=match_window(fs_hz))
-    scored = _from_start(match, truth.sample, found.sample, start)
+    where = _where(match, truth.sample, found.sample)
+    scored = (where >= start) & ~inside(where, _NOTHING if left_out is None else left_out)
     shut = np.clip(found.shutdown, start, n_samples)
     return BeatScore(
         _matrix(match, scored, truth, found),
@@ -165,15 +169,13 @@ def _rr(labels: Labels) -> NDArray[np.float64]:
     return rr
 
 
-def _from_start(
-    match: Match, truth_at: NDArray[np.int64], found_at: NDArray[np.int64], start: int
-) -> NDArray[np.bool_]:
-    """Which decisions are scored: those whose reference beat, or lone test beat, lies at or after `start`."""
+def _where(match: Match, truth_at: NDArray[np.int64], found_at: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Sample of each decision: of its reference beat, or of the test beat that has none."""
     lone = match.reference < 0
-    scored = np.empty(lone.shape, bool)
-    scored[lone] = found_at[match.test[lone]] >= start
-    scored[~lone] = truth_at[match.reference[~lone]] >= start
-    return scored
+    where = np.empty(lone.shape, np.int64)
+    where[lone] = found_at[match.test[lone]]
+    where[~lone] = truth_at[match.reference[~lone]]
+    return where
 
 
 def _rows(reference: NDArray[np.int64], test: NDArray[np.int64], truth: Labels, found: Labels) -> NDArray[np.int64]:

@@ -182,6 +182,15 @@ class TestOptions:
         met = [scoring.REFERENCE_ROWS[row] if row >= 0 else "-" for row in score.true_class]
         assert met == ["-", "V", "O", "N"]
 
+    def test_spans_left_out(self):
+        """Beats in a span that is left out count nowhere; a pair across its edge goes with the reference beat."""
+        reference = annotations.beat_annotations([100, 300, 500, 700], ["N", "V", "V", "N"])
+        test = annotations.beat_annotations([100, 298, 400, 502, 700], ["N", "N", "V", "V", "N"])
+        score = scoring.compare_beats(
+            reference, test, fs_hz=250, n_samples=900, learning_s=0, left_out=np.array([[299, 500]])
+        )
+        assert score.matrix.sum() == score.matrix[0, 0] == 2
+
     def test_no_beats_at_all(self):
         """Two empty lists give an empty matrix and no error."""
         nothing = annotations.beat_annotations([], [])
