@@ -8,11 +8,12 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import chunks, classify, episodes, families, features, quality, rhythm, signal
+from detectors import chunks, classify, episodes, families, features, qrs, quality, rhythm, signal
 from detectors.results import Analysis, Beats, Families, Finding, Segment
 
 DETECTOR_VERSION = "1"
 BATCH_BEATS = 4096
+RARE = 3  # beats of a family that may be an artefact
 
 
 class _Batch(NamedTuple):
@@ -20,6 +21,7 @@ class _Batch(NamedTuple):
 
     segment: NDArray[np.int16]
     working: NDArray[np.float64]
+    energy: NDArray[np.float32]
     family: NDArray[np.int64]
     nearest: NDArray[np.int64]
     likeness: NDArray[np.float32]
@@ -145,6 +147,7 @@ def _drain(
             _Batch(
                 np.full(now.working.size, segment, dtype=np.int16),
                 now.working,
+                now.energy,
                 number[local.family],
                 number[local.nearest],
                 local.likeness,
@@ -165,17 +168,21 @@ def _finish(
     options: _Options,
 ) -> Analysis:
     bad = quality.windows(judged, fs_hz)
-    joined = _join(batches)
-    position = signal.working_to_sample(joined.working, fs_hz)
-    sample = np.rint(position).astype(np.int64)
     lengths = np.array([s.n_samples for s in segments], dtype=np.int64)
-    sample = np.clip(sample, 0, np.maximum(lengths[joined.segment] - 1, 0)) if sample.size else sample
+    joined = _join(batches)
+    for is_last in (False, True):
+        position = signal.working_to_sample(joined.working, fs_hz)
+        sample = np.clip(np.rint(position).astype(np.int64), 0, np.maximum(lengths[joined.segment] - 1, 0))
+        gap = quality.has_gap_before(bad, joined.segment, sample)
+        before, after = rhythm.rr_intervals_ms(joined.segment, position, fs_hz, gap)
+        usual = rhythm.usual_rr_ms(before, after)
+        if not is_last:
+            count = np.append(np.bincount(joined.family[joined.family >= 0], minlength=book.count.size), 0)
+            drop = qrs.is_interloper(joined.energy, before, after, usual, count[joined.family] <= RARE)
+            joined = _Batch(*(c[~drop] for c in joined[:-1]), features.Features(*(c[~drop] for c in joined.features)))
     is_good = quality.is_outside(bad, joined.segment, sample)
-    gap = quality.has_gap_before(bad, joined.segment, sample)
-    before, after = rhythm.rr_intervals_ms(joined.segment, position, fs_hz, gap)
-    usual = rhythm.usual_rr_ms(before, after)
     labels = classify.classify(
-        classify.Timing(before / usual, after / usual),
+        classify.Timing(before, after, usual),
         classify.Match(joined.family, joined.nearest, joined.likeness),
         book.shape_mv,
     )
@@ -215,7 +222,13 @@ def _join(batches: list[_Batch]) -> _Batch:
         none = np.zeros(0, dtype=np.int64)
         real = none.astype(np.float32)
         return _Batch(
-            none.astype(np.int16), none.astype(np.float64), none, none, real, features.Features(real, real, real, real)
+            none.astype(np.int16),
+            none.astype(np.float64),
+            real,
+            none,
+            none,
+            real,
+            features.Features(real, real, real, real),
         )
     columns = list(zip(*(batch[:-1] for batch in batches), strict=True))
     described = features.Features(

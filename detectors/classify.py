@@ -13,11 +13,15 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import families
+from detectors import families, rhythm
 from detectors.features import describe
 
 EARLY = 0.87  # of the usual interval
 ON_TIME = 0.10  # either side of the usual interval
+S_EARLY = 0.88  # of the usual interval
+S_EARLY_AFTER_CHANGE = 0.85  # of the usual interval of 12 beats ago
+S_SUDDEN = 0.90  # of the interval before
+AF_IRREGULARITY = 0.6
 MODEL = {
     "intercept": -3.5,
     "distance": 2.0,  # log10 of the shape distance from the nearest normal family over the scatter of both
@@ -30,10 +34,21 @@ MODEL = {
 
 
 class Timing(NamedTuple):
-    """RR of each beat over the usual interval; arrays of shape (n_beats,), NaN after or before a gap."""
+    """RR around each beat; arrays of shape (n_beats,)."""
 
-    before: NDArray[np.float32]
-    after: NDArray[np.float32]
+    before_ms: NDArray[np.float32]  # NaN after a gap
+    after_ms: NDArray[np.float32]  # NaN before a gap
+    usual_ms: NDArray[np.float32]
+
+    @property
+    def before(self) -> NDArray[np.float32]:
+        """RR before over the usual interval."""
+        return self.before_ms / self.usual_ms
+
+    @property
+    def after(self) -> NDArray[np.float32]:
+        """RR after over the usual interval."""
+        return self.after_ms / self.usual_ms
 
 
 class Match(NamedTuple):
@@ -77,10 +92,26 @@ def classify(timing: Timing, match: Match, family_shape_mv: NDArray[np.float32])
     loose = np.flatnonzero(match.family < 0)
     odds[loose] = _loose_odds(timing, match, loose, habits, normal, family_odds)
     is_v = odds > 0
-    is_early = np.nan_to_num(timing.before, nan=1.0) < EARLY
-    beat_class = np.where(is_v, "V", np.where(is_early, "S", "N")).astype("<U1")
+    is_s = supraventricular(timing, is_v)
+    beat_class = np.where(is_v, "V", np.where(is_s, "S", "N")).astype("<U1")
     probability = 1 / (1 + np.exp(-np.abs(odds)))
     return Labels(beat_class, probability.astype(np.float32), np.where(family_odds > 0, "V", "N").astype("<U1"))
+
+
+def supraventricular(timing: Timing, is_v: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Early beats that are not ventricular, and the fast rhythms that such a beat begins, shape (n_beats,).
+
+    Early means against the intervals near by or those of 12 beats ago, and at once: not a rate that rises beat by beat,
+    not the beat after a ventricular one, and not where the rhythm is irregular as in atrial fibrillation.
+    """
+    reference_ms = rhythm.earlier_rr_ms(timing.usual_ms)
+    last_ms = np.concatenate([[np.nan], timing.before_ms[:-1]]) if is_v.size else timing.before_ms
+    follows_v = np.concatenate([[False], is_v[:-1]]) if is_v.size else is_v
+    regular = rhythm.irregularity(timing.before_ms, ~is_v) < AF_IRREGULARITY
+    early = (timing.before_ms < S_EARLY * timing.usual_ms) | (timing.before_ms < S_EARLY_AFTER_CHANGE * reference_ms)
+    onset = early & (timing.before_ms < S_SUDDEN * last_ms) & ~is_v & ~follows_v & regular
+    fast = rhythm.fast_stretches(timing.before_ms, np.maximum(timing.usual_ms, reference_ms), onset)
+    return (onset | fast) & ~is_v & regular
 
 
 def family_habits(timing: Timing, match: Match, n_families: int) -> Habits:

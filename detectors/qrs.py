@@ -35,6 +35,8 @@ EARLY_ENERGY = 0.6
 LONG_GAP = 1.5  # of the usual interval: any candidate in it is looked at
 SHORT_GAP = 1.2  # of the usual interval: only sharp ones
 SHARP_IN_GAP = 0.5
+FAR_WEAKER = 0.4  # slope energy over that of the weaker neighbour
+WEAKER = 0.75
 
 
 class Envelope(NamedTuple):
@@ -178,3 +180,24 @@ def fiducials(slope: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np
     bend = left - 2 * middle + right
     shift = np.divide(0.5 * (left - right), bend, out=np.zeros_like(bend), where=bend < 0)
     return at + np.clip(shift, -0.5, 0.5).astype(np.float64)
+
+
+def is_interloper(
+    energy: NDArray[np.float32],
+    before_ms: NDArray[np.float32],
+    after_ms: NDArray[np.float32],
+    usual_ms: NDArray[np.float32],
+    is_rare: NDArray[np.bool_],
+) -> NDArray[np.bool_]:
+    """Detections that are no QRS, judged once all are known, shape (n_beats,).
+
+    Only beats of rare shape: those with far less slope than both neighbours, and weak ones between neighbours that keep
+    time without them (P and T waves, artefacts).
+    """
+    if energy.size < 3:
+        return np.zeros(energy.size, dtype=bool)
+    weaker_neighbour = np.minimum(np.append(energy[1:], energy[-2]), np.insert(energy[:-1], 0, energy[1]))
+    share = energy / weaker_neighbour
+    around = (before_ms + after_ms) / usual_ms
+    between = (around > 0.85) & (around < 1.2)
+    return is_rare & ((share < FAR_WEAKER) | (between & (share < WEAKER)))

@@ -12,6 +12,9 @@ USUAL_REACH_BEATS = 12
 USUAL_STEP_BEATS = 4
 INTERPOLATED_LIMIT = 1.25  # of the usual interval
 QT_AT_60_PER_MIN_MS = 400.0  # from memory: upper middle of normal heart-rate corrected QT, verify before relying on it
+FAST = 0.88  # of the interval before the onset
+MUCH_FASTER = 0.80
+RAMP_BEATS = 3
 ESCAPE_LIMIT = 1.15  # of the usual interval
 
 
@@ -82,7 +85,43 @@ def r_on_t_index(coupling_ms: NDArray[np.float32], usual_ms: NDArray[np.float32]
     return (coupling_ms / (QT_AT_60_PER_MIN_MS * np.cbrt(usual_ms / 1000))).astype(np.float32)
 
 
-def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_beats: int = 16) -> NDArray[np.float32]:
+def earlier_rr_ms(usual_ms: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Usual interval before a change of rate: the one of 12 beats earlier, shape (n_beats,), ms."""
+    lag = min(USUAL_REACH_BEATS, max(usual_ms.size - 1, 0))
+    return np.concatenate([usual_ms[:1].repeat(lag), usual_ms[: usual_ms.size - lag]])
+
+
+def fast_stretches(
+    before_ms: NDArray[np.float32], reference_ms: NDArray[np.float32], is_onset: NDArray[np.bool_]
+) -> NDArray[np.bool_]:
+    """Beats of a fast rhythm that begins suddenly, shape (n_beats,): from each onset until an interval is long again.
+
+    The intervals stay under FAST of the one before the onset. A stretch of more than RAMP_BEATS counts only when it is
+    much faster or ends in a jump; otherwise the rate merely rose. All onsets advance together, one beat a step.
+    """
+    onset = np.flatnonzero(is_onset)
+    limit = FAST * reference_ms[onset]
+    length = np.ones(onset.size, dtype=np.int64)
+    total = before_ms[onset].astype(np.float64)
+    active = np.arange(onset.size)
+    while active.size:
+        at = onset[active] + length[active]
+        active, at = active[at < before_ms.size], at[at < before_ms.size]
+        goes_on = before_ms[at] < limit[active]  # False for NaN
+        active, at = active[goes_on], at[goes_on]
+        length[active] += 1
+        total[active] += before_ms[at]
+    after = np.minimum(onset + length, before_ms.size - 1)
+    jump = np.nan_to_num(before_ms[after] / before_ms[np.maximum(after - 1, 0)], nan=0.0) > 1.15
+    much_faster = total / length < MUCH_FASTER * reference_ms[onset]
+    counts = (length <= RAMP_BEATS) | much_faster | jump
+    change = np.zeros(before_ms.size + 1, dtype=np.int64)
+    np.add.at(change, onset[counts], 1)
+    np.add.at(change, (onset + length)[counts], -1)
+    return np.cumsum(change[:-1]) > 0
+
+
+def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_beats: int = 24) -> NDArray[np.float32]:
     """Share of successive RR differences above 8 % near each beat, shape (n_beats,), 0 to 1; high in atrial fibrillation.
 
     Only intervals between plain (not ectopic) beats count; 0 where fewer than 8 are near.
