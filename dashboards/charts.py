@@ -58,7 +58,7 @@ def timeline(wear_days: pl.DataFrame, therapies: pl.DataFrame, periods: pl.DataF
                "hoverformat": "%a %-d %b %Y", "tickformat": "%-d %b\n%Y"},
         yaxis=_axis("V burden, %", (0.50, 1.0)),
         yaxis2=_axis("hours", (0.25, 0.44), range=[0, 25], tickvals=[0, 8, 16, 24]),
-        yaxis3=_axis("rate, /min", (0.0, 0.19), rangemode="normal"),
+        yaxis3=_axis("rate, /min", (0.0, 0.19), rangemode="normal", nticks=4),
         barmode="overlay",
         bargap=0.15,
         hovermode="x unified",
@@ -74,7 +74,7 @@ def _burden_days(wear_days: pl.DataFrame, *, valid: bool) -> dict[str, Any]:
     return {
         "type": "scatter",
         "mode": "markers",
-        "name": "V burden, valid day" if valid else "V burden, day with too few analysable hours",
+        "name": "burden, valid day" if valid else "burden, too few hours",
         "x": _days(rows["local_day"]),
         "y": _values(rows["v_burden_pct"], 3),
         "customdata": rows.select("v_beats", "all_beats", pl.col("analysable_h").round(1)).rows(),
@@ -99,7 +99,7 @@ def _rate_days(wear_days: pl.DataFrame) -> dict[str, Any]:
     return {
         "type": "scatter",
         "mode": "markers",
-        "name": "mean heart rate",
+        "name": "heart rate",
         "x": _days(rows["local_day"]),
         "y": _values(rows["mean_rate_bpm"], 1),
         "yaxis": "y3",
@@ -221,7 +221,7 @@ def wearing(hours: pl.DataFrame, zone: str) -> Figure:
         xaxis={**GREY, "type": "date", "anchor": "y3", "hoverformat": "%a %-d %b, %H h", "tickformat": "%H h\n%-d %b"},
         yaxis=_axis("beats in the hour", (0.54, 1.0)),
         yaxis2=_axis("minutes", (0.27, 0.47), range=[0, 61], tickvals=[0, 30, 60]),
-        yaxis3=_axis("rate, /min", (0.0, 0.20), rangemode="normal"),
+        yaxis3=_axis("rate, /min", (0.0, 0.20), rangemode="normal", nticks=4),
         barmode="overlay",
         hovermode="x unified",
     )

@@ -133,14 +133,15 @@ def draw_families(families: pl.DataFrame) -> list[dict[str, Any]]:
 
 
 def _strips(tables: Tables, recordings: pl.DataFrame) -> Iterable[dict[str, Any]]:
-    """Yield the first strips with ectopic beats of the first and the last recording."""
+    """Yield the first strips with ectopic beats of the first and the last recording; one of each goes on paper."""
     ends = (
         list(dict.fromkeys(recordings["recording_id"].gather([0, recordings.height - 1]))) if recordings.height else []
     )
     for recording_id in ends:
         kept = tables.large("strips", recording_id).filter(pl.col("beat_class").is_in(ECTOPIC)).head(STRIPS_SHOWN)
         zone = recordings.row(by_predicate=pl.col("recording_id") == recording_id, named=True)["zone"]
-        yield from draw_rows(kept, zone)
+        drawn = draw_rows(kept, zone)
+        yield from (row | {"on_paper": place == 0} for place, row in enumerate(drawn))
 
 
 def draw_rows(rows: pl.DataFrame, zone: str) -> list[dict[str, Any]]:

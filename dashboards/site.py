@@ -20,6 +20,7 @@ import polars as pl
 
 from dashboards import addresses, methods, overview, patient, recording, words
 from dashboards.tables import PublishedTables, Tables
+from warehouse.cautions import CAUTIONS
 
 ROOM = Path(__file__).parent
 MANIFEST = "pages.json"
@@ -76,13 +77,17 @@ def _write_recording(press: Press, tables: Tables, row: dict[str, Any]) -> None:
     )  # fmt: skip
 
 
+# A spreadsheet runs text that begins like a formula; an apostrophe before it makes it text again.
+_NO_FORMULA = pl.col(pl.String).str.replace(r"^([=+\-@\t\r])", "'$1")
+
+
 class Press:
     """Renders pages into a site folder and remembers what each was made from."""
 
     def __init__(self, site: Path, previous: Path | None, programme_name: str, version: str) -> None:
         self._site = site
         self._previous = previous
-        self._frame = {"programme_name": programme_name, "version": version, "cautions": words.CAUTIONS}
+        self._frame = {"programme_name": programme_name, "version": version, "cautions": CAUTIONS}
         self._edition = hashlib.sha256(json.dumps(self._frame).encode() + _source_bytes()).hexdigest()
         self._known: dict[str, Any] = _manifest(previous)
         self._made: dict[str, Any] = {}
@@ -140,8 +145,8 @@ class Press:
         return True
 
     def _csv(self, frame: pl.DataFrame) -> str:
-        head = [f"{self._frame['programme_name']}, burdenline {self._frame['version']}", *words.CAUTIONS]
-        return "".join(f"# {' '.join(line.split())}\n" for line in head) + frame.write_csv()
+        head = [f"{self._frame['programme_name']}, burdenline {self._frame['version']}", *CAUTIONS]
+        return "".join(f"# {' '.join(line.split())}\n" for line in head) + frame.with_columns(_NO_FORMULA).write_csv()
 
     def _write(self, name: str, text: str) -> None:
         target = self._site / name

@@ -69,18 +69,6 @@ DELIVERY_STATUS = {
     "quarantined": "refused",
 }
 
-# Printed on every page and in every download. Local rules and licensed practice come first.
-CAUTIONS = (
-    "For research and quality work on exported recordings: not for primary diagnosis and not for alarms. "
-    "A clinician over-reads every finding. Urgent rhythms may be found days late or not at all.",
-    "Automatic labels from one lead can mistake aberrant conduction, bundle-branch block, pacing or noise for "
-    "ventricular beats. Look at the strips behind a number and at the time that was not analysed.",
-    "Fewer ectopic beats is not the same as benefit for the patient: in a large trial of antiarrhythmic drugs, "
-    "suppression came with more deaths (CAST).",
-    "Local rules and the judgement of the licensed clinician in charge come before anything on this page. "
-    "Used for patient care, software like this is likely a medical device and falls under its rules.",
-)
-
 
 def number(value: float | int | None, digits: int = 0) -> str:
     """Return a number with thousands set apart by thin spaces, or a dash when it is missing."""

@@ -1,0 +1,87 @@
+"""Figures that plotly accepts and that show what the tables hold."""
+
+from __future__ import annotations
+
+import json
+from datetime import date
+
+import plotly.graph_objects
+import polars as pl
+import pytest
+
+from dashboards import charts
+from dashboards.tables import Tables
+
+CODE = "SKERRY-0001"
+
+
+@pytest.fixture
+def tables(rows, publish) -> Tables:
+    return Tables(publish(rows))
+
+
+@pytest.fixture
+def timeline(tables):
+    return charts.timeline(
+        *(tables.of_patient(name, CODE) for name in ("wear_days", "therapies", "periods", "changes"))
+    )
+
+
+def coloured(figure) -> dict:
+    """Put a colour where a figure names a style sheet variable, as the page does."""
+    return json.loads(json.dumps(figure).replace('"--', '"#'), object_hook=_hex_only)
+
+
+def _hex_only(found: dict) -> dict:
+    return {k: "#123456" if isinstance(v, str) and v.startswith("#") else v for k, v in found.items()}
+
+
+def test_plotly_accepts_the_figures(tables, timeline):
+    """Every property of the figures is one that plotly knows, with a value it allows."""
+    hours = tables.of_recording("hours", "CN0000-20260302")
+    for figure in (timeline, charts.wearing(hours, "Atlantic/Azores")):
+        # Source: plotly's own schema, checked by its graph objects
+        plotly.graph_objects.Figure(coloured(figure))
+    clock_map = coloured(charts.clock_map(tables.of_patient("local_hours", CODE)))
+    del clock_map["data"][0]["colorscale"]
+    plotly.graph_objects.Figure(clock_map)
+
+
+def test_days_with_too_few_hours_are_drawn_apart(timeline, tables):
+    """Valid and short days are two traces, together every day with a burden."""
+    valid, short = (trace for trace in timeline["data"] if trace["name"].startswith("burden"))
+    days = tables.of_patient("wear_days", CODE)
+    assert valid["x"] == [str(day) for day in days.filter("is_valid_day")["local_day"]]
+    assert len(valid["x"]) + len(short["x"]) == days.height
+
+
+def test_days_without_wear_between_wears_are_shaded(timeline):
+    """The thirteen days between the two wears are one shaded stretch."""
+    (gap,) = [shape for shape in timeline["layout"]["shapes"] if shape.get("fillcolor") == "--gap"]
+    assert (gap["x0"], gap["x1"]) == ("2026-03-06 12:00:00", "2026-03-19 12:00:00")
+
+
+def test_therapy_text_cannot_carry_markup(tables):
+    """Plotly's small markup in a register field stays text."""
+    therapies = pl.DataFrame(
+        {"therapy_day": [date(2026, 3, 1)], "therapy_kind": ["other"], "therapy_detail": ["<a href='x'>y</a>"]}
+    )
+    (note,) = charts._therapy_notes(therapies)
+    assert "<" not in note["text"]
+
+
+def test_the_clock_map_has_every_day_and_hour(tables):
+    """Days without wear and hours without beats are empty cells, so that all cells are equally wide."""
+    (trace,) = charts.clock_map(tables.of_patient("local_hours", CODE))["data"]
+    assert len(trace["x"]) == (date(2026, 3, 24) - date(2026, 3, 2)).days + 1
+    assert len(trace["z"]) == 24 and trace["z"][3][10] is None
+
+
+def test_hours_run_on_across_a_clock_change():
+    """On the night when clocks go back the hours of a recording stay an hour apart."""
+    hours = pl.datetime_range(
+        pl.datetime(2026, 10, 24, 22), pl.datetime(2026, 10, 25, 4), "1h", time_unit="us", eager=True
+    )
+    # Source: tz database, Europe/Berlin leaves summer time on 25 October 2026 at 01:00 UTC
+    shown = charts._on_the_clock(hours, "Europe/Berlin")
+    assert shown[0] == "2026-10-25 00:00:00" and len(set(shown)) == len(shown) == 7

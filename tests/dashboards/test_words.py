@@ -1,0 +1,81 @@
+"""Wording of numbers and times, names of files, and colours that can be told apart."""
+
+from __future__ import annotations
+
+import re
+from datetime import date, datetime
+from pathlib import Path
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+import dashboards
+from dashboards import addresses, words
+
+STYLE = (Path(dashboards.__file__).parent / "assets" / "site.css").read_text("utf-8")
+
+
+def test_numbers_set_thousands_apart_and_say_when_missing():
+    """Thousands are apart by narrow spaces; missing and NaN are a dash, never 0."""
+    assert words.number(1234567.891, 1) == "1\u202f234\u202f567.9"
+    assert words.number(-3) == "\u22123"
+    assert words.number(None) == words.number(float("nan")) == words.MISSING
+    assert words.number(0) == "0"
+
+
+def test_times_are_local_and_name_their_offset():
+    """An instant is shown on the clock of its zone with the offset then in force."""
+    # Source: tz database, Atlantic/Azores is at UTC-01:00 in winter
+    assert (
+        words.clock(datetime.fromisoformat("2026-03-02T12:00:00"), "Atlantic/Azores")
+        == "2 Mar 2026, 11:00:00 UTC-01:00"
+    )
+    assert words.clock(datetime.fromisoformat("2026-03-02T12:00:00"), "UTC") == "2 Mar 2026, 12:00:00 UTC"
+
+
+@pytest.mark.parametrize(
+    ("first", "last", "said"),
+    [
+        (date(2026, 3, 2), date(2026, 3, 24), "2\N{EN DASH}24 Mar 2026"),
+        (date(2026, 3, 2), date(2026, 4, 1), "2 Mar \N{EN DASH} 1 Apr 2026"),
+        (date(2025, 12, 30), date(2026, 1, 2), "30 Dec 2025 \N{EN DASH} 2 Jan 2026"),
+        (date(2026, 3, 2), date(2026, 3, 2), "2 Mar 2026"),
+        (None, None, words.MISSING),
+    ],
+)
+def test_spans_say_a_shared_month_once(first, last, said):
+    """A span of days names month and year once where they are the same."""
+    assert words.days(first, last) == said
+
+
+@given(st.lists(st.text(min_size=1, max_size=80), min_size=2, max_size=6, unique=True))
+def test_page_names_are_safe_and_distinct(codes):
+    """Any codes have file names of plain letters that differ also where case does not count."""
+    stems = [addresses.stem(code) for code in codes]
+    assert all(re.fullmatch(r"[A-Za-z0-9_-]{1,64}", stem) for stem in stems)
+    assert len({stem.lower() for stem in stems}) == len(codes)
+
+
+def luminance(colour: str) -> float:
+    channels = [int(colour[place : place + 2], 16) / 255 for place in (1, 3, 5)]
+    linear = [c / 12.92 if c <= 0.03928 else ((c + 0.055) / 1.055) ** 2.4 for c in channels]
+    return 0.2126 * linear[0] + 0.7152 * linear[1] + 0.0722 * linear[2]
+
+
+def contrast(one: str, other: str) -> float:
+    high, low = sorted((luminance(one), luminance(other)), reverse=True)
+    return (high + 0.05) / (low + 0.05)
+
+
+@pytest.mark.parametrize("scheme", [0, 1], ids=["light", "dark"])
+@pytest.mark.parametrize("ground", ["paper", "sheet"])
+def test_text_colours_have_contrast_aa(scheme, ground):
+    """Every text colour reads against page and card in both schemes."""
+    colours = {
+        name: pair[scheme]
+        for name, *pair in re.findall(r"--([\w-]+): light-dark\((#[0-9a-f]{6}), (#[0-9a-f]{6})\)", STYLE)
+    }
+    for name in ("ink", "soft", "link", "v", "s", "f", "q", "n", "fell", "rose", "even", "few", "therapy", "rate"):
+        # Source: WCAG 2.2, success criterion 1.4.3 (level AA): at least 4.5 to 1
+        assert contrast(colours[name], colours[ground]) >= 4.5, name
