@@ -1,0 +1,228 @@
+"""One build of the trend tables: lake parts and register in, SQL models run in layers, checks asked.
+
+The build happens in a scratch database that is thrown away; `warehouse.publish` copies the result. Models are SQL files
+named after the table they make; the order in which they run is `MODELS`, and a model sees the tables before it, plus
+
+- `lake.*`: the parts in force of the published fingerprint, with the columns of `schema.LAKE`,
+- `register.*`: patients, wears, therapies,
+- `programme.settings`: one row, a column per threshold, and the published fingerprint.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from importlib import resources
+from pathlib import Path
+from typing import NamedTuple, Self
+
+import duckdb
+import polars as pl
+
+from warehouse import schema
+from warehouse.database import open_database
+from warehouse.parts import Part, checked_frame, polars_type
+
+MODELS: dict[str, tuple[str, ...]] = {
+    "staging": ("patients", "therapies", "recording_wears", "patient_quarters"),
+    "intermediate": ("hours", "local_hours", "wear_days", "period_spans", "periods"),
+    "marts": (
+        "deliveries", "recordings", "segments", "families", "episodes", "findings", "attention_from_days",
+        "attention_from_therapies", "attention", "reviews", "runs_of_flow", "fingerprints",
+    ),
+}  # fmt: skip
+
+READ_IN_PLACE = ("beats", "quality_windows", "strips")
+"""Published tables that are too large to copy: views over the parts, in the build and in the publication."""
+
+REGISTER: dict[str, dict[str, str]] = {
+    "patients": {"patient_code": "VARCHAR", "zone": "VARCHAR"},
+    "wears": {
+        "recording_id": "VARCHAR", "device_serial": "VARCHAR", "patient_code": "VARCHAR", "from_utc": "TIMESTAMP",
+        "to_utc": "TIMESTAMP",
+    },
+    "therapies": {
+        "therapy_id": "VARCHAR", "patient_code": "VARCHAR", "therapy_kind": "VARCHAR", "therapy_detail": "VARCHAR",
+        "therapy_day": "DATE", "settling_days": "INTEGER",
+    },
+}  # fmt: skip
+
+SETTINGS: dict[str, str] = {
+    "min_analysable_h_per_day": "DOUBLE",
+    "min_days_per_period": "INTEGER",
+    "baseline_days": "INTEGER",
+    "after_days": "INTEGER",
+    "attention_v_burden_pct": "DOUBLE",
+    "attention_run_beats": "INTEGER",
+    "attention_fast_run_bpm": "DOUBLE",
+    "attention_pause_ms": "DOUBLE",
+}
+
+
+class BuildError(RuntimeError):
+    """A model or a frame does not fit; the message names the table and what DuckDB or the dictionary objects to."""
+
+
+class Failure(NamedTuple):
+    """A claim about the tables that does not hold, with the rows that contradict it."""
+
+    claim: str
+    rows: pl.DataFrame
+
+
+class ArrowStream:
+    """Hands a polars frame to DuckDB through the Arrow C interface, which needs no pyarrow."""
+
+    def __init__(self, frame: pl.DataFrame) -> None:
+        self._frame = frame
+
+    def __arrow_c_stream__(self, requested_schema: object = None) -> object:
+        """Arrow stream of the frame."""
+        return self._frame.__arrow_c_stream__(requested_schema)
+
+
+class TrendBuild:
+    """Scratch database in which the trend tables are built; use it as a context manager.
+
+    `register` has the frames of REGISTER and `settings` the values of SETTINGS (further ones are ignored).
+    Of `parts` those without a fingerprint and those of `fingerprint` are used.
+    """
+
+    def __init__(
+        self,
+        lake: Path,
+        parts: Iterable[Part],
+        *,
+        register: Mapping[str, pl.DataFrame],
+        settings: Mapping[str, float | int | str],
+        fingerprint: str,
+        workdir: Path,
+    ) -> None:
+        self.lake = lake
+        self.parts = [p for p in parts if p.table == "fingerprints" or p.fingerprint in ("", fingerprint)]
+        self.fingerprint = fingerprint
+        self._register = register
+        self._settings = settings
+        self._database = workdir / "build.duckdb"
+
+    def __enter__(self) -> Self:
+        self._database.parent.mkdir(parents=True, exist_ok=True)
+        self._remove_database()
+        self.connection = open_database(str(self._database))
+        for layer in ("lake", "register", "programme"):
+            self.connection.execute(f"CREATE SCHEMA {layer}")
+        self._load_register()
+        self._load_settings()
+        self._load_lake()
+        self.add("parts", parts_frame(self.parts))
+        self.add("data_dictionary", dictionary_frame())
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.connection.close()
+        self._remove_database()
+
+    def _remove_database(self) -> None:
+        for path in self._database.parent.glob("build.duckdb*"):
+            path.unlink()
+
+    def _load_register(self) -> None:
+        for table, types in REGISTER.items():
+            frame = self._register[table].select([pl.col(name).cast(polars_type(types[name])) for name in types])
+            self._insert(f"register.{table}", types, frame)
+
+    def _load_settings(self) -> None:
+        missing = [name for name in SETTINGS if name not in self._settings]
+        if missing:
+            raise BuildError(f"settings missing for the models: {', '.join(missing)}")
+        values = {name: self._settings[name] for name in SETTINGS} | {"fingerprint": self.fingerprint}
+        self._insert("programme.settings", {**SETTINGS, "fingerprint": "VARCHAR"}, pl.DataFrame([values]))
+
+    def _load_lake(self) -> None:
+        for name, table in schema.LAKE.items():
+            paths = [str(self.lake / part.path) for part in self.parts if part.table == name]
+            if name == "signal":
+                continue
+            if not paths:
+                self.connection.execute(f"CREATE TABLE lake.{name} ({column_definitions(table)})")
+                continue
+            kind = "VIEW" if name in READ_IN_PLACE else "TABLE"
+            self.connection.execute(f"CREATE {kind} lake.{name} AS {parts_query(table, paths)}")
+
+    def _insert(self, name: str, types: Mapping[str, str], frame: pl.DataFrame) -> None:
+        columns = ", ".join(f"{column} {kind}" for column, kind in types.items())
+        self.connection.execute(f"CREATE TABLE {name} ({columns})")
+        self.connection.register("arriving", ArrowStream(frame))
+        self.connection.execute(f"INSERT INTO {name} BY NAME FROM arriving")
+        self.connection.unregister("arriving")
+
+    def run_models(self, layer: str) -> None:
+        """Make the tables of one layer of MODELS, in order; published tables get the dictionary's columns and types."""
+        for name in MODELS[layer]:
+            query = resources.files("warehouse").joinpath("models", layer, f"{name}.sql").read_text(encoding="utf-8")
+            if name in schema.PUBLISHED:
+                query = typed_query(schema.PUBLISHED[name], query)
+            try:
+                self.connection.execute(f"CREATE TABLE {name} AS {query}")
+            except duckdb.Error as problem:
+                raise BuildError(f"model {layer}/{name}.sql: {problem}") from problem
+
+    def add(self, table: str, frame: pl.DataFrame) -> None:
+        """Add a published table that was computed outside SQL; its columns, types and key are checked."""
+        described = schema.PUBLISHED[table]
+        types = {name: schema.COLUMNS[name].type for name in described.columns}
+        self._insert(table, types, checked_frame(described, frame))
+
+    def frame(self, table: str) -> pl.DataFrame:
+        """Rows of a table of the build, ordered by key where it is a published one."""
+        order = f" ORDER BY {', '.join(schema.PUBLISHED[table].key)}" if table in schema.PUBLISHED else ""
+        return pl.DataFrame(self.connection.sql(f"FROM {table}{order}"))
+
+    def check(self) -> list[Failure]:
+        """Ask every claim; returns those that do not hold. Claims are the files of `checks/` and the unique keys."""
+        claims = {
+            file.name.removesuffix(".sql"): file.read_text(encoding="utf-8")
+            for file in sorted(resources.files("warehouse").joinpath("checks").iterdir(), key=lambda file: file.name)
+        }
+        for name, table in schema.PUBLISHED.items():
+            if name not in READ_IN_PLACE:
+                key = ", ".join(table.key)
+                claims[f"{name}_has_one_row_per_key"] = f"SELECT {key} FROM {name} GROUP BY {key} HAVING count(*) > 1"
+        failures = (Failure(claim, pl.DataFrame(self.connection.sql(query))) for claim, query in claims.items())
+        return [failure for failure in failures if failure.rows.height]
+
+
+def column_definitions(table: schema.Table) -> str:
+    """Columns of a table as in CREATE TABLE."""
+    return ", ".join(f"{name} {schema.COLUMNS[name].type}" for name in table.columns)
+
+
+def typed_query(table: schema.Table, query: str) -> str:
+    """A query whose columns are the table's, in order and type, with rows in the order of its key."""
+    columns = ", ".join(f"{name}::{schema.COLUMNS[name].type} AS {name}" for name in table.columns)
+    return f"SELECT {columns} FROM (\n{query}\n) ORDER BY {', '.join(table.key)}"
+
+
+def parts_query(table: schema.Table, paths: Iterable[str]) -> str:
+    """Query over an explicit list of part files; one recording's rows open only that recording's files."""
+    files = ", ".join(f"'{path.replace(chr(39), chr(39) * 2)}'" for path in paths)
+    pruned = "true" if table.key[0] == "recording_id" else "false"
+    source = f"read_parquet([{files}], hive_partitioning = {pruned}, hive_types_autocast = false)"
+    columns = ", ".join(f"{name}::{schema.COLUMNS[name].type} AS {name}" for name in table.columns)
+    return f"SELECT {columns} FROM {source}"
+
+
+def parts_frame(parts: Iterable[Part]) -> pl.DataFrame:
+    """Rows of the published table `parts`."""
+    columns = schema.PUBLISHED["parts"].columns
+    types = {name: polars_type(schema.COLUMNS[name].type) for name in columns}
+    return pl.DataFrame([tuple(part) for part in parts], schema=types, orient="row").sort("part_path")
+
+
+def dictionary_frame() -> pl.DataFrame:
+    """Rows of the published table `data_dictionary`."""
+    rows = [
+        (table.name, table.grain, column.name, column.type, column.unit, column.meaning)
+        for table in schema.PUBLISHED.values()
+        for column in (schema.COLUMNS[name] for name in table.columns)
+    ]
+    return pl.DataFrame(rows, schema=list(schema.PUBLISHED["data_dictionary"].columns), orient="row")

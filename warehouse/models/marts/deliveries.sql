@@ -1,0 +1,2 @@
+-- one row per file set that arrived; key delivery_id
+SELECT * FROM lake.deliveries

@@ -1,0 +1,172 @@
+"""Publication: a complete edition is written beside the standing one, then one link is switched.
+
+    published/
+      burdenline.duckdb, burdenline_duckdb1.duckdb, tables/, site/, manifest.json   links into current/
+      current                                                                       link to the edition that stands
+      .editions/<id>/                                                               the edition itself, never changed
+
+Replacing the link `current` switches database, tables and pages in one step, so a reader never meets half of each, and
+a killed run leaves either the old or the new edition standing. The edition's id is the hash of its manifest: the same
+tables with the same stamp are the same edition, and nothing is switched then. The edition before stays for readers
+that are still in it.
+"""
+
+from __future__ import annotations
+
+import hashlib
+import json
+import os
+import shutil
+from collections.abc import Callable, Mapping
+from pathlib import Path
+from typing import Any
+
+from warehouse import schema
+from warehouse.build import READ_IN_PLACE, TrendBuild, column_definitions, parts_query
+from warehouse.database import open_database
+from warehouse.parts import write_whole
+from warehouse.published import DATABASE, MANIFEST, Published
+
+DATABASE_FOR_OLDER_READERS = "burdenline_duckdb1.duckdb"
+"""The same database in a storage version that DuckDB 1.2 and later read."""
+
+_STORAGE = {DATABASE: None, DATABASE_FOR_OLDER_READERS: "v1.2.0"}
+_PIECES = (*_STORAGE, "tables", "site", MANIFEST)
+_ROW_GROUP_ROWS = 8192  # small, so that one recording's rows are read without the others'
+
+
+class PublishError(RuntimeError):
+    """The publication cannot be switched; the message says why and what to do. The old one stays."""
+
+
+def publish(
+    build: TrendBuild,
+    published: Path,
+    *,
+    site: Callable[[Published, Path], None],
+    stamp: Mapping[str, Any],
+) -> bool:
+    """Write a new edition of database, tables and pages and make it the standing one.
+
+    `site(tables, folder)` writes the pages of the new edition into `folder`. `stamp` holds everything that the pages
+    depend on beside the tables (programme name, version, settings), as plain values. Returns False, and switches
+    nothing, when the standing edition has the same tables and stamp.
+    """
+    editions = published / ".editions"
+    staging = editions / ".staging"
+    shutil.rmtree(staging, ignore_errors=True)
+    (staging / "tables").mkdir(parents=True)
+    manifest = _manifest(build, published, stamp, _write_tables(build, staging / "tables"))
+    content = json.dumps(manifest, indent=1, sort_keys=True).encode()
+    edition = editions / hashlib.sha256(content).hexdigest()[:16]
+    before = _standing(published)
+    if not edition.exists():
+        for name, storage in _STORAGE.items():
+            _write_database(build, published, staging / name, storage)
+        write_whole(staging / MANIFEST, content)
+        site(Published(published, edition=staging), staging / "site")
+        staging.rename(edition)
+    if before != edition:
+        _switch(published, edition)
+    _remove_editions(editions, keep={edition, before})
+    return before != edition
+
+
+def _manifest(
+    build: TrendBuild, published: Path, stamp: Mapping[str, Any], tables: dict[str, dict[str, Any]]
+) -> dict[str, Any]:
+    return {
+        "lake": _lake_from(published, build.lake),
+        "fingerprint": build.fingerprint,
+        "stamp": dict(stamp),
+        "tables": tables,
+    }
+
+
+def _lake_from(published: Path, lake: Path) -> str:
+    """Path of the lake as seen from the published folder: a programme folder can be moved as a whole."""
+    return Path(os.path.relpath(lake, published)).as_posix()
+
+
+def _write_tables(build: TrendBuild, folder: Path) -> dict[str, dict[str, Any]]:
+    described = {}
+    for name in schema.PUBLISHED:
+        if name not in READ_IN_PLACE:
+            frame = build.frame(name)
+            path = folder / f"{name}.parquet"
+            frame.rechunk().write_parquet(path, compression="zstd", row_group_size=_ROW_GROUP_ROWS)
+            described[name] = {"rows": frame.height, "sha256": hashlib.sha256(path.read_bytes()).hexdigest()}
+    return described
+
+
+def _write_database(build: TrendBuild, published: Path, path: Path, storage: str | None) -> None:
+    connection = open_database(":memory:")
+    connection.execute(f"SET file_search_path = {_quoted(str(published.resolve()))}")
+    version = f"(STORAGE_VERSION '{storage}')" if storage else ""
+    connection.execute(f"ATTACH {_quoted(str(path))} AS edition {version}")
+    connection.execute("USE edition")
+    connection.execute("BEGIN")
+    for name, table in schema.PUBLISHED.items():
+        paths = _paths_in_place(build, published, name)
+        if paths:
+            connection.execute(f"CREATE VIEW {name} AS {parts_query(table, paths)}")
+        else:
+            connection.execute(f"CREATE TABLE {name} ({column_definitions(table)})")
+            if name not in READ_IN_PLACE:
+                file = _quoted(str(path.parent / "tables" / f"{name}.parquet"))
+                connection.execute(f"INSERT INTO {name} BY NAME FROM read_parquet({file})")
+        connection.execute(_comments(table, "VIEW" if paths else "TABLE"))
+    connection.execute("COMMIT")
+    connection.execute("USE memory")
+    connection.execute("DETACH edition")
+    connection.close()
+
+
+def _paths_in_place(build: TrendBuild, published: Path, name: str) -> list[str]:
+    """Paths, as seen from the published folder, of the parts of a table that is read in place; [] for all others."""
+    lake = _lake_from(published, build.lake)
+    return [f"{lake}/{part.path}" for part in build.parts if part.table == name and name in READ_IN_PLACE]
+
+
+def _comments(table: schema.Table, kind: str) -> str:
+    """Statements that say what the table and each of its columns is; `kind` is TABLE or VIEW."""
+    statements = [f"COMMENT ON {kind} {table.name} IS {_quoted(table.grain)}"]
+    for column in (schema.COLUMNS[name] for name in table.columns):
+        unit = f" [{column.unit}]" if column.unit else ""
+        statements.append(f"COMMENT ON COLUMN {table.name}.{column.name} IS {_quoted(column.meaning + unit)}")
+    return ";\n".join(statements)
+
+
+def _quoted(text: str) -> str:
+    return "'" + text.replace("'", "''") + "'"
+
+
+def _standing(published: Path) -> Path | None:
+    link = published / "current"
+    return published / link.readlink() if link.is_symlink() else None
+
+
+def _switch(published: Path, edition: Path) -> None:
+    for piece in _PIECES:
+        _link(published / piece, Path("current") / piece)
+    _link(published / "current", edition.relative_to(published))
+
+
+def _link(link: Path, target: Path) -> None:
+    if link.is_symlink() and link.readlink() == target:
+        return
+    if link.exists() and not link.is_symlink():
+        raise PublishError(f"{link} is not a link that a publication made; move it away and run again")
+    fresh = link.with_name(f".link-{link.name}")
+    fresh.unlink(missing_ok=True)
+    try:
+        fresh.symlink_to(target)
+    except OSError as problem:
+        raise PublishError(f"{link.parent} cannot hold links ({problem.strerror}); use a folder that can") from problem
+    fresh.replace(link)
+
+
+def _remove_editions(editions: Path, *, keep: set[Path | None]) -> None:
+    for edition in editions.iterdir():
+        if edition not in keep:
+            shutil.rmtree(edition)

@@ -1,0 +1,161 @@
+"""The published tables, read only: the one door for pages, exports and queries.
+
+Nothing here writes and nothing here knows how the tables were made. An object of `Published` stays with the edition
+that stood when it was opened, whatever is published meanwhile.
+"""
+
+from __future__ import annotations
+
+import difflib
+import json
+from collections.abc import Mapping
+from functools import cached_property
+from importlib import resources
+from pathlib import Path
+from typing import Any, NamedTuple
+
+import duckdb
+import polars as pl
+
+from warehouse import schema
+from warehouse.database import open_database
+from warehouse.parts import empty_frame
+
+DATABASE = "burdenline.duckdb"
+MANIFEST = "manifest.json"
+
+CAUTIONS = (
+    "For research and quality work on exported recordings. Not for primary diagnosis and not an alarm: urgent rhythms "
+    "may be found days late or not at all.",
+    "A clinician over-reads every finding; licensed practice and local rules come first.",
+    "Labels from a single lead can mistake aberrant conduction, bundle-branch block, pacing and noise for ventricular "
+    "beats: look at the strips, and at how much time could not be analysed.",
+    "Fewer ectopic beats are not in themselves a benefit to the patient.",
+    "Thresholds are reference lines, never verdicts; published ones disagree.",
+    "Pseudonymous health data are still personal data, and a long ECG may itself identify a person.",
+)
+"""What every page, report and export says."""
+
+_READING = {duckdb.StatementType.SELECT, duckdb.StatementType.EXPLAIN, duckdb.StatementType.PRAGMA}
+
+
+class PublishedError(RuntimeError):
+    """Nothing is published, or a table is unknown or damaged; the message says what to do."""
+
+
+class QueryError(ValueError):
+    """A query cannot be answered; the message is DuckDB's, with the nearest names."""
+
+
+class WorkedQuery(NamedTuple):
+    """A question that the published tables answer, and the SQL that answers it."""
+
+    name: str
+    question: str
+    sql: str
+
+
+class Published:
+    """Tables of one edition; `folder` is the programme's published folder, `edition` by default the standing one."""
+
+    def __init__(self, folder: Path, *, edition: Path | None = None) -> None:
+        self._folder = folder.resolve()
+        self._edition = edition or self._folder / "current"
+        if not self._edition.exists():
+            raise PublishedError(f"nothing is published in {folder} yet; `burdenline run` makes the first publication")
+        self._edition = self._edition.resolve()
+        self._connection: duckdb.DuckDBPyConnection | None = None
+
+    @cached_property
+    def manifest(self) -> dict[str, Any]:
+        """What the edition was made from: fingerprint, stamp, and rows and hash of each table."""
+        return json.loads((self._edition / MANIFEST).read_text(encoding="utf-8"))
+
+    @cached_property
+    def lake(self) -> Path:
+        """Folder of the parts that the edition reads in place."""
+        return (self._folder / self.manifest["lake"]).resolve()
+
+    def has(self, name: str) -> bool:
+        """Whether the edition has a table of this name."""
+        return self._file(name).is_file() or name in self._read_in_place()
+
+    def table(self, name: str, where: Mapping[str, object] | None = None) -> pl.DataFrame:
+        """Rows of a published table in the order of its key; `where` keeps the rows whose columns equal its values."""
+        where = where or {}
+        if self._file(name).is_file():
+            rows = pl.scan_parquet(self._file(name))
+        elif name in self._read_in_place():
+            rows = self._scan_parts(name, where)
+        else:
+            raise PublishedError(f"no published table {name!r}; {_nearest(name, schema.PUBLISHED)}")
+        return rows.filter(*(pl.col(column) == value for column, value in where.items())).collect()
+
+    def _file(self, name: str) -> Path:
+        return self._edition / "tables" / f"{name}.parquet"
+
+    def _read_in_place(self) -> set[str]:
+        return {name for name in schema.PUBLISHED if name not in self.manifest["tables"]}
+
+    def _scan_parts(self, name: str, where: Mapping[str, object]) -> pl.LazyFrame:
+        key = {"part_key": where["recording_id"]} if "recording_id" in where else {}
+        paths = [self.lake / path for path in self.table("parts", {"table_name": name, **key})["part_path"]]
+        if not paths:
+            return empty_frame(schema.PUBLISHED[name]).lazy()
+        return pl.scan_parquet(paths, hive_partitioning=False).select(schema.PUBLISHED[name].columns)
+
+    def frame(self, sql: str) -> pl.DataFrame:
+        """Answer one query as a frame. Raises QueryError for anything but reading, and for names that are unknown."""
+        return pl.DataFrame(self._answer(sql))
+
+    def query(self, sql: str) -> tuple[list[str], list[tuple[Any, ...]]]:
+        """Answer one query as column names and rows."""
+        answer = self._answer(sql)
+        return list(answer.columns), answer.fetchall()
+
+    def _answer(self, sql: str) -> duckdb.DuckDBPyRelation:
+        connection = self._connect()
+        try:
+            statements = connection.extract_statements(sql)
+            if len(statements) != 1 or statements[0].type not in _READING:
+                raise QueryError("expected one query that reads (SELECT, FROM, WITH, DESCRIBE, SUMMARIZE, EXPLAIN)")
+            return connection.sql(sql)
+        except duckdb.Error as problem:
+            raise QueryError(str(problem).strip()) from None
+
+    def _connect(self) -> duckdb.DuckDBPyConnection:
+        if self._connection is None:
+            self._connection = _open_read_only(self._edition / DATABASE, self._folder, self.manifest["lake"])
+        return self._connection
+
+    def queries(self) -> list[WorkedQuery]:
+        """Worked queries over the published tables, by name."""
+        return worked_queries()
+
+
+def worked_queries() -> list[WorkedQuery]:
+    """The files of `warehouse/queries`: the first comment line is the question, the rest the SQL."""
+    files = sorted(resources.files("warehouse").joinpath("queries").iterdir(), key=lambda file: file.name)
+    worked = []
+    for file in files:
+        question, _, sql = file.read_text(encoding="utf-8").partition("\n")
+        worked.append(WorkedQuery(file.name.removesuffix(".sql"), question.removeprefix("-- "), sql.strip()))
+    return worked
+
+
+def _open_read_only(database: Path, folder: Path, lake: str) -> duckdb.DuckDBPyConnection:
+    try:
+        connection = open_database(str(database), read_only=True)
+    except duckdb.IOException as problem:
+        raise PublishedError(f"{database} cannot be opened: {problem}; `burdenline run` publishes it anew") from None
+    connection.execute("SET file_search_path = ?", [str(folder)])
+    # A path is looked at twice, as written in the view and as found: both must be allowed.
+    connection.execute("SET allowed_directories = ?", [[lake, str((folder / lake).resolve())]])
+    connection.execute("SET enable_external_access = false")
+    connection.execute("SET lock_configuration = true")
+    return connection
+
+
+def _nearest(name: str, known: Mapping[str, object]) -> str:
+    near = difflib.get_close_matches(name, known, n=3)
+    return f"did you mean {', '.join(near)}?" if near else f"published are: {', '.join(known)}"
