@@ -79,6 +79,25 @@ class InboxSettings:
     quiet_s: float = _setting(0.0, "seconds that a file must have stayed unchanged", 0, 86400)
     done_marker: str = _setting("", "suffix of a marker file that says a delivery is complete, empty for none")
     accepted_files: str = _setting("leave", "what happens to accepted files: leave or remove")
+    part_wait_h: float = _setting(24.0, "hours that a file set waits for its missing part before it is refused", 0, 8760)
+    largest_unpacked_mb: int = _setting(4096, "size that an archive may unpack to, MB", 1, 1_000_000)
+    largest_unpack_ratio: int = _setting(200, "how many times larger than itself an archive may unpack", 2, 100_000)
+
+
+@dataclass(frozen=True)
+class SiteSettings:
+    """What the site knows about its files that the files do not say; empty or 0 means: only the file counts."""
+
+    clock_zone: str = _setting("", "IANA time zone of the device clocks, UTC for instance; empty: the patient's zone")
+    ecg_channel: str = _setting("", "label of the ECG channel where several could be it")
+    mv_per_count: float = _setting(0.0, "millivolts per count where files have no scale", 0, 1)
+    fs_hz: float = _setting(0.0, "sampling rate of text and Parquet files without a time column, Hz", 0, 10_000)
+    ecg_column: str = _setting("", "ECG column of text and Parquet files: its name, or its number from 1")
+    time_column: str = _setting("", "time column of text and Parquet files: its name, or its number from 1")
+    time_format: str = _setting("", "strptime format of the time column; empty: ISO 8601")
+    separator: str = _setting("", "separator of text files: comma, semicolon, tab or blank; empty: by the file")
+    decimal: str = _setting("", "decimal sign of text files: point or comma; empty: by the file")
+    unit: str = _setting("", "unit of the ECG column: V, mV, uV, nV or counts (with mv_per_count)")
 
 
 @dataclass(frozen=True)
@@ -101,6 +120,7 @@ class Settings:
     change: ChangeSettings = field(default_factory=ChangeSettings)
     attention: AttentionSettings = field(default_factory=AttentionSettings)
     inbox: InboxSettings = field(default_factory=InboxSettings)
+    site: SiteSettings = field(default_factory=SiteSettings)
     workers: WorkersSettings = field(default_factory=WorkersSettings)
 
 
@@ -136,7 +156,7 @@ def _value(where: str, setting: Field[Any], value: Any) -> Any:
     low, high = setting.metadata["low"], setting.metadata["high"]
     if low is not None and not low <= value <= high:
         raise SettingsError(f"{where} = {value}; expected {low} to {high} ({setting.metadata['meaning']})")
-    if setting.name == "zone":
+    if setting.name == "zone" or (setting.name == "clock_zone" and value):
         check_zone(where, value)
     if setting.name == "accepted_files" and value not in ("leave", "remove"):
         raise SettingsError(f"{where} = {value!r}; expected leave or remove")

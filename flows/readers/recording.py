@@ -22,20 +22,18 @@ SMALLEST_RANGE_MV = 1.0
 
 
 class Site(NamedTuple):
-    """What a programme knows about its files that the files do not say; empty means nothing."""
+    """What a site knows about its files that the files do not say; empty or 0 means nothing."""
 
+    clock_zone: str = ""
     ecg_channel: str = ""
     mv_per_count: float = 0.0
-    clock_zone: str = ""
     fs_hz: float = 0.0
     ecg_column: str = ""
     time_column: str = ""
     time_format: str = ""
     separator: str = ""
-    decimal: str = "."
+    decimal: str = ""
     unit: str = ""
-    largest_unpacked_mb: int = 4096
-    largest_unpack_ratio: int = 200
 
 
 NO_SITE = Site()
