@@ -164,9 +164,8 @@ def _sql_arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def _sql(asked: argparse.Namespace) -> int:
-    from warehouse.published import Published
-
     from flows.answers import print_answer
+    from warehouse.published import Published
 
     query = sys.stdin.read() if asked.query == "-" else asked.query
     print_answer(
@@ -219,11 +218,10 @@ def _demo(asked: argparse.Namespace) -> int:
 
 
 def _run_demo(folder: Path) -> int:
-    from warehouse.published import Published
-
     from flows import nightly
     from flows.answers import print_answer
     from flows.progress import reporter
+    from warehouse.published import Published
 
     outcome = nightly.run(folder, reporter=reporter(as_json=False))
     print(_outcome_text(outcome))

@@ -13,8 +13,8 @@ from typing import Any
 
 import numpy as np
 import polars as pl
-from detectors.analyse import DETECTOR_VERSION, analyse_recording
 
+from detectors.analyse import DETECTOR_VERSION, analyse_recording
 from detectors.results import PAUSE_KINDS, Analysis, Segment
 from detectors.strips import beats_within, choose_strips
 from detectors.tally import quarter_hours
@@ -175,6 +175,7 @@ def _strips(
                 "samples_mv": ((counts - recording["count_at_zero_mv"]) * recording["mv_per_count"]).tolist(),
                 "beat_samples": (analysis.beats.sample[beats] - strip.first_sample).tolist(),
                 "beat_classes": analysis.beats.beat_class[beats].tolist(),
+                "beat_families": analysis.beats.family[beats].tolist(),
             }
         )
     return pl.DataFrame(rows, schema=_STRIP_TYPES).with_columns(pl.col("start_utc").cast(pl.Datetime("us")))
@@ -190,4 +191,5 @@ _STRIP_TYPES = {
     "samples_mv": pl.List(pl.Float32),
     "beat_samples": pl.List(pl.Int64),
     "beat_classes": pl.List(pl.String),
+    "beat_families": pl.List(pl.Int64),
 }

@@ -53,7 +53,11 @@ def refresh(folder: Path, settings: Settings, people: Register, ledger: Ledger, 
             build,
             folder / "published",
             site=lambda published, site: build_site(
-                published, site, programme_name=settings.programme.name, version=version("burdenline")
+                published,
+                site,
+                programme_name=settings.programme.name,
+                version=version("burdenline"),
+                previous=folder / "published" / "site",
             ),
             stamp={"version": version("burdenline"), "settings": asdict(settings)},
         )

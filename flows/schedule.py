@@ -19,7 +19,7 @@ os.environ.setdefault("PREFECT_SERVER_EPHEMERAL_STARTUP_TIMEOUT_SECONDS", "120")
 from prefect import flow, get_run_logger, task
 from prefect.artifacts import create_table_artifact
 from prefect.schedules import Cron
-from prefect.states import Completed, Failed, State
+from prefect.states import Completed, State
 
 from flows import nightly, settings
 from flows.nightly import Outcome, Work
