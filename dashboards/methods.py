@@ -31,4 +31,4 @@ def dictionary_context(tables: Tables) -> dict[str, Any]:
     """Return what the dictionary page shows: the published tables in their order, with their columns."""
     rows = tables.whole("data_dictionary")
     names = rows["table_name"].unique(maintain_order=True)
-    return {"tables": [(name, rows.filter(pl.col("table_name") == name).rows(named=True)) for name in names]}
+    return {"queries": tables.queries, "tables": [(name, rows.filter(pl.col("table_name") == name).rows(named=True)) for name in names]}

@@ -46,7 +46,7 @@ def build_site(
         _write_recording(press, tables, row)
     made_of = [tables.whole("fingerprints"), tables.whole("recordings").select(pl.len())]
     press.page("methods.html", "methods.html.j2", made_of, lambda: methods.context(tables))
-    dictionary = [tables.whole("data_dictionary")]
+    dictionary = [tables.whole("data_dictionary"), pl.DataFrame(tables.queries, orient="row")]
     press.page("dictionary.html", "dictionary.html.j2", dictionary, lambda: methods.dictionary_context(tables))
     press.close()
 

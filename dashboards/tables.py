@@ -5,17 +5,21 @@ Small tables are read once and cut by patient or recording; the large ones are a
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from functools import cached_property
 from typing import Any, Protocol
 
 import polars as pl
+
+from warehouse.published import WorkedQuery
 
 
 class PublishedTables(Protocol):
     """What pages need of a publication; `warehouse.published.Published` is the real one."""
 
     def table(self, name: str, where: Mapping[str, Any] | None = None) -> pl.DataFrame: ...
+
+    def queries(self) -> Sequence[WorkedQuery]: ...
 
 
 class Cut:
@@ -43,6 +47,11 @@ class Tables:
     def whole(self, name: str) -> pl.DataFrame:
         """Return a table with missing numbers as NULL."""
         return self._published.table(name).fill_nan(None)
+
+    @property
+    def queries(self) -> Sequence[WorkedQuery]:
+        """Worked queries over the published tables."""
+        return self._published.queries()
 
     @cached_property
     def patients(self) -> pl.DataFrame:

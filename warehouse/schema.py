@@ -239,6 +239,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("samples_mv", "REAL[]", "mV", "Samples of the strip."),
     ("beat_samples", "BIGINT[]", "samples", "R peaks within the strip, from its first sample."),
     ("beat_classes", "VARCHAR[]", "", "Classes of those beats."),
+    ("beat_families", "BIGINT[]", "", "Families of those beats, -1 for none."),
     # parts
     ("part_key", "VARCHAR", "", "Load that the part belongs to: a recording, a delivery, a run or a fingerprint."),
     ("part_path", "VARCHAR", "", "Path of the part's file, relative to the lake."),
@@ -366,7 +367,7 @@ LAKE: dict[str, Table] = _tables(
     Table(
         "strips", "one row per ECG strip kept for the pages", ("recording_id", "segment", "first_sample"),
         ("recording_id", "fingerprint", "segment", "first_sample", "start_utc", "fs_hz", "strip_reason", "beat_class",
-         "samples_mv", "beat_samples", "beat_classes"),
+         "samples_mv", "beat_samples", "beat_classes", "beat_families"),
     ),
     Table(
         "fingerprints", "one row per detector version and result settings that made beats", ("fingerprint",),

@@ -12,6 +12,7 @@ from typing import Any
 import polars as pl
 import pytest
 
+from warehouse.published import WorkedQuery
 from warehouse.schema import COLUMNS, PUBLISHED
 
 TYPES = {
@@ -38,6 +39,10 @@ class InventedPublication:
         for column, value in (where or {}).items():
             frame = frame.filter(pl.col(column) == value)
         return frame
+
+
+    def queries(self) -> list[WorkedQuery]:
+        return [WorkedQuery("burden", "What is the burden?", "SELECT v_burden_pct\nFROM wear_days")]
 
 
 def at_clock(hours: float) -> datetime:
@@ -70,6 +75,7 @@ def strip_row(recording_id: str, order: int, beat_class: str, start: datetime, f
         "start_utc": start + timedelta(minutes=37 * order), "fs_hz": fs_hz,
         "strip_reason": f"typical {beat_class} beat of family {order}", "beat_class": beat_class, "samples_mv": samples,
         "beat_samples": [round(at * fs_hz) for at in beats], "beat_classes": classes,
+        "beat_families": [{"N": 0, "V": 1, "S": 0}[kind] for kind in classes],
     }  # fmt: skip
 
 
