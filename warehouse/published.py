@@ -24,18 +24,6 @@ from warehouse.parts import empty_frame
 DATABASE = "burdenline.duckdb"
 MANIFEST = "manifest.json"
 
-CAUTIONS = (
-    "For research and quality work on exported recordings. Not for primary diagnosis and not an alarm: urgent rhythms "
-    "may be found days late or not at all.",
-    "A clinician over-reads every finding; licensed practice and local rules come first.",
-    "Labels from a single lead can mistake aberrant conduction, bundle-branch block, pacing and noise for ventricular "
-    "beats: look at the strips, and at how much time could not be analysed.",
-    "Fewer ectopic beats are not in themselves a benefit to the patient.",
-    "Thresholds are reference lines, never verdicts; published ones disagree.",
-    "Pseudonymous health data are still personal data, and a long ECG may itself identify a person.",
-)
-"""What every page, report and export says."""
-
 _READING = {duckdb.StatementType.SELECT, duckdb.StatementType.EXPLAIN, duckdb.StatementType.PRAGMA}
 
 

@@ -181,7 +181,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("wear_days", "BIGINT", "d", "Days with any wear."),
     ("valid_days", "BIGINT", "d", "Days that reach the minimum of analysable hours."),
     ("clock_coverage_pct", "DOUBLE", "%", "Share of the 24 clock hours with analysable time in the span."),
-    ("measure", "VARCHAR", "", "What is compared: v_burden_pct, v_per_h, s_burden_pct or mean_rate_bpm."),
+    ("measure", "VARCHAR", "", "What is compared, for example v_burden_pct, v_per_h, couplets_per_24h or mean_rate_bpm."),
     ("baseline_value", "DOUBLE", "as the measure", "Value before the therapy event, standardised over clock hours."),
     ("after_value", "DOUBLE", "as the measure", "Value after the settling time, standardised over clock hours."),
     ("baseline_days", "BIGINT", "d", "Valid days used before the therapy event."),

@@ -55,7 +55,7 @@ SELECT
     max(fastest_run_bpm),
     min(local_day),
     printf('fastest ventricular run %.0f/min, on %s; the line is %g/min',
-        max(fastest_run_bpm), arg_max(local_day, fastest_run_bpm)::VARCHAR, any_value(settings.attention_fast_run_bpm))
+        max(fastest_run_bpm), arg_min(local_day, row(-fastest_run_bpm, local_day))::VARCHAR, any_value(settings.attention_fast_run_bpm))
 FROM wear_days, programme.settings AS settings
 WHERE fastest_run_bpm >= settings.attention_fast_run_bpm
 GROUP BY patient_code
@@ -66,7 +66,7 @@ SELECT
     max(longest_pause_ms),
     min(local_day),
     printf('longest pause %.0f ms, on %s; the line is %g ms',
-        max(longest_pause_ms), arg_max(local_day, longest_pause_ms)::VARCHAR, any_value(settings.attention_pause_ms))
+        max(longest_pause_ms), arg_min(local_day, row(-longest_pause_ms, local_day))::VARCHAR, any_value(settings.attention_pause_ms))
 FROM wear_days, programme.settings AS settings
 WHERE longest_pause_ms >= settings.attention_pause_ms
 GROUP BY patient_code
