@@ -93,7 +93,7 @@ def quarter_hours(analysis: Analysis, segment_start_us: NDArray[np.int64]) -> Qu
 def _beat_counts(analysis: Analysis, clock: _Clock, book: _Book) -> dict[str, NDArray]:
     beats = analysis.beats
     quarter = clock.quarter(beats.segment, beats.sample)
-    counts = {
+    counts: dict[str, NDArray] = {
         f"{name.lower()}_beats": book.count(quarter[beats.is_analysable & (beats.beat_class == name)])
         for name in BEAT_CLASSES
     }
@@ -162,7 +162,7 @@ class _Book:
         return np.bincount(self._row(quarter), minlength=len(self.quarters)).astype(np.int64)
 
     def total(self, quarter: NDArray[np.int64], amount: NDArray) -> NDArray[np.float64]:
-        return np.bincount(self._row(quarter), weights=amount, minlength=len(self.quarters))
+        return np.bincount(self._row(quarter), weights=amount, minlength=len(self.quarters)).astype(np.float64)
 
     def seconds(self, start_us: NDArray[np.int64], end_us: NDArray[np.int64]) -> NDArray[np.float64]:
         return self.total(*_spread(start_us, end_us)).round(6)

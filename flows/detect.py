@@ -8,6 +8,7 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Callable, Mapping, Sequence
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -19,9 +20,10 @@ from detectors.results import PAUSE_KINDS, Analysis, Segment
 from detectors.strips import beats_within, choose_strips
 from detectors.tally import quarter_hours
 from flows.settings import Settings, result_settings
-from warehouse.parts import Part, SignalReader, write_part
+from warehouse.parts import Part, SignalReader, frame_schema, write_part
 from warehouse.schema import LAKE
 
+_ADDED_LATER = ("recording_id", "fingerprint")
 DERIVED_TABLES = ("beats", "families", "episodes", "quality_windows", "findings", "quarter_hours", "strips")
 
 
@@ -55,11 +57,9 @@ def analyse_landed(
 ) -> Analysis:
     """Run the detector over one landed recording; `recording` and `segments` are rows of the lake tables."""
     reader = SignalReader(lake, signal)
+    numbers = segments.sort("segment").select("segment", "sample_count")
     return analyse_recording(
-        [
-            Segment(int(row["sample_count"]), lambda a, b, number=int(row["segment"]): reader.read(number, a, b))
-            for row in segments.sort("segment").iter_rows(named=True)
-        ],
+        [Segment(samples, partial(reader.read, number)) for number, samples in numbers.iter_rows()],
         fs_hz=recording["fs_hz"],
         mv_per_count=recording["mv_per_count"],
         count_at_zero_mv=recording["count_at_zero_mv"],
@@ -106,7 +106,7 @@ def land_analysis(
 
 
 def _conform(table: str, frame: pl.DataFrame, recording_id: str, fingerprint: str) -> pl.DataFrame:
-    named = frame.with_columns(pl.lit(recording_id).alias("recording_id"), pl.lit(fingerprint).alias("fingerprint"))
+    named = frame.with_columns(recording_id=pl.lit(recording_id), fingerprint=pl.lit(fingerprint))
     return named.select(LAKE[table].columns)
 
 
@@ -178,18 +178,7 @@ def _strips(
                 "beat_families": analysis.beats.family[beats].tolist(),
             }
         )
-    return pl.DataFrame(rows, schema=_STRIP_TYPES).with_columns(pl.col("start_utc").cast(pl.Datetime("us")))
-
-
-_STRIP_TYPES = {
-    "segment": pl.Int16,
-    "first_sample": pl.Int64,
-    "start_utc": pl.Int64,
-    "fs_hz": pl.Float64,
-    "strip_reason": pl.String,
-    "beat_class": pl.String,
-    "samples_mv": pl.List(pl.Float32),
-    "beat_samples": pl.List(pl.Int64),
-    "beat_classes": pl.List(pl.String),
-    "beat_families": pl.List(pl.Int64),
-}
+    types = {name: kind for name, kind in frame_schema(LAKE["strips"]).items() if name not in _ADDED_LATER}
+    return pl.DataFrame(rows, schema=types | {"start_utc": pl.Int64}).with_columns(
+        pl.col("start_utc").cast(pl.Datetime("us"))
+    )

@@ -15,7 +15,7 @@ from typing import TYPE_CHECKING, Any
 
 from flows import settings as programme_settings
 from flows.lock import folder_lock
-from flows.progress import Reporter, Silent
+from flows.progress import SILENT, Reporter
 from flows.settings import Settings
 
 if TYPE_CHECKING:
@@ -61,7 +61,7 @@ Analyse = Callable[[Sequence[Work], Reporter], Iterator[dict]]
 
 
 def run(
-    folder: Path, *, reporter: Reporter | None = None, wait_s: float = 0.0, analyse_all: Analyse | None = None
+    folder: Path, *, reporter: Reporter = SILENT, wait_s: float = 0.0, analyse_all: Analyse | None = None
 ) -> Outcome:
     """Bring the published tables and pages of a programme folder up to date with inbox, register and settings.
 
@@ -70,7 +70,6 @@ def run(
     from flows import ingest, publication, register
     from warehouse.ledger import Ledger
 
-    reporter = reporter or Silent()
     settings = programme_settings.load(folder / "programme.toml")
     with folder_lock(folder, wait_s):
         people = register.load(folder, settings.programme.zone)
@@ -147,7 +146,7 @@ def analyse_here(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
             yield finished.result()
 
 
-def analyse_one(item: Work, reporter: Reporter | None = None) -> dict:
+def analyse_one(item: Work, reporter: Reporter = SILENT) -> dict:
     """Run the detector over one landed recording and write its parts; returns the loads to commit.
 
     Doing it twice writes the same files, so a worker that dies can simply be repeated.
@@ -161,7 +160,7 @@ def analyse_one(item: Work, reporter: Reporter | None = None) -> dict:
     recording = read_part(lake, ledger.parts("recordings", item.recording_id)[0]).row(0, named=True)
     segments = read_part(lake, ledger.parts("segments", item.recording_id)[0])
     signal = ledger.parts("signal", item.recording_id)
-    with (reporter or Silent()).recording(item.recording_id, recording["recorded_h"]) as advance:
+    with reporter.recording(item.recording_id, recording["recorded_h"]) as advance:
         per_hour = 3600.0 * recording["fs_hz"]
         analysis = detect.analyse_landed(
             lake, recording, segments, signal, item.settings, lambda samples: advance(samples / per_hour)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import sys
 import time
 from collections.abc import Callable, Iterator
-from contextlib import contextmanager
+from contextlib import AbstractContextManager, contextmanager
 from typing import Protocol
 
 
@@ -15,14 +15,8 @@ class Reporter(Protocol):
     def say(self, text: str) -> None:
         """Say one line."""
 
-    def recording(self, recording_id: str, hours: float) -> _Bar:
-        """Open the progress of one recording of `hours` of signal."""
-
-
-class _Bar(Protocol):
-    def __enter__(self) -> Callable[[float], None]: ...
-
-    def __exit__(self, *problem: object) -> None: ...
+    def recording(self, recording_id: str, hours: float) -> AbstractContextManager[Callable[[float], None]]:
+        """Open the progress of one recording of `hours` of signal; the body calls the value with hours done."""
 
 
 class Silent:
@@ -35,6 +29,9 @@ class Silent:
     def recording(self, recording_id: str, hours: float) -> Iterator[Callable[[float], None]]:
         """Count nothing."""
         yield lambda done_h: None
+
+
+SILENT: Reporter = Silent()
 
 
 class Lines:
@@ -82,5 +79,5 @@ class Bars(Lines):
 def reporter(*, as_json: bool) -> Reporter:
     """Choose: nothing when a program reads the output, bars on a terminal, lines otherwise."""
     if as_json:
-        return Silent()
+        return SILENT
     return Bars() if sys.stderr.isatty() else Lines()

@@ -18,7 +18,7 @@ os.environ.setdefault("PREFECT_SERVER_EPHEMERAL_STARTUP_TIMEOUT_SECONDS", "120")
 
 from prefect import flow, get_run_logger, task
 from prefect.artifacts import create_table_artifact
-from prefect.schedules import Cron
+from prefect.schedules import Cron, Schedule
 from prefect.states import Completed, State
 
 from flows import nightly, settings
@@ -85,7 +85,7 @@ def serve_nightly(folder: Path, cron: str, zone: str = "") -> None:
     )
 
 
-def _schedule(cron: str, zone: str) -> Cron:
+def _schedule(cron: str, zone: str) -> Schedule:
     try:
         return Cron(cron, timezone=str(ZoneInfo(zone)))
     except ValueError:

@@ -60,6 +60,9 @@ class ChangeSettings:
     settling_days_ablation: int = _setting(14, "days after an ablation that are left out", 0, 365)
     settling_days_other: int = _setting(7, "days after any other event that are left out", 0, 365)
     success_limit_pct: float = _setting(80.0, "reduction that the programme calls success, %", 1, 99.9)
+    gap_drift_share: float = _setting(
+        1.0, "share of the published drift over weeks (Circulation 1988;78:286) in the chance limits, 0 for none", 0, 1
+    )
 
 
 @dataclass(frozen=True)
@@ -79,7 +82,7 @@ class InboxSettings:
     quiet_s: float = _setting(0.0, "seconds that a file must have stayed unchanged", 0, 86400)
     done_marker: str = _setting("", "suffix of a marker file that says a delivery is complete, empty for none")
     accepted_files: str = _setting("leave", "what happens to accepted files: leave or remove")
-    part_wait_h: float = _setting(24.0, "hours that a file set waits for its missing part before it is refused", 0, 8760)
+    part_wait_h: float = _setting(24.0, "hours that a file set waits for a missing part, then it is refused", 0, 8760)
     largest_unpacked_mb: int = _setting(4096, "size that an archive may unpack to, MB", 1, 1_000_000)
     largest_unpack_ratio: int = _setting(200, "how many times larger than itself an archive may unpack", 2, 100_000)
 
@@ -124,6 +127,9 @@ class Settings:
     workers: WorkersSettings = field(default_factory=WorkersSettings)
 
 
+DEFAULTS = Settings()
+
+
 def load(path: Path) -> Settings:
     """Read and check programme.toml; raises SettingsError with file, key, found and expected."""
     try:
@@ -134,9 +140,9 @@ def load(path: Path) -> Settings:
         ) from None
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as problem:
         raise SettingsError(f"{path}: not readable as TOML: {problem}") from None
-    sections = {section.name: section.default_factory for section in fields(Settings)}
-    _refuse_unknown(path, "section", raw, list(sections))
-    return Settings(**{name: _section(path, name, kind, raw.get(name, {})) for name, kind in sections.items()})
+    kinds = {section.name: type(getattr(DEFAULTS, section.name)) for section in fields(Settings)}
+    _refuse_unknown(path, "section", raw, list(kinds))
+    return Settings(**{name: _section(path, name, kind, raw.get(name, {})) for name, kind in kinds.items()})
 
 
 def _section(path: Path, name: str, kind: Any, raw: Any) -> Any:
@@ -147,8 +153,8 @@ def _section(path: Path, name: str, kind: Any, raw: Any) -> Any:
     return kind(**{key: _value(f"{path}: [{name}] {key}", known[key], value) for key, value in raw.items()})
 
 
-def _value(where: str, setting: Field[Any], value: Any) -> Any:
-    expected = type(setting.default)
+def _value(where: str, setting: Field, value: Any) -> Any:
+    expected: type = type(setting.default)
     if expected is float and type(value) is int:
         value = float(value)
     if type(value) is not expected:
@@ -184,10 +190,9 @@ def template(name: str, zone: str) -> str:
     lines = ["# Settings of this programme. Delete a line to use its default; an unknown name is refused.", ""]
     for section in fields(Settings):
         lines.append(f"[{section.name}]")
-        values = asdict(section.default_factory())  # type: ignore[misc]  # every section has a factory
-        if section.name == "programme":
-            values |= {"name": name, "zone": zone}
-        for setting in fields(section.default_factory):  # type: ignore[arg-type]
+        defaults = getattr(DEFAULTS, section.name)
+        values = asdict(defaults) | ({"name": name, "zone": zone} if section.name == "programme" else {})
+        for setting in fields(defaults):
             lines.append(f"{setting.name} = {_toml(values[setting.name])}  # {setting.metadata['meaning']}")
         lines.append("")
     return "\n".join(lines)
