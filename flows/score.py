@@ -1,42 +1,30 @@
 """Run the detector over a folder of labelled WFDB records and score it as ANSI/AAMI EC57 asks.
 
-Comparison of beats and runs lives in detectors/, how a report looks in flows/score_report.py and dashboards/.
+One record is scored in flows/score_record.py; how a report looks stands in flows/score_report.py and dashboards/.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from dataclasses import replace
 from pathlib import Path
-from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors.analyse import DETECTOR_VERSION, analyse_recording
-from detectors.annotations import CLASSES, Annotations, beat_annotations, beat_classes
-from detectors.results import Analysis, Segment
-from detectors.scoring import LEARNING_S, BeatScore, compare_beats
-from detectors.scoring_runs import RunScore, compare_runs
+from detectors.analyse import DETECTOR_VERSION
+from detectors.annotations import CLASSES, beat_classes
+from detectors.noise_stress import with_noise
+from detectors.scoring import LEARNING_S
 from flows.readers.codes import Refused
-from flows.readers.identify import open_delivery
-from flows.readers.recording import NO_SITE, Opened, Site
-from flows.readers.wfdb import names_in_header
-from flows.readers.wfdb_annotations import AnnotationError, read_annotations
-from flows.readers.wfdb_header import read_header
-from flows.score_report import Judged, Options, RecordScore, Report, write_page
+from flows.readers.recording import Opened
+from flows.readers.wfdb_annotations import AnnotationError
+from flows.score_record import Labelled, ScoreError, open_labelled, open_signal, score_record
+from flows.score_report import NoiseScore, Options, RecordScore, Report, write_page
 
-__all__ = ["ScoreError", "score_folder", "write_page"]
+__all__ = ["NOISE_LEVELS_DB", "ScoreError", "score_folder", "write_page"]
 
-_V = CLASSES.index("V")
-
-
-class ScoreError(ValueError):
-    """Nothing can be scored; the message says what was found and expected."""
-
-
-class _Truth(NamedTuple):
-    labels: Annotations
-    has_af: bool
+NOISE_LEVELS_DB = (24, 18, 12, 6)
 
 
 def score_folder(
@@ -45,22 +33,24 @@ def score_folder(
     escape_as: str = "S",
     learning_s: float = LEARNING_S,
     channel: int = 0,
-    say: Callable[[str], None] | None = None,
+    noise_folder: Path | None = None,
+    noise_records: Sequence[str] = (),
+    say: Callable[[str], None] = lambda text: None,
 ) -> Report:
     """Score every record of `folder` that has a header, signals and expert labels (NAME.hea, NAME.atr).
 
     `escape_as` is the class of supraventricular escape beats in the labels; the first `learning_s` are not scored;
-    `channel` counts the signals of a record from 0. Records that cannot be read are named in the report with the
-    reason. Raises ScoreError when no record is left.
+    `channel` counts the signals of a record from 0. With `noise_folder` the noise records there are added to the
+    records (or to `noise_records` only) at several signal-to-noise ratios. Records that cannot be read are named in the
+    report with the reason. Raises ScoreError when no record is left.
     """
     options = Options(escape_as, learning_s, channel, DETECTOR_VERSION)
     scores: list[RecordScore] = []
     left_out: list[tuple[str, str]] = []
     for header in sorted(folder.glob("*.hea")):
-        if say:
-            say(f"scoring {header.stem}")
+        say(f"scoring {header.stem}")
         try:
-            scores.append(_score_record(header, options))
+            scores.append(score_record(open_labelled(header, options.channel), options))
         except (Refused, AnnotationError, ScoreError) as problem:
             left_out.append((header.stem, str(problem)))
     if not scores:
@@ -68,94 +58,42 @@ def score_folder(
         raise ScoreError(
             f"{folder}: no record can be scored; expected NAME.hea with its signal file and labels in NAME.atr. {told}"
         )
-    return Report(options, tuple(scores), tuple(left_out))
+    stressed = [folder / f"{name}.hea" for name in noise_records or [score.record for score in scores]]
+    noise = _stress(stressed, noise_folder, options, say) if noise_folder else ()
+    return Report(options, tuple(scores), tuple(left_out), noise)
 
 
-def _score_record(header: Path, options: Options) -> RecordScore:
-    labels_path = header.with_suffix(".atr")
-    if not labels_path.is_file():
-        raise ScoreError(f"no labels; expected {labels_path.name} beside the header")
-    opened = _open(header, options.channel)
-    truth = _truth(labels_path, header, opened)
-    analysis = _analyse(opened)
-    return _compared(header.stem, opened, truth, analysis, options)
+def _stress(
+    headers: Sequence[Path], noise_folder: Path, options: Options, say: Callable[[str], None]
+) -> tuple[NoiseScore, ...]:
+    """Score records with each noise of a folder added at each level, the records of a level counted together."""
+    records = [open_labelled(header, options.channel) for header in headers]
+    noises = {header.stem: open_signal(header, 0) for header in sorted(noise_folder.glob("*.hea"))}
+    if not noises:
+        raise ScoreError(f"{noise_folder}: no noise record; expected NAME.hea with its signal file")
+    rows = []
+    for name, noise in noises.items():
+        for snr_db in NOISE_LEVELS_DB:
+            say(f"noise {name} at {snr_db} dB")
+            scores = [score_record(_stressed(record, noise, snr_db), options) for record in records]
+            rows.append(NoiseScore(name, snr_db, tuple(scores)))
+    return tuple(rows)
 
 
-def _open(header: Path, channel: int) -> Opened:
-    files = [header, *(header.parent / name for name in names_in_header(header))]
-    signals = read_header(header.read_bytes()).signals
-    if not signals:  # the signals of a record in pieces are described in the headers of its pieces
-        return open_delivery(files, NO_SITE)
-    if channel >= len(signals):
-        raise ScoreError(f"channel {channel} was asked for; the record has {len(signals)}, counted from 0")
-    return open_delivery(files, Site(ecg_channel=signals[channel].label))
-
-
-def _truth(labels_path: Path, header: Path, opened: Opened) -> _Truth:
-    found = read_annotations(labels_path)
-    samples_per_frame = opened.rate / read_header(header.read_bytes()).fs_hz
-    labels = Annotations(found.sample * int(samples_per_frame), found.symbol, found.subtype, found.aux)
-    return _Truth(labels, bool(np.char.startswith(found.aux.astype(str), "(AF").any()))
-
-
-def _analyse(opened: Opened) -> Analysis:
-    def reader(first: int) -> Callable[[int, int], NDArray[np.int16]]:
-        return lambda a, b: opened.read(first + a, first + b)
-
-    return analyse_recording(
-        [Segment(stretch.n_samples, reader(stretch.first_sample)) for stretch in opened.stretches],
-        fs_hz=float(opened.rate),
-        mv_per_count=opened.mv_per_count,
-        count_at_zero_mv=opened.count_at_zero_mv,
-        rails=opened.rails,
-        missing_count=opened.missing_count,
+def _stressed(record: Labelled, noise: Opened, snr_db: int) -> Labelled:
+    """The record with noise added, stored on a wide range so that the noise does not meet a rail."""
+    opened, labels = record.signal, record.labels
+    fs_hz = float(opened.rate)
+    clean_mv, noise_mv = _millivolts(opened), _millivolts(noise)
+    at_rate = np.arange(int(len(noise_mv) * fs_hz / float(noise.rate))) * float(noise.rate) / fs_hz
+    normal = labels.sample[beat_classes(labels.symbol) == CLASSES.index("N")]
+    with_noise_mv = with_noise(
+        clean_mv, np.interp(at_rate, np.arange(len(noise_mv)), noise_mv), normal, fs_hz=fs_hz, snr_db=snr_db
     )
+    counts = np.clip(np.rint(with_noise_mv / opened.mv_per_count + opened.count_at_zero_mv), -32767, 32767)
+    signal = replace(opened, read=lambda a, b: counts[a:b].astype(np.int16), rails=(-32768, 32767))
+    return record._replace(signal=signal)
 
 
-def _compared(name: str, opened: Opened, truth: _Truth, analysis: Analysis, options: Options) -> RecordScore:
-    firsts = np.array([round(s.offset_ns * opened.rate / 1_000_000_000) for s in opened.stretches], np.int64)
-    n_samples = int(firsts[-1] + opened.stretches[-1].n_samples)
-    beats, quality = analysis.beats, analysis.quality
-    test = beat_annotations(firsts[beats.segment] + beats.sample, beats.beat_class)
-    bad = np.stack([firsts[quality.segment] + s for s in (quality.first_sample, quality.last_sample)], axis=1)
-
-    def beat_score(left_out: NDArray[np.int64] | None) -> BeatScore:
-        return compare_beats(
-            truth.labels, test, fs_hz=float(opened.rate), n_samples=n_samples, learning_s=options.learning_s,
-            escape_as=options.escape_as, left_out=left_out,
-        )  # fmt: skip
-
-    def run_score(ectopy: str) -> RunScore:
-        return compare_runs(
-            truth.labels, test, fs_hz=float(opened.rate), n_samples=n_samples, learning_s=options.learning_s,
-            escape_as=options.escape_as, ectopy=ectopy,
-        )  # fmt: skip
-
-    everything = beat_score(None)
-    expert_class = beat_classes(truth.labels.symbol, escape_as=options.escape_as)
-    return RecordScore(
-        record=name,
-        lead=opened.lead,
-        has_af=truth.has_af,
-        beats=everything,
-        beats_analysable=beat_score(bad),
-        runs={ectopy: run_score(ectopy) for ectopy in "VS"},
-        found_v_burden_pct=_v_burden_pct(test.symbol[beats.is_analysable] == "V"),
-        true_v_burden_pct=_v_burden_pct(expert_class[expert_class >= 0] == _V),
-        analysable_share_pct=100.0 * analysis.analysable_s * float(opened.rate) / opened.n_samples,
-        judged=_judged(everything, analysis),
-        findings=tuple(finding.code for finding in analysis.findings),
-    )
-
-
-def _v_burden_pct(is_v: NDArray[np.bool_]) -> float:
-    return 100.0 * float(is_v.mean()) if len(is_v) else float("nan")
-
-
-def _judged(score: BeatScore, analysis: Analysis) -> Judged:
-    """Stated probability and outcome of every scored beat."""
-    scored = score.true_class >= 0
-    found = beat_classes(analysis.beats.beat_class)
-    return Judged(
-        analysis.beats.class_probability[scored].astype(float), (score.true_class == found)[scored], found[scored]
-    )
+def _millivolts(opened: Opened) -> NDArray[np.float64]:
+    return (opened.read(0, opened.n_samples).astype(np.float64) - opened.count_at_zero_mv) * opened.mv_per_count

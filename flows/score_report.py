@@ -65,6 +65,26 @@ class RecordScore:
         return self.found_v_burden_pct - self.true_v_burden_pct
 
 
+class NoiseScore(NamedTuple):
+    """Outcome of the records with one noise added at one signal-to-noise ratio."""
+
+    noise: str
+    snr_db: int
+    records: tuple[RecordScore, ...]
+
+    def as_dict(self) -> dict[str, Any]:
+        """Plain values: gross figures in analysable time and over all time, and the share that was analysable."""
+        share = np.mean([record.analysable_share_pct for record in self.records])
+        return {
+            "noise": self.noise,
+            "snr_db": self.snr_db,
+            "records": [record.record for record in self.records],
+            "analysable_share_pct": _rounded(float(share)),
+            "gross": _percentages(gross([record.beats.matrix for record in self.records])),
+            "gross_analysable": _percentages(gross([record.beats_analysable.matrix for record in self.records])),
+        }
+
+
 @dataclass(frozen=True)
 class Report:
     """Outcome of all records of a folder."""
@@ -72,6 +92,7 @@ class Report:
     options: Options
     records: tuple[RecordScore, ...]
     left_out: tuple[tuple[str, str], ...]
+    noise: tuple[NoiseScore, ...] = ()
 
     def as_dict(self) -> dict[str, Any]:
         """Plain values for --json: percentages rounded to 0.001, None where nothing is there to divide by."""
@@ -88,6 +109,7 @@ class Report:
             "v_burden_error": _spread([record.v_burden_error_pct_points for record in self.records]),
             "matrix": _matrix(np.sum(matrices, axis=0)),
             "reliability": {name: self._reliability(name) for name in ("all", *CLASSES)},
+            "noise": [score.as_dict() for score in self.noise],
             "left_out": [{"record": record, "reason": reason} for record, reason in self.left_out],
             "cautions": list(CAUTIONS),
         }
@@ -188,6 +210,7 @@ def _text(report: Mapping[str, Any]) -> str:
             ("expert \\ detector", *TEST_COLUMNS), [(row, *cells.values()) for row, cells in report["matrix"].items()]
         ),
         _table(_RELIABILITY_HEADINGS, [_reliability_row(row) for row in report["reliability"]["all"]]),
+        *([_table(_NOISE_HEADINGS, [_noise_row(row) for row in report["noise"]])] if report["noise"] else []),
         *(f"left out: {row['record']}: {row['reason']}" for row in report["left_out"]),
         *report["cautions"],
     ]
@@ -199,6 +222,7 @@ _RUN_FIGURES = ("couplet_se", "couplet_ppv", "short_run_se", "short_run_ppv", "l
 _RECORD_HEADINGS = ("record", "lead", "beats", "V", "S", *_HEADINGS, "V% found", "expert", "error", "analysed %")
 _RUN_HEADINGS = ("runs", "couplet Se", "+P", "3-5 Se", "+P", ">5 Se", "+P")
 _RELIABILITY_HEADINGS = ("stated probability", "beats", "stated %", "right %")
+_NOISE_HEADINGS = ("noise, analysable time", "dB", "analysed %", *_HEADINGS)
 SUMMARIES = {
     "gross": "gross",
     "average": "average",
@@ -224,6 +248,11 @@ def _run_row(ectopy: str, runs: Mapping[str, Any]) -> list[str]:
 
 def _reliability_row(row: Mapping[str, Any]) -> list[Any]:
     return [f"{row['from']:g} to {row['to']:g}", row["beats"], _shown(row["stated_pct"]), _shown(row["right_pct"])]
+
+
+def _noise_row(row: Mapping[str, Any]) -> list[Any]:
+    figures = [_shown(row["gross_analysable"][f"{name}_pct"]) for name in FIGURES]
+    return [row["noise"], row["snr_db"], _shown(row["analysable_share_pct"]), *figures]
 
 
 def _shown(value: float | None) -> str:

@@ -184,6 +184,29 @@ def test_page_needs_no_other_file_and_escapes(folder, tmp_path):
     assert any("clinician over-reads" in text for text in cells.text)
 
 
+def test_noise_makes_it_harder(folder, tmp_path):
+    """With noise of growing power added, fewer detections are right over all time, and every level is reported."""
+    noise = np.random.default_rng(5).normal(0, 100, (60 * FS_HZ, 1)).astype(np.int64)
+    wfdb.wrsamp(
+        "hiss", fs=FS_HZ, units=["mV"], sig_name=["noise"], fmt=["16"], adc_gain=[200.0], baseline=[0],
+        d_signal=noise, write_dir=str(tmp_path),
+    )  # fmt: skip
+    made = score.score_folder(folder, noise_folder=tmp_path, noise_records=("clean",))
+    rows = made.as_dict()["noise"]
+    assert [(row["noise"], row["snr_db"]) for row in rows] == [("hiss", level) for level in score.NOISE_LEVELS_DB]
+    clean = made.as_dict()["records"][0]
+    for name in ("qrs_ppv_pct", "veb_ppv_pct"):
+        assert rows[-1]["gross"][name] <= clean[name]
+    assert rows[-1]["gross"] != rows[0]["gross"] or rows[-1]["analysable_share_pct"] < 100
+    assert "hiss" in made.as_text()
+
+
+def test_a_folder_without_noise_is_refused(folder, tmp_path):
+    """A noise folder without a record is an error that names it."""
+    with pytest.raises(score.ScoreError, match="no noise record"):
+        score.score_folder(folder, noise_folder=tmp_path)
+
+
 def test_real_records(reference_ecg, tmp_path):
     """Real labelled records are scored with the beat counts that their database states."""
     for record in ("106", "119"):
