@@ -163,7 +163,7 @@ def _value(where: str, setting: Field, value: Any) -> Any:
     if low is not None and not low <= value <= high:
         raise SettingsError(f"{where} = {value}; expected {low} to {high} ({setting.metadata['meaning']})")
     if setting.name == "zone" or (setting.name == "clock_zone" and value):
-        check_zone(where, value)
+        check_zone(where, str(value))
     if setting.name == "accepted_files" and value not in ("leave", "remove"):
         raise SettingsError(f"{where} = {value!r}; expected leave or remove")
     return value
