@@ -66,6 +66,11 @@ class Register:
         known = set(self.wears["device_serial"])
         return next((word for word in words if word in known), None)
 
+    def device_in(self, text: str) -> str | None:
+        """The longest device serial of the register that stands in a text with no letter or digit around it."""
+        serials = sorted(set(self.wears["device_serial"]), key=lambda serial: (-len(serial), serial))
+        return next((s for s in serials if re.search(rf"(?<![^\W_]){re.escape(s)}(?![^\W_])", text)), None)
+
     def patient_among(self, words: tuple[str, ...]) -> str | None:
         """The first word that is a patient code of the register."""
         known = set(self.patients["patient_code"])

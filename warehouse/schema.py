@@ -181,7 +181,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("wear_days", "BIGINT", "d", "Days with any wear."),
     ("valid_days", "BIGINT", "d", "Days that reach the minimum of analysable hours."),
     ("clock_coverage_pct", "DOUBLE", "%", "Share of the 24 clock hours with analysable time in the span."),
-    ("measure", "VARCHAR", "", "What is compared, for example v_burden_pct, v_per_h, couplets_per_24h or mean_rate_bpm."),
+    ("measure", "VARCHAR", "", "What is compared, such as v_burden_pct, runs_per_24h or mean_rate_bpm."),
     ("baseline_value", "DOUBLE", "as the measure", "Value before the therapy event, standardised over clock hours."),
     ("after_value", "DOUBLE", "as the measure", "Value after the settling time, standardised over clock hours."),
     ("baseline_days", "BIGINT", "d", "Valid days used before the therapy event."),
@@ -221,6 +221,9 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("attention_reason", "VARCHAR", "", "Why the patient needs a look, in one sentence with its figures."),
     ("since_day", "DATE", "", "Local day since when the reason holds."),
     ("attention_rank", "INTEGER", "", "Order on the attention list, 1 first."),
+    ("review_rank", "BIGINT", "", "Place on the over-read sheet: the decision that can move the burden most comes first."),
+    ("v_share_pct", "DOUBLE", "%", "Share of the beats in ventricular families that a decision on this family settles."),
+    ("settled_pct", "DOUBLE", "%", "Share that is settled once this family and all before it are decided."),
     ("reader_code", "VARCHAR", "", "Code of the person who over-read."),
     ("reviewed_utc", "TIMESTAMP", "UTC", "Instant of the review."),
     ("decision", "VARCHAR", "", "What the reader decided."),
@@ -271,7 +274,7 @@ _RHYTHM = (
 )  # fmt: skip
 _DELIVERY = (
     "delivery_id", "file_name", "file_bytes", "content_sha256", "received_utc", "status", "code", "reason",
-    "format", "findings", "recording_id", "signal_sha256",
+    "format", "findings", "recording_id", "start_local", "signal_sha256",
 )  # fmt: skip
 _RECORDING = (
     "recording_id", "device_serial", "start_utc", "end_utc", "zone", "zone_source", "fs_hz", "lead", "mv_per_count",
@@ -436,6 +439,11 @@ PUBLISHED: dict[str, Table] = _tables(
     Table(
         "attention", "one row per patient and reason for a look", ("patient_code", "attention_code"),
         ("attention_rank", "patient_code", "attention_code", "attention_reason", "since_day"),
+    ),
+    Table(
+        "review_sheet", "one row per recording and shape family, in the order in which an over-reader decides",
+        ("recording_id", "family"),
+        ("recording_id", "review_rank", "family", "family_class", "beat_count", "v_share_pct", "settled_pct"),
     ),
     LAKE["reviews"],
     LAKE["runs_of_flow"],

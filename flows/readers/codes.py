@@ -43,10 +43,11 @@ REFUSALS = {
     "same_start_other_patient": "the file names another patient than the register's wear",
     "does_not_fit_recording": "rate, lead or scale differ from the other parts of the same wear",
     "file_name_points_outside": "a file name inside the delivery leads out of it",
-    "link_leaves_folder": "the inbox entry is a link",
     "part_missing": "a file that the header names is not there",
     "sample_coding_not_supported": "the coding of the samples is not read here",
     "text_layout_unclear": "columns, numbers or times of the text cannot be told without a site layout",
+    "too_many_gaps": "the file has more gaps than segments can be numbered",
+    "not_a_plain_file": "the inbox entry is a link, a pipe or a device",
     "unsafe_xml": "the XML declares a document type or entities",
 }
 

@@ -1,0 +1,353 @@
+"""The inbox: which deliveries lie there, which files belong together, and where refused ones go.
+
+Nothing is opened further than its first bytes here. Files are only moved after the ledger says why, so that a run that
+is killed in between is finished by the next one.
+"""
+
+from __future__ import annotations
+
+import json
+import os
+import stat
+import zipfile
+from collections.abc import Collection, Iterator, Sequence
+from dataclasses import dataclass
+from datetime import UTC, datetime
+from pathlib import Path, PurePosixPath
+from typing import NamedTuple
+
+from flows.privacy import shown_name
+from flows.readers import wfdb
+from flows.readers.codes import Declined, Refused, Waits
+from flows.readers.identify import head_of, reader_of
+from flows.settings import InboxSettings
+from warehouse.parts import write_whole
+
+REASON_SUFFIX = ".reason.txt"
+_LARGEST_HEADER_BYTES = 2**20
+
+
+@dataclass(frozen=True)
+class Candidate:
+    """Files that arrived together: the first is the one to open, `companions` only move with it."""
+
+    name: str  # of the first file, relative to the inbox
+    files: tuple[Path, ...]
+    companions: tuple[Path, ...] = ()
+    size: int = 0
+    mtime_ns: int = 0  # latest of the files
+    problem: Declined | None = None  # known without opening it
+
+    @property
+    def received_utc(self) -> datetime:
+        """Modification time of the latest file, naive UTC."""
+        return datetime.fromtimestamp(self.mtime_ns // 1000 / 1e6, UTC).replace(tzinfo=None)
+
+
+def look(inbox: Path, settings: InboxSettings, now_s: float) -> list[Candidate]:
+    """All deliveries in the inbox in the order of their arrival; links, pipes and devices are refused candidates."""
+    plain, odd = _entries(inbox, settings.done_marker)
+    candidates = [_odd_candidate(inbox, path) for path in odd]
+    candidates += [_checked(candidate, settings, now_s) for candidate in _grouped(inbox, plain)]
+    return sorted(candidates, key=lambda candidate: (candidate.mtime_ns, candidate.name))
+
+
+def _entries(inbox: Path, done_marker: str) -> tuple[list[Path], list[Path]]:
+    """Plain files, and whatever else lies in the inbox; hidden entries and done markers are neither."""
+    plain: list[Path] = []
+    odd: list[Path] = []
+    for folder, folders, files in os.walk(inbox, followlinks=False):
+        folders[:] = sorted(name for name in folders if not name.startswith("."))
+        for name in [*files, *(name for name in folders if (Path(folder) / name).is_symlink())]:
+            path = Path(folder) / name
+            if name.startswith(".") or (done_marker and name.endswith(done_marker)):
+                continue
+            try:
+                is_plain = stat.S_ISREG(path.lstat().st_mode)
+            except FileNotFoundError:
+                continue
+            (plain if is_plain else odd).append(path)
+    return sorted(plain), sorted(odd)
+
+
+def _odd_candidate(inbox: Path, path: Path) -> Candidate:
+    problem = Refused(
+        "not_a_plain_file",
+        "the inbox entry is a link, a pipe or a device; expected a plain file. Copy the file itself into the inbox.",
+    )
+    name = path.relative_to(inbox).as_posix()
+    return Candidate(name, (path,), mtime_ns=path.lstat().st_mtime_ns, problem=problem)
+
+
+def _grouped(inbox: Path, plain: Sequence[Path]) -> Iterator[Candidate]:
+    """File sets of WFDB headers first; what no header claims stands alone."""
+    headers = {path for path in plain if _is_header(path)}
+    claimed: set[Path] = set()
+    sets = []
+    for header in sorted(headers, key=lambda path: (not _has_segments(path), path)):
+        if header not in claimed:
+            files, problem = _file_set(header)
+            claimed |= set(files)
+            sets.append((files, problem))
+    for files, problem in sets:
+        companions = _companions(files[0], plain, claimed)
+        claimed |= set(companions)
+        yield _candidate(inbox, files, companions, problem)
+    for path in plain:
+        if path not in claimed:
+            yield _candidate(inbox, (path,), (), _orphan(path))
+
+
+def _candidate(inbox: Path, files: Sequence[Path], companions: Sequence[Path], problem: Declined | None) -> Candidate:
+    there = [path.stat() for path in files if path.exists()]
+    return Candidate(
+        files[0].relative_to(inbox).as_posix(),
+        tuple(files),
+        tuple(companions),
+        sum(found.st_size for found in there),
+        max((found.st_mtime_ns for found in there), default=0),
+        problem,
+    )
+
+
+def _is_header(path: Path) -> bool:
+    try:
+        return path.stat().st_size <= _LARGEST_HEADER_BYTES and wfdb.identify(head_of(path))
+    except OSError:
+        return False
+
+
+def _has_segments(path: Path) -> bool:
+    try:
+        return any(name.endswith(".hea") for name in wfdb.names_in_header(path))
+    except (Declined, OSError):
+        return False
+
+
+def _file_set(header: Path) -> tuple[tuple[Path, ...], Declined | None]:
+    """The header, the files it names and what these name; and what is missing."""
+    files, open_headers, missing = [header], [header], 0
+    try:
+        while open_headers:
+            for name in wfdb.names_in_header(open_headers.pop()):
+                path = header.parent / name
+                if path in files:
+                    continue
+                if not path.is_file():
+                    missing += 1
+                    continue
+                files.append(path)
+                if name.endswith(".hea"):
+                    open_headers.append(path)
+    except Declined as problem:
+        return (header,), problem
+    return tuple(files), Waits("waiting_for_missing_part", _missing_sentence(missing)) if missing else None
+
+
+def _missing_sentence(missing: int) -> str:
+    return f"the header names {missing} files that are not beside it; expected all of them. Deliver them as well."
+
+
+def _companions(header: Path, plain: Sequence[Path], claimed: Collection[Path]) -> list[Path]:
+    """Files of the header's name that no reader opens, annotations for instance."""
+    same = (p for p in plain if p.parent == header.parent and p.stem == header.stem and p not in claimed)
+    return [path for path in same if reader_of(head_of(path)) is None]
+
+
+def _orphan(path: Path) -> Declined | None:
+    """A signal file without its header cannot be told from other bytes, so it waits."""
+    try:
+        if path.suffix.casefold() == ".dat" and reader_of(head_of(path)) is None:
+            return Waits(
+                "waiting_for_missing_part",
+                "a signal file without its header; expected a .hea file that names it. Deliver it as well.",
+            )
+    except PermissionError:
+        return Waits("not_readable", "the file may not be read by this program. Give it the right to read.")
+    except OSError:
+        return Waits("still_being_written", "the file went away while it was looked at. Run again.")
+    return None
+
+
+def _checked(candidate: Candidate, settings: InboxSettings, now_s: float) -> Candidate:
+    """Add what waiting rules say: quiet time, done marker, and how long a part may be missing."""
+    problem = candidate.problem
+    changed_s = max((_changed_s(path) for path in candidate.files), default=now_s)
+    if isinstance(problem, Waits) and problem.code == "waiting_for_missing_part":
+        if now_s - changed_s >= settings.part_wait_h * 3600:
+            problem = Refused("part_missing", problem.sentence)
+    elif problem is None and settings.done_marker and not _is_marked(candidate.files[0], settings.done_marker):
+        problem = Waits(
+            "still_being_written", "no done-marker lies beside the file. It is taken when the marker comes."
+        )
+    elif problem is None and now_s - changed_s < settings.quiet_s:
+        problem = Waits(
+            "still_being_written",
+            f"the file changed {max(now_s - changed_s, 0):.0f} s ago; expected {settings.quiet_s:g} s without change.",
+        )
+    return (
+        candidate
+        if problem is candidate.problem
+        else Candidate(
+            candidate.name, candidate.files, candidate.companions, candidate.size, candidate.mtime_ns, problem
+        )
+    )
+
+
+def _changed_s(path: Path) -> float:
+    """Last change of content or of the directory entry: a file copied in with its old date is new here."""
+    try:
+        found = path.stat()
+    except OSError:
+        return 0.0
+    return max(found.st_mtime, found.st_ctime)
+
+
+def _is_marked(path: Path, marker: str) -> bool:
+    return path.with_name(path.name + marker).exists() or path.with_name(path.stem + marker).exists()
+
+
+# What was seen before
+
+
+class Seen(NamedTuple):
+    """A file as an earlier run saw it."""
+
+    size: int
+    mtime_ns: int
+    sha256: str  # empty where it was not hashed
+
+
+class SeenFiles:
+    """Sizes, times and hashes of inbox files by name: spares hashing again. Losing it costs time, nothing else."""
+
+    def __init__(self, path: Path) -> None:
+        self._path = path
+        try:
+            self._files = {name: Seen(*values) for name, values in json.loads(path.read_text()).items()}
+        except (OSError, ValueError, TypeError, AttributeError):
+            self._files = {}
+        self._now: dict[str, Seen] = {}
+
+    def is_unchanged(self, name: str, size: int, mtime_ns: int) -> bool:
+        """The file looked the same in an earlier run."""
+        return name in self._files and self._files[name][:2] == (size, mtime_ns)
+
+    def hash_of(self, name: str, size: int, mtime_ns: int) -> str:
+        """Hash of an unchanged file, else empty."""
+        return self._files[name].sha256 if self.is_unchanged(name, size, mtime_ns) else ""
+
+    def note(self, name: str, size: int, mtime_ns: int, sha256: str) -> None:
+        """Remember how a delivery looks now."""
+        self._now[name] = Seen(size, mtime_ns, sha256)
+
+    def save(self) -> None:
+        """Write what was noted in this run; deliveries that are gone are forgotten."""
+        if self._now != self._files:
+            write_whole(self._path, json.dumps(self._now, sort_keys=True).encode())
+
+
+# Quarantine
+
+
+def quarantine(
+    folder: Path, candidate: Candidate, delivery_id: str, code: str, reason: str, codes: Collection[str]
+) -> str:
+    """Move a refused delivery out of the inbox with its reason beside it; returns its name there.
+
+    A file set whose names might name a person is moved as one zip archive, so that its members keep their names.
+    """
+    target = folder / "quarantine"
+    target.mkdir(exist_ok=True)
+    files = [path for path in (*candidate.files, *candidate.companions) if path.is_symlink() or path.exists()]
+    shown = shown_name(candidate.name, delivery_id, codes)
+    is_masked = shown != candidate.name
+    name = _free_name(target, PurePosixPath(shown).name, delivery_id)
+    if is_masked and len(files) > 1:
+        name = _free_name(target, f"delivery-{delivery_id[:8]}.zip", delivery_id)
+    write_whole(target / (name + REASON_SUFFIX), _reason_text(name, delivery_id, code, reason).encode())
+    if name.endswith(".zip") and len(files) > 1:
+        _zip_away(files, target / name)
+    else:
+        for path in files:
+            path.replace(target / (name if path == candidate.files[0] else path.name))
+    _remove_empty_folders(folder / "inbox", candidate.files[0].parent)
+    return name
+
+
+def remove(folder: Path, candidate: Candidate) -> None:
+    """Delete the files of a delivery that is in the lake."""
+    for path in (*candidate.files, *candidate.companions):
+        path.unlink(missing_ok=True)
+    _remove_empty_folders(folder / "inbox", candidate.files[0].parent)
+
+
+def _free_name(target: Path, name: str, delivery_id: str) -> str:
+    """The name, unless another delivery has it in quarantine."""
+    reason = target / (name + REASON_SUFFIX)
+    if reason.exists() and f"delivery: {delivery_id}" not in reason.read_text(encoding="utf-8"):
+        path = PurePosixPath(name)
+        return f"{path.stem}-{delivery_id[:8]}{path.suffix}"
+    return name
+
+
+def _reason_text(name: str, delivery_id: str, code: str, reason: str) -> str:
+    return (
+        f"{code}\n{reason}\n\ndelivery: {delivery_id}\n"
+        f"After a fix of settings or register: burdenline retry DIR {name}\n"
+    )
+
+
+def _zip_away(files: Sequence[Path], target: Path) -> None:
+    beside = target.with_name(f".writing-{target.name}")
+    with zipfile.ZipFile(beside, "w", zipfile.ZIP_DEFLATED) as archive:
+        for path in files:
+            archive.write(path, path.name)
+    beside.replace(target)
+    for path in files:
+        path.unlink()
+
+
+def _remove_empty_folders(inbox: Path, folder: Path) -> None:
+    while folder != inbox and inbox in folder.parents and not any(folder.iterdir()):
+        folder.rmdir()
+        folder = folder.parent
+
+
+def retry(folder: Path, name: str) -> None:
+    """Put a quarantined delivery back into the inbox and let the ledger forget it, so that the next run tries again.
+
+    Raises FileNotFoundError where the quarantine has no such file.
+    """
+    from flows.deliveries import Deliveries
+    from warehouse.ledger import Ledger
+
+    source = folder / "quarantine" / name
+    if PurePosixPath(name).name != name or name.endswith(REASON_SUFFIX) or not (source.is_symlink() or source.exists()):
+        raise FileNotFoundError(2, "is not a file of the quarantine folder; expected one of its names", str(source))
+    reason = source.with_name(name + REASON_SUFFIX)
+    deliveries = Deliveries(folder / "lake", ledger := Ledger(folder / "lake"))
+    for delivery_id in _deliveries_in(reason):
+        if delivery_id in deliveries.rows:
+            deliveries.drop(delivery_id)
+    if loads := deliveries.loads():
+        ledger.commit(loads, note="retry")
+    for path in _with_set(source):
+        path.replace(folder / "inbox" / path.name)
+    reason.unlink(missing_ok=True)
+
+
+def _deliveries_in(reason: Path) -> list[str]:
+    if not reason.exists():
+        return []
+    lines = reason.read_text(encoding="utf-8").splitlines()
+    return [line.removeprefix("delivery: ") for line in lines if line.startswith("delivery: ")]
+
+
+def _with_set(source: Path) -> list[Path]:
+    """The file, and for a WFDB header its files and companions."""
+    if source.is_symlink() or not _is_header(source):
+        return [source]
+    files, _ = _file_set(source)
+    plain = [p for p in source.parent.iterdir() if p.is_file() and not p.name.endswith(REASON_SUFFIX)]
+    return [*files, *_companions(source, plain, files)]
