@@ -1,0 +1,165 @@
+"""The `changes` table from made-up hours, days and periods."""
+
+from datetime import date, timedelta
+
+import numpy as np
+import polars as pl
+import pytest
+
+from flows import trends
+from flows.settings import ChangeSettings, WearSettings
+from warehouse.schema import PUBLISHED
+
+EVENT = date(2026, 3, 20)
+NO_DRIFT = ChangeSettings(gap_drift_share=0.0)
+DAY_SHAPE = 1 + 0.8 * np.cos(2 * np.pi * (np.arange(24) - 14) / 24)
+
+
+def hours_of(patient: str, day: date, level: float, *, clock_hours=range(24), rate_bpm: float = 70.0) -> pl.DataFrame:
+    """Hours of one day whose ventricular beats follow the clock; `level` is V per hour round the clock."""
+    hours = np.array(list(clock_hours))
+    v_beats = np.rint(level * DAY_SHAPE[hours]).astype(int)
+    return pl.DataFrame(
+        {"patient_code": patient, "local_day": day, "clock_hour": hours, "analysable_s": 3600.0, "v_beats": v_beats,
+         "s_beats": 3, "all_beats": round(60 * rate_bpm), "mean_rate_bpm": rate_bpm, "couplets": 0, "runs": 0}
+    )  # fmt: skip
+
+
+def programme(hours: list[pl.DataFrame], events: dict[str, str]) -> dict[str, pl.DataFrame]:
+    """The four tables for therapy events (id to patient) at EVENT, all days within reach of the periods."""
+    local_hours = pl.concat(hours)
+    days = local_hours.group_by("patient_code", "local_day").agg(analysable_h=pl.col("analysable_s").sum() / 3600)
+    wear_days = days.with_columns(is_valid_day=pl.col("analysable_h") >= 10)
+    spans = [("baseline", -28, -1), ("settling", 0, 6), ("after", 7, 96)]
+    periods = [
+        {"patient_code": patient, "therapy_id": therapy, "period": name, "first_day": EVENT + timedelta(first),
+         "last_day": EVENT + timedelta(last)}
+        for therapy, patient in events.items() for name, first, last in spans
+    ]  # fmt: skip
+    therapies = pl.DataFrame({"therapy_id": list(events), "patient_code": list(events.values())})
+    return {
+        "local_hours": local_hours,
+        "wear_days": wear_days,
+        "periods": pl.DataFrame(periods),
+        "therapies": therapies,
+    }
+
+
+def changes(hours, events, change=NO_DRIFT, wear=WearSettings()):  # noqa: B008 - frozen settings
+    return trends.changes(**programme(hours, events), change=change, wear=wear)
+
+
+def wearing(patient: str, before: list[float], after: list[float], **of_after) -> list[pl.DataFrame]:
+    earlier = [hours_of(patient, EVENT - timedelta(len(before) - i), level) for i, level in enumerate(before)]
+    later = [hours_of(patient, EVENT + timedelta(7 + i), level, **of_after) for i, level in enumerate(after)]
+    return earlier + later
+
+
+def row(table: pl.DataFrame, measure: str = "v_burden_pct") -> dict:
+    return table.filter(pl.col("measure") == measure).row(0, named=True)
+
+
+STEADY = [400, 520, 450, 380, 480, 430, 500]
+LOWER = [40, 55, 44, 36, 50, 41, 47]
+
+
+def test_a_clear_fall_is_called_beyond_chance():
+    """A tenfold fall over seven days each side is called a fall, with its interval and days."""
+    found = row(changes(wearing("P1", STEADY, LOWER), {"T1": "P1"}))
+    assert found["verdict"] == "fell_beyond_chance"
+    assert found["ratio_low"] < 0.1 < found["ratio_high"]
+    assert found["ratio"] == pytest.approx(found["after_value"] / found["baseline_value"])
+    assert (found["baseline_days"], found["after_days"], found["baseline_analysable_h"]) == (7, 7, 168)
+    assert "fell by" in found["reason"]
+
+
+def test_every_event_and_measure_has_a_row_with_the_published_columns():
+    """Patients without wear, without days on a side and without events on record all keep their rows."""
+    hours = wearing("P1", STEADY, LOWER) + wearing("P2", STEADY, [])
+    table = changes(hours, {"T1": "P1", "T2": "P2", "T3": "P3"})
+    assert tuple(table.columns) == PUBLISHED["changes"].columns
+    assert table.height == 3 * len(trends.MEASURES)
+    assert table.filter(pl.col("patient_code") != "P1")["verdict"].unique().to_list() == ["too_little_wear"]
+    assert table["reason"].null_count() == 0
+
+
+def test_no_therapy_gives_an_empty_table():
+    """A programme without therapy events has an empty table with the published columns."""
+    table = changes(wearing("P1", STEADY, LOWER), {"T1": "P1"}).clear()
+    tables = programme(wearing("P1", STEADY, LOWER), {"T1": "P1"})
+    tables |= {"therapies": tables["therapies"].clear(), "periods": tables["periods"].clear()}
+    assert trends.changes(**tables, change=NO_DRIFT, wear=WearSettings()).equals(table)
+
+
+def test_losing_the_nights_does_not_look_like_a_change():
+    """Days worn only in the ectopic daytime have the same burden as whole days, and the reason says what is missing."""
+    days_only = changes(wearing("P1", STEADY, STEADY, clock_hours=range(8, 20)), {"T1": "P1"})
+    found = row(days_only)
+    assert DAY_SHAPE[8:20].mean() > 1.4  # the change that a plain mean would show
+    assert found["ratio"] == pytest.approx(1, abs=0.05)
+    assert found["verdict"] == "within_chance"
+    assert found["after_clock_coverage_pct"] == 50
+    assert "Part of the day is missing" in found["reason"]
+
+
+def test_a_burden_has_its_definition():
+    """10,000 ventricular among 100,000 beats over 22.5 h are 10 % and 444.4 per hour."""
+    table = pl.concat([hours_of("P1", EVENT + timedelta(day), 0) for day in (-2, -1, 8, 9)])
+    exact = table.with_columns(
+        v_beats=10_000 / 24, all_beats=100_000 / 24, analysable_s=22.5 * 3600 / 24
+    )  # per hour, so that a day holds the worked numbers
+    found = changes([exact], {"T1": "P1"})
+    # Source: definition of burden (beats over all beats, beats over analysable time), by hand
+    assert row(found)["baseline_value"] == pytest.approx(10)
+    assert row(found, "v_per_h")["baseline_value"] == pytest.approx(444.44, abs=0.05)
+
+
+def test_none_after_is_bounded_and_never_only_minus_100_pct():
+    """No beat after gives ratio 0 with a finite upper bound below 1."""
+    found = row(changes(wearing("P1", STEADY, [0, 0, 0]), {"T1": "P1"}))
+    assert found["ratio"] == found["ratio_low"] == 0
+    assert 0 < found["ratio_high"] < 0.05
+    assert found["verdict"] == "fell_beyond_chance"
+
+
+def test_none_on_either_side_keeps_its_row():
+    """A burden of 0 on both sides is within chance, without a ratio."""
+    found = row(changes(wearing("P1", [0, 0, 0], [0, 0, 0]), {"T1": "P1"}))
+    assert (found["verdict"], found["ratio"], found["baseline_value"]) == ("within_chance", None, 0)
+
+
+def test_a_single_day_each_side_is_too_little_by_default():
+    """One valid day each side gives numbers but no verdict; the reason names what is needed."""
+    found = row(changes(wearing("P1", [400], [4]), {"T1": "P1"}))
+    assert found["verdict"] == "too_little_wear"
+    assert "at least 2" in found["reason"]
+
+
+def test_verdict_follows_the_limit_that_is_shown():
+    """For falls of any size, the verdict is a fall exactly when the fall exceeds the chance limit shown."""
+    events = {f"T{i:02}": f"P{i:02}" for i in range(40)}
+    hours = [
+        day for i, patient in enumerate(events.values())
+        for day in wearing(patient, STEADY[:4], [level * (1 - i / 39) for level in STEADY[2:6]])
+    ]  # fmt: skip
+    table = changes(hours, events, change=ChangeSettings()).filter(pl.col("measure") == "v_burden_pct")
+    beyond = -table["change_pct"] > table["chance_fall_limit_pct"]
+    assert beyond.to_list() == (table["verdict"] == "fell_beyond_chance").to_list()
+    assert 0 < beyond.sum() < 40
+
+
+def test_a_changed_heart_rate_is_seen_beside_the_burden():
+    """Mean heart rate has its own row and stands beside every other measure."""
+    hours = wearing("P1", STEADY, STEADY, rate_bpm=55.0)
+    found = changes(hours, {"T1": "P1"})
+    assert row(found, "mean_rate_bpm")["verdict"] == "fell_beyond_chance"
+    assert row(found)["baseline_rate_bpm"] == pytest.approx(70)
+    assert row(found)["after_rate_bpm"] == pytest.approx(55)
+
+
+def test_time_between_the_periods_widens_the_chance_limit():
+    """The published drift over weeks raises the smallest fall beyond chance."""
+    hours = wearing("P1", STEADY, LOWER)
+    near = row(changes(hours, {"T1": "P1"}))["chance_fall_limit_pct"]
+    far = row(changes(hours, {"T1": "P1"}, change=ChangeSettings()))["chance_fall_limit_pct"]
+    assert far > near + 10
