@@ -115,7 +115,7 @@ def _code(text: str) -> str:
 def _number(value: float) -> str:
     """As exact as eight characters allow."""
     for digits in range(8, 0, -1):
-        text = f"{value:.{digits}g}"
+        text = f"{value + 0.0:.{digits}g}"  # plus 0.0: never -0
         if len(text) <= 8:
             return text
     raise ValueError(f"{value} cannot be written in eight characters")
