@@ -21,6 +21,7 @@ SHAPE_BEFORE = round(SHAPE_BEFORE_MS / 1000 * WORKING_FS_HZ)
 SHAPE_AFTER = round(SHAPE_AFTER_MS / 1000 * WORKING_FS_HZ)
 SHAPE_LENGTH = SHAPE_BEFORE + SHAPE_AFTER
 GUARD_BLOCKS = round(qrs.GUARD_S * WORKING_FS_HZ / qrs.BLOCK)
+CLEAN = 0.25  # noise energy over the QRS level of beats that may found a family
 FLAT_MV = 0.012  # a block that moves less than this is flat
 
 
@@ -51,6 +52,20 @@ class ChunkBeats(NamedTuple):
     energy: NDArray[np.float32]
     share: NDArray[np.float32]  # energy over the local QRS level
     shape_mv: NDArray[np.float32]  # shape (n_beats, SHAPE_LENGTH)
+    is_clean: NDArray[np.bool_]  # little noise near by
+
+
+def check_scale(scale: Scale) -> None:
+    """ValueError unless the scale turns counts into millivolts."""
+    if not (np.isfinite(scale.mv_per_count) and scale.mv_per_count != 0):
+        raise ValueError(f"mv_per_count is {scale.mv_per_count!r}; expected the millivolts of one count, not zero")
+    if not np.isfinite(scale.count_at_zero_mv):
+        raise ValueError(f"count_at_zero_mv is {scale.count_at_zero_mv!r}; expected the count that stands for 0 mV")
+
+
+def join(parts: list[ChunkBeats]) -> ChunkBeats:
+    """Beats of consecutive chunks as one."""
+    return ChunkBeats(*(np.concatenate(column) for column in zip(*parts, strict=True)))
 
 
 def cuts(n_samples: int, fs_hz: float, chunk_s: float) -> Iterator[tuple[int, int]]:
@@ -75,7 +90,8 @@ def read_chunk(segment: Segment, begin: int, end: int, scale: Scale) -> tuple[Ch
     beats, noise, level = _find(boxes, flags)
     keep = (beats.working + first >= begin) & (beats.working + first < end)
     inner = slice((begin - first) // qrs.BLOCK, (begin - first) // qrs.BLOCK + -(-(end - begin) // qrs.BLOCK))
-    kept = ChunkBeats(beats.working[keep] + first, beats.energy[keep], beats.share[keep], beats.shape_mv[keep])
+    kept = ChunkBeats(*(column[keep] for column in beats))
+    kept = kept._replace(working=kept.working + first)
     return kept, Blocks(*(flag[inner] for flag in flags), noise[inner], level[inner])
 
 
@@ -94,7 +110,11 @@ def _find(
     beat, working = beat[inside], working[inside]
     noise = _noise(found.energy, candidates.cell[beat], n_blocks)
     shapes = _shapes(padded, working)
-    return ChunkBeats(working, candidates.energy[beat], candidates.share[beat], shapes), noise, level
+    is_clean = (
+        np.nan_to_num(noise, nan=0.0)[candidates.cell[beat] // qrs.BLOCK_CELLS]
+        < CLEAN * level[candidates.cell[beat] // qrs.BLOCK_CELLS]
+    )
+    return ChunkBeats(working, candidates.energy[beat], candidates.share[beat], shapes, is_clean), noise, level
 
 
 def _shapes(signal_mv: NDArray[np.float32], working: NDArray[np.float64]) -> NDArray[np.float32]:

@@ -1,171 +1,167 @@
-"""Shape families: beats that look alike, found in batches by matrix products and merged over the recording."""
+"""Shape families: beats that look alike, found by matrix products against few prototypes, carried through the recording.
+
+Beats come in batches. Each batch is matched with the families known so far; what is left may found new ones. A family asks
+of its beats a correlation that depends on how little its own beats scatter, so that a clean recording separates shapes that
+a noisy one must take for the same.
+"""
 
 from __future__ import annotations
 
 from typing import NamedTuple
 
 import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
 from detectors.chunks import SHAPE_BEFORE, SHAPE_LENGTH
 
 CORE_BEFORE = 15  # working samples, 120 ms
-CORE_AFTER = 20  # working samples, 160 ms
-LAGS = tuple(range(-4, 5))  # working samples, 32 ms either way
+CORE_LENGTH = 35  # working samples, 280 ms
+REACH = 4  # working samples, 32 ms: how far the R peaks of two beats of one shape may lie apart
 LOOSEST = 0.90  # correlation that a family asks of its beats when they scatter much
 TIGHTEST = 0.97  # and when they scatter little
 SCATTER_ALLOWED = 4.0  # times the median distance of a family's own beats
-SAME_PROTOTYPE = 0.97
-AMPLITUDE_LIMIT = 2.0
-MOST_FAMILIES = 32
-SEED_SAMPLE = 256
+AMPLITUDE_LIMIT = 2.0  # sizes within this factor
+MOST_FAMILIES = 64
+MOST_NEW_FAMILIES = 32  # in one batch
+SEED_SAMPLE = 128  # beats of which one becomes the seed of a family
+MEMORY_BEATS = 5000  # the averaged shape follows slow change over about so many beats of the family
 
 
-class LocalFamilies(NamedTuple):
-    """Families of one batch of beats."""
+class Membership(NamedTuple):
+    """Family of each beat of a batch. Arrays of shape (n_beats,)."""
 
-    family: NDArray[np.int64]  # shape (n_beats,), row of `shape_mv`, -1 for none
-    lag: NDArray[np.int64]  # shape (n_beats,), working samples by which the beat lies later than its family
-    likeness: NDArray[np.float32]  # shape (n_beats,), correlation with the family, or the nearest one
-    nearest: NDArray[np.int64]  # shape (n_beats,), most similar family whatever the distance, -1 for none
-    count: NDArray[np.int64]  # shape (n_families,)
-    shape_mv: NDArray[np.float32]  # shape (n_families, SHAPE_LENGTH)
+    family: NDArray[np.int64]  # number within the recording, -1 for none
+    nearest: NDArray[np.int64]  # most similar family whatever the distance, -1 when there is none at all
+    likeness: NDArray[np.float32]  # correlation with the nearest
 
 
-def core(shape_mv: NDArray[np.float32], lag: int = 0) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+def core(shape_mv: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
     """QRS stretch of shapes (n, SHAPE_LENGTH), without mean and of unit length, and its length in mV."""
-    cut = shape_mv[:, SHAPE_BEFORE - CORE_BEFORE + lag : SHAPE_BEFORE + CORE_AFTER + lag]
-    cut = cut - cut.mean(axis=1, keepdims=True)
-    size = np.sqrt(np.einsum("ij,ij->i", cut, cut))
-    return cut / np.maximum(size, 1e-6)[:, None], size
+    return _unit(shape_mv[:, SHAPE_BEFORE - CORE_BEFORE : SHAPE_BEFORE - CORE_BEFORE + CORE_LENGTH])
 
 
-def likeness(
-    unit: NDArray[np.float32], size: NDArray[np.float32], prototypes_mv: NDArray[np.float32]
-) -> tuple[NDArray[np.float32], NDArray[np.int64]]:
-    """Best correlation over all lags of beats with prototypes, shapes (n_beats, n_prototypes), and the lag that gave it."""
-    best = np.full((unit.shape[0], prototypes_mv.shape[0]), -1.0, dtype=np.float32)
-    lag_of = np.zeros(best.shape, dtype=np.int64)
-    for lag in LAGS:
-        template, template_size = core(prototypes_mv, -lag)
-        now = unit @ template.T
-        if lag == LAGS[0]:
-            own_size = template_size
-        better = now > best
-        best[better] = now[better]
-        lag_of[better] = lag
-    ratio = size[:, None] / np.maximum(own_size, 1e-6)[None, :]
-    best[(ratio > AMPLITUDE_LIMIT) | (ratio < 1 / AMPLITUDE_LIMIT)] -= 1.0
-    return best, lag_of
+def _unit(stretch: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    level = stretch @ np.full(stretch.shape[-1], 1 / stretch.shape[-1], dtype=np.float32)
+    stretch = stretch - level[..., None]
+    size = np.maximum(np.sqrt(np.einsum("...j,...j->...", stretch, stretch)), np.float32(1e-6))
+    return stretch / size[..., None], size
 
 
-def cluster(shape_mv: NDArray[np.float32]) -> LocalFamilies:
-    """Group one batch of beats, shape (n_beats, SHAPE_LENGTH), into at most MOST_FAMILIES families, biggest first."""
-    unit, size = core(shape_mv)
-    prototypes = np.empty((0, shape_mv.shape[1]), dtype=np.float32)
-    limits: list[float] = []
-    free = np.arange(shape_mv.shape[0])
-    while free.size >= 2 and prototypes.shape[0] < MOST_FAMILIES:
-        seed = _seed(unit, size, shape_mv, free)
-        if seed is None:
-            break
-        limit = LOOSEST
-        for _ in range(3):
-            match, lag = likeness(unit[free], size[free], seed[None])
-            is_member = match[:, 0] > limit
-            if not is_member.any():
-                break
-            seed = _mean_shape(shape_mv, free[is_member], lag[is_member, 0])
-            limit = _limit(match[is_member, 0])
-        is_member[np.flatnonzero(free == free[0])] |= not is_member.any()
-        prototypes = np.vstack([prototypes, seed[None]])
-        limits.append(limit)
-        free = free[~is_member]
-    return _assign(shape_mv, unit, size, prototypes, np.array(limits, dtype=np.float32))
-
-
-def _limit(match: NDArray[np.float32]) -> float:
-    """Correlation that a family asks of its beats, from how much they scatter."""
-    return float(np.clip(1 - SCATTER_ALLOWED * np.median(1 - match), LOOSEST, TIGHTEST))
-
-
-def _seed(
-    unit: NDArray[np.float32], size: NDArray[np.float32], shape_mv: NDArray[np.float32], free: NDArray[np.int64]
-) -> NDArray[np.float32] | None:
-    """The free beat with most look-alikes among an even sample of the free beats; None when there is none."""
-    sample = free[:: max(1, free.size // SEED_SAMPLE)]
-    match, _ = likeness(unit[sample], size[sample], shape_mv[sample])
-    friends = (match > LOOSEST).sum(axis=0)
-    best = int(friends.argmax())
-    return shape_mv[sample[best]] if friends[best] >= 2 else None
-
-
-def _mean_shape(
-    shape_mv: NDArray[np.float32], member: NDArray[np.int64], lag: NDArray[np.int64]
-) -> NDArray[np.float32]:
-    total = np.zeros(shape_mv.shape[1], dtype=np.float64)
-    for step in LAGS:
-        total += np.roll(shape_mv[member[lag == step]].sum(axis=0, dtype=np.float64), -step)
-    return (total / max(member.size, 1)).astype(np.float32)
-
-
-def _assign(
-    shape_mv: NDArray[np.float32],
-    unit: NDArray[np.float32],
-    size: NDArray[np.float32],
-    prototypes: NDArray[np.float32],
-    limits: NDArray[np.float32],
-) -> LocalFamilies:
-    n_beats = shape_mv.shape[0]
-    if prototypes.shape[0] == 0:
-        none = np.full(n_beats, -1, dtype=np.int64)
-        zero = np.zeros(n_beats, dtype=np.int64)
-        return LocalFamilies(none, zero, zero.astype(np.float32), none, none[:0], prototypes)
-    match, lag_of = likeness(unit, size, prototypes)
-    nearest = match.argmax(axis=1)
-    row = np.arange(n_beats)
-    like, lag = match[row, nearest], lag_of[row, nearest]
-    family = np.where(like > limits[nearest], nearest, -1)
-    used = np.unique(family[family >= 0])
-    shapes = np.array([_mean_shape(shape_mv, np.flatnonzero(family == f), lag[family == f]) for f in used])
-    count = np.array([(family == f).sum() for f in used], dtype=np.int64)
-    order = np.argsort(-count, kind="stable")
-    renumber = np.full(prototypes.shape[0] + 1, -1, dtype=np.int64)
-    renumber[used[order]] = np.arange(used.size)
-    return LocalFamilies(
-        renumber[family], lag, like, renumber[nearest], count[order], shapes.reshape(-1, shape_mv.shape[1])[order]
-    )
+def _templates(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
+    """QRS stretches of one shape or of several at all lags, shape (..., 2 REACH + 1, CORE_LENGTH), unit length."""
+    begin = SHAPE_BEFORE - CORE_BEFORE
+    shifted = sliding_window_view(shape_mv, CORE_LENGTH, axis=-1)[..., begin - REACH : begin + REACH + 1, :]
+    return _unit(shifted)[0]
 
 
 def likeness_of_shapes(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
     """Best correlation over all lags of every shape with every other, shape (n, n), amplitude left aside."""
-    unit, _ = core(shape_mv)
-    return np.max([unit @ core(shape_mv, -lag)[0].T for lag in LAGS], axis=0)
+    return np.einsum("ij,klj->ikl", core(shape_mv)[0], _templates(shape_mv)).max(axis=2, initial=-1)
 
 
 class FamilyBook:
-    """Families of the whole recording, built from the local families of one batch after the other."""
+    """Families of the recording so far. The row number is the family number."""
 
     def __init__(self) -> None:
         self.shape_mv = np.empty((0, SHAPE_LENGTH), dtype=np.float32)
-        self.count = np.zeros(0, dtype=np.int64)
+        self.limit = np.empty(0, dtype=np.float32)
+        self.n_beats = np.empty(0, dtype=np.int64)
 
-    def enter(self, local: LocalFamilies) -> NDArray[np.int64]:
-        """Match local families with those of the recording; returns the recording-wide number of each, shape (n_local,)."""
-        number = np.full(local.count.size, -1, dtype=np.int64)
-        for row in range(local.count.size):
-            number[row] = self._number(local.shape_mv[row], int(local.count[row]))
-        return number
+    def enter(self, shape_mv: NDArray[np.float32], is_clean: NDArray[np.bool_]) -> Membership:
+        """Assign one batch of beats, shape (n_beats, SHAPE_LENGTH); only clean beats found new families."""
+        unit, size = core(shape_mv)
+        known = self.n_beats.size
+        member = self._match(unit, size)
+        left = np.flatnonzero(member.family < 0)
+        self._grow(unit, size, shape_mv, left[is_clean[left]])
+        if self.n_beats.size > known:
+            again = self._match(unit[left], size[left])
+            for column, now in zip(member, again, strict=True):
+                column[left] = now
+        self._learn(shape_mv, member)
+        return member
 
-    def _number(self, shape: NDArray[np.float32], count: int) -> int:
-        if self.count.size:
-            match, _ = likeness(*core(shape[None]), self.shape_mv)
-            best = int(match[0].argmax())
-            if match[0, best] > SAME_PROTOTYPE:
-                weight = count / (self.count[best] + count)
-                self.shape_mv[best] += np.float32(weight) * (shape - self.shape_mv[best])
-                self.count[best] += count
-                return best
-        self.shape_mv = np.vstack([self.shape_mv, shape[None]])
-        self.count = np.append(self.count, count)
-        return self.count.size - 1
+    def _match(self, unit: NDArray[np.float32], size: NDArray[np.float32]) -> Membership:
+        """Match beats with the known families: all in place, then those that fit none at all lags."""
+        n_beats = unit.shape[0]
+        if self.n_beats.size == 0:
+            return Membership(*np.full((2, n_beats), -1, dtype=np.int64), np.zeros(n_beats, dtype=np.float32))
+        templates = _templates(self.shape_mv)
+        own_size = core(self.shape_mv)[1]
+        match = unit @ templates[:, REACH].T
+        _forbid(match, size, own_size)
+        nearest = match.argmax(axis=1)
+        like = match[np.arange(n_beats), nearest]
+        left = np.flatnonzero(like <= self.limit[nearest])
+        if left.size:
+            shifted = (unit[left] @ templates.reshape(-1, CORE_LENGTH).T).reshape(left.size, -1, 2 * REACH + 1)
+            match = shifted.max(axis=2)
+            _forbid(match, size[left], own_size)
+            nearest[left] = match.argmax(axis=1)
+            like[left] = match[np.arange(left.size), nearest[left]]
+        return Membership(np.where(like > self.limit[nearest], nearest, -1), nearest, like)
+
+    def _grow(
+        self,
+        unit: NDArray[np.float32],
+        size: NDArray[np.float32],
+        shape_mv: NDArray[np.float32],
+        free: NDArray[np.int64],
+    ) -> None:
+        """Found families among free beats, the most common shape first, until no two beats are alike."""
+        most = min(MOST_FAMILIES, self.n_beats.size + MOST_NEW_FAMILIES)
+        while free.size >= 2 and self.n_beats.size < most:
+            seed = _seed(unit, free)
+            if seed < 0:
+                break
+            shape, limit, is_member = _settle(unit, size, shape_mv, free, seed)
+            self.shape_mv = np.vstack([self.shape_mv, shape[None]])
+            self.limit = np.append(self.limit, np.float32(limit))
+            self.n_beats = np.append(self.n_beats, 0)
+            free = free[~is_member & (free != seed)]
+
+    def _learn(self, shape_mv: NDArray[np.float32], member: Membership) -> None:
+        """Move every averaged shape towards the beats it was given."""
+        count = np.bincount(member.family[member.family >= 0], minlength=self.n_beats.size)
+        order = np.argsort(member.family, kind="stable")
+        begin = np.searchsorted(member.family[order], np.arange(count.size))
+        for family in np.flatnonzero(count):
+            mine = order[begin[family] : begin[family] + count[family]]
+            weight = count[family] / (min(self.n_beats[family], MEMORY_BEATS) + count[family])
+            self.shape_mv[family] += np.float32(weight) * (shape_mv[mine].mean(axis=0) - self.shape_mv[family])
+        self.n_beats += count
+
+
+def _forbid(match: NDArray[np.float32], size: NDArray[np.float32], own_size: NDArray[np.float32]) -> None:
+    """Lower the correlation of pairs whose sizes differ too much."""
+    ratio = size[:, None] / own_size
+    match[(ratio > AMPLITUDE_LIMIT) | (ratio < 1 / AMPLITUDE_LIMIT)] -= 1
+
+
+def _seed(unit: NDArray[np.float32], free: NDArray[np.int64]) -> int:
+    """The beat with most look-alikes among an even sample of the free beats; -1 when no two are alike."""
+    sample = free[:: -(-free.size // SEED_SAMPLE)]
+    friends = (unit[sample] @ unit[sample].T > LOOSEST).sum(axis=0)
+    best = int(friends.argmax())
+    return int(sample[best]) if friends[best] >= 2 else -1
+
+
+def _settle(
+    unit: NDArray[np.float32],
+    size: NDArray[np.float32],
+    shape_mv: NDArray[np.float32],
+    free: NDArray[np.int64],
+    seed: int,
+) -> tuple[NDArray[np.float32], float, NDArray[np.bool_]]:
+    """Averaged shape, correlation limit and members of the family that a seed founds."""
+    shape, limit = shape_mv[seed], LOOSEST
+    for _ in range(3):
+        templates = _templates(shape)
+        in_place = unit[free] @ templates[REACH]
+        is_member = (in_place > limit) & (np.abs(np.log(size[free] / size[seed])) < np.log(AMPLITUDE_LIMIT))
+        if not is_member.any():
+            break
+        shape = shape_mv[free[is_member]].mean(axis=0)
+        limit = float(np.clip(1 - SCATTER_ALLOWED * np.median(1 - in_place[is_member]), LOOSEST, TIGHTEST))
+    return shape, limit, is_member

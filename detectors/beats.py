@@ -1,0 +1,126 @@
+"""Beats of a recording: what stays of each once its samples are gone, and the table that analysis returns."""
+
+from __future__ import annotations
+
+from typing import NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+
+from detectors import features, qrs, rhythm
+from detectors.classify import S_EARLY, Labels, Timing
+from detectors.families import FamilyBook, Membership
+from detectors.results import Beats, Families
+
+RARE = 3  # beats of a family that may be an artefact
+
+
+class Found(NamedTuple):
+    """Detected beats with their family and the shape features that survive. Arrays of shape (n_beats,)."""
+
+    segment: NDArray[np.int16]
+    working: NDArray[np.float64]  # position in working samples within the segment
+    energy: NDArray[np.float32]
+    family: NDArray[np.int64]
+    nearest: NDArray[np.int64]
+    likeness: NDArray[np.float32]
+    amplitude_mv: NDArray[np.float32]
+    spread_ms: NDArray[np.float32]
+
+    @property
+    def member(self) -> Membership:
+        """Family of each beat."""
+        return Membership(self.family, self.nearest, self.likeness)
+
+    def keep(self, chosen: NDArray[np.bool_]) -> Found:
+        """The chosen beats only."""
+        return Found(*(column[chosen] for column in self))
+
+
+def join(parts: list[Found]) -> Found:
+    """One table of all batches."""
+    kinds = ("int16", "float64", "float32", "int64", "int64", "float32", "float32", "float32")
+    if not parts:
+        return Found(*(np.empty(0, dtype=kind) for kind in kinds))
+    return Found(*(np.concatenate(column) for column in zip(*parts, strict=True)))
+
+
+def is_artefact(found: Found, timing: Timing) -> NDArray[np.bool_]:
+    """Detections of rare shape that are no QRS, shape (n_beats,)."""
+    in_family = np.bincount(found.family + 1, minlength=1)
+    in_family[0] = 0
+    is_rare = in_family[found.family + 1] <= RARE
+    return qrs.is_interloper(found.energy, timing.before_ms, timing.after_ms, timing.usual_ms, is_rare)
+
+
+def beat_table(
+    found: Found,
+    sample: NDArray[np.int64],
+    timing: Timing,
+    labels: Labels,
+    book: FamilyBook,
+    is_analysable: NDArray[np.bool_],
+    full_pause_tolerance_pct: float,
+) -> Beats:
+    """The table of beats that analysis returns."""
+    is_ectopic = (labels.beat_class == "V") | (labels.beat_class == "S")
+    is_premature = is_ectopic & (timing.before < S_EARLY)
+    coupling = np.where(is_premature, timing.before_ms, np.float32(np.nan)).astype(np.float32)
+    widths = np.append(features.qrs_width_ms(book.shape_mv), np.float32(0))
+    return Beats(
+        segment=found.segment,
+        sample=sample,
+        rr_before_ms=timing.before_ms,
+        rr_after_ms=timing.after_ms,
+        beat_class=labels.beat_class,
+        class_probability=(1 / (1 + np.exp(-np.abs(labels.odds)))).astype(np.float32),
+        family=found.family.astype(np.int16),
+        qrs_width_ms=np.where(found.family >= 0, widths[found.family], found.spread_ms).astype(np.float32),
+        amplitude_mv=found.amplitude_mv,
+        polarity=np.where(found.amplitude_mv < 0, -1, 1).astype(np.int8),
+        coupling_ms=coupling,
+        prematurity_pct=(100 * (1 - timing.before)).astype(np.float32),
+        pause_kind=rhythm.pause_kinds(
+            timing.before_ms,
+            timing.after_ms,
+            timing.usual_ms,
+            _is_alone(is_ectopic, is_premature),
+            full_pause_tolerance_pct,
+        ),
+        r_on_t_index=rhythm.r_on_t_index(coupling, timing.usual_ms),
+        is_escape=(labels.beat_class == "V") & (timing.before > rhythm.ESCAPE_LIMIT),
+        is_analysable=is_analysable,
+    )
+
+
+def _is_alone(is_ectopic: NDArray[np.bool_], is_premature: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Premature beats between two that are not ectopic: only those have a pause of their own."""
+    around = np.concatenate([[False], is_ectopic, [False]])
+    return is_premature & ~around[:-2] & ~around[2:]
+
+
+def family_table(beats: Beats, book: FamilyBook, labels: Labels) -> Families:
+    """The table of families that analysis returns."""
+    n_families = book.n_beats.size
+    order = np.argsort(beats.family, kind="stable")
+    edges = np.searchsorted(beats.family[order], np.arange(n_families + 1))
+    rows = np.full((n_families, 5), np.nan)
+    for row in range(n_families):
+        mine = order[edges[row] : edges[row + 1]]
+        coupling = beats.coupling_ms[mine]
+        coupling = coupling[~np.isnan(coupling)]
+        rows[row, :2] = mine.size, np.count_nonzero(beats.is_analysable[mine])
+        if mine.size:
+            rows[row, 2] = np.median(beats.amplitude_mv[mine])
+        if coupling.size:
+            rows[row, 3:] = coupling.mean(), np.subtract(*np.percentile(coupling, [90, 10]))
+    return Families(
+        family_class=labels.family_class,
+        beat_count=rows[:, 0].astype(np.int64),
+        share_pct=100 * rows[:, 1] / max(np.count_nonzero(beats.is_analysable), 1),
+        qrs_width_ms=features.qrs_width_ms(book.shape_mv),
+        amplitude_mv=rows[:, 2].astype(np.float32),
+        mean_coupling_ms=rows[:, 3].astype(np.float32),
+        coupling_spread_ms=rows[:, 4].astype(np.float32),
+        shape_mv=book.shape_mv,
+    )
