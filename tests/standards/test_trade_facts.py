@@ -71,7 +71,6 @@ def test_reset_pause():
     assert np.allclose(analysis.beats.rr_before_ms[s] + analysis.beats.rr_after_ms[s], 1700, atol=8)
 
 
-@pytest.mark.xfail(reason="a beat 12 % early is called S without its coupling interval and pause")
 def test_reset_pause_of_a_slightly_early_beat():
     """A beat that comes after 0.88 s and resets the sinus node gives 0.88 s + 1.0 s = 1.88 s."""
     beats, analysis, found = analysed((SINUS * 20 + [("S", 0.88), ("N", 1.0)]) * 10)
@@ -203,7 +202,6 @@ def test_couplets():
     assert episodes(analysis, "run") == []
 
 
-@pytest.mark.xfail(reason="the first beat of a couplet is called interpolated")
 def test_a_couplet_is_not_interpolated():
     """Only a single ectopic beat between two normal beats can be interpolated."""
     beats, analysis, found = analysed((SINUS * 20 + [("V", 0.5), ("V", 0.45), ("N", 1.2)]) * 10)
@@ -222,7 +220,6 @@ def test_runs_have_their_rate(interval_s, rate_bpm):
     assert np.allclose([rate for _, _, rate in found], rate_bpm, rtol=0.03)
 
 
-@pytest.mark.xfail(reason="a sustained ventricular run is taken for a supraventricular one")
 def test_sustained_run():
     """A run of wide beats that lasts 40 s is one ventricular run of at least 30 s."""
     run = [("V", 0.5), *[("V", 0.4)] * 100, ("N", 1.2)]

@@ -1,0 +1,33 @@
+"""Write the accuracy figures that the methods page shows: EC57 on labelled records with which the detector was developed.
+
+Run from the checkout after the detector has changed:
+python -m tests.benchmarks.development_figures ../shared/reference-ecg
+"""
+
+from __future__ import annotations
+
+import json
+import sys
+from pathlib import Path
+
+from flows.score import score_folder
+
+TARGET = Path(__file__).parents[2] / "dashboards" / "development_figures.json"
+KEPT = ("options", "gross", "average", "gross_without_af", "v_burden_error", "runs", "noise", "reliability")
+
+
+def main(reference: Path) -> None:
+    """Score the arrhythmia records, clean and with recorded noise on two of them, and keep the summary."""
+    report = score_folder(
+        reference / "mitdb", noise_folder=reference / "nstdb", noise_records=("118", "119"), say=print
+    ).as_dict()
+    figures = {
+        "data": "22 records of the MIT-BIH Arrhythmia Database (Moody and Mark 2001), first signal",
+        "record_count": len(report["records"]),
+        **{name: report[name] for name in KEPT},
+    }
+    TARGET.write_text(json.dumps(figures, indent=1) + "\n", encoding="utf-8")
+
+
+if __name__ == "__main__":
+    main(Path(sys.argv[1]))
