@@ -1,4 +1,4 @@
-"""Write the accuracy figures that the methods page shows: EC57 on labelled records with which the detector was developed.
+"""Write the accuracy figures that the methods page shows: EC57 on the records with which the detector was developed.
 
 Run from the checkout after the detector has changed:
 python -m tests.benchmarks.development_figures ../shared/reference-ecg
