@@ -34,6 +34,8 @@ MODELS: dict[str, tuple[str, ...]] = {
 READ_IN_PLACE = ("beats", "quality_windows", "strips")
 """Published tables that are too large to copy: views over the parts, in the build and in the publication."""
 
+_NOT_FOR_MODELS = ("signal", "pieces")
+
 REGISTER: dict[str, dict[str, str]] = {
     "patients": {"patient_code": "VARCHAR", "zone": "VARCHAR"},
     "wears": {
@@ -142,7 +144,7 @@ class TrendBuild:
     def _load_lake(self) -> None:
         for name, table in schema.LAKE.items():
             paths = [str(self.lake / part.path) for part in self.parts if part.table == name]
-            if name == "signal":
+            if name in _NOT_FOR_MODELS:
                 continue
             if not paths:
                 self.connection.execute(f"CREATE TABLE lake.{name} ({column_definitions(table)})")
@@ -207,7 +209,7 @@ def typed_query(table: schema.Table, query: str) -> str:
 def parts_query(table: schema.Table, paths: Iterable[str]) -> str:
     """Query over an explicit list of part files; one recording's rows open only that recording's files."""
     files = ", ".join(f"'{path.replace(chr(39), chr(39) * 2)}'" for path in paths)
-    pruned = "true" if table.key[0] == "recording_id" else "false"
+    pruned = "true" if table.key[:1] == ("recording_id",) else "false"
     source = f"read_parquet([{files}], hive_partitioning = {pruned}, hive_types_autocast = false)"
     columns = ", ".join(f"{name}::{schema.COLUMNS[name].type} AS {name}" for name in table.columns)
     return f"SELECT {columns} FROM {source}"

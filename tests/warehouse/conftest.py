@@ -98,7 +98,7 @@ class Lake:
 
     @contextmanager
     def built(
-        self, fingerprint: str = "f1", changes: list[dict[str, Any]] | None = None, **settings: Any
+        self, fingerprint: str = "f1", work: str = "work", changes: list[dict[str, Any]] | None = None, **settings: Any
     ) -> Iterator[TrendBuild]:
         """A finished build over everything that was landed; `changes` stands for the statistics."""
         build = TrendBuild(
@@ -107,7 +107,7 @@ class Lake:
             register=self.register(),
             settings=SETTINGS | settings,
             fingerprint=fingerprint,
-            workdir=self.folder / "work",
+            workdir=self.folder / work,
         )
         with build:
             build.run_models("staging")

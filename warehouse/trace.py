@@ -1,0 +1,56 @@
+"""What stands behind the numbers of one wear day: recordings, deliveries, parts, fingerprint and reviews."""
+
+from __future__ import annotations
+
+from datetime import UTC, date, datetime, time, timedelta
+from zoneinfo import ZoneInfo
+
+import polars as pl
+
+from warehouse.published import Published, PublishedError
+
+
+def trace(published: Published, patient_code: str, local_day: date) -> dict[str, pl.DataFrame]:
+    """Rows behind a wear day, by published table, in the order in which the numbers came about.
+
+    Raises PublishedError when the patient is unknown or has no wear on that day; the message names days that are there.
+    """
+    day = _wear_day(published, patient_code, local_day)
+    recordings = _recordings(published, patient_code, local_day)
+    names = recordings["recording_id"].implode()
+    of_them = {
+        name: published.table(name).filter(pl.col("recording_id").is_in(names))
+        for name in ("deliveries", "segments", "findings", "reviews")
+    }
+    parts = published.table("parts").filter(pl.col("part_key").is_in(names))
+    fingerprints = published.table("fingerprints").filter(
+        pl.col("fingerprint").is_in(recordings["fingerprint"].implode())
+    )
+    return {"wear_days": day, "recordings": recordings, **of_them, "parts": parts, "fingerprints": fingerprints}
+
+
+def _wear_day(published: Published, patient_code: str, local_day: date) -> pl.DataFrame:
+    days = published.table("wear_days", {"patient_code": patient_code})
+    if days.is_empty():
+        known = published.table("wear_days")["patient_code"].unique().sort().to_list()
+        raise PublishedError(
+            f"patient {patient_code} has no wear day; patients with wear: {', '.join(known) or 'none'}"
+        )
+    found = days.filter(pl.col("local_day") == local_day)
+    if found.is_empty():
+        first, *_, last = [*days["local_day"], days["local_day"][-1]]
+        raise PublishedError(
+            f"patient {patient_code} has no wear on {local_day}; there are days from {first} to {last}"
+        )
+    return found
+
+
+def _recordings(published: Published, patient_code: str, local_day: date) -> pl.DataFrame:
+    zone = ZoneInfo(published.table("patients", {"patient_code": patient_code})["zone"][0])
+    first_utc, next_utc = (_midnight_utc(day, zone) for day in (local_day, local_day + timedelta(days=1)))
+    overlaps = (pl.col("start_utc") < next_utc) & (pl.col("end_utc") > first_utc)
+    return published.table("recordings", {"patient_code": patient_code}).filter(overlaps)
+
+
+def _midnight_utc(day: date, zone: ZoneInfo) -> datetime:
+    return datetime.combine(day, time(), zone).astimezone(UTC).replace(tzinfo=None)
