@@ -88,7 +88,7 @@ def _part(
     return DeliveredPart(
         delivery_id=delivery_id,
         possible_starts_ns=tuple(to_ns(start) for start in matched.possible_starts) if matched else (),
-        follows_zone=head["file_zone"] is None and matched is not None and not matched.start_from_register,
+        wall_clock_ns=to_ns(head["start_local"]) if head["start_local"] and head["file_zone"] is None else None,
         resolution_ms=head["start_resolution_ms"],
         rate=Fraction(head["rate_numerator"], head["rate_denominator"]),
         pieces=tuple(Piece(offset, size) for _, offset, size in sizes.iter_rows()),

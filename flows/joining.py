@@ -26,6 +26,7 @@ SEAM_PPM = 200
 _SECOND_NS = 1_000_000_000
 _EPOCH = datetime(1970, 1, 1)  # noqa: DTZ001  naive UTC, as stored
 _NEEDLE = 500
+_LEAST_HELD, _LEAST_HELD_S = 25, 0.2  # fewer equal samples are chance
 _COMPARED = 2**20
 _LEAST_DRIFT_ELAPSED_NS = 3600 * _SECOND_NS
 
@@ -53,7 +54,7 @@ class DeliveredPart:
 
     delivery_id: str
     possible_starts_ns: tuple[int, ...]  # two where the wall clock's hour happened twice or never
-    follows_zone: bool  # the start was a wall clock read in the zone of the wear, not an instant of the file
+    wall_clock_ns: int | None  # the start as the device showed it; None where the file says an instant
     resolution_ms: int
     rate: Fraction
     pieces: tuple[Piece, ...]
@@ -188,14 +189,11 @@ def _keeping(parts: Sequence[DeliveredPart], following: dict[str, int], zone: st
     if not following:
         return None
     first_offset = offset_at(from_ns(min(following.values())), zone)
-    starts_ns = {}
-    for part in parts:
-        start_ns = part.possible_starts_ns[0]
-        if part.follows_zone:
-            # Of two candidates the earlier one is the wall clock read with the offset before the change.
-            change = offset_at(from_ns(start_ns), zone) - first_offset
-            start_ns += change // timedelta(microseconds=1) * 1000
-        starts_ns[part.delivery_id] = start_ns
+    offset_ns = first_offset // timedelta(microseconds=1) * 1000
+    starts_ns = {
+        part.delivery_id: part.possible_starts_ns[0] if part.wall_clock_ns is None else part.wall_clock_ns - offset_ns
+        for part in parts
+    }
     return None if starts_ns == following else starts_ns
 
 
@@ -279,14 +277,12 @@ def _segments(
             current = _Growing(start_ns, part.rate)
             segments.append(current)
             current.add(part, piece, start_ns, 0)
-        elif gap_ns >= -current.tolerance_ns:
-            current.add(part, piece, start_ns, 0)
         else:
-            _add_overlapping(current, part, piece, start_ns, order, findings)
+            _follow_on(current, part, piece, start_ns, order, findings)
     return segments
 
 
-def _add_overlapping(
+def _follow_on(
     segment: _Growing,
     part: DeliveredPart,
     piece: int,
@@ -294,9 +290,17 @@ def _add_overlapping(
     order: dict[str, int],
     findings: dict[str, list[Finding]],
 ) -> None:
-    """Add what a piece has beyond the segment's end when the common samples are equal; else refuse the later part."""
+    """Add what a piece has beyond the segment's end.
+
+    Samples that both hold are taken once. Where the stamps say overlap and the samples differ, the later part is
+    refused; within the seam tolerance the stamps alone say nothing.
+    """
     back = round((segment.end_ns - start_ns) * part.rate / _SECOND_NS)  # samples by which the piece begins early
-    held = _equal_overlap(segment, part, piece, back)
+    is_stamped = segment.end_ns - start_ns > segment.tolerance_ns
+    held = _equal_overlap(segment, part, piece, back, may_be_flat=is_stamped)
+    if held is None and not is_stamped:
+        segment.add(part, piece, start_ns, 0)
+        return
     if held is None:
         other = segment.part_at(max(segment.n_samples - back, 0))
         later = max(part, other, key=lambda each: order[each.delivery_id])
@@ -313,7 +317,7 @@ def _add_overlapping(
         segment.add(part, piece, start_ns, held)
 
 
-def _equal_overlap(segment: _Growing, part: DeliveredPart, piece: int, back: int) -> int | None:
+def _equal_overlap(segment: _Growing, part: DeliveredPart, piece: int, back: int, *, may_be_flat: bool) -> int | None:
     """How many first samples of a piece the segment holds already, or None when they differ.
 
     The stamps may be off by the seam time, so the place is searched around the stamped one, nearest first.
@@ -324,13 +328,14 @@ def _equal_overlap(segment: _Growing, part: DeliveredPart, piece: int, back: int
     high = min(segment.n_samples - back + slack, segment.n_samples - 1)
     needle = part.read(piece, 0, min(_NEEDLE, n_piece, segment.n_samples - low))
     around = segment.read(low, min(high + needle.size, segment.n_samples))
+    least = min(max(_LEAST_HELD, round(part.rate * _LEAST_HELD_S)), n_piece)
     places = range(low, high + 1)
     for place in sorted(places, key=lambda at: abs(at - (segment.n_samples - back))):
         common = around[place - low : place - low + needle.size]
-        if common.size and np.array_equal(common, needle[: common.size]):
-            held = min(segment.n_samples - place, n_piece)
-            if _same(segment, place, part, piece, held):
-                return held
+        held = min(segment.n_samples - place, n_piece)
+        is_equal = held >= least and np.array_equal(common, needle[: common.size])
+        if is_equal and (may_be_flat or np.ptp(common) > 0) and _same(segment, place, part, piece, held):
+            return held
     return None
 
 
