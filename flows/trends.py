@@ -140,7 +140,7 @@ def _compare(
     event = days["event"].to_numpy().astype(np.int64)
     period = 2 * event + days["side"].to_numpy()
     level, expected = standardised_days(hours, event)
-    dispersion = over_dispersion(hours, expected, period[row], 2 * n_events)
+    dispersion = over_dispersion(hours, expected, period, 2 * n_events)
     compared = statistics.compare(
         Periods(period, level.counts, level.exposure, dispersion[period]),
         n_events,
