@@ -3,11 +3,15 @@
 from __future__ import annotations
 
 import json
+from pathlib import Path
 from typing import Any
 
 import polars as pl
 
 from dashboards.tables import Tables
+
+# Written by `python -m tests.benchmarks.development_figures`; holds for one detector version.
+DEVELOPMENT_FIGURES = Path(__file__).parent / "development_figures.json"
 
 
 def context(tables: Tables) -> dict[str, Any]:
@@ -16,6 +20,7 @@ def context(tables: Tables) -> dict[str, Any]:
     return {
         "fingerprints": [row | {"settings": _settings(row["settings_json"])} for row in fingerprints.rows(named=True)],
         "recordings": tables.whole("recordings").height,
+        "accuracy": json.loads(DEVELOPMENT_FIGURES.read_text(encoding="utf-8")),
     }
 
 
@@ -31,4 +36,7 @@ def dictionary_context(tables: Tables) -> dict[str, Any]:
     """Return what the dictionary page shows: the published tables in their order, with their columns."""
     rows = tables.whole("data_dictionary")
     names = rows["table_name"].unique(maintain_order=True)
-    return {"queries": tables.queries, "tables": [(name, rows.filter(pl.col("table_name") == name).rows(named=True)) for name in names]}
+    return {
+        "queries": tables.queries,
+        "tables": [(name, rows.filter(pl.col("table_name") == name).rows(named=True)) for name in names],
+    }

@@ -18,7 +18,7 @@ from typing import Any
 import jinja2
 import polars as pl
 
-from dashboards import addresses, methods, overview, patient, recording, words
+from dashboards import addresses, methods, overview, patient, recording, review, words
 from dashboards.tables import PublishedTables, Tables
 from warehouse.cautions import CAUTIONS
 
@@ -68,12 +68,17 @@ def _write_patient(press: Press, tables: Tables, code: str) -> None:
 
 
 def _write_recording(press: Press, tables: Tables, row: dict[str, Any]) -> None:
+    """Write a recording's page and its over-read sheet."""
     recording_id = row["recording_id"]
     inputs = [tables.of_recording(name, recording_id) for name in Tables.BY_RECORDING]
     inputs += [tables.large(name, recording_id) for name in ("strips", "episodes", "quality_windows")]
     press.page(
         addresses.recording_page(recording_id), "recording.html.j2", [pl.DataFrame([row]), *inputs],
         lambda: recording.context(tables, row), lambda: recording.data_files(tables, recording_id),
+    )  # fmt: skip
+    press.page(
+        addresses.review_page(recording_id), "review.html.j2", [pl.DataFrame([row]), *inputs],
+        lambda: review.context(tables, row),
     )  # fmt: skip
 
 
@@ -170,7 +175,7 @@ def _manifest(previous: Path | None) -> dict[str, Any]:
 
 def _source_bytes() -> bytes:
     """Return the bytes of everything in this room: a change of a template or of the code renders every page again."""
-    sources = sorted(path for path in ROOM.rglob("*") if path.suffix in {".py", ".j2", ".css", ".js"})
+    sources = sorted(path for path in ROOM.rglob("*") if path.suffix in {".py", ".j2", ".css", ".js", ".json"})
     return b"".join(path.read_bytes() for path in sources)
 
 

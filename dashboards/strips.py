@@ -21,10 +21,11 @@ LOWEST, HIGHEST = -3 * UNITS_PER_MV, 4 * UNITS_PER_MV
 
 
 class Mark(NamedTuple):
-    """A beat's class letter at its place."""
+    """A beat's class letter at its place; `sample` counts from the strip's first."""
 
     x: int
     beat_class: str
+    sample: int
 
 
 class Drawing(NamedTuple):
@@ -107,4 +108,4 @@ def _drawing(path: str, low: int, high: int, width: int, marks: tuple[Mark, ...]
 
 def _marks(row: dict[str, Any]) -> tuple[Mark, ...]:
     pairs = zip(row["beat_samples"] or (), row["beat_classes"] or (), strict=True)
-    return tuple(Mark(round(sample / row["fs_hz"] * UNITS_PER_S), beat_class) for sample, beat_class in pairs)
+    return tuple(Mark(round(sample / row["fs_hz"] * UNITS_PER_S), beat_class, sample) for sample, beat_class in pairs)

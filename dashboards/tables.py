@@ -38,7 +38,7 @@ class Tables:
     """The published tables as pages read them."""
 
     BY_PATIENT = ("recordings", "wear_days", "local_hours", "therapies", "periods", "changes", "attention")
-    BY_RECORDING = ("segments", "families", "hours", "findings", "reviews")
+    BY_RECORDING = ("segments", "families", "hours", "findings", "review_sheet", "reviews")
 
     def __init__(self, published: PublishedTables) -> None:
         self._published = published

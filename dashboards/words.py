@@ -33,6 +33,8 @@ MEASURES = {
     "v_burden_pct": ("Ventricular burden", "%", 2),
     "s_burden_pct": ("Supraventricular burden", "%", 2),
     "v_per_h": ("Ventricular beats per analysable hour", "/h", 1),
+    "couplets_per_24h": ("Couplets per 24 h", "/24 h", 1),
+    "runs_per_24h": ("Runs per 24 h", "/24 h", 1),
     "mean_rate_bpm": ("Mean heart rate", "/min", 0),
 }
 

@@ -40,7 +40,6 @@ class InventedPublication:
             frame = frame.filter(pl.col(column) == value)
         return frame
 
-
     def queries(self) -> list[WorkedQuery]:
         return [WorkedQuery("burden", "What is the burden?", "SELECT v_burden_pct\nFROM wear_days")]
 
@@ -149,6 +148,12 @@ def _add_recording(rows: Any, rng: random.Random, code: str, recording_id: str, 
              "beat_count": round(total * share / 100), "share_pct": share, "qrs_width_ms": 84.0 + 60 * (kind == "V"),
              "amplitude_mv": up, "mean_coupling_ms": 470.0 if kind == "V" else None,
              "coupling_spread_ms": 38.0 if kind == "V" else None, "shape_mv": beat_shape(width, up)}
+        )  # fmt: skip
+    for rank, (family, share, settled) in enumerate(((1, 88.8, 88.8), (2, 11.2, 100.0), (0, 0.0, 100.0)), start=1):
+        found = rows["families"][family - 3]
+        rows["review_sheet"].append(
+            {"recording_id": recording_id, "review_rank": rank, "family": family, "family_class": found["family_class"],
+             "beat_count": found["beat_count"], "v_share_pct": share, "settled_pct": settled}
         )  # fmt: skip
     for order, kind in enumerate(("V", "V", "S", "N")):
         rows["strips"].append(strip_row(recording_id, order, kind, start + timedelta(hours=3)))

@@ -1,0 +1,180 @@
+// The over-read sheet: take decisions with buttons or keys, keep them in this browser, save and load them as a file.
+"use strict";
+
+(function overRead() {
+  const KIND = "burdenline-decisions", VERSION = 1;
+  const CLASSES = ["N", "S", "V", "F", "Q"], KEYS = { a: "accept", n: "N", s: "S", v: "V", f: "F", q: "Q", x: "noise" };
+  const sheet = document.getElementById("sheet");
+  const { recording, fingerprint } = sheet.dataset;
+  const shelf = `burdenline-review:${recording}:${fingerprint}`;
+  const items = [...sheet.querySelectorAll(".item")];
+  const episodes = [...sheet.querySelectorAll(".episode")];
+  const marks = [...sheet.querySelectorAll(".mark[data-sample]")];
+  const [reader, note] = ["reader", "note"].map((id) => document.getElementById(id));
+  const say = (text) => { document.getElementById("review-note").textContent = text; };
+
+  const empty = () => ({ reader_code: "", note: "", families: {}, beats: {}, episodes: {} });
+  let state = empty();
+  const familyOf = (item) => state.families[item.dataset.family] || {};
+  const beatName = (mark) => `${mark.dataset.segment}:${mark.dataset.sample}`;
+  const episodeName = (row) => `${row.dataset.kind}:${row.dataset.segment}:${row.dataset.first}`;
+
+  function keep() {
+    try { localStorage.setItem(shelf, JSON.stringify(state)); }
+    catch { say("This browser keeps nothing between visits: save the decisions as a file before you leave."); }
+    show();
+  }
+
+  function show() {
+    for (const item of items) {
+      const { decision, same_as, is_mixed } = familyOf(item);
+      item.classList.toggle("decided", Boolean(decision));
+      press(item, decision);
+      item.querySelector("[data-same-as]").value = same_as ?? "";
+      item.querySelector("[data-mixed]").checked = Boolean(is_mixed);
+    }
+    for (const row of episodes) press(row, state.episodes[episodeName(row)]);
+    for (const mark of marks) {
+      const decision = state.beats[beatName(mark)];
+      mark.textContent = decision === "noise" ? "✕" : decision || mark.dataset.automatic;
+      mark.classList.toggle("changed", Boolean(decision));
+    }
+    reader.value = state.reader_code;
+    note.value = state.note;
+    const decided = items.filter((item) => familyOf(item).decision);
+    const settled = decided.reduce((sum, item) => sum + Number(item.dataset.share), 0);
+    const single = Object.keys(state.beats).length;
+    document.getElementById("progress").textContent = decided.length || single
+      ? `${settled.toFixed(1)} % of the ventricular beats settled, ${decided.length} of ${items.length} families decided, ${single} single beats relabelled`
+      : "Nothing decided yet";
+  }
+
+  function press(place, decision) {
+    for (const button of place.querySelectorAll(".choices [data-decision]")) button.setAttribute("aria-pressed", String(button.dataset.decision === decision));
+  }
+
+  function decideFamily(item, change) {
+    state.families[item.dataset.family] = { ...familyOf(item), ...change };
+    keep();
+  }
+
+  function decideBeat(mark, decision) {
+    if (decision === "accept" || decision === mark.dataset.automatic) delete state.beats[beatName(mark)];
+    else state.beats[beatName(mark)] = decision;
+    keep();
+  }
+
+  function goTo(item) {
+    if (!item) return;
+    item.focus({ preventScroll: true });
+    item.scrollIntoView({ block: "start" });
+  }
+
+  sheet.addEventListener("click", (click) => {
+    const button = click.target.closest("[data-decision]");
+    if (!button) return;
+    const row = button.closest(".episode");
+    if (row) { state.episodes[episodeName(row)] = button.dataset.decision; keep(); }
+    else decideFamily(button.closest(".item"), { decision: button.dataset.decision });
+  });
+  sheet.addEventListener("change", (change) => {
+    const item = change.target.closest(".item");
+    if (change.target.matches("[data-same-as]")) decideFamily(item, { same_as: change.target.value === "" ? null : Number(change.target.value) });
+    if (change.target.matches("[data-mixed]")) decideFamily(item, { is_mixed: change.target.checked });
+  });
+  reader.addEventListener("input", () => { state.reader_code = reader.value; keep(); });
+  note.addEventListener("input", () => { state.note = note.value; keep(); });
+
+  document.addEventListener("keydown", (event) => {
+    if (event.ctrlKey || event.metaKey || event.altKey || event.target.matches("input, select, textarea")) return;
+    const decision = KEYS[event.key];
+    if (event.target.matches(".mark[data-sample]")) {
+      if (decision) { event.preventDefault(); decideBeat(event.target, decision); }
+      if (event.key === "u") decideBeat(event.target, "accept");
+      return;
+    }
+    const here = items.indexOf(event.target.closest(".item"));
+    if (event.key === "j") goTo(items[Math.min(here + 1, items.length - 1)]);
+    if (event.key === "k") goTo(items[Math.max(here - 1, 0)]);
+    if (here < 0) return;
+    const item = items[here];
+    if (event.key === "u") { delete state.families[item.dataset.family]; keep(); }
+    if (decision) {
+      decideFamily(item, { decision: decision === item.dataset.automatic ? "accept" : decision });
+      goTo(items[here + 1]);
+    }
+  });
+
+  // The file: lists with everything that applying them needs, described by decisions.schema.json.
+  function file() {
+    const numbered = (name) => name.split(":").map((part) => (/^-?\d+$/.test(part) ? Number(part) : part));
+    const families = items.filter((item) => state.families[item.dataset.family]).map((item) => ({
+      family: Number(item.dataset.family), automatic: item.dataset.automatic, beat_count: Number(item.dataset.beats),
+      decision: familyOf(item).decision ?? null, same_as: familyOf(item).same_as ?? null, is_mixed: Boolean(familyOf(item).is_mixed),
+    }));
+    const automatic = Object.fromEntries(marks.map((mark) => [beatName(mark), mark.dataset.automatic]));
+    const beats = Object.entries(state.beats).map(([name, decision]) => {
+      const [segment, sample] = numbered(name);
+      return { segment, sample, automatic: automatic[name], decision };
+    });
+    const marked = Object.entries(state.episodes).map(([name, decision]) => {
+      const [episode_kind, segment, first_sample] = numbered(name);
+      return { episode_kind, segment, first_sample, decision };
+    });
+    return { kind: KIND, version: VERSION, recording_id: recording, fingerprint, reader_code: state.reader_code.trim(), reviewed_utc: new Date().toISOString(), note: state.note, families, beats, episodes: marked };
+  }
+
+  document.getElementById("save").addEventListener("click", () => {
+    if (!state.reader_code.trim()) { say("Enter your reader code before saving: a decision belongs to a reader."); reader.focus(); return; }
+    const content = file();
+    const link = document.createElement("a");
+    link.href = URL.createObjectURL(new Blob([JSON.stringify(content, null, 1) + "\n"], { type: "application/json" }));
+    const safe = (text) => text.replace(/[^A-Za-z0-9_-]+/g, "-").slice(0, 60);
+    link.download = `decisions-${safe(recording)}-${safe(content.reader_code)}.json`;
+    link.click();
+    URL.revokeObjectURL(link.href);
+    say(`Saved ${link.download}. Put it into the programme's inbox; the next run applies it.`);
+  });
+
+  // What keeps a file from being loaded; nothing is applied in part.
+  function objection(content) {
+    if (!content || content.kind !== KIND) return "this is not a file of over-read decisions";
+    if (content.version !== VERSION) return `the file has version ${content.version}, this page reads version ${VERSION}`;
+    if (content.recording_id !== recording) return `the decisions belong to recording ${content.recording_id}`;
+    if (content.fingerprint !== fingerprint) return "the decisions were taken on another analysis of this recording";
+    const lists = ["families", "beats", "episodes"].every((name) => Array.isArray(content[name]));
+    const known = [...CLASSES, "accept", "noise", null];
+    if (!lists || typeof content.reader_code !== "string" || typeof content.note !== "string") return "the file is not complete";
+    if (content.families.some((each) => !items.some((item) => Number(item.dataset.family) === each.family && item.dataset.automatic === each.automatic))) return "it names families that this sheet does not have";
+    if (content.families.some((each) => !known.includes(each.decision)) || content.beats.some((each) => !known.includes(each.decision))) return "it holds decisions that do not exist";
+    return "";
+  }
+
+  document.getElementById("load").addEventListener("change", async (change) => {
+    const [chosen] = change.target.files;
+    change.target.value = "";
+    if (!chosen) return;
+    let content = null;
+    try { content = JSON.parse(await chosen.text()); } catch { /* said below */ }
+    const problem = objection(content);
+    if (problem) { say(`Not loaded: ${problem}. Nothing was changed.`); return; }
+    state = {
+      reader_code: content.reader_code, note: content.note,
+      families: Object.fromEntries(content.families.map(({ family, decision, same_as, is_mixed }) => [family, { decision: decision ?? undefined, same_as, is_mixed }])),
+      beats: Object.fromEntries(content.beats.map((each) => [`${each.segment}:${each.sample}`, each.decision])),
+      episodes: Object.fromEntries(content.episodes.map((each) => [`${each.episode_kind}:${each.segment}:${each.first_sample}`, each.decision])),
+    };
+    keep();
+    say("Loaded.");
+  });
+
+  document.getElementById("clear").addEventListener("click", () => { state = empty(); keep(); say("All decisions on this sheet were cleared."); });
+
+  try {
+    const kept = JSON.parse(localStorage.getItem(shelf));
+    if (kept) state = { ...empty(), ...kept };
+    const others = Object.keys(localStorage).filter((name) => name.startsWith(`burdenline-review:${recording}:`) && name !== shelf);
+    if (others.length) say("This browser also holds decisions on an earlier analysis of this recording. They are not shown here.");
+  } catch { /* nothing kept, or unreadable: begin with an empty sheet */ }
+  show();
+})();

@@ -1,0 +1,61 @@
+"""The over-read sheet of a recording: families in the order in which a decision moves the burden, strips beside them.
+
+The page keeps the reader's decisions and saves them as a file (assets/decisions.schema.json describes it); nothing is
+decided here, and no number is made that `review_sheet` does not hold.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import polars as pl
+
+from dashboards import addresses
+from dashboards.patient import draw_families, draw_rows
+from dashboards.tables import Tables
+
+FAMILIES_SHOWN = 40
+STRIPS_OF_A_FAMILY = 2
+EPISODES_SHOWN = 30
+READ_EPISODES = ("run", "sv_run", "pause")
+GOAL_PCT = 95
+
+
+def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
+    """Return everything that the over-read sheet of one recording (a row of `recordings`) shows."""
+    recording_id = recording["recording_id"]
+    sheet = tables.of_recording("review_sheet", recording_id).sort("review_rank")
+    shapes = {row["family"]: row for row in draw_families(tables.of_recording("families", recording_id))}
+    drawn = draw_rows(tables.large("strips", recording_id), recording["zone"])
+    items = [row | {"shape": shapes[row["family"]]} for row in sheet.head(FAMILIES_SHOWN).rows(named=True)]
+    return {
+        "recording": recording,
+        "recording_page": addresses.recording_page(recording_id),
+        "items": _with_strips(items, drawn),
+        "families_count": sheet.height,
+        "goal": _goal(sheet),
+        "episodes": _episodes(tables.large("episodes", recording_id)),
+    }
+
+
+def _with_strips(items: list[dict[str, Any]], drawn: list[dict[str, Any]]) -> list[dict[str, Any]]:
+    """Give each family the strips that show it; a strip stands beside the first family that takes it."""
+    free = drawn
+    for item in items:
+        showing = [strip for strip in free if item["family"] in (strip["beat_families"] or ())]
+        # Strips chosen for a beat of the family's class tell more than those in which it only happens to occur.
+        showing.sort(key=lambda strip: strip["beat_class"] != item["family_class"])
+        item["strips"] = showing[:STRIPS_OF_A_FAMILY]
+        free = [strip for strip in free if not any(strip is taken for taken in item["strips"])]
+    return items
+
+
+def _goal(sheet: pl.DataFrame) -> dict[str, Any] | None:
+    """Return the row of the sheet with which the goal is reached."""
+    reached = sheet.filter(pl.col("settled_pct") >= GOAL_PCT)
+    return reached.row(0, named=True) if reached.height else None
+
+
+def _episodes(episodes: pl.DataFrame) -> list[dict[str, Any]]:
+    of_kind = episodes.filter(pl.col("episode_kind").is_in(READ_EPISODES))
+    return of_kind.sort("duration_s", "start_utc", descending=[True, False]).head(EPISODES_SHOWN).rows(named=True)
