@@ -26,8 +26,10 @@ INTERVAL_TAIL = 0.025  # of each side
 OWN_DAYS_ENOUGH = 10  # degrees of freedom from which a patient's own days settle the spread
 FELL, ROSE, WITHIN, TOO_LITTLE = "fell_beyond_chance", "rose_beyond_chance", "within_chance", "too_little_wear"
 VERDICTS = (FELL, ROSE, WITHIN, TOO_LITTLE)
-GAMMA_NODES = np.arange(-9.0, 6.1, 0.3)  # SDs of a log-gamma variable around its mean
+NODE_STEP = 0.25
+GAMMA_NODES = np.arange(-7.0, 5.1, NODE_STEP)  # SDs of a log-gamma variable around its mean
 LEAST_SHAPE = 0.05  # fewer beats than this count as this many
+LOG_TOLERANCE = 1e-7
 WIDEST_LOG = 34.0  # ln ratio beyond which nothing is searched
 
 
@@ -127,9 +129,10 @@ def _at_most(chance: _Chance, shape: Floats, log_ratio: Floats) -> Floats:
     mass = np.exp(-shape[:, None] * (np.expm1(from_peak) - from_peak))
     mass /= mass.sum(axis=1, keepdims=True)
     centre = chance.centre + log_ratio[:, None]
+    sd = np.sqrt(chance.sd**2 + (NODE_STEP * spread[:, None]) ** 2 / 12)  # a node stands for its cell
     total = np.zeros(len(shape))
     for j in range(len(GAMMA_NODES)):
-        total += mass[:, j] * (chance.weight * ndtr((node[:, j, None] - centre) / chance.sd)).sum(axis=1)
+        total += mass[:, j] * (chance.weight * ndtr((node[:, j, None] - centre) / sd)).sum(axis=1)
     return total
 
 
@@ -170,7 +173,7 @@ def _interval(chance: _Chance, observed: Floats) -> tuple[Floats, Floats]:
 
 
 def _root(f: Callable[..., Floats], low: Floats, high: Floats, *arguments: NDArray[Any]) -> Floats:
-    found = elementwise.find_root(f, (low, high), args=arguments, tolerances={"xatol": 1e-9, "xrtol": 1e-9})
+    found = elementwise.find_root(f, (low, high), args=arguments, tolerances={"xatol": LOG_TOLERANCE, "xrtol": 0})
     return np.asarray(found.x)
 
 

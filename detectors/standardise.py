@@ -58,19 +58,19 @@ def standardised_days(cells: HourCells, profile_of_day: Ints) -> tuple[DayLevels
     return DayLevels(day_count, exposure), expected
 
 
-def over_dispersion(cells: HourCells, expected: Floats, group_of_cell: Ints, n_groups: int) -> Floats:
+def over_dispersion(cells: HourCells, expected: Floats, group_of_day: Ints, n_groups: int) -> Floats:
     """Variance of the hourly counts over their mean (Pearson), per group, shape (n_groups,), at least 1.
 
     Degrees of freedom: cells less one per day; groups with few cells are drawn towards 1.
     """
-    used = expected > 0
-    deviation = np.zeros(len(expected))
-    deviation[used] = (cells.counts[used] - expected[used]) ** 2 / expected[used]
-    group, day = group_of_cell[used], cells.day[used]
-    days = np.unique(np.stack([group, day]), axis=1)[0]
-    freedom = np.bincount(group, minlength=n_groups) - np.bincount(days, minlength=n_groups)
-    pearson = _sums(group, deviation[used], n_groups)
-    return np.maximum(1.0, (pearson + PRIOR_CELLS) / (np.maximum(freedom, 0) + PRIOR_CELLS))
+    possible = expected > 0
+    day = cells.day[possible]
+    deviation = (cells.counts[possible] - expected[possible]) ** 2 / expected[possible]
+    pearson = _sums(group_of_day[day], deviation, n_groups)
+    seen_days = np.unique(day)
+    freedom = np.bincount(group_of_day[day], minlength=n_groups)
+    freedom -= np.bincount(group_of_day[seen_days], minlength=n_groups)
+    return np.maximum(1.0, (pearson + PRIOR_CELLS) / (freedom + PRIOR_CELLS))
 
 
 def _profile(slot_count: Floats, slot_expected: Floats, slot: Ints, cells: HourCells) -> Floats:

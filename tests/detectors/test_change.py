@@ -1,0 +1,183 @@
+"""Ratio, interval, chance limits and verdict of two periods, on simulated days."""
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+from scipy import stats
+
+from detectors import change, spread
+from detectors.spread import Periods
+
+COUNTING_ONLY = 1e-6  # SD between days so small that beats are Poisson
+
+
+def periods(counts, *, exposure=1.0, dispersion=1.0) -> Periods:
+    """Periods from a list of (baseline days, after days) per event."""
+    flat = [(2 * event + side, c) for event, pair in enumerate(counts) for side in (0, 1) for c in pair[side]]
+    period, beats = (np.array(column) for column in zip(*flat, strict=True))
+    size = len(flat)
+    return Periods(period, beats.astype(float), np.full(size, exposure), np.full(size, dispersion))
+
+
+def compare(days: Periods, *, excess=0.0, typical_sd=0.6, success_limit_pct=80.0, min_days=1) -> change.Comparison:
+    n_events = int(days.period.max()) // 2 + 1
+    return change.compare(
+        days, n_events, excess=np.full(n_events, excess), typical_sd=typical_sd,
+        success_limit_pct=success_limit_pct, min_days=min_days,
+    )  # fmt: skip
+
+
+def simulated(rng, *, patients, days, ratio, sd, beats) -> Periods:
+    period = np.repeat(np.arange(2 * patients), np.tile(days, patients))
+    level = beats * np.where(period % 2, ratio, 1.0) * np.exp(sd * rng.standard_normal(len(period)))
+    ones = np.ones(len(period))
+    return Periods(period, rng.poisson(level).astype(float), ones, ones)
+
+
+def test_counting_alone_gives_the_exact_comparison_of_two_rates():
+    """Without variation between days the interval is that of two Poisson rates, observed number counted by half."""
+    days = Periods(np.array([0, 1]), np.array([30.0, 60.0]), np.array([54308.7, 51477.5]), np.ones(2))
+    found = compare(days, typical_sd=COUNTING_ONLY)
+    # Source: Gu et al. 2008 data as in the tests of statsmodels; exact interval there 1.339736 to 3.388366
+    assert found.ratio[0] == pytest.approx(2.109998, rel=1e-4)
+    assert 1.339736 < found.ratio_low[0] < 1.40
+    assert 3.25 < found.ratio_high[0] < 3.388366
+    assert found.verdict[0] == "rose_beyond_chance"
+
+
+def test_no_beats_after_have_the_exact_bound():
+    """With none after and many before, the upper end is the exact one-sided 95 % bound of 3.0 beats."""
+    days = Periods(np.array([0, 1]), np.array([1e6, 0.0]), np.array([1e4, 1.0]), np.ones(2))
+    found = compare(days, typical_sd=COUNTING_ONLY)
+    assert (found.ratio[0], found.ratio_low[0]) == (0, 0)
+    # Source: exact Poisson bound, -ln(0.05) = 2.996 beats where 100 are expected
+    assert found.ratio_high[0] == pytest.approx(-np.log(0.05) / 100, rel=0.01)
+
+
+def test_few_beats_before_and_none_after_prove_nothing():
+    """Two beats before and none after in equal time are within chance, and the limit says that nothing would do."""
+    found = compare(periods([([2], [0])]), typical_sd=COUNTING_ONLY)
+    assert found.verdict[0] == "within_chance"
+    assert found.chance_fall_limit_pct[0] == 100
+
+
+def test_many_own_days_give_the_interval_of_student():
+    """With plenty of beats and days the interval is Student's on the logarithms of the days."""
+    rng = np.random.default_rng(11)
+    before, after = np.exp(rng.normal(12, 0.5, 40)), np.exp(rng.normal(11.5, 0.5, 50))
+    found = compare(periods([(before, after)]))
+    # Source: scipy.stats.ttest_ind, equal variances
+    expected = np.exp(stats.ttest_ind(np.log(after), np.log(before)).confidence_interval(0.95))
+    assert [found.ratio_low[0], found.ratio_high[0]] == pytest.approx(list(expected), rel=0.02)
+    pooled = np.sqrt((39 * np.log(before).var(ddof=1) + 49 * np.log(after).var(ddof=1)) / 88)
+    one_sided = 100 * (1 - np.exp(-stats.t.ppf(0.95, 88) * pooled * np.sqrt(1 / 40 + 1 / 50)))
+    assert found.chance_fall_limit_pct[0] == pytest.approx(one_sided, rel=0.03)
+    assert found.variance_source[0] == "patient"
+
+
+def test_a_patient_with_one_day_borrows_the_spread_of_the_programme():
+    """One day each side is judged by the spread that the other patients show, and says so."""
+    rng = np.random.default_rng(3)
+    others = [(np.exp(rng.normal(10, 0.3, 8)), np.exp(rng.normal(10, 0.3, 8))) for _ in range(60)]
+    found = compare(periods([*others, ([20000], [9000])]))
+    assert found.variance_source[-1] == "programme"
+    assert found.day_sd[-1] == pytest.approx(0.3, rel=0.15)
+    # Source: normal theory on logarithms, one-sided 95 %, SD 0.3 between days (variability.chance_fall_pct)
+    assert found.chance_fall_limit_pct[-1] == pytest.approx(50.2, abs=4)
+
+
+def test_alone_in_the_programme_one_day_has_about_the_published_limit():
+    """Where nothing is known of a programme, one day against one day needs a fall near the published 83 %."""
+    found = compare(periods([([20000], [9000])]))
+    # Source: Morganroth et al., Circulation 1978;58:408 (83 % for 24 h against 24 h)
+    assert found.chance_fall_limit_pct[0] == pytest.approx(83, abs=4)
+
+
+def test_time_between_periods_adds_its_variance():
+    """An excess of 2 between-day variances has the limit of normal theory."""
+    rng = np.random.default_rng(5)
+    counts = [(np.exp(rng.normal(12, 0.4, 60)), np.exp(rng.normal(12, 0.4, 60))) for _ in range(30)]
+    found = compare(periods(counts), excess=2.0)
+    expected = 100 * (1 - np.exp(-1.645 * 0.4 * np.sqrt(2 + 2 / 60)))
+    assert np.median(found.chance_fall_limit_pct) == pytest.approx(expected, rel=0.02)
+
+
+def test_too_few_days_are_too_little_wear_with_their_numbers():
+    """A side below the minimum of days has no verdict, a side without days no ratio either."""
+    found = compare(periods([([100], [50, 60]), ([100, 90], [])]), min_days=2)
+    assert found.verdict.tolist() == ["too_little_wear", "too_little_wear"]
+    assert found.ratio[0] == pytest.approx(0.55, abs=0.02)
+    assert np.isnan([found.ratio[1], found.ratio_high[1], found.success_probability_pct[1]]).all()
+
+
+def test_none_before_can_still_rise_beyond_chance():
+    """None before and hundreds after are a rise without a ratio."""
+    found = compare(periods([([0, 0, 0], [300, 400, 500]), ([0, 0], [0, 0])]))
+    assert found.verdict.tolist() == ["rose_beyond_chance", "within_chance"]
+    assert np.isnan(found.ratio).all()
+
+
+def test_over_dispersed_counts_widen_the_interval():
+    """Beats that come in salvos tell less: a dispersion of 16 widens a counting interval fourfold."""
+    plain, salvos = (compare(periods([([1600], [1600])], dispersion=d), typical_sd=COUNTING_ONLY) for d in (1.0, 16.0))
+    widths = [np.log(found.ratio_high[0] / found.ratio_low[0]) for found in (plain, salvos)]
+    assert widths[1] / widths[0] == pytest.approx(4, rel=0.02)
+
+
+levels_of_days = st.lists(st.integers(0, 5000), min_size=1, max_size=9)
+
+
+@settings(max_examples=40, deadline=None)
+@given(levels_of_days, levels_of_days, st.floats(0, 20), st.floats(0.01, 100))
+def test_verdict_interval_and_limits_never_contradict(before, after, excess, unit):
+    """Verdict and limits agree, the interval holds the ratio, a clear interval has a verdict, units do not matter."""
+    found = compare(periods([(before, after)]), excess=excess)
+    other = compare(periods([(before, after)], exposure=unit), excess=excess)
+    assert other.verdict[0] == found.verdict[0]
+    if sum(before) == 0:
+        return
+    ratio, low, high = found.ratio[0], found.ratio_low[0], found.ratio_high[0]
+    assert (found.verdict[0] == change.FELL) == (100 * (1 - ratio) > found.chance_fall_limit_pct[0])
+    assert (found.verdict[0] == change.ROSE) == (100 * (ratio - 1) > found.chance_rise_limit_pct[0])
+    assert low <= ratio <= high or sum(after) < 6
+    assert found.verdict[0] == change.FELL or high >= 1
+    assert found.verdict[0] == change.ROSE or low <= 1
+    assert other.ratio_high[0] == pytest.approx(high, rel=1e-4)
+
+
+@pytest.mark.parametrize("sd", [0.3, 1.0])
+@pytest.mark.parametrize("beats", [4, 2000])
+def test_simulated_programmes_keep_the_promise(sd, beats):
+    """Over a programme the interval covers about 95 % and at most 5 % are false falls, within sampling error."""
+    rng = np.random.default_rng(8)
+    steady = compare(simulated(rng, patients=400, days=(4, 6), ratio=1.0, sd=sd, beats=beats))
+    halved = compare(simulated(rng, patients=400, days=(4, 6), ratio=0.5, sd=sd, beats=beats))
+    assert np.mean(steady.verdict == change.FELL) < 0.05 + 3 * np.sqrt(0.05 * 0.95 / 400)
+    covered = np.mean((halved.ratio_low <= 0.5) & (halved.ratio_high >= 0.5))
+    assert covered > 0.95 - 3 * np.sqrt(0.05 * 0.95 / 400)
+
+
+def test_success_probability_is_calibrated():
+    """Among patients whose true ratios vary, the stated probability of success agrees with how often it is true."""
+    rng = np.random.default_rng(21)
+    true_ratio = np.exp(rng.uniform(np.log(0.02), np.log(2.0), 1500))
+    days = simulated(rng, patients=1500, days=(5, 5), ratio=np.repeat(true_ratio, 10), sd=0.5, beats=500)
+    stated = compare(days).success_probability_pct / 100
+    uncertain = (stated > 0.05) & (stated < 0.95)
+    assert np.mean(stated[uncertain]) == pytest.approx(np.mean(true_ratio[uncertain] < 0.2), abs=0.08)
+
+
+def test_spread_of_days_is_found_in_dense_and_sparse_counts():
+    """A programme's SD between days is recovered from thousands of beats a day and from two a day."""
+    rng = np.random.default_rng(2)
+    for beats in (2000, 2):
+        days = simulated(rng, patients=300, days=(7, 7), ratio=1.0, sd=0.7, beats=beats)
+        assert np.median(compare(days).day_sd) == pytest.approx(0.7, rel=0.1)
+
+
+def test_levels_of_a_sparse_period_are_those_of_its_total():
+    """A period of few beats is judged by its total over its exposure."""
+    level = spread.levels(periods([([1, 0, 2], [0, 1])]), 2, np.array([0.01]))
+    assert level.is_sparse.all()
+    assert np.exp(level.log_level[0, 0]) == pytest.approx(1.0, rel=0.05)
