@@ -1,8 +1,9 @@
 """An invented programme: a network of clinics on an invented coast, its patients, patches and therapies.
 
 Nobody in it exists. The signals come from `detectors.synthetic` and are written as EDF+ files, so that everything
-after the inbox is the real job. The patches of the story sample 20 minutes in every 3 hours to save power; that keeps
-the demo short and makes each file an EDF+D with one segment per window.
+after the inbox is the real job. To save power, the patches of the story store 20 minutes in every 3 hours, an hour
+later each day, so that three days cover the clock. That keeps the demo short and makes each file an EDF+D of many
+segments.
 """
 
 from __future__ import annotations
@@ -16,14 +17,16 @@ from typing import NamedTuple
 import numpy as np
 
 from detectors import synthetic
-from detectors.synthetic import Noise, Rhythm
+from detectors.synthetic import Hour, Noise, Rhythm
 from flows.edf_write import EdfHeader, Piece, write_edf
 from flows.programme import make_folder
 
+SEED = 2026
 NAME = "Saltmarsh Coast Clinics (invented)"
 ZONE = "Europe/Lisbon"
 MIN_ANALYSABLE_H_PER_DAY = 1.5  # a full day of the story's patches holds 2.7 hours
-WINDOW_S, EVERY_S = 1200, 3 * 3600
+WINDOW_S = 1200
+WINDOWS_PER_DAY = 8
 
 _FIRST_DAY = datetime(2026, 2, 2)  # noqa: DTZ001  days of the story are local days
 _WORN = Noise(lead_off_per_h=0.15)
@@ -56,15 +59,17 @@ class Patient(NamedTuple):
     fs_hz: int = 125
 
 
-def _patients() -> tuple[Patient, ...]:
-    one_focus = Rhythm(v_share_pct=14.0, rate_bpm=76)
-    fluctuating = Rhythm(v_share_pct=8.0, v_day_sd=0.55, v_family_weights=(0.0, 1.0), rate_bpm=70)
-    outflow = Rhythm(v_share_pct=22.0, v_family_weights=(0.95, 0.0, 0.05), rate_bpm=68)
+def story() -> tuple[Patient, ...]:
+    """The invented patients, in the order of the register."""
+    calm = Rhythm(run_share=0.0)
+    one_focus = calm._replace(v_share_pct=14.0, rate_bpm=76)
+    fluctuating = calm._replace(v_share_pct=8.0, v_day_sd=0.55, v_family_weights=(0.0, 1.0), rate_bpm=70)
+    outflow = calm._replace(v_share_pct=22.0, v_family_weights=(0.95, 0.0, 0.05), rate_bpm=68)
     recurring = Rhythm(v_share_pct=18.0, v_family_weights=(0.0, 0.9, 0.1), couplet_share=0.12, run_share=0.03)
-    short_wear = Rhythm(v_share_pct=11.0, v_family_weights=(0.5, 0.5), rate_bpm=80)
-    slowed = Rhythm(v_share_pct=9.0, v_family_weights=(0.0, 0.0, 1.0), rate_bpm=86, v_day_sd=0.15)
-    stopped = Rhythm(v_share_pct=2.0, rate_bpm=62, v_day_sd=0.15)
-    atrial = Rhythm(v_share_pct=0.4, s_share_pct=4.0, rate_bpm=74)
+    short_wear = calm._replace(v_share_pct=11.0, v_family_weights=(0.5, 0.5), rate_bpm=80)
+    slowed = calm._replace(v_share_pct=9.0, v_family_weights=(0.0, 0.0, 1.0), rate_bpm=86, v_day_sd=0.15)
+    stopped = calm._replace(v_share_pct=2.0, rate_bpm=62, v_day_sd=0.15)
+    atrial = calm._replace(v_share_pct=0.4, s_share_pct=4.0, rate_bpm=74)
     medication, ablation = "medication_start", "ablation"
     return (
         Patient("HB-101", "beta-blocker responder", (
@@ -98,7 +103,7 @@ def _patients() -> tuple[Patient, ...]:
     )  # fmt: skip
 
 
-def make_programme(folder: Path, *, seed: int = 2026, say: Callable[[str], None] | None = None) -> None:
+def make_programme(folder: Path, *, seed: int = SEED, say: Callable[[str], None] | None = None) -> None:
     """Make a programme folder with settings, register and an inbox of EDF+ files, two of which must be refused.
 
     The same seed gives the same bytes and file times. Raises FileExistsError when `folder` is a programme already.
@@ -108,13 +113,13 @@ def make_programme(folder: Path, *, seed: int = 2026, say: Callable[[str], None]
     default = "min_analysable_h_per_day = 10.0"
     text = settings.read_text(encoding="utf-8")
     settings.write_text(text.replace(default, f"min_analysable_h_per_day = {MIN_ANALYSABLE_H_PER_DAY}"), "utf-8")
-    patients = _patients()
+    patients = story()
     _write_register(folder / "register", patients)
     for number, patient in enumerate(patients):
         if say:
             say(f"{patient.code}: {patient.shows}")
         for wear in patient.wears:
-            _write_wear(folder / "inbox", patient, wear, seed + 1000 * number + wear.day)
+            _write_wear(folder / "inbox", patient, wear, seed_of(number, wear, seed))
     _write_refused(folder / "inbox")
 
 
@@ -162,12 +167,22 @@ def _write_wear(inbox: Path, patient: Patient, wear: Wear, seed: int) -> None:
 
 
 def _windows(wear: Wear, fs_hz: int, seed: int) -> Iterator[Piece]:
-    for elapsed_s in range(0, wear.days * 86_400, EVERY_S):
-        clock_h = 10 + elapsed_s / 3600
-        pieces = synthetic.recording(
-            wear.rhythm, _WORN, fs_hz=fs_hz, hours=WINDOW_S / 3600, start_clock_h=clock_h, seed=seed
-        )
-        yield Piece(elapsed_s * 1000, np.concatenate([piece.counts for piece in pieces]))
+    return (Piece(elapsed_h * 3_600_000, hour.counts) for elapsed_h, hour in true_windows(wear, fs_hz, seed))
+
+
+def true_windows(wear: Wear, fs_hz: int, seed: int) -> Iterator[tuple[int, Hour]]:
+    """Hours since the start of the wear, samples and true beats of each stored window."""
+    for day in range(wear.days):
+        for elapsed_h in range(24 * day + day % 3, 24 * (day + 1), 24 // WINDOWS_PER_DAY):
+            (window,) = synthetic.recording(
+                wear.rhythm, _WORN, fs_hz=fs_hz, hours=WINDOW_S / 3600, start_clock_h=10 + elapsed_h, seed=seed
+            )
+            yield elapsed_h, window
+
+
+def seed_of(patient_number: int, wear: Wear, seed: int = SEED) -> int:
+    """Seed of one wear of the patient who stands at that place of the story."""
+    return seed + 1000 * patient_number + wear.day
 
 
 def _set_time(path: Path, arrived: datetime) -> None:

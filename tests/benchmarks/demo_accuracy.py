@@ -21,15 +21,13 @@ FIGURES = ("qrs_se", "qrs_ppv", "veb_se", "veb_ppv", "sveb_se", "sveb_ppv")
 def main() -> None:
     """Print one line per wear: EC57 figures in analysable time, true and found ventricular share, false runs."""
     print("wear      analysed", *(f"{name:>8}" for name in FIGURES), "  V% true   found  runs true  false  couplet +P")
-    for number, patient in enumerate(demo._patients()):
+    for number, patient in enumerate(demo.story()):
         for wear in patient.wears:
-            print(f"{patient.code} {wear.day:02d}", _line(patient, wear, 2026 + 1000 * number + wear.day))
+            print(f"{patient.code} {wear.day:02d}", _line(patient, wear, demo.seed_of(number, wear)))
 
 
 def _line(patient: demo.Patient, wear: demo.Wear, seed: int) -> str:
-    windows = [
-        _window(wear, patient.fs_hz, seed, elapsed_s) for elapsed_s in range(0, wear.days * 86_400, demo.EVERY_S)
-    ]
+    windows = [window for _, window in demo.true_windows(wear, patient.fs_hz, seed)]
     length = len(windows[0].counts)
     analysis = analyse_recording(
         [Segment(length, lambda a, b, w=window: w.counts[a:b]) for window in windows],
@@ -57,13 +55,6 @@ def _line(patient: demo.Patient, wear: demo.Wear, seed: int) -> str:
         + f" {runs.by_reference_run[3:].sum():9d}{runs.by_test_run[:3, 3:].sum():7d}"
         + f"   {run_statistics(runs)['couplet_ppv'].pct:8.0f}"
     )
-
-
-def _window(wear: demo.Wear, fs_hz: int, seed: int, elapsed_s: int) -> synthetic.Hour:
-    pieces = synthetic.recording(
-        wear.rhythm, demo._WORN, fs_hz=fs_hz, hours=demo.WINDOW_S / 3600, start_clock_h=10 + elapsed_s / 3600, seed=seed
-    )
-    return next(pieces)
 
 
 if __name__ == "__main__":

@@ -19,8 +19,8 @@ def shortened(patients):
 
 @pytest.fixture
 def programme(tmp_path, monkeypatch):
-    few = shortened(demo._patients())
-    monkeypatch.setattr(demo, "_patients", lambda: few)
+    few = shortened(demo.story())
+    monkeypatch.setattr(demo, "story", lambda: few)
     demo.make_programme(tmp_path / "coast")
     return tmp_path / "coast"
 
@@ -35,7 +35,7 @@ def test_settings_fit_the_story(programme):
     found = settings.load(programme / "programme.toml")
     assert found.programme.zone == demo.ZONE
     assert found.wear.min_analysable_h_per_day == demo.MIN_ANALYSABLE_H_PER_DAY
-    assert 24 * demo.WINDOW_S / demo.EVERY_S > demo.MIN_ANALYSABLE_H_PER_DAY
+    assert demo.WINDOWS_PER_DAY * demo.WINDOW_S / 3600 > demo.MIN_ANALYSABLE_H_PER_DAY
 
 
 def test_every_good_file_belongs_to_a_wear(programme):
@@ -68,6 +68,14 @@ def test_a_wear_has_one_window_every_three_hours(programme):
     assert len(onsets_s) == 8 * 120
 
 
+def test_three_days_cover_the_clock():
+    """The windows of three days fall into each of the 24 clock hours once."""
+    wear = demo.story()[0].wears[0]
+    hours = [elapsed_h for elapsed_h, _ in demo.true_windows(wear._replace(days=3), 25, seed=1)]
+    assert hours == sorted(hours)
+    assert sorted((10 + hour) % 24 for hour in hours) == list(range(24))
+
+
 def test_the_same_seed_gives_the_same_programme(programme, tmp_path):
     """Two programmes of one seed agree in every byte and file time."""
     demo.make_programme(tmp_path / "again")
@@ -92,7 +100,7 @@ def test_a_programme_is_never_overwritten(programme):
 
 def test_the_story_has_every_kind_of_patient():
     """The story has 6 to 8 patients with responders, a non-responder, a recurrence and a short wear."""
-    patients = demo._patients()
+    patients = demo.story()
     kinds = {therapy.kind for patient in patients for therapy in patient.therapies}
     assert 6 <= len(patients) <= 8
     assert len({patient.code for patient in patients}) == len(patients)
@@ -105,7 +113,7 @@ def test_the_story_has_every_kind_of_patient():
 
 def test_therapies_lie_between_wears():
     """A therapy event falls after the first wear has ended and before the second begins."""
-    for patient in demo._patients():
+    for patient in demo.story():
         first, *later = patient.wears
         for therapy in patient.therapies:
             assert first.day + first.days < therapy.day < min(wear.day for wear in later)
