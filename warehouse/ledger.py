@@ -9,7 +9,6 @@ Rows that are history are dropped when the table is written anew every COMPACT_F
 
 from __future__ import annotations
 
-import hashlib
 import json
 import time
 from collections.abc import Collection, Mapping, Sequence
@@ -21,13 +20,12 @@ from deltalake import CommitProperties, DeltaTable, write_deltalake
 from deltalake.exceptions import DeltaError
 
 from warehouse import schema
-from warehouse.parts import Part, write_whole
+from warehouse.parts import Part, file_sha256, write_whole
 
 LAYOUT = 1
 """Number of the lake's layout; raised when an older program could no longer read what a newer one wrote."""
 
 COMPACT_FILES = 40
-_READ_BYTES = 2**22
 
 _ROW_SCHEMA: dict[str, pl.DataType] = {
     "commit": pl.Int64(),
@@ -177,17 +175,9 @@ def verify(lake: Path) -> list[Damage]:
         path = lake / part.path
         if not path.is_file():
             damages.append(Damage(part.path, "missing"))
-        elif _sha256(path) != part.sha256:
+        elif file_sha256(path) != part.sha256:
             damages.append(Damage(part.path, "bytes changed after it landed"))
     return damages
-
-
-def _sha256(path: Path) -> str:
-    digest = hashlib.sha256()
-    with path.open("rb") as file:
-        while piece := file.read(_READ_BYTES):
-            digest.update(piece)
-    return digest.hexdigest()
 
 
 def tidy(lake: Path, grace_s: float, *, keep: Collection[str] = ()) -> list[str]:

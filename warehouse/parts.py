@@ -24,7 +24,7 @@ from numpy.typing import NDArray
 from warehouse import schema
 
 BLOCK_SAMPLES = 2**22
-"""Samples of a full signal block: 8 MB decoded, 4.7 h at 250 Hz. Fixed, because block numbers are stored."""
+"""Most samples of a signal block: 8 MB decoded, 4.7 h at 250 Hz."""
 
 _ROW_GROUP_ROWS = 100_000
 _KEY_PATTERN = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,120}")
@@ -195,6 +195,12 @@ def write_whole(path: Path, content: bytes | memoryview) -> None:
     except BaseException:
         Path(temporary).unlink(missing_ok=True)
         raise
+
+
+def file_sha256(path: Path) -> str:
+    """SHA-256 of a file's bytes, read piece by piece."""
+    with path.open("rb") as file:
+        return hashlib.file_digest(file, "sha256").hexdigest()
 
 
 def read_part(lake: Path, part: Part, *, check_hash: bool = False) -> pl.DataFrame:

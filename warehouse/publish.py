@@ -24,7 +24,7 @@ from typing import Any
 from warehouse import schema
 from warehouse.build import READ_IN_PLACE, TrendBuild, column_definitions, parts_query
 from warehouse.database import open_database
-from warehouse.parts import write_whole
+from warehouse.parts import file_sha256, write_whole
 from warehouse.published import DATABASE, MANIFEST, Published
 
 DATABASE_FOR_OLDER_READERS = "burdenline_duckdb1.duckdb"
@@ -56,7 +56,7 @@ def publish(
     staging = editions / ".staging"
     shutil.rmtree(staging, ignore_errors=True)
     (staging / "tables").mkdir(parents=True)
-    manifest = _manifest(build, published, stamp, _write_tables(build, staging / "tables"))
+    manifest = _manifest(build, published, stamp, write_tables(build, staging / "tables"))
     content = json.dumps(manifest, indent=1, sort_keys=True).encode()
     edition = editions / hashlib.sha256(content).hexdigest()[:16]
     before = _standing(published)
@@ -88,14 +88,15 @@ def _lake_from(published: Path, lake: Path) -> str:
     return Path(os.path.relpath(lake, published)).as_posix()
 
 
-def _write_tables(build: TrendBuild, folder: Path) -> dict[str, dict[str, Any]]:
+def write_tables(build: TrendBuild, folder: Path) -> dict[str, dict[str, Any]]:
+    """Write the tables of a build that are copied as Parquet files; returns rows and SHA-256 of each."""
     described = {}
     for name in schema.PUBLISHED:
         if name not in READ_IN_PLACE:
             frame = build.frame(name)
             path = folder / f"{name}.parquet"
             frame.rechunk().write_parquet(path, compression="zstd", row_group_size=_ROW_GROUP_ROWS)
-            described[name] = {"rows": frame.height, "sha256": hashlib.sha256(path.read_bytes()).hexdigest()}
+            described[name] = {"rows": frame.height, "sha256": file_sha256(path)}
     return described
 
 
