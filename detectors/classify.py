@@ -13,7 +13,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import families, rhythm
+from detectors import families, fusion, rhythm
 from detectors.features import spread_ms
 
 EARLY = 0.87  # of the usual interval
@@ -26,7 +26,9 @@ LATE = 0.3  # log of RR before over RR after: a beat after a pause
 LATE_WIDTH = 0.2  # log of the width over normal: a narrow late beat is a normal one
 
 TERMS = ("constant", "distance", "width", "early", "off_time", "single_wide")
-WEIGHTS = np.array([-3.8, 2.5, 1.7, 3.2, 2.4, 1.5])
+WEIGHTS = np.array([-4.1, 2.7, 1.1, 3.6, 2.1, 1.0])
+
+LOOSE_WEIGHTS = (-2.2, 0.5, 1.9)  # constant, log odds of the nearest family, early
 
 
 class Timing(NamedTuple):
@@ -87,13 +89,17 @@ def classify(
     habits = family_habits(timing, member, n_families)
     shapes = compare_shapes(habits, family_shape_mv)
     family_odds = judge_families(family_terms(habits, shapes), habits, shapes, weights)
+    family_class = np.where(family_odds > 0, "V", "N")
+    family_class[_fusions(family_odds, habits, shapes, family_shape_mv)] = "F"
     odds = family_odds[member.family]
     loose = np.flatnonzero(member.family < 0)
-    odds[loose] = _loose_odds(timing, member, loose, habits, shapes, family_odds, weights)
+    odds[loose] = _loose_odds(timing, member, loose, habits.early[shapes.normal[0]], family_odds)
     is_v = odds > 0
-    is_s = supraventricular(timing, is_v)
-    beat_class = np.where(is_v, "V", np.where(is_s, "S", "N")).astype("<U1")
-    return Labels(beat_class, odds, np.where(family_odds > 0, "V", "N").astype("<U1"))
+    is_f = (member.family >= 0) & (family_class[member.family] == "F")
+    is_v &= ~is_f
+    is_s = supraventricular(timing, is_v | is_f)
+    beat_class = np.select([is_f, is_v, is_s], ["F", "V", "S"], "N")
+    return Labels(beat_class, odds, family_class)
 
 
 def family_habits(timing: Timing, member: families.Membership, n_families: int) -> Habits:
@@ -145,7 +151,7 @@ def _joins(
     same = like > 0.96 and wider < 1.15
     similar = like > 0.9 and wider < 1.2 and early < 0.5 and habits.asymmetry[row] > -0.25 and habits.n_beats[row] >= 5
     narrow = wider_than_main < 1.3 and early < 0.15 and keeps_time > 0.7 and share >= 0.005 and habits.n_beats[row] >= 8
-    block = early < 0.1 and keeps_time > 0.8 and share >= 0.02 and habits.stretch[row] > 8
+    block = early < 0.1 and keeps_time > 0.8 and share >= 0.02 and habits.stretch[row] > 15 and wider_than_main < 1.75
     return bool(same or similar or narrow or block)
 
 
@@ -200,29 +206,35 @@ def judge_families(
     return odds
 
 
+def _fusions(
+    odds: NDArray[np.float64], habits: Habits, shapes: Shapes, family_shape_mv: NDArray[np.float32]
+) -> NDArray[np.int64]:
+    """Families on time, like neither parent, whose shape is a sum of the main normal and a ventricular one."""
+    main = shapes.normal[0]
+    parents = np.flatnonzero((odds > 1) & (habits.early > 0.25) & (habits.n_beats >= 3))
+    if parents.size == 0:
+        return parents
+    like_parents = np.maximum(shapes.alike[:, parents].max(axis=1), shapes.alike[:, main])
+    candidate = (odds > -2) & (habits.early < 0.15) & (habits.n_beats >= 2) & (like_parents < fusion.OWN_SHAPE)
+    found = [
+        row
+        for row in np.flatnonzero(candidate)
+        if fusion.is_fusion(family_shape_mv[row], family_shape_mv[main], family_shape_mv[parents])
+    ]
+    return np.array(found, dtype=np.int64)
+
+
 def _loose_odds(
     timing: Timing,
     member: families.Membership,
     loose: NDArray[np.int64],
-    habits: Habits,
-    shapes: Shapes,
+    main_early: float,
     family_odds: NDArray[np.float64],
-    weights: NDArray[np.float64],
 ) -> NDArray[np.float64]:
-    """Beats of no family: as the nearest family when that is ventricular and similar, else judged alone."""
-    near, like = member.nearest[loose], member.likeness[loose]
-    before, after = np.nan_to_num(timing.before[loose], nan=1), np.nan_to_num(timing.after[loose], nan=1)
-    on_time = (np.abs(before - 1) < ON_TIME) & (np.abs(after - 1) < ON_TIME)
-    terms = _terms(
-        distance=np.clip(1 - like, 0.01, 1) / (0.055 + habits.scatter[near]),
-        width=np.zeros(loose.size),
-        early=(before < EARLY).astype(np.float64),
-        on_time=on_time.astype(np.float64),
-        is_single=np.ones(loose.size, dtype=bool),
-        main_early=habits.early[shapes.normal[0]],
-        main_on_time=habits.on_time[shapes.normal[0]],
-    )
-    return np.where((like > 0.8) & (family_odds[near] > 0), family_odds[near], terms @ weights)
+    """Log odds of beats of no family: those of the nearest family, held, and whether the beat itself is early."""
+    early = (timing.before[loose] < EARLY) - main_early
+    nearest = np.clip(family_odds[member.nearest[loose]], -4, 4)
+    return LOOSE_WEIGHTS[0] + LOOSE_WEIGHTS[1] * nearest + LOOSE_WEIGHTS[2] * np.clip(early, 0, 1)
 
 
 def supraventricular(timing: Timing, is_v: NDArray[np.bool_]) -> NDArray[np.bool_]:

@@ -18,9 +18,11 @@ from detectors.chunks import SHAPE_BEFORE, SHAPE_LENGTH
 CORE_BEFORE = 15  # working samples, 120 ms
 CORE_LENGTH = 35  # working samples, 280 ms
 REACH = 4  # working samples, 32 ms: how far the R peaks of two beats of one shape may lie apart
-LOOSEST = 0.90  # correlation that a family asks of its beats when they scatter much
-TIGHTEST = 0.97  # and when they scatter little
-SCATTER_ALLOWED = 4.0  # times the median distance of a family's own beats
+LOOSEST = 0.90  # least correlation that a family asks of its beats
+LOOSEST_WHEN_CLEAN = 0.94  # the same in a recording whose main family scatters little
+MAIN_SCATTER_ALLOWED = 10.0  # times the median distance in the main family
+TIGHTEST = 0.96  # correlation that a family asks whose beats scatter little
+SCATTER_ALLOWED = 5.0  # times the median distance of a family's own beats
 AMPLITUDE_LIMIT = 2.0  # sizes within this factor
 MOST_FAMILIES = 64
 MOST_NEW_FAMILIES = 32  # in one batch
@@ -67,6 +69,7 @@ class FamilyBook:
         self.shape_mv = np.empty((0, SHAPE_LENGTH), dtype=np.float32)
         self.limit = np.empty(0, dtype=np.float32)
         self.n_beats = np.empty(0, dtype=np.int64)
+        self.loosest = LOOSEST
 
     def enter(self, shape_mv: NDArray[np.float32], is_clean: NDArray[np.bool_]) -> Membership:
         """Assign one batch of beats, shape (n_beats, SHAPE_LENGTH); only clean beats found new families."""
@@ -115,7 +118,10 @@ class FamilyBook:
             seed = _seed(unit, free)
             if seed < 0:
                 break
-            shape, limit, is_member = _settle(unit, size, shape_mv, free, seed)
+            shape, scatter, is_member = _settle(unit, size, shape_mv, free, seed)
+            if self.n_beats.size == 0:
+                self.loosest = float(np.clip(1 - MAIN_SCATTER_ALLOWED * scatter, LOOSEST, LOOSEST_WHEN_CLEAN))
+            limit = max(_limit(scatter), self.loosest)
             self.shape_mv = np.vstack([self.shape_mv, shape[None]])
             self.limit = np.append(self.limit, np.float32(limit))
             self.n_beats = np.append(self.n_beats, 0)
@@ -154,14 +160,23 @@ def _settle(
     free: NDArray[np.int64],
     seed: int,
 ) -> tuple[NDArray[np.float32], float, NDArray[np.bool_]]:
-    """Averaged shape, correlation limit and members of the family that a seed founds."""
-    shape, limit = shape_mv[seed], LOOSEST
+    """Averaged shape, scatter and members of the family that a seed founds."""
+    shape, scatter = shape_mv[seed], _first_scatter(unit[free] @ unit[seed])
     for _ in range(3):
         templates = _templates(shape)
         in_place = unit[free] @ templates[REACH]
-        is_member = (in_place > limit) & (np.abs(np.log(size[free] / size[seed])) < np.log(AMPLITUDE_LIMIT))
+        is_member = (in_place > _limit(scatter)) & (np.abs(np.log(size[free] / size[seed])) < np.log(AMPLITUDE_LIMIT))
         if not is_member.any():
             break
         shape = shape_mv[free[is_member]].mean(axis=0)
-        limit = float(np.clip(1 - SCATTER_ALLOWED * np.median(1 - in_place[is_member]), LOOSEST, TIGHTEST))
-    return shape, limit, is_member
+        scatter = float(np.median(1 - in_place[is_member]))
+    return shape, scatter, is_member
+
+
+def _first_scatter(match: NDArray[np.float32]) -> float:
+    """Scatter around a seed, from the nearer ones of its look-alikes: another shape among them must not widen it."""
+    return float(np.percentile(1 - match[match > LOOSEST], 25))
+
+
+def _limit(scatter: float) -> float:
+    return float(np.clip(1 - SCATTER_ALLOWED * scatter, LOOSEST, TIGHTEST))
