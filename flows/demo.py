@@ -1,7 +1,7 @@
 """An invented programme: a network of clinics on an invented coast, its patients, patches and therapies.
 
 Nobody in it exists. The signals come from `detectors.synthetic` and are written as EDF+ files, so that everything
-after the inbox is the real job. To save power, the patches of the story store 20 minutes in every 3 hours, an hour
+after the inbox is the real job. To save power, the patches of the story store 45 minutes in every 3 hours, an hour
 later each day, so that three days cover the clock. That keeps the demo short and makes each file an EDF+D of many
 segments.
 """
@@ -24,11 +24,12 @@ from flows.programme import make_folder
 SEED = 2026
 NAME = "Saltmarsh Coast Clinics (invented)"
 ZONE = "Europe/Lisbon"
-MIN_ANALYSABLE_H_PER_DAY = 1.5  # a full day of the story's patches holds 2.7 hours
-WINDOW_S = 1200
+MIN_ANALYSABLE_H_PER_DAY = 3.0  # a full day of the story's patches holds 6 hours
+WINDOW_S = 2700
 WINDOWS_PER_DAY = 8
 
 _FIRST_DAY = datetime(2026, 2, 2)  # noqa: DTZ001  days of the story are local days
+_WEAR_BEGINS_H = 10  # o'clock
 _WORN = Noise(lead_off_per_h=0.15)
 
 
@@ -38,6 +39,7 @@ class Wear(NamedTuple):
     day: int
     days: int
     rhythm: Rhythm
+    nights: bool = True  # False: taken off from 22:00 to 7:00
 
 
 class Therapy(NamedTuple):
@@ -78,7 +80,7 @@ def story() -> tuple[Patient, ...]:
             Wear(52, 6, one_focus._replace(v_share_pct=1.8, rate_bpm=65)),
         ), (Therapy(8, medication, "bisoprolol 5 mg daily"),), fs_hz=250),
         Patient("HB-102", "no response, the burden only fluctuates", (
-            Wear(2, 6, fluctuating), Wear(20, 6, fluctuating),
+            Wear(2, 6, fluctuating), Wear(20, 6, fluctuating, nights=False),
         ), (Therapy(9, medication, "flecainide 50 mg twice daily"),)),
         Patient("HB-103", "rises after a medication is stopped", (
             Wear(3, 6, stopped), Wear(22, 6, stopped._replace(v_share_pct=9.0, rate_bpm=71)),
@@ -86,7 +88,7 @@ def story() -> tuple[Patient, ...]:
         Patient("LT-201", "ablation success", (
             Wear(4, 6, outflow), Wear(29, 6, outflow._replace(v_share_pct=0.4)),
             Wear(66, 6, outflow._replace(v_share_pct=0.3)),
-        ), (Therapy(12, ablation, "right ventricular outflow tract"),), fs_hz=250),
+        ), (Therapy(12, ablation, "right ventricular outflow tract"),)),
         Patient("LT-202", "early recurrence after ablation", (
             Wear(5, 6, recurring), Wear(30, 6, recurring._replace(v_share_pct=1.0)),
             Wear(51, 6, recurring._replace(v_share_pct=15.0)),
@@ -136,7 +138,7 @@ def _serial(patient: Patient, wear: Wear) -> str:
 
 
 def _start(wear: Wear) -> datetime:
-    return _FIRST_DAY + timedelta(days=wear.day, hours=10)
+    return _FIRST_DAY + timedelta(days=wear.day, hours=_WEAR_BEGINS_H)
 
 
 def _write_register(register: Path, patients: tuple[Patient, ...]) -> None:
@@ -174,8 +176,15 @@ def true_windows(wear: Wear, fs_hz: int, seed: int) -> Iterator[tuple[int, Hour]
     """Hours since the start of the wear, samples and true beats of each stored window."""
     for day in range(wear.days):
         for elapsed_h in range(24 * day + day % 3, 24 * (day + 1), 24 // WINDOWS_PER_DAY):
+            if not wear.nights and not 7 <= (_WEAR_BEGINS_H + elapsed_h) % 24 < 22:
+                continue
             (window,) = synthetic.recording(
-                wear.rhythm, _WORN, fs_hz=fs_hz, hours=WINDOW_S / 3600, start_clock_h=10 + elapsed_h, seed=seed
+                wear.rhythm,
+                _WORN,
+                fs_hz=fs_hz,
+                hours=WINDOW_S / 3600,
+                start_clock_h=_WEAR_BEGINS_H + elapsed_h,
+                seed=seed,
             )
             yield elapsed_h, window
 
@@ -197,6 +206,6 @@ def _write_refused(inbox: Path) -> None:
     page.write_text("<!doctype html><html><title>Sign in</title><p>Your session has ended.</html>\n", encoding="utf-8")
     _set_time(page, _FIRST_DAY + timedelta(days=46))
     flat = inbox / "SK20360_20260403.edf"
-    start = _FIRST_DAY + timedelta(days=60, hours=10)
+    start = _FIRST_DAY + timedelta(days=60, hours=_WEAR_BEGINS_H)
     write_edf(flat, EdfHeader("LT-203", "SK20360", start, 125, 0.0), [Piece(0, np.zeros(125 * 60, np.int16))])
     _set_time(flat, start + timedelta(days=2))

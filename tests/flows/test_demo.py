@@ -55,7 +55,7 @@ def test_every_good_file_belongs_to_a_wear(programme):
 
 
 def test_a_wear_has_one_window_every_three_hours(programme):
-    """A file of one day holds eight windows of twenty minutes, three hours apart."""
+    """A file of one day holds eight windows, three hours apart."""
     file = min((programme / "inbox").glob("SK101*.edf"))
     raw = file.read_bytes()
     record_bytes = 10 * 250 * 2 + 24
@@ -65,7 +65,7 @@ def test_a_wear_has_one_window_every_three_hours(programme):
     breaks = np.flatnonzero(np.diff(onsets_s) > 10)
     assert raw[192:197] == b"EDF+D"
     assert onsets_s[np.concatenate([[0], breaks + 1])].tolist() == [n * 10_800 for n in range(8)]
-    assert len(onsets_s) == 8 * 120
+    assert len(onsets_s) == 8 * demo.WINDOW_S // 10
 
 
 def test_three_days_cover_the_clock():
@@ -74,6 +74,13 @@ def test_three_days_cover_the_clock():
     hours = [elapsed_h for elapsed_h, _ in demo.true_windows(wear._replace(days=3), 25, seed=1)]
     assert hours == sorted(hours)
     assert sorted((10 + hour) % 24 for hour in hours) == list(range(24))
+
+
+def test_a_wear_without_nights():
+    """A patch that is taken off at night has no window between 22:00 and 7:00."""
+    wear = next(wear for patient in demo.story() for wear in patient.wears if not wear.nights)
+    clocks = {(10 + elapsed_h) % 24 for elapsed_h, _ in demo.true_windows(wear._replace(days=3), 25, seed=1)}
+    assert clocks == set(range(7, 22))
 
 
 def test_the_same_seed_gives_the_same_programme(programme, tmp_path):
