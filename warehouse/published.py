@@ -68,8 +68,17 @@ class Published:
         """Whether the edition has a table of this name."""
         return self._file(name).is_file() or name in self._read_in_place()
 
+    @property
+    def name(self) -> str:
+        """Name of the edition: the hash of its manifest, or the name of a data cut."""
+        return self._edition.name
+
     def table(self, name: str, where: Mapping[str, object] | None = None) -> pl.DataFrame:
         """Rows of a published table in the order of its key; `where` keeps the rows whose columns equal its values."""
+        return self.scan(name, where).collect()
+
+    def scan(self, name: str, where: Mapping[str, object] | None = None) -> pl.LazyFrame:
+        """The same as `table`, not read yet: for tables that are larger than memory."""
         where = where or {}
         if self._file(name).is_file():
             rows = pl.scan_parquet(self._file(name))
@@ -77,7 +86,8 @@ class Published:
             rows = self._scan_parts(name, where)
         else:
             raise PublishedError(f"no published table {name!r}; {_nearest(name, schema.PUBLISHED)}")
-        return rows.filter(*(pl.col(column) == value for column, value in where.items())).collect()
+        conditions = [pl.col(column) == value for column, value in where.items()]
+        return rows.filter(conditions) if conditions else rows
 
     def _file(self, name: str) -> Path:
         return self._edition / "tables" / f"{name}.parquet"
