@@ -58,9 +58,17 @@ def score_folder(
         raise ScoreError(
             f"{folder}: no record can be scored; expected NAME.hea with its signal file and labels in NAME.atr. {told}"
         )
-    stressed = [folder / f"{name}.hea" for name in noise_records or [score.record for score in scores]]
-    noise = _stress(stressed, noise_folder, options, say) if noise_folder else ()
+    noise = _stress(_chosen(folder, noise_records, scores), noise_folder, options, say) if noise_folder else ()
     return Report(options, tuple(scores), tuple(left_out), noise)
+
+
+def _chosen(folder: Path, names: Sequence[str], scores: Sequence[RecordScore]) -> list[Path]:
+    """Headers of the named records, or of all that were scored."""
+    scored = [score.record for score in scores]
+    unknown = [name for name in names if name not in scored]
+    if unknown:
+        raise ScoreError(f"noise was asked for records {', '.join(unknown)}; scored were {', '.join(scored)}")
+    return [folder / f"{name}.hea" for name in names or scored]
 
 
 def _stress(

@@ -45,7 +45,10 @@ def open_labelled(header: Path, channel: int) -> Labelled:
     signal = open_signal(header, channel)
     found = read_annotations(labels_path)
     samples_per_frame = int(signal.rate / read_header(header.read_bytes()).fs_hz)
-    labels = Annotations(found.sample * samples_per_frame, found.symbol, found.subtype, found.aux)
+    in_time = np.argsort(found.sample, kind="stable")  # an edited label file may step back in time
+    labels = Annotations(
+        found.sample[in_time] * samples_per_frame, found.symbol[in_time], found.subtype[in_time], found.aux[in_time]
+    )
     return Labelled(header.stem, signal, labels, bool(np.char.startswith(found.aux.astype(str), "(AF").any()))
 
 

@@ -207,6 +207,12 @@ def test_a_folder_without_noise_is_refused(folder, tmp_path):
         score.score_folder(folder, noise_folder=tmp_path)
 
 
+def test_noise_for_a_record_that_is_not_there(folder, tmp_path):
+    """Naming a record for the noise that was not scored is an error that lists those that were."""
+    with pytest.raises(score.ScoreError, match="records 118; scored were clean, second"):
+        score.score_folder(folder, noise_folder=tmp_path, noise_records=("118",))
+
+
 def test_real_records(reference_ecg, tmp_path):
     """Real labelled records are scored with the beat counts that their database states."""
     for record in ("106", "119"):

@@ -3,6 +3,8 @@
 import numpy as np
 import pytest
 import wfdb
+from hypothesis import HealthCheck, given, settings
+from hypothesis import strategies as st
 
 from flows.readers.wfdb_annotations import AnnotationError, read_annotations
 
@@ -63,3 +65,16 @@ def test_what_is_no_annotation_file(tmp_path, data):
     (tmp_path / "bad.atr").write_bytes(data)
     with pytest.raises(AnnotationError, match=r"bad\.atr"):
         read_annotations(tmp_path / "bad.atr")
+
+
+@given(st.lists(st.integers(0, 0xFFFF), max_size=60).map(lambda words: np.array(words, "<u2").tobytes()))
+@settings(suppress_health_check=[HealthCheck.function_scoped_fixture])
+def test_any_bytes_give_annotations_or_a_refusal(tmp_path, data):
+    """Whatever the bytes, the reader returns equally long arrays of known symbols or refuses."""
+    (tmp_path / "any.atr").write_bytes(data)
+    try:
+        found = read_annotations(tmp_path / "any.atr")
+    except AnnotationError:
+        return
+    assert len({len(column) for column in found}) == 1
+    assert set(found.symbol.tolist()) <= set(SYMBOLS)
