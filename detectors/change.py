@@ -78,7 +78,7 @@ def compare(
     least, most = _chance_limits(chance)
     low, high = _interval(chance, observed)
     per_baseline = _divide(per_beat[1::2], baseline)
-    success = _at_most(chance, observed + 0.5, np.full(n_events, np.log1p(-success_limit_pct / 100)))
+    success = 1 - _at_most(chance, observed + 0.5, np.full(n_events, np.log1p(-success_limit_pct / 100)))
     fewer_days = np.minimum(level.days[0::2], level.days[1::2])
     verdict = np.select(
         [fewer_days < max(min_days, 1), observed < least, observed > most], [TOO_LITTLE, FELL, ROSE], WITHIN

@@ -131,8 +131,8 @@ def excess_of_gap(before_d: ArrayLike, after_d: ArrayLike, series: SpontaneousSe
     between = variogram(before[:, None] - after[None, :], series).mean()
     within = [variogram(days[:, None] - days[None, :], series) for days in (before, after)]
     contrast = 2 * between - sum(table.mean() for table in within)
-    pairs = sum(table.size - len(table) for table in within)
-    scale = sum(table.sum() for table in within) / pairs if pairs else _typical_within(series)
+    freedom = len(before) + len(after) - 2
+    scale = sum(table.sum() / len(table) for table in within) / freedom if freedom else _typical_within(series)
     return max(0.0, float(contrast / scale - 1 / len(before) - 1 / len(after)))
 
 

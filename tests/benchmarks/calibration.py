@@ -1,0 +1,187 @@
+"""Does the change statistic keep its promises? Simulated programmes, one line per cell.
+
+    python tests/benchmarks/calibration.py [--patients 1000] [--csv FILE]
+
+Every patient has hours with a circadian shape, salvos, lost blocks (half of the patients lose their nights in the
+after period), days that vary with a log SD, and in half of the cells the published drift between the periods.
+Printed: coverage of the 95 % interval, false falls under no change, power, and the power of an ideal analyst who
+knows every variance and has lost no hour (normal theory on the logarithms of days, best linear weights). Cells
+outside the promise (coverage 93 to 97 %, false falls at most 5 %, power at least 90 % of the ideal) are marked, a
+deviation within two standard errors of the simulation not.
+"""
+
+from __future__ import annotations
+
+import argparse
+import csv
+import itertools
+import sys
+from pathlib import Path
+from typing import Any, NamedTuple
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.stats import norm
+
+from detectors import change, variability
+from detectors.spread import Periods
+from detectors.standardise import HourCells, over_dispersion, standardised_days
+
+Floats = NDArray[np.float64]
+
+SETTLING_D = 7
+HOUR_SD = 0.4  # of ln count within a day
+CIRCADIAN = 1 + 0.6 * np.cos(2 * np.pi * (np.arange(24) - 14) / 24)
+NIGHT = np.arange(24) < 8
+
+
+class Cell(NamedTuple):
+    """One simulated programme: what is varied."""
+
+    before_d: int
+    after_d: int
+    day_sd: float
+    per_h: float
+    drift: bool
+    ratio: float
+
+
+CELLS = [
+    Cell(before, after, sd, per_h, drift, ratio)
+    for (before, after), sd, per_h, drift, ratio in itertools.product(
+        [(1, 1), (1, 7), (3, 3), (3, 14), (7, 7), (14, 14)], [0.3, 0.6, 1.0], [60.0, 1.0, 0.05], [False, True],
+        [1.0, 0.5, 0.2, 0.05],
+    )
+]  # fmt: skip
+
+
+def days_of(cell: Cell) -> tuple[Floats, NDArray[np.bool_]]:
+    """Day numbers of both periods and which lie after."""
+    after = np.arange(cell.after_d) + SETTLING_D
+    return np.concatenate([np.arange(cell.before_d) - cell.before_d, after]), np.repeat(
+        [False, True], [cell.before_d, cell.after_d]
+    )
+
+
+def covariance_of(cell: Cell, days: Floats) -> Floats:
+    """Covariance of ln level between days: independent, or with the published variogram scaled to `day_sd`."""
+    if not cell.drift:
+        return cell.day_sd**2 * np.eye(len(days))
+    series = variability.SINGLE_BEATS
+    half = variability.variogram(days[:, None] - days[None, :], series)
+    week = variability.variogram(np.subtract.outer(np.arange(7.0), np.arange(7.0)), series)
+    scale = cell.day_sd**2 / (week.sum() / 42)
+    return scale * (half.max() - half)
+
+
+def simulate(cell: Cell, patients: int, rng: np.random.Generator, ratio: Floats) -> change.Comparison:
+    """Run the statistic as the flows do, on `patients` patients with the given true ratios."""
+    days, is_after = days_of(cell)
+    values, vectors = np.linalg.eigh(covariance_of(cell, days))
+    root = vectors * np.sqrt(np.maximum(values, 0))
+    log_level = rng.standard_normal((patients, len(days))) @ root.T + np.where(is_after, np.log(ratio)[:, None], 0.0)
+    mean = cell.per_h * np.exp(log_level)[:, :, None] * CIRCADIAN
+    counts = rng.poisson(mean * np.exp(HOUR_SD * rng.standard_normal(mean.shape) - HOUR_SD**2 / 2))
+    worn = rng.random(mean.shape) > 0.05
+    worn[::2] &= ~(is_after[:, None] & NIGHT)
+    patient, day, hour = np.nonzero(worn)
+    row = patient * len(days) + day
+    cells = HourCells(row, hour, counts[worn].astype(float), np.ones(len(row)))
+    owner = np.repeat(np.arange(patients), len(days))
+    period = 2 * owner + np.tile(is_after, patients)
+    level, expected = standardised_days(cells, owner)
+    dispersion = over_dispersion(cells, expected, period, 2 * patients)
+    excess = variability.excess_of_gap(days[~is_after], days[is_after], variability.SINGLE_BEATS) if cell.drift else 0.0
+    return change.compare(
+        Periods(period, level.counts, level.exposure, dispersion[period]), patients,
+        excess=np.full(patients, excess), typical_sd=0.6, success_limit_pct=80.0,
+    )  # fmt: skip
+
+
+def ideal_power(cell: Cell) -> float:
+    """Power of the one-sided 5 % test with best linear weights and known variances; NaN where logs are not normal."""
+    days, is_after = days_of(cell)
+    beats = 24 * cell.per_h * np.where(is_after, cell.ratio, 1.0)
+    if beats.min() < 5:
+        return float("nan")
+    hours = np.expm1(HOUR_SD**2) * (CIRCADIAN**2).sum() / CIRCADIAN.sum() ** 2
+    noise = np.diag(1 / beats + hours)
+    inverse = np.linalg.inv(covariance_of(cell, days) + noise)
+    design = np.column_stack([np.ones(len(days)), is_after])
+    error = np.sqrt(np.linalg.inv(design.T @ inverse @ design)[1, 1])
+    return float(norm.cdf(-np.log(cell.ratio) / error - norm.ppf(0.95)))
+
+
+def measured(cell: Cell, patients: int, seed: int) -> dict[str, Any]:
+    found = simulate(cell, patients, np.random.default_rng(seed), np.full(patients, cell.ratio))
+    low, high = np.nan_to_num(found.ratio_low, nan=0.0), np.nan_to_num(found.ratio_high, nan=np.inf)
+    fell = float(np.mean(found.verdict == change.FELL))
+    result = {
+        "coverage_pct": 100 * float(np.mean((low <= cell.ratio) & (cell.ratio <= high))),
+        "fell_pct": 100 * fell,
+        "ideal_pct": 100 * ideal_power(cell),
+        "day_sd_found": float(np.median(found.day_sd)),
+        "limit_pct": float(np.nanmedian(found.chance_fall_limit_pct)),
+    }
+    return cell._asdict() | result | {"mark": " ".join(_marks(cell, result, patients))}
+
+
+def _marks(cell: Cell, result: dict[str, Any], patients: int) -> list[str]:
+    two_errors = 200 * np.sqrt(0.05 * 0.95 / patients)
+    marks = []
+    if min(cell.before_d, cell.after_d) >= 3:
+        marks += ["under"] if result["coverage_pct"] < 93 - two_errors else []
+        marks += ["over"] if result["coverage_pct"] > 97 + two_errors else []
+    if cell.ratio == 1:
+        marks += ["false_falls"] if result["fell_pct"] > 5 + two_errors else []
+    elif result["fell_pct"] < 0.9 * result["ideal_pct"] - two_errors:
+        marks.append("weak")
+    return marks
+
+
+def reliability(patients: int, seed: int) -> list[tuple[float, float, int]]:
+    """Stated probability of success against its frequency in tenths, true ln ratios uniform; (stated, true, n)."""
+    rng = np.random.default_rng(seed)
+    cell = Cell(5, 7, 0.6, 60.0, False, 1.0)
+    ratio = np.exp(rng.uniform(np.log(0.01), np.log(2.0), patients))
+    stated = simulate(cell, patients, rng, ratio).success_probability_pct
+    tenth = np.minimum((stated // 10).astype(int), 9)
+    return [
+        (float(stated[tenth == k].mean()), 100 * float(np.mean(ratio[tenth == k] < 0.2)), int((tenth == k).sum()))
+        for k in range(10)
+        if (tenth == k).any()
+    ]
+
+
+def main() -> int:
+    parser = argparse.ArgumentParser(description=__doc__, formatter_class=argparse.RawDescriptionHelpFormatter)
+    parser.add_argument("--patients", type=int, default=1000, help="patients per cell")
+    parser.add_argument("--csv", type=Path, help="write the table there as well")
+    parser.add_argument("--every", type=int, default=1, help="run every n-th cell only")
+    given = parser.parse_args()
+    print("before after day_sd  per_h drift ratio | cover%  fell% ideal%  sd limit%  outside the promise")
+    rows = []
+    for seed, cell in list(enumerate(CELLS))[:: given.every]:
+        row = measured(cell, given.patients, seed)
+        rows.append(row)
+        print(
+            f"{row['before_d']:6} {row['after_d']:5} {row['day_sd']:6} {row['per_h']:6} {row['drift']!s:>5} "
+            f"{row['ratio']:5} | {row['coverage_pct']:6.1f} {row['fell_pct']:6.1f} {row['ideal_pct']:6.1f} "
+            f"{row['day_sd_found']:5.2f} {row['limit_pct']:5.1f}  {row['mark']}",
+            flush=True,
+        )
+    for mark in ("under", "over", "false_falls", "weak"):
+        print(f"{mark}: {sum(mark in row['mark'].split() for row in rows)} of {len(rows)} cells")
+    print("success probability: stated %, true %, patients")
+    for stated, true, n in reliability(4 * given.patients, 1):
+        print(f"{stated:6.1f} {true:6.1f} {n:6}")
+    if given.csv:
+        with given.csv.open("w", newline="") as file:
+            writer = csv.DictWriter(file, rows[0])
+            writer.writeheader()
+            writer.writerows(rows)
+    return 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())
