@@ -33,4 +33,4 @@ def _table(answer: pl.DataFrame) -> str:
         tbl_hide_column_data_types=True,
         tbl_formatting="MARKDOWN",
     ):
-        return f"{answer}\n{answer.height} rows"
+        return f"{answer}\n{answer.height} row{'s' if answer.height != 1 else ''}"
