@@ -6,7 +6,9 @@ here.
 
 from __future__ import annotations
 
+import contextlib
 import hashlib
+import tempfile
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
@@ -20,8 +22,9 @@ from flows.deliveries import ACCEPTED, QUARANTINED, SKIPPED, WAITING, Deliveries
 from flows.inbox import Candidate, SeenFiles
 from flows.landing import Identity, Landed, land
 from flows.privacy import shown_name, shown_serial, without_words
+from flows.readers.archive import Limits, is_archive
 from flows.readers.codes import Declined, Refused, Waits
-from flows.readers.identify import open_delivery
+from flows.readers.identify import head_of, open_delivery
 from flows.readers.recording import Finding, Opened, Site, finding
 from flows.recordings import Recordings
 from flows.register import Register
@@ -75,6 +78,7 @@ class _Run:
         self._folder, self._settings, self._register, self._ledger, self._say = folder, settings, register, ledger, say
         self._lake = folder / "lake"
         self._site = Site(**vars(settings.site))
+        self._limits = Limits(settings.inbox.largest_unpacked_mb * 10**6, settings.inbox.largest_unpack_ratio)
         self._deliveries = Deliveries(self._lake, ledger)
         self._recordings = Recordings(self._lake, ledger, register, self._deliveries, Pieces(self._lake, ledger))
         self._seen = SeenFiles(self._lake / "seen.json")
@@ -144,16 +148,16 @@ class _Run:
 
     def _would_match(self, candidate: Candidate) -> None:
         """Open a delivery that waited before where it lies, to spare copying it again while it must wait on."""
-        try:
-            self._matched(candidate, open_delivery(candidate.files, self._site))
-        except OSError:
-            return
+        with contextlib.suppress(OSError):
+            if not is_archive(head_of(candidate.files[0])):
+                self._matched(candidate, open_delivery(candidate.files, self._site))
 
     def _accept(
         self, candidate: Candidate, delivery_id: str, sha256: str, files: tuple[Path, ...], may_postpone: bool
     ) -> None:
         self._skip_known_bytes(sha256)
-        opened = open_delivery(files, self._site)
+        scratch = self._lake / "staging" / "now" / "unpacked"
+        opened = open_delivery(files, self._site, scratch=scratch, limits=self._limits)
         opened, serial, matched, file_zone = self._matched(candidate, opened)
         if may_postpone and len(matched.possible_starts) > 1:
             raise _Later
@@ -348,10 +352,14 @@ def inspect(path: Path) -> dict[str, Any]:
 
     Words of the person are counted, never shown.
     """
-    try:
-        opened = open_delivery([path])
-    except Declined as declined:
-        return {"would_be": QUARANTINED, "code": declined.code, "reason": declined.sentence}
+    with tempfile.TemporaryDirectory() as scratch:
+        try:
+            return _inspected(open_delivery([path], scratch=Path(scratch) / "unpacked"))
+        except Declined as declined:
+            return {"would_be": QUARANTINED, "code": declined.code, "reason": declined.sentence}
+
+
+def _inspected(opened: Opened) -> dict[str, Any]:
     recorded_h = opened.n_samples / float(opened.rate) / 3600
     return {
         "would_be": f"{ACCEPTED}, when register/wears.csv has its device and time",

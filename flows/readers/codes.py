@@ -22,6 +22,7 @@ REFUSALS = {
     "web_page_not_data": "the file is a web page, for example a login page",
     "archive_unsafe": "unpacking the archive would leave its limits or its folder",
     "damaged_archive": "the archive is cut or its checksum is wrong",
+    "archive_holds_several": "the archive holds more than one recording",
     "no_signals": "the header lists no signals",
     "no_samples": "the file holds no samples",
     "no_ecg_channel": "no channel looks like an ECG",

@@ -9,13 +9,14 @@ from collections.abc import Sequence
 from pathlib import Path
 from types import ModuleType
 
-from flows.readers import edf, wfdb
+from flows.readers import archive, edf, ishne, wfdb
 from flows.readers.codes import Refused
 from flows.readers.recording import NO_SITE, Opened, Site
 
-READERS: tuple[ModuleType, ...] = (edf, wfdb)
+READERS: tuple[ModuleType, ...] = (edf, ishne, wfdb)
 
 HEAD_BYTES = 4096
+NO_LIMITS = archive.Limits()
 
 # Marks of formats that arrive by mistake or are not read here: (offset, bytes, code, what it is).
 _FOREIGN = (
@@ -43,9 +44,23 @@ def head_of(path: Path) -> bytes:
         return file.read(HEAD_BYTES)
 
 
-def open_delivery(files: Sequence[Path], site: Site = NO_SITE) -> Opened:
-    """Open the files of one delivery with the first reader that knows the first file's bytes; raises Refused."""
+def open_delivery(
+    files: Sequence[Path],
+    site: Site = NO_SITE,
+    *,
+    scratch: Path | None = None,
+    limits: archive.Limits = NO_LIMITS,
+) -> Opened:
+    """Open the files of one delivery with the first reader that knows the first file's bytes; raises Refused.
+
+    An archive is unpacked into `scratch` and the recording in it opened; the caller removes the folder.
+    """
     head = head_of(files[0])
+    if scratch is not None and archive.is_archive(head):
+        unpacked = archive.unpack(files[0], scratch, limits)
+        if not unpacked:
+            raise Refused("no_samples", "the archive holds no files; expected a recording.")
+        return open_delivery(archive.the_recording(unpacked, _is_known, _names_of), site)
     if not head:
         raise Refused("empty_file", "the file has 0 bytes; expected a recording. Deliver it again.")
     reader = reader_of(head)
@@ -53,6 +68,15 @@ def open_delivery(files: Sequence[Path], site: Site = NO_SITE) -> Opened:
         raise _unknown(head)
     opened: Opened = reader.open_delivery(files, site)
     return opened
+
+
+def _is_known(head: bytes) -> bool:
+    return reader_of(head) is not None
+
+
+def _names_of(path: Path) -> list[str]:
+    """Files that a file claims as its own, when it is a header."""
+    return wfdb.names_in_header(path) if wfdb.identify(head_of(path)) else []
 
 
 def _unknown(head: bytes) -> Refused:
