@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from detectors.analyse import analyse_recording
-from detectors.annotations import CLASSES, Annotations, beat_annotations, beat_classes
+from detectors.annotations import CLASSES, Annotations, beat_annotations, beat_classes, inside, sorted_out
 from detectors.results import Analysis, Segment
 from detectors.scoring import BeatScore, compare_beats
 from detectors.scoring_runs import RunScore, compare_runs
@@ -100,7 +100,9 @@ def score_record(record: Labelled, options: Options) -> RecordScore:
         )  # fmt: skip
 
     everything = beat_score(None)
-    expert_class = beat_classes(labels.symbol, escape_as=options.escape_as)
+    truth = sorted_out(labels, n_samples, options.escape_as)
+    # experts label no single beats within ventricular flutter or fibrillation, so nothing there can be compared
+    comparable = beats.is_analysable & ~inside(test.sample, truth.fibrillation)
     return RecordScore(
         record=record.name,
         lead=opened.lead,
@@ -108,8 +110,8 @@ def score_record(record: Labelled, options: Options) -> RecordScore:
         beats=everything,
         beats_analysable=beat_score(bad),
         runs={ectopy: run_score(ectopy) for ectopy in "VS"},
-        found_v_burden_pct=_v_burden_pct(test.symbol[beats.is_analysable] == "V"),
-        true_v_burden_pct=_v_burden_pct(expert_class[expert_class >= 0] == _V),
+        found_v_burden_pct=_v_burden_pct(test.symbol[comparable] == "V"),
+        true_v_burden_pct=_v_burden_pct(truth.beat_class == _V),
         analysable_share_pct=100.0 * analysis.analysable_s * float(opened.rate) / opened.n_samples,
         judged=_judged(everything, analysis),
         findings=tuple(finding.code for finding in analysis.findings),

@@ -61,7 +61,10 @@ class RecordScore:
 
     @property
     def v_burden_error_pct_points(self) -> float:
-        """V share of the detector's analysable beats minus V share of all the expert's beats."""
+        """V share of the detector's analysable beats minus V share of all the expert's beats.
+
+        Detections within marked ventricular flutter or fibrillation, where experts label no beats, are left out.
+        """
         return self.found_v_burden_pct - self.true_v_burden_pct
 
 
@@ -203,7 +206,8 @@ def _text(report: Mapping[str, Any]) -> str:
         f"{options['escape_as']} in the labels",
         _table(("%", *_HEADINGS), [_summary(report[key], title) for key, title in SUMMARIES.items() if report[key]]),
         "V burden error, points: " + ", ".join(f"{k} {_shown(v)}" for k, v in report["v_burden_error"].items()),
-        "(V share of the detector's analysable beats minus V share of all the expert's beats)",
+        "(V share of the detector's analysable beats, without those in marked ventricular flutter or fibrillation, "
+        "minus V share of all the expert's beats)",
         _table(_RECORD_HEADINGS, [_record_row(row) for row in report["records"]]),
         _table(_RUN_HEADINGS, [_run_row(ectopy, runs) for ectopy, runs in report["runs"].items()]),
         _table(

@@ -106,6 +106,22 @@ def test_expert_burden_counts_the_whole_record(folder, report):
     )
 
 
+def test_marked_fibrillation_leaves_the_burden(folder, tmp_path):
+    """Detections within marked ventricular fibrillation, where nobody labels beats, do not count in the burden."""
+    for part in ("hea", "dat"):
+        shutil.copy(folder / f"clean.{part}", tmp_path)
+    true = wfdb.rdann(str(folder / "clean"), "atr")
+    begin, end = 120 * FS_HZ, 420 * FS_HZ
+    outside = (true.sample < begin) | (true.sample > end)
+    sample = np.concatenate([true.sample[outside], [begin, end]])
+    symbol = np.array(["N" if name == "V" else name for name in np.array(true.symbol)[outside]] + ["[", "]"])
+    order = np.argsort(sample)
+    wfdb.wrann("clean", "atr", sample=sample[order], symbol=symbol[order].tolist(), write_dir=str(tmp_path))
+    (row,) = score.score_folder(tmp_path).as_dict()["records"]
+    is_v = np.array(true.symbol)[outside] == "V"
+    assert row["v_burden_found_pct"] == pytest.approx(100 * is_v.sum() / (len(is_v) - 1), abs=0.7)
+
+
 def test_records_without_labels_are_named(report):
     """A record that cannot be scored is named with its reason and does not stop the others."""
     told = report.as_dict()
