@@ -57,7 +57,7 @@ def timeline(wear_days: pl.DataFrame, therapies: pl.DataFrame, periods: pl.DataF
         xaxis={**GREY, "type": "date", "range": [str(first), str(last)], "anchor": "y3", "showgrid": True,
                "hoverformat": "%a %-d %b %Y", "tickformat": "%-d %b\n%Y"},
         yaxis=_axis("V burden, %", (0.50, 1.0)),
-        yaxis2=_axis("hours", (0.25, 0.44), range=[0, 25], tickvals=[0, 8, 16, 24]),
+        yaxis2=_axis("hours", (0.25, 0.44), **_hours_scale(wear_days)),
         yaxis3=_axis("rate, /min", (0.0, 0.19), rangemode="normal", nticks=4),
         barmode="overlay",
         bargap=0.15,
@@ -92,6 +92,13 @@ def _wear_bars(wear_days: pl.DataFrame) -> list[dict[str, Any]]:
          "marker": {"color": colour}, "hovertemplate": f"%{{y:.1f}} h {name}<extra></extra>"}
         for column, name, colour in bars
     ]  # fmt: skip
+
+
+def _hours_scale(wear_days: pl.DataFrame) -> dict[str, Any]:
+    """Show the whole day as soon as a patch was worn for half of one."""
+    if wear_days.filter(pl.col("worn_h") > 12).is_empty():
+        return {"nticks": 4}
+    return {"range": [0, 25], "tickvals": [0, 8, 16, 24]}
 
 
 def _rate_days(wear_days: pl.DataFrame) -> dict[str, Any]:

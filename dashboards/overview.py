@@ -36,10 +36,7 @@ def context(tables: Tables) -> dict[str, Any]:
     return {
         "last_day": last_day,
         "calendar": calendar,
-        "attention": [
-            row | {"page": addresses.patient_page(row["patient_code"])} for row in attention.rows(named=True)
-        ],
-        "attention_patients": len(ranks),
+        "attention": [_reasons(attention, code) for code in ranks],
         "patients": [_patient(tables, code, calendar) for code in codes],
         "last_run": _last_run(tables),
         "open_deliveries": deliveries.filter(pl.col("status").is_in(["waiting", "quarantined"])).rows(named=True),
@@ -58,6 +55,11 @@ def data_files(tables: Tables) -> dict[str, pl.DataFrame]:
 def _first_ranks(attention: pl.DataFrame) -> dict[str, int]:
     firsts = attention.unique("patient_code", keep="first", maintain_order=True)["patient_code"]
     return {code: place for place, code in enumerate(firsts)}
+
+
+def _reasons(attention: pl.DataFrame, code: str) -> dict[str, Any]:
+    reasons = attention.filter(pl.col("patient_code") == code).rows(named=True)
+    return {"patient_code": code, "page": addresses.patient_page(code), "reasons": reasons}
 
 
 def _last_run(tables: Tables) -> dict[str, Any] | None:

@@ -126,14 +126,13 @@ def _recording(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
 
 def draw_families(families: pl.DataFrame) -> list[dict[str, Any]]:
     """Return family rows with the drawing of their averaged beat."""
-    return [
-        row | {"drawing": strips.draw_shape(row["shape_mv"]) if row["shape_mv"] else None}
-        for row in families.rows(named=True)
-    ]
+    drawings = strips.draw_shapes(families)
+    rows = families.drop("shape_mv").rows(named=True)
+    return [row | {"drawing": drawing} for row, drawing in zip(rows, drawings, strict=True)]
 
 
 def _strips(tables: Tables, recordings: pl.DataFrame) -> Iterable[dict[str, Any]]:
-    """Yield the first strips with ectopic beats of the first and the last recording; one of each goes on paper."""
+    """Yield the first ectopic strips of the first and the last recording; the calmest of each goes on paper."""
     ends = (
         list(dict.fromkeys(recordings["recording_id"].gather([0, recordings.height - 1]))) if recordings.height else []
     )
@@ -141,7 +140,8 @@ def _strips(tables: Tables, recordings: pl.DataFrame) -> Iterable[dict[str, Any]
         kept = tables.large("strips", recording_id).filter(pl.col("beat_class").is_in(ECTOPIC)).head(STRIPS_SHOWN)
         zone = recordings.row(by_predicate=pl.col("recording_id") == recording_id, named=True)["zone"]
         drawn = draw_rows(kept, zone)
-        yield from (row | {"on_paper": place == 0} for place, row in enumerate(drawn))
+        calmest = min(drawn, key=lambda row: row["drawing"].height, default=None)
+        yield from (row | {"on_paper": row is calmest} for row in drawn)
 
 
 def draw_rows(rows: pl.DataFrame, zone: str) -> list[dict[str, Any]]:

@@ -186,6 +186,7 @@ def _templates() -> jinja2.Environment:
         undefined=jinja2.StrictUndefined,
         trim_blocks=True,
         lstrip_blocks=True,
+        auto_reload=False,
     )
     environment.filters |= words.FILTERS
     environment.globals["words"] = words

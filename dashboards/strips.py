@@ -5,7 +5,6 @@ Drawing unit is 0.1 mm: at 25 mm/s one unit is 4 ms, at 10 mm/mV one unit is 0.0
 
 from __future__ import annotations
 
-from collections.abc import Sequence
 from typing import Any, NamedTuple
 
 import polars as pl
@@ -13,8 +12,7 @@ import polars as pl
 UNITS_PER_MM = 10
 UNITS_PER_S = 25 * UNITS_PER_MM
 UNITS_PER_MV = 10 * UNITS_PER_MM
-SHAPE_FS_HZ = 125
-SHAPE_BEFORE_S = 0.28
+SHAPE_FS_HZ = 125.0
 LETTER_ROOM = 6 * UNITS_PER_MM  # above the trace, for the class letters
 GRID = 5 * UNITS_PER_MM  # heights are whole large squares
 LOWEST, HIGHEST = -3 * UNITS_PER_MV, 4 * UNITS_PER_MV
@@ -54,11 +52,16 @@ def draw_strips(strips: pl.DataFrame) -> list[Drawing]:
     ]
 
 
-def draw_shape(shape_mv: Sequence[float]) -> Drawing:
-    """Return the drawing of a family's averaged beat (SHAPE_FS_HZ values a second, 0 mV is the first value's level)."""
-    frame = pl.DataFrame({"samples_mv": [list(shape_mv)], "fs_hz": [float(SHAPE_FS_HZ)]})
-    ((path, low, high),) = _points(frame)
-    return _drawing(path, low, high, round(len(shape_mv) / SHAPE_FS_HZ * UNITS_PER_S), ())
+def draw_shapes(families: pl.DataFrame) -> list[Drawing]:
+    """Return one drawing per row of `families`: its averaged beat, SHAPE_FS_HZ values a second."""
+    if families.is_empty():
+        return []
+    points = _points(families.select(samples_mv="shape_mv", fs_hz=pl.lit(SHAPE_FS_HZ)))
+    widths = families["shape_mv"].list.len().fill_null(0)
+    return [
+        _drawing(path, low, high, round(length / SHAPE_FS_HZ * UNITS_PER_S), ())
+        for length, (path, low, high) in zip(widths, points, strict=True)
+    ]
 
 
 def _points(traces: pl.DataFrame) -> list[tuple[str, int, int]]:

@@ -9,7 +9,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from dashboards.strips import UNITS_PER_MM, draw_shape, draw_strips
+from dashboards.strips import UNITS_PER_MM, draw_shapes, draw_strips
 
 
 def strip(samples_mv, fs_hz=250.0, beats=(), classes=()) -> pl.DataFrame:
@@ -94,4 +94,5 @@ def test_a_strip_without_any_sample_is_empty():
 
 def test_a_shape_is_as_long_as_its_samples_say():
     """Ninety values at 125 a second are 0.72 s: 18 mm."""
-    assert draw_shape([0.0] * 90).width == 18 * UNITS_PER_MM
+    (drawing,) = draw_shapes(pl.DataFrame({"shape_mv": [[0.0] * 90]}))
+    assert drawing.width == 18 * UNITS_PER_MM
