@@ -79,7 +79,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("worn_s", "DOUBLE", "s", "Seconds with the patch connected to the skin."),
     ("analysable_s", "DOUBLE", "s", "Seconds worn, connected and clean enough to classify beats."),
     ("block", "INTEGER", "", "Number of the stored sample block within the segment, from 0."),
-    ("difference", "SMALLINT", "counts", "Sample minus the one before, modulo 65,536; the block's first stands whole."),
+    ("step", "USMALLINT", "counts", "Sample minus the one before, modulo 65,536, as 0, -1, 1, -2, ... = 0, 1, 2, 3, ..."),
     # landed pieces and marks
     ("piece", "SMALLINT", "", "Number of the gap-free stretch within the delivery, from 0."),
     ("start_local", "TIMESTAMP", "", "First instant by the device's wall clock, NULL when the file has none."),
@@ -333,7 +333,7 @@ LAKE: dict[str, Table] = _tables(
     ),
     Table(
         "signal", "one row per sample, one part per block of a segment", (),
-        ("difference",),
+        ("step",),
     ),
     Table(
         "beats", "one row per detected QRS", ("recording_id", "segment", "sample"),
