@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from detectors import beats, chunks, classify, episodes, features, quality, rhythm, signal
 from detectors.families import FamilyBook
-from detectors.results import Analysis, Beats, Episodes, Finding, Segment
+from detectors.results import Analysis, Beats, Episodes, Finding, QualityWindows, Segment
 
 DETECTOR_VERSION = "1"
 BATCH_BEATS = 4096  # beats that are grouped into families at a time, wherever the chunks were cut
@@ -31,7 +31,7 @@ class Gathered(NamedTuple):
 
     found: beats.Found
     book: FamilyBook
-    judged: list[quality.SegmentBlocks]
+    seen: list[quality.Seen]
     fs_hz: float
 
 
@@ -106,22 +106,23 @@ def gather(
     """Read all segments once: beats with their families, and the quality of the time around them."""
     book = FamilyBook()
     parts: list[beats.Found] = []
-    judged: list[quality.SegmentBlocks] = []
+    seen: list[quality.Seen] = []
     for number, segment in enumerate(segments):
         waiting: list[chunks.ChunkBeats] = []
         blocks: list[chunks.Blocks] = []
-        done = 0
+        done, first_part = 0, len(parts)
         for begin, end in chunks.cuts(segment.n_samples, scale.fs_hz, chunk_s):
-            found, seen = chunks.read_chunk(segment, begin, end, scale)
+            found, quiet = chunks.read_chunk(segment, begin, end, scale)
             waiting = _enter_full_batches(book, parts, number, [*waiting, found])
-            blocks.append(seen)
+            blocks.append(quiet)
             now = min(round(end * scale.fs_hz / signal.WORKING_FS_HZ), segment.n_samples)
             progress(now - done)
             done = now
         progress(segment.n_samples - done)
         parts.extend(_enter(book, number, part) for part in waiting if part.working.size)
-        judged.append(quality.judge(quality.join(blocks), segment.n_samples))
-    return Gathered(beats.join(parts), book, judged, scale.fs_hz)
+        mine = beats.join(parts[first_part:])
+        seen.append(quality.Seen(segment.n_samples, chunks.join_blocks(blocks), mine.working, 1 - mine.likeness))
+    return Gathered(beats.join(parts), book, seen, scale.fs_hz)
 
 
 def _enter_full_batches(
@@ -149,17 +150,18 @@ def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Foun
 
 def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] = classify.WEIGHTS) -> Analysis:
     """Classes, episodes and findings of gathered beats, with the whole recording as context."""
-    fs_hz, judged = gathered.fs_hz, gathered.judged
-    bad = quality.windows(judged, fs_hz)
-    artefact = beats.is_artefact(gathered.found, _timing(gathered.found, bad, judged, fs_hz)[1])
+    fs_hz, seen = gathered.fs_hz, gathered.seen
+    bad = quality.windows(seen, fs_hz)
+    lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
+    artefact = beats.is_artefact(gathered.found, _timing(gathered.found, bad, lengths, fs_hz)[1])
     found = gathered.found.keep(~artefact)
-    sample, timing = _timing(found, bad, judged, fs_hz)
+    sample, timing = _timing(found, bad, lengths, fs_hz)
     labels = classify.classify(timing, found.member, gathered.book.shape_mv, weights)
     is_analysable = quality.is_outside(bad, found.segment, sample)
     table = beats.beat_table(
         found, sample, timing, labels, gathered.book, is_analysable, options.full_pause_tolerance_pct
     )
-    analysable_s = quality.analysable_s(judged, bad, fs_hz)
+    analysable_s = quality.analysable_s(seen, bad, fs_hz)
     return Analysis(
         table,
         beats.family_table(table, gathered.book, labels),
@@ -167,17 +169,16 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
         bad,
         _findings(analysable_s, table),
         fs_hz,
-        tuple(segment.n_samples for segment in judged),
+        tuple(lengths.tolist()),
         analysable_s,
     )
 
 
 def _timing(
-    found: beats.Found, bad: quality.QualityWindows, judged: list[quality.SegmentBlocks], fs_hz: float
+    found: beats.Found, bad: QualityWindows, lengths: NDArray[np.int64], fs_hz: float
 ) -> tuple[NDArray[np.int64], classify.Timing]:
     position = signal.working_to_sample(found.working, fs_hz)
-    last = np.array([segment.n_samples for segment in judged], dtype=np.int64) - 1
-    sample = np.clip(np.rint(position).astype(np.int64), 0, last[found.segment] if position.size else 0)
+    sample = np.clip(np.rint(position).astype(np.int64), 0, lengths[found.segment] - 1)
     gap = quality.has_gap_before(bad, found.segment, sample)
     before, after = rhythm.rr_intervals_ms(found.segment, position, fs_hz, gap)
     return sample, classify.Timing(before, after, rhythm.usual_rr_ms(before, after))

@@ -68,6 +68,14 @@ def join(parts: list[ChunkBeats]) -> ChunkBeats:
     return ChunkBeats(*(np.concatenate(column) for column in zip(*parts, strict=True)))
 
 
+def join_blocks(parts: list[Blocks]) -> Blocks:
+    """Blocks of consecutive chunks as one; none for a segment shorter than a working sample."""
+    if not parts:
+        flag, number = np.empty(0, dtype=bool), np.empty(0, dtype=np.float32)
+        return Blocks(flag, flag, flag, number, number)
+    return Blocks(*(np.concatenate(column) for column in zip(*parts, strict=True)))
+
+
 def cuts(n_samples: int, fs_hz: float, chunk_s: float) -> Iterator[tuple[int, int]]:
     """Half-open ranges of working samples that cover a segment; the last may be shorter and end inside a block."""
     n_working = signal.working_length(n_samples, fs_hz)
@@ -136,9 +144,9 @@ def _shapes(signal_mv: NDArray[np.float32], working: NDArray[np.float64]) -> NDA
 
 
 def _noise(energy: NDArray[np.float32], cell: NDArray[np.int64], n_blocks: int) -> NDArray[np.float32]:
-    """Mean energy per block outside 160 ms around the beats."""
+    """Mean energy per block from 290 ms after each beat to 130 ms before the next, NaN where that is too little."""
     outside = np.ones(energy.size, dtype=np.float32)
-    for offset in range(-4, 6):
+    for offset in range(-4, 10):
         outside[np.clip(cell + offset, 0, energy.size - 1)] = 0
     total = (energy * outside).reshape(n_blocks, -1).sum(axis=1)
     count = outside.reshape(n_blocks, -1).sum(axis=1)

@@ -1,4 +1,11 @@
-"""Which time is analysable: flat, rail, missing, lead-off and noisy stretches, from the blocks of all chunks."""
+"""Which time is analysable: flat, rail, missing, lead-off and noisy stretches.
+
+Noise is judged from two measures that look at different things: the slope energy between the beats, against that of the
+recording's own quiet time, and how far the beats lie from the shapes of their families. Both together, or one of them
+strongly, make a stretch noisy; a fast or irregular rhythm of steady shapes raises neither. The limits are ours, set on
+recordings with added noise; fixed limits do not carry over between recordings (J R Soc Interface 2022;19:20220012), so
+the first is relative.
+"""
 
 from __future__ import annotations
 
@@ -12,108 +19,122 @@ from detectors.chunks import Blocks
 from detectors.results import QualityWindows
 from detectors.signal import WORKING_FS_HZ
 
-NOISE_REACH_BLOCKS = 3  # 10.8 s in all
-NOISE_LIMIT = 0.35  # of the QRS level, noise energy between beats
+REACH_BLOCKS = 2  # either side: 7.7 s in all
+QUIET_PERCENTILE = 25
+NOISY = 1.8  # times the quiet level, together with ODD
+ODD = 0.015  # mean distance of the beats from their families
+VERY_NOISY = 3.0
+VERY_ODD = 0.08
+DISTANCE_CAP = 0.3  # one beat of its own shape must not condemn a stretch
+LEAD_OFF = 0.15  # of the recording's usual QRS level
 
 
-class SegmentBlocks(NamedTuple):
-    """Blocks of one segment with the reason why each is not analysable."""
+class Seen(NamedTuple):
+    """Blocks and beats of one segment, as quality needs them."""
 
-    reason: NDArray[np.str_]  # shape (n_blocks,), '' when analysable
     n_samples: int
+    blocks: Blocks
+    beat_working: NDArray[np.float64]  # shape (n_beats,), working samples
+    distance: NDArray[np.float32]  # shape (n_beats,), 1 - correlation with the nearest family
 
 
-def judge(blocks: Blocks, n_samples: int) -> SegmentBlocks:
-    """Reason per block, '' when the block is analysable."""
-    reason = np.full(blocks.is_flat.size, "", dtype="<U8")
-    reason[_noisy(blocks)] = "noise"
-    reason[blocks.is_flat] = "flat"
-    reason[blocks.is_rail] = "rail"
-    reason[blocks.is_missing] = "missing"
-    return SegmentBlocks(reason, n_samples)
+def windows(seen: list[Seen], fs_hz: float) -> QualityWindows:
+    """Stretches of all segments that are not analysable, each with its reason."""
+    quiet, usual_level = _usual(seen)
+    parts = [_stretches(_reasons(one, quiet, usual_level), one.n_samples, fs_hz) for one in seen]
+    number = np.repeat(np.arange(len(parts)), [reason.size for _, _, reason in parts])
+    first, last, reason = (np.concatenate(column) for column in zip(*parts, strict=True)) if parts else _NOTHING
+    return QualityWindows(number.astype(np.int16), first, last, reason)
 
 
-def _noisy(blocks: Blocks) -> NDArray[np.bool_]:
-    noise = np.nan_to_num(blocks.noise, nan=0.0)
-    known = ~np.isnan(blocks.noise)
-    near = _near_mean(noise, known, NOISE_REACH_BLOCKS)
-    return np.isinf(blocks.level) | (near > NOISE_LIMIT * blocks.level)
+_NOTHING = (np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64), np.empty(0, dtype="<U8"))
 
 
-def _near_mean(values: NDArray[np.float32], known: NDArray[np.bool_], reach: int) -> NDArray[np.float64]:
-    total = np.concatenate([[0.0], np.cumsum(values, dtype=np.float64)])
-    count = np.concatenate([[0], np.cumsum(known)])
-    index = np.arange(values.size)
-    low, high = np.maximum(index - reach, 0), np.minimum(index + reach + 1, values.size)
-    return (total[high] - total[low]) / np.maximum(count[high] - count[low], 1)
-
-
-def windows(judged: list[SegmentBlocks], fs_hz: float) -> QualityWindows:
-    """Stretches of equal reason, in samples."""
-    rows: list[tuple[int, int, int, str]] = []
-    for number, (reason, n_samples) in enumerate(judged):
-        if reason.size == 0:
-            if n_samples:
-                rows.append((number, 0, n_samples - 1, "missing"))
-            continue
-        change = np.flatnonzero(reason[1:] != reason[:-1]) + 1
-        first = np.concatenate([[0], change])
-        last = np.concatenate([change, [reason.size]])
-        for a, b in zip(first, last, strict=True):
-            if reason[a]:
-                begin, end = block_edge(a, fs_hz, n_samples), block_edge(b, fs_hz, n_samples)
-                end = n_samples if b == reason.size else end
-                rows.append((number, begin, end - 1, str(reason[a])))
-    columns = list(zip(*rows, strict=True)) if rows else [(), (), (), ()]
-    return QualityWindows(
-        np.array(columns[0], dtype=np.int16),
-        np.array(columns[1], dtype=np.int64),
-        np.array(columns[2], dtype=np.int64),
-        np.array(columns[3], dtype="<U8"),
-    )
-
-
-def block_edge(block: int, fs_hz: float, n_samples: int) -> int:
-    """First stored sample of a block."""
-    return min(int(np.ceil(block * qrs.BLOCK * fs_hz / WORKING_FS_HZ)), n_samples)
-
-
-def analysable_s(judged: list[SegmentBlocks], bad: QualityWindows, fs_hz: float) -> float:
+def analysable_s(seen: list[Seen], bad: QualityWindows, fs_hz: float) -> float:
     """Seconds outside all bad windows."""
-    return (sum(s.n_samples for s in judged) - int((bad.last_sample - bad.first_sample + 1).sum())) / fs_hz
+    return (sum(one.n_samples for one in seen) - int((bad.last_sample - bad.first_sample + 1).sum())) / fs_hz
 
 
-def no_blocks() -> Blocks:
-    """Quality of a segment too short for one working sample."""
-    flag, number = np.zeros(0, dtype=bool), np.zeros(0, dtype=np.float32)
-    return Blocks(flag, flag, flag, number, number)
+def _usual(seen: list[Seen]) -> tuple[float, float]:
+    """Noise of the recording's quiet time and usual QRS level; noise relative to the level."""
+    noise = [_relative_noise(one.blocks) for one in seen]
+    known = np.concatenate([part[~np.isnan(part)] for part in noise]) if noise else np.empty(0)
+    level = np.concatenate([one.blocks.level[np.isfinite(one.blocks.level)] for one in seen]) if seen else np.empty(0)
+    quiet = float(np.percentile(known, QUIET_PERCENTILE)) if known.size else np.inf
+    return quiet, float(np.median(level)) if level.size else 0.0
 
 
-def join(parts: list[Blocks]) -> Blocks:
-    """Blocks of consecutive chunks as one."""
-    return Blocks(*(np.concatenate(column) for column in zip(*parts, strict=True))) if parts else no_blocks()
+def _relative_noise(blocks: Blocks) -> NDArray[np.float64]:
+    """Noise over the QRS level, mean of the blocks near by, NaN where nothing is known."""
+    ratio = blocks.noise / blocks.level
+    known = np.isfinite(ratio)
+    count = _near_sum(known.astype(np.float64))
+    near = _near_sum(np.where(known, ratio, 0))
+    return np.divide(near, count, out=np.full(ratio.size, np.nan), where=count > 0)
+
+
+def _oddness(one: Seen) -> NDArray[np.float64]:
+    """Mean distance of the beats near each block from their families; 0 where there is none."""
+    n_blocks = one.blocks.noise.size
+    block = np.minimum(one.beat_working // qrs.BLOCK, n_blocks - 1).astype(np.int64)
+    count = _near_sum(np.bincount(block, minlength=n_blocks).astype(np.float64))
+    total = _near_sum(np.bincount(block, np.minimum(one.distance, DISTANCE_CAP), minlength=n_blocks))
+    return total / np.maximum(count, 1)
+
+
+def _near_sum(values: NDArray[np.float64]) -> NDArray[np.float64]:
+    total = np.concatenate([[0.0], np.cumsum(values)])
+    index = np.arange(values.size)
+    return total[np.minimum(index + REACH_BLOCKS + 1, values.size)] - total[np.maximum(index - REACH_BLOCKS, 0)]
+
+
+def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.str_]:
+    """Reason per block why it is not analysable, '' when it is."""
+    blocks = one.blocks
+    if blocks.noise.size == 0:
+        return np.empty(0, dtype="<U8")
+    noise, odd = np.nan_to_num(_relative_noise(blocks), nan=0.0), _oddness(one)
+    is_noisy = (noise > NOISY * quiet) & (odd > ODD) | (noise > VERY_NOISY * quiet) | (odd > VERY_ODD)
+    return np.select(
+        [
+            blocks.is_missing,
+            blocks.is_rail,
+            blocks.is_flat,
+            ~(blocks.level >= LEAD_OFF * usual_level) | np.isinf(blocks.level),
+            is_noisy,
+        ],
+        ["missing", "rail", "flat", "lead_off", "noise"],
+        "",
+    ).astype("<U8")
+
+
+def _stretches(
+    reason: NDArray[np.str_], n_samples: int, fs_hz: float
+) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.str_]]:
+    """First sample, last sample and reason of every stretch of equal reason."""
+    if reason.size == 0:
+        return (*np.array([[0], [n_samples - 1]])[:, : int(n_samples > 0)], np.full(int(n_samples > 0), "missing"))
+    edge = np.concatenate([[0], np.flatnonzero(reason[1:] != reason[:-1]) + 1, [reason.size]])
+    sample = np.minimum(np.ceil(edge * qrs.BLOCK * fs_hz / WORKING_FS_HZ).astype(np.int64), n_samples)
+    sample[-1] = n_samples
+    is_bad = reason[edge[:-1]] != ""
+    return sample[:-1][is_bad], sample[1:][is_bad] - 1, reason[edge[:-1]][is_bad]
 
 
 def is_outside(bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.bool_]:
     """True for every beat that lies in no bad window, shape (n_beats,)."""
-    return _window_before(bad, segment, sample) < 0
+    if bad.segment.size == 0:
+        return np.ones(sample.size, dtype=bool)
+    row = np.searchsorted(_key(bad.segment, bad.first_sample), _key(segment, sample), side="right") - 1
+    near = np.maximum(row, 0)
+    return ~((row >= 0) & (bad.segment[near] == segment) & (sample <= bad.last_sample[near]))
 
 
 def has_gap_before(bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.bool_]:
     """True where a window without signal lies between a beat and the one before it, shape (n_beats,)."""
     silent = QualityWindows(*(column[bad.quality_reason != "noise"] for column in bad))
     ended = np.searchsorted(_key(silent.segment, silent.last_sample), _key(segment, sample))
-    return np.concatenate([[False], np.diff(ended) > 0]) if sample.size else np.zeros(0, dtype=bool)
-
-
-def _window_before(bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.int64]:
-    """Row of the bad window that holds each beat, -1 for none."""
-    if bad.segment.size == 0:
-        return np.full(sample.size, -1, dtype=np.int64)
-    row = np.searchsorted(_key(bad.segment, bad.first_sample), _key(segment, sample), side="right") - 1
-    near = np.maximum(row, 0)
-    holds = (row >= 0) & (bad.segment[near] == segment) & (sample <= bad.last_sample[near])
-    return np.where(holds, row, -1)
+    return np.diff(ended, prepend=ended[:1]) > 0
 
 
 def _key(segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.int64]:
