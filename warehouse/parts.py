@@ -149,7 +149,7 @@ def write_part(lake: Path, table: str, key: str, frame: pl.DataFrame, *, fingerp
 def write_signal(lake: Path, recording_id: str, segment: int, block: int, samples: NDArray[np.int16]) -> Part:
     """Land one block of a segment's samples, shape (at most BLOCK_SAMPLES,), int16 counts.
 
-    Stored are the steps between neighbours modulo 2**16, the first from 0, with the sign in the lowest bit: a slow signal
+    Stored are the steps between neighbours modulo 2**16, the first from 0, the sign in the lowest bit: a slow signal
     needs less than half the bytes that way, and the wrap makes it exact for every int16 value.
     """
     if samples.dtype != np.int16 or samples.ndim != 1 or not 0 < samples.size <= BLOCK_SAMPLES:

@@ -215,6 +215,10 @@ COLUMNS: dict[str, Column] = _dictionary(
         "Probability that the true reduction exceeds the programme's success limit.",
     ),
     ("variance_source", "VARCHAR", "", "Where the day-to-day variance came from: patient, programme or both."),
+    ("day_sd_ln", "DOUBLE", "", "SD of the natural logarithm of the level between days, as used for the chance limits."),
+    ("days_to_settle", "BIGINT", "d", "More wear days after that would put the same ratio beyond chance, if any would."),
+    ("expected_regression_pct", "DOUBLE", "%", "Fall that regression to the mean brings if the baseline was chosen."),
+    ("recurrence_day", "DATE", "", "First day on which the burden is back beyond chance after it had fallen."),
     ("verdict", "VARCHAR", "", "fell_beyond_chance, rose_beyond_chance, within_chance or too_little_wear."),
     # attention, reviews, runs
     ("attention_code", "VARCHAR", "", "Reason code of the attention list."),
@@ -433,8 +437,8 @@ PUBLISHED: dict[str, Table] = _tables(
         ("patient_code", "therapy_id", "measure", "baseline_value", "after_value", "baseline_days", "after_days",
          "baseline_analysable_h", "after_analysable_h", "baseline_clock_coverage_pct", "after_clock_coverage_pct",
          "baseline_rate_bpm", "after_rate_bpm", "ratio", "ratio_low", "ratio_high", "change_pct",
-         "chance_fall_limit_pct", "chance_rise_limit_pct", "success_probability_pct", "variance_source", "verdict",
-         "reason"),
+         "chance_fall_limit_pct", "chance_rise_limit_pct", "success_probability_pct", "day_sd_ln", "variance_source",
+         "days_to_settle", "expected_regression_pct", "recurrence_day", "verdict", "reason"),
     ),
     Table(
         "attention", "one row per patient and reason for a look", ("patient_code", "attention_code"),
