@@ -14,7 +14,7 @@ _LEAD = re.compile(
     r"(M?L?(I|II|III)|D[1-3]|AV[RLF]|M?V[1-9]R?|MCL?[1-6]|C[MCBSR]?[1-6]|ES|AS|AI|[XYZ]|(LEAD|MOD) ?\S+)([ +].*)?",
     re.IGNORECASE,
 )
-_ECG = re.compile(r"\b(ECG|EKG)|(ECG|EKG)\b", re.IGNORECASE)
+ECG_NAME = re.compile(r"\b(ECG|EKG)|(ECG|EKG)\b", re.IGNORECASE)
 
 
 def mv_per_unit(unit: str) -> float | None:
@@ -30,9 +30,9 @@ def choose(labels: Sequence[str], units: Sequence[str], wanted: str, where: str)
     """
     if wanted:
         return _named(labels, wanted, where), ()
-    named = [n for n, label in enumerate(labels) if _ECG.search(label)]
+    named = [n for n, label in enumerate(labels) if ECG_NAME.search(label)]
     if len(named) != 1:
-        named = [n for n, label in enumerate(labels) if _ECG.search(label) or _LEAD.fullmatch(_bare(label))]
+        named = [n for n, label in enumerate(labels) if ECG_NAME.search(label) or _LEAD.fullmatch(_bare(label))]
     if len(named) == 1:
         return named[0], ()
     if named:
@@ -48,7 +48,7 @@ def choose(labels: Sequence[str], units: Sequence[str], wanted: str, where: str)
 
 
 def _bare(label: str) -> str:
-    return _ECG.sub("", label).strip(" -_:")
+    return ECG_NAME.sub("", label).strip(" -_:")
 
 
 def _named(labels: Sequence[str], wanted: str, where: str) -> int:

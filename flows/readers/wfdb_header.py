@@ -69,7 +69,8 @@ def looks_like_header(head: bytes) -> bool:
         return False
     if int(record["signals"]) == 0 or len(lines) == 1:
         return record["rate"] is not None
-    return re.match(rb"\S+[ \t]+\d+", lines[1]) is not None
+    # A file or segment name has a letter (or is ~), so columns of numbers are no header.
+    return re.match(rb"(?=\S*[A-Za-z_~])\S+[ \t]+\d+", lines[1]) is not None or record["segments"] is not None
 
 
 def _lines(text: bytes) -> list[bytes]:
