@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import functools
 import json
 import math
 import random
@@ -56,8 +57,9 @@ def beat_shape(width_s: float, up_mv: float) -> list[float]:
     ]
 
 
-def strip_row(recording_id: str, order: int, beat_class: str, start: datetime, fs_hz: float = 250.0) -> dict[str, Any]:
-    """Return ten seconds with twelve beats, two of them of the class."""
+@functools.cache
+def strip_trace(beat_class: str, fs_hz: float) -> tuple[list[float], list[float], list[str]]:
+    """Return ten seconds of samples, the times of twelve beats, two of them of the class, and their classes."""
     beats = [(0.4 + 0.82 * i - (0.25 if i in (4, 9) and beat_class != "N" else 0)) for i in range(12)]
     classes = [beat_class if i in (4, 9) else "N" for i in range(12)]
     samples = []
@@ -69,6 +71,11 @@ def strip_row(recording_id: str, order: int, beat_class: str, start: datetime, f
                 wide, up = (0.045, -1.3) if kind == "V" else (0.018, 1.1)
                 value += up * math.exp(-(((t - at) / wide) ** 2)) + 0.2 * math.exp(-(((t - at - 0.28) / 0.06) ** 2))
         samples.append(round(value, 4))
+    return samples, beats, classes
+
+
+def strip_row(recording_id: str, order: int, beat_class: str, start: datetime, fs_hz: float = 250.0) -> dict[str, Any]:
+    samples, beats, classes = strip_trace(beat_class, fs_hz)
     return {
         "recording_id": recording_id, "fingerprint": "f00dfeed", "segment": 0, "first_sample": order * 5000,
         "start_utc": start + timedelta(minutes=37 * order), "fs_hz": fs_hz,
