@@ -26,7 +26,7 @@ LATE = 0.3  # log of RR before over RR after: a beat after a pause
 LATE_WIDTH = 0.2  # log of the width over normal: a narrow late beat is a normal one
 
 TERMS = ("constant", "distance", "width", "early", "off_time", "single_wide")
-WEIGHTS = np.array([-4.1, 2.7, 1.1, 3.6, 2.1, 1.0])
+WEIGHTS = np.array([-4.0, 2.6, 1.3, 3.1, 2.4, 1.0])
 
 LOOSE_WEIGHTS = (-2.2, 0.5, 1.9)  # constant, log odds of the nearest family, early
 
@@ -148,7 +148,7 @@ def _joins(
     share = habits.n_beats[row] / habits.n_beats.sum()
     keeps_time = habits.on_time[row] / max(habits.on_time[main], 0.01)
     early = habits.early[row]
-    same = like > 0.96 and wider < 1.15
+    same = (like > 0.96 and wider < 1.15) or (like > 0.92 and 0.85 < wider < 1.1)
     similar = like > 0.9 and wider < 1.2 and early < 0.5 and habits.asymmetry[row] > -0.25 and habits.n_beats[row] >= 5
     narrow = wider_than_main < 1.3 and early < 0.15 and keeps_time > 0.7 and share >= 0.005 and habits.n_beats[row] >= 8
     block = early < 0.1 and keeps_time > 0.8 and share >= 0.02 and habits.stretch[row] > 15 and wider_than_main < 1.75

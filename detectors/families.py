@@ -43,9 +43,13 @@ def core(shape_mv: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np
     return _unit(shape_mv[:, SHAPE_BEFORE - CORE_BEFORE : SHAPE_BEFORE - CORE_BEFORE + CORE_LENGTH])
 
 
+_LINE = np.linalg.qr(np.vander(np.linspace(-1, 1, CORE_LENGTH), 2))[0].astype(
+    np.float32
+)  # level and slope, orthonormal
+
+
 def _unit(stretch: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
-    level = stretch @ np.full(stretch.shape[-1], 1 / stretch.shape[-1], dtype=np.float32)
-    stretch = stretch - level[..., None]
+    stretch = stretch - (stretch @ _LINE) @ _LINE.T
     size = np.maximum(np.sqrt(np.einsum("...j,...j->...", stretch, stretch)), np.float32(1e-6))
     return stretch / size[..., None], size
 

@@ -25,8 +25,11 @@ def amplitude_mv(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
 
 
 def spread_ms(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
-    """Four standard deviations of the squared slope in time, shape (n_beats,): a width that noise moves little."""
-    slope = np.diff(shape_mv[:, _at(-120) : _at(160)], axis=1)
+    """Four standard deviations of the squared slope in time, shape (n_beats,): a width that noise moves little.
+
+    From 96 ms before to 112 ms after the R peak, so that the T wave before an early beat stays outside.
+    """
+    slope = np.diff(shape_mv[:, _at(-96) : _at(112)], axis=1)
     slope *= slope
     time = np.arange(slope.shape[1], dtype=np.float32) * np.float32(1000 / WORKING_FS_HZ)
     total = np.maximum(slope.sum(axis=1), 1e-12)

@@ -127,7 +127,8 @@ def _without_weaker_neighbours(candidates: Peaks, beat: NDArray[np.int64]) -> ND
             break
         gap_s = np.diff(candidates.cell[beat]) * (CELL / WORKING_FS_HZ)
         energy, sharpness = candidates.energy[beat], candidates.sharpness[beat]
-        later_is_weaker = energy[1:] < energy[:-1]
+        strength = energy * sharpness
+        later_is_weaker = strength[1:] < strength[:-1]
         close = gap_s < REFRACTORY_S
         t_wave = _is_t_wave(gap_s, energy[1:] / energy[:-1], sharpness[1:] / sharpness[:-1])
         drop = np.zeros(beat.size, dtype=bool)
