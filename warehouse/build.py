@@ -27,14 +27,14 @@ MODELS: dict[str, tuple[str, ...]] = {
     "intermediate": ("hours", "local_hours", "wear_days", "period_spans", "periods"),
     "marts": (
         "deliveries", "recordings", "segments", "families", "episodes", "findings", "attention_from_days",
-        "attention_from_therapies", "attention", "review_sheet", "reviews", "runs_of_flow", "fingerprints",
+        "attention_from_therapies", "attention", "review_sheet", "reviews", "runs_of_flow", "audit", "fingerprints",
     ),
 }  # fmt: skip
 
 READ_IN_PLACE = ("beats", "quality_windows", "strips")
 """Published tables that are too large to copy: views over the parts, in the build and in the publication."""
 
-_NOT_FOR_MODELS = ("signal", "pieces")
+_NOT_FOR_MODELS = ("signal", "pieces", "inputs")
 
 REGISTER: dict[str, dict[str, str]] = {
     "patients": {"patient_code": "VARCHAR", "zone": "VARCHAR"},

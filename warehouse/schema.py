@@ -247,6 +247,18 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("beat_samples", "BIGINT[]", "samples", "R peaks within the strip, from its first sample."),
     ("beat_classes", "VARCHAR[]", "", "Classes of those beats."),
     ("beat_families", "BIGINT[]", "", "Families of those beats, -1 for none."),
+    # inputs and audit
+    ("input_file", "VARCHAR", "", "Register file or settings file."),
+    ("input_row", "VARCHAR", "", "What identifies the row within its file, or the section of the settings."),
+    ("input_column", "VARCHAR", "", "Column of the register file, or name of the setting."),
+    ("input_value", "VARCHAR", "", "Value as written, NULL for a blank."),
+    ("change_id", "VARCHAR", "", "Code of one change that can move a number."),
+    ("happened_utc", "TIMESTAMP", "UTC", "Instant at which the change was made or noticed."),
+    ("actor_code", "VARCHAR", "", "Code of the person or account that made the change, NULL when nobody is known."),
+    ("change_kind", "VARCHAR", "", "register, settings, delivery, review, promotion or cut."),
+    ("subject", "VARCHAR", "", "What was changed: file, row and column; a delivery; a beat; a fingerprint; a cut."),
+    ("old_value", "VARCHAR", "", "Value before, NULL when there was none."),
+    ("new_value", "VARCHAR", "", "Value after, NULL when it was taken away."),
     # parts
     ("part_key", "VARCHAR", "", "Load that the part belongs to: a recording, a delivery, a run or a fingerprint."),
     ("part_path", "VARCHAR", "", "Path of the part's file, relative to the lake."),
@@ -385,6 +397,15 @@ LAKE: dict[str, Table] = _tables(
         ("recording_id", "segment", "sample", "reader_code", "reviewed_utc", "decision"),
     ),
     Table(
+        "inputs", "one row per value of the register files and the settings, as last seen",
+        ("input_file", "input_row", "input_column"),
+        ("input_file", "input_row", "input_column", "input_value"),
+    ),
+    Table(
+        "audit", "one row per change of register or settings, promotion or cut", ("change_id",),
+        ("change_id", "happened_utc", "actor_code", "change_kind", "subject", "old_value", "new_value", "reason"),
+    ),
+    Table(
         "runs_of_flow", "one row per run of the nightly flow that had something to do", ("run_id",),
         ("run_id", "finished_utc", "accepted_count", "waiting_count", "skipped_count", "quarantined_count", "outcome"),
     ),
@@ -451,6 +472,10 @@ PUBLISHED: dict[str, Table] = _tables(
     ),
     LAKE["reviews"],
     LAKE["runs_of_flow"],
+    Table(
+        "audit", "one row per change that can move a number, deliveries and reviews among them", ("change_id",),
+        LAKE["audit"].columns,
+    ),
     Table(
         "fingerprints", "one row per detector version and result settings that made beats", ("fingerprint",),
         ("fingerprint", "detector_version", "settings_json", "is_published"),

@@ -1,0 +1,25 @@
+-- one row per change that can move a number, deliveries and reviews among them; key change_id
+SELECT change_id, happened_utc, actor_code, change_kind, subject, old_value, new_value, reason
+FROM lake.audit
+UNION ALL
+SELECT
+    'delivery ' || delivery_id,
+    received_utc,
+    NULL,
+    'delivery',
+    coalesce(recording_id, file_name),
+    NULL,
+    status,
+    reason
+FROM lake.deliveries
+UNION ALL
+SELECT
+    concat_ws(' ', 'review', recording_id, segment, sample, reader_code),
+    reviewed_utc,
+    reader_code,
+    'review',
+    concat_ws(' ', recording_id, segment, sample),
+    NULL,
+    decision,
+    NULL
+FROM lake.reviews
