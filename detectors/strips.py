@@ -89,7 +89,7 @@ def _episode_candidates(analysis: Analysis) -> Iterator[tuple[int, int, str, str
 def _beat_candidates(analysis: Analysis, beat_class: str) -> Iterator[tuple[int, int, str, str]]:
     beats = analysis.beats
     of_class = beats.is_analysable & (beats.beat_class == beat_class)
-    numbers, sizes = np.unique(beats.family[of_class], return_counts=True)
+    numbers, sizes = np.unique(beats.family[of_class & (beats.family >= 0)], return_counts=True)
     for family in numbers[np.argsort(-sizes, kind="stable")][:FAMILIES_PER_CLASS]:
         rows = np.flatnonzero(of_class & (beats.family == family))
         by_certainty = rows[np.argsort(beats.class_probability[rows], kind="stable")]

@@ -1,3 +1,5 @@
+from itertools import pairwise
+
 import numpy as np
 
 from detectors.results import Analysis, Beats, Episodes, Families, QualityWindows
@@ -15,7 +17,8 @@ def analysis(classes: str, *, families=None, probability=None, episodes=(), leng
         np.zeros(n, np.int16), sample, blank, blank, np.array(list(classes), "<U1"),
         np.ones(n, np.float32) if probability is None else np.asarray(probability, np.float32),
         np.zeros(n, np.int16) if families is None else np.asarray(families, np.int16),
-        blank, blank, np.ones(n, np.int8), blank, blank, np.zeros(n, np.int8), blank, np.zeros(n, bool), np.ones(n, bool),
+        blank, blank, np.ones(n, np.int8), blank, blank, np.zeros(n, np.int8), blank, np.zeros(n, bool),
+        np.ones(n, bool),
     )  # fmt: skip
     first = np.array([int(e[1] * FS_HZ) for e in episodes], np.int64)
     found = Episodes(
@@ -56,7 +59,7 @@ def test_strips_do_not_overlap_and_are_few():
     found = choose_strips(analysis(classes, families=rng.integers(0, 12, 5000), episodes=episodes))
     assert 0 < len(found) <= MAX_STRIPS
     spans = sorted((strip.first_sample, strip.first_sample + strip.n_samples) for strip in found)
-    assert all(end <= begin for (_, end), (begin, _) in zip(spans, spans[1:], strict=False))
+    assert all(end <= begin for (_, end), (begin, _) in pairwise(spans))
 
 
 def test_a_short_recording_gives_one_strip_of_its_length():
@@ -65,6 +68,14 @@ def test_a_short_recording_gives_one_strip_of_its_length():
     (strip,) = choose_strips(short)
     assert (strip.first_sample, strip.n_samples) == (0, 300)
     assert beats_within(short, strip).tolist() == [0, 1, 2]
+
+
+def test_beats_of_no_family_are_not_typical_of_anything():
+    """Beats that belong to no family are shown on no strip of their own."""
+    classes = "".join("V" if second == 30 else "N" for second in range(100))
+    families = np.where(np.arange(100) == 30, -1, 0)
+    found = choose_strips(analysis(classes, families=families))
+    assert [strip.strip_reason for strip in found] == ["the normal beat in the middle of the recording"]
 
 
 def test_no_beats_give_no_strips():
