@@ -9,11 +9,11 @@ from collections.abc import Sequence
 from pathlib import Path
 from types import ModuleType
 
-from flows.readers import aecg, archive, edf, ishne, parquet, text, wfdb
+from flows.readers import aecg, archive, dicom, edf, ishne, parquet, text, wfdb
 from flows.readers.codes import Refused
 from flows.readers.recording import NO_SITE, Opened, Site
 
-READERS: tuple[ModuleType, ...] = (edf, ishne, parquet, aecg, wfdb, text)
+READERS: tuple[ModuleType, ...] = (edf, ishne, dicom, parquet, aecg, wfdb, text)
 
 HEAD_BYTES = 4096
 NO_LIMITS = archive.Limits()
