@@ -11,6 +11,7 @@ from dashboards import addresses, words
 from dashboards.tables import Tables
 
 PAGE = "index.html"
+TABLES = ("patients", "wear_days", "recordings", "therapies", "changes", "attention", "deliveries", "runs_of_flow")
 LONGEST_CALENDAR_D = 120
 SHORTEST_CALENDAR_D = 28
 WEAR_LEVELS = ("none", "short", "valid")
@@ -31,7 +32,7 @@ def context(tables: Tables) -> dict[str, Any]:
     calendar = calendar_days(wear_days["local_day"].min(), last_day) if last_day else None  # type: ignore[arg-type]
     attention = tables.whole("attention").sort("attention_rank", "patient_code", "attention_code")
     ranks = _first_ranks(attention)
-    codes = sorted(tables.patients["patient_code"], key=lambda code: (ranks.get(code, len(ranks) + 1), code))
+    codes = sorted(tables.whole("patients")["patient_code"], key=lambda code: (ranks.get(code, len(ranks) + 1), code))
     deliveries = tables.whole("deliveries").sort("received_utc", "delivery_id", descending=[True, False])
     return {
         "last_day": last_day,

@@ -24,7 +24,7 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
     events = [_event(row, rows["changes"], rows["periods"]) for row in therapies.rows(named=True)]
     measured = wear_days.drop_nulls("v_burden_pct")
     return {
-        "patient": tables.patients.row(by_predicate=pl.col("patient_code") == patient_code, named=True),
+        "patient": rows["patients"].row(0, named=True),
         "wear_days": wear_days.rows(named=True),
         "first_day": wear_days["local_day"].min(),
         "last_day": wear_days["local_day"].max(),

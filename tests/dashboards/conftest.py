@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 import functools
+import hashlib
 import json
 import math
 import random
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from datetime import date, datetime, timedelta
 from typing import Any
 
@@ -27,16 +28,34 @@ ZONE = "Atlantic/Azores"
 CLASS_NAMES = ("n_beats", "s_beats", "v_beats", "f_beats", "q_beats", "all_beats")
 
 
+def typed(name: str, rows: list[dict[str, Any]]) -> pl.DataFrame:
+    """Return rows as the published table of this name; a column that a row does not give is NULL."""
+    schema = {column: TYPES[COLUMNS[column].type] for column in PUBLISHED[name].columns}
+    return pl.DataFrame([{column: row.get(column) for column in schema} for row in rows], schema=schema)
+
+
+def parts_of(name: str, frame: pl.DataFrame) -> Iterator[dict[str, Any]]:
+    """Yield the part that holds each recording's rows, with the hash of what is in it."""
+    for (recording_id,), rows in frame.partition_by("recording_id", as_dict=True).items():
+        digest = hashlib.sha256(rows.write_ipc(None).getbuffer()).hexdigest()
+        yield {
+            "table_name": name,
+            "part_key": recording_id,
+            "part_path": f"{name}/{recording_id}",
+            "part_sha256": digest,
+        }
+
+
 class InventedPublication:
     """Stands in for a publication: `.table(name)` with the columns and types of the dictionary."""
 
     def __init__(self, rows: Mapping[str, list[dict[str, Any]]]) -> None:
-        self.rows = {name: list(rows.get(name, ())) for name in PUBLISHED}
+        self.frames = {name: typed(name, rows.get(name, [])) for name in PUBLISHED}
+        large = ("strips", "episodes", "quality_windows")
+        self.frames["parts"] = typed("parts", [part for name in large for part in parts_of(name, self.frames[name])])
 
     def table(self, name: str, where: Mapping[str, Any] | None = None) -> pl.DataFrame:
-        schema = {column: TYPES[COLUMNS[column].type] for column in PUBLISHED[name].columns}
-        rows = [{column: row.get(column) for column in schema} for row in self.rows[name]]
-        frame = pl.DataFrame(rows, schema=schema)
+        frame = self.frames[name]
         for column, value in (where or {}).items():
             frame = frame.filter(pl.col(column) == value)
         return frame

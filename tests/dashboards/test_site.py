@@ -131,6 +131,19 @@ def test_only_changed_pages_are_rendered_again(rows, publish, tmp_path):
     assert bytes_of(new) == bytes_of(build(publish(rows), tmp_path / "afresh"))
 
 
+def test_a_changed_strip_renders_its_recording_again(rows, publish, tmp_path):
+    """New strips of one recording render its page, its sheet and its patient, nothing else."""
+    old = build(publish(rows), tmp_path / "old")
+    rows["strips"][0]["strip_reason"] = "chosen by another rule"
+    new = build(publish(rows), tmp_path / "new", previous=old)
+    rendered = {address for address in pages_of(new) if not (new / address).samefile(old / address)}
+    assert rendered == {
+        "patients/SKERRY-0001.html",
+        "recordings/CN0000-20260302.html",
+        "review/CN0000-20260302.html",
+    }
+
+
 def test_another_programme_name_renders_every_page_again(rows, publish, tmp_path):
     """Pages made for another programme name are not taken over."""
     old = build(publish(rows), tmp_path / "old")
