@@ -71,7 +71,7 @@ def device_key(device_serial: str) -> str:
 def parts_of(lake: Path, pieces: pl.DataFrame, register: Register) -> dict[str, list[DeliveredPart]]:
     """The device's deliveries as parts of their recordings, in order of arrival; '' holds those without a wear."""
     found: dict[str, list[DeliveredPart]] = {}
-    ordered = pieces.sort("received_utc", "delivery_id", "piece", "block")
+    ordered = pieces.sort("arrival_number", "piece", "block")
     for (delivery_id,), blocks in ordered.group_by("delivery_id", maintain_order=True):
         head = blocks.row(0, named=True)
         matched = match(register, head["device_serial"], head["start_local"], head["file_zone"])
@@ -209,7 +209,7 @@ def _segment_rows(arrangement: Arrangement, recording_id: str) -> pl.DataFrame:
 
 
 def _recording_row(arrangement: Arrangement, segments: pl.DataFrame, wear: Wear, pieces: pl.DataFrame) -> pl.DataFrame:
-    head = pieces.sort("received_utc", "delivery_id", "piece", "block").row(0, named=True)
+    head = pieces.sort("arrival_number", "piece", "block").row(0, named=True)
     n_samples = int(segments["sample_count"].sum())
     codes = {code for codes in pieces["findings"].drop_nulls() for code in codes.split()}
     codes |= {found.code for findings in arrangement.findings.values() for found in findings}

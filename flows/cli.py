@@ -11,10 +11,17 @@ import sys
 from collections.abc import Sequence
 from typing import Any
 
-from flows.verbs import deliveries, detector, programme, tables
+from flows.verbs import cuts, deliveries, detector, lake, programme, tables
 from warehouse.cautions import PURPOSE
 
-VERBS = (*programme.VERBS, *deliveries.VERBS, *tables.VERBS, *detector.VERBS)
+VERBS = (
+    *programme.VERBS,
+    *deliveries.VERBS,
+    *tables.VERBS,
+    *cuts.VERBS,
+    *lake.VERBS,
+    *detector.VERBS,
+)
 
 ROOMS = ("flows", "detectors", "warehouse", "dashboards")
 

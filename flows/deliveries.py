@@ -112,7 +112,12 @@ class Pieces:
     def with_landed(self, device_serial: str, pieces: Iterable[pl.DataFrame], marks: Iterable[pl.DataFrame]) -> str:
         """Add what landed; returns the device's key."""
         key = device_key(device_serial)
-        self._frames["pieces", key] = pl.concat([self.of("pieces", key), *pieces])
+        before = self.of("pieces", key)
+        first = max(before["arrival_number"].to_list(), default=-1) + 1
+        numbered = [
+            frame.with_columns(pl.lit(first + n, pl.Int32).alias("arrival_number")) for n, frame in enumerate(pieces)
+        ]
+        self._frames["pieces", key] = pl.concat([before, *numbered])
         self._frames["delivered_marks", key] = pl.concat([self.of("delivered_marks", key), *marks])
         return key
 

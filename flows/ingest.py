@@ -161,7 +161,7 @@ class _Run:
         opened, serial, matched, file_zone = self._matched(candidate, opened)
         if may_postpone and len(matched.possible_starts) > 1:
             raise _Later
-        landed = land(self._lake, opened, Identity(delivery_id, serial, candidate.received_utc, file_zone))
+        landed = land(self._lake, opened, Identity(delivery_id, serial, file_zone))
         self._refuse_known_samples(landed, opened, matched)
         row = self._row(candidate, delivery_id, sha256) | {
             "status": ACCEPTED,

@@ -157,20 +157,27 @@ def _placed(parts: Sequence[DeliveredPart], zone: str) -> tuple[dict[str, int], 
 
 
 def _following(parts: Sequence[DeliveredPart]) -> dict[str, int]:
-    """Starts by the zone's rules; an ambiguous one is settled by the only candidate that touches a neighbour."""
+    """Starts by the zone's rules; an ambiguous one is settled by the only candidate that touches a neighbour.
+
+    Where two parts could take the same place, nothing says which is which, and neither is settled.
+    """
     starts_ns = {part.delivery_id: part.possible_starts_ns[0] for part in parts if len(part.possible_starts_ns) == 1}
-    open_parts = [part for part in parts if part.delivery_id not in starts_ns]
-    while open_parts:
-        settled = []
-        for part in open_parts:
-            touching = [start for start in part.possible_starts_ns if _touches(part, start, parts, starts_ns)]
-            if len(touching) == 1:
-                starts_ns[part.delivery_id] = touching[0]
-                settled.append(part)
+    while True:
+        settled: dict[str, int] = {}
+        for part in parts:
+            if part.delivery_id not in starts_ns:
+                touching = [start for start in part.possible_starts_ns if _touches(part, start, parts, starts_ns)]
+                if len(touching) == 1:
+                    settled[part.delivery_id] = touching[0]
+        places = list(settled.values())
+        settled = {name: start for name, start in settled.items() if sum(_are_twins(start, p) for p in places) == 1}
         if not settled:
-            break
-        open_parts = [part for part in open_parts if part not in settled]
-    return starts_ns
+            return starts_ns
+        starts_ns |= settled
+
+
+def _are_twins(start_ns: int, other_ns: int) -> bool:
+    return abs(start_ns - other_ns) <= SEAM_NS
 
 
 def _touches(part: DeliveredPart, start_ns: int, parts: Sequence[DeliveredPart], starts_ns: dict[str, int]) -> bool:
@@ -194,7 +201,10 @@ def _keeping(parts: Sequence[DeliveredPart], following: dict[str, int], zone: st
         part.delivery_id: part.possible_starts_ns[0] if part.wall_clock_ns is None else part.wall_clock_ns - offset_ns
         for part in parts
     }
-    return None if starts_ns == following else starts_ns
+    ordered = sorted(starts_ns.values())
+    if starts_ns == following or any(_are_twins(start, after) for start, after in pairwise(ordered)):
+        return None
+    return starts_ns
 
 
 def _seams(parts: Sequence[DeliveredPart], starts_ns: dict[str, int]) -> int:

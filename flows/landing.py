@@ -36,7 +36,6 @@ class Identity(NamedTuple):
 
     delivery_id: str
     device_serial: str
-    received_utc: object
     file_zone: str | None
 
 
@@ -105,7 +104,7 @@ def _pieces(opened: Opened, identity: Identity, blocks: list[Part], findings: tu
     common = {
         "delivery_id": identity.delivery_id,
         "device_serial": identity.device_serial,
-        "received_utc": identity.received_utc,
+        "arrival_number": 0,
         "start_local": opened.start_local,
         "start_resolution_ms": opened.start_resolution_ms,
         "file_zone": identity.file_zone,

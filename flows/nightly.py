@@ -61,19 +61,26 @@ Analyse = Callable[[Sequence[Work], Reporter], Iterator[dict]]
 
 
 def run(
-    folder: Path, *, reporter: Reporter = SILENT, wait_s: float = 0.0, analyse_all: Analyse | None = None
+    folder: Path,
+    *,
+    reporter: Reporter = SILENT,
+    wait_s: float = 0.0,
+    actor_code: str | None = None,
+    analyse_all: Analyse | None = None,
 ) -> Outcome:
     """Bring the published tables and pages of a programme folder up to date with inbox, register and settings.
 
+    `actor_code` stands in the history beside edits of register and settings that this run is the first to see.
     Raises SettingsError, RegisterError, FolderBusy, LedgerError or CheckFailed; the publication then stays as it was.
     """
-    from flows import ingest, publication, register
+    from flows import edits, ingest, publication, register
     from warehouse.ledger import Ledger
 
     settings = programme_settings.load(folder / "programme.toml")
     with folder_lock(folder, wait_s):
         people = register.load(folder, settings.programme.zone)
         ledger = Ledger(folder / "lake")
+        edits.note_edits(folder / "lake", settings, people, ledger, actor_code)
         arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)
         work = [Work(folder, recording_id, settings) for recording_id in unanalysed(ledger, settings)]
         for loads in (analyse_all or analyse_here)(work, reporter):

@@ -6,7 +6,8 @@ Nothing is published when a check returns a row; the publication of the day befo
 from __future__ import annotations
 
 import tempfile
-from collections.abc import Callable
+from collections.abc import Callable, Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import asdict
 from importlib.metadata import version
 from pathlib import Path
@@ -14,11 +15,13 @@ from pathlib import Path
 import polars as pl
 
 from dashboards.site import build_site
-from flows import detect, trends
+from flows import trends
+from flows.promotion import published_fingerprint
 from flows.register import Register
 from flows.settings import ChangeSettings, Settings
 from warehouse.build import TrendBuild
 from warehouse.ledger import Ledger
+from warehouse.parts import Part
 from warehouse.publish import publish
 
 SHOWN_ROWS = 3
@@ -34,19 +37,9 @@ def refresh(folder: Path, settings: Settings, people: Register, ledger: Ledger, 
     Returns whether anything changed. Raises CheckFailed when a check returns a row.
     """
     say("building tables")
-    register = _register_frames(people, settings.change)
-    with (
-        tempfile.TemporaryDirectory(prefix="build-", dir=folder / "lake") as workdir,
-        TrendBuild(
-            folder / "lake",
-            ledger.parts(),
-            register=register,
-            settings=_model_settings(settings),
-            fingerprint=detect.fingerprint_of(settings),
-            workdir=Path(workdir),
-        ) as build,
-    ):
-        _run_models(build, settings)
+    fingerprint = published_fingerprint(folder / "lake", settings)
+    with built(folder, settings, people, ledger.parts(), fingerprint) as build:
+        build.run_models("marts")
         _check(build)
         say("publishing")
         return publish(
@@ -63,12 +56,27 @@ def refresh(folder: Path, settings: Settings, people: Register, ledger: Ledger, 
         )
 
 
-def _run_models(build: TrendBuild, settings: Settings) -> None:
-    build.run_models("staging")
-    build.run_models("intermediate")
-    tables = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
-    build.add("changes", trends.changes(**tables, change=settings.change, wear=settings.wear))
-    build.run_models("marts")
+@contextmanager
+def built(
+    folder: Path, settings: Settings, people: Register, parts: Sequence[Part], fingerprint: str
+) -> Iterator[TrendBuild]:
+    """Build the tables up to `changes` from the given parts under one fingerprint."""
+    with (
+        tempfile.TemporaryDirectory(prefix="build-", dir=folder / "lake") as workdir,
+        TrendBuild(
+            folder / "lake",
+            parts,
+            register=_register_frames(people, settings.change),
+            settings=_model_settings(settings),
+            fingerprint=fingerprint,
+            workdir=Path(workdir),
+        ) as build,
+    ):
+        build.run_models("staging")
+        build.run_models("intermediate")
+        tables = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
+        build.add("changes", trends.changes(**tables, change=settings.change, wear=settings.wear))
+        yield build
 
 
 def _check(build: TrendBuild) -> None:

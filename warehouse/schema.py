@@ -82,6 +82,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("step", "USMALLINT", "counts", "Sample minus the one before, modulo 65,536, as 0, -1, 1, -2, ... = 0, 1, 2, 3, ..."),
     # landed pieces and marks
     ("piece", "SMALLINT", "", "Number of the gap-free stretch within the delivery, from 0."),
+    ("arrival_number", "INTEGER", "", "Order in which the deliveries of a device were accepted, from 0."),
     ("start_local", "TIMESTAMP", "", "First instant by the device's wall clock, NULL when the file has none."),
     ("start_resolution_ms", "INTEGER", "ms", "Resolution of the file's start."),
     ("file_zone", "VARCHAR", "", "Zone of start_local when the file or the site's settings say it."),
@@ -314,7 +315,7 @@ LAKE: dict[str, Table] = _tables(
             "piece",
             "block",
             "device_serial",
-            "received_utc",
+            "arrival_number",
             "start_local",
             "start_resolution_ms",
             "file_zone",

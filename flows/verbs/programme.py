@@ -8,7 +8,7 @@ import sys
 from pathlib import Path
 from typing import Any
 
-from flows.verbs.verb import Verb, folder_argument, json_option
+from flows.verbs.verb import Verb, actor_option, folder_argument, json_option
 
 
 def _init_arguments(parser: argparse.ArgumentParser) -> None:
@@ -30,6 +30,7 @@ def _init(asked: argparse.Namespace) -> int:
 def _run_arguments(parser: argparse.ArgumentParser) -> None:
     folder_argument(parser)
     json_option(parser)
+    actor_option(parser)
     parser.add_argument(
         "--wait", metavar="SECONDS", type=float, default=0.0, help="wait this long for another run to end"
     )
@@ -39,7 +40,7 @@ def _run(asked: argparse.Namespace) -> int:
     from flows import nightly
     from flows.progress import reporter
 
-    outcome = nightly.run(asked.folder, reporter=reporter(as_json=asked.json), wait_s=asked.wait)
+    outcome = nightly.run(asked.folder, reporter=reporter(as_json=asked.json), wait_s=asked.wait, actor_code=asked.by)
     if asked.json:
         print(json.dumps(outcome.as_dict()))
     else:

@@ -3,10 +3,12 @@
 from __future__ import annotations
 
 import argparse
+import json
 import sys
+from datetime import date
 from pathlib import Path
 
-from flows.verbs.verb import Verb, folder_argument
+from flows.verbs.verb import Verb, folder_argument, json_option
 
 
 def _sql_arguments(parser: argparse.ArgumentParser) -> None:
@@ -31,6 +33,29 @@ def _sql(asked: argparse.Namespace) -> int:
     return 0
 
 
+def _trace_arguments(parser: argparse.ArgumentParser) -> None:
+    folder_argument(parser)
+    parser.add_argument("--patient", metavar="CODE", required=True, help="patient code")
+    parser.add_argument("--day", metavar="DATE", type=date.fromisoformat, required=True, help="local day, 2026-03-01")
+    json_option(parser)
+
+
+def _trace(asked: argparse.Namespace) -> int:
+    from warehouse.published import Published
+    from warehouse.trace import trace
+
+    behind = trace(Published(asked.folder / "published"), asked.patient, asked.day)
+    if asked.json:
+        print(json.dumps({name: rows.to_dicts() for name, rows in behind.items()}, default=str))
+        return 0
+    from flows.answers import print_answer
+
+    for name, rows in behind.items():
+        print(f"\n{name}")
+        print_answer(rows)
+    return 0
+
+
 VERBS = (
     Verb(
         "sql",
@@ -38,5 +63,12 @@ VERBS = (
         'burdenline sql coast "select patient_code, local_day, v_burden_pct from wear_days" --csv',
         _sql_arguments,
         _sql,
+    ),
+    Verb(
+        "trace",
+        "list everything behind the numbers of one patient and day",
+        "burdenline trace coast --patient HB-101 --day 2026-02-03",
+        _trace_arguments,
+        _trace,
     ),
 )

@@ -26,3 +26,8 @@ def folder_argument(parser: argparse.ArgumentParser, meaning: str = "programme f
 def json_option(parser: argparse.ArgumentParser) -> None:
     """Add --json."""
     parser.add_argument("--json", action="store_true", help="print one JSON value for programs")
+
+
+def actor_option(parser: argparse.ArgumentParser) -> None:
+    """Add --by: who stands behind a change in the history."""
+    parser.add_argument("--by", metavar="CODE", default=None, help="your code, kept in the history beside the change")

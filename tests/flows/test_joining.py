@@ -118,6 +118,18 @@ def test_hour_that_happened_twice(alone):
         assert taken(arrangement) == [("2026-10-25 01:30:00", 2 * HOUR)]
 
 
+def test_two_parts_for_one_place_in_a_doubled_hour_are_refused():
+    """Two hourly parts that both say 02:00 on 25 October cannot be told apart, so neither is placed."""
+    parts = [
+        part("a", "2026-10-25 01:00:00", NOISE[:HOUR], zone="Europe/Berlin"),
+        part("b", "2026-10-25 02:00:00", NOISE[HOUR : 2 * HOUR], zone="Europe/Berlin"),
+        part("c", "2026-10-25 02:00:00", NOISE[2 * HOUR : 3 * HOUR], zone="Europe/Berlin"),
+    ]
+    with pytest.raises(Misfit) as misfit:
+        arrange(parts, "Europe/Berlin")
+    assert misfit.value.reason.code == "local_time_ambiguous"
+
+
 @pytest.mark.parametrize(
     ("zone", "first", "utc"),
     [
