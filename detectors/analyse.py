@@ -158,13 +158,12 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
     sample, timing = _timing(found, bad, lengths, fs_hz)
     labels = classify.classify(timing, found.member, gathered.book.shape_mv, weights)
     is_analysable = quality.is_outside(bad, found.segment, sample)
-    table = beats.beat_table(
-        found, sample, timing, labels, gathered.book, is_analysable, options.full_pause_tolerance_pct
-    )
+    widths = features.qrs_width_ms(gathered.book.shape_mv)
+    table = beats.beat_table(found, sample, timing, labels, widths, is_analysable, options.full_pause_tolerance_pct)
     analysable_s = quality.analysable_s(seen, bad, fs_hz)
     return Analysis(
         table,
-        beats.family_table(table, gathered.book, labels),
+        beats.family_table(table, gathered.book, labels, widths),
         _episodes(table, fs_hz, options),
         bad,
         _findings(analysable_s, table),

@@ -7,7 +7,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import features, qrs, rhythm
+from detectors import qrs, rhythm
 from detectors.classify import S_EARLY, Labels, Timing
 from detectors.families import FamilyBook, Membership
 from detectors.results import Beats, Families
@@ -58,7 +58,7 @@ def beat_table(
     sample: NDArray[np.int64],
     timing: Timing,
     labels: Labels,
-    book: FamilyBook,
+    family_width_ms: NDArray[np.float32],
     is_analysable: NDArray[np.bool_],
     full_pause_tolerance_pct: float,
 ) -> Beats:
@@ -66,7 +66,7 @@ def beat_table(
     is_ectopic = (labels.beat_class == "V") | (labels.beat_class == "S")
     is_premature = is_ectopic & (timing.before < S_EARLY)
     coupling = np.where(is_premature, timing.before_ms, np.float32(np.nan)).astype(np.float32)
-    widths = np.append(features.qrs_width_ms(book.shape_mv), np.float32(0))
+    widths = np.append(family_width_ms, np.float32(0))
     return Beats(
         segment=found.segment,
         sample=sample,
@@ -99,7 +99,7 @@ def _is_alone(is_ectopic: NDArray[np.bool_], is_premature: NDArray[np.bool_]) ->
     return is_premature & ~around[:-2] & ~around[2:]
 
 
-def family_table(beats: Beats, book: FamilyBook, labels: Labels) -> Families:
+def family_table(beats: Beats, book: FamilyBook, labels: Labels, family_width_ms: NDArray[np.float32]) -> Families:
     """The table of families that analysis returns."""
     n_families = book.n_beats.size
     order = np.argsort(beats.family, kind="stable")
@@ -118,7 +118,7 @@ def family_table(beats: Beats, book: FamilyBook, labels: Labels) -> Families:
         family_class=labels.family_class,
         beat_count=rows[:, 0].astype(np.int64),
         share_pct=100 * rows[:, 1] / max(np.count_nonzero(beats.is_analysable), 1),
-        qrs_width_ms=features.qrs_width_ms(book.shape_mv),
+        qrs_width_ms=family_width_ms,
         amplitude_mv=rows[:, 2].astype(np.float32),
         mean_coupling_ms=rows[:, 3].astype(np.float32),
         coupling_spread_ms=rows[:, 4].astype(np.float32),

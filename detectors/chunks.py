@@ -20,7 +20,9 @@ from detectors.signal import WORKING_FS_HZ
 SHAPE_BEFORE = round(SHAPE_BEFORE_MS / 1000 * WORKING_FS_HZ)
 SHAPE_AFTER = round(SHAPE_AFTER_MS / 1000 * WORKING_FS_HZ)
 SHAPE_LENGTH = SHAPE_BEFORE + SHAPE_AFTER
-GUARD_BLOCKS = round(qrs.GUARD_S * WORKING_FS_HZ / qrs.BLOCK)
+MIDDLE = slice(SHAPE_BEFORE - 20, SHAPE_BEFORE + 26)  # columns that hold the QRS at any lag
+CUT_STEP = qrs.BLOCK * qrs.LONG_STEP  # working samples: chunks and guards begin on such steps
+GUARD = -(-round(qrs.GUARD_S * WORKING_FS_HZ) // CUT_STEP) * CUT_STEP
 CLEAN = 0.25  # noise energy over the QRS level of beats that may found a family
 FLAT_MV = 0.012  # a block that moves less than this is flat
 
@@ -50,7 +52,6 @@ class ChunkBeats(NamedTuple):
 
     working: NDArray[np.float64]  # position in working samples from the begin of the segment
     energy: NDArray[np.float32]
-    share: NDArray[np.float32]  # energy over the local QRS level
     shape_mv: NDArray[np.float32]  # shape (n_beats, SHAPE_LENGTH)
     is_clean: NDArray[np.bool_]  # little noise near by
 
@@ -79,7 +80,7 @@ def join_blocks(parts: list[Blocks]) -> Blocks:
 def cuts(n_samples: int, fs_hz: float, chunk_s: float) -> Iterator[tuple[int, int]]:
     """Half-open ranges of working samples that cover a segment; the last may be shorter and end inside a block."""
     n_working = signal.working_length(n_samples, fs_hz)
-    step = max(1, round(chunk_s * WORKING_FS_HZ / qrs.BLOCK)) * qrs.BLOCK
+    step = max(1, round(chunk_s * WORKING_FS_HZ / CUT_STEP)) * CUT_STEP
     for begin in range(0, n_working, step):
         yield begin, min(begin + step, n_working)
 
@@ -87,47 +88,51 @@ def cuts(n_samples: int, fs_hz: float, chunk_s: float) -> Iterator[tuple[int, in
 def read_chunk(segment: Segment, begin: int, end: int, scale: Scale) -> tuple[ChunkBeats, Blocks]:
     """Beats and block quality of working samples `begin` to `end`; nothing of the guards is returned."""
     n_working = signal.working_length(segment.n_samples, scale.fs_hz)
-    first = max(0, begin - GUARD_BLOCKS * qrs.BLOCK)
-    last = min(n_working, end + GUARD_BLOCKS * qrs.BLOCK)
+    first = max(0, begin - GUARD)
+    last = min(n_working, end + GUARD)
     span = signal.stored_span(first, last, scale.fs_hz, segment.n_samples)
     counts = segment.read(*span)
     flags = _flags(counts, first, last, span[0], scale)
-    boxes = signal.box_averages(_without_gaps(counts, scale), first, last, scale.fs_hz)
-    boxes -= np.float32(scale.count_at_zero_mv)
-    boxes *= np.float32(scale.mv_per_count)
-    beats, noise, level = _find(boxes, flags)
-    keep = (beats.working + first >= begin) & (beats.working + first < end)
-    inner = slice((begin - first) // qrs.BLOCK, (begin - first) // qrs.BLOCK + -(-(end - begin) // qrs.BLOCK))
-    kept = ChunkBeats(*(column[keep] for column in beats))
-    kept = kept._replace(working=kept.working + first)
-    return kept, Blocks(*(flag[inner] for flag in flags), noise[inner], level[inner])
-
-
-def _find(
-    boxes: NDArray[np.float32], flags: tuple[NDArray[np.bool_], ...]
-) -> tuple[ChunkBeats, NDArray[np.float32], NDArray[np.float32]]:
     n_blocks = flags[0].size
-    tail = n_blocks * qrs.BLOCK - boxes.size
-    padded = np.pad(boxes, (0, tail), mode="edge")
-    found = qrs.envelope(padded)
+    signal_mv = signal.box_averages(_without_gaps(counts, scale), first, last, scale.fs_hz, scale.mv_per_count)
+    framed = np.empty(SHAPE_BEFORE + 1 + n_blocks * qrs.BLOCK + SHAPE_AFTER + 2, dtype=np.float32)
+    framed[: SHAPE_BEFORE + 1] = signal_mv[0]
+    framed[SHAPE_BEFORE + 1 : SHAPE_BEFORE + 1 + signal_mv.size] = signal_mv
+    framed[SHAPE_BEFORE + 1 + signal_mv.size :] = signal_mv[-1]
+    signal_mv = framed[SHAPE_BEFORE + 1 : -SHAPE_AFTER - 2]
+    found = qrs.envelope(signal_mv)
+    _silence(found.energy, flags[2])
     level = qrs.block_level(found.energy, ~(flags[0] | flags[1] | flags[2]))
-    candidates = qrs.peaks(padded, found.energy, level)
+    candidates = qrs.peaks(signal_mv, found.energy, level)
     beat = qrs.choose(candidates)
-    working = qrs.fiducials(found.slope, candidates.cell[beat])
-    inside = working < boxes.size
-    beat, working = beat[inside], working[inside]
-    noise = _noise(found.energy, candidates.cell[beat], n_blocks)
-    shapes = _shapes(padded, working)
-    is_clean = (
-        np.nan_to_num(noise, nan=0.0)[candidates.cell[beat] // qrs.BLOCK_CELLS]
-        < CLEAN * level[candidates.cell[beat] // qrs.BLOCK_CELLS]
+    cell = candidates.cell[beat]
+    noise = _noise(found.energy, cell, n_blocks)
+    working = qrs.fiducials(found.slope, cell)
+    mine = (working >= begin - first) & (working < end - first)
+    beat, cell, working = beat[mine], cell[mine], working[mine]
+    block = cell // qrs.BLOCK_CELLS
+    inner = slice((begin - first) // qrs.BLOCK, -(-(end - first) // qrs.BLOCK))
+    beats = ChunkBeats(
+        working=working + first,
+        energy=candidates.energy[beat],
+        shape_mv=_shapes(framed, working) - np.float32(scale.count_at_zero_mv * scale.mv_per_count),
+        is_clean=np.nan_to_num(noise, nan=0.0)[block] < CLEAN * level[block],
     )
-    return ChunkBeats(working, candidates.energy[beat], candidates.share[beat], shapes, is_clean), noise, level
+    return beats, Blocks(*(flag[inner] for flag in flags), noise[inner], level[inner])
 
 
-def _shapes(signal_mv: NDArray[np.float32], working: NDArray[np.float64]) -> NDArray[np.float32]:
-    """Stretch around each beat, shape (n_beats, SHAPE_LENGTH), at its exact position by cubic interpolation."""
-    framed = np.pad(signal_mv, (SHAPE_BEFORE + 1, SHAPE_AFTER + 2), mode="edge")
+def _silence(energy: NDArray[np.float32], is_missing: NDArray[np.bool_]) -> None:
+    """No energy where samples are missing and two cells beyond: what fills the gap depends on where reading began."""
+    for block in np.flatnonzero(is_missing):
+        energy[max(block * qrs.BLOCK_CELLS - 2, 0) : (block + 1) * qrs.BLOCK_CELLS + 2] = 0
+
+
+def _shapes(framed: NDArray[np.float32], working: NDArray[np.float64]) -> NDArray[np.float32]:
+    """Stretch around each beat, shape (n_beats, SHAPE_LENGTH), from the signal with a frame on both sides.
+
+    The middle, from which shapes are compared, lies at the beat's exact position by cubic interpolation; the rest at the
+    nearest sample, which is good enough for an average.
+    """
     whole = np.floor(working).astype(np.int64)
     part = (working - whole).astype(np.float32)[:, None]
     rows = sliding_window_view(framed, SHAPE_LENGTH + 3)[whole]
@@ -137,9 +142,11 @@ def _shapes(signal_mv: NDArray[np.float32], working: NDArray[np.float64]) -> NDA
         -(part + 1) * part * (part - 2) / 2,
         (part + 1) * part * (part - 1) / 6,
     )
-    shapes = rows[:, :SHAPE_LENGTH] * weights[0]
+    middle = rows[:, MIDDLE] * weights[0]
     for shift in (1, 2, 3):
-        shapes += rows[:, shift : SHAPE_LENGTH + shift] * weights[shift]
+        middle += rows[:, MIDDLE.start + shift : MIDDLE.stop + shift] * weights[shift]
+    shapes = rows[:, 1 : SHAPE_LENGTH + 1]
+    shapes[:, MIDDLE] = middle
     return shapes
 
 
@@ -172,9 +179,8 @@ def _flags(
 ) -> tuple[NDArray[np.bool_], NDArray[np.bool_], NDArray[np.bool_]]:
     """Flat, rail and missing flags per block of working samples `first` to `last`."""
     n_blocks = -(-(last - first) // qrs.BLOCK)
-    edges = (
-        np.floor((first + np.arange(n_blocks) * qrs.BLOCK) * (scale.fs_hz / WORKING_FS_HZ)).astype(np.int64) - offset
-    )
+    begin = first + np.arange(n_blocks) * qrs.BLOCK
+    edges = np.floor(begin * (scale.fs_hz / WORKING_FS_HZ)).astype(np.int64) - offset
     edges = np.minimum(edges, max(counts.size - 1, 0))
     lowest = np.minimum.reduceat(counts, edges).astype(np.int64)
     highest = np.maximum.reduceat(counts, edges).astype(np.int64)

@@ -27,6 +27,7 @@ AMPLITUDE_LIMIT = 2.0  # sizes within this factor
 MOST_FAMILIES = 64
 MOST_NEW_FAMILIES = 32  # in one batch
 SEED_SAMPLE = 128  # beats of which one becomes the seed of a family
+SCATTER_SAMPLE = 512  # beats from which the scatter of a family is taken
 MEMORY_BEATS = 5000  # the averaged shape follows slow change over about so many beats of the family
 
 
@@ -40,7 +41,8 @@ class Membership(NamedTuple):
 
 def core(shape_mv: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
     """QRS stretch of shapes (n, SHAPE_LENGTH), without mean and of unit length, and its length in mV."""
-    return _unit(shape_mv[:, SHAPE_BEFORE - CORE_BEFORE : SHAPE_BEFORE - CORE_BEFORE + CORE_LENGTH])
+    begin = SHAPE_BEFORE - CORE_BEFORE
+    return _unit(np.ascontiguousarray(shape_mv[:, begin : begin + CORE_LENGTH]))
 
 
 _LINE = np.linalg.qr(np.vander(np.linspace(-1, 1, CORE_LENGTH), 2))[0].astype(
@@ -97,14 +99,13 @@ class FamilyBook:
         templates = _templates(self.shape_mv)
         own_size = core(self.shape_mv)[1]
         match = unit @ templates[:, REACH].T
-        _forbid(match, size, own_size)
         nearest = match.argmax(axis=1)
         like = match[np.arange(n_beats), nearest]
-        left = np.flatnonzero(like <= self.limit[nearest])
+        left = np.flatnonzero((like <= self.limit[nearest]) | ~_same_size(size, own_size[nearest]))
         if left.size:
             shifted = (unit[left] @ templates.reshape(-1, CORE_LENGTH).T).reshape(left.size, -1, 2 * REACH + 1)
             match = shifted.max(axis=2)
-            _forbid(match, size[left], own_size)
+            match[~_same_size(size[left, None], own_size)] -= 1
             nearest[left] = match.argmax(axis=1)
             like[left] = match[np.arange(left.size), nearest[left]]
         return Membership(np.where(like > self.limit[nearest], nearest, -1), nearest, like)
@@ -143,10 +144,8 @@ class FamilyBook:
         self.n_beats += count
 
 
-def _forbid(match: NDArray[np.float32], size: NDArray[np.float32], own_size: NDArray[np.float32]) -> None:
-    """Lower the correlation of pairs whose sizes differ too much."""
-    ratio = size[:, None] / own_size
-    match[(ratio > AMPLITUDE_LIMIT) | (ratio < 1 / AMPLITUDE_LIMIT)] -= 1
+def _same_size(size: NDArray[np.float32], other: NDArray[np.float32]) -> NDArray[np.bool_]:
+    return (size < AMPLITUDE_LIMIT * other) & (other < AMPLITUDE_LIMIT * size)
 
 
 def _seed(unit: NDArray[np.float32], free: NDArray[np.int64]) -> int:
@@ -166,20 +165,27 @@ def _settle(
 ) -> tuple[NDArray[np.float32], float, NDArray[np.bool_]]:
     """Averaged shape, scatter and members of the family that a seed founds."""
     shape, scatter = shape_mv[seed], _first_scatter(unit[free] @ unit[seed])
+    near = _same_size(size[free], size[seed])
     for _ in range(3):
-        templates = _templates(shape)
-        in_place = unit[free] @ templates[REACH]
-        is_member = (in_place > _limit(scatter)) & (np.abs(np.log(size[free] / size[seed])) < np.log(AMPLITUDE_LIMIT))
+        in_place = unit[free] @ core(shape[None])[0][0]
+        is_member = (in_place > _limit(scatter)) & near
         if not is_member.any():
             break
         shape = shape_mv[free[is_member]].mean(axis=0)
-        scatter = float(np.median(1 - in_place[is_member]))
+        scatter = _quantile(1 - in_place[is_member], 0.5)
     return shape, scatter, is_member
 
 
 def _first_scatter(match: NDArray[np.float32]) -> float:
     """Scatter around a seed, from the nearer ones of its look-alikes: another shape among them must not widen it."""
-    return float(np.percentile(1 - match[match > LOOSEST], 25))
+    return _quantile(1 - match[match > LOOSEST], 0.25)
+
+
+def _quantile(values: NDArray[np.float32], share: float) -> float:
+    """Quantile of an even sample of the values: enough for a limit."""
+    sample = values[:: -(-values.size // SCATTER_SAMPLE)]
+    at = int(share * (sample.size - 1))
+    return float(np.partition(sample, at)[at])
 
 
 def _limit(scatter: float) -> float:

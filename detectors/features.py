@@ -18,9 +18,12 @@ def _at(ms: float) -> int:
 
 def amplitude_mv(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
     """Main deflection against the level before the QRS, signed, of beats with shapes (n_beats, SHAPE_LENGTH), mV."""
-    baseline = shape_mv[:, _at(-112) : _at(-64)].mean(axis=1)
-    qrs = shape_mv[:, _at(-40) : _at(40) + 1] - baseline[:, None]
-    highest, lowest = qrs.max(axis=1), qrs.min(axis=1)
+    before = range(_at(-112), _at(-64))
+    baseline = sum(shape_mv[:, column] for column in before) / np.float32(len(before))
+    highest = lowest = shape_mv[:, _at(-40)]
+    for column in range(_at(-32), _at(40) + 1):  # column by column: faster than reducing many short rows
+        highest, lowest = np.maximum(highest, shape_mv[:, column]), np.minimum(lowest, shape_mv[:, column])
+    highest, lowest = highest - baseline, lowest - baseline
     return np.where(highest >= -lowest, highest, lowest)
 
 
@@ -45,15 +48,16 @@ def qrs_width_ms(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
     included; on values interpolated to 2 ms, within 120 ms before and 160 ms after the R peak. Meant for averages: noise
     widens it. The 12 % is ours; no standard fixes the onset of an automatically measured QRS.
     """
-    step_ms = 2.0
-    coarse_ms = np.arange(_at(-120), _at(160)) * (1000 / WORKING_FS_HZ)
-    fine_ms = np.arange(coarse_ms[0], coarse_ms[-1], step_ms)
-    width = np.zeros(shape_mv.shape[0], dtype=np.float32)
-    for row, shape in enumerate(shape_mv):
-        slope = np.abs(np.interp(fine_ms, coarse_ms[:-1] + 4, np.diff(shape[_at(-120) : _at(160)])))
-        above = np.flatnonzero(slope > 0.12 * max(float(slope.max()), 1e-9))
+    n_shapes, step_ms = shape_mv.shape[0], 2.0
+    coarse = np.abs(np.diff(shape_mv[:, _at(-120) : _at(160)], axis=1))
+    at = np.arange(0, coarse.shape[1] - 1, step_ms * WORKING_FS_HZ / 1000)
+    whole, part = at.astype(np.int64), (at % 1).astype(np.float32)
+    slope = coarse[:, whole] * (1 - part) + coarse[:, whole + 1] * part
+    width = np.zeros(n_shapes, dtype=np.float32)
+    for row, steepest in enumerate(slope.argmax(axis=1) if n_shapes else ()):
+        above = np.flatnonzero(slope[row] > 0.12 * max(float(slope[row, steepest]), 1e-9))
         if above.size:
-            part = np.cumsum(np.diff(above, prepend=above[0]) * step_ms > PAUSE_MS)
-            mine = above[part == part[np.searchsorted(above, slope.argmax())]]
+            part_of = np.cumsum(np.diff(above, prepend=above[0]) * step_ms > PAUSE_MS)
+            mine = above[part_of == part_of[np.searchsorted(above, steepest)]]
             width[row] = (mine[-1] - mine[0]) * step_ms
     return width

@@ -27,16 +27,15 @@ def is_fusion(
     begin = SHAPE_BEFORE - CORE_BEFORE
     child, normal = (_centred(shape[begin : begin + CORE_LENGTH]) for shape in (child_mv, normal_mv))
     shifted = sliding_window_view(ventricular_mv, CORE_LENGTH, axis=1)[:, begin - REACH : begin + REACH + 1]
-    return any(_explains(child, normal, _centred(parent)) for parent in shifted.reshape(-1, CORE_LENGTH))
+    parents = _centred(shifted.reshape(-1, CORE_LENGTH))
+    # normal equations of two unknowns, for all parents at once
+    nn, np_, pp = normal @ normal, parents @ normal, np.einsum("ij,ij->i", parents, parents)
+    cn, cp = child @ normal, parents @ child
+    determinant = np.maximum(nn * pp - np_ * np_, 1e-12)
+    normal_part, ventricular_part = (cn * pp - cp * np_) / determinant, (cp * nn - cn * np_) / determinant
+    explained = (normal_part * cn + ventricular_part * cp) / max(child @ child, 1e-12)
+    return bool(((explained > EXPLAINED) & (normal_part > NORMAL_PART) & (ventricular_part > VENTRICULAR_PART)).any())
 
 
 def _centred(stretch: NDArray[np.float32]) -> NDArray[np.float64]:
-    return stretch.astype(np.float64) - stretch.mean()
-
-
-def _explains(child: NDArray[np.float64], normal: NDArray[np.float64], parent: NDArray[np.float64]) -> bool:
-    parents = np.column_stack([normal, parent])
-    parts, *_ = np.linalg.lstsq(parents, child, rcond=None)
-    rest = child - parents @ parts
-    explained = 1 - (rest @ rest) / max(child @ child, 1e-12)
-    return bool(explained > EXPLAINED and parts[0] > NORMAL_PART and parts[1] > VENTRICULAR_PART)
+    return stretch - stretch.mean(axis=-1, keepdims=True, dtype=np.float64)

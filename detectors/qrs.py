@@ -22,6 +22,7 @@ BLOCK_CELLS = 48  # envelope values per block, 1.536 s: holds at least one beat 
 BLOCK = CELL * BLOCK_CELLS  # working samples per block
 LOCAL_BLOCKS = 7
 LONG_BLOCKS = 41
+LONG_STEP = 8  # blocks: how often the level of the minute is taken; chunks are cut on such steps
 GUARD_S = 60.0
 
 THRESHOLD = 0.32  # of the local level
@@ -35,6 +36,7 @@ EARLY_ENERGY = 0.6
 LONG_GAP = 1.5  # of the usual interval: any candidate in it is looked at
 SHORT_GAP = 1.2  # of the usual interval: only sharp ones
 SHARP_IN_GAP = 0.5
+FAR_S = 10.0
 FAR_WEAKER = 0.4  # slope energy over that of the weaker neighbour
 WEAKER = 0.75
 
@@ -42,21 +44,17 @@ WEAKER = 0.75
 class Envelope(NamedTuple):
     """Slope of the signal and its energy over one QRS length."""
 
-    slope: NDArray[np.float32]  # shape (n_working,), second difference, mV
-    energy: NDArray[np.float32]  # shape (n_working // CELL,), sum of |slope| over 96 ms, mV
+    slope: NDArray[np.float32]  # shape (n_working,), second difference of the smoothed signal, 4 mV
+    energy: NDArray[np.float32]  # shape (n_working // CELL,), sum of |slope| over 96 ms, 4 mV
 
 
 def envelope(signal_mv: NDArray[np.float32]) -> Envelope:
     """Second difference of the smoothed working signal, and its absolute sum over 96 ms once every 32 ms."""
     slope = np.zeros_like(signal_mv)
-    smooth = signal_mv[:-2] + signal_mv[2:]
-    smooth += signal_mv[1:-1]
-    smooth += signal_mv[1:-1]
-    inner = slope[LAG + 1 : -LAG - 1]
-    np.add(smooth[LAG:-LAG], smooth[LAG:-LAG], out=inner)
-    inner -= smooth[: -2 * LAG]
-    inner -= smooth[2 * LAG :]
-    inner *= np.float32(0.25)
+    pairs = signal_mv[:-1] + signal_mv[1:]
+    smooth = pairs[:-1] + pairs[1:]  # weights 1 2 1
+    rise = smooth[LAG:] - smooth[:-LAG]
+    np.subtract(rise[:-LAG], rise[LAG:], out=slope[LAG + 1 : -LAG - 1])
     size = np.abs(slope[: slope.size // CELL * CELL])
     cells = (size[0::4] + size[1::4]) + (size[2::4] + size[3::4])
     energy = cells.copy()
@@ -73,17 +71,16 @@ def block_level(energy: NDArray[np.float32], is_usable: NDArray[np.bool_]) -> ND
     highest = energy.reshape(-1, BLOCK_CELLS).max(axis=1)
     highest = np.where(is_usable, highest, np.float32(np.nan))
     near = _running_median(highest, LOCAL_BLOCKS)
-    far = _running_median(highest, LONG_BLOCKS)
+    far = np.repeat(_running_median(highest, LONG_BLOCKS, LONG_STEP), LONG_STEP)[: near.size]
     return np.nan_to_num(np.clip(near, 0.4 * far, 2.5 * far), nan=np.inf)
 
 
-def _running_median(values: NDArray[np.float32], width: int) -> NDArray[np.float32]:
-    half = width // 2
-    padded = np.concatenate([np.full(half, np.nan), values, np.full(half, np.nan)]).astype(np.float32)
-    windows = np.sort(sliding_window_view(padded, width), axis=1)  # NaN sorts last
-    known = width - np.isnan(windows).sum(axis=1)
-    middle = windows[np.arange(values.size), np.maximum(known - 1, 0) // 2]
-    return np.where(known > 0, middle, np.float32(np.nan))
+def _running_median(values: NDArray[np.float32], width: int, step: int = 1) -> NDArray[np.float32]:
+    """Median of the known values around every `step`-th one, NaN where none is known; the lower of two middle ones."""
+    edge = np.full(width // 2, np.nan, dtype=np.float32)
+    windows = np.sort(sliding_window_view(np.concatenate([edge, values, edge]), width)[::step], axis=1)
+    middle = np.maximum(width - np.isnan(windows).sum(axis=1) - 1, 0) // 2  # NaN sorts last
+    return windows[np.arange(middle.size), middle]
 
 
 class Peaks(NamedTuple):
@@ -152,23 +149,34 @@ def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[n
         return beat
     cell = candidates.cell[beat]
     gap = np.diff(cell)
-    usual = _running_median(gap.astype(np.float32), 9)
-    between = np.searchsorted(cell, candidates.cell, side="right") - 1
-    inside = (between >= 0) & (between < gap.size)
-    slot = np.clip(between, 0, gap.size - 1)
-    after_s = (candidates.cell - cell[slot]) * (CELL / WORKING_FS_HZ)
-    before_s = (cell[slot + 1] - candidates.cell) * (CELL / WORKING_FS_HZ)
-    energy = candidates.energy / candidates.energy[beat[slot]]
-    sharpness = candidates.sharpness / candidates.sharpness[beat[slot]]
-    needed = np.where(sharpness > SHARP_IN_GAP, SHORT_GAP, LONG_GAP) * usual[slot]
-    free = inside & (gap[slot] > needed) & (after_s > REFRACTORY_S) & (before_s > REFRACTORY_S)
-    free &= ~_is_t_wave(after_s, energy, sharpness)
-    found = np.flatnonzero(free)
-    if found.size == 0:
-        return beat
-    order = np.lexsort((candidates.energy[found], between[found]))
-    is_last = np.append(np.diff(between[found][order]) > 0, True)
-    return np.sort(np.concatenate([beat, found[order][is_last]]))
+    usual = _usual_gap(gap)
+    slot = np.searchsorted(cell, candidates.cell, side="right") - 1
+    inside = (slot >= 0) & (slot < gap.size)
+    inside[inside] = gap[slot[inside]] > SHORT_GAP * usual[slot[inside]]
+    low = np.flatnonzero(inside)
+    slot = slot[low]
+    after_s = (candidates.cell[low] - cell[slot]) * (CELL / WORKING_FS_HZ)
+    before_s = (cell[slot + 1] - candidates.cell[low]) * (CELL / WORKING_FS_HZ)
+    energy = candidates.energy[low] / candidates.energy[beat[slot]]
+    sharpness = candidates.sharpness[low] / candidates.sharpness[beat[slot]]
+    is_wanted = (sharpness > SHARP_IN_GAP) | (gap[slot] > LONG_GAP * usual[slot])
+    is_wanted &= (after_s > REFRACTORY_S) & (before_s > REFRACTORY_S) & ~_is_t_wave(after_s, energy, sharpness)
+    low, slot = low[is_wanted], slot[is_wanted]
+    order = np.lexsort((candidates.energy[low], slot))
+    is_strongest = np.diff(slot[order], append=-1) != 0
+    return np.sort(np.concatenate([beat, low[order][is_strongest]]))
+
+
+def _usual_gap(gap: NDArray[np.int64]) -> NDArray[np.int64]:
+    """Median of each gap and the two on either side; gaps beyond a pause of FAR_S do not count, so that reach stays bounded."""
+    n_gaps = gap.size
+    index = np.arange(n_gaps)
+    is_far = gap > FAR_S * WORKING_FS_HZ / CELL
+    first = np.maximum.accumulate(np.where(is_far, index, 0))
+    last = np.minimum.accumulate(np.where(is_far, index, n_gaps - 1)[::-1])[::-1]
+    a, b, c, d, e = (gap[np.clip(index + offset, first, last)] for offset in (-2, -1, 1, 2, 0))
+    low, high = np.maximum(np.minimum(a, b), np.minimum(c, d)), np.minimum(np.maximum(a, b), np.maximum(c, d))
+    return np.maximum(np.minimum(low, high), np.minimum(np.maximum(low, high), e))
 
 
 def fiducials(slope: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np.float64]:

@@ -55,19 +55,21 @@ def stored_span(first: int, last: int, fs_hz: float, n_samples: int) -> tuple[in
     return min(begin, n_samples), min(end, n_samples)
 
 
-def box_averages(counts: NDArray[np.int16], first: int, last: int, fs_hz: float) -> NDArray[np.float32]:
-    """Average stored counts over boxes of 8 ms.
+def box_averages(counts: NDArray[np.int16], first: int, last: int, fs_hz: float, gain: float) -> NDArray[np.float32]:
+    """Average stored counts over boxes of 8 ms, times `gain`.
 
     Parameters
     ----------
     counts : shape (n,), int16, the samples of `stored_span(first, last, ...)`
     first, last : working samples wanted, half-open, counted from the begin of the segment
 
-    Returns shape (last - first,), float32, counts. Below 125 Hz a box is shorter than a sample and takes its value.
+    gain : millivolts per count; the level of 0 mV is left where it is
+
+    Returns shape (last - first,), float32, mV. Below 125 Hz a box is shorter than a sample and takes its value.
     """
     ratio = fs_hz / WORKING_FS_HZ
     if ratio == int(ratio):
-        return _whole_boxes(counts, int(ratio), last - first)
+        return _whole_boxes(counts, int(ratio), last - first, gain)
     edges = np.arange(first, last + 1, dtype=np.float64) * ratio
     whole = np.floor(edges).astype(np.int64)
     part = edges - whole
@@ -75,18 +77,18 @@ def box_averages(counts: NDArray[np.int16], first: int, last: int, fs_hz: float)
     sums = np.zeros(counts.size + 1, dtype=np.int64)
     np.cumsum(counts, dtype=np.int64, out=sums[1:])
     cut = part * counts.take(at, mode="clip")
-    boxes = (np.diff(sums.take(at, mode="clip")) + (cut[1:] - cut[:-1])) / ratio
+    boxes = (np.diff(sums.take(at, mode="clip")) + (cut[1:] - cut[:-1])) * (gain / ratio)
     return boxes.astype(np.float32)
 
 
-def _whole_boxes(counts: NDArray[np.int16], size: int, n_boxes: int) -> NDArray[np.float32]:
+def _whole_boxes(counts: NDArray[np.int16], size: int, n_boxes: int, gain: float) -> NDArray[np.float32]:
     counts = counts[: n_boxes * size]
     if size == 1:
-        return counts.astype(np.float32)
+        return counts * np.float32(gain)
     boxes = np.add(counts[0::size], counts[1::size], dtype=np.float32)
     for offset in range(2, size):
         boxes += counts[offset::size]
-    boxes *= np.float32(1 / size)
+    boxes *= np.float32(gain / size)
     return boxes
 
 
