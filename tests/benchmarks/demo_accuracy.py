@@ -46,8 +46,9 @@ def _line(patient: demo.Patient, wear: demo.Wear, seed: int) -> str:
     )
     options = {"fs_hz": patient.fs_hz, "n_samples": len(windows) * step, "learning_s": 0.0}
     ratios = statistics(compare_beats(true, found, left_out=bad, **options).matrix)
-    runs = compare_runs(true, found, ectopy="V", **options)
-    v_found = 100 * np.mean(found.symbol[beats.is_analysable] == "V")
+    good = beats.is_analysable
+    runs = compare_runs(true, beat_annotations(found.sample[good], found.symbol[good]), ectopy="V", **options)
+    v_found = 100 * np.mean(found.symbol[good] == "V")
     return (
         f"{100 * analysis.analysable_s * patient.fs_hz / (length * len(windows)):8.2f} "
         + " ".join(f"{ratios[name].pct:8.2f}" for name in FIGURES)
