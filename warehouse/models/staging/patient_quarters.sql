@@ -1,20 +1,30 @@
 -- one row per recording and quarter hour that counts for its patient; key recording_id, quarter_utc
 -- A quarter hour that two recordings of a patient cover for longer than it lasts (two patches at once) counts once:
 -- the recording with more analysable time. Two patches worn one after the other within a quarter hour both count.
-WITH quarters AS (
-    SELECT
-        wear.patient_code,
-        wear.patient_zone,
-        quarter.*,
-        sum(quarter.recorded_s) OVER shared AS shared_s,
-        row_number() OVER (shared ORDER BY quarter.analysable_s DESC, quarter.recording_id) AS place
+WITH covered_twice AS (
+    SELECT wear.patient_code, quarter.quarter_utc
     FROM lake.quarter_hours AS quarter
-    INNER JOIN recording_wears AS wear ON wear.recording_id = quarter.recording_id
-    WINDOW shared AS (PARTITION BY wear.patient_code, quarter.quarter_utc)
+    INNER JOIN recording_wears AS wear USING (recording_id)
+    GROUP BY wear.patient_code, quarter.quarter_utc
+    HAVING count(*) > 1 AND sum(quarter.recorded_s) > 900.5
+),
+
+left_out AS (
+    SELECT quarter.recording_id, quarter.quarter_utc
+    FROM covered_twice
+    INNER JOIN recording_wears AS wear USING (patient_code)
+    INNER JOIN lake.quarter_hours AS quarter USING (recording_id, quarter_utc)
+    QUALIFY row_number() OVER (
+        PARTITION BY wear.patient_code, quarter.quarter_utc ORDER BY quarter.analysable_s DESC, quarter.recording_id
+    ) > 1
 )
+
 SELECT
-    * EXCLUDE (shared_s, place),
+    wear.patient_code,
+    wear.patient_zone,
+    quarter.*,
     -- Zone arithmetic on quarter hours, never on beats: every civil zone lies whole quarter hours from UTC.
-    timezone(patient_zone, quarter_utc::TIMESTAMPTZ) AS quarter_local
-FROM quarters
-WHERE shared_s <= 900.5 OR place = 1
+    timezone(wear.patient_zone, quarter.quarter_utc::TIMESTAMPTZ) AS quarter_local
+FROM lake.quarter_hours AS quarter
+INNER JOIN recording_wears AS wear USING (recording_id)
+ANTI JOIN left_out USING (recording_id, quarter_utc)
