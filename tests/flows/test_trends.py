@@ -163,3 +163,63 @@ def test_time_between_the_periods_widens_the_chance_limit():
     near = row(changes(hours, {"T1": "P1"}))["chance_fall_limit_pct"]
     far = row(changes(hours, {"T1": "P1"}, change=ChangeSettings()))["chance_fall_limit_pct"]
     assert far > near + 10
+
+
+def test_a_recurrence_has_its_first_day():
+    """A burden that fell and came back within the after period is named with the day of its return."""
+    rng = np.random.default_rng(7)
+    before, low, back = (level * np.exp(0.2 * rng.standard_normal(6)) for level in (500, 20, 450))
+    later = [hours_of("P1", EVENT + timedelta(40 + i), level) for i, level in enumerate(back)]
+    found = row(changes(wearing("P1", list(before), list(low)) + later, {"T1": "P1"}, change=ChangeSettings()))
+    assert found["recurrence_day"] == EVENT + timedelta(40)
+    assert "back beyond chance since 2026-04-29" in found["reason"]
+
+
+def test_a_lasting_fall_is_no_recurrence():
+    """Days that stay low with their usual variation have no recurrence, in a programme of 60 patients."""
+    rng = np.random.default_rng(9)
+    events = {f"T{i:02}": f"P{i:02}" for i in range(60)}
+    hours = [
+        day for patient in events.values()
+        for day in wearing(patient, list(500 * np.exp(0.5 * rng.standard_normal(7))),
+                           list(30 * np.exp(0.5 * rng.standard_normal(14))))
+    ]  # fmt: skip
+    table = changes(hours, events).filter(pl.col("measure") == "v_burden_pct")
+    assert (table["verdict"] == "fell_beyond_chance").all()
+    assert table["recurrence_day"].is_not_null().sum() <= 3
+
+
+def test_an_unsettled_fall_says_how_many_days_would_settle_it():
+    """A fall within chance tells the wear days that are missing, and with them the same fall is beyond chance."""
+    before, after = [400, 700, 300, 520, 610, 350, 480], [250, 450]
+    found = row(changes(wearing("P1", before, after), {"T1": "P1"}))
+    assert found["verdict"] == "within_chance"
+    missing = found["days_to_settle"]
+    assert 1 <= missing <= 30
+    assert f"About {missing} more wear day" in found["reason"]
+    level = found["after_value"] / found["baseline_value"]
+    longer = after + [level * before[i % 7] for i in range(3 * missing)]
+    assert row(changes(wearing("P1", before, longer), {"T1": "P1"}))["verdict"] == "fell_beyond_chance"
+
+
+def test_success_is_a_matter_of_ectopy():
+    """A heart rate has no probability of success."""
+    table = changes(wearing("P1", STEADY, LOWER), {"T1": "P1"})
+    assert row(table, "mean_rate_bpm")["success_probability_pct"] is None
+    assert row(table)["success_probability_pct"] > 95
+
+
+def test_a_baseline_above_the_programme_is_warned_of():
+    """A high and uncertain baseline among lower ones carries the fall that regression to the mean would bring."""
+    rng = np.random.default_rng(12)
+    events = {f"T{i:02}": f"P{i:02}" for i in range(30)}
+    base = np.exp(rng.normal(4, 0.4, 30))
+    base[0] = np.exp(5.4)
+    hours = [
+        day for patient, level in zip(events.values(), base, strict=True)
+        for day in wearing(patient, list(level * np.exp(0.8 * rng.standard_normal(2))), [level * 0.7, level * 0.5])
+    ]  # fmt: skip
+    table = changes(hours, events).filter(pl.col("measure") == "v_burden_pct")
+    assert table["expected_regression_pct"][0] > 20
+    assert "regression to the mean" in table["reason"][0]
+    assert table.filter(pl.col("baseline_value") < 0.9 * table["baseline_value"].median())["expected_regression_pct"].max() == 0

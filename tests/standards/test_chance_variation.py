@@ -103,3 +103,14 @@ def test_regression_of_untreated_pairs_gives_the_prediction_limit():
     # Source: statsmodels OLS prediction interval (90 % two-sided); method of Sami et al., Circulation 1980;62:1172
     expected = 100 * (1 - np.exp(frame["obs_ci_lower"].to_numpy()) / at)
     assert v.untreated_pairs_limit_pct(baseline, later, at) == pytest.approx(expected, abs=1e-9)
+
+
+def test_a_second_look_regresses_by_the_share_of_chance():
+    """Chosen for a high first look, patients fall back by the share of variance that is chance."""
+    rng = np.random.default_rng(3)
+    usual = rng.normal(2, 1.0, 4000)
+    first, second = (usual + rng.normal(0, 0.7, 4000) for _ in range(2))
+    expected = v.regression_to_mean(first, np.full(4000, 0.49))
+    high = first > 3
+    assert (second - first)[high].mean() == pytest.approx(expected[high].mean(), abs=0.03)
+    assert np.isnan(v.regression_to_mean(first[:4], np.full(4, 0.49))).all()
