@@ -26,7 +26,7 @@ LATE = 0.3  # log of RR before over RR after: a beat after a pause
 LATE_WIDTH = 0.2  # log of the width over normal: a narrow late beat is a normal one
 
 TERMS = ("constant", "distance", "width", "early", "off_time", "single_wide")
-WEIGHTS = np.array([-4.0, 2.6, 1.3, 3.1, 2.4, 1.0])
+WEIGHTS = np.array([-4.1, 2.7, 1.7, 3.1, 2.5, 1.2])
 
 LOOSE_WEIGHTS = (-2.2, 0.5, 1.9)  # constant, log odds of the nearest family, early
 

@@ -37,6 +37,9 @@ LONG_GAP = 1.5  # of the usual interval: any candidate in it is looked at
 SHORT_GAP = 1.2  # of the usual interval: only sharp ones
 SHARP_IN_GAP = 0.5
 FAR_S = 10.0
+T_WAVE_LATEST_S = 0.45
+LEAST_T = 0.15  # energy of a T wave over its QRS where none stands out
+UNUSUAL_T = 1.8  # times the usual: no T wave
 FAR_WEAKER = 0.4  # slope energy over that of the weaker neighbour
 WEAKER = 0.75
 
@@ -149,7 +152,7 @@ def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[n
         return beat
     cell = candidates.cell[beat]
     gap = np.diff(cell)
-    usual = _usual_gap(gap)
+    usual = _local_median(gap, gap)
     slot = np.searchsorted(cell, candidates.cell, side="right") - 1
     inside = (slot >= 0) & (slot < gap.size)
     inside[inside] = gap[slot[inside]] > SHORT_GAP * usual[slot[inside]]
@@ -160,21 +163,34 @@ def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[n
     energy = candidates.energy[low] / candidates.energy[beat[slot]]
     sharpness = candidates.sharpness[low] / candidates.sharpness[beat[slot]]
     is_wanted = (sharpness > SHARP_IN_GAP) | (gap[slot] > LONG_GAP * usual[slot])
-    is_wanted &= (after_s > REFRACTORY_S) & (before_s > REFRACTORY_S) & ~_is_t_wave(after_s, energy, sharpness)
+    follows_early = gap[np.maximum(slot - 1, 0)] < 0.8 * usual[slot]
+    is_usual_t = (energy < UNUSUAL_T * _usual_t_wave(candidates, beat)[slot]) | follows_early
+    is_wanted &= (after_s > REFRACTORY_S) & (before_s > REFRACTORY_S)
+    is_wanted &= ~(_is_t_wave(after_s, energy, sharpness) & is_usual_t)
     low, slot = low[is_wanted], slot[is_wanted]
     order = np.lexsort((candidates.energy[low], slot))
     is_strongest = np.diff(slot[order], append=-1) != 0
     return np.sort(np.concatenate([beat, low[order][is_strongest]]))
 
 
-def _usual_gap(gap: NDArray[np.int64]) -> NDArray[np.int64]:
-    """Median of each gap and the two on either side; gaps beyond a pause of FAR_S do not count, so that reach stays bounded."""
-    n_gaps = gap.size
-    index = np.arange(n_gaps)
+def _usual_t_wave(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[np.float32]:
+    """Energy of the T waves near each gap over that of their QRS: what an ectopic beat that looks like one must exceed."""
+    slot = np.searchsorted(candidates.cell[beat], candidates.cell, side="right") - 1
+    after_s = (candidates.cell - candidates.cell[beat[slot]]) * (CELL / WORKING_FS_HZ)
+    is_t = (slot >= 0) & (after_s > 0) & (after_s < T_WAVE_LATEST_S)
+    strongest = np.zeros(beat.size, dtype=np.float32)
+    np.maximum.at(strongest, slot[is_t], candidates.energy[is_t])
+    gap = np.diff(candidates.cell[beat])
+    return _local_median(np.maximum(strongest / candidates.energy[beat], LEAST_T)[:-1], gap)
+
+
+def _local_median(values: NDArray[np.generic], gap: NDArray[np.int64]) -> NDArray[np.generic]:
+    """Median of each value and the two on either side, not across a gap of FAR_S, so that reach in time stays bounded."""
+    index = np.arange(gap.size)
     is_far = gap > FAR_S * WORKING_FS_HZ / CELL
     first = np.maximum.accumulate(np.where(is_far, index, 0))
-    last = np.minimum.accumulate(np.where(is_far, index, n_gaps - 1)[::-1])[::-1]
-    a, b, c, d, e = (gap[np.clip(index + offset, first, last)] for offset in (-2, -1, 1, 2, 0))
+    last = np.minimum.accumulate(np.where(is_far, index, gap.size - 1)[::-1])[::-1]
+    a, b, c, d, e = (values[np.clip(index + offset, first, last)] for offset in (-2, -1, 1, 2, 0))
     low, high = np.maximum(np.minimum(a, b), np.minimum(c, d)), np.minimum(np.maximum(a, b), np.maximum(c, d))
     return np.maximum(np.minimum(low, high), np.minimum(np.maximum(low, high), e))
 
