@@ -15,15 +15,16 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.optimize import elementwise
 from scipy.special import digamma, ndtr, polygamma
+from scipy.stats import norm
 
-from detectors.spread import GRID, Levels, Periods, levels, spread_weights
+from detectors.spread import GRID, Levels, Periods, levels, shown_share, spread_weights
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 
 CHANCE_LIMIT = 0.05  # one-sided
 INTERVAL_TAIL = 0.025  # of each side
-OWN_DAYS_ENOUGH = 10  # degrees of freedom from which a patient's own days settle the spread
+OWN_DAYS_FEW, OWN_DAYS_ENOUGH = 1, 10  # degrees of freedom from which own days help, and settle, the spread
 FELL, ROSE, WITHIN, TOO_LITTLE = "fell_beyond_chance", "rose_beyond_chance", "within_chance", "too_little_wear"
 VERDICTS = (FELL, ROSE, WITHIN, TOO_LITTLE)
 NODE_STEP = 0.25
@@ -47,6 +48,8 @@ class Comparison(NamedTuple):
     verdict: NDArray[np.str_]  # one of VERDICTS
     day_sd: Floats  # SD of ln level between days
     variance_source: NDArray[np.str_]  # patient, programme or both
+    days_to_settle: Floats  # more days after that would put the same ratio beyond chance; NaN settled or never
+    baseline_variance: Floats  # of ln baseline as an estimate of the patient's usual level
 
 
 class _Chance(NamedTuple):
@@ -79,6 +82,7 @@ def compare(
     low, high = _interval(chance, observed)
     per_baseline = _divide(per_beat[1::2], baseline)
     success = 1 - _at_most(chance, observed + 0.5, np.full(n_events, np.log1p(-success_limit_pct / 100)))
+    day_sd = np.exp(weight @ np.log(grid))
     fewer_days = np.minimum(level.days[0::2], level.days[1::2])
     verdict = np.select(
         [fewer_days < max(min_days, 1), observed < least, observed > most], [TOO_LITTLE, FELL, ROSE], WITHIN
@@ -95,9 +99,23 @@ def compare(
         chance_rise_limit_pct=100 * most * per_baseline - 100 + unscaled,
         success_probability_pct=100 * success + unscaled,
         verdict=verdict,
-        day_sd=np.exp(weight @ np.log(grid)),
-        variance_source=_variance_source(level),
+        day_sd=day_sd,
+        variance_source=_variance_source(level, day_sd),
+        days_to_settle=np.where(
+            verdict == WITHIN, _days_to_settle(chance, level, weight, _log(after) - _log(baseline)), np.nan
+        ),
+        baseline_variance=(weight * (level.variance[0::2] + grid**2 * np.asarray(excess)[:, None] / 2)).sum(1),
     )
+
+
+def _days_to_settle(chance: _Chance, level: Levels, weight: Floats, log_ratio: Floats) -> Floats:
+    """Normal theory: the after period's own variance shrinks with its days, all else stays."""
+    now = (weight * chance.sd**2).sum(axis=1)
+    own = (weight * level.variance[1::2]).sum(axis=1)
+    days = level.days[1::2]
+    allowed = (log_ratio / norm.ppf(1 - CHANCE_LIMIT)) ** 2 - (now - (weight * level.day_variance[1::2]).sum(axis=1))
+    more = np.ceil(_divide(own * days, allowed)) - days
+    return np.where(np.isfinite(log_ratio), np.maximum(more, 1.0), np.nan)
 
 
 def _typical_day(level: Levels, weight: Floats) -> tuple[Floats, Floats, Floats]:
@@ -181,9 +199,14 @@ def _rows(chance: _Chance, rows: Ints) -> _Chance:
     return _Chance._make(table[rows] for table in chance)
 
 
-def _variance_source(level: Levels) -> NDArray[np.str_]:
-    own = np.where(level.is_sparse, 0, np.maximum(level.days - 1, 0)).reshape(-1, 2).sum(axis=1)
-    return np.select([own == 0, own < OWN_DAYS_ENOUGH], ["programme", "both"], "patient")
+def _variance_source(level: Levels, day_sd: Floats) -> NDArray[np.str_]:
+    days = np.maximum(level.days, 1)
+    own = ((days - 1) * shown_share(level.total / days, np.repeat(day_sd, 2))).reshape(-1, 2).sum(axis=1)
+    return np.select([own < OWN_DAYS_FEW, own < OWN_DAYS_ENOUGH], ["programme", "both"], "patient")
+
+
+def _log(values: Floats) -> Floats:
+    return np.log(values, out=np.full(values.shape, np.nan), where=values > 0)
 
 
 def _divide(above: Floats, below: Floats) -> Floats:

@@ -135,6 +135,12 @@ def _log_count_probability(beats: Floats, row: Ints, log_mean: Floats, s: float)
     return table[column, left] * (1 - part) + table[column, left + 1] * part
 
 
+def shown_share(beats_per_day: Floats, sd: Floats | float) -> Floats:
+    """Information on the variance between days that counting noise leaves: 1 with many beats a day, 0 with none."""
+    of_days = np.asarray(sd) ** 2 * beats_per_day
+    return np.asarray((of_days / (1 + of_days)) ** 2)
+
+
 def spread_weights(fit: Floats, grid: Floats, typical: float) -> Floats:
     """Posterior weights of s, shape of `fit`: (n_patients, n_grid), rows sum to 1.
 

@@ -14,6 +14,7 @@ from scipy.stats import norm, t
 Floats = NDArray[np.float64]
 
 ONE_SIDED_95 = float(norm.ppf(0.95))
+MIN_PATIENTS = 5  # fewer patients say too little on how patients differ
 TYPICAL_WEAR_DAYS = 7  # length of wear whose spread stands for "within a period" where a period has one day only
 
 
@@ -120,20 +121,38 @@ def variogram(gap_d: ArrayLike, series: SpontaneousSeries) -> Floats:
     return np.where(gap > 0, np.interp(np.log(np.maximum(gap, 1.0)), np.log(series.gap_d), half_variance), 0.0)
 
 
-def excess_of_gap(before_d: ArrayLike, after_d: ArrayLike, series: SpontaneousSeries) -> float:
+def excess_of_gap(
+    before_d: ArrayLike, after_d: ArrayLike, series: SpontaneousSeries, seen: tuple[float, float] = (1.0, 1.0)
+) -> float:
     """Variance that the time between two periods adds, as a multiple of the variance between days of a period.
 
     `before_d` and `after_d` are day numbers. With independent days the log ratio of the period means has variance
     s^2 (1/n1 + 1/n2); the published series makes it s^2 (1/n1 + 1/n2 + excess), where s^2 is what the days of one
-    period show. The series gives the shape only: a patient whose days vary little also drifts little.
+    period show. The series gives the shape only: a patient whose days vary little also drifts little. `seen` is how
+    much of the days' variation shows through the counting noise on each side (1 all, 0 none): s^2 comes from there.
     """
     before, after = np.asarray(before_d, dtype=float), np.asarray(after_d, dtype=float)
     between = variogram(before[:, None] - after[None, :], series).mean()
     within = [variogram(days[:, None] - days[None, :], series) for days in (before, after)]
     contrast = 2 * between - sum(table.mean() for table in within)
-    freedom = len(before) + len(after) - 2
-    scale = sum(table.sum() / len(table) for table in within) / freedom if freedom else _typical_within(series)
+    freedom = sum(share * (len(table) - 1) for share, table in zip(seen, within, strict=True))
+    shown = sum(share * table.sum() / len(table) for share, table in zip(seen, within, strict=True))
+    scale = shown / freedom if freedom > 0 else _typical_within(series)
     return max(0.0, float(contrast / scale - 1 / len(before) - 1 / len(after)))
+
+
+def regression_to_mean(log_level: ArrayLike, error_variance: ArrayLike) -> Floats:
+    """Change of ln level that a second look brings by itself to patients chosen for their first, shape (n,).
+
+    Each patient is drawn to the mean of all by the share that chance has in the differences between patients
+    (from memory: Davis, Am J Epidemiol 1976;104:493). NaN with fewer than MIN_PATIENTS known levels.
+    """
+    level, error = np.asarray(log_level, dtype=float), np.asarray(error_variance, dtype=float)
+    known = np.isfinite(level) & np.isfinite(error)
+    if known.sum() < MIN_PATIENTS:
+        return np.full(level.shape, np.nan)
+    between = max(float(level[known].var(ddof=1) - error[known].mean()), 0.0)
+    return (level[known].mean() - level) * error / (between + error)
 
 
 def _typical_within(series: SpontaneousSeries) -> float:

@@ -79,7 +79,9 @@ def _compare(
     found = compared(measure, days, n_events, change, wear)
     is_ectopy = measure is not HEART_RATE
     recurrence = recurrence_days(measure, days, n_events, change, wear) if is_ectopy else [None] * n_events
-    regression = regression_to_mean(np.log(np.where(found.baseline > 0, found.baseline, np.nan)), found.baseline_variance)
+    regression = regression_to_mean(
+        np.log(np.where(found.baseline > 0, found.baseline, np.nan)), found.baseline_variance
+    )
     success = found.success_probability_pct if is_ectopy else np.full(n_events, np.nan)
     same = ("ratio", "ratio_low", "ratio_high", "chance_fall_limit_pct", "chance_rise_limit_pct", "variance_source",
             "verdict", "days_to_settle")  # fmt: skip

@@ -222,4 +222,7 @@ def test_a_baseline_above_the_programme_is_warned_of():
     table = changes(hours, events).filter(pl.col("measure") == "v_burden_pct")
     assert table["expected_regression_pct"][0] > 20
     assert "regression to the mean" in table["reason"][0]
-    assert table.filter(pl.col("baseline_value") < 0.9 * table["baseline_value"].median())["expected_regression_pct"].max() == 0
+    assert (
+        table.filter(pl.col("baseline_value") < 0.9 * table["baseline_value"].median())["expected_regression_pct"].max()
+        == 0
+    )

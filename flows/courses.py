@@ -1,0 +1,98 @@
+"""What happened within the after period: is the burden back after it had fallen?"""
+
+from __future__ import annotations
+
+from datetime import date, timedelta
+from itertools import pairwise
+
+import numpy as np
+from numpy.typing import NDArray
+
+from detectors import change as statistics
+from detectors.shifts import shifts
+from detectors.spread import Periods, shown_share
+from detectors.variability import excess_of_gap
+from flows.measures import Measure, MeasuredDays
+from flows.settings import ChangeSettings, WearSettings
+
+EPOCH = date(1970, 1, 1)
+NO_DAY = np.iinfo(np.int64).max
+FEWEST_DAYS_FOR_SD = 4
+MEDIAN_STEP = 0.6745 * np.sqrt(2)  # median of |difference| of two normal values, in SDs of one
+LEAST_SD = 0.1  # of ln level; fewer days than a fortnight cannot show less
+
+
+def gap_excess(measure: Measure, days: MeasuredDays, n_events: int, share: float) -> NDArray[np.float64]:
+    """Variance that the time between the two sides adds, per event (`variability.excess_of_gap`); 0 without both."""
+    excess = np.zeros(n_events)
+    if measure.drift is None or share == 0:
+        return excess
+    beats = days.counts / days.dispersion
+    ends = np.searchsorted(days.event, np.arange(n_events + 1))
+    for i, (first, last) in enumerate(pairwise(ends)):
+        day, is_after = days.local_day[first:last], days.is_after[first:last]
+        if is_after.any() and not is_after.all():
+            of_day = beats[first:last]
+            seen = shown_share(np.array([of_day[~is_after].mean(), of_day[is_after].mean()]), measure.day_sd)
+            excess[i] = excess_of_gap(day[~is_after], day[is_after], measure.drift, (seen[0], seen[1]))
+    return excess * share
+
+
+def compared(
+    measure: Measure, days: MeasuredDays, n_events: int, change: ChangeSettings, wear: WearSettings
+) -> statistics.Comparison:
+    """The comparison of the two sides of every event."""
+    return statistics.compare(
+        Periods(2 * days.event + days.is_after, days.counts, days.exposure, days.dispersion),
+        n_events,
+        excess=gap_excess(measure, days, n_events, change.gap_drift_share),
+        typical_sd=measure.day_sd,
+        success_limit_pct=change.success_limit_pct,
+        min_days=wear.min_days_per_period,
+    )
+
+
+def recurrence_days(
+    measure: Measure, days: MeasuredDays, n_events: int, change: ChangeSettings, wear: WearSettings
+) -> list[date | None]:
+    """First day on which the burden is back beyond chance after it had fallen beyond chance, per event.
+
+    The after days are cut where their level first steps up (`detectors.shifts`). It is a recurrence when the days
+    before the cut lie below the baseline beyond chance and the days from the cut on above those before, beyond chance.
+    """
+    cut = _first_rise(days, n_events, measure.day_sd)
+    candidates = np.flatnonzero(cut != NO_DAY)
+    of_candidates = days.where(cut[days.event] != NO_DAY)
+    row = np.searchsorted(candidates, of_candidates.event)
+    is_late = of_candidates.is_after & (of_candidates.local_day >= cut[of_candidates.event])
+    rising = of_candidates._replace(event=row)
+    later = rising._replace(is_after=is_late).where(rising.is_after)
+    fell = compared(measure, rising.where(~is_late), len(candidates), change, wear).verdict == statistics.FELL
+    rose = compared(measure, later, len(candidates), change, wear).verdict == statistics.ROSE
+    back = {int(event): EPOCH + timedelta(days=int(cut[event])) for event in candidates[fell & rose]}
+    return [back.get(event) for event in range(n_events)]
+
+
+def _first_rise(days: MeasuredDays, n_events: int, typical_sd: float) -> NDArray[np.int64]:
+    """Day number on which the after level first steps up, NO_DAY where it does not."""
+    cut = np.full(n_events, NO_DAY)
+    beats = days.counts / days.dispersion + 0.5
+    log_level = np.log(beats * days.dispersion / days.exposure)
+    ends = np.searchsorted(days.event, np.arange(n_events + 1))
+    for i, (first, last) in enumerate(pairwise(ends)):
+        after = first + np.flatnonzero(days.is_after[first:last])
+        series = log_level[after]
+        noise = np.sqrt(_step_sd(series, typical_sd) ** 2 + 1 / beats[after])
+        found = np.concatenate([[0], shifts(series, noise), [len(series)]]).astype(int)
+        level = [series[a:b].mean() for a, b in pairwise(found) if b > a]
+        rises = np.flatnonzero(np.diff(level) > 0)
+        if rises.size:
+            cut[i] = days.local_day[after[found[rises[0] + 1]]]
+    return cut
+
+
+def _step_sd(series: NDArray[np.float64], typical_sd: float) -> float:
+    """SD between days from their successive differences, which a few shifts of level hardly touch."""
+    if len(series) < FEWEST_DAYS_FOR_SD:
+        return typical_sd
+    return max(float(np.median(np.abs(np.diff(series)))) / MEDIAN_STEP, LEAST_SD)
