@@ -21,7 +21,7 @@ from flows import demo
 from flows.programme import make_folder
 
 BLOCK_BYTES = 2**20
-STAGES = ("ingest", "detect", "publish")
+STAGES = ("ingest", "detect", "publish", "nothing new")
 
 
 def main() -> None:
@@ -43,7 +43,7 @@ def main() -> None:
         check=True, capture_output=True, text=True,
     ).stdout  # fmt: skip
     for line in told.splitlines():
-        stage, seconds, peak_mb = line.split()
+        stage, seconds, peak_mb = line.split("\t")
         ratio = float(seconds) / copy_s
         print(f"{stage:14} {float(seconds):7.2f} s  {ratio:6.2f} x copy  at most {peak_mb:>4} MB anonymous")
 
@@ -81,7 +81,7 @@ def _programme(folder: Path, recording: Path, days: float) -> None:
 
 
 def _job(folder: Path) -> None:
-    """Run ingest, detection and publication; print stage, seconds and peak anonymous memory in MB."""
+    """Run ingest, detection, publication and an idle run; print stage, seconds and peak anonymous memory in MB."""
     from flows import ingest, nightly, publication, register
     from flows.progress import Silent
     from flows.settings import load
@@ -99,13 +99,14 @@ def _job(folder: Path) -> None:
         lambda: ingest.ingest(folder, settings, people, ledger, silent.say),
         detect,
         lambda: publication.refresh(folder, settings, people, ledger, silent.say),
+        lambda: nightly.run(folder),
     )
     for stage, step in zip(STAGES, steps, strict=True):
         with Watch() as watch:
             begun = time.perf_counter()
             step()
             seconds = time.perf_counter() - begun
-        print(stage, f"{seconds:.3f}", f"{watch.peak_mb:.0f}")
+        print(stage, f"{seconds:.3f}", f"{watch.peak_mb:.0f}", sep="\t")
 
 
 class Watch:

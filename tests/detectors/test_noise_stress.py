@@ -3,14 +3,14 @@
 import numpy as np
 import pytest
 
-from detectors import noise_stress, synthetic
+from detectors import noise_stress, synthetic, synthetic_beats
 
 FS_HZ = 250
 
 
 @pytest.fixture(scope="module")
 def clean():
-    beats = synthetic.exact_beats([("N", 1.0)] * 600, fs_hz=FS_HZ)
+    beats = synthetic_beats.exact_beats([("N", 1.0)] * 600, fs_hz=FS_HZ)
     return synthetic.draw(beats, n_samples=600 * FS_HZ, fs_hz=FS_HZ).astype(float), beats.sample
 
 

@@ -5,7 +5,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from detectors import synthetic
+from detectors import synthetic, synthetic_beats
 from detectors.synthetic import QUIET, Noise, Rhythm
 
 FS_HZ = 250
@@ -18,7 +18,9 @@ def whole(**options):
     """Counts and beats of a whole recording."""
     hours = list(synthetic.recording(**options))
     counts = np.concatenate([hour.counts for hour in hours])
-    beats = synthetic.TrueBeats(*(np.concatenate(column) for column in zip(*(h.beats for h in hours), strict=True)))
+    beats = synthetic_beats.TrueBeats(
+        *(np.concatenate(column) for column in zip(*(h.beats for h in hours), strict=True))
+    )
     return counts, beats
 
 
@@ -117,7 +119,7 @@ def test_lead_off_lies_on_the_rail():
 
 def test_noise_free_amplitude_and_timing():
     """The R peak stands at the told sample with the model's amplitude, the signal is flat between beats."""
-    beats = synthetic.exact_beats([("N", 1.0)] * 5, fs_hz=FS_HZ)
+    beats = synthetic_beats.exact_beats([("N", 1.0)] * 5, fs_hz=FS_HZ)
     signal_mv = synthetic.draw(beats, n_samples=6 * FS_HZ, fs_hz=FS_HZ)
     assert beats.sample.tolist() == [375, 625, 875, 1125, 1375]
     assert np.argmax(signal_mv[250:500]) + 250 == 375
@@ -127,14 +129,14 @@ def test_noise_free_amplitude_and_timing():
 
 def test_exact_classes():
     """Kinds with a family number keep their class letter."""
-    beats = synthetic.exact_beats([("N", 1.0), ("V2", 0.6), ("F1", 1.4), ("S", 0.7)])
+    beats = synthetic_beats.exact_beats([("N", 1.0), ("V2", 0.6), ("F1", 1.4), ("S", 0.7)])
     assert beats.beat_class.tolist() == ["N", "V", "F", "S"]
 
 
 def test_unknown_kind_is_refused():
     """A kind that is not drawn is refused with the known ones."""
     with pytest.raises(ValueError, match="kind 'V7'; expected N, S, V0 to V2"):
-        synthetic.exact_beats([("V7", 1.0)])
+        synthetic_beats.exact_beats([("V7", 1.0)])
 
 
 def test_no_time_is_refused():
@@ -147,7 +149,9 @@ def test_no_time_is_refused():
 @settings(max_examples=30)
 def test_any_window_is_a_cut_of_the_whole(first, length):
     """Drawing a window gives the same samples as cutting it from the whole."""
-    beats = synthetic.exact_beats([("N", 0.9), ("V1", 0.5), ("N", 1.3), ("V0", 0.35), ("S", 0.4)] * 4, fs_hz=FS_HZ)
+    beats = synthetic_beats.exact_beats(
+        [("N", 0.9), ("V1", 0.5), ("N", 1.3), ("V0", 0.35), ("S", 0.4)] * 4, fs_hz=FS_HZ
+    )
     all_of_it = synthetic.draw(beats, n_samples=5000, fs_hz=FS_HZ)
     window = synthetic.draw(beats, n_samples=length, first_sample=first, fs_hz=FS_HZ)
     assert np.allclose(window, all_of_it[first : first + length], atol=1e-6)

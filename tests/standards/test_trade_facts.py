@@ -3,7 +3,7 @@
 import numpy as np
 import pytest
 
-from detectors import analyse_signal, synthetic
+from detectors import analyse_signal, synthetic, synthetic_beats
 from detectors.results import PAUSE_KINDS
 
 FS_HZ = 250
@@ -13,7 +13,7 @@ FULL_PAUSE = [("V", 0.6), ("N", 1.4)]
 
 def analysed(rhythm, fs_hz=FS_HZ):
     """True beats, analysis, and for each true beat the number of the found beat within 30 ms (-1 for none)."""
-    beats = synthetic.exact_beats(rhythm, fs_hz=fs_hz)
+    beats = synthetic_beats.exact_beats(rhythm, fs_hz=fs_hz)
     n_samples = int(beats.sample[-1]) + 2 * fs_hz
     noise_mv = 0.005 * np.random.default_rng(1).standard_normal(n_samples)
     analysis = analyse_signal(synthetic.draw(beats, n_samples=n_samples, fs_hz=fs_hz) + noise_mv, fs_hz=fs_hz)
