@@ -117,7 +117,13 @@ class Published:
             statements = connection.extract_statements(sql)
             if len(statements) != 1 or statements[0].type not in _READING:
                 raise QueryError("expected one query that reads (SELECT, FROM, WITH, DESCRIBE, SUMMARIZE, EXPLAIN)")
-            return connection.sql(sql)
+            # Run to the end here, so that an error in the last row is still a QueryError.
+            return connection.sql(sql).materialize()
+        except duckdb.IOException as problem:
+            raise QueryError(
+                f"parts of the lake that the publication reads are not where they were: {problem}; "
+                f"put the lake back at {self.lake}, or run again to publish anew"
+            ) from None
         except duckdb.Error as problem:
             raise QueryError(str(problem).strip()) from None
 

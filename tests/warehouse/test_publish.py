@@ -184,6 +184,8 @@ def test_rows_of_one_recording_come_alone(programme: Any) -> None:
         ("FROM glob('/etc/*')", "disabled by configuration"),
         ("INSTALL httpfs", "expected one query that reads"),
         ("SET threads = 1", "expected one query that reads"),
+        ("SELECT error('broken row') FROM wear_days", "broken row"),
+        ("SELECT 1 UNION ALL SELECT error('last row')::INTEGER", "last row"),
     ],
 )
 def test_a_query_that_does_not_read_the_publication_is_refused(programme: Any, sql: str, words: str) -> None:
@@ -191,6 +193,16 @@ def test_a_query_that_does_not_read_the_publication_is_refused(programme: Any, s
     _publish(programme)
     with pytest.raises(QueryError, match=re.escape(words)):
         Published(programme.folder / "published").frame(sql)
+
+
+def test_a_lake_that_was_moved_away_is_missed_with_its_place(programme: Any) -> None:
+    """Trend tables still answer without the lake; a query over beats says where it has to be."""
+    _publish(programme)
+    published = Published(programme.folder / "published")
+    (programme.folder / "lake").rename(programme.folder / "elsewhere")
+    assert published.frame("FROM wear_days").height == 5
+    with pytest.raises(QueryError, match=re.escape(f"put the lake back at {programme.folder / 'lake'}")):
+        published.frame("FROM beats")
 
 
 def test_a_folder_without_publication_says_what_to_do(tmp_path: Path) -> None:
