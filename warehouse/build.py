@@ -27,7 +27,8 @@ MODELS: dict[str, tuple[str, ...]] = {
     "intermediate": ("hours", "local_hours", "wear_days", "period_spans", "periods"),
     "marts": (
         "deliveries", "recordings", "segments", "families", "episodes", "findings", "attention_from_days",
-        "attention_from_therapies", "attention", "review_sheet", "reviews", "runs_of_flow", "audit", "fingerprints",
+        "attention_from_therapies", "attention", "review_sheet", "decisions", "reviews",
+        "reviewed", "latest_decisions", "reader_conflicts", "reader_agreement", "runs_of_flow", "audit", "fingerprints",
     ),
 }  # fmt: skip
 

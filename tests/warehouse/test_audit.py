@@ -78,7 +78,13 @@ def test_the_publication_lists_changes_deliveries_and_reviews(noted: Any) -> Non
     noted.land(
         "deliveries", "00", [{"delivery_id": "D1", "file_name": "x.edf", "status": "waiting", "reason": "no wear"}]
     )
+    decided = {"recording_id": "R1", "decision_subject": "family", "family": 3, "decision": "N", "note": "looks sinus"}
+    noted.land("decisions", "D2", [{"delivery_id": "D2", "decision_order": 0, "reader_code": "A", **decided}])
     with noted.built() as build:
         rows = build.frame("audit").select("change_kind", "subject", "new_value", "reason").rows()
         assert build.check() == []
-    assert set(rows) == {("promotion", "f2", "f2", "fewer false beats"), ("delivery", "x.edf", "waiting", "no wear")}
+    assert set(rows) == {
+        ("promotion", "f2", "f2", "fewer false beats"),
+        ("delivery", "x.edf", "waiting", "no wear"),
+        ("review", "R1 family 3", "N", "looks sinus"),
+    }

@@ -14,12 +14,12 @@ SELECT
 FROM lake.deliveries
 UNION ALL
 SELECT
-    concat_ws(' ', 'review', recording_id, segment, sample, reader_code),
+    concat_ws(' ', 'decision', delivery_id, decision_order),
     reviewed_utc,
     reader_code,
     'review',
-    concat_ws(' ', recording_id, segment, sample),
-    NULL,
+    concat_ws(' ', recording_id, decision_subject, family, episode_kind, segment, sample),
+    automatic_class,
     decision,
-    NULL
-FROM lake.reviews
+    note
+FROM lake.decisions

@@ -1,2 +1,2 @@
--- one row per decision of an over-reader; key recording_id, segment, sample, reader_code
+-- one row per beat whose class an over-reader's file decides; key delivery_id, segment, sample
 SELECT * FROM lake.reviews

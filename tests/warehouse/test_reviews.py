@@ -1,0 +1,135 @@
+"""What over-readers decided, applied to the numbers; where they differ, and how much they agree."""
+
+from datetime import datetime
+from typing import Any
+
+import polars as pl
+import pytest
+
+FS_HZ = 250
+NOON = datetime.fromisoformat("2026-06-01T12:00:00")
+
+
+@pytest.fixture
+def read(lake: Any) -> Any:
+    """A recording of 100 analysable beats, every tenth a V, and 5 more V that are not analysable."""
+    lake.patient("P1")
+    tally = {"n_beats": 90, "s_beats": 0, "v_beats": 10}
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-01T00:15", **tally)
+    places = pl.int_range(105, eager=True)
+    beats = pl.DataFrame(
+        {
+            "recording_id": "R1",
+            "fingerprint": "f1",
+            "segment": 0,
+            "sample": places * FS_HZ,
+            "beat_class": ["V" if place % 10 == 0 and place < 100 or place >= 100 else "N" for place in places],
+            "is_analysable": [place < 100 for place in places],
+        }
+    )
+    lake.land("beats", "R1", beats, "f1")
+    return lake
+
+
+def review(
+    lake: Any, delivery_id: str, decided: dict[int, str], hour: int = 0, reader: str = "A", shift: int = 0
+) -> None:
+    """Land decisions on single beats, by their place in the recording."""
+    row = {"delivery_id": delivery_id, "recording_id": "R1", "read_fingerprint": "f1", "reader_code": reader}
+    row["reviewed_utc"] = NOON.replace(hour=hour)
+    beats = [
+        row | {"segment": 0, "sample": place * FS_HZ + shift, "automatic_class": "V", "decision": decision}
+        for place, decision in decided.items()
+    ]
+    one = row | {"decision_order": 0, "decision_subject": "note", "note": "read"}
+    lake.land("reviews", delivery_id, beats)
+    lake.land("decisions", delivery_id, [one])
+
+
+def reviewed(lake: Any) -> dict[str, Any]:
+    with lake.built() as build:
+        assert build.check() == []
+        return build.frame("reviewed").row(0, named=True)
+
+
+def test_relabelled_beats_move_the_burden(read: Any) -> None:
+    """V beats called N leave the numerator, N beats called V enter it; noise leaves the denominator, too."""
+    review(read, "D1", {0: "N", 10: "noise", 20: "V", 1: "V", 2: "V"})
+    found = reviewed(read)
+    # Source: by hand, 10 V of 100 beats: two leave, two enter, one beat is no beat
+    assert (found["v_beats"], found["reviewed_v_beats"], found["reviewed_all_beats"]) == (10, 10, 99)
+    assert found["reviewed_v_burden_pct"] == pytest.approx(100 * 10 / 99)
+    assert (found["decided_beats"], found["decided_v_pct"], found["unmet_decisions"]) == (5, 30, 0)
+
+
+def test_beats_that_are_not_analysable_move_nothing(read: Any) -> None:
+    """A decision on a beat outside analysable time changes neither numerator nor denominator."""
+    review(read, "D1", {101: "N", 102: "noise"})
+    found = reviewed(read)
+    assert (found["reviewed_v_beats"], found["reviewed_all_beats"], found["decided_beats"]) == (10, 100, 0)
+
+
+def test_the_latest_decision_holds(read: Any) -> None:
+    """A reader who changes their mind, or a second reader, overrides the earlier decision on the same beat."""
+    review(read, "D1", {0: "N"}, hour=9)
+    review(read, "D2", {0: "V"}, hour=8, reader="B")
+    assert reviewed(read)["reviewed_v_beats"] == 9
+    review(read, "D3", {0: "V"}, hour=10, reader="B")
+    found = reviewed(read)
+    assert (found["reviewed_v_beats"], found["reader_codes"]) == (10, "A B")
+
+
+# Source: ANSI/AAMI EC57 matching window as in reference comparator bxb (WFDB): 150 ms, 38 samples at 250 Hz
+@pytest.mark.parametrize(("shift", "met"), [(38, True), (-38, True), (39, False), (-39, False)])
+def test_decisions_meet_beats_within_150_ms(read: Any, shift: int, met: bool) -> None:
+    """A detector that finds the beat a little earlier or later keeps the decision; else it is counted as unmet."""
+    review(read, "D1", {0: "N", 30: "N"} if shift > 0 else {30: "N", 40: "N"}, shift=shift)
+    found = reviewed(read)
+    assert (found["decided_beats"], found["unmet_decisions"]) == ((2, 0) if met else (0, 2))
+    assert found["reviewed_v_beats"] == (8 if met else 10)
+
+
+def families(lake: Any, reader: str, decided: dict[int, tuple[str, int]]) -> None:
+    """Land decisions on whole families: number -> class and beats."""
+    rows = [
+        {
+            "delivery_id": f"D{reader}", "decision_order": order, "recording_id": "R1", "read_fingerprint": "f1",
+            "reader_code": reader, "reviewed_utc": NOON, "decision_subject": "family", "family": family,
+            "automatic_class": "V", "beat_count": beats, "decision": decision,
+        }
+        for order, (family, (decision, beats)) in enumerate(decided.items())
+    ]  # fmt: skip
+    lake.land("decisions", f"D{reader}", rows)
+
+
+def test_readers_who_differ_are_listed(read: Any) -> None:
+    """A family that two readers call differently is a conflict; an accepted class is the automatic one."""
+    families(read, "A", {1: ("accept", 60), 2: ("N", 40), 3: ("V", 5)})
+    families(read, "B", {1: ("V", 60), 2: ("S", 40)})
+    with read.built() as build:
+        assert build.check() == []
+        (conflict,) = build.frame("reader_conflicts").rows(named=True)
+    assert (conflict["family"], conflict["decision"], conflict["other_decision"]) == (2, "N", "S")
+
+
+def test_agreement_is_cohens_kappa_over_beats(read: Any) -> None:
+    """Kappa counts every beat of a family that both readers decided."""
+    inter_rater = pytest.importorskip("statsmodels.stats.inter_rater", reason="statsmodels is not installed")
+    families(read, "A", {1: ("accept", 60), 2: ("N", 40), 3: ("V", 30), 4: ("S", 10), 5: ("V", 99)})
+    families(read, "B", {1: ("V", 60), 2: ("S", 40), 3: ("V", 30), 4: ("S", 10)})
+    with read.built() as build:
+        (found,) = build.frame("reader_agreement").rows(named=True)
+    # rows: reader A says N, S, V; columns: reader B
+    table = [[0, 40, 0], [0, 10, 0], [0, 0, 90]]
+    # Source: statsmodels, cohens_kappa
+    assert found["kappa"] == pytest.approx(inter_rater.cohens_kappa(table).kappa, abs=1e-12)
+    assert (found["beats_in_common"], found["agreed_pct"]) == (140, pytest.approx(100 * 100 / 140))
+
+
+def test_readers_of_one_class_have_no_kappa(read: Any) -> None:
+    """Where both readers call everything V, chance explains the agreement and kappa is not defined."""
+    families(read, "A", {1: ("V", 60)})
+    families(read, "B", {1: ("V", 60)})
+    with read.built() as build:
+        (found,) = build.frame("reader_agreement").rows(named=True)
+    assert (found["agreed_pct"], found["kappa"]) == (100, None)
