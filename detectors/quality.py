@@ -21,11 +21,12 @@ from detectors.signal import WORKING_FS_HZ
 
 REACH_BLOCKS = 2  # either side: 7.7 s in all
 QUIET_PERCENTILE = 25
-NOISY = 1.8  # times the quiet level, together with ODD
+NOISY = 2.0  # times the quiet level, together with ODD
 ODD = 0.015  # mean distance of the beats from their families
-VERY_NOISY = 3.0
-VERY_ODD = 0.08
+VERY_NOISY = 2.5
+VERY_ODD = 0.06
 DISTANCE_CAP = 0.3  # one beat of its own shape must not condemn a stretch
+MARGIN_BLOCKS = 1  # noise begins and ends somewhere in the means of its first and last blocks
 LEAD_OFF = 0.15  # of the recording's usual QRS level
 
 
@@ -95,6 +96,7 @@ def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.str_]:
         return np.empty(0, dtype="<U8")
     noise, odd = np.nan_to_num(_relative_noise(blocks), nan=0.0), _oddness(one)
     is_noisy = (noise > NOISY * quiet) & (odd > ODD) | (noise > VERY_NOISY * quiet) | (odd > VERY_ODD)
+    is_noisy = np.convolve(is_noisy, np.ones(2 * MARGIN_BLOCKS + 1), mode="same") > 0
     return np.select(
         [
             blocks.is_missing,
