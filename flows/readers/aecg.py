@@ -20,7 +20,7 @@ import numpy as np
 from flows.readers.channels import choose, mv_per_unit
 from flows.readers.codes import Refused
 from flows.readers.columns import Spool
-from flows.readers.recording import Finding, Opened, Site, Stretch, checked_rate, checked_scale, finding
+from flows.readers.recording import Finding, Opened, Site, Stretch, checked_rate, checked_scale, decimal_of, finding
 from flows.readers.wide import Wide, fitted
 
 NAME = "aECG"
@@ -188,7 +188,7 @@ def _type(values: dict[str, str]) -> str:
 def _rate(increment: tuple[str, str] | None) -> Fraction:
     value, unit = increment or ("", "")
     try:
-        step_s = Fraction(value) * _S_PER_UNIT[unit]
+        step_s = decimal_of(value) * _S_PER_UNIT[unit]
         rate = 1 / step_s
     except (ValueError, KeyError, ZeroDivisionError):
         raise Refused(
@@ -222,9 +222,13 @@ def _scale(lead: _Lead, site: Site) -> tuple[float, float, tuple[Finding, ...]]:
     if factor is None or origin_factor is None:
         raise Refused("unit_unknown", "XML: the scale's unit is no voltage; expected V, mV, uV or nV.")
     try:
-        mv_per_count, origin_mv = float(lead.scale[0]) * factor, float(lead.origin[0]) * origin_factor
+        mv_per_count, origin_mv = _float(lead.scale[0]) * factor, _float(lead.origin[0]) * origin_factor
     except ValueError:
         raise Refused("bad_header_number", "XML: origin or scale of the ECG lead is no number.") from None
     if not mv_per_count:
         raise Refused("amplitude_scale_missing", "XML: the scale is 0; expected millivolts per digit.")
-    return checked_scale(mv_per_count, 65_535, "XML"), -origin_mv / mv_per_count, ()
+    return checked_scale(mv_per_count, 65_535, "XML"), (0.0 - origin_mv) / mv_per_count, ()
+
+
+def _float(text: str) -> float:
+    return float(decimal_of(text))

@@ -5,9 +5,11 @@ Sizes that an archive states are not trusted: bytes are counted as they come out
 
 from __future__ import annotations
 
+import errno
 import gzip
 import shutil
 import stat
+import struct
 import zipfile
 import zlib
 from collections.abc import Callable
@@ -19,6 +21,13 @@ from flows.readers.codes import Refused
 _PIECE_BYTES = 2**20
 _MOST_MEMBERS = 2000
 _SMALL_BYTES = 2**20  # below this the ratio says nothing
+
+
+# What the standard library raises on broken archives of either kind; passwords and unknown methods among them.
+_DAMAGES = (
+    EOFError, IndexError, NotImplementedError, OverflowError, RuntimeError, ValueError, struct.error, zlib.error,
+    zipfile.BadZipFile,
+)  # fmt: skip
 
 
 class Limits(NamedTuple):
@@ -42,7 +51,9 @@ def unpack(path: Path, folder: Path, limits: Limits) -> list[Path]:
     budget = _Budget(path.stat().st_size, limits)
     try:
         files = _gunzip(path, folder, budget) if head.startswith(b"\x1f\x8b") else _unzip(path, folder, budget)
-    except (EOFError, zlib.error, zipfile.BadZipFile, gzip.BadGzipFile, NotImplementedError, RuntimeError) as problem:
+    except (*_DAMAGES, OSError) as problem:
+        if isinstance(problem, OSError) and problem.errno in (errno.ENOSPC, errno.EDQUOT):
+            raise
         raise Refused(
             "damaged_archive",
             "the archive is cut, damaged or needs a password; expected one that unpacks whole. Pack it again.",

@@ -23,7 +23,7 @@ from flows.readers.recording import Finding, Opened, Site, Stretch, checked_rate
 from flows.readers.wide import Wide, fitted
 
 VALUE, TIME = "value", "time_ns"
-_TIME_NAME = re.compile(r"(date ?time|time ?stamp|time|utc|zeit|t)\b.*", re.IGNORECASE)
+_TIME_NAME = re.compile(r"(date ?time|time ?stamp|time|utc|zeit|t)([\W_].*)?", re.IGNORECASE)
 _UNIT_IN_NAME = re.compile(r"[\[(_ ](V|mV|uV|µV|μV|nV)[\])]?$", re.IGNORECASE)
 _SECONDS_IN_NAME = re.compile(r"[\[(_ ](s|ms|us|ns)[\])]?$", re.IGNORECASE)
 _NS_PER = {"s": 10**9, "ms": 10**6, "us": 10**3, "ns": 1, "seconds": 10**9, "milliseconds": 10**6}
@@ -130,7 +130,8 @@ def opened_from(
     spool = Spool()
     times = _Times(site)
     for batch in batches:
-        values = batch[VALUE].to_numpy().astype(np.float32)
+        with np.errstate(over="ignore"):  # what does not fit becomes infinite, which is missing
+            values = batch[VALUE].to_numpy().astype(np.float32)
         if layout.time is not None:
             times.add(batch[TIME].to_numpy(), spool.n_samples)
         spool.add(values)

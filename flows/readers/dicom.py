@@ -20,7 +20,7 @@ from numpy.typing import NDArray
 from flows.readers.channels import choose, mv_per_unit
 from flows.readers.codes import Refused
 from flows.readers.dicom_elements import WAVEFORM_DATA, Elements, Place, read_elements
-from flows.readers.recording import Finding, Opened, Site, Stretch, checked_rate, checked_scale, finding
+from flows.readers.recording import Finding, Opened, Site, Stretch, checked_rate, checked_scale, decimal_of, finding
 from flows.readers.wide import Wide, fitted
 
 NAME = "DICOM"
@@ -101,8 +101,8 @@ def _item(elements: Elements, tag: int) -> Elements:
 
 def _decimal(elements: Elements, tag: int, name: str, default: str = "") -> Fraction:
     try:
-        return Fraction(_text(elements, tag) or default)
-    except (ValueError, ZeroDivisionError):
+        return decimal_of(_text(elements, tag) or default)
+    except ValueError:
         raise Refused("bad_header_number", f"DICOM: the {name} is no number; expected one.") from None
 
 
@@ -145,6 +145,8 @@ def _extent(
         raise Refused("no_samples", "DICOM: the file ends before the samples. Export it again.")
     if there < stated:
         return there, data, (finding("file_cut_short", f"{there} of {stated} samples"),)
+    if stated == 0:
+        return there, data, (finding("more_records_than_header_says", f"{there} samples, header 0"),)
     return stated, data, ()
 
 
@@ -163,7 +165,7 @@ def _scale(channel: Elements, site: Site, n_counts: float) -> tuple[float, float
             "of programme.toml if it is known.",
         )
     baseline_mv = float(_decimal(channel, 0x003A0213, "channel baseline", "0")) * factor
-    return checked_scale(mv_per_count, n_counts, "DICOM"), -baseline_mv / mv_per_count, ()
+    return checked_scale(mv_per_count, n_counts, "DICOM"), (0.0 - baseline_mv) / mv_per_count, ()
 
 
 def _padding(group: Elements, dtype: np.dtype[Any]) -> int | None:

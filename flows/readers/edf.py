@@ -23,7 +23,7 @@ from numpy.typing import NDArray
 from flows.readers.channels import choose, mv_per_unit
 from flows.readers.codes import Refused
 from flows.readers.edf_times import RecordTimes, read_record_times
-from flows.readers.recording import Finding, Opened, Site, checked_rate, checked_scale, finding
+from flows.readers.recording import Finding, Opened, Site, checked_rate, checked_scale, decimal_of, finding
 from flows.readers.wide import Wide, fitted
 
 NAME = "EDF"
@@ -194,8 +194,8 @@ def _signal_count(fixed: bytes, size: int) -> int:
 
 def _number(text: str, name: str, channel: int | None = None) -> Fraction:
     try:
-        return Fraction(text.replace(",", ".").strip(" \0"))
-    except (ValueError, ZeroDivisionError):
+        return decimal_of(text.replace(",", ".").strip(" \0"))
+    except ValueError:
         where = "" if channel is None else f" of channel {channel + 1}"
         raise Refused(
             "bad_header_number", f"header: {name}{where} is not a number; expected digits. Export the file again."

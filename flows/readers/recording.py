@@ -5,6 +5,7 @@ Nothing of the person is kept but the words among which the register may find it
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable
 from dataclasses import dataclass, field
 from datetime import datetime
@@ -19,6 +20,7 @@ from flows.readers.codes import FINDINGS, Refused
 LOWEST_FS_HZ, HIGHEST_FS_HZ = 50, 10_000  # an ECG of use for beats; no device of the trade lies outside
 COARSEST_MV_PER_COUNT = 0.05  # a QRS of 1 mV would have 20 steps
 SMALLEST_RANGE_MV = 1.0
+_DECIMAL = re.compile(r"[+-]?(\d{1,18}\.?\d{0,18}|\.\d{1,18})([eE][+-]?\d{1,2})?", re.ASCII)
 
 
 class Site(NamedTuple):
@@ -100,6 +102,13 @@ def finding(code: str, detail: str = "") -> Finding:
     if code not in FINDINGS:
         raise KeyError(f"finding {code} is not in flows/readers/codes.py")
     return Finding(code, detail)
+
+
+def decimal_of(text: str) -> Fraction:
+    """Exact value of a decimal number; ValueError for anything else and for numbers no header needs."""
+    if not _DECIMAL.fullmatch(text.strip()):
+        raise ValueError("not a decimal number of ordinary size")
+    return Fraction(text.strip())
 
 
 def checked_rate(rate: Fraction, where: str) -> Fraction:

@@ -79,14 +79,12 @@ def open_delivery(files: Sequence[Path], site: Site) -> Opened:
     decimal = _decimal(form, layout, site)
     is_cut = _check_rows(path, form)
     zone, time_format = _time_form(form, layout, site)
-    return opened_from(
-        _batches(path, form, layout, decimal, time_format, is_cut),
-        layout,
-        site,
-        format_name=NAME,
-        zone=zone,
-        findings=(finding("file_cut_short", "the last line is not whole"),) if is_cut else (),
-    )
+    batches = _batches(path, form, layout, decimal, time_format, is_cut)
+    findings = (finding("file_cut_short", "the last line is not whole"),) if is_cut else ()
+    try:
+        return opened_from(batches, layout, site, format_name=NAME, zone=zone, findings=findings)
+    except pl.exceptions.PolarsError as problem:
+        raise unclear("a row or a time cannot be read as the first ones", "time_format or separator") from problem
 
 
 def _form(path: Path, site: Site) -> _Form:

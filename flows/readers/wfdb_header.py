@@ -12,14 +12,20 @@ from datetime import datetime
 from fractions import Fraction
 
 from flows.readers.codes import Refused
+from flows.readers.recording import decimal_of
 
 _RECORD_LINE = re.compile(
-    rb"(?P<name>[\w.-]+)(?:/(?P<segments>\d+))?[ \t]+(?P<signals>\d+)"
-    rb"(?:[ \t]+(?P<rate>[\d.+-eE]+)(?:/(?P<counter>[\d.+-eE]+)(?:\((?P<base>[\d.+-eE]+)\))?)?"
-    rb"(?:[ \t]+(?P<samples>\d+)(?:[ \t]+(?P<time>[\d:.]+)(?:[ \t]+(?P<date>\d+/\d+/\d+))?)?)?)?[ \t\r]*"
+    rb"(?P<name>[\w.-]+)(?:/(?P<segments>\d{1,6}))?[ \t]+(?P<signals>\d{1,4})"
+    rb"(?:[ \t]+(?P<rate>[\d.+eE-]+)(?:/(?P<counter>[\d.+eE-]+)(?:\((?P<base>[\d.+eE-]+)\))?)?"
+    rb"(?:[ \t]+(?P<samples>\d{1,15})"
+    rb"(?:[ \t]+(?P<time>[\d:.]{1,24})(?:[ \t]+(?P<date>\d{1,2}/\d{1,2}/\d{1,4}))?)?)?)?[ \t\r]*"
 )
-_SIGNAL_FORMAT = re.compile(r"(?P<format>\d+)(?:x(?P<frame>\d+))?(?::(?P<skew>\d+))?(?:\+(?P<offset>\d+))?")
-_GAIN = re.compile(r"(?P<gain>[+-]?[\d.]+(?:[eE][+-]?\d+)?)(?:\((?P<baseline>[+-]?\d+)\))?(?:/(?P<unit>\S+))?")
+_SIGNAL_FORMAT = re.compile(
+    r"(?P<format>\d{1,4})(?:x(?P<frame>\d{1,6}))?(?::(?P<skew>\d{1,9}))?(?:\+(?P<offset>\d{1,15}))?"
+)
+_GAIN = re.compile(
+    r"(?P<gain>[+-]?\d{0,15}\.?\d{0,15}(?:[eE][+-]?\d{1,2})?)(?:\((?P<baseline>[+-]?\d{1,10})\))?(?:/(?P<unit>\S+))?"
+)
 _DEFAULT_FS_HZ = Fraction(250)  # the specification's default when the header gives none
 
 
@@ -117,8 +123,8 @@ def _rate(text: bytes | None) -> Fraction:
     if text is None:
         return _DEFAULT_FS_HZ
     try:
-        rate = Fraction(text.decode())
-    except (ValueError, ZeroDivisionError):
+        rate = decimal_of(text.decode())
+    except ValueError:
         raise Refused("bad_header_number", "header: the sampling rate is not a number.") from None
     return rate or _DEFAULT_FS_HZ
 
@@ -138,30 +144,36 @@ def _signal(line: str, number: int) -> Signal:
         samples_per_frame=int(coding["frame"] or 1),
         skew=int(coding["skew"] or 0),
         byte_offset=int(coding["offset"] or 0),
-        gain=float(gain["gain"]) if gain else 0.0,
+        gain=_gain(gain["gain"]) if gain else 0.0,
         baseline=baseline,
         unit=(gain["unit"] if gain else None) or "mV",
-        adc_bits=bits or 0,
+        adc_bits=min(bits or 0, 32),
         adc_zero=zero or 0,
         checksum=checksum,
         label=words[8].strip() if len(words) > 8 else f"signal {number + 1}",
     )
 
 
-def _integer(word: str, number: int) -> int:
+def _gain(text: str) -> float:
     try:
-        return int(word)
+        return float(decimal_of(text))
     except ValueError:
-        raise Refused("bad_header_number", f"header: a number of signal {number + 1} cannot be read.") from None
+        return 0.0
+
+
+def _integer(word: str, number: int) -> int:
+    if re.fullmatch(r"[+-]?\d{1,12}", word):
+        return int(word)
+    raise Refused("bad_header_number", f"header: a number of signal {number + 1} cannot be read.")
 
 
 def _start(time: bytes | None, date: bytes | None) -> tuple[datetime | None, bool]:
     """Start when time and date are there; a time alone is no start."""
     if time is None or date is None:
         return None, False
-    clock = [Fraction(part.decode() or "0") for part in time.split(b":")]
     day, month, year = (int(part) for part in date.split(b"/"))
     try:
+        clock = [decimal_of(part.decode() or "0") for part in time.split(b":")]
         hour, minute, second = [Fraction(0)] * (3 - len(clock)) + clock
         micros = round((second % 1) * 1_000_000)
         start = datetime(year, month, day, int(hour), int(minute), int(second), micros)  # noqa: DTZ001  device clock
