@@ -88,6 +88,20 @@ def _alpha_score(counts: Floats, mean: Floats, alpha: float) -> float:
     return float(-size * by_size.sum())
 
 
+def clustered_covariance(fit: RateFit, counts: ArrayLike, design: ArrayLike, cluster: ArrayLike) -> Floats:
+    """Covariance of a Poisson fit when counts of one cluster (a day) go together (Liang and Zeger 1986), shape (p, p).
+
+    `cluster` holds the cluster of every count, 0-based, shape (n,). With the usual correction for few clusters.
+    """
+    x, group = np.asarray(design, dtype=float), np.asarray(cluster, dtype=np.int64)
+    n_groups = int(group.max()) + 1
+    scores = np.zeros((n_groups, x.shape[1]))
+    np.add.at(scores, group, x * (np.asarray(counts, dtype=float) - fit.fitted)[:, None])
+    bread = np.linalg.inv(x.T @ (fit.fitted[:, None] * x))
+    few = n_groups / (n_groups - 1) * (len(x) - 1) / (len(x) - x.shape[1])
+    return np.asarray(few * bread @ scores.T @ scores @ bread)
+
+
 def _checked(counts: ArrayLike, design: ArrayLike, exposure: ArrayLike | None) -> tuple[Floats, Floats, Floats]:
     y, x = np.asarray(counts, dtype=float), np.asarray(design, dtype=float)
     hours = np.ones(len(y)) if exposure is None else np.asarray(exposure, dtype=float)

@@ -163,6 +163,18 @@ def test_two_rates_compared_exactly_on_registry_data():
     assert found.p == pytest.approx(poisson_2indep(60, 51477.5, 30, 54308.7, method="exact-cond").pvalue, abs=1e-12)
 
 
+def test_covariance_by_day_equals_the_library():
+    """Hours of one day going together widen the errors as in a general library."""
+    rng = np.random.default_rng(5)
+    day = np.repeat(np.arange(20), 24)
+    design = np.column_stack([np.ones(480), day >= 10, rng.normal(size=480)])
+    counts = rng.poisson(np.exp(design @ [3, -0.4, 0.2] + 0.4 * rng.standard_normal(20)[day]))
+    fit = rates.fit_poisson(counts, design)
+    library = sm.GLM(counts, design, family=sm.families.Poisson()).fit(cov_type="cluster", cov_kwds={"groups": day})
+    # Source: statsmodels GLM with cov_type cluster
+    assert rates.clustered_covariance(fit, counts, design, day) == pytest.approx(library.cov_params(), rel=1e-6)
+
+
 def test_no_counts_have_open_ends():
     """None in one group leaves one end open, none in both says nothing."""
     assert rates.compare_rates(0, 10, 5, 10)[:2] == (0, 0)
