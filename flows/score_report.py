@@ -110,6 +110,7 @@ class Report:
             "records": [_record(record) for record in self.records],
             "runs": {ectopy: self._runs(ectopy) for ectopy in "VS"},
             "v_burden_error": _spread([record.v_burden_error_pct_points for record in self.records]),
+            "analysable_share": _shares([record.analysable_share_pct for record in self.records]),
             "matrix": _matrix(np.sum(matrices, axis=0)),
             "reliability": {name: self._reliability(name) for name in ("all", *CLASSES)},
             "noise": [score.as_dict() for score in self.noise],
@@ -191,6 +192,11 @@ def _spread(errors: Sequence[float]) -> dict[str, float | None]:
     }
 
 
+def _shares(shares_pct: Sequence[float]) -> dict[str, float | None]:
+    """What the noise gate leaves: a gate that takes real arrhythmia away shows here."""
+    return {"mean_pct": _rounded(float(np.mean(shares_pct))), "least_pct": _rounded(min(shares_pct))}
+
+
 def _matrix(matrix: NDArray[np.int64]) -> dict[str, dict[str, int]]:
     return {
         row: dict(zip(TEST_COLUMNS, counts, strict=True))
@@ -208,6 +214,8 @@ def _text(report: Mapping[str, Any]) -> str:
         "V burden error, points: " + ", ".join(f"{k} {_shown(v)}" for k, v in report["v_burden_error"].items()),
         "(V share of the detector's analysable beats, without those in marked ventricular flutter or fibrillation, "
         "minus V share of all the expert's beats)",
+        "Analysable share of the records, %: "
+        + ", ".join(f"{k.removesuffix('_pct')} {_shown(v)}" for k, v in report["analysable_share"].items()),
         _table(_RECORD_HEADINGS, [_record_row(row) for row in report["records"]]),
         _table(_RUN_HEADINGS, [_run_row(ectopy, runs) for ectopy, runs in report["runs"].items()]),
         _table(

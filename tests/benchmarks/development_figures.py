@@ -13,7 +13,17 @@ from pathlib import Path
 from flows.score import score_folder
 
 TARGET = Path(__file__).parents[2] / "dashboards" / "development_figures.json"
-KEPT = ("options", "gross", "average", "gross_without_af", "v_burden_error", "runs", "noise", "reliability")
+KEPT = (
+    "options",
+    "gross",
+    "average",
+    "gross_without_af",
+    "v_burden_error",
+    "analysable_share",
+    "runs",
+    "noise",
+    "reliability",
+)
 
 
 def main(reference: Path) -> None:

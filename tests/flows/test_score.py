@@ -156,6 +156,14 @@ def test_reliability_covers_every_scored_beat(report):
     assert sum(row["beats"] for name in "NSVFQ" for row in told["reliability"][name]) == found
 
 
+def test_the_share_that_was_analysable_is_told(report):
+    """The mean and the least share of analysable time stand beside the figures they allow."""
+    told = report.as_dict()
+    shares = [row["analysable_share_pct"] for row in told["records"]]
+    assert told["analysable_share"]["mean_pct"] == pytest.approx(np.mean(shares), abs=0.001)
+    assert told["analysable_share"]["least_pct"] == min(shares)
+
+
 def test_json_holds_plain_values(report):
     """The report for programs survives strict JSON."""
     assert json.loads(json.dumps(report.as_dict(), allow_nan=False)) == report.as_dict()
