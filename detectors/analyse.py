@@ -8,9 +8,9 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import beats, chunks, classify, episodes, features, quality, rhythm, signal
+from detectors import beats, chunks, classify, episodes, features, findings, quality, rhythm, signal
 from detectors.families import FamilyBook
-from detectors.results import Analysis, Beats, Episodes, Finding, QualityWindows, Segment
+from detectors.results import Analysis, Beats, Episodes, QualityWindows, Segment
 
 DETECTOR_VERSION = "1"
 BATCH_BEATS = 4096  # beats that are grouped into families at a time, wherever the chunks were cut
@@ -160,13 +160,14 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
     is_analysable = quality.is_outside(bad, found.segment, sample)
     widths = features.qrs_width_ms(gathered.book.shape_mv)
     table = beats.beat_table(found, sample, timing, labels, widths, is_analysable, options.full_pause_tolerance_pct)
+    groups = beats.family_table(table, gathered.book, labels, widths)
     analysable_s = quality.analysable_s(seen, bad, fs_hz)
     return Analysis(
         table,
-        beats.family_table(table, gathered.book, labels, widths),
+        groups,
         _episodes(table, fs_hz, options),
         bad,
-        _findings(analysable_s, table),
+        findings.findings(analysable_s, float(lengths.sum()) / fs_hz, table, groups),
         fs_hz,
         tuple(lengths.tolist()),
         analysable_s,
@@ -195,9 +196,3 @@ def _episodes(table: Beats, fs_hz: float, options: Options) -> Episodes:
         trigeminy_min_cycles=options.trigeminy_min_cycles,
         pause_ms=options.pause_ms,
     )
-
-
-def _findings(analysable_s: float, table: Beats) -> tuple[Finding, ...]:
-    if analysable_s <= 0 or not table.is_analysable.any():
-        return (Finding("no_analysable_time", "no stretch of the recording is clean enough to find beats"),)
-    return ()

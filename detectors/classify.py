@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from detectors import families, fusion, rhythm
-from detectors.features import spread_ms
+from detectors.features import qrs_width_ms, spread_ms
 
 EARLY = 0.87  # of the usual interval
 ON_TIME = 0.10  # either side of the usual interval
@@ -26,7 +26,7 @@ LATE = 0.3  # log of RR before over RR after: a beat after a pause
 LATE_WIDTH = 0.2  # log of the width over normal: a narrow late beat is a normal one
 
 TERMS = ("constant", "distance", "width", "early", "off_time", "single_wide")
-WEIGHTS = np.array([-4.1, 2.7, 1.7, 3.1, 2.5, 1.2])
+WEIGHTS = np.array([-4.1, 2.7, 1.7, 3.1, 3.0, 2.0])
 
 LOOSE_WEIGHTS = (-2.2, 0.5, 1.9)  # constant, log odds of the nearest family, early
 
@@ -72,7 +72,9 @@ class Shapes(NamedTuple):
     """Families compared with each other and with the normal ones."""
 
     alike: NDArray[np.float32]  # shape (n_families, n_families), correlation
+    alike_in_centre: NDArray[np.float32]  # the same for 48 ms either side of the R peak
     spread_ms: NDArray[np.float32]  # shape (n_families,)
+    width_ms: NDArray[np.float32]  # shape (n_families,)
     normal: NDArray[np.int64]  # numbers of the normal families, the main one first
 
 
@@ -129,30 +131,42 @@ def compare_shapes(habits: Habits, family_shape_mv: NDArray[np.float32]) -> Shap
     The main normal family is the biggest whose beats are not typically early. Others join when they look almost the same,
     when they are as narrow and keep time as well, or when they come in long stretches on time (bundle-branch block).
     """
-    alike = families.likeness_of_shapes(family_shape_mv)
-    spread = spread_ms(family_shape_mv)
+    shapes = Shapes(
+        families.likeness(family_shape_mv),
+        families.likeness(family_shape_mv, families.QRS_CENTRE),
+        spread_ms(family_shape_mv),
+        qrs_width_ms(family_shape_mv),
+        np.empty(0, dtype=np.int64),
+    )
     main = int(np.argmax(habits.n_beats * (habits.asymmetry > -0.2)))
     chosen = [main]
     for _ in range(3):
         for row in np.flatnonzero(habits.n_beats > 0):
-            if row not in chosen and _joins(int(row), chosen, habits, alike, spread):
+            if row not in chosen and _joins(int(row), chosen, habits, shapes):
                 chosen.append(int(row))
-    return Shapes(alike, spread, np.array(chosen, dtype=np.int64))
+    return shapes._replace(normal=np.array(chosen, dtype=np.int64))
 
 
-def _joins(
-    row: int, chosen: list[int], habits: Habits, alike: NDArray[np.float32], spread: NDArray[np.float32]
-) -> bool:
-    main, near = chosen[0], max(chosen, key=lambda other: alike[row, other])
-    like, wider, wider_than_main = alike[row, near], spread[row] / spread[near], spread[row] / spread[main]
+def _joins(row: int, chosen: list[int], habits: Habits, shapes: Shapes) -> bool:
+    main, near = chosen[0], chosen[int(shapes.alike[row, chosen].argmax())]
+    like, spread = shapes.alike[row, near], shapes.spread_ms
+    wider, wider_than_main = spread[row] / spread[near], spread[row] / spread[main]
     share = habits.n_beats[row] / habits.n_beats.sum()
     keeps_time = habits.on_time[row] / max(habits.on_time[main], 0.01)
     early = habits.early[row]
     same = (like > 0.96 and wider < 1.15) or (like > 0.92 and 0.85 < wider < 1.1)
+    same |= _differs_in_t_wave_only(row, chosen, shapes)
     similar = like > 0.9 and wider < 1.2 and early < 0.5 and habits.asymmetry[row] > -0.25 and habits.n_beats[row] >= 5
     narrow = wider_than_main < 1.3 and early < 0.15 and keeps_time > 0.7 and share >= 0.005 and habits.n_beats[row] >= 8
     block = early < 0.1 and keeps_time > 0.8 and share >= 0.02 and habits.stretch[row] > 15 and wider_than_main < 1.75
     return bool(same or similar or narrow or block)
+
+
+def _differs_in_t_wave_only(row: int, chosen: list[int], shapes: Shapes) -> bool:
+    """Same centre and same width as a normal family: a conducted beat that rides on the T wave of the one before."""
+    near = chosen[int(shapes.alike_in_centre[row, chosen].argmax())]
+    wider = shapes.width_ms[row] / max(shapes.width_ms[near], 1)
+    return bool(shapes.alike_in_centre[row, near] > 0.99 and 0.88 < wider < 1.12)
 
 
 def family_terms(habits: Habits, shapes: Shapes) -> NDArray[np.float64]:

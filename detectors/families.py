@@ -7,6 +7,7 @@ a noisy one must take for the same.
 
 from __future__ import annotations
 
+from functools import cache
 from typing import NamedTuple
 
 import numpy as np
@@ -15,8 +16,6 @@ from numpy.typing import NDArray
 
 from detectors.chunks import SHAPE_BEFORE, SHAPE_LENGTH
 
-CORE_BEFORE = 15  # working samples, 120 ms
-CORE_LENGTH = 35  # working samples, 280 ms
 REACH = 4  # working samples, 32 ms: how far the R peaks of two beats of one shape may lie apart
 LOOSEST = 0.90  # least correlation that a family asks of its beats
 LOOSEST_WHEN_CLEAN = 0.94  # the same in a recording whose main family scatters little
@@ -39,33 +38,45 @@ class Membership(NamedTuple):
     likeness: NDArray[np.float32]  # correlation with the nearest
 
 
-def core(shape_mv: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
-    """QRS stretch of shapes (n, SHAPE_LENGTH), without mean and of unit length, and its length in mV."""
-    begin = SHAPE_BEFORE - CORE_BEFORE
-    return _unit(np.ascontiguousarray(shape_mv[:, begin : begin + CORE_LENGTH]))
+class Stretch(NamedTuple):
+    """Part of a shape that is compared, in working samples from the R peak."""
+
+    before: int
+    length: int
+
+    def of(self, shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
+        """The part of shapes (n, SHAPE_LENGTH), shape (n, length)."""
+        begin = SHAPE_BEFORE - self.before
+        return np.ascontiguousarray(shape_mv[:, begin : begin + self.length])
+
+    def at_all_lags(self, shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
+        """The part of shapes (n, SHAPE_LENGTH) at lags from -REACH to REACH, shape (n, 2 REACH + 1, length)."""
+        begin = SHAPE_BEFORE - self.before
+        return sliding_window_view(shape_mv, self.length, axis=-1)[:, begin - REACH : begin + REACH + 1]
 
 
-_LINE = np.linalg.qr(np.vander(np.linspace(-1, 1, CORE_LENGTH), 2))[0].astype(
-    np.float32
-)  # level and slope, orthonormal
+QRS = Stretch(before=15, length=35)  # 120 ms before to 160 ms after the R peak
+QRS_CENTRE = Stretch(before=6, length=13)  # 48 ms either side: free of a T wave before or after
 
 
-def _unit(stretch: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
-    stretch = stretch - (stretch @ _LINE) @ _LINE.T
-    size = np.maximum(np.sqrt(np.einsum("...j,...j->...", stretch, stretch)), np.float32(1e-6))
-    return stretch / size[..., None], size
+def unit(stretch_mv: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    """Stretches (..., length) without level and slope and of unit length, and their length before, shape (...), mV."""
+    line = _line(stretch_mv.shape[-1])
+    rest = stretch_mv - (stretch_mv @ line) @ line.T
+    size = np.maximum(np.sqrt(np.einsum("...j,...j->...", rest, rest)), np.float32(1e-6))
+    return rest / size[..., None], size
 
 
-def _templates(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
-    """QRS stretches of one shape or of several at all lags, shape (..., 2 REACH + 1, CORE_LENGTH), unit length."""
-    begin = SHAPE_BEFORE - CORE_BEFORE
-    shifted = sliding_window_view(shape_mv, CORE_LENGTH, axis=-1)[..., begin - REACH : begin + REACH + 1, :]
-    return _unit(shifted)[0]
+@cache
+def _line(length: int) -> NDArray[np.float32]:
+    """Level and slope as orthonormal columns, shape (length, 2)."""
+    return np.linalg.qr(np.vander(np.linspace(-1, 1, length), 2))[0].astype(np.float32)
 
 
-def likeness_of_shapes(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
+def likeness(shape_mv: NDArray[np.float32], stretch: Stretch = QRS) -> NDArray[np.float32]:
     """Best correlation over all lags of every shape with every other, shape (n, n), amplitude left aside."""
-    return np.einsum("ij,klj->ikl", core(shape_mv)[0], _templates(shape_mv)).max(axis=2, initial=-1)
+    in_place, shifted = unit(stretch.of(shape_mv))[0], unit(stretch.at_all_lags(shape_mv))[0]
+    return np.einsum("ij,klj->ikl", in_place, shifted).max(axis=2, initial=-1)
 
 
 class FamilyBook:
@@ -79,31 +90,31 @@ class FamilyBook:
 
     def enter(self, shape_mv: NDArray[np.float32], is_clean: NDArray[np.bool_]) -> Membership:
         """Assign one batch of beats, shape (n_beats, SHAPE_LENGTH); only clean beats found new families."""
-        unit, size = core(shape_mv)
+        direction, size = unit(QRS.of(shape_mv))
         known = self.n_beats.size
-        member = self._match(unit, size)
+        member = self._match(direction, size)
         left = np.flatnonzero(member.family < 0)
-        self._grow(unit, size, shape_mv, left[is_clean[left]])
+        self._grow(direction, size, shape_mv, left[is_clean[left]])
         if self.n_beats.size > known:
-            again = self._match(unit[left], size[left])
+            again = self._match(direction[left], size[left])
             for column, now in zip(member, again, strict=True):
                 column[left] = now
         self._learn(shape_mv, member)
         return member
 
-    def _match(self, unit: NDArray[np.float32], size: NDArray[np.float32]) -> Membership:
+    def _match(self, direction: NDArray[np.float32], size: NDArray[np.float32]) -> Membership:
         """Match beats with the known families: all in place, then those that fit none at all lags."""
-        n_beats = unit.shape[0]
+        n_beats = direction.shape[0]
         if self.n_beats.size == 0:
             return Membership(*np.full((2, n_beats), -1, dtype=np.int64), np.zeros(n_beats, dtype=np.float32))
-        templates = _templates(self.shape_mv)
-        own_size = core(self.shape_mv)[1]
-        match = unit @ templates[:, REACH].T
+        own_direction, own_size = unit(QRS.of(self.shape_mv))
+        match = direction @ own_direction.T
         nearest = match.argmax(axis=1)
         like = match[np.arange(n_beats), nearest]
         left = np.flatnonzero((like <= self.limit[nearest]) | ~_same_size(size, own_size[nearest]))
         if left.size:
-            shifted = (unit[left] @ templates.reshape(-1, CORE_LENGTH).T).reshape(left.size, -1, 2 * REACH + 1)
+            templates = unit(QRS.at_all_lags(self.shape_mv))[0].reshape(-1, QRS.length)
+            shifted = (direction[left] @ templates.T).reshape(left.size, -1, 2 * REACH + 1)
             match = shifted.max(axis=2)
             match[~_same_size(size[left, None], own_size)] -= 1
             nearest[left] = match.argmax(axis=1)
@@ -112,7 +123,7 @@ class FamilyBook:
 
     def _grow(
         self,
-        unit: NDArray[np.float32],
+        direction: NDArray[np.float32],
         size: NDArray[np.float32],
         shape_mv: NDArray[np.float32],
         free: NDArray[np.int64],
@@ -120,10 +131,10 @@ class FamilyBook:
         """Found families among free beats, the most common shape first, until no two beats are alike."""
         most = min(MOST_FAMILIES, self.n_beats.size + MOST_NEW_FAMILIES)
         while free.size >= 2 and self.n_beats.size < most:
-            seed = _seed(unit, free)
+            seed = _seed(direction, free)
             if seed < 0:
                 break
-            shape, scatter, is_member = _settle(unit, size, shape_mv, free, seed)
+            shape, scatter, is_member = _settle(direction, size, shape_mv, free, seed)
             if self.n_beats.size == 0:
                 self.loosest = float(np.clip(1 - MAIN_SCATTER_ALLOWED * scatter, LOOSEST, LOOSEST_WHEN_CLEAN))
             limit = max(_limit(scatter), self.loosest)
@@ -148,26 +159,26 @@ def _same_size(size: NDArray[np.float32], other: NDArray[np.float32]) -> NDArray
     return (size < AMPLITUDE_LIMIT * other) & (other < AMPLITUDE_LIMIT * size)
 
 
-def _seed(unit: NDArray[np.float32], free: NDArray[np.int64]) -> int:
+def _seed(direction: NDArray[np.float32], free: NDArray[np.int64]) -> int:
     """The beat with most look-alikes among an even sample of the free beats; -1 when no two are alike."""
     sample = free[:: -(-free.size // SEED_SAMPLE)]
-    friends = (unit[sample] @ unit[sample].T > LOOSEST).sum(axis=0)
+    friends = (direction[sample] @ direction[sample].T > LOOSEST).sum(axis=0)
     best = int(friends.argmax())
     return int(sample[best]) if friends[best] >= 2 else -1
 
 
 def _settle(
-    unit: NDArray[np.float32],
+    direction: NDArray[np.float32],
     size: NDArray[np.float32],
     shape_mv: NDArray[np.float32],
     free: NDArray[np.int64],
     seed: int,
 ) -> tuple[NDArray[np.float32], float, NDArray[np.bool_]]:
     """Averaged shape, scatter and members of the family that a seed founds."""
-    shape, scatter = shape_mv[seed], _first_scatter(unit[free] @ unit[seed])
+    shape, scatter = shape_mv[seed], _first_scatter(direction[free] @ direction[seed])
     near = _same_size(size[free], size[seed])
     for _ in range(3):
-        in_place = unit[free] @ core(shape[None])[0][0]
+        in_place = direction[free] @ unit(QRS.of(shape[None]))[0][0]
         is_member = (in_place > _limit(scatter)) & near
         if not is_member.any():
             break

@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 from detectors.chunks import SHAPE_BEFORE
 from detectors.signal import WORKING_FS_HZ
 
-PAUSE_MS = 24.0  # the slope is 0 for so long at most where a QRS turns
+PAUSE_MS = 40.0  # the slope is low for so long at most where a QRS turns
 
 
 def _at(ms: float) -> int:
@@ -44,7 +44,7 @@ def spread_ms(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
 def qrs_width_ms(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
     """QRS width of averaged beats, shape (n_families,), ms.
 
-    From the steepest point outwards on both sides while the slope stays above 12 % of the steepest, pauses of up to 24 ms
+    From the steepest point outwards on both sides while the slope stays above 12 % of the steepest, pauses of up to 48 ms
     included; on values interpolated to 2 ms, within 120 ms before and 160 ms after the R peak. Meant for averages: noise
     widens it. The 12 % is ours; no standard fixes the onset of an automatically measured QRS.
     """

@@ -7,7 +7,7 @@ from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
 from detectors.chunks import SHAPE_BEFORE
-from detectors.families import CORE_BEFORE, CORE_LENGTH
+from detectors.families import QRS
 
 REACH = 6  # working samples, 48 ms: how far the two parents may lie apart
 EXPLAINED = 0.97  # of the variance
@@ -24,10 +24,10 @@ def is_fusion(
     `child_mv` and `normal_mv` have shape (SHAPE_LENGTH,), `ventricular_mv` (n_families, SHAPE_LENGTH). Least squares over
     the QRS at every lag of the ventricular parent.
     """
-    begin = SHAPE_BEFORE - CORE_BEFORE
-    child, normal = (_centred(shape[begin : begin + CORE_LENGTH]) for shape in (child_mv, normal_mv))
-    shifted = sliding_window_view(ventricular_mv, CORE_LENGTH, axis=1)[:, begin - REACH : begin + REACH + 1]
-    parents = _centred(shifted.reshape(-1, CORE_LENGTH))
+    begin = SHAPE_BEFORE - QRS.before
+    child, normal = (_centred(shape[begin : begin + QRS.length]) for shape in (child_mv, normal_mv))
+    shifted = sliding_window_view(ventricular_mv, QRS.length, axis=1)[:, begin - REACH : begin + REACH + 1]
+    parents = _centred(shifted.reshape(-1, QRS.length))
     # normal equations of two unknowns, for all parents at once
     nn, np_, pp = normal @ normal, parents @ normal, np.einsum("ij,ij->i", parents, parents)
     cn, cp = child @ normal, parents @ child
