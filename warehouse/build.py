@@ -23,7 +23,7 @@ from warehouse.database import open_database
 from warehouse.parts import Part, checked_frame, polars_type
 
 MODELS: dict[str, tuple[str, ...]] = {
-    "staging": ("patients", "therapies", "recording_wears", "patient_quarters"),
+    "staging": ("patients", "therapies", "recording_wears", "decided_beats", "counted_quarters", "patient_quarters"),
     "intermediate": ("hours", "local_hours", "wear_days", "period_spans", "periods"),
     "marts": (
         "deliveries", "recordings", "segments", "families", "episodes", "findings", "attention_from_days",

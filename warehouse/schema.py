@@ -249,11 +249,11 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("is_mixed", "BOOLEAN", "", "The family holds different shapes in the reader's eyes."),
     ("note", "VARCHAR", "", "Remark of the reader."),
     ("reader_codes", "VARCHAR", "", "Codes of all readers, separated by blanks."),
-    ("decided_beats", "BIGINT", "beats", "Analysable published beats that a decision meets."),
+    ("decided_beats", "BIGINT", "beats", "Analysable beats whose class an over-reader decided; the counts hold it."),
     ("unmet_decisions", "BIGINT", "beats", "Decisions without a published beat within 150 ms."),
-    ("reviewed_v_beats", "BIGINT", "beats", "Analysable beats of class V after the decisions."),
-    ("reviewed_all_beats", "BIGINT", "beats", "Analysable beats after the decisions; beats called noise are left out."),
-    ("reviewed_v_burden_pct", "DOUBLE", "%", "Ventricular burden after the decisions of the over-readers."),
+    ("automatic_v_beats", "BIGINT", "beats", "Analysable beats found as V automatically, before any decision."),
+    ("automatic_all_beats", "BIGINT", "beats", "Analysable beats found automatically, before any decision."),
+    ("automatic_v_burden_pct", "DOUBLE", "%", "Ventricular burden found automatically, before any decision."),
     ("decided_v_pct", "DOUBLE", "%", "Share of the beats found as V automatically that a decision meets."),
     ("other_reader_code", "VARCHAR", "", "Code of the other reader."),
     ("other_decision", "VARCHAR", "", "What the other reader decided."),
@@ -471,7 +471,7 @@ PUBLISHED: dict[str, Table] = _tables(
     Table(
         "recordings", "one row per wearing of one patch", ("recording_id",),
         ("recording_id", "patient_code", *_RECORDING[1:], "worn_h", "analysable_h", "all_beats", "v_beats",
-         "v_burden_pct", "fingerprint"),
+         "v_burden_pct", "decided_beats", "fingerprint"),
     ),
     LAKE["segments"],
     LAKE["beats"],
@@ -494,7 +494,7 @@ PUBLISHED: dict[str, Table] = _tables(
     Table(
         "wear_days", "one row per patient and local calendar day with wear", ("patient_code", "local_day"),
         ("patient_code", "local_day", "day_h", "recorded_h", "worn_h", "analysable_h", "clock_hours_covered",
-         "is_valid_day", *_COUNTS, "v_burden_pct", "s_burden_pct", "v_per_h", "mean_rate_bpm", *_RHYTHM),
+         "is_valid_day", *_COUNTS, "decided_beats", "v_burden_pct", "s_burden_pct", "v_per_h", "mean_rate_bpm", *_RHYTHM),
     ),
     Table(
         "therapies", "one row per therapy event of the register", ("therapy_id",),
@@ -527,8 +527,8 @@ PUBLISHED: dict[str, Table] = _tables(
     LAKE["reviews"],
     Table(
         "reviewed", "one row per recording that an over-reader decided on", ("recording_id",),
-        ("recording_id", "patient_code", "reader_codes", "decided_beats", "unmet_decisions", "decided_v_pct", "v_beats",
-         "all_beats", "v_burden_pct", "reviewed_v_beats", "reviewed_all_beats", "reviewed_v_burden_pct"),
+        ("recording_id", "patient_code", "reader_codes", "decided_beats", "unmet_decisions", "decided_v_pct",
+         "automatic_v_beats", "automatic_all_beats", "automatic_v_burden_pct", "v_beats", "all_beats", "v_burden_pct"),
     ),
     Table(
         "reader_conflicts", "one row per family or beat that two readers decided differently",

@@ -1,12 +1,13 @@
 """What over-readers decided, applied to the numbers; where they differ, and how much they agree."""
 
-from datetime import datetime
+from datetime import datetime, timedelta
 from typing import Any
 
 import polars as pl
 import pytest
 
 FS_HZ = 250
+START = datetime.fromisoformat("2026-05-01T00:00:00")
 NOON = datetime.fromisoformat("2026-06-01T12:00:00")
 
 
@@ -23,8 +24,9 @@ def read(lake: Any) -> Any:
             "fingerprint": "f1",
             "segment": 0,
             "sample": places * FS_HZ,
-            "beat_class": ["V" if place % 10 == 0 and place < 100 or place >= 100 else "N" for place in places],
+            "beat_class": ["V" if (place % 10 == 0 and place < 100) or place >= 100 else "N" for place in places],
             "is_analysable": [place < 100 for place in places],
+            "beat_utc": [START + timedelta(seconds=place) for place in places],
         }
     )
     lake.land("beats", "R1", beats, "f1")
@@ -57,26 +59,45 @@ def test_relabelled_beats_move_the_burden(read: Any) -> None:
     review(read, "D1", {0: "N", 10: "noise", 20: "V", 1: "V", 2: "V"})
     found = reviewed(read)
     # Source: by hand, 10 V of 100 beats: two leave, two enter, one beat is no beat
-    assert (found["v_beats"], found["reviewed_v_beats"], found["reviewed_all_beats"]) == (10, 10, 99)
-    assert found["reviewed_v_burden_pct"] == pytest.approx(100 * 10 / 99)
+    assert (found["automatic_v_beats"], found["automatic_all_beats"]) == (10, 100)
+    assert (found["v_beats"], found["all_beats"]) == (10, 99)
+    assert found["v_burden_pct"] == pytest.approx(100 * 10 / 99)
     assert (found["decided_beats"], found["decided_v_pct"], found["unmet_decisions"]) == (5, 30, 0)
+
+
+def test_decisions_reach_days_and_recordings(read: Any) -> None:
+    """Trend tables count a beat by the class that holds, and say how many beats a reader decided."""
+    review(read, "D1", {0: "N", 10: "S", 20: "V"})
+    with read.built() as build:
+        (day,) = build.frame("wear_days").rows(named=True)
+        (recording,) = build.frame("recordings").rows(named=True)
+        (hour,) = build.frame("hours").rows(named=True)
+    for row in (day, hour):
+        assert (row["n_beats"], row["s_beats"], row["v_beats"], row["all_beats"]) == (91, 1, 8, 100)
+    assert (day["decided_beats"], recording["decided_beats"], recording["v_burden_pct"]) == (3, 3, 8)
 
 
 def test_beats_that_are_not_analysable_move_nothing(read: Any) -> None:
     """A decision on a beat outside analysable time changes neither numerator nor denominator."""
     review(read, "D1", {101: "N", 102: "noise"})
     found = reviewed(read)
-    assert (found["reviewed_v_beats"], found["reviewed_all_beats"], found["decided_beats"]) == (10, 100, 0)
+    assert (found["v_beats"], found["all_beats"], found["decided_beats"]) == (10, 100, 0)
 
 
 def test_the_latest_decision_holds(read: Any) -> None:
-    """A reader who changes their mind, or a second reader, overrides the earlier decision on the same beat."""
-    review(read, "D1", {0: "N"}, hour=9)
-    review(read, "D2", {0: "V"}, hour=8, reader="B")
-    assert reviewed(read)["reviewed_v_beats"] == 9
-    review(read, "D3", {0: "V"}, hour=10, reader="B")
+    """A reader who changes their mind overrides their own earlier decision on the same beat."""
+    review(read, "D2", {0: "V", 10: "V"}, hour=8)
+    review(read, "D1", {0: "N", 10: "N"}, hour=9)
+    review(read, "D3", {10: "V"}, hour=10)
+    assert reviewed(read)["v_beats"] == 9
+
+
+def test_where_readers_differ_the_automatic_class_stays(read: Any) -> None:
+    """A beat that two readers call differently counts as found; one on which they agree counts as they say."""
+    review(read, "D1", {0: "N", 10: "N"}, hour=9)
+    review(read, "D2", {0: "S", 10: "N"}, hour=10, reader="B")
     found = reviewed(read)
-    assert (found["reviewed_v_beats"], found["reader_codes"]) == (10, "A B")
+    assert (found["v_beats"], found["reader_codes"]) == (9, "A B")
 
 
 # Source: ANSI/AAMI EC57 matching window as in reference comparator bxb (WFDB): 150 ms, 38 samples at 250 Hz
@@ -86,7 +107,7 @@ def test_decisions_meet_beats_within_150_ms(read: Any, shift: int, met: bool) ->
     review(read, "D1", {0: "N", 30: "N"} if shift > 0 else {30: "N", 40: "N"}, shift=shift)
     found = reviewed(read)
     assert (found["decided_beats"], found["unmet_decisions"]) == ((2, 0) if met else (0, 2))
-    assert found["reviewed_v_beats"] == (8 if met else 10)
+    assert found["v_beats"] == (8 if met else 10)
 
 
 def families(lake: Any, reader: str, decided: dict[int, tuple[str, int]]) -> None:

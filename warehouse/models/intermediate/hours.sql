@@ -23,6 +23,6 @@ SELECT
     sum(quarter.bigeminy_s) AS bigeminy_s,
     sum(quarter.trigeminy_s) AS trigeminy_s,
     sum(quarter.irregular_s) AS irregular_s
-FROM lake.quarter_hours AS quarter
+FROM counted_quarters AS quarter
 INNER JOIN recording_wears AS wear ON wear.recording_id = quarter.recording_id
 GROUP BY quarter.recording_id, date_trunc('hour', quarter.quarter_utc)

@@ -14,6 +14,7 @@ WITH days AS (
         sum(f_beats) AS f_beats,
         sum(q_beats) AS q_beats,
         sum(all_beats) AS all_beats,
+        sum(decided_beats) AS decided_beats,
         60 * sum(rr_count) / nullif(sum(rr_sum_s), 0) AS mean_rate_bpm,
         sum(couplets) AS couplets,
         sum(runs) AS runs,

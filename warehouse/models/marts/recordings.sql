@@ -7,8 +7,9 @@ WITH tallies AS (
         sum(worn_s) / 3600 AS worn_h,
         sum(analysable_s) / 3600 AS analysable_h,
         sum(all_beats) AS all_beats,
-        sum(v_beats) AS v_beats
-    FROM lake.quarter_hours
+        sum(v_beats) AS v_beats,
+        sum(decided_beats) AS decided_beats
+    FROM counted_quarters
     GROUP BY recording_id
 )
 
@@ -20,6 +21,7 @@ SELECT
     tallies.all_beats,
     tallies.v_beats,
     100 * tallies.v_beats / nullif(tallies.all_beats, 0) AS v_burden_pct,
+    tallies.decided_beats,
     tallies.fingerprint
 FROM lake.recordings AS recording
 INNER JOIN recording_wears AS wear ON wear.recording_id = recording.recording_id

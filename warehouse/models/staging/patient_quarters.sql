@@ -3,7 +3,7 @@
 -- the recording with more analysable time. Two patches worn one after the other within a quarter hour both count.
 WITH covered_twice AS (
     SELECT wear.patient_code, quarter.quarter_utc
-    FROM lake.quarter_hours AS quarter
+    FROM counted_quarters AS quarter
     INNER JOIN recording_wears AS wear USING (recording_id)
     GROUP BY wear.patient_code, quarter.quarter_utc
     HAVING count(*) > 1 AND sum(quarter.recorded_s) > 900.5
@@ -13,7 +13,7 @@ left_out AS (
     SELECT quarter.recording_id, quarter.quarter_utc
     FROM covered_twice
     INNER JOIN recording_wears AS wear USING (patient_code)
-    INNER JOIN lake.quarter_hours AS quarter USING (recording_id, quarter_utc)
+    INNER JOIN counted_quarters AS quarter USING (recording_id, quarter_utc)
     QUALIFY row_number() OVER (
         PARTITION BY wear.patient_code, quarter.quarter_utc ORDER BY quarter.analysable_s DESC, quarter.recording_id
     ) > 1
@@ -25,6 +25,6 @@ SELECT
     quarter.*,
     -- Zone arithmetic on quarter hours, never on beats: every civil zone lies whole quarter hours from UTC.
     timezone(wear.patient_zone, quarter.quarter_utc::TIMESTAMPTZ) AS quarter_local
-FROM lake.quarter_hours AS quarter
+FROM counted_quarters AS quarter
 INNER JOIN recording_wears AS wear USING (recording_id)
 ANTI JOIN left_out USING (recording_id, quarter_utc)
