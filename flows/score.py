@@ -54,9 +54,9 @@ def score_folder(
         except (Refused, AnnotationError, ScoreError) as problem:
             left_out.append((header.stem, str(problem)))
     if not scores:
-        told = "; ".join(f"{name}: {reason}" for name, reason in left_out)
+        told = "".join(f"; {name}: {reason}" for name, reason in left_out)
         raise ScoreError(
-            f"{folder}: no record can be scored; expected NAME.hea with its signal file and labels in NAME.atr. {told}"
+            f"{folder}: no record can be scored; expected NAME.hea with its signal file and labels in NAME.atr{told}"
         )
     noise = _stress(_chosen(folder, noise_records, scores), noise_folder, options, say) if noise_folder else ()
     return Report(options, tuple(scores), tuple(left_out), noise)
