@@ -60,9 +60,9 @@ def exact_share(successes: int, of: int) -> Share:
 
 
 def geometric_mean_ratio(ratios: ArrayLike) -> MeanRatio:
-    """Mean of the log ratios of patients with Student's interval; positive ratios of shape (n,), NaN for n < 2."""
+    """Mean of positive log ratios, shape (n,), with Student's interval; no interval for n < 3."""
     logs = np.log(np.asarray(ratios, dtype=float))
-    if len(logs) < 2:
+    if len(logs) < 3:
         return MeanRatio(float(np.exp(logs.mean())) if len(logs) else np.nan, np.nan, np.nan)
     half = t.ppf(0.975, len(logs) - 1) * logs.std(ddof=1) / np.sqrt(len(logs))
     ratio, low, high = np.exp(logs.mean() + np.array([0.0, -half, half]))

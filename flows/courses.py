@@ -17,9 +17,8 @@ from flows.settings import ChangeSettings, WearSettings
 
 EPOCH = date(1970, 1, 1)
 NO_DAY = np.iinfo(np.int64).max
-FEWEST_DAYS_FOR_SD = 4
+PRIOR_STEPS = 4
 MEDIAN_STEP = 0.6745 * np.sqrt(2)  # median of |difference| of two normal values, in SDs of one
-LEAST_SD = 0.1  # of ln level; fewer days than a fortnight cannot show less
 
 
 def gap_excess(measure: Measure, days: MeasuredDays, n_events: int, share: float) -> NDArray[np.float64]:
@@ -73,26 +72,37 @@ def recurrence_days(
     return [back.get(event) for event in range(n_events)]
 
 
+def log_levels(days: MeasuredDays) -> NDArray[np.float64]:
+    """ln level of every day, half an independent beat added so that none has a level."""
+    return np.asarray(np.log((days.counts + days.dispersion / 2) / days.exposure))
+
+
+def day_noise(days: MeasuredDays, sd: float) -> NDArray[np.float64]:
+    """SD of ln level of every day around its true level: between days and by counting."""
+    return np.sqrt(sd**2 + 1 / (days.counts / days.dispersion + 0.5))
+
+
+def step_sd(series: NDArray[np.float64], typical_sd: float) -> float:
+    """SD between days from their successive differences, which a few shifts of level hardly touch.
+
+    Drawn towards the typical SD as if PRIOR_STEPS differences had shown it.
+    """
+    steps = len(series) - 1
+    own = float(np.median(np.abs(np.diff(series)))) / MEDIAN_STEP if steps > 0 else 0.0
+    return float(np.sqrt((PRIOR_STEPS * typical_sd**2 + max(steps, 0) * own**2) / (PRIOR_STEPS + max(steps, 0))))
+
+
 def _first_rise(days: MeasuredDays, n_events: int, typical_sd: float) -> NDArray[np.int64]:
     """Day number on which the after level first steps up, NO_DAY where it does not."""
     cut = np.full(n_events, NO_DAY)
-    beats = days.counts / days.dispersion + 0.5
-    log_level = np.log(beats * days.dispersion / days.exposure)
-    ends = np.searchsorted(days.event, np.arange(n_events + 1))
-    for i, (first, last) in enumerate(pairwise(ends)):
-        after = first + np.flatnonzero(days.is_after[first:last])
-        series = log_level[after]
-        noise = np.sqrt(_step_sd(series, typical_sd) ** 2 + 1 / beats[after])
-        found = np.concatenate([[0], shifts(series, noise), [len(series)]]).astype(int)
-        level = [series[a:b].mean() for a, b in pairwise(found) if b > a]
+    after = days.where(days.is_after)
+    log_level = log_levels(after)
+    for event, (first, last) in enumerate(pairwise(np.searchsorted(after.event, np.arange(n_events + 1)))):
+        series = log_level[first:last]
+        noise = day_noise(after, step_sd(series, typical_sd))[first:last]
+        edges = [0, *shifts(series, noise).tolist(), len(series)]
+        level = [series[a:b].mean() for a, b in pairwise(edges) if b > a]
         rises = np.flatnonzero(np.diff(level) > 0)
         if rises.size:
-            cut[i] = days.local_day[after[found[rises[0] + 1]]]
+            cut[event] = after.local_day[first + edges[rises[0] + 1]]
     return cut
-
-
-def _step_sd(series: NDArray[np.float64], typical_sd: float) -> float:
-    """SD between days from their successive differences, which a few shifts of level hardly touch."""
-    if len(series) < FEWEST_DAYS_FOR_SD:
-        return typical_sd
-    return max(float(np.median(np.abs(np.diff(series)))) / MEDIAN_STEP, LEAST_SD)

@@ -32,9 +32,11 @@ class Measure:
 _HOURS = pl.col("analysable_s") / 3600
 _V, _S, _BEATS = pl.col("v_beats"), pl.col("s_beats"), pl.col("all_beats")
 HEART_RATE = Measure("mean_rate_bpm", pl.col("mean_rate_bpm") * _HOURS, _HOURS, 1, RATE_DAY_SD, None, "mean heart rate")
+V_BURDEN = Measure("v_burden_pct", _V, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular burden")
+V_PER_H = Measure("v_per_h", _V, _HOURS, 1, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular beats per hour")
 MEASURES = (
-    Measure("v_burden_pct", _V, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular burden"),
-    Measure("v_per_h", _V, _HOURS, 1, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular beats per hour"),
+    V_BURDEN,
+    V_PER_H,
     # No series is published for supraventricular beats; the ventricular one is borrowed.
     Measure("s_burden_pct", _S, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "supraventricular burden"),
     HEART_RATE,

@@ -74,8 +74,9 @@ def built(
     ):
         build.run_models("staging")
         build.run_models("intermediate")
-        tables = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
-        build.add("changes", trends.changes(**tables, change=settings.change, wear=settings.wear))
+        measured = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
+        for name, frame in trends.tables(**measured, change=settings.change, wear=settings.wear).items():
+            build.add(name, frame)
         yield build
 
 

@@ -10,7 +10,7 @@ from flows.measures import NOUNS
 from flows.settings import WearSettings
 
 FULL_CLOCK_PCT = 100.0
-NOTABLE_REGRESSION_PCT = 10.0
+NOTABLE_SHARE_OF_FALL = 0.25  # of the observed fall, from which regression to the mean is worth a sentence
 
 
 def reason(row: Mapping[str, Any], wear: WearSettings) -> str:
@@ -69,7 +69,12 @@ def _within_chance(row: Mapping[str, Any], wear: WearSettings) -> str:
 
 
 def _interval(row: Mapping[str, Any]) -> str:
-    return f"ratio {row['ratio']:.2g}, 95 % interval {row['ratio_low']:.2g} to {row['ratio_high']:.2g}"
+    ratio, low, high = (_digits(row[name]) for name in ("ratio", "ratio_low", "ratio_high"))
+    return f"ratio {ratio}, 95 % interval {low} to {high}"
+
+
+def _digits(ratio: float) -> str:
+    return f"{ratio:.2f}" if 0.1 <= ratio < 10 else f"{ratio:.2g}"
 
 
 def _days_used(row: Mapping[str, Any]) -> str:
@@ -104,8 +109,8 @@ def _settling(row: Mapping[str, Any]) -> str:
 
 
 def _regression(row: Mapping[str, Any]) -> str:
-    expected = row["expected_regression_pct"]
-    if expected is None or expected < NOTABLE_REGRESSION_PCT or (row["change_pct"] or 0) >= 0:
+    expected, fell_pct = row["expected_regression_pct"], -(row["change_pct"] or 0)
+    if expected is None or fell_pct <= 0 or expected < NOTABLE_SHARE_OF_FALL * fell_pct:
         return ""
     return (
         f"If this baseline was chosen for being high, a fall of {expected:.0f} % is expected without any effect "

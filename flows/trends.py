@@ -1,4 +1,4 @@
-"""From hours and periods to the `changes` table: one row per therapy event and measure, always.
+"""From hours and periods to the tables that answer "did it change?": one row per therapy event and measure, always.
 
 The statistics are in `detectors.change`; here frames become arrays, results become rows, and the reason is worded.
 """
@@ -8,9 +8,13 @@ from __future__ import annotations
 import numpy as np
 import polars as pl
 
+from detectors.change import TOO_LITTLE
 from detectors.variability import regression_to_mean
+from flows.cohorts import cohort
 from flows.courses import compared, recurrence_days
+from flows.level_shifts import level_shifts
 from flows.measures import HEART_RATE, MEASURES, Measure, measured_days
+from flows.rate_effects import rate_effects
 from flows.reasons import reason
 from flows.settings import ChangeSettings, WearSettings
 from warehouse.parts import polars_type
@@ -19,7 +23,7 @@ from warehouse.schema import COLUMNS, PUBLISHED
 SIDES = ("baseline", "after")
 
 
-def changes(
+def tables(
     *,
     local_hours: pl.DataFrame,
     wear_days: pl.DataFrame,
@@ -27,11 +31,25 @@ def changes(
     therapies: pl.DataFrame,
     change: ChangeSettings,
     wear: WearSettings,
-) -> pl.DataFrame:
-    """Compare baseline and after of every therapy event; frames and result have the columns of `schema.PUBLISHED`."""
+) -> dict[str, pl.DataFrame]:
+    """The published tables that need statistics, by name; frames and results have the columns of `schema.PUBLISHED`."""
     events = therapies.select("patient_code", "therapy_id").sort("patient_code", "therapy_id").with_row_index("event")
     days = _days(events, periods, wear_days)
     cells = days.join(local_hours, on=["patient_code", "local_day"]).filter(pl.col("analysable_s") > 0)
+    cells = cells.sort("day", "clock_hour")
+    compared = _changes(events, days, cells, change, wear)
+    return {
+        "changes": compared,
+        "rate_effects": rate_effects(events, cells, compared, change),
+        "level_shifts": level_shifts(local_hours, wear_days),
+        "cohort": cohort(compared, therapies, change.success_limit_pct),
+    }
+
+
+def _changes(
+    events: pl.DataFrame, days: pl.DataFrame, cells: pl.DataFrame, change: ChangeSettings, wear: WearSettings
+) -> pl.DataFrame:
+    """Baseline and after of every therapy event and measure."""
     frame = _wear(events, days, cells)
     of_measure = {measure.name: _compare(measure, cells, len(events), change, wear) for measure in MEASURES}
     rates = of_measure[HEART_RATE.name].select(baseline_rate_bpm="baseline_value", after_rate_bpm="after_value")
@@ -82,7 +100,7 @@ def _compare(
     regression = regression_to_mean(
         np.log(np.where(found.baseline > 0, found.baseline, np.nan)), found.baseline_variance
     )
-    success = found.success_probability_pct if is_ectopy else np.full(n_events, np.nan)
+    success = np.where(is_ectopy & (found.verdict != TOO_LITTLE), found.success_probability_pct, np.nan)
     same = ("ratio", "ratio_low", "ratio_high", "chance_fall_limit_pct", "chance_rise_limit_pct", "variance_source",
             "verdict", "days_to_settle")  # fmt: skip
     columns = {name: getattr(found, name) for name in same} | {

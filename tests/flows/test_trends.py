@@ -36,7 +36,14 @@ def programme(hours: list[pl.DataFrame], events: dict[str, str]) -> dict[str, pl
          "last_day": EVENT + timedelta(last)}
         for therapy, patient in events.items() for name, first, last in spans
     ]  # fmt: skip
-    therapies = pl.DataFrame({"therapy_id": list(events), "patient_code": list(events.values())})
+    therapies = pl.DataFrame(
+        {
+            "therapy_id": list(events),
+            "patient_code": list(events.values()),
+            "therapy_kind": "ablation",
+            "therapy_day": EVENT,
+        }
+    )
     return {
         "local_hours": local_hours,
         "wear_days": wear_days,
@@ -46,7 +53,7 @@ def programme(hours: list[pl.DataFrame], events: dict[str, str]) -> dict[str, pl
 
 
 def changes(hours, events, change=NO_DRIFT, wear=WearSettings()):  # noqa: B008 - frozen settings
-    return trends.changes(**programme(hours, events), change=change, wear=wear)
+    return trends.tables(**programme(hours, events), change=change, wear=wear)["changes"]
 
 
 def wearing(patient: str, before: list[float], after: list[float], **of_after) -> list[pl.DataFrame]:
@@ -88,7 +95,7 @@ def test_no_therapy_gives_an_empty_table():
     table = changes(wearing("P1", STEADY, LOWER), {"T1": "P1"}).clear()
     tables = programme(wearing("P1", STEADY, LOWER), {"T1": "P1"})
     tables |= {"therapies": tables["therapies"].clear(), "periods": tables["periods"].clear()}
-    assert trends.changes(**tables, change=NO_DRIFT, wear=WearSettings()).equals(table)
+    assert trends.tables(**tables, change=NO_DRIFT, wear=WearSettings())["changes"].equals(table)
 
 
 def test_losing_the_nights_does_not_look_like_a_change():
@@ -226,3 +233,64 @@ def test_a_baseline_above_the_programme_is_warned_of():
         table.filter(pl.col("baseline_value") < 0.9 * table["baseline_value"].median())["expected_regression_pct"].max()
         == 0
     )
+
+
+def test_a_fall_through_the_heart_rate_alone_is_seen_as_such():
+    """Ectopy that follows the rate and falls with it has a ratio near 1 at equal heart rate."""
+    rng = np.random.default_rng(6)
+
+    def day(offset: int, rate_bpm: float) -> pl.DataFrame:
+        rate = rate_bpm + 9 * np.cos(2 * np.pi * (np.arange(24) - 14) / 24) + 2 * rng.standard_normal(24)
+        v_beats = rng.poisson(np.exp(5 + 0.06 * (rate - 70) + 0.15 * rng.standard_normal()))
+        hours = hours_of("P1", EVENT + timedelta(offset), 0)
+        return hours.with_columns(v_beats=pl.Series(v_beats), mean_rate_bpm=pl.Series(rate))
+
+    hours = [day(i, 75) for i in range(-7, 0)] + [day(i, 62) for i in range(7, 14)]
+    tables = trends.tables(**programme(hours, {"T1": "P1"}), change=NO_DRIFT, wear=WearSettings())
+    found = tables["rate_effects"].row(0, named=True)
+    assert found["dependence"] == "follows_rate"
+    assert found["ratio"] < 0.6
+    assert found["equal_rate_ratio_low"] < 1 < found["equal_rate_ratio_high"]
+    # Source: scilit.com/publications/950819913d02feebadb5994523a15e9b (5.9 x + 17.6 where counts follow the rate)
+    assert found["expected_from_rate_pct"] == pytest.approx(5.9 * found["rate_change_pct"] + 17.6)
+    assert "At equal heart rate" in found["reason"]
+
+
+def test_an_event_without_wear_keeps_its_row_on_rate():
+    """A therapy event without any wear has a row of unknown dependence."""
+    tables = trends.tables(
+        **programme(wearing("P1", STEADY, LOWER), {"T1": "P1", "T2": "P2"}), change=NO_DRIFT, wear=WearSettings()
+    )
+    found = tables["rate_effects"].filter(pl.col("patient_code") == "P2").row(0, named=True)
+    assert (found["dependence"], found["equal_rate_ratio"]) == ("unknown", None)
+    assert tuple(tables["rate_effects"].columns) == PUBLISHED["rate_effects"].columns
+
+
+def test_levels_shift_where_they_did():
+    """The burden of a patient moves to another level on the first day after the gap, and nowhere else."""
+    rng = np.random.default_rng(10)
+    noisy = [level * np.exp(0.2 * rng.standard_normal()) for level in [400] * 8 + [60] * 8]
+    tables = programme(wearing("P1", noisy[:8], noisy[8:]) + wearing("P2", STEADY, STEADY), {"T1": "P1", "T2": "P2"})
+    found = trends.tables(**tables, change=NO_DRIFT, wear=WearSettings())["level_shifts"]
+    assert found.select("patient_code", "local_day").rows() == [("P1", EVENT + timedelta(7))]
+    assert found["level_before"][0] / found["level_after"][0] == pytest.approx(400 / 60, rel=0.25)
+
+
+def test_a_cohort_counts_every_patient_and_imputes_none():
+    """Responders are counted among evaluable patients at every limit; too little wear is shown, not imputed."""
+    hours = [
+        day
+        for i, fall in enumerate((0.05, 0.15, 0.4, 1.0))
+        for day in wearing(f"P{i}", STEADY, [fall * x for x in STEADY])
+    ]
+    hours += wearing("P4", STEADY, [])
+    events = {f"T{i}": f"P{i}" for i in range(5)}
+    table = trends.tables(**programme(hours, events), change=NO_DRIFT, wear=WearSettings())["cohort"]
+    burden = table.filter(pl.col("measure") == "v_burden_pct").sort("limit_pct")
+    assert burden["limit_pct"].to_list() == [50, 70, 80, 90]
+    assert burden["responders"].to_list() == [3, 2, 2, 1]
+    assert set(burden["patients"]) == {5} and set(burden["evaluable_patients"]) == {4}
+    # Source: statsmodels.stats.proportion.proportion_confint, Wilson, 2 of 4
+    assert burden.row(2, named=True)["responder_pct_low"] == pytest.approx(15.004, abs=0.01)
+    assert burden["mean_ratio"][0] == pytest.approx((0.05 * 0.15 * 0.4) ** 0.25, rel=0.02)
+    assert tuple(table.columns) == PUBLISHED["cohort"].columns
