@@ -31,7 +31,9 @@ class Gathered(NamedTuple):
 
     found: beats.Found
     book: FamilyBook
-    seen: list[quality.Seen]
+    bad: QualityWindows
+    lengths: NDArray[np.int64]  # samples per segment
+    analysable_s: float
     fs_hz: float
 
 
@@ -120,9 +122,17 @@ def gather(
             done = now
         progress(segment.n_samples - done)
         parts.extend(_enter(book, number, part) for part in waiting if part.working.size)
-        mine = beats.join(parts[first_part:])
-        seen.append(quality.Seen(segment.n_samples, chunks.join_blocks(blocks), mine.working, 1 - mine.likeness))
-    return Gathered(beats.join(parts), book, seen, scale.fs_hz)
+        working = np.concatenate([np.empty(0), *(part.working for part in parts[first_part:])])
+        likeness = np.concatenate([np.empty(0, dtype=np.float32), *(part.likeness for part in parts[first_part:])])
+        seen.append(quality.look(segment.n_samples, chunks.join_blocks(blocks), working, likeness))
+    bad = quality.windows(seen, scale.fs_hz)
+    found = beats.join(parts)
+    parts.clear()
+    lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
+    artefact = beats.is_artefact(found, _timing(found, bad, lengths, scale.fs_hz)[1])
+    return Gathered(
+        found.keep(~artefact), book, bad, lengths, quality.analysable_s(seen, bad, scale.fs_hz), scale.fs_hz
+    )
 
 
 def _enter_full_batches(
@@ -150,27 +160,22 @@ def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Foun
 
 def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] = classify.WEIGHTS) -> Analysis:
     """Classes, episodes and findings of gathered beats, with the whole recording as context."""
-    fs_hz, seen = gathered.fs_hz, gathered.seen
-    bad = quality.windows(seen, fs_hz)
-    lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
-    artefact = beats.is_artefact(gathered.found, _timing(gathered.found, bad, lengths, fs_hz)[1])
-    found = gathered.found.keep(~artefact)
+    found, bad, lengths, fs_hz = gathered.found, gathered.bad, gathered.lengths, gathered.fs_hz
     sample, timing = _timing(found, bad, lengths, fs_hz)
     labels = classify.classify(timing, found.member, gathered.book.shape_mv, weights)
     is_analysable = quality.is_outside(bad, found.segment, sample)
     widths = features.qrs_width_ms(gathered.book.shape_mv)
     table = beats.beat_table(found, sample, timing, labels, widths, is_analysable, options.full_pause_tolerance_pct)
     groups = beats.family_table(table, gathered.book, labels, widths)
-    analysable_s = quality.analysable_s(seen, bad, fs_hz)
     return Analysis(
         table,
         groups,
         _episodes(table, fs_hz, options),
         bad,
-        findings.findings(analysable_s, float(lengths.sum()) / fs_hz, table, groups),
+        findings.findings(gathered.analysable_s, float(lengths.sum()) / fs_hz, table, groups),
         fs_hz,
         tuple(lengths.tolist()),
-        analysable_s,
+        gathered.analysable_s,
     )
 
 
@@ -178,7 +183,8 @@ def _timing(
     found: beats.Found, bad: QualityWindows, lengths: NDArray[np.int64], fs_hz: float
 ) -> tuple[NDArray[np.int64], classify.Timing]:
     position = signal.working_to_sample(found.working, fs_hz)
-    sample = np.clip(np.rint(position).astype(np.int64), 0, lengths[found.segment] - 1)
+    sample = np.rint(position).astype(np.int64)
+    np.clip(sample, 0, lengths[found.segment] - 1, out=sample)
     gap = quality.has_gap_before(bad, found.segment, sample)
     before, after = rhythm.rr_intervals_ms(found.segment, position, fs_hz, gap)
     return sample, classify.Timing(before, after, rhythm.usual_rr_ms(before, after))

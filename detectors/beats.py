@@ -21,8 +21,8 @@ class Found(NamedTuple):
     segment: NDArray[np.int16]
     working: NDArray[np.float64]  # position in working samples within the segment
     energy: NDArray[np.float32]
-    family: NDArray[np.int64]
-    nearest: NDArray[np.int64]
+    family: NDArray[np.int16]
+    nearest: NDArray[np.int16]
     likeness: NDArray[np.float32]
     amplitude_mv: NDArray[np.float32]
     spread_ms: NDArray[np.float32]
@@ -38,8 +38,8 @@ class Found(NamedTuple):
 
 
 def join(parts: list[Found]) -> Found:
-    """One table of all batches."""
-    kinds = ("int16", "float64", "float32", "int64", "int64", "float32", "float32", "float32")
+    """One table of all batches; the parts are given up column by column, so that memory does not double."""
+    kinds = ("int16", "float64", "float32", "int16", "int16", "float32", "float32", "float32")
     if not parts:
         return Found(*(np.empty(0, dtype=kind) for kind in kinds))
     return Found(*(np.concatenate(column) for column in zip(*parts, strict=True)))
@@ -47,7 +47,7 @@ def join(parts: list[Found]) -> Found:
 
 def is_artefact(found: Found, timing: Timing) -> NDArray[np.bool_]:
     """Detections of rare shape that are no QRS, shape (n_beats,)."""
-    in_family = np.bincount(found.family + 1, minlength=1)
+    in_family = np.bincount(found.family.astype(np.int64) + 1, minlength=1)
     in_family[0] = 0
     is_rare = in_family[found.family + 1] <= RARE
     return qrs.is_interloper(found.energy, timing.before_ms, timing.after_ms, timing.usual_ms, is_rare)
@@ -74,7 +74,7 @@ def beat_table(
         rr_after_ms=timing.after_ms,
         beat_class=labels.beat_class,
         class_probability=(1 / (1 + np.exp(-np.abs(labels.odds)))).astype(np.float32),
-        family=found.family.astype(np.int16),
+        family=found.family,
         qrs_width_ms=np.where(found.family >= 0, widths[found.family], found.spread_ms).astype(np.float32),
         amplitude_mv=found.amplitude_mv,
         polarity=np.where(found.amplitude_mv < 0, -1, 1).astype(np.int8),

@@ -33,8 +33,8 @@ MEMORY_BEATS = 5000  # the averaged shape follows slow change over about so many
 class Membership(NamedTuple):
     """Family of each beat of a batch. Arrays of shape (n_beats,)."""
 
-    family: NDArray[np.int64]  # number within the recording, -1 for none
-    nearest: NDArray[np.int64]  # most similar family whatever the distance, -1 when there is none at all
+    family: NDArray[np.int16]  # number within the recording, -1 for none
+    nearest: NDArray[np.int16]  # most similar family whatever the distance, -1 when there is none at all
     likeness: NDArray[np.float32]  # correlation with the nearest
 
 
@@ -106,7 +106,7 @@ class FamilyBook:
         """Match beats with the known families: all in place, then those that fit none at all lags."""
         n_beats = direction.shape[0]
         if self.n_beats.size == 0:
-            return Membership(*np.full((2, n_beats), -1, dtype=np.int64), np.zeros(n_beats, dtype=np.float32))
+            return Membership(*np.full((2, n_beats), -1, dtype=np.int16), np.zeros(n_beats, dtype=np.float32))
         own_direction, own_size = unit(QRS.of(self.shape_mv))
         match = direction @ own_direction.T
         nearest = match.argmax(axis=1)
@@ -119,7 +119,8 @@ class FamilyBook:
             match[~_same_size(size[left, None], own_size)] -= 1
             nearest[left] = match.argmax(axis=1)
             like[left] = match[np.arange(left.size), nearest[left]]
-        return Membership(np.where(like > self.limit[nearest], nearest, -1), nearest, like)
+        family = np.where(like > self.limit[nearest], nearest, -1)
+        return Membership(family.astype(np.int16), nearest.astype(np.int16), like)
 
     def _grow(
         self,

@@ -35,8 +35,16 @@ class Seen(NamedTuple):
 
     n_samples: int
     blocks: Blocks
-    beat_working: NDArray[np.float64]  # shape (n_beats,), working samples
-    distance: NDArray[np.float32]  # shape (n_beats,), 1 - correlation with the nearest family
+    n_beats: NDArray[np.int64]  # shape (n_blocks,)
+    distance: NDArray[np.float64]  # shape (n_blocks,), sum over the beats of 1 - correlation with the nearest family
+
+
+def look(n_samples: int, blocks: Blocks, working: NDArray[np.float64], likeness: NDArray[np.float32]) -> Seen:
+    """What quality keeps of one segment: its blocks, and per block the beats and how odd they are."""
+    n_blocks = blocks.noise.size
+    block = np.minimum(working // qrs.BLOCK, n_blocks - 1).astype(np.int64)
+    odd = np.minimum(1 - likeness, DISTANCE_CAP)
+    return Seen(n_samples, blocks, np.bincount(block, minlength=n_blocks), np.bincount(block, odd, minlength=n_blocks))
 
 
 def windows(seen: list[Seen], fs_hz: float) -> QualityWindows:
@@ -76,11 +84,7 @@ def _relative_noise(blocks: Blocks) -> NDArray[np.float64]:
 
 def _oddness(one: Seen) -> NDArray[np.float64]:
     """Mean distance of the beats near each block from their families; 0 where there is none."""
-    n_blocks = one.blocks.noise.size
-    block = np.minimum(one.beat_working // qrs.BLOCK, n_blocks - 1).astype(np.int64)
-    count = _near_sum(np.bincount(block, minlength=n_blocks).astype(np.float64))
-    total = _near_sum(np.bincount(block, np.minimum(one.distance, DISTANCE_CAP), minlength=n_blocks))
-    return total / np.maximum(count, 1)
+    return _near_sum(one.distance) / np.maximum(_near_sum(one.n_beats.astype(np.float64)), 1)
 
 
 def _near_sum(values: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -125,19 +129,30 @@ def _stretches(
 
 def is_outside(bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.bool_]:
     """True for every beat that lies in no bad window, shape (n_beats,)."""
-    if bad.segment.size == 0:
-        return np.ones(sample.size, dtype=bool)
-    row = np.searchsorted(_key(bad.segment, bad.first_sample), _key(segment, sample), side="right") - 1
-    near = np.maximum(row, 0)
-    return ~((row >= 0) & (bad.segment[near] == segment) & (sample <= bad.last_sample[near]))
+    outside = np.ones(sample.size, dtype=bool)
+    for begin, end in zip(*_beats_between(bad, segment, sample), strict=True):
+        outside[begin:end] = False
+    return outside
 
 
 def has_gap_before(bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.bool_]:
     """True where a window without signal lies between a beat and the one before it, shape (n_beats,)."""
     silent = QualityWindows(*(column[bad.quality_reason != "noise"] for column in bad))
-    ended = np.searchsorted(_key(silent.segment, silent.last_sample), _key(segment, sample))
-    return np.diff(ended, prepend=ended[:1]) > 0
+    _, first_after = _beats_between(silent, segment, sample)
+    has_gap = np.zeros(sample.size, dtype=bool)
+    has_gap[first_after[first_after < sample.size]] = True
+    return has_gap
 
 
-def _key(segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.int64]:
-    return segment.astype(np.int64) * (1 << 40) + sample
+def _beats_between(
+    bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]
+) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """First beat in each window and first beat after it, as rows of the beats, which are ordered by segment and sample."""
+    begin, end = np.empty((2, bad.segment.size), dtype=np.int64)
+    edges = np.searchsorted(segment, np.arange(int(segment[-1]) + 2)) if segment.size else np.zeros(1, dtype=np.int64)
+    for row, number in enumerate(np.minimum(bad.segment, edges.size - 1)):
+        low, high = edges[number], edges[min(number + 1, edges.size - 1)]
+        begin[row], end[row] = low + np.searchsorted(
+            sample[low:high], [bad.first_sample[row], bad.last_sample[row] + 1]
+        )
+    return begin, end

@@ -1,4 +1,4 @@
-"""Timing of beats: RR intervals, the usual interval near by, prematurity, pauses, R-on-T, irregularity. Beats only, no samples."""
+"""Timing of beats: RR intervals, the usual interval near by, pauses, R-on-T, fast stretches, irregularity. No samples."""
 
 from __future__ import annotations
 
@@ -10,6 +10,7 @@ from detectors.results import PAUSE_KINDS
 
 USUAL_REACH_BEATS = 12
 USUAL_STEP_BEATS = 4
+SLAB_ROWS = 16_384
 INTERPOLATED_LIMIT = 1.25  # of the usual interval
 QT_AT_60_PER_MIN_MS = 400.0  # from memory: upper middle of normal heart-rate corrected QT, verify before relying on it
 FAST = 0.88  # of the interval before the onset
@@ -25,10 +26,11 @@ def rr_intervals_ms(
     before = np.full(sample.size, np.nan, dtype=np.float32)
     after = before.copy()
     if sample.size > 1:
-        rr = np.diff(sample) * (1000 / fs_hz)
-        rr[(np.diff(segment) != 0) | has_gap_before[1:]] = np.nan
-        before[1:] = rr
-        after[:-1] = rr
+        before[1:] = np.diff(sample)
+        before *= np.float32(1000 / fs_hz)
+        before[1:][np.diff(segment) != 0] = np.nan
+        before[has_gap_before] = np.nan
+        after[:-1] = before[1:]
     return before, after
 
 
@@ -41,19 +43,27 @@ def usual_rr_ms(before_ms: NDArray[np.float32], after_ms: NDArray[np.float32]) -
     """
     if before_ms.size == 0:
         return before_ms
-    rr_ms = (before_ms + after_ms) / 2
-    reach, step = USUAL_REACH_BEATS, USUAL_STEP_BEATS
-    fill = np.full(reach, np.nan, dtype=np.float32)
-    padded = np.concatenate([fill, rr_ms, fill, fill[: step - 1]])
-    windows = np.sort(sliding_window_view(padded, 2 * reach + 1)[::step], axis=1)  # NaN sorts last
-    known = 2 * reach + 1 - np.isnan(windows).sum(axis=1)
-    at = np.maximum(known - 1, 0) // 2
-    coarse = np.where(known > 0, windows[np.arange(known.size), at], np.float32(np.nan))
+    coarse = _median_of_known((before_ms + after_ms) / 2)
     is_known = ~np.isnan(coarse)
     if not is_known.any():
-        return np.full(rr_ms.size, 800.0, dtype=np.float32)
-    grid = np.arange(known.size) * step
-    return np.interp(np.arange(rr_ms.size), grid[is_known], coarse[is_known]).astype(np.float32)
+        return np.full(before_ms.size, 800.0, dtype=np.float32)
+    index = np.arange(coarse.size + 1)
+    coarse = np.interp(index, index[:-1][is_known], coarse[is_known]).astype(np.float32)
+    part = np.arange(USUAL_STEP_BEATS, dtype=np.float32) / USUAL_STEP_BEATS
+    return (coarse[:-1, None] + np.diff(coarse)[:, None] * part).ravel()[: before_ms.size]
+
+
+def _median_of_known(rr_ms: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Lower median of the known values around every USUAL_STEP_BEATS-th one, NaN where none is known."""
+    reach, step = USUAL_REACH_BEATS, USUAL_STEP_BEATS
+    edge = np.full(reach, np.nan, dtype=np.float32)
+    windows = sliding_window_view(np.concatenate([edge, rr_ms, edge]), 2 * reach + 1)[::step]
+    medians = np.empty(windows.shape[0], dtype=np.float32)
+    for begin in range(0, medians.size, SLAB_ROWS):  # sorting copies: by slabs, memory stays small
+        slab = np.sort(windows[begin : begin + SLAB_ROWS], axis=1)  # NaN sorts last
+        middle = np.maximum(2 * reach - np.isnan(slab).sum(axis=1), 0) // 2
+        medians[begin : begin + SLAB_ROWS] = slab[np.arange(middle.size), middle]
+    return medians
 
 
 def pause_kinds(
