@@ -160,11 +160,11 @@ def series_design(
 ) -> tuple[Floats, tuple[str, ...]]:
     """Columns of an interrupted time series and their names: constant, trend, step, optional slope, harmonics.
 
-    `day` has shape (n,). The step is 1 after `event_day` + `lag_d` (wash-in or blanking); trend and slope are per
+    `day` has shape (n,). The step is 1 from `event_day` + `lag_d` on (wash-in or blanking); trend and slope are per
     `period_d`; harmonics are sine and cosine pairs of that period. Choose lag and shape before looking.
     """
     t = np.asarray(day, dtype=float)
-    after = t > event_day + lag_d
+    after = t >= event_day + lag_d
     columns = {"constant": np.ones(len(t)), "trend": t / period_d, "step": after.astype(float)}
     if slope:
         columns["slope"] = np.where(after, (t - event_day - lag_d) / period_d, 0.0)

@@ -16,6 +16,7 @@ from flows.level_shifts import level_shifts
 from flows.measures import HEART_RATE, MEASURES, Measure, measured_days
 from flows.rate_effects import rate_effects
 from flows.reasons import reason
+from flows.series_fits import series_fits
 from flows.settings import ChangeSettings, WearSettings
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
@@ -41,6 +42,7 @@ def tables(
     return {
         "changes": compared,
         "rate_effects": rate_effects(events, cells, compared, change),
+        "series_fits": series_fits(events, cells, periods),
         "level_shifts": level_shifts(local_hours, wear_days),
         "cohort": cohort(compared, therapies, change.success_limit_pct),
     }

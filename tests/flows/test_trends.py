@@ -294,3 +294,16 @@ def test_a_cohort_counts_every_patient_and_imputes_none():
     assert burden.row(2, named=True)["responder_pct_low"] == pytest.approx(15.004, abs=0.01)
     assert burden["mean_ratio"][0] == pytest.approx((0.05 * 0.15 * 0.4) ** 0.25, rel=0.02)
     assert tuple(table.columns) == PUBLISHED["cohort"].columns
+
+
+def test_step_and_slope_after_the_event():
+    """A drop to a fifth that doubles back every week shows as a step of 0.2 and a slope of 2 per week."""
+    rng = np.random.default_rng(14)
+    before = 400 * np.exp(0.05 * rng.standard_normal(14))
+    after = 80 * 2 ** (np.arange(14) / 7) * np.exp(0.05 * rng.standard_normal(14))
+    tables = programme(wearing("P1", list(before), list(after)) + wearing("P2", [400], [40]), {"T1": "P1", "T2": "P2"})
+    found = trends.tables(**tables, change=NO_DRIFT, wear=WearSettings())["series_fits"]
+    fit, too_short = found.rows(named=True)
+    assert fit["step_ratio_low"] < 0.2 < fit["step_ratio_high"] < 0.3
+    assert fit["slope_ratio_per_week_low"] < 2 < fit["slope_ratio_per_week_high"] < 2.6
+    assert too_short["step_ratio"] is None

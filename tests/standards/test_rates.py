@@ -96,7 +96,7 @@ def test_own_fit_equals_the_library_on_any_design(people):
 def test_harmonic_series_returns_its_coefficients():
     """Counts equal to the model mean give back step, trend and harmonics, with no over-dispersion."""
     t = np.arange(1, 60)
-    design, names = rates.series_design(t, 36, period_d=12, harmonics=2)
+    design, names = rates.series_design(t, 37, period_d=12, harmonics=2)
     assert names == ("constant", "trend", "step", "sin1", "cos1", "sin2", "cos2")
     truth = np.array([-2, 0.05, -0.25, 0.10, -0.05, 0.03, 0.02])
     exposure = 1000 + 10.0 * t
