@@ -5,7 +5,8 @@ named after the table they make; the order in which they run is `MODELS`, and a 
 
 - `lake.*`: the parts in force of the published fingerprint, with the columns of `schema.LAKE`,
 - `register.*`: patients, wears, therapies,
-- `programme.settings`: one row, a column per threshold, and the published fingerprint.
+- `programme.settings`: one row, a column per threshold, and the published fingerprint,
+- `programme.zone_offsets` and `programme.local_days`: the rules of the patients' time zones (see `warehouse.zones`).
 """
 
 from __future__ import annotations
@@ -21,6 +22,7 @@ import polars as pl
 from warehouse import schema
 from warehouse.database import open_database
 from warehouse.parts import Part, checked_frame, polars_type
+from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets
 
 MODELS: dict[str, tuple[str, ...]] = {
     "staging": ("patients", "therapies", "recording_wears", "decided_beats", "counted_quarters", "patient_quarters"),
@@ -118,6 +120,7 @@ class TrendBuild:
         self._load_register()
         self._load_settings()
         self._load_lake()
+        self._load_calendar()
         self.add("parts", parts_frame(self.parts))
         self.add("data_dictionary", dictionary_frame())
         return self
@@ -152,6 +155,15 @@ class TrendBuild:
                 continue
             kind = "VIEW" if name in READ_IN_PLACE else "TABLE"
             self.connection.execute(f"CREATE {kind} lake.{name} AS {parts_query(table, paths)}")
+
+    def _load_calendar(self) -> None:
+        # Without any tallies a calendar around some day does: nothing is joined to it.
+        some_day = "TIMESTAMP '2000-01-01'"
+        query = f"SELECT coalesce(min(quarter_utc), {some_day}), coalesce(max(quarter_utc), {some_day})"
+        first_utc, last_utc = self.connection.sql(f"{query} FROM lake.quarter_hours").fetchall()[0]
+        zones = sorted(set(self._register["patients"]["zone"]))
+        self._insert("programme.zone_offsets", OFFSETS, zone_offsets(zones, first_utc, last_utc))
+        self._insert("programme.local_days", DAYS, local_days(zones, first_utc, last_utc))
 
     def _insert(self, name: str, types: Mapping[str, str], frame: pl.DataFrame) -> None:
         columns = ", ".join(f"{column} {kind}" for column, kind in types.items())

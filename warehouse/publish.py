@@ -21,6 +21,9 @@ from collections.abc import Callable, Mapping
 from pathlib import Path
 from typing import Any
 
+import duckdb
+import polars as pl
+
 from warehouse import schema
 from warehouse.build import READ_IN_PLACE, TrendBuild, column_definitions, parts_query
 from warehouse.database import open_database
@@ -52,24 +55,42 @@ def publish(
     depend on beside the tables (programme name, version, settings), as plain values. Returns False, and switches
     nothing, when the standing edition has the same tables and stamp.
     """
-    editions = published / ".editions"
-    staging = editions / ".staging"
-    shutil.rmtree(staging, ignore_errors=True)
-    (staging / "tables").mkdir(parents=True)
+    staging = published / ".editions" / ".staging"
+    before = _standing(published)
+    try:
+        shutil.rmtree(staging, ignore_errors=True)
+        (staging / "tables").mkdir(parents=True)
+        edition = _write_edition(build, published, staging, site, stamp)
+        if before != edition:
+            _switch(published, edition)
+    except (OSError, duckdb.Error, pl.exceptions.ComputeError) as problem:
+        shutil.rmtree(staging, ignore_errors=True)
+        raise PublishError(
+            f"the publication could not be written to {published}: {' '.join(str(problem).split())}; "
+            "the one before stays. Free space or restore write access, then run again"
+        ) from problem
+    _remove_editions(staging.parent, keep={edition, before})
+    return before != edition
+
+
+def _write_edition(
+    build: TrendBuild,
+    published: Path,
+    staging: Path,
+    site: Callable[[Published, Path], None],
+    stamp: Mapping[str, Any],
+) -> Path:
+    """Write an edition into `staging` and give it its name; one that is there already is not written again."""
     manifest = _manifest(build, published, stamp, write_tables(build, staging / "tables"))
     content = json.dumps(manifest, indent=1, sort_keys=True).encode()
-    edition = editions / hashlib.sha256(content).hexdigest()[:16]
-    before = _standing(published)
+    edition = staging.with_name(hashlib.sha256(content).hexdigest()[:16])
     if not edition.exists():
         for name, storage in _STORAGE.items():
             _write_database(build, published, staging / name, storage)
         write_whole(staging / MANIFEST, content)
         site(Published(published, edition=staging), staging / "site")
         staging.rename(edition)
-    if before != edition:
-        _switch(published, edition)
-    _remove_editions(editions, keep={edition, before})
-    return before != edition
+    return edition
 
 
 def _manifest(

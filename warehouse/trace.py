@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from datetime import UTC, date, datetime, time, timedelta
+from datetime import date, timedelta
 from zoneinfo import ZoneInfo
 
 import polars as pl
 
 from warehouse.published import Published, PublishedError
+from warehouse.zones import midnight_utc
 
 
 def trace(published: Published, patient_code: str, local_day: date) -> dict[str, pl.DataFrame]:
@@ -47,10 +48,6 @@ def _wear_day(published: Published, patient_code: str, local_day: date) -> pl.Da
 
 def _recordings(published: Published, patient_code: str, local_day: date) -> pl.DataFrame:
     zone = ZoneInfo(published.table("patients", {"patient_code": patient_code})["zone"][0])
-    first_utc, next_utc = (_midnight_utc(day, zone) for day in (local_day, local_day + timedelta(days=1)))
+    first_utc, next_utc = (midnight_utc(day, zone) for day in (local_day, local_day + timedelta(days=1)))
     overlaps = (pl.col("start_utc") < next_utc) & (pl.col("end_utc") > first_utc)
     return published.table("recordings", {"patient_code": patient_code}).filter(overlaps)
-
-
-def _midnight_utc(day: date, zone: ZoneInfo) -> datetime:
-    return datetime.combine(day, time(), zone).astimezone(UTC).replace(tzinfo=None)

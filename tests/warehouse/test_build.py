@@ -1,10 +1,13 @@
 """Trend tables: local days and their length, burdens with denominators, periods around therapy events."""
 
-from datetime import date
+import itertools
+from datetime import date, datetime, timedelta
 from typing import Any
 
 import polars as pl
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
 from warehouse.build import BuildError, TrendBuild
 
@@ -237,3 +240,24 @@ def test_the_scratch_database_is_removed(lake: Any) -> None:
     with lake.built():
         assert (lake.folder / "work" / "build.duckdb").exists()
     assert list((lake.folder / "work").iterdir()) == []
+
+
+@given(cuts=st.sets(st.integers(1, 3 * 96 - 1), max_size=6), zone=st.sampled_from(["Europe/Berlin", "Asia/Kathmandu"]))
+@settings(max_examples=8, deadline=None)
+def test_wear_days_do_not_depend_on_how_the_wear_was_cut(
+    tmp_path_factory: pytest.TempPathFactory, make_lake: Any, cuts: set[int], zone: str
+) -> None:
+    """The same quarter hours in one recording or in several give the same wear days and local hours."""
+    begin = datetime.fromisoformat("2026-03-28T05:00")
+    edges = [begin + timedelta(minutes=15 * n) for n in (0, *sorted(cuts), 3 * 96)]
+    tables = []
+    for spans in ([(edges[0], edges[-1])], list(itertools.pairwise(edges))):
+        lake = make_lake(tmp_path_factory.mktemp("lake"))
+        lake.patient("P1", zone)
+        for number, (start, end) in enumerate(spans):
+            minutes = pl.col("quarter_utc").dt.hour().cast(pl.Int64) * 60 + pl.col("quarter_utc").dt.minute()
+            lake.recording(f"R{number}", "P1", start.isoformat(), end.isoformat(), v_beats=minutes % 97)
+        with lake.built() as build:
+            tables.append((build.frame("wear_days"), build.frame("local_hours")))
+    assert tables[0][0].equals(tables[1][0])
+    assert tables[0][1].equals(tables[1][1])

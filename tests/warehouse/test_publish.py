@@ -3,6 +3,7 @@
 import json
 import os
 import re
+import resource
 import signal
 import subprocess
 import sys
@@ -234,9 +235,28 @@ def test_a_site_that_fails_leaves_the_standing_edition(programme: Any) -> None:
     def broken(_: Published, folder: Path) -> None:
         raise OSError(28, "No space left on device", str(folder))
 
-    with programme.built() as build, pytest.raises(OSError, match="No space left"):
+    with programme.built() as build, pytest.raises(PublishError, match=r"No space left .* the one before stays"):
         publish(build, programme.folder / "published", site=broken, stamp={"version": "2"})
     assert (programme.folder / "published" / "current").readlink() == before
+    assert Published(programme.folder / "published").frame("FROM wear_days").height == 5
+
+
+def test_a_disk_that_is_too_small_leaves_the_standing_edition(programme: Any) -> None:
+    """A database file that cannot grow is a failure with words; nothing half-written is left."""
+    _publish(programme)
+    before = (programme.folder / "published" / "current").readlink()
+    limit = resource.getrlimit(resource.RLIMIT_FSIZE)
+    too_big = signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
+    with programme.built() as build:
+        resource.setrlimit(resource.RLIMIT_FSIZE, (300_000, limit[1]))
+        try:
+            with pytest.raises(PublishError, match=r"could not be written to .* the one before stays"):
+                publish(build, programme.folder / "published", site=_site, stamp={"version": "2"})
+        finally:
+            resource.setrlimit(resource.RLIMIT_FSIZE, limit)
+            signal.signal(signal.SIGXFSZ, too_big)
+    assert (programme.folder / "published" / "current").readlink() == before
+    assert [path.name for path in (programme.folder / "published" / ".editions").iterdir()] == [before.name]
     assert Published(programme.folder / "published").frame("FROM wear_days").height == 5
 
 

@@ -40,8 +40,7 @@ covered AS (
 
 SELECT
     days.*,
-    epoch(timezone(patient_zone, (local_day + 1)::TIMESTAMP) - timezone(patient_zone, local_day::TIMESTAMP)) / 3600
-        AS day_h,
+    calendar.day_h,
     coalesce(covered.clock_hours_covered, 0) AS clock_hours_covered,
     days.analysable_h >= settings.min_analysable_h_per_day AS is_valid_day,
     100 * days.v_beats / nullif(days.all_beats, 0) AS v_burden_pct,
@@ -49,4 +48,6 @@ SELECT
     days.v_beats / nullif(days.analysable_h, 0) AS v_per_h
 FROM days
 CROSS JOIN programme.settings AS settings
-LEFT JOIN covered USING (patient_code, local_day)
+INNER JOIN programme.local_days AS calendar
+    ON calendar.zone = days.patient_zone AND calendar.local_day = days.local_day
+LEFT JOIN covered ON covered.patient_code = days.patient_code AND covered.local_day = days.local_day

@@ -24,7 +24,9 @@ SELECT
     wear.patient_zone,
     quarter.*,
     -- Zone arithmetic on quarter hours, never on beats: every civil zone lies whole quarter hours from UTC.
-    timezone(wear.patient_zone, quarter.quarter_utc::TIMESTAMPTZ) AS quarter_local
+    quarter.quarter_utc + to_seconds(rule.offset_s) AS quarter_local
 FROM counted_quarters AS quarter
 INNER JOIN recording_wears AS wear USING (recording_id)
+INNER JOIN programme.zone_offsets AS rule
+    ON rule.zone = wear.patient_zone AND quarter.quarter_utc >= rule.from_utc AND quarter.quarter_utc < rule.to_utc
 ANTI JOIN left_out USING (recording_id, quarter_utc)
