@@ -11,6 +11,7 @@ import sys
 from collections.abc import Sequence
 from typing import Any
 
+from flows.sentences import is_sentence, sentence
 from flows.verbs import cuts, deliveries, detector, lake, programme, tables
 from warehouse.cautions import PURPOSE
 
@@ -22,8 +23,6 @@ VERBS = (
     *lake.VERBS,
     *detector.VERBS,
 )
-
-ROOMS = ("flows", "detectors", "warehouse", "dashboards")
 
 
 def main(words: Sequence[str] | None = None) -> int:
@@ -39,21 +38,10 @@ def main(words: Sequence[str] | None = None) -> int:
         print("burdenline: stopped; nothing half-done is visible, run again to go on", file=sys.stderr)
         return 1
     except Exception as problem:
-        if not _is_sentence(problem):
+        if not is_sentence(problem):
             raise
-        print(f"burdenline: {_sentence(problem)}", file=sys.stderr)
+        print(f"burdenline: {sentence(problem)}", file=sys.stderr)
         return 1
-
-
-def _is_sentence(problem: Exception) -> bool:
-    """Errors of our own rooms and of the operating system are sentences for the user; all others are bugs."""
-    return isinstance(problem, OSError) or type(problem).__module__.split(".")[0] in ROOMS
-
-
-def _sentence(problem: Exception) -> str:
-    if isinstance(problem, OSError) and problem.strerror:
-        return f"{problem.filename or 'operating system'}: {problem.strerror}; nothing was lost, mend it and run again"
-    return str(problem)
 
 
 def _parser() -> argparse.ArgumentParser:

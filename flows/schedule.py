@@ -1,6 +1,7 @@
 """The nightly job as Prefect flows: the only module that knows Prefect.
 
 Thin wrappers around `flows.nightly`; a recording is one task, so a failed one is tried again without the others.
+Final states: Published, Published with refusals, Unchanged, Not published.
 """
 
 from __future__ import annotations
@@ -8,7 +9,7 @@ from __future__ import annotations
 import os
 from collections.abc import Iterator, Sequence
 from pathlib import Path
-from zoneinfo import ZoneInfo
+from typing import Any
 
 # Read by Prefect when it is imported: nothing is sent anywhere, and a slow host gets time to start the local server.
 os.environ.setdefault("DO_NOT_TRACK", "1")
@@ -17,20 +18,34 @@ os.environ.setdefault("PREFECT_CLOUD_ENABLE_ORCHESTRATION_TELEMETRY", "false")
 os.environ.setdefault("PREFECT_SERVER_EPHEMERAL_STARTUP_TIMEOUT_SECONDS", "120")
 
 from prefect import flow, get_run_logger, task
-from prefect.artifacts import create_table_artifact
+from prefect.artifacts import create_markdown_artifact, create_table_artifact
+from prefect.client.schemas.objects import StateType
 from prefect.schedules import Cron, Schedule
-from prefect.states import Completed, State
+from prefect.states import State
 
 from flows import nightly, settings
-from flows.nightly import Outcome, Work
+from flows.lock import FolderBusy
+from flows.nightly import Work
+from flows.notify import notify
 from flows.progress import Reporter, Silent
+from flows.sentences import is_sentence, sentence
+from warehouse.published import Published
+
+NIGHT_S = 12 * 3600
+WAIT_FOR_FOLDER_S = 600.0
 
 
 class CronError(ValueError):
-    """The cron fields or the zone cannot be used."""
+    """The cron fields cannot be used."""
 
 
-@task(name="analyse one recording", retries=2, retry_delay_seconds=[10, 60], task_run_name="{item.recording_id}")
+@task(
+    name="analyse one recording",
+    task_run_name="{item.recording_id}",
+    retries=2,
+    retry_delay_seconds=[10, 60],
+    timeout_seconds=3600,
+)
 def analyse_recording_task(item: Work) -> dict:
     """Analyse one recording and write its parts; repeating it writes the same files."""
     return nightly.analyse_one(item)
@@ -53,18 +68,69 @@ class _RunLog(Silent):
         get_run_logger().info(text)
 
 
-@flow(name="burdenline nightly", flow_run_name="{folder}", timeout_seconds=12 * 3600)
+def _can_heal(task: Any, run: Any, state: State) -> bool:
+    """A busy folder, a full disk or a share that is away can heal; wrong settings or a failed check cannot."""
+    return isinstance(state.result(raise_on_failure=False), (OSError, FolderBusy))
+
+
+@task(
+    name="bring the folder up to date",
+    task_run_name="{folder}",
+    retries=2,
+    retry_delay_seconds=[300, 1800],
+    retry_condition_fn=_can_heal,
+)
+def refresh_folder_task(folder: Path) -> dict[str, Any]:
+    """Run the whole job on a programme folder, one task per recording; returns what it did."""
+    outcome = nightly.run(folder, reporter=_RunLog(), wait_s=WAIT_FOR_FOLDER_S, analyse_all=analyse_as_tasks)
+    return outcome.as_dict()
+
+
+@flow(name="burdenline nightly", timeout_seconds=NIGHT_S)
 def nightly_flow(folder: str) -> State:
     """Run the whole job on a programme folder; the final state tells whether and how it was published."""
-    outcome = nightly.run(Path(folder), reporter=_RunLog(), wait_s=600.0, analyse_all=analyse_as_tasks)
-    create_table_artifact(
-        table=[outcome.as_dict()], key="burdenline-deliveries", description="What was new, waiting and refused"
-    )
+    programme = Path(folder)
+    result = refresh_folder_task(programme, return_state=True).result(raise_on_failure=False)
+    if isinstance(result, dict):
+        outcome = result
+        _leave_artifacts(programme, outcome)
+    elif is_sentence(result):
+        outcome = {"outcome": "not_published", "reason": sentence(result)}
+    else:
+        raise result
+    _tell(programme, outcome)
     return _final_state(outcome)
 
 
-def _final_state(outcome: Outcome) -> State:
-    return Completed(name=outcome.outcome.replace("_", " ").capitalize(), message=str(outcome.as_dict()))
+def _final_state(outcome: dict[str, Any]) -> State:
+    kind = StateType.FAILED if outcome["outcome"] == "not_published" else StateType.COMPLETED
+    name = outcome["outcome"].replace("_", " ").capitalize()
+    return State(type=kind, name=name, message=str(outcome.get("reason", name)))
+
+
+def _tell(programme: Path, outcome: dict[str, Any]) -> None:
+    try:
+        wishes = settings.load(programme / "programme.toml").notify
+    except settings.SettingsError:
+        return  # the outcome already says that the settings cannot be read
+    failure = notify(wishes, outcome)
+    if failure:
+        get_run_logger().warning(failure)
+
+
+def _leave_artifacts(programme: Path, outcome: dict[str, Any]) -> None:
+    deliveries = Published(programme / "published").table("deliveries")
+    declined = deliveries.filter(deliveries["status"].is_in(["waiting", "quarantined"]))
+    create_table_artifact(
+        table=declined.select("file_name", "status", "code", "reason").to_dicts(),
+        key="burdenline-not-in-the-numbers",
+        description="Deliveries that wait or were refused, and why",
+    )
+    create_markdown_artifact(
+        markdown="\n".join(f"- {name}: {value}" for name, value in outcome.items()),
+        key="burdenline-outcome",
+        description="What the last run did",
+    )
 
 
 def serve_nightly(folder: Path, cron: str, zone: str = "") -> None:
@@ -76,18 +142,18 @@ def serve_nightly(folder: Path, cron: str, zone: str = "") -> None:
     programme = settings.load(folder / "programme.toml").programme
     if zone:
         settings.check_zone("--zone", zone)
-    schedule = _schedule(cron, zone or programme.zone)
     nightly_flow.serve(
         name=f"{folder.resolve().name} nightly",
         parameters={"folder": str(folder.resolve())},
-        schedule=schedule,
+        schedule=nightly_schedule(cron, zone or programme.zone),
         limit=1,
     )
 
 
-def _schedule(cron: str, zone: str) -> Schedule:
+def nightly_schedule(cron: str, zone: str) -> Schedule:
+    """Turn five cron fields in a time zone into a schedule; raises CronError."""
     try:
-        return Cron(cron, timezone=str(ZoneInfo(zone)))
+        return Cron(cron, timezone=zone)
     except ValueError:
         raise CronError(
             f'--cron {cron!r} cannot be read; expected five fields, for example "0 3 * * *" for every night at three'

