@@ -17,8 +17,9 @@ from pathlib import Path
 from typing import Any
 
 from flows import inbox as door
+from flows import reviews
 from flows.assembly import Match, match
-from flows.deliveries import ACCEPTED, QUARANTINED, SKIPPED, WAITING, Deliveries, Pieces
+from flows.deliveries import ACCEPTED, QUARANTINED, SKIPPED, WAITING, Deliveries, Loads, Pieces
 from flows.inbox import Candidate, SeenFiles
 from flows.landing import Identity, Landed, land
 from flows.privacy import shown_name, shown_serial, without_words
@@ -33,7 +34,7 @@ from flows.staging import content_hash, hash_file, staged
 from warehouse.ledger import Ledger
 
 _BATCH_SAMPLES = 50_000_000
-_BATCH_DELIVERIES = 64
+_BATCH_DELIVERIES = 500
 
 
 @dataclass(frozen=True)
@@ -84,6 +85,7 @@ class _Run:
         self._seen = SeenFiles(self._lake / "seen.json")
         self._batch: list[tuple[str, Landed]] = []
         self._batch_samples = 0
+        self._review_loads: Loads = {}
         self._present: dict[str, Candidate] = {}
         self._new: dict[str, set[str]] = {status: set() for status in (ACCEPTED, WAITING, SKIPPED, QUARANTINED)}
         self._first_version = ledger.version
@@ -156,6 +158,9 @@ class _Run:
         self, candidate: Candidate, delivery_id: str, sha256: str, files: tuple[Path, ...], may_postpone: bool
     ) -> None:
         self._skip_known_bytes(sha256)
+        if reviews.is_decisions(head_of(files[0])):
+            self._accept_decisions(candidate, delivery_id, sha256, files[0])
+            return
         scratch = self._lake / "staging" / "now" / "unpacked"
         opened = open_delivery(files, self._site, scratch=scratch, limits=self._limits)
         opened, serial, matched, file_zone = self._matched(candidate, opened)
@@ -177,6 +182,15 @@ class _Run:
         self._batch_samples += opened.n_samples
         if self._batch_samples >= _BATCH_SAMPLES or len(self._batch) >= _BATCH_DELIVERIES:
             self._commit()
+
+    def _accept_decisions(self, candidate: Candidate, delivery_id: str, sha256: str, file: Path) -> None:
+        recording_id, loads = reviews.land(self._lake, self._ledger, file, delivery_id)
+        self._review_loads |= loads
+        row = self._row(candidate, delivery_id, sha256)
+        row |= {"status": ACCEPTED, "format": reviews.FORMAT, "recording_id": recording_id}
+        self._present[delivery_id] = candidate
+        self._deliveries.put(row)
+        self._tell(self._deliveries.rows[delivery_id])
 
     def _matched(self, candidate: Candidate, opened: Opened) -> tuple[Opened, str, Match, str | None]:
         """Wear and time of an opened delivery; raises Refused or Waits with what is missing."""
@@ -305,7 +319,8 @@ class _Run:
         landed, self._batch, self._batch_samples = self._batch, [], 0
         loads = self._recordings.bring_in_line(landed, all_devices=all_devices)
         refused = self._recordings.take_refused()
-        loads |= self._deliveries.loads()
+        loads |= self._deliveries.loads() | self._review_loads
+        self._review_loads = {}
         if loads:
             self._ledger.commit(loads, note="ingest")
         self._recordings.committed()

@@ -6,7 +6,9 @@ Nothing is in force after this; the parts count only once the ledger names them.
 from __future__ import annotations
 
 import hashlib
+from collections import deque
 from collections.abc import Callable, Iterator
+from concurrent.futures import Future, ThreadPoolExecutor
 from pathlib import Path
 from typing import NamedTuple
 
@@ -19,6 +21,7 @@ from flows.readers.recording import Finding, Opened, finding
 from warehouse.parts import BLOCK_SAMPLES, Part, frame_schema, write_signal
 from warehouse.schema import LAKE
 
+_WRITERS = 2  # blocks written while the next one is read and hashed; more would only hold more memory
 MOST_PIECES = 30_000  # piece and segment numbers are 16 bit
 
 
@@ -52,12 +55,17 @@ def land(lake: Path, opened: Opened, identity: Identity, passed: Callable[[int],
         )
     digest = hashlib.sha256(f"{opened.rate} Hz int16\n".encode())
     seen = _Seen(opened)
-    blocks = []
-    for piece, block, samples in _blocks(opened):
-        digest.update(np.ascontiguousarray(samples, "<i2").data)
-        seen.add(samples)
-        blocks.append(write_signal(lake, identity.delivery_id, piece, block, samples))
-        passed(samples.size)
+    blocks: list[Part] = []
+    with ThreadPoolExecutor(_WRITERS) as pool:
+        writing: deque[Future[Part]] = deque()
+        for piece, block, samples in _blocks(opened):
+            digest.update(np.ascontiguousarray(samples, "<i2").data)
+            seen.add(samples)
+            if len(writing) == _WRITERS:
+                blocks.append(writing.popleft().result())
+            writing.append(pool.submit(write_signal, lake, identity.delivery_id, piece, block, samples))
+            passed(samples.size)
+        blocks += [future.result() for future in writing]
     findings = (*opened.findings, *seen.findings())
     return Landed(_pieces(opened, identity, blocks, findings), _marks(opened, identity), digest.hexdigest(), findings)
 

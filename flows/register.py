@@ -12,6 +12,7 @@ import re
 from collections.abc import Callable
 from dataclasses import dataclass
 from datetime import date, datetime, time, timedelta
+from functools import cached_property
 from pathlib import Path
 from typing import Any, NamedTuple
 
@@ -56,30 +57,38 @@ class Register:
     wears: pl.DataFrame
     therapies: pl.DataFrame
 
+    @cached_property
+    def _wears_by_device(self) -> dict[str, list[Wear]]:
+        found: dict[str, list[Wear]] = {}
+        for row in self.wears.sort("device_serial", "from_utc").iter_rows(named=True):
+            found.setdefault(row["device_serial"], []).append(Wear(**row))
+        return found
+
+    @cached_property
+    def _patient_codes(self) -> frozenset[str]:
+        return frozenset(self.patients["patient_code"])
+
     def wears_of(self, device_serial: str) -> list[Wear]:
         """Wears of a device, earliest first."""
-        rows = self.wears.filter(pl.col("device_serial") == device_serial).sort("from_utc")
-        return [Wear(**row) for row in rows.iter_rows(named=True)]
+        return self._wears_by_device.get(device_serial, [])
 
     def device_among(self, words: tuple[str, ...]) -> str | None:
         """The first word that is a device serial of the register."""
-        known = set(self.wears["device_serial"])
-        return next((word for word in words if word in known), None)
+        return next((word for word in words if word in self._wears_by_device), None)
 
     def device_in(self, text: str) -> str | None:
         """The longest device serial of the register that stands in a text with no letter or digit around it."""
-        serials = sorted(set(self.wears["device_serial"]), key=lambda serial: (-len(serial), serial))
+        serials = sorted(self._wears_by_device, key=lambda serial: (-len(serial), serial))
         return next((s for s in serials if re.search(rf"(?<![^\W_]){re.escape(s)}(?![^\W_])", text)), None)
 
     def patient_among(self, words: tuple[str, ...]) -> str | None:
         """The first word that is a patient code of the register."""
-        known = set(self.patients["patient_code"])
-        return next((word for word in words if word in known), None)
+        return next((word for word in words if word in self._patient_codes), None)
 
-    @property
+    @cached_property
     def codes(self) -> frozenset[str]:
         """All patient codes and device serials."""
-        return frozenset(self.patients["patient_code"]) | frozenset(self.wears["device_serial"])
+        return self._patient_codes | frozenset(self._wears_by_device)
 
 
 def load(folder: Path, programme_zone: str) -> Register:

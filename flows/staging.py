@@ -5,17 +5,19 @@ A file that is cut or replaced while it is read then cannot hurt, and hash and s
 
 from __future__ import annotations
 
+import contextlib
 import errno
 import hashlib
 import shutil
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
+from io import FileIO
 from pathlib import Path
 from typing import NamedTuple
 
 from flows.readers.codes import Waits
 
-_PIECE_BYTES = 2**22
+_PIECE_BYTES = 2**18  # stays in the processor's cache between reading, hashing and writing
 
 
 class Staged(NamedTuple):
@@ -60,35 +62,29 @@ def hash_file(path: Path) -> str:
 
 
 def _copied(path: Path, copy: Path | None, passed: Callable[[int], None]) -> str:
-    digest = hashlib.sha256()
-    buffer = bytearray(_PIECE_BYTES)
-    view = memoryview(buffer)
     try:
         source = path.open("rb", buffering=0)
     except PermissionError:
         raise Waits("not_readable", "the file may not be read by this program. Give it the right to read.") from None
     except FileNotFoundError:
         raise Waits("still_being_written", "the file went away while it was looked at. Run again.") from None
-    with source:
+    digest, buffer = hashlib.sha256(), bytearray(_PIECE_BYTES)
+    view = memoryview(buffer)
+    with source, copy.open("wb", buffering=0) if copy else contextlib.nullcontext() as target:
         before = _state(path)
-        target = copy.open("wb", buffering=0) if copy else None
-        try:
-            while n := source.readinto(buffer):
-                digest.update(view[:n])
-                if target:
-                    _write_all(target, view[:n])
-                passed(n)
-        finally:
-            if target:
-                target.close()
+        while n := source.readinto(buffer):
+            digest.update(view[:n])
+            if target is not None:
+                _write_all(target, view[:n])
+            passed(n)
         if _state(path) != before:
             raise Waits("still_being_written", "the file changed while it was copied. Run again when it is complete.")
     return digest.hexdigest()
 
 
-def _write_all(target: object, view: memoryview) -> None:
+def _write_all(target: FileIO, view: memoryview) -> None:
     while view:
-        view = view[target.write(view) :]  # type: ignore[attr-defined]
+        view = view[target.write(view) :]
 
 
 def _state(path: Path) -> tuple[int, int] | None:

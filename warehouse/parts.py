@@ -27,6 +27,7 @@ BLOCK_SAMPLES = 2**22
 """Most samples of a signal block: 8 MB decoded, 4.7 h at 250 Hz."""
 
 _ROW_GROUP_ROWS = 100_000
+_CACHED_SAMPLES = 2**16
 _KEY_PATTERN = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,120}")
 _TEMP_PREFIX = ".writing-"
 
@@ -165,8 +166,15 @@ def write_signal(lake: Path, recording_id: str, segment: int, block: int, sample
 
 
 def _steps(samples: NDArray[np.int16]) -> NDArray[np.uint16]:
-    difference = np.diff(samples, prepend=np.int16(0))
-    return ((difference << 1) ^ (difference >> 15)).view(np.uint16)
+    steps = np.empty(samples.size, np.int16)
+    steps[0] = samples[0]
+    np.subtract(samples[1:], samples[:-1], out=steps[1:])
+    for a in range(0, steps.size, _CACHED_SAMPLES):  # piece by piece, so that the passes stay in the cache
+        piece = steps[a : a + _CACHED_SAMPLES]
+        sign = piece >> 15
+        np.left_shift(piece, 1, out=piece)
+        np.bitwise_xor(piece, sign, out=piece)
+    return steps.view(np.uint16)
 
 
 def _samples(step: NDArray[np.uint16]) -> NDArray[np.int16]:

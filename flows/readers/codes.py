@@ -49,6 +49,9 @@ REFUSALS = {
     "text_layout_unclear": "columns, numbers or times of the text cannot be told without a site layout",
     "too_many_gaps": "the file has more gaps than segments can be numbered",
     "not_a_plain_file": "the inbox entry is a link, a pipe or a device",
+    "decisions_unreadable": "the file of over-read decisions is not as the over-read sheet saves it",
+    "decisions_of_other_version": "the file of over-read decisions was saved by another version",
+    "decisions_do_not_fit": "the over-read decisions do not fit the analysis that is in force here",
     "unsafe_xml": "the XML declares a document type or entities",
 }
 

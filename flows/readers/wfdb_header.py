@@ -177,6 +177,6 @@ def _start(time: bytes | None, date: bytes | None) -> tuple[datetime | None, boo
         hour, minute, second = [Fraction(0)] * (3 - len(clock)) + clock
         micros = round((second % 1) * 1_000_000)
         start = datetime(year, month, day, int(hour), int(minute), int(second), micros)  # noqa: DTZ001  device clock
-    except ValueError:
+    except (ValueError, OverflowError):
         return None, False
     return start, b"." in time
