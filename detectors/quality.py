@@ -22,10 +22,10 @@ from detectors.signal import WORKING_FS_HZ
 REACH_BLOCKS = 2  # either side: 7.7 s in all
 QUIET_PERCENTILE = 25
 NOISY = 2.0  # times the quiet level, together with ODD
-ODD = 0.015  # mean distance of the beats from their families
+ODD = 0.012  # mean distance of the best beats from their families
 VERY_NOISY = 2.5
 VERY_ODD = 0.06
-DISTANCE_CAP = 0.3  # one beat of its own shape must not condemn a stretch
+DISTANCE_CAP = 0.3  # one stretch without any known shape must not condemn its neighbours
 MARGIN_BLOCKS = 1  # noise begins and ends somewhere in the means of its first and last blocks
 LEAD_OFF = 0.15  # of the recording's usual QRS level
 
@@ -35,16 +35,21 @@ class Seen(NamedTuple):
 
     n_samples: int
     blocks: Blocks
-    n_beats: NDArray[np.int64]  # shape (n_blocks,)
-    distance: NDArray[np.float64]  # shape (n_blocks,), sum over the beats of 1 - correlation with the nearest family
+    distance: NDArray[
+        np.float64
+    ]  # shape (n_blocks,), 1 - correlation of the best beat with its family, NaN without beats
 
 
 def look(n_samples: int, blocks: Blocks, working: NDArray[np.float64], likeness: NDArray[np.float32]) -> Seen:
-    """What quality keeps of one segment: its blocks, and per block the beats and how odd they are."""
+    """What quality keeps of one segment: its blocks, and how far even the best beat of each lies from its family.
+
+    The best, not the mean: noise moves every beat, an ectopic or a fused one only itself.
+    """
     n_blocks = blocks.noise.size
     block = np.minimum(working // qrs.BLOCK, n_blocks - 1).astype(np.int64)
-    odd = np.minimum(1 - likeness, DISTANCE_CAP)
-    return Seen(n_samples, blocks, np.bincount(block, minlength=n_blocks), np.bincount(block, odd, minlength=n_blocks))
+    distance = np.full(n_blocks, np.inf)
+    np.minimum.at(distance, block, np.minimum(1 - likeness, DISTANCE_CAP))
+    return Seen(n_samples, blocks, np.where(np.isinf(distance), np.nan, distance))
 
 
 def windows(seen: list[Seen], fs_hz: float) -> QualityWindows:
@@ -75,16 +80,13 @@ def _usual(seen: list[Seen]) -> tuple[float, float]:
 
 def _relative_noise(blocks: Blocks) -> NDArray[np.float64]:
     """Noise over the QRS level, mean of the blocks near by, NaN where nothing is known."""
-    ratio = blocks.noise / blocks.level
-    known = np.isfinite(ratio)
-    count = _near_sum(known.astype(np.float64))
-    near = _near_sum(np.where(known, ratio, 0))
-    return np.divide(near, count, out=np.full(ratio.size, np.nan), where=count > 0)
+    return _near_mean(blocks.noise / blocks.level)
 
 
-def _oddness(one: Seen) -> NDArray[np.float64]:
-    """Mean distance of the beats near each block from their families; 0 where there is none."""
-    return _near_sum(one.distance) / np.maximum(_near_sum(one.n_beats.astype(np.float64)), 1)
+def _near_mean(values: NDArray[np.floating]) -> NDArray[np.float64]:
+    known = np.isfinite(values)
+    count, total = _near_sum(known.astype(np.float64)), _near_sum(np.where(known, values, 0))
+    return np.divide(total, count, out=np.full(values.size, np.nan), where=count > 0)
 
 
 def _near_sum(values: NDArray[np.float64]) -> NDArray[np.float64]:
@@ -98,7 +100,7 @@ def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.str_]:
     blocks = one.blocks
     if blocks.noise.size == 0:
         return np.empty(0, dtype="<U8")
-    noise, odd = np.nan_to_num(_relative_noise(blocks), nan=0.0), _oddness(one)
+    noise, odd = (np.nan_to_num(v, nan=0.0) for v in (_relative_noise(blocks), _near_mean(one.distance)))
     is_noisy = (noise > NOISY * quiet) & (odd > ODD) | (noise > VERY_NOISY * quiet) | (odd > VERY_ODD)
     is_noisy = np.convolve(is_noisy, np.ones(2 * MARGIN_BLOCKS + 1), mode="same") > 0
     return np.select(
