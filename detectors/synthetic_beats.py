@@ -36,7 +36,8 @@ ATRIAL = Shape((Wave(-125, 16, -0.10), *_NORMAL_QRS), _NORMAL_T)
 VENTRICULAR = (
     Shape((Wave(-34, 16, 0.35), Wave(0, 25, 1.45), Wave(52, 22, -0.45)), Wave(300, 60, -0.48)),
     Shape((Wave(-42, 18, 0.22), Wave(0, 30, -1.35), Wave(58, 20, 0.25)), Wave(310, 62, 0.50)),
-    Shape((Wave(-50, 17, 0.70), Wave(0, 22, 0.95), Wave(48, 24, 0.40)), Wave(300, 58, -0.38)),
+    Shape((Wave(-44, 13, 0.60), Wave(0, 14, 1.05), Wave(44, 17, 0.45)), Wave(300, 58, -0.38)),  # notched
+    Shape((Wave(-50, 17, 0.70), Wave(0, 22, 0.95), Wave(48, 24, 0.40)), Wave(300, 58, -0.38)),  # slurred: hard to find
 )
 
 # Kinds of beats as drawn: what the truth calls them, and their shape.
@@ -46,7 +47,7 @@ KINDS: tuple[tuple[str, Shape], ...] = (
     *(("V", shape) for shape in VENTRICULAR),
     ("N", WITHOUT_P),
 )
-NORMAL_KIND, ATRIAL_KIND, FIRST_VENTRICULAR_KIND, WITHOUT_P_KIND = 0, 1, 2, 5
+NORMAL_KIND, ATRIAL_KIND, FIRST_VENTRICULAR_KIND, WITHOUT_P_KIND = 0, 1, 2, 2 + len(VENTRICULAR)
 FIRST_FUSION_KIND = len(KINDS)  # a fusion of the normal beat with a ventricular family
 
 
@@ -65,7 +66,7 @@ class Rhythm(NamedTuple):
     day_night_swing: float = 0.15  # rate falls and rises by this share over the day, highest at 15:00
     v_share_pct: float = 0.0
     v_family_weights: tuple[float, ...] = (1.0,)
-    coupling_ms: tuple[float, ...] = (480.0, 520.0, 450.0)  # per ventricular family, at 72/min
+    coupling_ms: tuple[float, ...] = (480.0, 520.0, 450.0, 450.0)  # per ventricular family, at 72/min
     coupling_spread_ms: float = 14.0
     interpolated_share: float = 0.05  # of single ventricular beats
     reset_share: float = 0.1  # of single ventricular beats
@@ -93,7 +94,7 @@ def select(beats: TrueBeats, chosen: NDArray[np.bool_] | slice) -> TrueBeats:
 def exact_beats(rhythm_s: list[tuple[str, float]], *, fs_hz: int = 250, first_s: float = 0.5) -> TrueBeats:
     """Beats from (kind, seconds since the beat before); the first interval counts from `first_s`.
 
-    Kinds: N, S, V or V0, V1, V2 (ventricular family), F or F0, F1, F2 (fusion of a normal beat with that family).
+    Kinds: N, S, V or V0 to V3 (ventricular family), F or F0 to F3 (fusion of a normal beat with that family).
     """
     names = [name for name, _ in rhythm_s]
     kinds = np.array([_kind(name) for name in names], dtype=np.int64)

@@ -13,6 +13,7 @@ from detectors.annotations import beat_annotations
 from detectors.results import Segment
 from detectors.scoring import compare_beats, statistics
 from detectors.scoring_runs import compare_runs, run_statistics
+from detectors.synthetic import Rhythm
 from flows import demo
 
 FIGURES = ("qrs_se", "qrs_ppv", "veb_se", "veb_ppv", "sveb_se", "sveb_ppv")
@@ -24,6 +25,8 @@ def main() -> None:
     for number, patient in enumerate(demo.story()):
         for wear in patient.wears:
             print(f"{patient.code} {wear.day:02d}", _line(patient, wear, demo.seed_of(number, wear)))
+    slurred = Rhythm(v_share_pct=9.0, v_family_weights=(0.0, 0.0, 0.0, 1.0), rate_bpm=86, run_share=0.0)
+    print("slurred V", _line(demo.Patient("", "", ()), demo.Wear(0, 6, slurred), demo.SEED))
 
 
 def _line(patient: demo.Patient, wear: demo.Wear, seed: int) -> str:
