@@ -95,7 +95,7 @@ class SiteSettings:
     """What the site knows about its files that the files do not say; empty or 0 means: only the file counts."""
 
     clock_zone: str = _setting("", "IANA time zone of the device clocks, UTC for instance; empty: the patient's zone")
-    ecg_channel: str = _setting("", "label of the ECG channel where several could be it")
+    ecg_channel: str = _setting("", "label of the ECG channel where several could be it, or #1, #2 by its place")
     mv_per_count: float = _setting(0.0, "millivolts per count where files have no scale", 0, 1)
     fs_hz: float = _setting(0.0, "sampling rate of text and Parquet files without a time column, Hz", 0, 10_000)
     ecg_column: str = _setting("", "ECG column of text and Parquet files: its name, or its number from 1")

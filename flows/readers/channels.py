@@ -52,6 +52,9 @@ def _bare(label: str) -> str:
 
 
 def _named(labels: Sequence[str], wanted: str, where: str) -> int:
+    """Number of the channel of this label, or of the channel that is counted off: #1 is the first."""
+    if wanted.startswith("#") and wanted[1:].isdigit() and 1 <= int(wanted[1:]) <= len(labels):
+        return int(wanted[1:]) - 1
     found = [n for n, label in enumerate(labels) if label.strip().casefold() == wanted.casefold()]
     if len(found) == 1:
         return found[0]

@@ -19,6 +19,7 @@ from flows.readers.channels import choose, mv_per_unit
 from flows.readers.codes import Refused
 from flows.readers.recording import Finding, Opened, Site, Stretch, checked_rate, checked_scale, finding, rate_ns
 from flows.readers.wfdb_codings import CODINGS, Coding
+from flows.readers.wfdb_flac import FlacCoding
 from flows.readers.wfdb_header import Header, Signal, looks_like_header, read_header
 from flows.readers.wide import Wide, fitted
 
@@ -154,7 +155,7 @@ def _signal_reader(header: Header, number: int, folder: Path, first_frame: int) 
     group = [other for other in header.signals if other.file_name == signal.file_name]
     before = sum(other.samples_per_frame for other in group[: group.index(signal)])
     frame_samples = sum(other.samples_per_frame for other in group)
-    there = coding.samples_in(path.stat().st_size - signal.byte_offset) // frame_samples
+    there = coding.count(path, signal.byte_offset) // frame_samples
     n_frames, findings = _length(header.n_samples, there)
     frames = _Frames(path, coding, signal.byte_offset, frame_samples, before, signal.samples_per_frame)
     n_samples = n_frames * signal.samples_per_frame
@@ -188,7 +189,7 @@ class _Frames:
     """Samples of one signal among those that share its file."""
 
     def __init__(
-        self, path: Path, coding: Coding, byte_offset: int, frame_samples: int, before: int, per_frame: int
+        self, path: Path, coding: Coding | FlacCoding, byte_offset: int, frame_samples: int, before: int, per_frame: int
     ) -> None:
         self._path, self._coding, self._byte_offset = path, coding, byte_offset
         self._frame_samples, self._before, self._per_frame = frame_samples, before, per_frame
@@ -219,7 +220,7 @@ def _scale(signal: Signal, site: Site) -> tuple[float, tuple[Finding, ...]]:
     return checked_scale(mv_per_count, 2 ** (signal.adc_bits or 16), "header"), ()
 
 
-def _rails(signal: Signal, coding: Coding) -> tuple[int, int]:
+def _rails(signal: Signal, coding: Coding | FlacCoding) -> tuple[int, int]:
     """Lowest and highest count of the converter, within what the coding can hold."""
     half = 2 ** (signal.adc_bits - 1) if signal.adc_bits else coding.highest + 1
     low, high = signal.adc_zero - half, signal.adc_zero + half - 1

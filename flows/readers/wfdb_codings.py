@@ -1,4 +1,4 @@
-"""How WFDB signal files hold their samples: formats 16, 24, 32, 61, 80, 160 and 212.
+"""How WFDB signal files hold their samples: formats 16, 24, 32, 61, 80, 160 and 212, and the compressed ones.
 
 Source: WFDB specification, physionet.org/physiotools/wag/signal-5.htm. The marker of a missing sample is the lowest
 value of each format (from memory: WFDB library, WFDB_INVALID_SAMPLE).
@@ -15,6 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from flows.readers.codes import Refused
+from flows.readers.wfdb_flac import FlacCoding
 
 
 @dataclass(frozen=True)
@@ -37,7 +38,11 @@ class Coding:
         """Counts may not fit into 16 bit."""
         return self.highest > 32767
 
-    def samples_in(self, n_bytes: int) -> int:
+    def count(self, path: Path, byte_offset: int) -> int:
+        """Samples that a file holds, all its signals together."""
+        return self._samples_in(path.stat().st_size - byte_offset)
+
+    def _samples_in(self, n_bytes: int) -> int:
         """Samples that `n_bytes` hold; a last half group may hold one."""
         groups, rest = divmod(max(n_bytes, 0), self.group_bytes)
         return groups * self.group_samples + int(self.group_samples == 2 and rest == 2)
@@ -49,7 +54,7 @@ class Coding:
         with path.open("rb", buffering=0) as file:
             file.seek(byte_offset + first_group * self.group_bytes)
             got = file.readinto(buffer.data)
-        if self.samples_in(got) < b - first_group * self.group_samples:
+        if self._samples_in(got) < b - first_group * self.group_samples:
             raise Refused("file_cut_short", "signal file: it became shorter while it was read. Deliver it again.")
         counts = self.decode(buffer)
         return counts[a - first_group * self.group_samples : b - first_group * self.group_samples]
@@ -70,12 +75,15 @@ def _pairs212(raw: NDArray[np.uint8]) -> NDArray[np.int16]:
     return counts.reshape(-1)
 
 
-CODINGS: dict[int, Coding] = {
+CODINGS: dict[int, Coding | FlacCoding] = {
     16: Coding(1, 2, -(2**15), 2**15 - 1, lambda raw: raw.view("<i2")),
     24: Coding(1, 3, -(2**23), 2**23 - 1, _triples24),
     32: Coding(1, 4, -(2**31), 2**31 - 1, lambda raw: raw.view("<i4")),
     61: Coding(1, 2, -(2**15), 2**15 - 1, lambda raw: raw.view(">i2").astype(np.int16)),
     80: Coding(1, 1, -(2**7), 2**7 - 1, lambda raw: raw.astype(np.int16) - 128),
     160: Coding(1, 2, -(2**15), 2**15 - 1, lambda raw: (raw.view("<u2").astype(np.int32) - 32768).astype(np.int16)),
+    508: FlacCoding(8),
+    516: FlacCoding(16),
+    524: FlacCoding(24),
     212: Coding(2, 3, -(2**11), 2**11 - 1, _pairs212),
 }

@@ -267,15 +267,16 @@ def test_first_of_two_leads_is_taken_and_said(opened, ecg):
     assert codes(recording) == ["first_of_several_leads"]
 
 
-def test_named_channel_settles_a_tie(opened, ecg):
-    """The channel named by the programme is taken among several."""
+@pytest.mark.parametrize("wanted", ["ecg b", "#2"])
+def test_named_channel_settles_a_tie(opened, ecg, wanted):
+    """The channel named or counted off by the programme is taken among several."""
     signal = ecg(15_000)
     recording = opened(
         signal,
         labels=("ECG", "ECG B"),
         units=("mV", "mV"),
         others={0: np.zeros(15_000)},
-        site=Site(ecg_channel="ecg b"),
+        site=Site(ecg_channel=wanted),
     )
     assert np.array_equal(recording.read(0, 15_000), signal)
 

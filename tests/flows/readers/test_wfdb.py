@@ -55,6 +55,24 @@ def test_every_coding_equals_an_independent_reader(tmp_path, coding, n_signals):
     assert [found.code for found in recording.findings if found.code == "checksum_wrong"] == []
 
 
+@pytest.mark.parametrize("coding", ["508", "516", "524"])
+def test_compressed_codings(tmp_path, coding):
+    """FLAC-compressed samples come back, whole and in pieces, and a cut file is refused."""
+    pytest.importorskip("soundfile", reason="the extra flac is not installed")
+    digital = np.random.default_rng(1).integers(-120, 120, (999, 2))
+    wfdb.wrsamp(
+        "a", fs=250, units=["mV"] * 2, sig_name=["II", "V1"], d_signal=digital, fmt=[coding] * 2,
+        adc_gain=[200.0] * 2, baseline=[0] * 2, write_dir=str(tmp_path),
+    )  # fmt: skip
+    recording = open_delivery([tmp_path / "a.hea"])
+    # Source: wfdb 4.3.1 (writer)
+    assert np.array_equal(recording.read(0, 999), digital[:, 0])
+    assert np.array_equal(recording.read(333, 712), digital[333:712, 0])
+    path = next(each for each in tmp_path.iterdir() if each.suffix != ".hea")
+    path.write_bytes(path.read_bytes()[:200])
+    assert refused(tmp_path / "a.hea") in ("file_cut_short", "no_samples")
+
+
 @pytest.mark.parametrize(("coding", "dtype", "shift"), [("61", ">i2", 0), ("160", "<u2", 32768)])
 def test_codings_that_only_the_oracle_reads(tmp_path, coding, dtype, shift):
     """Big-endian and offset-binary samples equal those of an independent reader."""
