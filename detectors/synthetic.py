@@ -12,6 +12,7 @@ The same seed gives the same bytes. Memory is flat: an hour is made at a time.
 from __future__ import annotations
 
 from collections.abc import Iterator
+from functools import cache
 from typing import NamedTuple
 
 import numpy as np
@@ -118,6 +119,7 @@ def draw(beats: TrueBeats, *, n_samples: int, fs_hz: int, first_sample: int = 0)
     return out[margin : margin + n_samples]
 
 
+@cache
 def _templates(fs_hz: int, before: int, after: int) -> NDArray[np.float32]:
     """Drawn beats, shape (n_kinds, _QT_STEPS, before + after)."""
     t_ms = np.arange(-before, after) * 1000.0 / fs_hz
