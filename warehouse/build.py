@@ -37,6 +37,14 @@ MODELS: dict[str, tuple[str, ...]] = {
 READ_IN_PLACE = ("beats", "quality_windows", "strips")
 """Published tables that are too large to copy: views over the parts, in the build and in the publication."""
 
+COMPUTED_OUTSIDE = tuple(
+    name
+    for name in schema.PUBLISHED
+    if name
+    not in (*READ_IN_PLACE, "parts", "data_dictionary", *(model for layer in MODELS.values() for model in layer))
+)
+"""Published tables that no model makes: statistics, which the caller adds between intermediate and marts."""
+
 _NOT_FOR_MODELS = ("signal", "pieces", "inputs")
 
 REGISTER: dict[str, dict[str, str]] = {

@@ -22,7 +22,7 @@ import numpy as np
 import polars as pl
 
 from warehouse import schema
-from warehouse.build import TrendBuild
+from warehouse.build import COMPUTED_OUTSIDE, TrendBuild
 from warehouse.ledger import Ledger
 from warehouse.parts import Part, frame_schema, write_part
 from warehouse.publish import publish
@@ -174,7 +174,8 @@ def publication(folder: Path, recordings: int, found: dict[str, float], what: st
             with timed(f"{what}: models", found):
                 build.run_models("staging")
                 build.run_models("intermediate")
-                build.add("changes", pl.DataFrame(schema=frame_schema(schema.PUBLISHED["changes"])))
+                for name in COMPUTED_OUTSIDE:
+                    build.add(name, pl.DataFrame(schema=frame_schema(schema.PUBLISHED[name])))
                 build.run_models("marts")
             with timed(f"{what}: checks", found):
                 failures = build.check()

@@ -10,7 +10,7 @@ import polars as pl
 import pytest
 
 from warehouse import parts, schema
-from warehouse.build import MODELS, READ_IN_PLACE, TrendBuild
+from warehouse.build import COMPUTED_OUTSIDE, TrendBuild
 from warehouse.ledger import Ledger
 from warehouse.parts import write_part
 
@@ -113,16 +113,10 @@ class Lake:
             build.run_models("staging")
             build.run_models("intermediate")
             build.add("changes", _changes(changes or []))
-            for name in _computed_elsewhere() - {"changes"}:
+            for name in set(COMPUTED_OUTSIDE) - {"changes"}:
                 build.add(name, parts.empty_frame(schema.PUBLISHED[name]))
             build.run_models("marts")
             yield build
-
-
-def _computed_elsewhere() -> set[str]:
-    """Published tables that no model makes and that are not the build's own."""
-    made = {name for models in MODELS.values() for name in models}
-    return set(schema.PUBLISHED) - made - set(READ_IN_PLACE) - {"parts", "data_dictionary"}
 
 
 def _no_therapies() -> pl.DataFrame:

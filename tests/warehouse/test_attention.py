@@ -91,6 +91,16 @@ def test_verdicts_on_the_latest_therapy_event_are_listed(lake: Any) -> None:
     assert reasons[1] == "one day"
 
 
+def test_a_recurrence_is_listed_since_its_day(lake: Any) -> None:
+    """A burden that is back after it had fallen is a reason since the day it came back, whatever the verdict is."""
+    lake.patient("P1")
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-20T00:00", v_beats=0)
+    lake.therapy("P1", "2026-05-10")
+    change = {"patient_code": "P1", "therapy_id": "T1", "measure": "v_burden_pct", "verdict": "within_chance"}
+    assert _list(lake, changes=[change | {"recurrence_day": date(2026, 5, 17)}]) == [("P1", "recurrence", "2026-05-17")]
+    assert _list(lake, changes=[change]) == []
+
+
 def test_figures_stand_in_the_sentence(lake: Any) -> None:
     """The burden is never named without its analysable hours and the day it belongs to."""
     lake.patient("P1")

@@ -8,8 +8,8 @@ WITH reasons AS (
 urgency AS (
     SELECT attention_code, place
     FROM (VALUES
-        ('fast_run', 1), ('long_pause', 2), ('rose_beyond_chance', 3), ('ventricular_run', 4),
-        ('burden_over_line', 5), ('follow_up_missing', 6), ('too_little_wear', 7)
+        ('fast_run', 1), ('long_pause', 2), ('rose_beyond_chance', 3), ('recurrence', 4), ('ventricular_run', 5),
+        ('burden_over_line', 6), ('follow_up_missing', 7), ('too_little_wear', 8)
     ) AS listed (attention_code, place)
 )
 

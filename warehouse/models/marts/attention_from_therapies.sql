@@ -10,6 +10,7 @@ WITH latest AS (
         change.verdict,
         change.change_pct,
         change.chance_rise_limit_pct,
+        change.recurrence_day,
         change.reason
     FROM therapies AS therapy
     INNER JOIN periods AS after ON after.therapy_id = therapy.therapy_id AND after.period = 'after'
@@ -30,6 +31,16 @@ SELECT
         change_pct, therapy_day::VARCHAR, chance_rise_limit_pct) AS attention_reason
 FROM latest
 WHERE verdict = 'rose_beyond_chance'
+UNION ALL
+SELECT
+    patient_code,
+    'recurrence',
+    date_diff('day', therapy_day, recurrence_day),
+    recurrence_day,
+    printf('ventricular burden had fallen after the therapy event of %s and is back beyond chance since %s',
+        therapy_day::VARCHAR, recurrence_day::VARCHAR)
+FROM latest
+WHERE recurrence_day IS NOT NULL
 UNION ALL
 SELECT
     patient_code,
