@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import hashlib
 import json
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from functools import partial
 from pathlib import Path
 from typing import Any
@@ -23,6 +23,7 @@ from flows.settings import Settings, result_settings
 from warehouse.parts import Part, SignalReader, frame_schema, write_part
 from warehouse.schema import LAKE
 
+BEATS_PER_PART = 250_000
 _ADDED_LATER = ("recording_id", "fingerprint")
 DERIVED_TABLES = ("beats", "families", "episodes", "quality_windows", "findings", "quarter_hours", "strips")
 
@@ -86,23 +87,27 @@ def land_analysis(
     """Write the derived tables of one recording as parts; returns what the ledger must commit."""
     recording_id = recording["recording_id"]
     start_us = segments.sort("segment")["start_utc"].dt.timestamp("us").to_numpy()
-    frames = {
-        "beats": _beats(analysis, start_us),
-        "families": _families(analysis),
-        "episodes": _spans(analysis.episodes._asdict(), analysis.fs_hz, start_us),
-        "quality_windows": _spans(analysis.quality._asdict(), analysis.fs_hz, start_us),
-        "findings": _findings(analysis),
-        "quarter_hours": _quarter_hours(analysis, start_us),
-        "strips": _strips(analysis, start_us, recording, SignalReader(lake, signal)),
-    }
-    return {
-        (table, recording_id): [
-            write_part(
-                lake, table, recording_id, _conform(table, frame, recording_id, fingerprint), fingerprint=fingerprint
-            )
-        ]
-        for table, frame in frames.items()
-    }
+    loads: dict[tuple[str, str], list[Part]] = {}
+    for table, frame in _frames(analysis, start_us, recording, SignalReader(lake, signal)):
+        rows = _conform(table, frame, recording_id, fingerprint)
+        part = write_part(lake, table, recording_id, rows, fingerprint=fingerprint)
+        loads.setdefault((table, recording_id), []).append(part)
+    return loads
+
+
+def _frames(
+    analysis: Analysis, start_us: np.ndarray, recording: Mapping[str, Any], reader: SignalReader
+) -> Iterator[tuple[str, pl.DataFrame]]:
+    """The derived tables one after the other; beats in slices, so that memory does not grow with the recording."""
+    for begin in range(0, max(len(analysis.beats.sample), 1), BEATS_PER_PART):
+        columns = {name: column[begin : begin + BEATS_PER_PART] for name, column in analysis.beats._asdict().items()}
+        yield "beats", _beats(columns, analysis.fs_hz, start_us)
+    yield "families", _families(analysis)
+    yield "episodes", _spans(analysis.episodes._asdict(), analysis.fs_hz, start_us)
+    yield "quality_windows", _spans(analysis.quality._asdict(), analysis.fs_hz, start_us)
+    yield "findings", _findings(analysis)
+    yield "quarter_hours", _quarter_hours(analysis, start_us)
+    yield "strips", _strips(analysis, start_us, recording, reader)
 
 
 def _conform(table: str, frame: pl.DataFrame, recording_id: str, fingerprint: str) -> pl.DataFrame:
@@ -119,13 +124,21 @@ def _number_or_null(frame: pl.DataFrame) -> pl.DataFrame:
     return frame.with_columns(pl.col(pl.Float32, pl.Float64).fill_nan(None))
 
 
-def _beats(analysis: Analysis, start_us: np.ndarray) -> pl.DataFrame:
-    beats = analysis.beats
-    frame = pl.DataFrame(beats._asdict()).with_columns(
-        _instants(start_us, beats.segment, beats.sample, analysis.fs_hz).alias("beat_utc"),
-        pl.Series("pause_kind", np.array([*PAUSE_KINDS])[beats.pause_kind]).replace("", None),
+# Text is picked from short lists by number: turning a million numpy strings into text costs more than all else here.
+_LETTERS = pl.Series([chr(code) for code in range(128)])
+_PAUSES = pl.Series([kind or None for kind in PAUSE_KINDS])
+
+
+def _beats(columns: dict[str, np.ndarray], fs_hz: float, start_us: np.ndarray) -> pl.DataFrame:
+    letters, pauses = columns["beat_class"].astype("<U1").view(np.uint32), columns["pause_kind"]
+    numbers = pl.DataFrame(
+        {name: column for name, column in columns.items() if name not in ("beat_class", "pause_kind")}
     )
-    return _number_or_null(frame)
+    return _number_or_null(numbers).with_columns(
+        _instants(start_us, columns["segment"], columns["sample"], fs_hz).alias("beat_utc"),
+        _LETTERS.gather(letters).alias("beat_class"),
+        _PAUSES.gather(pauses).alias("pause_kind"),
+    )
 
 
 def _families(analysis: Analysis) -> pl.DataFrame:
