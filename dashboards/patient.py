@@ -119,6 +119,7 @@ def _recording(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
     ectopic = families.filter(pl.col("family_class").is_in(ECTOPIC)).head(FAMILIES_SHOWN)
     return recording | {
         "page": addresses.recording_page(recording["recording_id"]),
+        "reviewed": next(tables.of_recording("reviewed", recording["recording_id"]).iter_rows(named=True), None),
         "families": draw_families(ectopic),
         "families_count": families.height,
     }

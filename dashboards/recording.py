@@ -27,6 +27,7 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
     return {
         "recording": recording,
         "patient_page": addresses.patient_page(recording["patient_code"]) if recording["patient_code"] else None,
+        "reviewed": next(tables.of_recording("reviewed", recording_id).iter_rows(named=True), None),
         "review_page": addresses.review_page(recording_id),
         "findings": _findings(recording, tables.of_recording("findings", recording_id)),
         "segments": tables.of_recording("segments", recording_id).sort("segment").rows(named=True),

