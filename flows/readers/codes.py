@@ -35,7 +35,6 @@ REFUSALS = {
     "unit_unknown": "the unit of the amplitude is not a voltage",
     "amplitude_not_plausible": "the amplitude scale cannot be that of an ECG",
     "start_time_unknown": "neither file nor register says when the recording began",
-    "zone_unknown": "the time zone named in the file does not exist",
     "local_time_ambiguous": "the local start happened twice or never at a clock change",
     "time_runs_backwards": "a later piece of the file is stamped before the end of an earlier one",
     "no_time_in_record": "a piece of a discontinuous file has no time",
@@ -44,6 +43,7 @@ REFUSALS = {
     "same_start_other_patient": "the file names another patient than the register's wear",
     "does_not_fit_recording": "rate, lead or scale differ from the other parts of the same wear",
     "file_name_points_outside": "a file name inside the delivery leads out of it",
+    "samples_cut_short": "the file ended or broke while its samples were read",
     "part_missing": "a file that the header names is not there",
     "sample_coding_not_supported": "the coding of the samples is not read here",
     "text_layout_unclear": "columns, numbers or times of the text cannot be told without a site layout",
@@ -75,7 +75,6 @@ FINDINGS = {
     "clock_not_changed": "the device clock did not follow a clock change; times come from the neighbour part",
     "overlap_trimmed": "samples that another part holds too were taken once",
     "resolution_reduced": "samples wider than 16 bit were stored in coarser steps",
-    "samples_clipped": "samples beyond the stored range were held at its end",
     "missing_samples": "the file marks samples as missing",
     "start_from_register": "the file has no start; the register's was used",
     "device_from_file_name": "the file has no device serial; its name was used",
@@ -83,7 +82,6 @@ FINDINGS = {
     "channel_chosen_by_unit": "no channel is called ECG; the only voltage was taken",
     "scale_from_site": "the amplitude scale is the settings', not the file's",
     "zone_from_site": "the device clock's zone is the settings', not the file's",
-    "annotations_ignored": "annotations of the file set were not taken",
 }
 
 

@@ -205,6 +205,6 @@ class _Samples:
         with self._path.open("rb", buffering=0) as file:
             file.seek(self._offset + a * self._n_channels * self._dtype.itemsize)
             if b > a and file.readinto(frames.data.cast("B")) != frames.nbytes:
-                raise Refused("file_cut_short", "DICOM: the file became shorter while it was read.")
+                raise Refused("samples_cut_short", "DICOM: the file became shorter while it was read.")
         counts = np.ascontiguousarray(frames[:, self._number])
         return counts.astype(np.int16) if self._dtype.itemsize == 1 else counts

@@ -377,7 +377,7 @@ def _read_records(file: FileIO, header: Header, first: int, count: int) -> NDArr
     file.seek(header.header_bytes + first * header.record_bytes)
     got = file.readinto(buffer.data)
     if got != buffer.size:
-        raise Refused("file_cut_short", f"data: record {first + 1} is no longer whole. Deliver the file again.")
+        raise Refused("samples_cut_short", f"data: record {first + 1} is no longer whole. Deliver the file again.")
     return buffer.reshape(count, header.record_bytes)
 
 

@@ -152,6 +152,6 @@ class _Samples:
                 frames = np.empty((last - first, self._n_leads), "<i2")
                 file.seek(self._at + first * self._n_leads * 2)
                 if file.readinto(frames.data.cast("B")) != frames.nbytes:
-                    raise Refused("file_cut_short", "data: the file became shorter while it was read.")
+                    raise Refused("samples_cut_short", "data: the file became shorter while it was read.")
                 samples[first - a : last - a] = frames[:, self._lead]
         return samples

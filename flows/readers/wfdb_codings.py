@@ -55,7 +55,7 @@ class Coding:
             file.seek(byte_offset + first_group * self.group_bytes)
             got = file.readinto(buffer.data)
         if self._samples_in(got) < b - first_group * self.group_samples:
-            raise Refused("file_cut_short", "signal file: it became shorter while it was read. Deliver it again.")
+            raise Refused("samples_cut_short", "signal file: it became shorter while it was read. Deliver it again.")
         counts = self.decode(buffer)
         return counts[a - first_group * self.group_samples : b - first_group * self.group_samples]
 

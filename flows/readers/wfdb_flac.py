@@ -63,7 +63,7 @@ class FlacCoding:
 
 
 def _damaged() -> Refused:
-    return Refused("file_cut_short", "signal file: its compressed samples are cut or damaged. Deliver it again.")
+    return Refused("samples_cut_short", "signal file: its compressed samples are cut or damaged. Deliver it again.")
 
 
 def _opened(path: Path, byte_offset: int) -> Any:
