@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from pathlib import Path
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
@@ -13,7 +13,7 @@ from detectors.analyse import analyse_recording
 from detectors.annotations import CLASSES, Annotations, beat_annotations, beat_classes, inside, sorted_out
 from detectors.results import Analysis, Segment
 from detectors.scoring import BeatScore, compare_beats
-from detectors.scoring_runs import RunScore, compare_runs
+from detectors.scoring_runs import compare_runs
 from flows.readers.identify import open_delivery
 from flows.readers.recording import NO_SITE, Opened, Site
 from flows.readers.wfdb import names_in_header
@@ -87,19 +87,13 @@ def score_record(record: Labelled, options: Options) -> RecordScore:
     test = beat_annotations(firsts[beats.segment] + beats.sample, beats.beat_class)
     bad = np.stack([firsts[quality.segment] + s for s in (quality.first_sample, quality.last_sample)], axis=1)
 
-    def beat_score(left_out: NDArray[np.int64] | None) -> BeatScore:
-        return compare_beats(
-            labels, test, fs_hz=float(opened.rate), n_samples=n_samples, learning_s=options.learning_s,
-            escape_as=options.escape_as, left_out=left_out,
-        )  # fmt: skip
-
-    def run_score(ectopy: str) -> RunScore:
-        return compare_runs(
-            labels, test, fs_hz=float(opened.rate), n_samples=n_samples, learning_s=options.learning_s,
-            escape_as=options.escape_as, ectopy=ectopy,
-        )  # fmt: skip
-
-    everything = beat_score(None)
+    how: dict[str, Any] = {
+        "fs_hz": float(opened.rate),
+        "n_samples": n_samples,
+        "learning_s": options.learning_s,
+        "escape_as": options.escape_as,
+    }
+    everything = compare_beats(labels, test, **how)
     truth = sorted_out(labels, n_samples, options.escape_as)
     # experts label no single beats within ventricular flutter or fibrillation, so nothing there can be compared
     comparable = beats.is_analysable & ~inside(test.sample, truth.fibrillation)
@@ -108,8 +102,8 @@ def score_record(record: Labelled, options: Options) -> RecordScore:
         lead=opened.lead,
         has_af=record.has_af,
         beats=everything,
-        beats_analysable=beat_score(bad),
-        runs={ectopy: run_score(ectopy) for ectopy in "VS"},
+        beats_analysable=compare_beats(labels, test, left_out=bad, **how),
+        runs={ectopy: compare_runs(labels, test, ectopy=ectopy, **how) for ectopy in "VS"},
         found_v_burden_pct=_v_burden_pct(test.symbol[comparable] == "V"),
         true_v_burden_pct=_v_burden_pct(truth.beat_class == _V),
         analysable_share_pct=100.0 * analysis.analysable_s * float(opened.rate) / opened.n_samples,
