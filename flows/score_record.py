@@ -60,7 +60,7 @@ def open_signal(header: Path, channel: int) -> Opened:
         return open_delivery(files, NO_SITE)
     if channel >= len(signals):
         raise ScoreError(f"channel {channel} was asked for; the record has {len(signals)}, counted from 0")
-    return open_delivery(files, Site(ecg_channel=signals[channel].label))
+    return open_delivery(files, Site(ecg_channel=f"#{channel + 1}"))
 
 
 def _analyse(opened: Opened) -> Analysis:
