@@ -14,7 +14,10 @@ from flows.verbs.verb import Verb, folder_argument, json_option
 def _sql_arguments(parser: argparse.ArgumentParser) -> None:
     folder_argument(parser)
     parser.add_argument(
-        "query", metavar="QUERY", help="one SQL query over the published tables, or - to read it from standard input"
+        "query",
+        metavar="QUERY",
+        nargs="?",
+        help="one SQL query over the published tables, - to read it from standard input, nothing for a prompt",
     )
     form = parser.add_mutually_exclusive_group()
     form.add_argument("--csv", action="store_true", help="print comma-separated values")
@@ -26,10 +29,14 @@ def _sql(asked: argparse.Namespace) -> int:
     from flows.answers import print_answer
     from warehouse.published import Published
 
+    published = Published(asked.folder / "published")
+    if asked.query is None:
+        from flows.prompt import ask
+
+        ask(published)
+        return 0
     query = sys.stdin.read() if asked.query == "-" else asked.query
-    print_answer(
-        Published(asked.folder / "published").frame(query), as_csv=asked.csv, as_json=asked.json, parquet=asked.parquet
-    )
+    print_answer(published.frame(query), as_csv=asked.csv, as_json=asked.json, parquet=asked.parquet)
     return 0
 
 

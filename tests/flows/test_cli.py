@@ -1,3 +1,4 @@
+import io
 import json
 import subprocess
 import sys
@@ -100,6 +101,30 @@ def test_sql_answers_in_the_form_that_was_asked(capsys, coast, tmp_path):
     assert out.splitlines()[-1] == "1 row"
     told(capsys, "sql", coast, query, "--parquet", tmp_path / "days.parquet")
     assert pl.read_parquet(tmp_path / "days.parquet")["all_beats"].to_list() == [row["all_beats"]]
+
+
+def test_sql_reads_standard_input(capsys, coast, monkeypatch):
+    """With - the query comes from standard input."""
+    monkeypatch.setattr("sys.stdin", io.StringIO("select count(*) as days\nfrom wear_days"))
+    code, out, _ = told(capsys, "sql", coast, "-", "--json")
+    assert (code, json.loads(out)) == (0, [{"days": 1}])
+
+
+def test_the_prompt_answers_query_after_query(capsys, coast, monkeypatch):
+    """Without a query a prompt answers each one that ends with a semicolon; a wrong one does not end it."""
+    lines = iter(["select nothing from nowhere;", "select count(*) as days", "from wear_days;"])
+
+    def read_line(_):
+        try:
+            return next(lines)
+        except StopIteration:
+            raise EOFError from None
+
+    monkeypatch.setattr("builtins.input", read_line)
+    code, out, err = told(capsys, "sql", coast)
+    assert code == 0
+    assert "days" in out
+    assert "nowhere" in err
 
 
 def test_status_tells_people_and_programs(capsys, coast):
