@@ -7,7 +7,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import qrs, rhythm
+from detectors import confidence, qrs, rhythm
 from detectors.classify import S_EARLY, Labels, Timing
 from detectors.families import FamilyBook, Membership
 from detectors.results import Beats, Families
@@ -64,6 +64,7 @@ def beat_table(
 ) -> Beats:
     """The table of beats that analysis returns."""
     is_ectopic = (labels.beat_class == "V") | (labels.beat_class == "S")
+    timing = timing._replace(usual_ms=rhythm.usual_rr_outside_ms(timing.before_ms, timing.after_ms, is_ectopic))
     is_premature = is_ectopic & (timing.before < S_EARLY)
     coupling = np.where(is_premature, timing.before_ms, np.float32(np.nan)).astype(np.float32)
     widths = np.append(family_width_ms, np.float32(0))
@@ -73,7 +74,7 @@ def beat_table(
         rr_before_ms=timing.before_ms,
         rr_after_ms=timing.after_ms,
         beat_class=labels.beat_class,
-        class_probability=(1 / (1 + np.exp(-np.abs(labels.odds)))).astype(np.float32),
+        class_probability=confidence.probability(labels.beat_class, labels.odds, timing.before),
         family=found.family,
         qrs_width_ms=np.where(found.family >= 0, widths[found.family], found.spread_ms).astype(np.float32),
         amplitude_mv=found.amplitude_mv,

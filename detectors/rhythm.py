@@ -41,9 +41,30 @@ def usual_rr_ms(before_ms: NDArray[np.float32], after_ms: NDArray[np.float32]) -
     sinus cycle in bigeminy with full pauses, where the median interval does not. Computed at every fourth beat and
     interpolated: rhythm changes more slowly than that.
     """
+    return _usual(before_ms, after_ms, np.zeros(before_ms.size, dtype=bool))
+
+
+def usual_rr_outside_ms(
+    before_ms: NDArray[np.float32], after_ms: NDArray[np.float32], is_ectopic: NDArray[np.bool_]
+) -> NDArray[np.float32]:
+    """The same, with ectopic runs of three or more left out: what a beat is early against is not the run it begins."""
+    around = np.concatenate([[False, False], is_ectopic, [False, False]])
+    middle = around[1:-3] & around[2:-2] & around[3:-1]
+    in_run = (
+        np.convolve(middle, np.ones(5), mode="same") > 0 if middle.any() else middle
+    )  # its beats and one on each side
+    return _usual(before_ms, after_ms, in_run)
+
+
+def _usual(
+    before_ms: NDArray[np.float32], after_ms: NDArray[np.float32], is_left_out: NDArray[np.bool_]
+) -> NDArray[np.float32]:
     if before_ms.size == 0:
         return before_ms
-    coarse = _median_of_known((before_ms + after_ms) / 2)
+    rr_ms = (before_ms + after_ms) / 2
+    if not is_left_out.all():
+        rr_ms[is_left_out] = np.nan
+    coarse = _median_of_known(rr_ms)
     is_known = ~np.isnan(coarse)
     if not is_known.any():
         return np.full(before_ms.size, 800.0, dtype=np.float32)
