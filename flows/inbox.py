@@ -1,29 +1,26 @@
-"""The inbox: which deliveries lie there, which files belong together, and where refused ones go.
+"""The inbox: which deliveries lie there, which files belong together, and which are not to be touched yet.
 
-Nothing is opened further than its first bytes here. Files are only moved after the ledger says why, so that a run that
-is killed in between is finished by the next one.
+Nothing is opened further than its first bytes here, and nothing is moved.
 """
 
 from __future__ import annotations
 
+import hashlib
 import json
 import os
 import stat
-import zipfile
 from collections.abc import Collection, Iterator, Sequence
 from dataclasses import dataclass
 from datetime import UTC, datetime
-from pathlib import Path, PurePosixPath
+from pathlib import Path
 from typing import NamedTuple
 
-from flows.privacy import shown_name
 from flows.readers import wfdb
 from flows.readers.codes import Declined, Refused, Waits
 from flows.readers.identify import head_of, reader_of
 from flows.settings import InboxSettings
 from warehouse.parts import write_whole
 
-REASON_SUFFIX = ".reason.txt"
 _LARGEST_HEADER_BYTES = 2**20
 
 
@@ -99,7 +96,7 @@ def _grouped(inbox: Path, plain: Sequence[Path]) -> Iterator[Candidate]:
 
 
 def _candidate(inbox: Path, files: Sequence[Path], companions: Sequence[Path], problem: Declined | None) -> Candidate:
-    there = [path.stat() for path in files if path.exists()]
+    there = [found for path in files if (found := _stat(path))]
     return Candidate(
         files[0].relative_to(inbox).as_posix(),
         tuple(files),
@@ -108,6 +105,13 @@ def _candidate(inbox: Path, files: Sequence[Path], companions: Sequence[Path], p
         max((found.st_mtime_ns for found in there), default=0),
         problem,
     )
+
+
+def _stat(path: Path) -> os.stat_result | None:
+    try:
+        return path.stat()
+    except OSError:
+        return None
 
 
 def _is_header(path: Path) -> bool:
@@ -148,10 +152,26 @@ def _missing_sentence(missing: int) -> str:
     return f"the header names {missing} files that are not beside it; expected all of them. Deliver them as well."
 
 
+def files_with_header(header: Path) -> list[Path]:
+    """A WFDB header with its files and companions; the file alone when it is no header."""
+    if header.is_symlink() or not _is_header(header):
+        return [header]
+    files, _ = _file_set(header)
+    plain = [path for path in header.parent.iterdir() if path.is_file() and path.suffix != ".txt"]
+    return [*files, *_companions(header, plain, files)]
+
+
 def _companions(header: Path, plain: Sequence[Path], claimed: Collection[Path]) -> list[Path]:
     """Files of the header's name that no reader opens, annotations for instance."""
     same = (p for p in plain if p.parent == header.parent and p.stem == header.stem and p not in claimed)
-    return [path for path in same if reader_of(head_of(path)) is None]
+    return [path for path in same if not _is_recording(path)]
+
+
+def _is_recording(path: Path) -> bool:
+    try:
+        return reader_of(head_of(path)) is not None
+    except OSError:
+        return True  # not readable now, so not to be moved with another
 
 
 def _orphan(path: Path) -> Declined | None:
@@ -196,11 +216,8 @@ def _checked(candidate: Candidate, settings: InboxSettings, now_s: float) -> Can
 
 def _changed_s(path: Path) -> float:
     """Last change of content or of the directory entry: a file copied in with its old date is new here."""
-    try:
-        found = path.stat()
-    except OSError:
-        return 0.0
-    return max(found.st_mtime, found.st_ctime)
+    found = _stat(path)
+    return max(found.st_mtime, found.st_ctime) if found else 0.0
 
 
 def _is_marked(path: Path, marker: str) -> bool:
@@ -231,15 +248,15 @@ class SeenFiles:
 
     def is_unchanged(self, name: str, size: int, mtime_ns: int) -> bool:
         """The file looked the same in an earlier run."""
-        return name in self._files and self._files[name][:2] == (size, mtime_ns)
+        return self._files.get(_key(name), Seen(0, 0, ""))[:2] == (size, mtime_ns)
 
     def hash_of(self, name: str, size: int, mtime_ns: int) -> str:
         """Hash of an unchanged file, else empty."""
-        return self._files[name].sha256 if self.is_unchanged(name, size, mtime_ns) else ""
+        return self._files[_key(name)].sha256 if self.is_unchanged(name, size, mtime_ns) else ""
 
     def note(self, name: str, size: int, mtime_ns: int, sha256: str) -> None:
         """Remember how a delivery looks now."""
-        self._now[name] = Seen(size, mtime_ns, sha256)
+        self._now[_key(name)] = Seen(size, mtime_ns, sha256)
 
     def save(self) -> None:
         """Write what was noted in this run; deliveries that are gone are forgotten."""
@@ -247,107 +264,6 @@ class SeenFiles:
             write_whole(self._path, json.dumps(self._now, sort_keys=True).encode())
 
 
-# Quarantine
-
-
-def quarantine(
-    folder: Path, candidate: Candidate, delivery_id: str, code: str, reason: str, codes: Collection[str]
-) -> str:
-    """Move a refused delivery out of the inbox with its reason beside it; returns its name there.
-
-    A file set whose names might name a person is moved as one zip archive, so that its members keep their names.
-    """
-    target = folder / "quarantine"
-    target.mkdir(exist_ok=True)
-    files = [path for path in (*candidate.files, *candidate.companions) if path.is_symlink() or path.exists()]
-    shown = shown_name(candidate.name, delivery_id, codes)
-    is_masked = shown != candidate.name
-    name = _free_name(target, PurePosixPath(shown).name, delivery_id)
-    if is_masked and len(files) > 1:
-        name = _free_name(target, f"delivery-{delivery_id[:8]}.zip", delivery_id)
-    write_whole(target / (name + REASON_SUFFIX), _reason_text(name, delivery_id, code, reason).encode())
-    if name.endswith(".zip") and len(files) > 1:
-        _zip_away(files, target / name)
-    else:
-        for path in files:
-            path.replace(target / (name if path == candidate.files[0] else path.name))
-    _remove_empty_folders(folder / "inbox", candidate.files[0].parent)
-    return name
-
-
-def remove(folder: Path, candidate: Candidate) -> None:
-    """Delete the files of a delivery that is in the lake."""
-    for path in (*candidate.files, *candidate.companions):
-        path.unlink(missing_ok=True)
-    _remove_empty_folders(folder / "inbox", candidate.files[0].parent)
-
-
-def _free_name(target: Path, name: str, delivery_id: str) -> str:
-    """The name, unless another delivery has it in quarantine."""
-    reason = target / (name + REASON_SUFFIX)
-    if reason.exists() and f"delivery: {delivery_id}" not in reason.read_text(encoding="utf-8"):
-        path = PurePosixPath(name)
-        return f"{path.stem}-{delivery_id[:8]}{path.suffix}"
-    return name
-
-
-def _reason_text(name: str, delivery_id: str, code: str, reason: str) -> str:
-    return (
-        f"{code}\n{reason}\n\ndelivery: {delivery_id}\n"
-        f"After a fix of settings or register: burdenline retry DIR {name}\n"
-    )
-
-
-def _zip_away(files: Sequence[Path], target: Path) -> None:
-    beside = target.with_name(f".writing-{target.name}")
-    with zipfile.ZipFile(beside, "w", zipfile.ZIP_DEFLATED) as archive:
-        for path in files:
-            archive.write(path, path.name)
-    beside.replace(target)
-    for path in files:
-        path.unlink()
-
-
-def _remove_empty_folders(inbox: Path, folder: Path) -> None:
-    while folder != inbox and inbox in folder.parents and not any(folder.iterdir()):
-        folder.rmdir()
-        folder = folder.parent
-
-
-def retry(folder: Path, name: str) -> None:
-    """Put a quarantined delivery back into the inbox and let the ledger forget it, so that the next run tries again.
-
-    Raises FileNotFoundError where the quarantine has no such file.
-    """
-    from flows.deliveries import Deliveries
-    from warehouse.ledger import Ledger
-
-    source = folder / "quarantine" / name
-    if PurePosixPath(name).name != name or name.endswith(REASON_SUFFIX) or not (source.is_symlink() or source.exists()):
-        raise FileNotFoundError(2, "is not a file of the quarantine folder; expected one of its names", str(source))
-    reason = source.with_name(name + REASON_SUFFIX)
-    deliveries = Deliveries(folder / "lake", ledger := Ledger(folder / "lake"))
-    for delivery_id in _deliveries_in(reason):
-        if delivery_id in deliveries.rows:
-            deliveries.drop(delivery_id)
-    if loads := deliveries.loads():
-        ledger.commit(loads, note="retry")
-    for path in _with_set(source):
-        path.replace(folder / "inbox" / path.name)
-    reason.unlink(missing_ok=True)
-
-
-def _deliveries_in(reason: Path) -> list[str]:
-    if not reason.exists():
-        return []
-    lines = reason.read_text(encoding="utf-8").splitlines()
-    return [line.removeprefix("delivery: ") for line in lines if line.startswith("delivery: ")]
-
-
-def _with_set(source: Path) -> list[Path]:
-    """The file, and for a WFDB header its files and companions."""
-    if source.is_symlink() or not _is_header(source):
-        return [source]
-    files, _ = _file_set(source)
-    plain = [p for p in source.parent.iterdir() if p.is_file() and not p.name.endswith(REASON_SUFFIX)]
-    return [*files, *_companions(source, plain, files)]
+def _key(name: str) -> str:
+    """Names may name persons and are not kept."""
+    return hashlib.sha256(name.encode("utf-8", "surrogateescape")).hexdigest()[:16]

@@ -8,30 +8,34 @@ from __future__ import annotations
 
 import contextlib
 import hashlib
+import shutil
 import tempfile
 import time
-from collections.abc import Callable
-from dataclasses import dataclass, replace
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass
 from datetime import datetime
 from pathlib import Path
 from typing import Any
 
 from flows import inbox as door
 from flows import reviews
-from flows.assembly import Match, match
+from flows.assembly import Match
 from flows.deliveries import ACCEPTED, QUARANTINED, SKIPPED, WAITING, Deliveries, Loads, Pieces
 from flows.inbox import Candidate, SeenFiles
 from flows.landing import Identity, Landed, land
-from flows.privacy import shown_name, shown_serial, without_words
+from flows.privacy import shown_name, shown_serial
+from flows.quarantine import quarantine, remove
 from flows.readers.archive import Limits, is_archive
 from flows.readers.codes import Declined, Refused, Waits
 from flows.readers.identify import head_of, open_delivery
-from flows.readers.recording import Finding, Opened, Site, finding
+from flows.readers.recording import Opened, Site
 from flows.recordings import Recordings
 from flows.register import Register
 from flows.settings import Settings
 from flows.staging import content_hash, hash_file, staged
+from flows.wearing import Wearing, wearing_of
 from warehouse.ledger import Ledger
+from warehouse.parts import PartError
 
 _BATCH_SAMPLES = 50_000_000
 _BATCH_DELIVERIES = 500
@@ -92,6 +96,7 @@ class _Run:
 
     def all(self) -> Arrivals:
         """Every candidate, then the recordings, then the moves that the ledger has decided."""
+        shutil.rmtree(self._lake / "staging", ignore_errors=True)  # of a run that was killed
         candidates = door.look(self._folder / "inbox", self._settings.inbox, time.time())
         later = [candidate for candidate in candidates if not self._take(candidate, may_postpone=True)]
         self._commit()
@@ -152,7 +157,7 @@ class _Run:
         """Open a delivery that waited before where it lies, to spare copying it again while it must wait on."""
         with contextlib.suppress(OSError):
             if not is_archive(head_of(candidate.files[0])):
-                self._matched(candidate, open_delivery(candidate.files, self._site))
+                self._wearing(candidate, open_delivery(candidate.files, self._site))
 
     def _accept(
         self, candidate: Candidate, delivery_id: str, sha256: str, files: tuple[Path, ...], may_postpone: bool
@@ -162,11 +167,13 @@ class _Run:
             self._accept_decisions(candidate, delivery_id, sha256, files[0])
             return
         scratch = self._lake / "staging" / "now" / "unpacked"
-        opened = open_delivery(files, self._site, scratch=scratch, limits=self._limits)
-        opened, serial, matched, file_zone = self._matched(candidate, opened)
+        with _faults_declined():
+            opened = open_delivery(files, self._site, scratch=scratch, limits=self._limits)
+        opened, serial, matched, file_zone = self._wearing(candidate, opened)
         if may_postpone and len(matched.possible_starts) > 1:
             raise _Later
-        landed = land(self._lake, opened, Identity(delivery_id, serial, file_zone))
+        with _faults_declined():
+            landed = land(self._lake, opened, Identity(delivery_id, serial, file_zone))
         self._refuse_known_samples(landed, opened, matched)
         row = self._row(candidate, delivery_id, sha256) | {
             "status": ACCEPTED,
@@ -192,28 +199,10 @@ class _Run:
         self._deliveries.put(row)
         self._tell(self._deliveries.rows[delivery_id])
 
-    def _matched(self, candidate: Candidate, opened: Opened) -> tuple[Opened, str, Match, str | None]:
-        """Wear and time of an opened delivery; raises Refused or Waits with what is missing."""
+    def _wearing(self, candidate: Candidate, opened: Opened) -> Wearing:
         self._wait_while_open(candidate, opened)
-        serial, found = self._device(candidate, opened)
-        file_zone = opened.zone or self._site.clock_zone or None
-        if file_zone and not opened.zone and opened.start_local is not None:
-            found.append(finding("zone_from_site", file_zone))
-        matched = match(self._register, serial, opened.start_local, file_zone) if serial else None
-        if matched is None or serial is None:
-            raise self._without_wear(serial, opened)
-        if matched.start_from_register:
-            found.append(finding("start_from_register"))
-        named = self._register.patient_among(opened.patient_words)
-        if named is not None and named != matched.wear.patient_code:
-            raise Refused(
-                "same_start_other_patient",
-                f"the file names patient {named}, register/wears.csv has {matched.wear.patient_code} for the wear "
-                f"{matched.wear.recording_id}; expected the same. Correct the register or the export, then retry.",
-            )
-        words = set(opened.patient_words) - {named}
-        marks = tuple(mark._replace(text=without_words(mark.text, words)) for mark in opened.marks)
-        return replace(opened, findings=(*opened.findings, *found), marks=marks), serial, matched, file_zone
+        stems = (candidate.files[0].stem, opened.file_stem)
+        return wearing_of(opened, stems, self._register, self._site.clock_zone)
 
     def _wait_while_open(self, candidate: Candidate, opened: Opened) -> None:
         """A file that says it is still being recorded is taken when two runs in a row found it unchanged."""
@@ -224,34 +213,6 @@ class _Run:
                 "the header leaves the number of records open, as it does while recording. "
                 "It is taken when the next run finds it unchanged.",
             )
-
-    def _device(self, candidate: Candidate, opened: Opened) -> tuple[str | None, list[Finding]]:
-        """Serial as the register writes it, from the file or else from its name."""
-        serial = self._register.device_among(opened.device_words)
-        if serial is not None or shown_serial(opened.device_words) != "not told":
-            return serial, []
-        serial = self._register.device_in(candidate.files[0].stem)
-        return serial, [finding("device_from_file_name")] if serial else []
-
-    def _without_wear(self, serial: str | None, opened: Opened) -> Declined:
-        if serial is None:
-            told = shown_serial(opened.device_words)
-            return Waits(
-                "wear_not_in_register",
-                f"device serial {told}: register/wears.csv does not have it; expected a row with this serial, patient "
-                "and time of wear. Add the row, then run again.",
-            )
-        if opened.start_local is None:
-            return Refused(
-                "start_time_unknown",
-                f"the file does not say when it began, and register/wears.csv has no single start_local for device "
-                f"{serial}. Enter start_local in the row of the wear, then retry.",
-            )
-        return Waits(
-            "wear_not_in_register",
-            f"device {serial} starts {opened.start_local:%Y-%m-%d %H:%M} local time, in none of its wears in "
-            "register/wears.csv; expected a row whose from_local and to_local hold it. Correct it, then run again.",
-        )
 
     # Bytes and samples that are there already
 
@@ -339,9 +300,24 @@ class _Run:
             if row is None:
                 continue
             if row["status"] == QUARANTINED:
-                door.quarantine(self._folder, candidate, delivery_id, row["code"], row["reason"], self._register.codes)
+                quarantine(self._folder, candidate, delivery_id, row["code"], row["reason"], self._register.codes)
             elif row["status"] in (ACCEPTED, SKIPPED) and self._settings.inbox.accepted_files == "remove":
-                door.remove(self._folder, candidate)
+                remove(self._folder, candidate)
+
+
+@contextlib.contextmanager
+def _faults_declined() -> Iterator[None]:
+    """A fault of a reader stops its own delivery only: the others of the night go on."""
+    try:
+        yield
+    except (Declined, OSError, PartError):
+        raise
+    except Exception as fault:
+        raise Refused(
+            "reader_failed",
+            f"the reader failed on it with {type(fault).__name__}; this is a fault of the program, not of the file. "
+            "Keep the file, report the fault, and retry with a newer version.",
+        ) from fault
 
 
 def _start_local(opened: Opened, matched: Match) -> datetime | None:
@@ -349,7 +325,7 @@ def _start_local(opened: Opened, matched: Match) -> datetime | None:
 
 
 def _delivery_id(content_sha256: str, name: str) -> str:
-    return hashlib.sha256(f"{content_sha256}/{name}".encode()).hexdigest()[:16]
+    return hashlib.sha256(f"{content_sha256}/{name}".encode("utf-8", "surrogateescape")).hexdigest()[:16]
 
 
 def _hash_or_none(candidate: Candidate) -> str:

@@ -18,7 +18,7 @@ _NUMBER = re.compile(r"[a-z]?\d+(t\d+z?)?[a-z]?")
 
 
 def shown_name(name: str, delivery_id: str, codes: Collection[str]) -> str:
-    """The delivered name when it is made of codes and numbers only, else `delivery-` and the delivery's code."""
+    """The delivered name when it is made of codes and numbers only, else its longest code and the delivery's own."""
     path = PurePosixPath(name)
     kept = [suffix for suffix in path.suffixes if suffix.casefold() in _SUFFIXES]
     suffix = "".join(kept)
@@ -26,7 +26,14 @@ def shown_name(name: str, delivery_id: str, codes: Collection[str]) -> str:
     known = _words_of(frozenset(codes))
     if all(word in known or _NUMBER.fullmatch(word) for word in _words(stem)):
         return name
-    return f"delivery-{delivery_id[:8]}{suffix}"
+    return f"{_longest_code_in(stem, codes) or 'delivery'}-{delivery_id[:8]}{suffix}"
+
+
+def _longest_code_in(text: str, codes: Collection[str]) -> str | None:
+    """The longest code that stands in a text with no letter or digit around it and is safe as a file name."""
+    safe = (code for code in codes if re.fullmatch(r"[\w.+=-]+", code))
+    inside = [code for code in safe if re.search(rf"(?<![^\W_]){re.escape(code)}(?![^\W_])", text)]
+    return max(inside, key=lambda code: (len(code), code), default=None)
 
 
 def _words(text: str) -> list[str]:

@@ -52,6 +52,7 @@ REFUSALS = {
     "decisions_unreadable": "the file of over-read decisions is not as the over-read sheet saves it",
     "decisions_of_other_version": "the file of over-read decisions was saved by another version",
     "decisions_do_not_fit": "the over-read decisions do not fit the analysis that is in force here",
+    "reader_failed": "a reader failed in a way that is its own fault",
     "unsafe_xml": "the XML declares a document type or entities",
 }
 

@@ -6,6 +6,7 @@ A format is known by its bytes, never by its name. What no reader knows is named
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from pathlib import Path
 from types import ModuleType
 
@@ -67,7 +68,7 @@ def open_delivery(
     if reader is None:
         raise _unknown(head)
     opened: Opened = reader.open_delivery(files, site)
-    return opened
+    return replace(opened, file_stem=files[0].stem)
 
 
 def _is_known(head: bytes) -> bool:

@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Callable
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from datetime import datetime
 from fractions import Fraction
 from typing import NamedTuple
@@ -89,7 +89,8 @@ class Opened:
     findings: tuple[Finding, ...] = ()
     marks: tuple[Mark, ...] = ()
     end_offset_ns: int | None = None  # device clock at the end, from the start; None when the file has no end stamp
-    other_channels: tuple[str, ...] = field(default=())
+    other_channels: tuple[str, ...] = ()
+    file_stem: str = ""  # name of the opened file without suffix, which may stand inside an archive
 
     @property
     def n_samples(self) -> int:

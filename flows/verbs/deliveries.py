@@ -32,7 +32,7 @@ def _retry_arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def _retry(asked: argparse.Namespace) -> int:
-    from flows.inbox import retry
+    from flows.quarantine import retry
 
     retry(asked.folder, asked.file)
     print(f"{asked.file} is back in the inbox; next: burdenline run {asked.folder}")

@@ -6,8 +6,9 @@ from pathlib import Path
 
 import pytest
 
-from flows.inbox import look, retry
+from flows.inbox import look
 from flows.privacy import shown_name, without_words
+from flows.quarantine import retry
 from flows.settings import InboxSettings
 
 HEADER = "{0} 2 250 4\n{0}.dat 16 200 16 0 0 0 0 II\n{0}b.dat 16 200 16 0 0 0 0 V1\n"
@@ -187,7 +188,7 @@ def test_an_open_record_count_waits_until_two_runs_find_it_unchanged(programme, 
         ("SRL1001.EDF", "SRL1001.EDF"),
         ("2026/03/01T083000.edf", "2026/03/01T083000.edf"),
         ("Jane Doe.edf", "delivery-01234567.edf"),
-        ("SRL-1001_doe.edf", "delivery-01234567.edf"),
+        ("SRL-1001_doe.edf", "SRL-1001-01234567.edf"),
         ("doe/1.edf", "delivery-01234567.edf"),
         ("1.Doe", "delivery-01234567"),
         ("müller.csv.gz", "delivery-01234567.csv.gz"),

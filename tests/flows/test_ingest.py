@@ -225,7 +225,7 @@ def test_start_from_the_register(programme):
     assert programme.deliveries() == {"1001.hea": ("quarantined", "start_time_unknown")}
     assert {path.name for path in programme.quarantine.iterdir()} == {"1001.hea", "1001.dat", "1001.hea.reason.txt"}
     programme.register("P-0001,", "1001,P-0001,2026-02-28,,2026-03-01 10:00")
-    from flows.inbox import retry
+    from flows.quarantine import retry
 
     retry(programme.folder, "1001.hea")
     programme.run()
@@ -264,11 +264,7 @@ def test_nothing_of_the_person_is_kept(programme, make_edf):
         str(programme.said).encode(),
         repr(programme.rows("deliveries")).encode(),
     ]
-    texts += [
-        path.read_bytes()
-        for path in kept
-        if path.is_file() and path.suffix not in (".edf",) and path.name != "seen.json"
-    ]
+    texts += [path.read_bytes() for path in kept if path.is_file() and path.suffix not in (".edf",)]
     texts += [repr(programme.rows(table)).encode() for table in ("recordings", "pieces", "marks")]
     for word in (b"Gwendolyn", b"Featherstone", b"1951"):
         assert not [text[:80] for text in texts if word in text]
@@ -306,15 +302,15 @@ def test_killed_at_any_step_the_next_run_ends_the_same(make_programme, make_edf,
 
 def _die_at(patch, step, death):
     """Make the `death`-th call of a step end the run, as a kill would."""
-    from flows import deliveries, inbox, landing, recordings
+    from flows import deliveries, inbox, ingest, landing, quarantine, recordings
 
     homes = {
         "write_part": [(deliveries, "write_part"), (recordings, "write_part")],
         "write_signal": [(landing, "write_signal")],
         "commit": [(Ledger, "commit")],
-        "quarantine": [(inbox, "quarantine")],
+        "quarantine": [(ingest, "quarantine")],
         "save": [(inbox.SeenFiles, "save")],
-        "write_whole": [(inbox, "write_whole"), (recordings, "write_whole")],
+        "write_whole": [(inbox, "write_whole"), (quarantine, "write_whole"), (recordings, "write_whole")],
     }
     calls = {"left": death}
     for home, name in homes[step]:
