@@ -29,6 +29,7 @@ FELL, ROSE, WITHIN, TOO_LITTLE = "fell_beyond_chance", "rose_beyond_chance", "wi
 VERDICTS = (FELL, ROSE, WITHIN, TOO_LITTLE)
 NODE_STEP = 0.25
 GAMMA_NODES = np.arange(-7.0, 5.1, NODE_STEP)  # SDs of a log-gamma variable around its mean
+LEAST_VARIANCE = 1e-12
 LEAST_SHAPE = 0.05  # fewer beats than this count as this many
 LOG_TOLERANCE = 1e-7
 WIDEST_LOG = 34.0  # ln ratio beyond which nothing is searched
@@ -49,13 +50,17 @@ class Comparison(NamedTuple):
     day_sd: Floats  # SD of ln level between days
     variance_source: NDArray[np.str_]  # patient, programme or both
     days_to_settle: Floats  # more days after that would put the same ratio beyond chance; NaN settled or never
+    counting_share_pct: Floats  # of the variance of the log ratio: counting beats,
+    day_share_pct: Floats  # variation between days,
+    gap_share_pct: Floats  # time between the periods,
+    detection_share_pct: Floats  # and the error of the detector
     baseline_variance: Floats  # of ln baseline as an estimate of the patient's usual level
 
 
 class _Chance(NamedTuple):
     """ln of the beats that the after period would hold had nothing changed: a mixture of normals over s.
 
-    Arrays of shape (n_events, n_grid).
+    Arrays of shape (n_events, n_grid). The counting noise of the after period is not in them.
     """
 
     centre: Floats
@@ -63,48 +68,68 @@ class _Chance(NamedTuple):
     weight: Floats
 
 
+class _Variances(NamedTuple):
+    """Variances of the log ratio by where they come from, shape (n_events, n_grid)."""
+
+    counting_before: Floats
+    days: Floats
+    gap: Floats
+    detection: Floats
+
+
 def compare(
-    days: Periods, n_events: int, *, excess: Floats, typical_sd: float, success_limit_pct: float, min_days: int = 1
+    days: Periods,
+    n_events: int,
+    *,
+    excess: Floats,
+    typical_sd: float,
+    success_limit_pct: float,
+    detection_variance: float = 0.0,
+    min_days: int = 1,
 ) -> Comparison:
     """Compare period 2 i (baseline) with period 2 i + 1 (after) for every event i.
 
     `excess`, shape (n_events,), is the variance that the time between the periods adds, as a multiple of the variance
     between days (`variability.excess_of_gap`; 0 to ignore it). `typical_sd` is the usual SD of ln level between days
-    where the programme knows nothing yet. Periods with fewer than `min_days` days give too_little_wear.
+    where the programme knows nothing yet. `detection_variance` is what the error of the detector adds to the log ratio.
+    Periods with fewer than `min_days` days give too_little_wear.
     """
     grid = GRID * typical_sd
     level = levels(days, 2 * n_events, grid)
     weight = spread_weights(level.fit[0::2] + level.fit[1::2], grid, typical_sd)
+    variances = _variances(level, grid, excess, detection_variance)
+    chance = _if_nothing_changed(level, weight, variances)
     value, beats, per_beat = _typical_day(level, np.repeat(weight, 2, axis=0))
     baseline, after, observed = value[0::2], value[1::2], beats[1::2]
-    chance = _if_nothing_changed(level, weight, grid, excess, observed)
     least, most = _chance_limits(chance)
     low, high = _interval(chance, observed)
-    per_baseline = _divide(per_beat[1::2], baseline)
     success = 1 - _at_most(chance, observed + 0.5, np.full(n_events, np.log1p(-success_limit_pct / 100)))
-    day_sd = np.exp(weight @ np.log(grid))
     fewer_days = np.minimum(level.days[0::2], level.days[1::2])
-    verdict = np.select(
-        [fewer_days < max(min_days, 1), observed < least, observed > most], [TOO_LITTLE, FELL, ROSE], WITHIN
-    )
-    unknown = np.where(fewer_days > 0, 0.0, np.nan)
-    unscaled = np.where(baseline > 0, unknown, np.nan)
+    is_short = fewer_days < max(min_days, 1)
+    verdict = np.select([is_short, observed < least, observed > most], [TOO_LITTLE, FELL, ROSE], WITHIN)
+    per_baseline = _divide(per_beat[1::2], np.where(fewer_days > 0, baseline, np.nan))
+    known = per_baseline * 0  # NaN where there is no ratio
+    day_sd = np.exp(weight @ np.log(grid))
+    missing = _days_to_settle(chance, level, weight, _log(after) - _log(baseline))
+    counting, between, gap, detection = _shares_pct(variances, weight, observed)
     return Comparison(
         baseline=baseline,
         after=after,
-        ratio=observed * per_baseline + unscaled,
-        ratio_low=low + unscaled,
-        ratio_high=high + unscaled,
-        chance_fall_limit_pct=100 - 100 * least * per_baseline + unscaled,
-        chance_rise_limit_pct=100 * most * per_baseline - 100 + unscaled,
-        success_probability_pct=100 * success + unscaled,
+        ratio=observed * per_baseline,
+        ratio_low=low + known,
+        ratio_high=high + known,
+        chance_fall_limit_pct=100 - 100 * least * per_baseline,
+        chance_rise_limit_pct=100 * most * per_baseline - 100,
+        success_probability_pct=100 * success + known,
         verdict=verdict,
         day_sd=day_sd,
         variance_source=_variance_source(level, day_sd),
-        days_to_settle=np.where(
-            verdict == WITHIN, _days_to_settle(chance, level, weight, _log(after) - _log(baseline)), np.nan
-        ),
-        baseline_variance=(weight * (level.variance[0::2] + grid**2 * np.asarray(excess)[:, None] / 2)).sum(1),
+        counting_share_pct=counting + known,
+        day_share_pct=between + known,
+        gap_share_pct=gap + known,
+        detection_share_pct=detection + known,
+        days_to_settle=np.where(verdict == WITHIN, missing, np.nan),
+        baseline_variance=(weight * (level.variance[0::2] + variances.gap / 2)).sum(axis=1),
     )
 
 
@@ -127,12 +152,23 @@ def _typical_day(level: Levels, weight: Floats) -> tuple[Floats, Floats, Floats]
     return np.where(level.days > 0, beats * per_beat, np.nan), beats, per_beat
 
 
-def _if_nothing_changed(level: Levels, weight: Floats, grid: Floats, excess: Floats, observed: Floats) -> _Chance:
-    before, after = (Levels._make(column[side::2] for column in level) for side in (0, 1))
-    exposure = np.where(after.exposure > 0, after.exposure, 1.0)
-    centre = np.log(exposure)[:, None] + before.log_level + after.total_shift
-    drift = grid**2 * np.asarray(excess)[:, None]
-    return _Chance(centre, np.sqrt(before.variance + after.day_variance + drift), weight)
+def _variances(level: Levels, grid: Floats, excess: Floats, detection: float) -> _Variances:
+    before, after = level.day_variance[0::2], level.day_variance[1::2]
+    counting = level.variance[0::2] - before
+    gap = grid**2 * np.asarray(excess, dtype=float)[:, None]
+    return _Variances(counting, before + after, gap, np.full_like(gap, detection))
+
+
+def _if_nothing_changed(level: Levels, weight: Floats, variances: _Variances) -> _Chance:
+    exposure = np.where(level.exposure[1::2] > 0, level.exposure[1::2], 1.0)
+    centre = np.log(exposure)[:, None] + level.log_level[0::2] + level.total_shift[1::2]
+    return _Chance(centre, np.sqrt(np.maximum(sum(variances), LEAST_VARIANCE)), weight)
+
+
+def _shares_pct(variances: _Variances, weight: Floats, observed: Floats) -> list[Floats]:
+    counting, days, gap, detection = ((weight * part).sum(axis=1) for part in variances)
+    parts = counting + polygamma(1, observed + 0.5), days, gap, detection
+    return [100 * part / sum(parts) for part in parts]
 
 
 def _at_most(chance: _Chance, shape: Floats, log_ratio: Floats) -> Floats:

@@ -18,6 +18,7 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.int64]
 Flags = NDArray[np.bool_]
 
+LEAST_WEIGHT = 1e-12  # of a period without days
 RICH_BEATS_PER_DAY = 12.0  # independent beats per day from which the logarithm of a day is nearly normal
 GRID = np.geomspace(1 / 16, 5, 32)  # of s, relative to the typical value of the measure
 PRIOR_MEDIANS = np.geomspace(0.25, 4.0, 13)  # candidates for the programme's median s, relative to the typical value
@@ -90,11 +91,11 @@ def _by_logarithms(period: Ints, beats: Floats, exposure: Floats, n_periods: int
     log_level, variance, fit = (np.zeros((n_periods, len(grid))) for _ in range(3))
     for k, s in enumerate(grid):
         weight = 1 / (s**2 + noise)
-        of_all = np.maximum(_sums(period, weight, n_periods), np.finfo(float).tiny)
+        of_all = np.maximum(_sums(period, weight, n_periods), LEAST_WEIGHT)
         mean = _sums(period, weight * log_day, n_periods) / of_all
         misfit = _sums(period, weight * (log_day - mean[period]) ** 2 - np.log(weight), n_periods)
         log_level[:, k], variance[:, k], fit[:, k] = mean, 1 / of_all, -0.5 * (misfit + np.log(of_all))
-    counting = 1 / np.maximum(_sums(period, 1 / noise, n_periods), np.finfo(float).tiny)
+    counting = 1 / np.maximum(_sums(period, 1 / noise, n_periods), LEAST_WEIGHT)
     return log_level, variance, np.maximum(variance - counting[:, None], 0.0), fit
 
 

@@ -12,7 +12,7 @@ from detectors import change as statistics
 from detectors.shifts import shifts
 from detectors.spread import Periods, shown_share
 from detectors.variability import excess_of_gap
-from flows.measures import Measure, MeasuredDays
+from flows.measures import HEART_RATE, Measure, MeasuredDays
 from flows.settings import ChangeSettings, WearSettings
 
 EPOCH = date(1970, 1, 1)
@@ -45,6 +45,7 @@ def compared(
         Periods(2 * days.event + days.is_after, days.counts, days.exposure, days.dispersion),
         n_events,
         excess=gap_excess(measure, days, n_events, change.gap_drift_share),
+        detection_variance=0.0 if measure is HEART_RATE else 2 * change.detection_sd_ln**2,
         typical_sd=measure.day_sd,
         success_limit_pct=change.success_limit_pct,
         min_days=wear.min_days_per_period,

@@ -41,6 +41,9 @@ MEASURES = (
     Measure("s_burden_pct", _S, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "supraventricular burden"),
     HEART_RATE,
     Measure("couplets_per_24h", pl.col("couplets"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "couplets per 24 h"),
+    Measure(
+        "bigeminy_pct", pl.col("bigeminy_s"), pl.col("analysable_s"), 100, ECTOPY_DAY_SD, REPETITIVE_FORMS, "bigeminy"
+    ),
     Measure("runs_per_24h", pl.col("runs"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "runs per 24 h"),
 )
 

@@ -22,6 +22,10 @@ from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
 
 SIDES = ("baseline", "after")
+AS_COMPARED = (
+    "ratio", "ratio_low", "ratio_high", "chance_fall_limit_pct", "chance_rise_limit_pct", "variance_source", "verdict",
+    "days_to_settle", "counting_share_pct", "day_share_pct", "gap_share_pct", "detection_share_pct",
+)  # fmt: skip
 
 
 def tables(
@@ -103,9 +107,7 @@ def _compare(
         np.log(np.where(found.baseline > 0, found.baseline, np.nan)), found.baseline_variance
     )
     success = np.where(is_ectopy & (found.verdict != TOO_LITTLE), found.success_probability_pct, np.nan)
-    same = ("ratio", "ratio_low", "ratio_high", "chance_fall_limit_pct", "chance_rise_limit_pct", "variance_source",
-            "verdict", "days_to_settle")  # fmt: skip
-    columns = {name: getattr(found, name) for name in same} | {
+    columns = {name: getattr(found, name) for name in AS_COMPARED} | {
         "measure": [measure.name] * n_events,
         "baseline_value": found.baseline * measure.per,
         "after_value": found.after * measure.per,

@@ -220,6 +220,10 @@ COLUMNS: dict[str, Column] = _dictionary(
         "%",
         "Probability that the true reduction exceeds the programme's success limit.",
     ),
+    ("counting_share_pct", "DOUBLE", "%", "Share of the variance of the log ratio that comes from counting beats."),
+    ("day_share_pct", "DOUBLE", "%", "Share that comes from variation between days."),
+    ("gap_share_pct", "DOUBLE", "%", "Share that comes from the time between the periods."),
+    ("detection_share_pct", "DOUBLE", "%", "Share that comes from the error of the detector."),
     ("variance_source", "VARCHAR", "", "Where the day-to-day variance came from: patient, programme or both."),
     (
         "day_sd_ln",
@@ -517,7 +521,7 @@ PUBLISHED: dict[str, Table] = _tables(
         "local_hours", "one row per patient, local day and clock hour with wear",
         ("patient_code", "local_day", "clock_hour"),
         ("patient_code", "local_day", "clock_hour", "worn_s", "analysable_s", *_COUNTS, "mean_rate_bpm", "couplets",
-         "runs", "v_burden_pct", "v_per_h"),
+         "runs", "bigeminy_s", "v_burden_pct", "v_per_h"),
     ),
     Table(
         "wear_days", "one row per patient and local calendar day with wear", ("patient_code", "local_day"),
@@ -540,6 +544,7 @@ PUBLISHED: dict[str, Table] = _tables(
          "baseline_analysable_h", "after_analysable_h", "baseline_clock_coverage_pct", "after_clock_coverage_pct",
          "baseline_rate_bpm", "after_rate_bpm", "ratio", "ratio_low", "ratio_high", "change_pct",
          "chance_fall_limit_pct", "chance_rise_limit_pct", "success_probability_pct", "day_sd_ln", "variance_source",
+         "counting_share_pct", "day_share_pct", "gap_share_pct", "detection_share_pct",
          "days_to_settle", "expected_regression_pct", "recurrence_day", "verdict", "reason"),
     ),
     Table(

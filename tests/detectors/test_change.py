@@ -125,6 +125,17 @@ def test_over_dispersed_counts_widen_the_interval():
     assert widths[1] / widths[0] == pytest.approx(4, rel=0.02)
 
 
+def test_the_variance_is_told_apart():
+    """Counting, days, gap and detection share the variance of the log ratio, each as theory has it."""
+    found = change.compare(
+        periods([([100.0], [100.0])]), 1, excess=np.array([3.0]), typical_sd=COUNTING_ONLY, success_limit_pct=80,
+        detection_variance=0.02,
+    )  # fmt: skip
+    # Source: variances of ln of two counts of 100 (2 / 100) beside 0.02 of detection
+    shares = found.counting_share_pct[0], found.day_share_pct[0], found.gap_share_pct[0], found.detection_share_pct[0]
+    assert shares == pytest.approx((50, 0, 0, 50), abs=0.5)
+
+
 levels_of_days = st.lists(st.integers(0, 5000), min_size=1, max_size=9)
 
 
@@ -141,6 +152,8 @@ def test_verdict_interval_and_limits_never_contradict(before, after, excess, uni
     assert (found.verdict[0] == change.FELL) == (100 * (1 - ratio) > found.chance_fall_limit_pct[0])
     assert (found.verdict[0] == change.ROSE) == (100 * (ratio - 1) > found.chance_rise_limit_pct[0])
     assert low <= ratio <= high or sum(after) < 6
+    shares = (found.counting_share_pct, found.day_share_pct, found.gap_share_pct, found.detection_share_pct)
+    assert sum(share[0] for share in shares) == pytest.approx(100)
     assert found.verdict[0] == change.FELL or high >= 1
     assert found.verdict[0] == change.ROSE or low <= 1
     assert other.ratio_high[0] == pytest.approx(high, rel=1e-4)

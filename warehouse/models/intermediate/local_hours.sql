@@ -15,6 +15,7 @@ SELECT
     60 * sum(rr_count) / nullif(sum(rr_sum_s), 0) AS mean_rate_bpm,
     sum(couplets) AS couplets,
     sum(runs) AS runs,
+    sum(bigeminy_s) AS bigeminy_s,
     100 * sum(v_beats) / nullif(sum(all_beats), 0) AS v_burden_pct,
     3600 * sum(v_beats) / nullif(sum(analysable_s), 0) AS v_per_h
 FROM patient_quarters
