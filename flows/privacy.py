@@ -14,6 +14,7 @@ _SUFFIXES = (
     ".edf", ".bdf", ".rec", ".hea", ".dat", ".atr", ".qrs", ".ecg", ".csv", ".tsv", ".txt", ".parquet", ".xml",
     ".dcm", ".zip", ".gz",
 )  # fmt: skip
+_PLAIN = re.compile(r"[\w ./+=@,()-]*")
 _NUMBER = re.compile(r"[a-z]?\d+(t\d+z?)?[a-z]?")
 
 
@@ -24,7 +25,7 @@ def shown_name(name: str, delivery_id: str, codes: Collection[str]) -> str:
     suffix = "".join(kept)
     stem = str(path)[: len(str(path)) - len(suffix)] if suffix and str(path).endswith(suffix) else str(path)
     known = _words_of(frozenset(codes))
-    if all(word in known or _NUMBER.fullmatch(word) for word in _words(stem)):
+    if _PLAIN.fullmatch(name) and all(word in known or _NUMBER.fullmatch(word) for word in _words(stem)):
         return name
     return f"{_longest_code_in(stem, codes) or 'delivery'}-{delivery_id[:8]}{suffix}"
 

@@ -61,7 +61,8 @@ def open_delivery(files: Sequence[Path], site: Site) -> Opened:
     first = described.header.signals[channel]
     rate = checked_rate(header.fs_hz * first.samples_per_frame, "header")
     mv_per_count, scale_findings = _scale(first, site)
-    readers = [piece.open(label, first) for piece in pieces]
+    rank = labels[:channel].count(label)
+    readers = [piece.open(label, rank, first) for piece in pieces]
     stretches, read = _joined(readers, header.fs_hz, first.samples_per_frame)
     coding = CODINGS[first.coding]
     lead = Wide(read, stretches, mv_per_count, float(first.baseline), _rails(first, coding), coding.missing)
@@ -103,16 +104,17 @@ class _Piece:
     folder: Path | None
     first_frame: int
 
-    def open(self, label: str, like: Signal) -> _PieceReader:
+    def open(self, label: str, rank: int, like: Signal) -> _PieceReader:
+        """Reader of the signal of this label, of several so called the one of this rank; it must be scaled alike."""
         named = [n for n, signal in enumerate(self.header.signals) if signal.label == label]
-        if self.folder is None or not named:
+        if self.folder is None or len(named) <= rank:
             return _PieceReader(self.first_frame, 0, lambda a, b: np.empty(0, np.int16), ())
-        signal = self.header.signals[named[0]]
+        signal = self.header.signals[named[rank]]
         if (signal.gain, signal.baseline, signal.samples_per_frame) != (
             like.gain, like.baseline, like.samples_per_frame,
         ):  # fmt: skip
             raise Refused("does_not_fit_recording", "header: the segments have different scales; expected one scale.")
-        return _signal_reader(self.header, named[0], self.folder, self.first_frame)
+        return _signal_reader(self.header, named[rank], self.folder, self.first_frame)
 
 
 @dataclass(frozen=True)

@@ -1,6 +1,7 @@
 """From inbox to lake: what is landed, joined, skipped, waited for and refused, and that it ends the same every way."""
 
 import json
+import os
 import subprocess
 import sys
 from pathlib import Path
@@ -392,3 +393,60 @@ def test_no_room_on_the_disk_is_waited_out(programme, make_edf, monkeypatch):
         programme.run()
     assert programme.deliveries() == {"SRL-1001.edf": ("waiting", "no_space_left")}
     assert programme.run().accepted == 1
+
+
+def test_a_fault_of_a_reader_stops_its_own_delivery_only(programme, make_edf, monkeypatch):
+    """An unexpected exception while one file is read quarantines it with a word; the others are taken."""
+    real = ingest_module.open_delivery
+
+    def faulty(files, *args, **kwargs):
+        if files[0].name == "1.edf":
+            raise KeyError("a fault of the program")
+        return real(files, *args, **kwargs)
+
+    monkeypatch.setattr(ingest_module, "open_delivery", faulty)
+    programme.deliver("1.edf", make_edf())
+    programme.deliver("SRL-1001.edf", make_edf(noise(15_000)), minute=1)
+    programme.run()
+    assert programme.deliveries() == {"1.edf": ("quarantined", "reader_failed"), "SRL-1001.edf": ("accepted", None)}
+
+
+def test_hostile_text_in_headers_is_only_text(programme, make_edf):
+    """SQL and HTML in header fields and file names change nothing and are not kept where they could act."""
+    evil = "'; DROP TABLE patients; --"
+    page = "<script>alert(1)</script>"
+    programme.deliver("<img src=x>.edf", make_edf(patient=evil, recording=f"Startdate 01-MAR-2026 X {page} SRL-1001"))
+    programme.deliver("2.edf", make_edf(noise(15_000), recording=f"Startdate 01-MAR-2026 X X {page}9"), minute=1)
+    programme.run()
+    rows = repr(programme.rows("deliveries")) + repr(programme.rows("recordings"))
+    assert "<img" not in rows
+    assert "DROP" not in rows
+    assert programme.rows("recordings")[0]["recording_id"] == RECORDING
+
+
+def test_names_that_are_no_text_are_taken(programme, make_edf):
+    """A file name with bytes that are no UTF-8 is masked and its file taken."""
+    path = os.fsencode(programme.inbox) + b"/\xff\xfe.edf"
+    with open(path, "wb") as file:  # noqa: PTH123  a path of bytes
+        file.write(make_edf())
+    assert programme.run().accepted == 1
+    assert programme.run().changed is False
+
+
+def test_a_zip_of_a_telling_name_keeps_its_device(programme):
+    """A refused set with a telling name is archived, and after a fix and a retry its device is still known."""
+    samples = noise(2500)
+    header = f"1001_doe 1 250 2500 08:30:00 01/03/2026\n1001_doe.dat 16 0 16 0 {samples[0]} 0 0 II\n"
+    programme.register("P-0001,", "1001,P-0001,2026-02-28,,")
+    programme.deliver("1001_doe.hea", header.encode())
+    programme.deliver("1001_doe.dat", samples.tobytes())
+    programme.run()
+    (name,) = [path.name for path in programme.quarantine.iterdir() if path.suffix == ".zip"]
+    assert "doe" not in name
+    (programme.folder / "programme.toml").write_text("[site]\nmv_per_count = 0.005\n")
+    from flows.quarantine import retry
+
+    retry(programme.folder, name)
+    assert programme.run().accepted == 1
+    (landed,) = programme.samples("1001_20260228")
+    assert np.array_equal(landed, samples)

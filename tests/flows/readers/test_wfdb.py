@@ -127,6 +127,15 @@ def test_segments_without_a_gap_are_one_stretch(tmp_path):
     assert np.array_equal(recording.read(400, 600), samples[400:600])
 
 
+@pytest.mark.parametrize("place", [1, 2])
+def test_signals_of_one_label_are_told_by_their_place(tmp_path, place):
+    """Of two signals of one name the one counted off is read."""
+    frames = np.arange(30, dtype="<i2").reshape(15, 2)
+    header = "a 2 250 15\na.dat 16 200 16 0 0 0 0 ECG\na.dat 16 200 16 0 0 0 0 ECG\n"
+    recording = open_delivery([write(tmp_path, header, a__dat=frames.tobytes())], Site(ecg_channel=f"#{place}"))
+    assert np.array_equal(recording.read(0, 15), frames[:, place - 1])
+
+
 def test_several_samples_per_frame(tmp_path):
     """A signal with two samples per frame beside one with one has twice the frame rate."""
     frames = np.arange(30, dtype="<i2").reshape(10, 3)
