@@ -155,7 +155,8 @@ def _signal_reader(header: Header, number: int, folder: Path, first_frame: int) 
     if not path.is_file():
         raise Refused("part_missing", f"header: the signal file of signal {number + 1} is not in the delivery. Add it.")
     group = [other for other in header.signals if other.file_name == signal.file_name]
-    before = sum(other.samples_per_frame for other in group[: group.index(signal)])
+    earlier = (other for other in header.signals[:number] if other.file_name == signal.file_name)
+    before = sum(other.samples_per_frame for other in earlier)
     frame_samples = sum(other.samples_per_frame for other in group)
     there = coding.count(path, signal.byte_offset) // frame_samples
     n_frames, findings = _length(header.n_samples, there)
