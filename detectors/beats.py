@@ -66,7 +66,8 @@ def beat_table(
     is_ectopic = (labels.beat_class == "V") | (labels.beat_class == "S")
     timing = timing._replace(usual_ms=rhythm.usual_rr_outside_ms(timing.before_ms, timing.after_ms, is_ectopic))
     is_premature = is_ectopic & (timing.before < S_EARLY)
-    coupling = np.where(is_premature, timing.before_ms, np.float32(np.nan)).astype(np.float32)
+    follows_ectopic = np.concatenate([[False], is_ectopic[:-1]]) if is_ectopic.size else is_ectopic
+    coupling = np.where(is_premature & ~follows_ectopic, timing.before_ms, np.float32(np.nan))
     widths = np.append(family_width_ms, np.float32(0))
     return Beats(
         segment=found.segment,

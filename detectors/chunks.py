@@ -106,7 +106,7 @@ def read_chunk(segment: Segment, begin: int, end: int, scale: Scale) -> tuple[Ch
     candidates = qrs.peaks(signal_mv, found.energy, level)
     beat = qrs.choose(candidates)
     cell = candidates.cell[beat]
-    noise = _noise(found.energy, cell, n_blocks)
+    noise = np.where(flags[0] | flags[1] | flags[2], np.float32(np.nan), _noise(found.energy, cell, n_blocks))
     working = qrs.fiducials(found.slope, cell)
     mine = (working >= begin - first) & (working < end - first)
     beat, cell, working = beat[mine], cell[mine], working[mine]

@@ -216,7 +216,7 @@ def is_interloper(
 ) -> NDArray[np.bool_]:
     """Detections that are no QRS, judged once all are known, shape (n_beats,).
 
-    Only beats of rare shape: those with far less slope than both neighbours, and weak ones between neighbours that keep
+    Only beats of rare shape: those off time with far less slope than both neighbours, and weak ones between neighbours that keep
     time without them (P and T waves, artefacts).
     """
     if energy.size < 3:
@@ -225,4 +225,5 @@ def is_interloper(
     share = energy / weaker_neighbour
     around = (before_ms + after_ms) / usual_ms
     between = (around > 0.85) & (around < 1.2)
-    return is_rare & ((share < FAR_WEAKER) | (between & (share < WEAKER)))
+    on_time = (np.abs(before_ms / usual_ms - 1) < 0.15) & (np.abs(after_ms / usual_ms - 1) < 0.15)
+    return is_rare & (((share < FAR_WEAKER) & ~on_time) | (between & (share < WEAKER)))

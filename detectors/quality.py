@@ -89,10 +89,10 @@ def _near_mean(values: NDArray[np.floating]) -> NDArray[np.float64]:
     return np.divide(total, count, out=np.full(values.size, np.nan), where=count > 0)
 
 
-def _near_sum(values: NDArray[np.float64]) -> NDArray[np.float64]:
+def _near_sum(values: NDArray[np.float64], reach: int = REACH_BLOCKS) -> NDArray[np.float64]:
     total = np.concatenate([[0.0], np.cumsum(values)])
     index = np.arange(values.size)
-    return total[np.minimum(index + REACH_BLOCKS + 1, values.size)] - total[np.maximum(index - REACH_BLOCKS, 0)]
+    return total[np.minimum(index + reach + 1, values.size)] - total[np.maximum(index - reach, 0)]
 
 
 def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.str_]:
@@ -102,7 +102,7 @@ def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.str_]:
         return np.empty(0, dtype="<U8")
     noise, odd = (np.nan_to_num(v, nan=0.0) for v in (_relative_noise(blocks), _near_mean(one.distance)))
     is_noisy = (noise > NOISY * quiet) & (odd > ODD) | (noise > VERY_NOISY * quiet) | (odd > VERY_ODD)
-    is_noisy = np.convolve(is_noisy, np.ones(2 * MARGIN_BLOCKS + 1), mode="same") > 0
+    is_noisy = _near_sum(is_noisy.astype(np.float64), MARGIN_BLOCKS) > 0
     return np.select(
         [
             blocks.is_missing,

@@ -50,9 +50,7 @@ def usual_rr_outside_ms(
     """The same, with ectopic runs of three or more left out: what a beat is early against is not the run it begins."""
     around = np.concatenate([[False, False], is_ectopic, [False, False]])
     middle = around[1:-3] & around[2:-2] & around[3:-1]
-    in_run = (
-        np.convolve(middle, np.ones(5), mode="same") > 0 if middle.any() else middle
-    )  # its beats and one on each side
+    in_run = _near_sum(middle, 2) > 0  # the beats of the run and one on each side
     return _usual(before_ms, after_ms, in_run)
 
 
