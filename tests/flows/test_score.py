@@ -148,7 +148,6 @@ def test_a_channel_that_is_not_there(folder):
         score.score_folder(folder, channel=3)
 
 
-@pytest.mark.xfail(reason="the reader finds a signal by its name")
 def test_signals_that_share_a_name(tmp_path):
     """A record whose signals are all called ECG is scored by the number of the signal."""
     hour = write_record(tmp_path, "one", seed=4)
