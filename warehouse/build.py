@@ -21,7 +21,7 @@ import polars as pl
 
 from warehouse import schema
 from warehouse.database import open_database
-from warehouse.parts import Part, checked_frame, polars_type
+from warehouse.parts import Part, checked_frame, polars_type, scan_parts
 from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets
 
 MODELS: dict[str, tuple[str, ...]] = {
@@ -155,14 +155,15 @@ class TrendBuild:
 
     def _load_lake(self) -> None:
         for name, table in schema.LAKE.items():
-            paths = [str(self.lake / part.path) for part in self.parts if part.table == name]
+            paths = [part.path for part in self.parts if part.table == name]
             if name in _NOT_FOR_MODELS:
                 continue
-            if not paths:
-                self.connection.execute(f"CREATE TABLE lake.{name} ({column_definitions(table)})")
-                continue
-            kind = "VIEW" if name in READ_IN_PLACE else "TABLE"
-            self.connection.execute(f"CREATE {kind} lake.{name} AS {parts_query(table, paths)}")
+            if name in READ_IN_PLACE and paths:
+                query = parts_query(table, [str(self.lake / path) for path in paths])
+                self.connection.execute(f"CREATE VIEW lake.{name} AS {query}")
+            else:
+                types = {column: schema.COLUMNS[column].type for column in table.columns}
+                self._insert(f"lake.{name}", types, scan_parts(self.lake, table, paths).collect())
 
     def _load_calendar(self) -> None:
         # Without any tallies a calendar around some day does: nothing is joined to it.

@@ -227,6 +227,20 @@ def read_part(lake: Path, part: Part, *, check_hash: bool = False) -> pl.DataFra
     return pl.read_parquet(content)
 
 
+def scan_parts(lake: Path, table: schema.Table, paths: Iterable[str]) -> pl.LazyFrame:
+    """Rows of many parts of a table, not read yet; `paths` are relative to the lake.
+
+    Parts that landed under an older dictionary still fit: columns that came later are NULL, dropped ones are left out.
+    """
+    files, types = [lake / path for path in paths], frame_schema(table)
+    if not files:
+        return pl.LazyFrame(schema=types)
+    rows = pl.scan_parquet(
+        files, hive_partitioning=False, schema=types, missing_columns="insert", extra_columns="ignore"
+    )
+    return rows.select(list(types))
+
+
 def _content(lake: Path, part: Part, check_hash: bool) -> bytes:
     try:
         content = (lake / part.path).read_bytes()

@@ -19,7 +19,7 @@ import polars as pl
 
 from warehouse import schema
 from warehouse.database import open_database
-from warehouse.parts import empty_frame
+from warehouse.parts import scan_parts
 
 DATABASE = "burdenline.duckdb"
 MANIFEST = "manifest.json"
@@ -97,10 +97,8 @@ class Published:
 
     def _scan_parts(self, name: str, where: Mapping[str, object]) -> pl.LazyFrame:
         key = {"part_key": where["recording_id"]} if "recording_id" in where else {}
-        paths = [self.lake / path for path in self.table("parts", {"table_name": name, **key})["part_path"]]
-        if not paths:
-            return empty_frame(schema.PUBLISHED[name]).lazy()
-        return pl.scan_parquet(paths, hive_partitioning=False).select(schema.PUBLISHED[name].columns)
+        paths = self.table("parts", {"table_name": name, **key})["part_path"]
+        return scan_parts(self.lake, schema.PUBLISHED[name], paths)
 
     def frame(self, sql: str) -> pl.DataFrame:
         """Answer one query as a frame. Raises QueryError for anything but reading, and for names that are unknown."""

@@ -1,6 +1,7 @@
 """Trend tables: local days and their length, burdens with denominators, periods around therapy events."""
 
 import itertools
+from dataclasses import replace
 from datetime import date, datetime, timedelta
 from typing import Any
 
@@ -9,6 +10,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from warehouse import schema
 from warehouse.build import BuildError, TrendBuild
 
 
@@ -224,6 +226,22 @@ def test_periods_sum_their_wear_days(lake: Any) -> None:
     assert (baseline["clock_coverage_pct"], baseline["mean_rate_bpm"]) == (100, pytest.approx(60 * 1000 / 900))
     assert (after["wear_days"], after["worn_h"], after["clock_coverage_pct"]) == (0, 0, 0)
     assert after["v_burden_pct"] is after["mean_rate_bpm"] is None
+
+
+def test_parts_of_an_older_dictionary_still_build(lake: Any, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A column that came after a part had landed is NULL in it; one that was dropped since is left out."""
+    now = schema.LAKE["recordings"]
+    older = replace(now, columns=(*(name for name in now.columns if name != "lead"), "reader_code"))
+    lake.patient("P1")
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-02T00:00")
+    with monkeypatch.context() as before:
+        before.setitem(schema.LAKE, "recordings", older)
+        lake.recording("R2", "P1", "2026-05-03T00:00", "2026-05-04T00:00")
+    with lake.built() as build:
+        recordings = build.frame("recordings")
+        assert build.check() == []
+    assert recordings["recording_id"].to_list() == ["R1", "R2"]
+    assert recordings["lead"].to_list() == [None, None]
 
 
 def test_a_missing_setting_is_named(lake: Any) -> None:
