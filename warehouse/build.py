@@ -28,7 +28,7 @@ MODELS: dict[str, tuple[str, ...]] = {
     "staging": ("patients", "therapies", "recording_wears", "decided_beats", "counted_quarters", "patient_quarters"),
     "intermediate": ("hours", "local_hours", "wear_days", "period_spans", "periods"),
     "marts": (
-        "deliveries", "recordings", "segments", "families", "episodes", "findings", "attention_from_days",
+        "deliveries", "recordings", "segments", "families", "episodes", "findings", "marks", "attention_from_days",
         "attention_from_therapies", "attention", "review_sheet", "decisions", "reviews",
         "reviewed", "latest_decisions", "reader_conflicts", "reader_agreement", "runs_of_flow", "audit", "fingerprints",
     ),

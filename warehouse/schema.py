@@ -267,6 +267,10 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("mean_ratio", "DOUBLE", "", "Geometric mean of after over baseline, half a beat standing for none."),
     ("mean_ratio_low", "DOUBLE", "", "Lower end of the 95 % interval of the mean ratio."),
     ("mean_ratio_high", "DOUBLE", "", "Upper end of the 95 % interval of the mean ratio."),
+    ("visit", "VARCHAR", "", "Name of the planned visit, as in the register."),
+    ("arm", "VARCHAR", "", "Arm of the trial; masked unless the settings unmask it, NULL when the register has none."),
+    ("target_day", "DATE", "", "Local day for which the visit is planned."),
+    ("meets_protocol", "BOOLEAN", "", "The visit has the days and analysable hours that the trial's settings ask for."),
     ("verdict", "VARCHAR", "", "fell_beyond_chance, rose_beyond_chance, within_chance or too_little_wear."),
     # attention, reviews, runs
     ("attention_code", "VARCHAR", "", "Reason code of the attention list."),
@@ -511,6 +515,11 @@ PUBLISHED: dict[str, Table] = _tables(
     LAKE["episodes"],
     LAKE["quality_windows"],
     LAKE["findings"],
+    Table(
+        "marks", "one row per patient button or diary mark, recording and instant",
+        ("recording_id", "mark_utc", "mark_text"),
+        ("recording_id", "patient_code", "mark_utc", "mark_text", "duration_s"),
+    ),
     LAKE["strips"],
     Table(
         "hours", "one row per recording and UTC hour", ("recording_id", "hour_utc"),
@@ -556,6 +565,12 @@ PUBLISHED: dict[str, Table] = _tables(
         "series_fits", "one row per patient and therapy event", ("patient_code", "therapy_id"),
         ("patient_code", "therapy_id", "step_ratio", "step_ratio_low", "step_ratio_high", "slope_ratio_per_week",
          "slope_ratio_per_week_low", "slope_ratio_per_week_high", "dispersion"),
+    ),
+    Table(
+        "visits", "one row per patient and planned visit of a trial", ("patient_code", "visit"),
+        ("patient_code", "visit", "arm", "target_day", "first_day", "last_day", "wear_days", "valid_days",
+         "analysable_h", "v_beats", "s_beats", "all_beats", "v_burden_pct", "s_burden_pct", "v_per_h",
+         "meets_protocol", "reason"),
     ),
     Table(
         "level_shifts", "one row per patient and day on which the ventricular burden moved to another level",

@@ -228,6 +228,17 @@ def test_periods_sum_their_wear_days(lake: Any) -> None:
     assert after["v_burden_pct"] is after["mean_rate_bpm"] is None
 
 
+def test_a_mark_in_two_deliveries_is_one_mark(lake: Any) -> None:
+    """Patient marks are published once per recording, instant and text, with the patient they belong to."""
+    lake.patient("P1")
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-02T00:00")
+    mark = {"recording_id": "R1", "mark_utc": datetime.fromisoformat("2026-05-01T03:00"), "mark_text": "button"}
+    lake.land("marks", "R1", [mark | {"delivery_id": name} for name in ("D1", "D2")])
+    with lake.built() as build:
+        assert build.frame("marks").select("patient_code", "mark_text").rows() == [("P1", "button")]
+        assert build.check() == []
+
+
 def test_parts_of_an_older_dictionary_still_build(lake: Any, monkeypatch: pytest.MonkeyPatch) -> None:
     """A column that came after a part had landed is NULL in it; one that was dropped since is left out."""
     now = schema.LAKE["recordings"]
