@@ -129,7 +129,7 @@ def gather(
     found = beats.join(parts)
     parts.clear()
     lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
-    artefact = beats.is_artefact(found, _timing(found, bad, lengths, scale.fs_hz)[1])
+    artefact = beats.is_artefact(found, timing_of(found, bad, lengths, scale.fs_hz)[1])
     return Gathered(
         found.keep(~artefact), book, bad, lengths, quality.analysable_s(seen, bad, scale.fs_hz), scale.fs_hz
     )
@@ -161,7 +161,7 @@ def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Foun
 def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] = classify.WEIGHTS) -> Analysis:
     """Classes, episodes and findings of gathered beats, with the whole recording as context."""
     found, bad, lengths, fs_hz = gathered.found, gathered.bad, gathered.lengths, gathered.fs_hz
-    sample, timing = _timing(found, bad, lengths, fs_hz)
+    sample, timing = timing_of(found, bad, lengths, fs_hz)
     labels = classify.classify(timing, found.member, gathered.book.shape_mv, weights)
     is_analysable = quality.is_outside(bad, found.segment, sample)
     widths = features.qrs_width_ms(gathered.book.shape_mv)
@@ -179,9 +179,10 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
     )
 
 
-def _timing(
+def timing_of(
     found: beats.Found, bad: QualityWindows, lengths: NDArray[np.int64], fs_hz: float
 ) -> tuple[NDArray[np.int64], classify.Timing]:
+    """Stored sample of every beat, and the intervals around it."""
     position = signal.working_to_sample(found.working, fs_hz)
     sample = np.rint(position).astype(np.int64)
     np.clip(sample, 0, lengths[found.segment] - 1, out=sample)

@@ -214,10 +214,16 @@ def judge_families(
 ) -> NDArray[np.float64]:
     """Log odds of being ventricular for every family; normal families and late narrow ones are not."""
     odds = terms @ weights
-    is_not = (habits.asymmetry > LATE) & (terms[:, TERMS.index("width")] < LATE_WIDTH)
-    is_not[shapes.normal] = True
-    odds[is_not] = np.minimum(odds[is_not], -1)
+    never = is_never_ventricular(terms, habits, shapes)
+    odds[never] = np.minimum(odds[never], -1)
     return odds
+
+
+def is_never_ventricular(terms: NDArray[np.float64], habits: Habits, shapes: Shapes) -> NDArray[np.bool_]:
+    """Families that the model is not asked about: the normal ones, and narrow beats after a pause."""
+    never = (habits.asymmetry > LATE) & (terms[:, TERMS.index("width")] < LATE_WIDTH)
+    never[shapes.normal] = True
+    return never
 
 
 def _fusions(
