@@ -6,7 +6,7 @@ when it draws, so one figure serves light, dark and print. No number is computed
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from datetime import date, datetime, timedelta
 from itertools import pairwise
 from typing import Any, TypedDict
@@ -29,7 +29,7 @@ GREY = {"gridcolor": "--line", "linecolor": "--line", "zeroline": False, "tickco
 CLASS_COLOURS = {"V": "--v", "S": "--s"}
 
 
-def _layout(height: int, **more: Any) -> dict[str, Any]:
+def layout(height: int, **more: Any) -> dict[str, Any]:
     return {
         "height": height,
         "margin": {"l": 58, "r": 14, "t": 34, "b": 46},
@@ -42,30 +42,35 @@ def _layout(height: int, **more: Any) -> dict[str, Any]:
     }
 
 
-def _axis(title: str, domain: tuple[float, float], **more: Any) -> dict[str, Any]:
+def axis(title: str, domain: tuple[float, float], **more: Any) -> dict[str, Any]:
     text = {"text": title, "font": {**FONT, "size": 11}, "standoff": 6}
     return {**GREY, "title": text, "domain": list(domain), "rangemode": "tozero", "fixedrange": True, **more}
 
 
-def timeline(wear_days: pl.DataFrame, therapies: pl.DataFrame, periods: pl.DataFrame, changes: pl.DataFrame) -> Figure:
-    """One day axis for a patient: burden, hours that carry it, heart rate; therapy marks and gaps run through all."""
+def timeline(rows: Mapping[str, pl.DataFrame]) -> Figure:
+    """One day axis for a patient: burden, hours that carry it, heart rate; therapy marks and gaps run through all.
+
+    `rows` holds the patient's rows of wear_days, therapies, periods, changes and level_shifts by table.
+    """
+    wear_days, therapies = rows["wear_days"].sort("local_day"), rows["therapies"]
     burden = [_burden_days(wear_days, valid=True), _burden_days(wear_days, valid=False)]
     data = [trace for trace in burden if trace["x"]] + [*_wear_bars(wear_days), _rate_days(wear_days)]
     first, last = _span(wear_days, therapies)
-    layout = _layout(
+    drawn_on = layout(
         520,
         xaxis={**GREY, "type": "date", "range": [str(first), str(last)], "anchor": "y3", "showgrid": True,
                "hoverformat": "%a %-d %b %Y", "tickformat": "%-d %b\n%Y"},
-        yaxis=_axis("V burden, %", (0.50, 1.0)),
-        yaxis2=_axis("hours", (0.25, 0.44), **_hours_scale(wear_days)),
-        yaxis3=_axis("rate, /min", (0.0, 0.19), rangemode="normal", nticks=4),
+        yaxis=axis("V burden, %", (0.50, 1.0)),
+        yaxis2=axis("hours", (0.25, 0.44), **_hours_scale(wear_days)),
+        yaxis3=axis("rate, /min", (0.0, 0.19), rangemode="normal", nticks=4),
         barmode="overlay",
         bargap=0.15,
         hovermode="x unified",
-        shapes=[*_gap_shapes(wear_days), *_period_shapes(periods, changes), *_therapy_shapes(therapies)],
+        shapes=[*_gap_shapes(wear_days), *_period_shapes(rows["periods"], rows["changes"]),
+                *_shift_shapes(rows["level_shifts"]), *_therapy_shapes(therapies)],
         annotations=_therapy_notes(therapies),
     )  # fmt: skip
-    return Figure(data=data, layout=layout)
+    return Figure(data=data, layout=drawn_on)
 
 
 def _burden_days(wear_days: pl.DataFrame, *, valid: bool) -> dict[str, Any]:
@@ -76,11 +81,12 @@ def _burden_days(wear_days: pl.DataFrame, *, valid: bool) -> dict[str, Any]:
         "mode": "markers",
         "name": "burden, valid day" if valid else "burden, too few hours",
         "x": _days(rows["local_day"]),
-        "y": _values(rows["v_burden_pct"], 3),
+        "y": values(rows["v_burden_pct"], 3),
         "customdata": rows.select("v_beats", "all_beats", pl.col("analysable_h").round(1)).rows(),
         "hovertemplate": "%{y:.2f} %: %{customdata[0]:,} V of %{customdata[1]:,} beats in %{customdata[2]} h"
         "<extra></extra>",
         "marker": marker | {"symbol": "circle"},
+        "cliponaxis": False,
     }
 
 
@@ -88,7 +94,7 @@ def _wear_bars(wear_days: pl.DataFrame) -> list[dict[str, Any]]:
     x = _days(wear_days["local_day"])
     bars = [("worn_h", "worn", "--worn"), ("analysable_h", "analysable", "--wear")]
     return [
-        {"type": "bar", "name": name, "x": x, "y": _values(wear_days[column], 2), "yaxis": "y2",
+        {"type": "bar", "name": name, "x": x, "y": values(wear_days[column], 2), "yaxis": "y2",
          "marker": {"color": colour}, "hovertemplate": f"%{{y:.1f}} h {name}<extra></extra>"}
         for column, name, colour in bars
     ]  # fmt: skip
@@ -108,9 +114,10 @@ def _rate_days(wear_days: pl.DataFrame) -> dict[str, Any]:
         "mode": "markers",
         "name": "heart rate",
         "x": _days(rows["local_day"]),
-        "y": _values(rows["mean_rate_bpm"], 1),
+        "y": values(rows["mean_rate_bpm"], 1),
         "yaxis": "y3",
         "marker": {"color": "--rate", "size": 7, "symbol": "diamond"},
+        "cliponaxis": False,
         "hovertemplate": "%{y:.0f} /min<extra></extra>",
     }
 
@@ -146,6 +153,13 @@ def _period_shapes(periods: pl.DataFrame, changes: pl.DataFrame) -> Iterable[dic
                    "y0": value, "y1": value, "line": {"color": "--v", "width": 2, "dash": "dot"}}  # fmt: skip
 
 
+def _shift_shapes(level_shifts: pl.DataFrame) -> Iterable[dict[str, Any]]:
+    """Mark the days on which the burden moved to another level, found without knowing the therapy day."""
+    for moment in level_shifts["local_day"]:
+        yield {"type": "line", "xref": "x", "yref": "y domain", "x0": str(moment), "x1": str(moment), "y0": 0, "y1": 1,
+               "line": {"color": "--even", "width": 1.2, "dash": "dash"}}  # fmt: skip
+
+
 def _therapy_shapes(therapies: pl.DataFrame) -> Iterable[dict[str, Any]]:
     for moment in therapies["therapy_day"].drop_nulls():
         yield {"type": "line", "xref": "x", "yref": "paper", "x0": str(moment), "x1": str(moment), "y0": 0, "y1": 1,
@@ -158,12 +172,12 @@ def _therapy_notes(therapies: pl.DataFrame) -> list[dict[str, Any]]:
     return [
         {"x": str(row["therapy_day"]), "y": 0.995 - 0.055 * (order % 3), "xref": "x", "yref": "paper",
          "xanchor": "left", "yanchor": "top", "xshift": 4, "showarrow": False, "font": font,
-         "text": _as_text(words.therapy(row["therapy_kind"], row["therapy_detail"]))}
+         "text": as_text(words.therapy(row["therapy_kind"], row["therapy_detail"]))}
         for order, row in enumerate(rows)
     ]  # fmt: skip
 
 
-def _as_text(words_of_others: str) -> str:
+def as_text(words_of_others: str) -> str:
     """Plotly reads a small markup in its texts; text from a register must stay text, and short."""
     short = words_of_others if len(words_of_others) <= 40 else words_of_others[:39] + "…"
     return short.replace("&", "&amp;").replace("<", "&lt;").replace(">", "&gt;")
@@ -192,14 +206,14 @@ def clock_map(local_hours: pl.DataFrame) -> Figure:
         "%{customdata[0]:,} V of %{customdata[1]:,} beats in %{customdata[2]} analysable min<extra></extra>",
         "colorbar": {"title": {"text": "%", "side": "top"}, "thickness": 10, "outlinewidth": 0, "len": 1},
     }
-    layout = _layout(
+    drawn_on = layout(
         380,
         xaxis={**GREY, "type": "date", "tickformat": "%-d %b\n%Y", "showgrid": False, "fixedrange": True},
-        yaxis=_axis("clock hour", (0, 1), autorange="reversed", tickvals=list(range(0, 24, 3)), rangemode="normal",
+        yaxis=axis("clock hour", (0, 1), autorange="reversed", tickvals=list(range(0, 24, 3)), rangemode="normal",
                     showgrid=False),
     )  # fmt: skip
-    layout["margin"] = {**layout["margin"], "t": 12}
-    return Figure(data=[trace], layout=layout)
+    drawn_on["margin"] = {**drawn_on["margin"], "t": 12}
+    return Figure(data=[trace], layout=drawn_on)
 
 
 def wearing(hours: pl.DataFrame, zone: str) -> Figure:
@@ -213,26 +227,26 @@ def wearing(hours: pl.DataFrame, zone: str) -> Figure:
         ("analysable_s", "analysable", "--wear"),
     ]
     data: list[dict[str, Any]] = [
-        {"type": "bar", "name": name, "x": x, "y": _values(hours[column] / 60, 1), "yaxis": "y2", "offset": 0,
+        {"type": "bar", "name": name, "x": x, "y": values(hours[column] / 60, 1), "yaxis": "y2", "offset": 0,
          "width": 2 * middle, "marker": {"color": colour}, "hovertemplate": f"%{{y:.0f}} min {name}<extra></extra>"}
         for column, name, colour in minutes
     ]  # fmt: skip
     data += [_hourly_beats(hours, x, beat_class, middle * place, middle) for place, beat_class in enumerate(("V", "S"))]
     data.append(
-        {"type": "scatter", "mode": "lines", "name": "mean heart rate", "x": x, "y": _values(hours["mean_rate_bpm"], 1),
+        {"type": "scatter", "mode": "lines", "name": "mean heart rate", "x": x, "y": values(hours["mean_rate_bpm"], 1),
          "yaxis": "y3", "line": {"color": "--rate", "width": 1.5, "shape": "hv"}, "connectgaps": False,
          "hovertemplate": "%{y:.0f} /min<extra></extra>"}
     )  # fmt: skip
-    layout = _layout(
+    drawn_on = layout(
         480,
         xaxis={**GREY, "type": "date", "anchor": "y3", "hoverformat": "%a %-d %b, %H h", "tickformat": "%H h\n%-d %b"},
-        yaxis=_axis("beats in the hour", (0.54, 1.0)),
-        yaxis2=_axis("minutes", (0.27, 0.47), range=[0, 61], tickvals=[0, 30, 60]),
-        yaxis3=_axis("rate, /min", (0.0, 0.20), rangemode="normal", nticks=4),
+        yaxis=axis("beats in the hour", (0.54, 1.0)),
+        yaxis2=axis("minutes", (0.27, 0.47), range=[0, 61], tickvals=[0, 30, 60]),
+        yaxis3=axis("rate, /min", (0.0, 0.20), rangemode="normal", nticks=4),
         barmode="overlay",
         hovermode="x unified",
     )
-    return Figure(data=data, layout=layout)
+    return Figure(data=data, layout=drawn_on)
 
 
 def _hourly_beats(hours: pl.DataFrame, x: list[str], beat_class: str, offset: int, width: int) -> dict[str, Any]:
@@ -260,5 +274,5 @@ def _days(series: pl.Series) -> list[str]:
     return [str(day) for day in series]
 
 
-def _values(series: pl.Series, digits: int) -> list[float | None]:
+def values(series: pl.Series, digits: int) -> list[float | None]:
     return series.cast(pl.Float64).fill_nan(None).round(digits).to_list()

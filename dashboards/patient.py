@@ -21,7 +21,7 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
     wear_days = rows["wear_days"].sort("local_day")
     therapies = rows["therapies"].sort("therapy_day", "therapy_id")
     recordings = rows["recordings"].sort("start_utc", "recording_id")
-    events = [_event(row, rows["changes"], rows["periods"]) for row in therapies.rows(named=True)]
+    events = [_event(row, rows) for row in therapies.rows(named=True)]
     measured = wear_days.drop_nulls("v_burden_pct")
     return {
         "patient": rows["patients"].row(0, named=True),
@@ -33,10 +33,9 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
         "events": events,
         "headline": headline(events, measured),
         "finding": range_words(measured),
-        "timeline": charts.timeline(wear_days, therapies, rows["periods"], rows["changes"])
-        if wear_days.height
-        else None,
+        "timeline": charts.timeline(rows) if wear_days.height else None,
         "clock_map": charts.clock_map(rows["local_hours"]) if measured.height else None,
+        "level_shifts": rows["level_shifts"].sort("local_day").rows(named=True),
         "densest": _densest(rows["local_hours"]),
         "clock_hours": _by_clock(rows["local_hours"]),
         "recordings": [_recording(tables, row) for row in recordings.rows(named=True)],
@@ -46,8 +45,7 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
 
 def data_files(tables: Tables, patient_code: str) -> dict[str, pl.DataFrame]:
     """Return the downloads of the page by name."""
-    names = ("wear_days", "local_hours", "therapies", "periods", "changes", "recordings")
-    files = {name: tables.of_patient(name, patient_code) for name in names}
+    files = {name: tables.of_patient(name, patient_code) for name in Tables.BY_PATIENT}
     recordings = files["recordings"].sort("start_utc")["recording_id"]
     families = [tables.of_recording("families", recording_id).drop("shape_mv") for recording_id in recordings]
     return files | ({"families": pl.concat(families)} if families else {})
@@ -82,15 +80,17 @@ def change_words(change: dict[str, Any]) -> str:
     return f"{name.lower()} {said}, {before} → {after} {unit}"
 
 
-def _event(therapy: dict[str, Any], changes: pl.DataFrame, periods: pl.DataFrame) -> dict[str, Any]:
-    of_event = pl.col("therapy_id") == therapy["therapy_id"]
-    ordered = changes.filter(of_event).rows(named=True)
-    by_measure = {row["measure"]: row for row in ordered}
-    spans = {row["period"]: row for row in periods.filter(of_event).rows(named=True)}
+def _event(therapy: dict[str, Any], rows: dict[str, pl.DataFrame]) -> dict[str, Any]:
+    of_event = {
+        name: rows[name].filter(pl.col("therapy_id") == therapy["therapy_id"]).rows(named=True)
+        for name in ("changes", "periods", "rate_effects")
+    }
+    by_measure = {row["measure"]: row for row in of_event["changes"]}
+    spans = {row["period"]: row for row in of_event["periods"]}
     return {
         "name": words.therapy(therapy["therapy_kind"], therapy["therapy_detail"]),
         "day": therapy["therapy_day"],
-        "therapy_id": therapy["therapy_id"],
+        "rate_effect": next(iter(of_event["rate_effects"]), None),
         "changes": {measure: by_measure[measure] for measure in words.MEASURES if measure in by_measure},
         "periods": [spans[period] for period in ("baseline", "settling", "after") if period in spans],
     }

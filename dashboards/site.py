@@ -8,7 +8,7 @@ from __future__ import annotations
 from pathlib import Path
 from typing import Any
 
-from dashboards import addresses, methods, overview, patient, recording, review, trail
+from dashboards import addresses, cohort, methods, overview, patient, recording, review, trail
 from dashboards.press import Press
 from dashboards.tables import PublishedTables, Tables
 
@@ -35,6 +35,10 @@ def _write_programme(press: Press, tables: Tables) -> None:
     press.page(
         overview.PAGE, "overview.html.j2", tables.marks_of_whole(*overview.TABLES),
         lambda: overview.context(tables), lambda: overview.data_files(tables),
+    )  # fmt: skip
+    press.page(
+        cohort.PAGE, "cohort.html.j2", tables.marks_of_whole(*cohort.TABLES),
+        lambda: cohort.context(tables), lambda: cohort.data_files(tables),
     )  # fmt: skip
     press.page(
         trail.PAGE, "trail.html.j2", tables.marks_of_whole(*trail.TABLES),

@@ -49,7 +49,10 @@ def mark(row_hashes: pl.Series) -> str:
 class Tables:
     """The published tables as pages read them."""
 
-    BY_PATIENT = ("patients", "recordings", "wear_days", "local_hours", "therapies", "periods", "changes", "attention")
+    BY_PATIENT = (
+        "patients", "recordings", "wear_days", "local_hours", "therapies", "periods", "changes", "rate_effects",
+        "level_shifts", "attention",
+    )  # fmt: skip
     BY_RECORDING = ("recordings", "segments", "families", "hours", "findings", "review_sheet", "reviewed")
     LARGE = ("strips", "episodes", "quality_windows")
 

@@ -12,7 +12,10 @@ PATIENT, RECORDING, REVIEW = (
     "recordings/CN0000-20260302.html",
     "review/CN0000-20260302.html",
 )
-PAGES = ("index.html", PATIENT, "patients/SKERRY-0002.html", RECORDING, REVIEW, "methods.html", "dictionary.html")
+PAGES = (
+    "index.html", PATIENT, "patients/SKERRY-0002.html", RECORDING, REVIEW, "cohort.html", "trail.html", "methods.html",
+    "dictionary.html",
+)  # fmt: skip
 WIDE, PHONE = {"width": 1280, "height": 900}, {"width": 390, "height": 844}
 MM = 96 / 25.4  # CSS pixels
 

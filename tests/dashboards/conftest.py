@@ -243,6 +243,20 @@ def invented_rows(patients: int = 4) -> dict[str, list[dict[str, Any]]]:
             )  # fmt: skip
     unknown_serial = "Serial CN9001 is in no row of wears.csv; add the wear."
     picture = "Found a JPEG picture; expected EDF or WFDB."
+    for limit_pct, responders in ((50.0, 2), (80.0, 1)):
+        rows["cohort"].append(
+            {"therapy_kind": "medication_start", "measure": "v_burden_pct", "limit_pct": limit_pct, "patients": 4,
+             "evaluable_patients": 3, "fell_patients": 1, "rose_patients": 1, "responders": responders,
+             "responder_pct": 100 * responders / 3, "responder_pct_low": 6.1, "responder_pct_high": 93.9,
+             "mean_ratio": 0.8, "mean_ratio_low": 0.1, "mean_ratio_high": 5.0}
+        )  # fmt: skip
+    rows["level_shifts"].append(
+        {"patient_code": "SKERRY-0001", "local_day": date(2026, 3, 20), "level_before": 12.5, "level_after": 1.9}
+    )
+    rows["rate_effects"].append(
+        {"patient_code": "SKERRY-0001", "therapy_id": "T000", "dependence": "follows_rate",
+         "reason": "Ectopy rises with the heart rate in the baseline hours (r 0.60)."}
+    )  # fmt: skip
     for status, name, reason in (
         ("accepted", "CN0000.edf", None), ("waiting", "CN9001.edf", unknown_serial), ("quarantined", "sea.edf", picture)
     ):  # fmt: skip

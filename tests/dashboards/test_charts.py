@@ -9,7 +9,7 @@ import plotly.graph_objects
 import polars as pl
 import pytest
 
-from dashboards import charts
+from dashboards import charts, cohort_charts
 from dashboards.tables import Tables
 
 CODE = "SKERRY-0001"
@@ -22,9 +22,7 @@ def tables(rows, publish) -> Tables:
 
 @pytest.fixture
 def timeline(tables):
-    return charts.timeline(
-        *(tables.of_patient(name, CODE) for name in ("wear_days", "therapies", "periods", "changes"))
-    )
+    return charts.timeline({name: tables.of_patient(name, CODE) for name in Tables.BY_PATIENT})
 
 
 def coloured(figure) -> dict:
@@ -39,7 +37,9 @@ def _hex_only(found: dict) -> dict:
 def test_plotly_accepts_the_figures(tables, timeline):
     """Every property of the figures is one that plotly knows, with a value it allows."""
     hours = tables.of_recording("hours", "CN0000-20260302")
-    for figure in (timeline, charts.wearing(hours, "Atlantic/Azores")):
+    changes = tables.whole("changes").filter(pl.col("measure") == "v_burden_pct").sort("change_pct", nulls_last=True)
+    figures = [timeline, charts.wearing(hours, "Atlantic/Azores"), cohort_charts.changes_of_all(changes)]
+    for figure in (*figures, cohort_charts.responders(tables.whole("cohort"))):
         # Source: plotly's own schema, checked by its graph objects
         plotly.graph_objects.Figure(coloured(figure))
     clock_map = coloured(charts.clock_map(tables.of_patient("local_hours", CODE)))
@@ -59,6 +59,22 @@ def test_days_without_wear_between_wears_are_shaded(timeline):
     """The thirteen days between the two wears are one shaded stretch."""
     (gap,) = [shape for shape in timeline["layout"]["shapes"] if shape.get("fillcolor") == "--gap"]
     assert (gap["x0"], gap["x1"]) == ("2026-03-06 12:00:00", "2026-03-19 12:00:00")
+
+
+def test_a_change_of_level_is_marked_on_its_day(timeline):
+    """A day on which the burden moved, found from the days alone, is a dashed line in the burden panel."""
+    (mark,) = [shape for shape in timeline["layout"]["shapes"] if shape.get("yref") == "y domain"]
+    assert (mark["x0"], mark["line"]["dash"]) == ("2026-03-20", "dash")
+
+
+def test_every_patient_stands_before_the_band_that_chance_explains(tables):
+    """The cohort figure has one bar from fall limit to rise limit and one mark by verdict for each change."""
+    changes = tables.whole("changes").filter(pl.col("measure") == "v_burden_pct").sort("change_pct", nulls_last=True)
+    band, *marks = cohort_charts.changes_of_all(changes)["data"]
+    # Source: the invented changes: chance explains falls to 61 % and rises to 155 %
+    assert set(zip(band["base"], band["y"], strict=True)) == {(-61, 216), (None, None)}
+    assert sorted(place for trace in marks for place in trace["x"]) == [1, 2, 3]
+    assert {trace["name"] for trace in marks} == {"fell beyond chance", "within chance", "rose beyond chance"}
 
 
 def test_therapy_text_cannot_carry_markup(tables):

@@ -60,7 +60,7 @@ def site(rows, publish, tmp_path) -> Path:
 def test_every_patient_and_recording_has_a_page(site, rows):
     """The site holds one page for each patient and recording, and the pages about the whole programme."""
     found = set(pages_of(site))
-    assert {"index.html", "methods.html", "dictionary.html"} <= found
+    assert {"index.html", "cohort.html", "trail.html", "methods.html", "dictionary.html"} <= found
     assert {f"patients/{row['patient_code']}.html" for row in rows["patients"]} <= found
     assert {f"recordings/{row['recording_id']}.html" for row in rows["recordings"]} <= found
 

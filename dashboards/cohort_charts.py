@@ -1,0 +1,104 @@
+"""Figures over all patients of a programme; see charts.py for what a figure is."""
+
+from __future__ import annotations
+
+from typing import Any
+
+import polars as pl
+
+from dashboards import words
+from dashboards.charts import GREY, Figure, as_text, axis, layout, values
+
+
+def changes_of_all(changes: pl.DataFrame) -> Figure:
+    """Each patient's change of one measure, sorted, before the band that chance explains for that patient."""
+    place = list(range(1, changes.height + 1))
+    band = {
+        "type": "bar",
+        "name": "explained by chance",
+        "x": place,
+        "y": values(changes["chance_fall_limit_pct"] + changes["chance_rise_limit_pct"], 2),
+        "base": values(-changes["chance_fall_limit_pct"], 2),
+        "marker": {"color": "--worn"},
+        "hoverinfo": "skip",
+    }
+    points = [_verdict_points(changes, place, verdict) for verdict in words.VERDICTS]
+    drawn_on = layout(
+        380,
+        xaxis={
+            **GREY,
+            "title": {"text": "patients, from the largest fall"},
+            "showticklabels": False,
+            "showgrid": False,
+        },
+        yaxis=axis("change, %", (0, 1), rangemode="normal", zeroline=True, zerolinecolor="--ink"),
+        bargap=0.1,
+        hovermode="closest",
+    )
+    return Figure(data=[band, *(trace for trace in points if trace["x"])], layout=drawn_on)
+
+
+VERDICT_MARKS = {
+    "fell_beyond_chance": ("--fell", "triangle-down"),
+    "rose_beyond_chance": ("--rose", "triangle-up"),
+    "within_chance": ("--even", "circle"),
+    "too_little_wear": ("--few", "circle-open"),
+}
+
+
+def _verdict_points(changes: pl.DataFrame, place: list[int], verdict: str) -> dict[str, Any]:
+    colour, symbol = VERDICT_MARKS[verdict]
+    known = pl.col("change_pct").is_not_null()
+    rows = changes.with_columns(place=pl.Series(place, dtype=pl.Int64)).filter((pl.col("verdict") == verdict) & known)
+    return {
+        "type": "scatter",
+        "mode": "markers",
+        "name": words.VERDICTS[verdict][1],
+        "x": rows["place"].to_list(),
+        "y": values(rows["change_pct"], 2),
+        "customdata": [[as_text(code)] for code in rows["patient_code"]],
+        "hovertemplate": "%{customdata[0]}: %{y:+.1f} %<extra></extra>",
+        "marker": {"color": colour, "symbol": symbol, "size": 9},
+    }
+
+
+KIND_COLOURS = ("--link", "--v", "--therapy", "--few", "--s")
+
+
+def responders(cohort: pl.DataFrame) -> Figure:
+    """Share of responders by the fall that counts as response, with its interval, for each kind of therapy."""
+    kinds = zip(cohort["therapy_kind"].unique().sort(), KIND_COLOURS, strict=False)
+    data = [
+        _response(cohort.filter(pl.col("therapy_kind") == kind).sort("limit_pct"), kind, colour, 0.6 * order)
+        for order, (kind, colour) in enumerate(kinds)
+    ]
+    drawn_on = layout(
+        380,
+        xaxis={**GREY, "title": {"text": "fall that counts as response, %"}, "fixedrange": True},
+        yaxis=axis("responders, %", (0, 1), range=[0, 103]),
+        hovermode="closest",
+    )
+    return Figure(data=data, layout=drawn_on)
+
+
+def _response(rows: pl.DataFrame, kind: str, colour: str, shift: float) -> dict[str, Any]:
+    """One kind of therapy, drawn `shift` to the right so that intervals do not lie upon each other."""
+    return {
+        "type": "scatter",
+        "mode": "markers+lines",
+        "name": words.plain(kind),
+        "x": [limit + shift for limit in rows["limit_pct"]],
+        "y": values(rows["responder_pct"], 2),
+        "error_y": {
+            "type": "data",
+            "symmetric": False,
+            "color": colour,
+            "array": values(rows["responder_pct_high"] - rows["responder_pct"], 2),
+            "arrayminus": values(rows["responder_pct"] - rows["responder_pct_low"], 2),
+        },
+        "line": {"color": colour, "dash": "dot"},
+        "marker": {"color": colour, "size": 9},
+        "customdata": rows.select("responders", "evaluable_patients", "limit_pct").rows(),
+        "hovertemplate": "fall of at least %{customdata[2]} %: %{customdata[0]} of %{customdata[1]} patients"
+        "<extra></extra>",
+    }
