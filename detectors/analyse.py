@@ -8,7 +8,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import beats, chunks, classify, episodes, features, findings, quality, rhythm, signal
+from detectors import beats, chunks, classify, doubt, episodes, features, findings, quality, rhythm, signal
 from detectors.families import FamilyBook
 from detectors.results import Analysis, Beats, Episodes, QualityWindows, Segment
 
@@ -33,7 +33,6 @@ class Gathered(NamedTuple):
     book: FamilyBook
     bad: QualityWindows
     lengths: NDArray[np.int64]  # samples per segment
-    analysable_s: float
     fs_hz: float
 
 
@@ -130,9 +129,7 @@ def gather(
     parts.clear()
     lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
     artefact = beats.is_artefact(found, timing_of(found, bad, lengths, scale.fs_hz)[1])
-    return Gathered(
-        found.keep(~artefact), book, bad, lengths, quality.analysable_s(seen, bad, scale.fs_hz), scale.fs_hz
-    )
+    return Gathered(found.keep(~artefact), book, bad, lengths, scale.fs_hz)
 
 
 def _enter_full_batches(
@@ -164,19 +161,41 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
     sample, timing = timing_of(found, bad, lengths, fs_hz)
     labels = classify.classify(timing, found.member, gathered.book.shape_mv, weights)
     is_analysable = quality.is_outside(bad, found.segment, sample)
+    bad = _with_doubtful_runs(bad, found, sample, timing, labels, is_analysable)
+    is_analysable = quality.is_outside(bad, found.segment, sample)
     widths = features.qrs_width_ms(gathered.book.shape_mv)
     table = beats.beat_table(found, sample, timing, labels, widths, is_analysable, options.full_pause_tolerance_pct)
+    analysable_s = quality.analysable_s(int(lengths.sum()), bad, fs_hz)
     groups = beats.family_table(table, gathered.book, labels, widths)
     return Analysis(
         table,
         groups,
         _episodes(table, fs_hz, options),
         bad,
-        findings.findings(gathered.analysable_s, float(lengths.sum()) / fs_hz, table, groups),
+        findings.findings(analysable_s, float(lengths.sum()) / fs_hz, table, groups),
         fs_hz,
         tuple(lengths.tolist()),
-        gathered.analysable_s,
+        analysable_s,
     )
+
+
+def _with_doubtful_runs(
+    bad: QualityWindows,
+    found: beats.Found,
+    sample: NDArray[np.int64],
+    timing: classify.Timing,
+    labels: classify.Labels,
+    is_analysable: NDArray[np.bool_],
+) -> QualityWindows:
+    """The windows and doubtful runs as noise, each from half-way after the beat before to half-way to the beat after."""
+    starts = np.isnan(timing.before_ms)
+    runs = doubt.doubtful_runs(labels.beat_class == "V", starts, found.family, is_analysable)
+    before, after = np.maximum(runs.first - 1, 0), np.minimum(runs.last, sample.size - 1)
+    before = np.where(found.segment[before] == found.segment[runs.first], before, runs.first)
+    after = np.where(found.segment[after] == found.segment[runs.first], after, runs.last - 1)
+    first = (sample[before] + sample[runs.first]) // 2 + 1
+    last = (sample[after] + sample[runs.last - 1]) // 2
+    return quality.with_noise(bad, found.segment[runs.first], np.minimum(first, sample[runs.first]), last)
 
 
 def timing_of(

@@ -36,7 +36,7 @@ def find_episodes(
     """All episodes, ordered by segment and first sample; a couplet is exactly two V, a run three or more."""
     starts = np.isnan(beats.rr_before_ms)
     is_v, is_s = beats.beat_class == "V", beats.beat_class == "S"
-    v_runs, s_runs = _stretches(is_v, starts), _stretches(is_s, starts)
+    v_runs, s_runs = stretches(is_v, starts), stretches(is_s, starts)
     length = v_runs.last - v_runs.first
     is_pause = np.flatnonzero(beats.rr_before_ms >= pause_ms)
     found = [
@@ -51,7 +51,7 @@ def find_episodes(
     return _table(beats, found, fs_hz)
 
 
-def _stretches(flag: NDArray[np.bool_], starts: NDArray[np.bool_]) -> Span:
+def stretches(flag: NDArray[np.bool_], starts: NDArray[np.bool_]) -> Span:
     """Unbroken stretches of flagged beats; a beat that starts anew begins a new stretch."""
     before = np.concatenate([[False], flag[:-1]])
     after = np.concatenate([flag[1:], [False]])
@@ -72,13 +72,13 @@ def _alternation(is_v: NDArray[np.bool_], starts: NDArray[np.bool_], cycle: int,
         return Span(v[:0], v[:0])
     breaks = np.cumsum(starts)
     linked = (np.diff(v) == cycle) & (breaks[v[1:]] == breaks[v[:-1]])
-    runs = _stretches(linked, np.zeros(linked.size, dtype=bool))
+    runs = stretches(linked, np.zeros(linked.size, dtype=bool))
     long_enough = runs.last - runs.first >= min_cycles
     return Span(v[runs.first[long_enough]], v[runs.last[long_enough]] + 1)
 
 
 def _irregular(beats: Rhythm, starts: NDArray[np.bool_]) -> Span:
-    span = _stretches(beats.irregularity > IRREGULAR_SHARE, starts)
+    span = stretches(beats.irregularity > IRREGULAR_SHARE, starts)
     return _where(span, span.last - span.first >= IRREGULAR_MIN_BEATS)
 
 

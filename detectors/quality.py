@@ -64,9 +64,9 @@ def windows(seen: list[Seen], fs_hz: float) -> QualityWindows:
 _NOTHING = (np.empty(0, dtype=np.int64), np.empty(0, dtype=np.int64), np.empty(0, dtype="<U8"))
 
 
-def analysable_s(seen: list[Seen], bad: QualityWindows, fs_hz: float) -> float:
-    """Seconds outside all bad windows."""
-    return (sum(one.n_samples for one in seen) - int((bad.last_sample - bad.first_sample + 1).sum())) / fs_hz
+def analysable_s(n_samples: int, bad: QualityWindows, fs_hz: float) -> float:
+    """Seconds of `n_samples` outside all bad windows."""
+    return (n_samples - int((bad.last_sample - bad.first_sample + 1).sum())) / fs_hz
 
 
 def _usual(seen: list[Seen]) -> tuple[float, float]:
@@ -127,6 +127,25 @@ def _stretches(
     sample[-1] = n_samples
     is_bad = reason[edge[:-1]] != ""
     return sample[:-1][is_bad], sample[1:][is_bad] - 1, reason[edge[:-1]][is_bad]
+
+
+def with_noise(
+    bad: QualityWindows, segment: NDArray[np.int16], first: NDArray[np.int64], last: NDArray[np.int64]
+) -> QualityWindows:
+    """The windows and the spans from `first` to `last` as noise; spans do not overlap; bad time keeps its reason."""
+    rows = list(zip(*bad, strict=True))
+    for number, begin, end in zip(segment, first, last, strict=True):
+        overlaps = (bad.segment == number) & (bad.last_sample >= begin) & (bad.first_sample <= end)
+        for known_first, known_last in [
+            *zip(bad.first_sample[overlaps], bad.last_sample[overlaps], strict=True),
+            (end + 1, end + 1),
+        ]:
+            if begin < known_first:
+                rows.append((number, begin, min(known_first - 1, end), "noise"))
+            begin = max(begin, known_last + 1)
+    rows.sort(key=lambda row: row[:2])
+    columns = zip(*rows, strict=True) if rows else ((), (), (), ())
+    return QualityWindows(*(np.array(c, dtype=old.dtype) for c, old in zip(columns, bad, strict=True)))
 
 
 def is_outside(bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.bool_]:

@@ -64,7 +64,15 @@ def test_analysable_time_is_what_is_left() -> None:
     """Analysable seconds are the samples outside all windows."""
     one = without_qrs()
     bad = quality.windows([one], FS_HZ)
-    assert quality.analysable_s([one], bad, FS_HZ) == (N_BLOCKS - 10) * BLOCK / FS_HZ
+    assert quality.analysable_s(one.n_samples, bad, FS_HZ) == (N_BLOCKS - 10) * BLOCK / FS_HZ
+
+
+def test_more_noise_leaves_known_windows_as_they_are() -> None:
+    """Added noise fills only time that was not bad yet; windows stay disjoint and ordered."""
+    bad = QualityWindows(np.zeros(1, dtype=np.int16), np.array([100]), np.array([199]), np.array(["missing"]))
+    more = quality.with_noise(bad, np.array([0, 1], dtype=np.int16), np.array([50, 10]), np.array([250, 20]))
+    rows = list(zip(*(column.tolist() for column in more), strict=True))
+    assert rows == [(0, 50, 99, "noise"), (0, 100, 199, "missing"), (0, 200, 250, "noise"), (1, 10, 20, "noise")]
 
 
 def test_beats_are_placed_against_windows_per_segment() -> None:
