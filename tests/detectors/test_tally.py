@@ -10,7 +10,7 @@ FS_HZ = 250.0
 
 
 def analysis(beat_times_s=(), classes="", bad=(), episodes=(), length_s=3600.0):
-    """An Analysis of one segment with the given beats, bad windows (from, to, reason) and episodes (kind, from, to, beats, rate)."""
+    """One segment with the given beats, bad windows (from, to, reason) and episodes (kind, from, to, beats, rate)."""
     sample = (np.asarray(beat_times_s, dtype=float) * FS_HZ).astype(np.int64)
     n = len(sample)
     analysable = np.ones(n, dtype=bool)
