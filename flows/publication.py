@@ -19,6 +19,7 @@ from flows import trends
 from flows.promotion import published_fingerprint
 from flows.register import Register
 from flows.settings import ChangeSettings, Settings
+from flows.visits import visits
 from warehouse.build import TrendBuild
 from warehouse.ledger import Ledger
 from warehouse.parts import Part
@@ -77,6 +78,7 @@ def built(
         measured = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
         for name, frame in trends.tables(**measured, change=settings.change, wear=settings.wear).items():
             build.add(name, frame)
+        build.add("visits", visits(people.visits, measured["wear_days"], settings.trial))
         yield build
 
 

@@ -1,7 +1,8 @@
 """The register: which patient wore which patch when, and what was done to the patient.
 
-Three files in register/: patients.csv, wears.csv and therapies.csv. Every error names file, row and column, what was
-found and what is expected. Codes only: a value with blanks could be a name and is refused.
+Files in register/: patients.csv, wears.csv, therapies.csv, and for trials visits.csv and arms.csv. Every error names
+file, row and column, what was found and what is expected. Codes only: a value with blanks could be a name and is
+refused.
 """
 
 from __future__ import annotations
@@ -10,7 +11,7 @@ import csv
 import difflib
 import re
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from datetime import date, datetime, time, timedelta
 from functools import cached_property
 from pathlib import Path
@@ -25,6 +26,7 @@ THERAPY_KINDS = ("medication_start", "medication_stop", "dose_change", "ablation
 _CODE = re.compile(r"\w[\w.+/:@=-]{0,63}")
 _DATE_TIMES = "a local date and time such as 2026-03-01 08:30, or a date"
 _LONGEST_DETAIL = 200
+_LONGEST_WINDOW_DAYS = 180
 
 
 class RegisterError(ValueError):
@@ -50,12 +52,13 @@ class Wear(NamedTuple):
 
 @dataclass(frozen=True)
 class Register:
-    """patients (patient_code, zone), wears (fields of Wear) and therapies (therapy_id, patient_code, therapy_kind,
-    therapy_detail, therapy_day) as frames."""
+    """patients (patient_code, zone), wears (fields of Wear), therapies (therapy_id, patient_code, therapy_kind,
+    therapy_detail, therapy_day) and visits (patient_code, visit, arm, target_day, window_days) as frames."""
 
     patients: pl.DataFrame
     wears: pl.DataFrame
     therapies: pl.DataFrame
+    visits: pl.DataFrame = field(default_factory=lambda: pl.DataFrame(schema=_VISIT_TYPES))
 
     @cached_property
     def _wears_by_device(self) -> dict[str, list[Wear]]:
@@ -96,10 +99,12 @@ def load(folder: Path, programme_zone: str) -> Register:
     patients = _patients(folder / "register" / "patients.csv", programme_zone)
     wears = _wears(folder / "register" / "wears.csv", patients)
     therapies = _therapies(folder / "register" / "therapies.csv", patients)
+    visits = _visits(folder / "register", patients)
     return Register(
         pl.DataFrame([(code, zone) for code, (zone, _) in patients.items()], schema=_PATIENT_TYPES, orient="row"),
         pl.DataFrame(wears, schema=_WEAR_TYPES, orient="row"),
         pl.DataFrame(therapies, schema=_THERAPY_TYPES, orient="row"),
+        pl.DataFrame(visits, schema=_VISIT_TYPES, orient="row"),
     )
 
 
@@ -120,6 +125,13 @@ _THERAPY_TYPES: dict[str, pl.DataType] = {
     "therapy_kind": pl.String(),
     "therapy_detail": pl.String(),
     "therapy_day": pl.Date(),
+}
+_VISIT_TYPES: dict[str, pl.DataType] = {
+    "patient_code": pl.String(),
+    "visit": pl.String(),
+    "arm": pl.String(),
+    "target_day": pl.Date(),
+    "window_days": pl.Int64(),
 }
 
 
@@ -163,6 +175,12 @@ class _Row(NamedTuple):
         if moment.tzinfo is not None:
             raise self.wrong(column, _DATE_TIMES + ", without a zone: the patient's zone holds")
         return moment
+
+    def whole(self, column: str, low: int, high: int) -> int:
+        text = self.values[column]
+        if not (text.isascii() and text.isdigit() and low <= int(text) <= high):
+            raise self.wrong(column, f"a whole number from {low} to {high}")
+        return int(text)
 
     def needed_local(self, column: str) -> datetime:
         moment = self.local(column)
@@ -297,6 +315,27 @@ def _therapies(path: Path, patients: dict[str, Any]) -> list[tuple[str, str, str
             row.known("therapy_kind", list(THERAPY_KINDS), ", ".join(THERAPY_KINDS)),
             row.values["therapy_detail"][:_LONGEST_DETAIL],
             row.needed_local("at_local").date(),
+        )
+        for row in rows
+    ]
+
+
+def _visits(folder: Path, patients: dict[str, Any]) -> list[tuple[str, str, str | None, date, int]]:
+    """Planned visits of a trial with the patient's arm, None where arms.csv has none."""
+    known = list(patients)
+    arm_rows = _rows(folder / "arms.csv", ("patient_code", "arm"), needed=False)
+    _unique(arm_rows, "patient_code", lambda row: row.known("patient_code", known, "patients.csv"))
+    arms = {row.values["patient_code"]: row.code("arm") for row in arm_rows}
+    rows = _rows(folder / "visits.csv", ("patient_code", "visit", "target_day", "window_days"), needed=False)
+    _unique(rows, "visit", lambda row: f"{row.known('patient_code', known, 'patients.csv')} {row.code('visit')}")
+    _unique(rows, "target_day", lambda row: f"{row.values['patient_code']} {row.needed_local('target_day').date()}")
+    return [
+        (
+            row.values["patient_code"],
+            row.values["visit"],
+            arms.get(row.values["patient_code"]),
+            row.needed_local("target_day").date(),
+            row.whole("window_days", 0, _LONGEST_WINDOW_DAYS),
         )
         for row in rows
     ]

@@ -69,6 +69,15 @@ class ChangeSettings:
 
 
 @dataclass(frozen=True)
+class TrialSettings:
+    """Wear rules of a trial's visits, and whether its arms are shown. Common practice, no standard exists."""
+
+    min_analysable_h_per_day: float = _setting(18.0, "analysable hours that make a day of a visit count", 0.05, 23)
+    min_days_per_visit: int = _setting(3, "such days that a visit needs", 1, 60)
+    unmasked: bool = _setting(False, "show the arms of register/arms.csv in published tables")
+
+
+@dataclass(frozen=True)
 class AttentionSettings:
     """Reference lines of the attention list; never a verdict."""
 
@@ -133,6 +142,7 @@ class Settings:
     detector: DetectorSettings = field(default_factory=DetectorSettings)
     wear: WearSettings = field(default_factory=WearSettings)
     change: ChangeSettings = field(default_factory=ChangeSettings)
+    trial: TrialSettings = field(default_factory=TrialSettings)
     attention: AttentionSettings = field(default_factory=AttentionSettings)
     inbox: InboxSettings = field(default_factory=InboxSettings)
     site: SiteSettings = field(default_factory=SiteSettings)

@@ -1,0 +1,80 @@
+"""The `visits` table of a trial: which wear days a visit has, and whether they meet the protocol.
+
+A day belongs to the visit whose target is nearest within that visit's window, at equal distance to the later one
+(common practice, no source). Missing visits keep their row; nothing is imputed. Comparing arms is left to the trial's
+statistician: counts and analysable hours stand in the table, so that any rate model can take them up.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import polars as pl
+
+from flows.settings import TrialSettings
+from warehouse.parts import polars_type
+from warehouse.schema import COLUMNS, PUBLISHED
+
+MASKED = "masked"
+_KEYS = ("patient_code", "visit")
+
+
+def visits(planned: pl.DataFrame, wear_days: pl.DataFrame, trial: TrialSettings) -> pl.DataFrame:
+    """Rows of `schema.PUBLISHED["visits"]` for `planned` visits (patient_code, visit, arm, target_day, window_days).
+
+    Arms are masked unless the programme's settings say otherwise.
+    """
+    days = _days_of_visits(planned)
+    spans = days.group_by(_KEYS).agg(first_day=pl.col("local_day").min(), last_day=pl.col("local_day").max())
+    worn = days.join(wear_days, on=["patient_code", "local_day"])
+    is_valid = pl.col("analysable_h") >= trial.min_analysable_h_per_day
+    counted = worn.group_by(_KEYS).agg(
+        wear_days=pl.len(),
+        valid_days=is_valid.sum(),
+        **{name: pl.col(name).filter(is_valid).sum() for name in ("analysable_h", "v_beats", "s_beats", "all_beats")},
+    )
+    arm = pl.col("arm") if trial.unmasked else pl.when(pl.col("arm").is_not_null()).then(pl.lit(MASKED))
+    table = (
+        planned.with_columns(arm=arm)
+        .join(spans, on=_KEYS, how="left")
+        .join(counted, on=_KEYS, how="left")
+        .with_columns(pl.col("wear_days", "valid_days", "analysable_h").fill_null(0))
+        .with_columns(
+            meets_protocol=pl.col("valid_days") >= trial.min_days_per_visit,
+            v_burden_pct=_ratio(100 * pl.col("v_beats"), "all_beats"),
+            s_burden_pct=_ratio(100 * pl.col("s_beats"), "all_beats"),
+            v_per_h=_ratio(pl.col("v_beats"), "analysable_h"),
+        )
+        .sort("patient_code", "target_day", "visit")
+    )
+    reasons = [_reason(row, trial) for row in table.iter_rows(named=True)]
+    types = {name: polars_type(COLUMNS[name].type) for name in PUBLISHED["visits"].columns}
+    return table.with_columns(reason=pl.Series(reasons, dtype=pl.String)).select(
+        pl.col(name).cast(kind) for name, kind in types.items()
+    )
+
+
+def _days_of_visits(planned: pl.DataFrame) -> pl.DataFrame:
+    """One row per patient and calendar day within a window, with the visit it belongs to."""
+    window = pl.duration(days=pl.col("window_days"))
+    return (
+        planned.with_columns(local_day=pl.date_ranges(pl.col("target_day") - window, pl.col("target_day") + window))
+        .explode("local_day")
+        .with_columns(distance=(pl.col("local_day") - pl.col("target_day")).abs())
+        .sort("patient_code", "local_day", "distance", "target_day", descending=[False, False, False, True])
+        .unique(["patient_code", "local_day"], keep="first", maintain_order=True)
+        .select(*_KEYS, "local_day")
+    )
+
+
+def _ratio(above: pl.Expr, below: str) -> pl.Expr:
+    return pl.when(pl.col(below) > 0).then(above / pl.col(below))
+
+
+def _reason(row: Mapping[str, Any], trial: TrialSettings) -> str:
+    if row["wear_days"] == 0:
+        return "No wear within the window."
+    needed = f"{trial.min_days_per_visit} with at least {trial.min_analysable_h_per_day:g} analysable hours are needed"
+    verb = "meets" if row["meets_protocol"] else "fails"
+    return f"{row['valid_days']} of {row['wear_days']} wear days count; {needed}: {verb} the protocol."
