@@ -239,10 +239,20 @@ COLUMNS: dict[str, Column] = _dictionary(
     ),
     ("expected_regression_pct", "DOUBLE", "%", "Fall that regression to the mean brings if the baseline was chosen."),
     ("recurrence_day", "DATE", "", "First day on which the burden is back beyond chance after it had fallen."),
-    ("dependence", "VARCHAR", "", "Ectopy against heart rate by the hour: follows_rate, opposes_rate, independent, unknown."),
+    (
+        "dependence",
+        "VARCHAR",
+        "",
+        "Ectopy against heart rate by the hour: follows_rate, opposes_rate, independent, unknown.",
+    ),
     ("hourly_r", "DOUBLE", "", "Correlation of ventricular beats per hour with the mean heart rate, baseline hours."),
     ("rate_change_pct", "DOUBLE", "%", "Change of the mean heart rate from baseline to after."),
-    ("expected_from_rate_pct", "DOUBLE", "%", "Change of ectopy that goes with such a change untreated; NULL out of range."),
+    (
+        "expected_from_rate_pct",
+        "DOUBLE",
+        "%",
+        "Change of ectopy that goes with such a change untreated; NULL out of range.",
+    ),
     ("equal_rate_ratio", "DOUBLE", "", "After over baseline of ventricular beats per hour at equal heart rate."),
     ("equal_rate_ratio_low", "DOUBLE", "", "Lower end of the 95 % interval of that ratio."),
     ("equal_rate_ratio_high", "DOUBLE", "", "Upper end of the 95 % interval of that ratio."),
@@ -375,7 +385,8 @@ _DELIVERY = (
 )  # fmt: skip
 _RECORDING = (
     "recording_id", "device_serial", "start_utc", "end_utc", "zone", "zone_source", "fs_hz", "lead", "mv_per_count",
-    "count_at_zero_mv", "rail_low_count", "rail_high_count", "missing_count", "segment_count", "sample_count", "recorded_h", "findings",
+    "count_at_zero_mv", "rail_low_count", "rail_high_count", "missing_count", "segment_count", "sample_count",
+    "recorded_h", "findings",
 )  # fmt: skip
 
 # Tables of the lake: parts land here, keyed by recording or by run, and are never changed in place.
