@@ -125,11 +125,11 @@ def gather(
         likeness = np.concatenate([np.empty(0, dtype=np.float32), *(part.likeness for part in parts[first_part:])])
         seen.append(quality.look(segment.n_samples, chunks.join_blocks(blocks), working, likeness))
     bad = quality.windows(seen, scale.fs_hz)
-    found = beats.join(parts)
+    every = beats.join(parts)
     parts.clear()
     lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
-    artefact = beats.is_artefact(found, timing_of(found, bad, lengths, scale.fs_hz)[1])
-    return Gathered(found.keep(~artefact), book, bad, lengths, scale.fs_hz)
+    artefact = beats.is_artefact(every, timing_of(every, bad, lengths, scale.fs_hz)[1])
+    return Gathered(every.keep(~artefact), book, bad, lengths, scale.fs_hz)
 
 
 def _enter_full_batches(
@@ -138,8 +138,8 @@ def _enter_full_batches(
     """Enter the waiting beats by whole batches and return the rest, so that batches do not depend on the cuts."""
     beats_now = chunks.join(waiting)
     while beats_now.working.size >= BATCH_BEATS:
-        parts.append(_enter(book, segment, chunks.ChunkBeats(*(column[:BATCH_BEATS] for column in beats_now))))
-        beats_now = chunks.ChunkBeats(*(column[BATCH_BEATS:] for column in beats_now))
+        parts.append(_enter(book, segment, beats_now.part(slice(BATCH_BEATS))))
+        beats_now = beats_now.part(slice(BATCH_BEATS, None))
     return [beats_now]
 
 
@@ -187,7 +187,7 @@ def _with_doubtful_runs(
     labels: classify.Labels,
     is_analysable: NDArray[np.bool_],
 ) -> QualityWindows:
-    """The windows and doubtful runs as noise, each from half-way after the beat before to half-way to the beat after."""
+    """The windows, and doubtful runs as noise: from half-way to the beat before to half-way to the beat after."""
     starts = np.isnan(timing.before_ms)
     runs = doubt.doubtful_runs(labels.beat_class == "V", starts, found.family, is_analysable)
     before, after = np.maximum(runs.first - 1, 0), np.minimum(runs.last, sample.size - 1)

@@ -1,7 +1,7 @@
 """Cutting a segment into chunks with guards, and finding beats and noise in one chunk.
 
-A chunk is cut on whole blocks of the QRS level and read with a guard on both sides that is longer than the reach of every
-rule, so that a beat is the same beat wherever the cuts fall and a beat near a cut is counted once.
+A chunk is cut on whole blocks of the QRS level and read with a guard on both sides that is longer than the reach of
+every rule, so that a beat is the same beat wherever the cuts fall and a beat near a cut is counted once.
 """
 
 from __future__ import annotations
@@ -54,6 +54,10 @@ class ChunkBeats(NamedTuple):
     energy: NDArray[np.float32]
     shape_mv: NDArray[np.float32]  # shape (n_beats, SHAPE_LENGTH)
     is_clean: NDArray[np.bool_]  # little noise near by
+
+    def part(self, rows: slice) -> ChunkBeats:
+        """Some of the beats, as views."""
+        return ChunkBeats(self.working[rows], self.energy[rows], self.shape_mv[rows], self.is_clean[rows])
 
 
 def check_scale(scale: Scale) -> None:
@@ -130,8 +134,8 @@ def _silence(energy: NDArray[np.float32], is_missing: NDArray[np.bool_]) -> None
 def _shapes(framed: NDArray[np.float32], working: NDArray[np.float64]) -> NDArray[np.float32]:
     """Stretch around each beat, shape (n_beats, SHAPE_LENGTH), from the signal with a frame on both sides.
 
-    The middle, from which shapes are compared, lies at the beat's exact position by cubic interpolation; the rest at the
-    nearest sample, which is good enough for an average.
+    The middle, from which shapes are compared, lies at the beat's exact position by cubic interpolation; the rest at
+    the nearest sample, which is good enough for an average.
     """
     whole = np.floor(working).astype(np.int64)
     part = (working - whole).astype(np.float32)[:, None]

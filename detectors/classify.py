@@ -1,9 +1,10 @@
 """Which class each beat has: families first, single beats second.
 
-A family is judged by its shape against the recording's normal families and by its timing; the weights are a small logistic
-model (WEIGHTS). Beats that belong to no family are judged the same way, as a family of one. Supraventricular beats are early
-beats of normal shape. After the idea of de Chazal et al., IEEE Trans Biomed Eng 2004;51:1196 (doi:10.1109/TBME.2004.827359)
-that shape and RR together separate the classes. Differs from it: one lead, families instead of beats, rules for S.
+A family is judged by its shape against the recording's normal families and by its timing; the weights are a small
+logistic model (WEIGHTS). Beats that belong to no family are judged the same way, as a family of one. Supraventricular
+beats are early beats of normal shape. After the idea of de Chazal et al., IEEE Trans Biomed Eng 2004;51:1196
+(doi:10.1109/TBME.2004.827359) that shape and RR together separate the classes. Differs from it: one lead, families
+instead of beats, rules for S.
 """
 
 from __future__ import annotations
@@ -128,8 +129,9 @@ def family_habits(timing: Timing, member: families.Membership, n_families: int) 
 def compare_shapes(habits: Habits, family_shape_mv: NDArray[np.float32]) -> Shapes:
     """Likeness of all families, their widths, and which are normal.
 
-    The main normal family is the biggest whose beats are not typically early. Others join when they look almost the same,
-    when they are as narrow and keep time as well, or when they come in long stretches on time (bundle-branch block).
+    The main normal family is the biggest whose beats are not typically early. Others join when they look almost the
+    same, when they are as narrow and keep time as well, or when they come in long stretches on time (bundle-branch
+    block).
     """
     shapes = Shapes(
         families.likeness(family_shape_mv),
@@ -270,7 +272,7 @@ def supraventricular(timing: Timing, is_v: NDArray[np.bool_]) -> NDArray[np.bool
 def _fast(
     timing: Timing, is_plain: NDArray[np.bool_], may_begin: NDArray[np.bool_], may_be: NDArray[np.bool_]
 ) -> NDArray[np.bool_]:
-    """Beats of a stretch of short intervals that begins at once, outside irregular rhythm; a single beat is a stretch."""
+    """Beats of stretches of short intervals that begin at once, outside irregular rhythm; one beat is a stretch."""
     regular = rhythm.irregularity(timing.before_ms, is_plain) < AF_IRREGULARITY
     last_ms = np.concatenate([timing.before_ms[:1], timing.before_ms[:-1]])
     onset = may_begin & regular & (timing.before_ms < S_SUDDEN * last_ms)

@@ -1,6 +1,7 @@
 """How likely a label is right, from figures of the reference recordings (development figures, not a promise).
 
-Fitted on the pooled beats of the 22 reference records in analysable time; the accuracy report shows the reliability table.
+Fitted on the pooled beats of the 22 reference records in analysable time; the accuracy report shows the reliability
+table.
 """
 
 from __future__ import annotations

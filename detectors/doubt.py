@@ -1,4 +1,4 @@
-"""Ventricular runs that are more likely noise: made of shapes that belong to noise, or of shapes that nothing repeats."""
+"""Ventricular runs that are more likely noise: of shapes that belong to noise, or that nothing repeats."""
 
 from __future__ import annotations
 
@@ -28,8 +28,9 @@ def doubtful_runs(
 ) -> Runs:
     """Ventricular runs of three or more beats of which at least half have a doubtful shape.
 
-    `starts` marks beats that do not follow the one before in time. A real run repeats a shape, its own or one that occurs
-    elsewhere; a burst of electrode motion makes a new shape with every beat, or shapes that come back in noise only.
+    `starts` marks beats that do not follow the one before in time. A real run repeats a shape, its own or one that
+    occurs elsewhere; a burst of electrode motion makes a new shape with every beat, or shapes that come back in noise
+    only.
     """
     is_doubtful = _has_doubtful_shape(family, is_analysable)
     first, last = stretches(is_v, starts)

@@ -1,8 +1,8 @@
-"""Shape families: beats that look alike, found by matrix products against few prototypes, carried through the recording.
+"""Shape families: beats that look alike, found by matrix products against few averaged shapes.
 
-Beats come in batches. Each batch is matched with the families known so far; what is left may found new ones. A family asks
-of its beats a correlation that depends on how little its own beats scatter, so that a clean recording separates shapes that
-a noisy one must take for the same.
+Beats come in batches. Each batch is matched with the families known so far; what is left may found new ones. A family
+asks of its beats a correlation that depends on how little its own beats scatter, so that a clean recording separates
+shapes that a noisy one must take for the same.
 """
 
 from __future__ import annotations

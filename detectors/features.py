@@ -44,9 +44,9 @@ def spread_ms(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
 def qrs_width_ms(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
     """QRS width of averaged beats, shape (n_families,), ms.
 
-    From the steepest point outwards on both sides while the slope stays above 12 % of the steepest, pauses of up to 48 ms
-    included; on values interpolated to 2 ms, within 120 ms before and 160 ms after the R peak. Meant for averages: noise
-    widens it. The 12 % is ours; no standard fixes the onset of an automatically measured QRS.
+    From the steepest point outwards on both sides while the slope stays above 12 % of the steepest, pauses of up to
+    48 ms included; on values interpolated to 2 ms, within 120 ms before and 160 ms after the R peak. Meant for
+    averages: noise widens it. The 12 % is ours; no standard fixes the onset of an automatically measured QRS.
     """
     n_shapes, step_ms = shape_mv.shape[0], 2.0
     coarse = np.abs(np.diff(shape_mv[:, _at(-120) : _at(160)], axis=1))

@@ -21,8 +21,8 @@ def is_fusion(
 ) -> bool:
     """True when a shape is a sum of positive parts of a normal and of one of several ventricular shapes.
 
-    `child_mv` and `normal_mv` have shape (SHAPE_LENGTH,), `ventricular_mv` (n_families, SHAPE_LENGTH). Least squares over
-    the QRS at every lag of the ventricular parent.
+    `child_mv` and `normal_mv` have shape (SHAPE_LENGTH,), `ventricular_mv` (n_families, SHAPE_LENGTH). Least squares
+    over the QRS at every lag of the ventricular parent.
     """
     begin = SHAPE_BEFORE - QRS.before
     child, normal = (_centred(shape[begin : begin + QRS.length]) for shape in (child_mv, normal_mv))

@@ -1,9 +1,9 @@
 """Where the QRS complexes are: slope energy, a level that follows the signal, T-wave and gap rules.
 
-Everything has a bounded reach in time (see GUARD_S), so chunks with that much overlap give the same beats as one long read.
-After Pan & Tompkins, IEEE Trans Biomed Eng 1985;32:230 (doi:10.1109/TBME.1985.325532). Differs from it: second difference
-instead of band-pass and derivative, absolute value instead of square, the level is a median of block maxima on both sides
-instead of a running estimate, so that one huge beat or a burst does not deafen the detector.
+Everything has a bounded reach in time (see GUARD_S), so chunks with that much overlap give the same beats as one long
+read. After Pan & Tompkins, IEEE Trans Biomed Eng 1985;32:230 (doi:10.1109/TBME.1985.325532). Differs from it: second
+difference instead of band-pass and derivative, absolute value instead of square, the level is a median of block
+maxima on both sides instead of a running estimate, so that one huge beat or a burst does not deafen the detector.
 """
 
 from __future__ import annotations
@@ -69,7 +69,8 @@ def envelope(signal_mv: NDArray[np.float32]) -> Envelope:
 def block_level(energy: NDArray[np.float32], is_usable: NDArray[np.bool_]) -> NDArray[np.float32]:
     """QRS level per block: median of block maxima near by, held near the median of the minute.
 
-    `energy` has whole blocks, `is_usable` shape (n_blocks,) leaves flat or missing blocks out. Returns shape (n_blocks,), mV.
+    `energy` has whole blocks, `is_usable` shape (n_blocks,) leaves flat or missing blocks out. Returns shape
+    (n_blocks,), mV.
     """
     highest = energy.reshape(-1, BLOCK_CELLS).max(axis=1)
     highest = np.where(is_usable, highest, np.float32(np.nan))
@@ -174,7 +175,7 @@ def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[n
 
 
 def _usual_t_wave(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[np.float32]:
-    """Energy of the T waves near each gap over that of their QRS: what an ectopic beat that looks like one must exceed."""
+    """Energy of the T waves near each gap over their QRS: what an ectopic beat that looks like one must exceed."""
     slot = np.searchsorted(candidates.cell[beat], candidates.cell, side="right") - 1
     after_s = (candidates.cell - candidates.cell[beat[slot]]) * (CELL / WORKING_FS_HZ)
     is_t = (slot >= 0) & (after_s > 0) & (after_s < T_WAVE_LATEST_S)
@@ -185,7 +186,7 @@ def _usual_t_wave(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[np.floa
 
 
 def _local_median(values: NDArray[np.generic], gap: NDArray[np.int64]) -> NDArray[np.generic]:
-    """Median of each value and the two on either side, not across a gap of FAR_S, so that reach in time stays bounded."""
+    """Median of each value and the two on either side, not across a gap of FAR_S: reach in time stays bounded."""
     index = np.arange(gap.size)
     is_far = gap > FAR_S * WORKING_FS_HZ / CELL
     first = np.maximum.accumulate(np.where(is_far, index, 0))
@@ -196,7 +197,7 @@ def _local_median(values: NDArray[np.generic], gap: NDArray[np.int64]) -> NDArra
 
 
 def fiducials(slope: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np.float64]:
-    """Working position of the steepest bend within 64 ms of each energy peak, refined by a parabola. Shape (n_beats,)."""
+    """Working position of the steepest bend within 64 ms of each energy peak, by a parabola, shape (n_beats,)."""
     reach = 2 * CELL
     begin = np.clip(cell * CELL + CELL // 2 - reach, 1, slope.size - 2 * reach - 2)
     rows = np.abs(sliding_window_view(slope, 2 * reach + 1)[begin])
@@ -216,8 +217,8 @@ def is_interloper(
 ) -> NDArray[np.bool_]:
     """Detections that are no QRS, judged once all are known, shape (n_beats,).
 
-    Only beats of rare shape: those off time with far less slope than both neighbours, and weak ones between neighbours that keep
-    time without them (P and T waves, artefacts).
+    Only beats of rare shape: those off time with far less slope than both neighbours, and weak ones between
+    neighbours that keep time without them (P and T waves, artefacts).
     """
     if energy.size < 3:
         return np.zeros(energy.size, dtype=bool)

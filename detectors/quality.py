@@ -168,7 +168,7 @@ def has_gap_before(bad: QualityWindows, segment: NDArray[np.int16], sample: NDAr
 def _beats_between(
     bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]
 ) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
-    """First beat in each window and first beat after it, as rows of the beats, which are ordered by segment and sample."""
+    """First beat in each window and first beat after it, as rows of the ordered beats."""
     begin, end = np.empty((2, bad.segment.size), dtype=np.int64)
     edges = np.searchsorted(segment, np.arange(int(segment[-1]) + 2)) if segment.size else np.zeros(1, dtype=np.int64)
     for row, number in enumerate(np.minimum(bad.segment, edges.size - 1)):

@@ -1,4 +1,4 @@
-"""Timing of beats: RR intervals, the usual interval near by, pauses, R-on-T, fast stretches, irregularity. No samples."""
+"""Timing of beats: RR intervals, the usual interval, pauses, R-on-T, fast stretches, irregularity. No samples."""
 
 from __future__ import annotations
 
@@ -22,7 +22,7 @@ ESCAPE_LIMIT = 1.15  # of the usual interval
 def rr_intervals_ms(
     segment: NDArray[np.integer], sample: NDArray[np.floating], fs_hz: float, has_gap_before: NDArray[np.bool_]
 ) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
-    """RR before and after each beat, ms, shape (n_beats,), NaN at the ends of a segment and across a gap in the signal."""
+    """RR before and after each beat, ms, shape (n_beats,), NaN at the ends of a segment and across a gap."""
     before = np.full(sample.size, np.nan, dtype=np.float32)
     after = before.copy()
     if sample.size > 1:
@@ -37,9 +37,9 @@ def rr_intervals_ms(
 def usual_rr_ms(before_ms: NDArray[np.float32], after_ms: NDArray[np.float32]) -> NDArray[np.float32]:
     """Usual interval near each beat, shape (n_beats,), ms; 800 ms when nothing is known.
 
-    Median over about 12 beats on either side of the mean of the intervals before and after a beat: that mean stays at the
-    sinus cycle in bigeminy with full pauses, where the median interval does not. Computed at every fourth beat and
-    interpolated: rhythm changes more slowly than that.
+    Median over about 12 beats on either side of the mean of the intervals before and after a beat: that mean stays at
+    the sinus cycle in bigeminy with full pauses, where the median interval does not. Computed at every fourth beat
+    and interpolated: rhythm changes more slowly than that.
     """
     return _usual(before_ms, after_ms, np.zeros(before_ms.size, dtype=bool))
 
@@ -107,7 +107,7 @@ def pause_kinds(
 
 
 def r_on_t_index(coupling_ms: NDArray[np.float32], usual_ms: NDArray[np.float32]) -> NDArray[np.float32]:
-    """Coupling interval over the QT interval estimated from the usual RR, shape (n_beats,); below 1 the beat meets the T wave.
+    """Coupling interval over the QT interval estimated from the usual RR, shape (n_beats,); below 1 on the T wave.
 
     QT after Fridericia (cube root of RR). Index: Winkle 1977. NaN where there is no coupling interval.
     """
@@ -151,7 +151,7 @@ def fast_stretches(
 
 
 def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_beats: int = 24) -> NDArray[np.float32]:
-    """Share of successive RR differences above 8 % near each beat, shape (n_beats,), 0 to 1; high in atrial fibrillation.
+    """Share of successive RR differences above 8 % near each beat, shape (n_beats,); high in atrial fibrillation.
 
     Only intervals between plain (not ectopic) beats count; 0 where fewer than 8 are near.
     """

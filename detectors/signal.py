@@ -1,7 +1,7 @@
 """From stored counts to the working signal: one rate, millivolts, exact wherever a chunk begins.
 
-The working signal is the average over consecutive boxes of 8 ms, whatever the stored rate. A box average needs no filter
-state, so a value depends on its own samples only and cutting a segment anywhere cannot change it.
+The working signal is the average over consecutive boxes of 8 ms, whatever the stored rate. A box average needs no
+filter state, so a value depends on its own samples only and cutting a segment anywhere cannot change it.
 """
 
 from __future__ import annotations

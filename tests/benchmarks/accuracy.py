@@ -1,8 +1,8 @@
 """Accuracy on annotated records: with the shipped weights, and with weights refitted without the record that is scored.
 
-Run from the checkout: python -m tests.benchmarks.accuracy [FOLDER] [--print-weights]
-Only the weights of the family model are fitted; the limits of the rules were set on the same records and are the same in
-both columns, so even the second is a development figure.
+Run from the checkout: python -m tests.benchmarks.accuracy [FOLDER] [--print-weights] Only the weights of the family
+model are fitted; the limits of the rules were set on the same records and are the same in both columns, so even the
+second is a development figure.
 """
 
 from __future__ import annotations
@@ -75,7 +75,7 @@ def _true_classes(labelled: Labelled, sample: NDArray[np.int64]) -> NDArray[np.s
 
 
 def fit(records: list[Record]) -> NDArray[np.float64]:
-    """Ridge logistic regression on families; big families weigh little more than small ones, both classes weigh alike."""
+    """Ridge logistic regression on families; big families weigh little more than small ones, both classes alike."""
     x, y, weight = [], [], []
     for record in records:
         total = record.ventricular + record.other

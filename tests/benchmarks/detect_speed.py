@@ -1,15 +1,10 @@
 """Speed of the whole analysis against a compiled QRS-only detector on the same signal, one thread, one process.
 
-Run from the checkout: python -m tests.benchmarks.detect_speed [HOURS]
+Run from the checkout: OMP_NUM_THREADS=1 OPENBLAS_NUM_THREADS=1 python -m tests.benchmarks.detect_speed [HOURS]
 Prints CPU milliseconds per hour of 250 Hz signal of both, in turn, and the ratio; only the ratio is worth comparing.
 """
 
 from __future__ import annotations
-
-import os
-
-for variable in ("OMP_NUM_THREADS", "OPENBLAS_NUM_THREADS"):
-    os.environ[variable] = "1"  # before numpy is imported
 
 import sys
 import time

@@ -33,7 +33,7 @@ def codes(ecg: np.ndarray) -> list[str]:
     ],
 )
 def test_lead_is_judged_by_its_normal_beat(r_mv: float, s_mv: float, t_mv: float, expected: list[str]) -> None:
-    """An rS complex with an upright T wave is not limb-like, one with its T wave is upside down, a tiny one is small."""
+    """An rS complex with an upright T wave is not limb-like, with its T wave it is upside down, a tiny one is small."""
     assert codes(lead(r_mv, s_mv, t_mv)) == expected
 
 

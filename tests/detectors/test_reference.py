@@ -1,4 +1,4 @@
-"""Floors on annotated records; the figures may only improve. Scored as ANSI/AAMI EC57 asks, first five minutes left out."""
+"""Floors on annotated records, scored as ANSI/AAMI EC57 asks; the figures may only improve."""
 
 from __future__ import annotations
 
@@ -13,8 +13,8 @@ from detectors.scoring import compare_beats, statistics
 from flows import score_record
 from flows.score_record import Labelled
 
-# Source: labels of the MIT-BIH Arrhythmia Database (Moody & Mark, IEEE Eng Med Biol 2001;20:45). The floors are a little
-# under what the detector reaches: a guard against loss, not a claim.
+# Source: labels of the MIT-BIH Arrhythmia Database (Moody & Mark, IEEE Eng Med Biol 2001;20:45).
+# The floors are a little under what the detector reaches: a guard against loss, not a claim.
 FLOORS = {
     # record: QRS Se, QRS +P, V Se, V +P
     "106": (99.8, 99.8, 99.0, 99.0),
@@ -47,7 +47,7 @@ def test_accuracy_does_not_fall_under_its_floor(reference_ecg: Path, name: str) 
 
 
 def test_real_arrhythmia_is_not_gated_away(reference_ecg: Path) -> None:
-    """Frequent ventricular beats, long runs and fibrillation stay analysable: nine tenths of the time and of the V beats."""
+    """Frequent ventricular beats, long runs and fibrillation stay analysable for nine tenths of time and beats."""
     for name in ("119", "201", "208", "223"):
         record, analysis = analysed(reference_ecg, name)
         assert analysis.analysable_s > 0.9 * record.signal.n_samples / float(record.signal.rate), name
