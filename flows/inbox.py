@@ -22,6 +22,7 @@ from flows.settings import InboxSettings
 from warehouse.parts import write_whole
 
 _LARGEST_HEADER_BYTES = 2**20
+_LATEST_NS = 253_402_300_799 * 10**9  # end of the year 9999, the last that a date can hold
 
 
 @dataclass(frozen=True)
@@ -38,7 +39,8 @@ class Candidate:
     @property
     def received_utc(self) -> datetime:
         """Modification time of the latest file, naive UTC."""
-        return datetime.fromtimestamp(self.mtime_ns // 1000 / 1e6, UTC).replace(tzinfo=None)
+        seconds, rest_ns = divmod(min(max(self.mtime_ns, 0), _LATEST_NS), 10**9)
+        return datetime.fromtimestamp(seconds, UTC).replace(microsecond=rest_ns // 1000, tzinfo=None)
 
 
 def look(inbox: Path, settings: InboxSettings, now_s: float) -> list[Candidate]:
@@ -192,7 +194,7 @@ def _orphan(path: Path) -> Declined | None:
 def _checked(candidate: Candidate, settings: InboxSettings, now_s: float) -> Candidate:
     """Add what waiting rules say: quiet time, done marker, and how long a part may be missing."""
     problem = candidate.problem
-    changed_s = max((_changed_s(path) for path in candidate.files), default=now_s)
+    changed_s = max((_changed_s(path, now_s) for path in candidate.files), default=now_s)
     if isinstance(problem, Waits) and problem.code == "waiting_for_missing_part":
         if now_s - changed_s >= settings.part_wait_h * 3600:
             problem = Refused("part_missing", problem.sentence)
@@ -214,10 +216,14 @@ def _checked(candidate: Candidate, settings: InboxSettings, now_s: float) -> Can
     )
 
 
-def _changed_s(path: Path) -> float:
-    """Last change of content or of the directory entry: a file copied in with its old date is new here."""
+def _changed_s(path: Path, now_s: float) -> float:
+    """Last change of content or of the directory entry: a file copied in with its old date is new here.
+
+    A time ahead of the clock came with the file and says nothing about its arrival.
+    """
     found = _stat(path)
-    return max(found.st_mtime, found.st_ctime) if found else 0.0
+    times = (found.st_mtime, found.st_ctime) if found else ()
+    return max((time for time in times if time <= now_s), default=0.0)
 
 
 def _is_marked(path: Path, marker: str) -> bool:

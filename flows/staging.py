@@ -72,7 +72,7 @@ def _copied(path: Path, copy: Path | None, passed: Callable[[int], None]) -> str
     view = memoryview(buffer)
     with source, copy.open("wb", buffering=0) if copy else contextlib.nullcontext() as target:
         before = _state(path)
-        while n := source.readinto(buffer):
+        while n := _read(source, buffer):
             digest.update(view[:n])
             if target is not None:
                 _write_all(target, view[:n])
@@ -80,6 +80,13 @@ def _copied(path: Path, copy: Path | None, passed: Callable[[int], None]) -> str
         if _state(path) != before:
             raise Waits("still_being_written", "the file changed while it was copied. Run again when it is complete.")
     return digest.hexdigest()
+
+
+def _read(source: FileIO, buffer: bytearray) -> int:
+    try:
+        return source.readinto(buffer)
+    except OSError:
+        raise Waits("not_readable", "the file could not be read to its end. Check its disk, then run again.") from None
 
 
 def _write_all(target: FileIO, view: memoryview) -> None:

@@ -19,7 +19,7 @@ _NOT_TOLD = "not told"
 
 
 class Wearing(NamedTuple):
-    """An opened file with its place in the register; findings are added and marks are cleared of the person's words."""
+    """An opened file with its place in the register; findings are added, marks and lead cleared of the person's words."""
 
     opened: Opened
     device_serial: str
@@ -50,7 +50,9 @@ def wearing_of(opened: Opened, stems: Sequence[str], register: Register, clock_z
         )
     words = set(opened.patient_words) - {named}
     marks = tuple(mark._replace(text=without_words(mark.text, words)) for mark in opened.marks)
-    return Wearing(replace(opened, findings=(*opened.findings, *found), marks=marks), serial, matched, file_zone)
+    lead = without_words(opened.lead, words)
+    kept = replace(opened, findings=(*opened.findings, *found), marks=marks, lead=lead)
+    return Wearing(kept, serial, matched, file_zone)
 
 
 def _device(opened: Opened, stems: Sequence[str], register: Register) -> tuple[str | None, list[Finding]]:

@@ -202,3 +202,28 @@ def test_file_names_are_shown_only_when_made_of_codes(name, shown):
 def test_words_of_the_person_are_masked_in_marks():
     """Words of the patient field are dropped from diary text, in any case."""
     assert without_words("JANE felt faint", {"Jane_Doe", "X"}) == "— felt faint"
+
+
+@pytest.mark.parametrize("mtime_s", [-5, 10**12])
+def test_impossible_file_times_do_no_harm(programme, make_edf, mtime_s):
+    """A modification time before 1970 or far ahead is held at the ends of the calendar."""
+    os.utime(programme.deliver("SRL-1001.edf", make_edf()), (mtime_s, mtime_s))
+    assert programme.run().accepted == 1
+
+
+def test_a_file_that_cannot_be_read_waits(programme, make_edf, monkeypatch):
+    """A read error leaves the delivery in the inbox with a clear word; the others are taken."""
+    from flows import staging
+
+    real = staging._copied
+
+    def broken(path, *args):
+        if path.name == "1.edf":
+            raise staging.Waits("not_readable", "the file could not be read to its end.")
+        return real(path, *args)
+
+    monkeypatch.setattr(staging, "_copied", broken)
+    programme.deliver("1.edf", make_edf())
+    programme.deliver("SRL-1001.edf", make_edf(), minute=1)
+    programme.run()
+    assert programme.deliveries() == {"1.edf": ("waiting", "not_readable"), "SRL-1001.edf": ("accepted", None)}
