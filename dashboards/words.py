@@ -79,6 +79,13 @@ def number(value: float | int | None, digits: int = 0) -> str:
     return f"{value:,.{digits}f}".replace(",", THIN_SPACE).replace("-", "\N{MINUS SIGN}")
 
 
+def significant(value: float | None, figures: int = 2) -> str:
+    """Return a number with so many significant figures, never in powers of ten."""
+    if value is None or not math.isfinite(value) or value == 0:
+        return number(value if value is not None and math.isfinite(value) else None)
+    return number(value, max(figures - 1 - math.floor(math.log10(abs(value))), 0))
+
+
 def signed(value: float | int | None, digits: int = 0) -> str:
     """Return a number with its sign always shown."""
     text = number(value, digits)
@@ -145,6 +152,7 @@ def sentence(text: str) -> str:
 
 FILTERS: dict[str, Callable[..., Any]] = {
     "number": number,
+    "significant": significant,
     "signed": signed,
     "day": day,
     "clock": clock,

@@ -24,6 +24,13 @@ def test_numbers_set_thousands_apart_and_say_when_missing():
     assert words.number(0) == "0"
 
 
+def test_small_ratios_keep_two_figures():
+    """Ratios near 0 keep their size, large ones lose no more than decimals."""
+    said = {0.0025: "0.0025", 0.034: "0.034", 0.187: "0.19", 1.04: "1.0", 23.12: "23", 234.5: "234", 0.0: "0"}
+    assert {value: words.significant(value) for value in said} == said
+    assert words.significant(None) == words.significant(float("inf")) == words.MISSING
+
+
 def test_times_are_local_and_name_their_offset():
     """An instant is shown on the clock of its zone with the offset then in force."""
     # Source: tz database, Atlantic/Azores is at UTC-01:00 in winter
