@@ -28,7 +28,7 @@ from flows.quarantine import quarantine, remove
 from flows.readers.archive import Limits, is_archive
 from flows.readers.codes import Declined, Refused, Waits
 from flows.readers.identify import head_of, open_delivery
-from flows.readers.recording import Opened, Site
+from flows.readers.recording import NO_SITE, Opened, Site
 from flows.recordings import Recordings
 from flows.register import Register
 from flows.settings import Settings
@@ -338,14 +338,15 @@ def _hash_or_none(candidate: Candidate) -> str:
         return ""
 
 
-def inspect(path: Path) -> dict[str, Any]:
+def inspect(path: Path, settings: Settings | None = None) -> dict[str, Any]:
     """What a file holds and what would be kept of it, without taking it in. Plain values only.
 
-    Words of the person are counted, never shown.
+    With a programme's settings its site's layout holds. Words of the person are counted, never shown.
     """
+    site = Site(**vars(settings.site)) if settings else NO_SITE
     with tempfile.TemporaryDirectory() as scratch:
         try:
-            return _inspected(open_delivery([path], scratch=Path(scratch) / "unpacked"))
+            return _inspected(open_delivery([path], site, scratch=Path(scratch) / "unpacked"))
         except Declined as declined:
             return {"would_be": QUARANTINED, "code": declined.code, "reason": declined.sentence}
 
