@@ -26,6 +26,7 @@ LAYOUT = 1
 """Number of the lake's layout; raised when an older program could no longer read what a newer one wrote."""
 
 COMPACT_FILES = 40
+_PATTERN_CHARACTERS = "*?[]{}%"
 
 _ROW_SCHEMA: dict[str, pl.DataType] = {
     "commit": pl.Int64(),
@@ -117,8 +118,13 @@ class Ledger:
     def _read(self) -> pl.DataFrame:
         version = self.version
         if self._rows[0] != version:
-            files = self._delta.file_uris()
-            rows = pl.read_parquet(files).select(list(_ROW_SCHEMA)) if files else pl.DataFrame(schema=_ROW_SCHEMA)
+            # Only the names: the addresses are percent-encoded, and all files lie in the ledger's own folder.
+            files = [self._lake / "ledger" / Path(uri).name for uri in self._delta.file_uris()]
+            rows = (
+                pl.read_parquet(files, glob=False).select(list(_ROW_SCHEMA))
+                if files
+                else pl.DataFrame(schema=_ROW_SCHEMA)
+            )
             self._rows = (version, rows)
         return self._rows[1]
 
@@ -140,17 +146,18 @@ def _in_force(rows: pl.DataFrame) -> pl.DataFrame:
 
 def _open_or_create(lake: Path) -> DeltaTable:
     folder, layout_file = lake / "ledger", lake / "layout.json"
+    address = _address(folder)
     if layout_file.exists():
         _check_layout(layout_file)
-        if not DeltaTable.is_deltatable(str(folder)):
+        if not DeltaTable.is_deltatable(address):
             raise LedgerError(
                 f"{folder} is gone, but {lake} holds landed parts; restore the ledger folder from a copy, "
                 f"or remove {lake} whole and run again over the inbox"
             )
-        return DeltaTable(folder)
+        return DeltaTable(address)
     folder.mkdir(parents=True, exist_ok=True)
     delta = DeltaTable.create(
-        folder,
+        address,
         schema=pl.Schema(_ROW_SCHEMA),
         mode="ignore",
         name="ledger",
@@ -160,6 +167,16 @@ def _open_or_create(lake: Path) -> DeltaTable:
     )
     write_whole(layout_file, json.dumps({"layout": LAYOUT}).encode())
     return delta
+
+
+def _address(folder: Path) -> str:
+    """The folder as an address, in which blanks and letters of all languages mean themselves."""
+    found = sorted({character for character in str(folder.resolve()) if character in _PATTERN_CHARACTERS})
+    if found:
+        raise LedgerError(
+            f"{folder.resolve()}: {' '.join(found)} in the path would be read as a search pattern; rename that folder"
+        )
+    return folder.resolve().as_uri()
 
 
 def _check_layout(layout_file: Path) -> None:

@@ -236,7 +236,7 @@ def scan_parts(lake: Path, table: schema.Table, paths: Iterable[str]) -> pl.Lazy
     if not files:
         return pl.LazyFrame(schema=types)
     rows = pl.scan_parquet(
-        files, hive_partitioning=False, schema=types, missing_columns="insert", extra_columns="ignore"
+        files, glob=False, hive_partitioning=False, schema=types, missing_columns="insert", extra_columns="ignore"
     )
     return rows.select(list(types))
 

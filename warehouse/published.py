@@ -81,7 +81,7 @@ class Published:
         """The same as `table`, not read yet: for tables that are larger than memory."""
         where = where or {}
         if self._file(name).is_file():
-            rows = pl.scan_parquet(self._file(name))
+            rows = pl.scan_parquet(self._file(name), glob=False, hive_partitioning=False)
         elif name in self._read_in_place():
             rows = self._scan_parts(name, where)
         else:

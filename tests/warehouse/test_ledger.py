@@ -146,6 +146,14 @@ def test_a_lake_of_a_newer_layout_is_refused(tmp_path: Path) -> None:
         Ledger(tmp_path)
 
 
+@pytest.mark.parametrize("name", ["trial [A]", "what?", "100%", "{x}", "a*"])
+def test_a_path_that_is_a_search_pattern_is_refused(tmp_path: Path, name: str) -> None:
+    """The characters and the folder are named before anything is written."""
+    with pytest.raises(LedgerError, match="in the path would be read as a search pattern; rename that folder"):
+        Ledger(tmp_path / name)
+    assert list(tmp_path.iterdir()) == []
+
+
 def test_verify_names_every_changed_and_missing_part(tmp_path: Path) -> None:
     """A flipped byte anywhere in any part is found."""
     book = Ledger(tmp_path)

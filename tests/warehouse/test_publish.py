@@ -17,8 +17,8 @@ import duckdb
 import polars as pl
 import pytest
 
+from warehouse import cuts, ledger, schema
 from warehouse import publish as publication
-from warehouse import schema
 from warehouse.publish import PublishError, publish
 from warehouse.published import Published, PublishedError, QueryError, worked_queries
 
@@ -159,6 +159,22 @@ def test_a_moved_programme_folder_still_answers(programme: Any, tmp_path: Path) 
         [sys.executable, "-c", asked], cwd=inside / "published", capture_output=True, text=True, check=True
     )
     assert answer.stdout == "R1\n"
+
+
+@pytest.mark.parametrize("name", ["it's", "two words", "Grün", "100 #1", "tag=1", "a+b:c"])
+def test_a_programme_folder_may_have_any_plain_name(make_lake: Any, tmp_path: Path, name: str) -> None:
+    """Blanks, quotes, letters beyond ASCII and signs in the path change nothing for tables, views, cuts and tidying."""
+    lake = make_lake(tmp_path / name)
+    lake.patient("P1")
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-02T00:00")
+    lake.land("beats", "R1", [{"recording_id": "R1", "fingerprint": "f1", "segment": 0, "sample": 1}], fingerprint="f1")
+    _publish(lake)
+    published = Published(tmp_path / name / "published")
+    assert published.frame("FROM beats").height == published.table("beats").height == 1
+    assert published.frame("FROM wear_days").equals(published.table("wear_days"))
+    cuts.freeze(tmp_path / name / "published", "lock", [])
+    assert cuts.damages(tmp_path / name / "published", "lock") == ledger.verify(tmp_path / name / "lake") == []
+    assert ledger.tidy(tmp_path / name / "lake", -1) == []
 
 
 def test_rows_of_one_recording_come_alone(programme: Any) -> None:
