@@ -10,7 +10,7 @@ import json
 import os
 import stat
 from collections.abc import Collection, Iterator, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from datetime import UTC, datetime
 from pathlib import Path
 from typing import NamedTuple
@@ -194,11 +194,12 @@ def _orphan(path: Path) -> Declined | None:
 def _checked(candidate: Candidate, settings: InboxSettings, now_s: float) -> Candidate:
     """Add what waiting rules say: quiet time, done marker, and how long a part may be missing."""
     problem = candidate.problem
+    markers = _markers(candidate.files[0], settings.done_marker)
     changed_s = max((_changed_s(path, now_s) for path in candidate.files), default=now_s)
     if isinstance(problem, Waits) and problem.code == "waiting_for_missing_part":
         if now_s - changed_s >= settings.part_wait_h * 3600:
             problem = Refused("part_missing", problem.sentence)
-    elif problem is None and settings.done_marker and not _is_marked(candidate.files[0], settings.done_marker):
+    elif problem is None and settings.done_marker and not markers:
         problem = Waits(
             "still_being_written", "no done-marker lies beside the file. It is taken when the marker comes."
         )
@@ -207,13 +208,13 @@ def _checked(candidate: Candidate, settings: InboxSettings, now_s: float) -> Can
             "still_being_written",
             f"the file changed {max(now_s - changed_s, 0):.0f} s ago; expected {settings.quiet_s:g} s without change.",
         )
-    return (
-        candidate
-        if problem is candidate.problem
-        else Candidate(
-            candidate.name, candidate.files, candidate.companions, candidate.size, candidate.mtime_ns, problem
-        )
-    )
+    return replace(candidate, problem=problem, companions=(*candidate.companions, *markers))
+
+
+def _markers(path: Path, suffix: str) -> tuple[Path, ...]:
+    """Files that say the delivery is complete: its name, or its name without suffix, and the marker's suffix."""
+    named = (path.with_name(path.name + suffix), path.with_name(path.stem + suffix)) if suffix else ()
+    return tuple(marker for marker in named if marker.is_file())
 
 
 def _changed_s(path: Path, now_s: float) -> float:
@@ -224,10 +225,6 @@ def _changed_s(path: Path, now_s: float) -> float:
     found = _stat(path)
     times = (found.st_mtime, found.st_ctime) if found else ()
     return max((time for time in times if time <= now_s), default=0.0)
-
-
-def _is_marked(path: Path, marker: str) -> bool:
-    return path.with_name(path.name + marker).exists() or path.with_name(path.stem + marker).exists()
 
 
 # What was seen before

@@ -69,7 +69,7 @@ def test_quiet_time_and_done_marker(inbox):
     assert seen(inbox, time.time() + 61, quiet_s=60.0) == {"a.edf": ([], None)}
     assert seen(inbox, done_marker=".done") == {"a.edf": ([], "still_being_written")}
     (inbox / "a.edf.done").touch()
-    assert seen(inbox, done_marker=".done") == {"a.edf": ([], None)}
+    assert seen(inbox, done_marker=".done") == {"a.edf": (["a.edf.done"], None)}
 
 
 def test_links_pipes_and_hidden_files(inbox, tmp_path):
@@ -157,6 +157,17 @@ def test_accepted_files_are_removed_when_the_settings_say_so(make_programme, mak
     before = programme.state()
     assert programme.run().changed is False
     assert programme.state() == before
+
+
+def test_done_markers_go_with_their_file(make_programme, make_edf):
+    """A marker leaves the inbox with the delivery it stands for."""
+    programme = make_programme("p", toml='[inbox]\naccepted_files = "remove"\ndone_marker = ".ok"\n')
+    programme.deliver("SRL-1001.edf", make_edf())
+    programme.run()
+    assert programme.deliveries() == {"SRL-1001.edf": ("waiting", "still_being_written")}
+    programme.deliver("SRL-1001.ok", b"")
+    assert programme.run().accepted == 1
+    assert list(programme.inbox.iterdir()) == []
 
 
 def test_a_waiting_file_that_goes_away_is_forgotten(programme, make_edf):
