@@ -97,7 +97,7 @@ def simulate(cell: Cell, patients: int, rng: np.random.Generator, ratio: Floats)
     measured = MeasuredDays(
         owner, np.tile(is_after, patients), np.tile(days, patients), level.counts, level.exposure, dispersion[period]
     )
-    settings = ChangeSettings(gap_drift_share=float(cell.drift))
+    settings = ChangeSettings(gap_drift_share=float(cell.drift), detection_sd_ln=0.0)
     return compared(MEASURES[0], measured, patients, settings, WearSettings(min_days_per_period=1))
 
 
