@@ -64,7 +64,7 @@ def beat_table(
 ) -> Beats:
     """The table of beats that analysis returns."""
     is_ectopic = (labels.beat_class == "V") | (labels.beat_class == "S")
-    timing = timing._replace(usual_ms=rhythm.usual_rr_outside_ms(timing.before_ms, timing.after_ms, is_ectopic))
+    timing = timing._replace(usual_ms=rhythm.usual_rr_outside_ms(*timing, is_ectopic))
     is_premature = is_ectopic & (timing.before < S_EARLY)
     follows_ectopic = np.concatenate([[False], is_ectopic[:-1]]) if is_ectopic.size else is_ectopic
     coupling = np.where(is_premature & ~follows_ectopic, timing.before_ms, np.float32(np.nan))

@@ -99,30 +99,37 @@ def read_chunk(segment: Segment, begin: int, end: int, scale: Scale) -> tuple[Ch
     flags = _flags(counts, first, last, span[0], scale)
     n_blocks = flags[0].size
     signal_mv = signal.box_averages(_without_gaps(counts, scale), first, last, scale.fs_hz, scale.mv_per_count)
-    framed = np.empty(SHAPE_BEFORE + 1 + n_blocks * qrs.BLOCK + SHAPE_AFTER + 2, dtype=np.float32)
-    framed[: SHAPE_BEFORE + 1] = signal_mv[0]
-    framed[SHAPE_BEFORE + 1 : SHAPE_BEFORE + 1 + signal_mv.size] = signal_mv
-    framed[SHAPE_BEFORE + 1 + signal_mv.size :] = signal_mv[-1]
+    framed = _framed(signal_mv, n_blocks)
     signal_mv = framed[SHAPE_BEFORE + 1 : -SHAPE_AFTER - 2]
-    found = qrs.envelope(signal_mv)
-    _silence(found.energy, flags[2])
-    level = qrs.block_level(found.energy, ~(flags[0] | flags[1] | flags[2]))
-    candidates = qrs.peaks(signal_mv, found.energy, level)
+    energy = qrs.slope_energy(signal_mv)
+    _silence(energy, flags[2])
+    level = qrs.block_level(energy, ~(flags[0] | flags[1] | flags[2]))
+    candidates = qrs.peaks(signal_mv, energy, level)
     beat = qrs.choose(candidates)
     cell = candidates.cell[beat]
-    noise = np.where(flags[0] | flags[1] | flags[2], np.float32(np.nan), _noise(found.energy, cell, n_blocks))
-    working = qrs.fiducials(found.slope, cell)
+    noise = np.where(flags[0] | flags[1] | flags[2], np.float32(np.nan), _noise(energy, cell, n_blocks))
+    working = qrs.fiducials(signal_mv, cell)
     mine = (working >= begin - first) & (working < end - first)
     beat, cell, working = beat[mine], cell[mine], working[mine]
     block = cell // qrs.BLOCK_CELLS
     inner = slice((begin - first) // qrs.BLOCK, -(-(end - first) // qrs.BLOCK))
+    shapes = _shapes(framed, working)
+    shapes -= np.float32(scale.count_at_zero_mv * scale.mv_per_count)
     beats = ChunkBeats(
         working=working + first,
         energy=candidates.energy[beat],
-        shape_mv=_shapes(framed, working) - np.float32(scale.count_at_zero_mv * scale.mv_per_count),
+        shape_mv=shapes,
         is_clean=np.nan_to_num(noise, nan=0.0)[block] < CLEAN * level[block],
     )
     return beats, Blocks(*(flag[inner] for flag in flags), noise[inner], level[inner])
+
+
+def _framed(signal_mv: NDArray[np.float32], n_blocks: int) -> NDArray[np.float32]:
+    """The signal filled up to whole blocks, with room for a shape at either end, its outer values repeated."""
+    begin, end = SHAPE_BEFORE + 1, SHAPE_BEFORE + 1 + signal_mv.size
+    framed = np.empty(begin + n_blocks * qrs.BLOCK + SHAPE_AFTER + 2, dtype=np.float32)
+    framed[:begin], framed[begin:end], framed[end:] = signal_mv[0], signal_mv, signal_mv[-1]
+    return framed
 
 
 def _silence(energy: NDArray[np.float32], is_missing: NDArray[np.bool_]) -> None:

@@ -23,6 +23,7 @@ S_EARLY = 0.885  # of the usual interval
 S_EARLY_AFTER_CHANGE = 0.85  # of the usual interval of 12 beats ago
 S_SUDDEN = 0.90  # of the interval before
 AF_IRREGULARITY = 0.6
+MEDIAN_SAMPLE = 4096  # beats of a family from which its medians are taken
 LATE = 0.3  # log of RR before over RR after: a beat after a pause
 LATE_WIDTH = 0.2  # log of the width over normal: a narrow late beat is a normal one
 
@@ -118,10 +119,11 @@ def family_habits(timing: Timing, member: families.Membership, n_families: int) 
     for row in range(n_families):
         mine = order[edges[row] : edges[row + 1]]
         if mine.size:
-            known = mine[~np.isnan(asymmetry[mine])]
-            lean = float(np.median(asymmetry[known])) if known.size else 0.0
             starts = 1 + np.count_nonzero(np.diff(mine) > 1)
-            scatter = float(np.median(1 - member.likeness[mine]))
+            some = mine[:: -(-mine.size // MEDIAN_SAMPLE)]
+            known = some[~np.isnan(asymmetry[some])]
+            lean = float(np.median(asymmetry[known])) if known.size else 0.0
+            scatter = float(np.median(1 - member.likeness[some]))
             rows[row] = (mine.size, early[mine].mean(), on_time[mine].mean(), lean, mine.size / starts, scatter)
     return Habits(rows[:, 0].astype(np.int64), *rows[:, 1:].T)
 

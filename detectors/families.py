@@ -27,6 +27,7 @@ MOST_FAMILIES = 64
 MOST_NEW_FAMILIES = 32  # in one batch
 SEED_SAMPLE = 128  # beats of which one becomes the seed of a family
 SCATTER_SAMPLE = 512  # beats from which the scatter of a family is taken
+MEAN_SAMPLE = 512  # beats of a batch from which the averaged shape learns
 MEMORY_BEATS = 5000  # the averaged shape follows slow change over about so many beats of the family
 
 
@@ -151,6 +152,7 @@ class FamilyBook:
         begin = np.searchsorted(member.family[order], np.arange(count.size))
         for family in np.flatnonzero(count):
             mine = order[begin[family] : begin[family] + count[family]]
+            mine = mine[:: -(-mine.size // MEAN_SAMPLE)]
             weight = count[family] / (min(self.n_beats[family], MEMORY_BEATS) + count[family])
             self.shape_mv[family] += np.float32(weight) * (shape_mv[mine].mean(axis=0) - self.shape_mv[family])
         self.n_beats += count

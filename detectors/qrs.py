@@ -17,8 +17,10 @@ from numpy.typing import NDArray
 from detectors.signal import WORKING_FS_HZ
 
 LAG = 4  # working samples, 32 ms: the second difference passes 5 to 25 Hz and nothing of drift
-CELL = 4  # working samples per envelope value, 32 ms
-BLOCK_CELLS = 48  # envelope values per block, 1.536 s: holds at least one beat above 39 a minute
+REACH = LAG + 1  # working samples that the second difference of the smoothed signal needs on either side
+PIECE = 32_768  # working samples worked off at a time
+CELL = 4  # working samples per energy value, 32 ms
+BLOCK_CELLS = 48  # energy values per block, 1.536 s: holds at least one beat above 39 a minute
 BLOCK = CELL * BLOCK_CELLS  # working samples per block
 LOCAL_BLOCKS = 7
 LONG_BLOCKS = 41
@@ -44,26 +46,37 @@ FAR_WEAKER = 0.4  # slope energy over that of the weaker neighbour
 WEAKER = 0.75
 
 
-class Envelope(NamedTuple):
-    """Slope of the signal and its energy over one QRS length."""
+def slope_energy(signal_mv: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Absolute second difference of the smoothed signal summed over 96 ms, once every 32 ms, shape (n // CELL,), 4 mV.
 
-    slope: NDArray[np.float32]  # shape (n_working,), second difference of the smoothed signal, 4 mV
-    energy: NDArray[np.float32]  # shape (n_working // CELL,), sum of |slope| over 96 ms, 4 mV
-
-
-def envelope(signal_mv: NDArray[np.float32]) -> Envelope:
-    """Second difference of the smoothed working signal, and its absolute sum over 96 ms once every 32 ms."""
-    slope = np.zeros_like(signal_mv)
-    pairs = signal_mv[:-1] + signal_mv[1:]
-    smooth = pairs[:-1] + pairs[1:]  # weights 1 2 1
-    rise = smooth[LAG:] - smooth[:-LAG]
-    np.subtract(rise[:-LAG], rise[LAG:], out=slope[LAG + 1 : -LAG - 1])
-    size = np.abs(slope[: slope.size // CELL * CELL])
-    cells = (size[0::4] + size[1::4]) + (size[2::4] + size[3::4])
+    Worked off in pieces that stay in the processor's cache; values do not depend on them.
+    """
+    n_samples = signal_mv.size // CELL * CELL
+    cells = np.zeros(n_samples // CELL, dtype=np.float32)
+    size = np.zeros(PIECE, dtype=np.float32)
+    for begin in range(0, n_samples, PIECE):
+        end = min(begin + PIECE, n_samples)
+        first, last = max(begin, REACH), min(end, signal_mv.size - REACH)
+        piece = size[: end - begin]
+        piece[: first - begin], piece[max(last - begin, 0) :] = 0, 0
+        if last > first:
+            np.abs(_slope(signal_mv[first - REACH : last + REACH]), out=piece[first - begin : last - begin])
+        cell = cells[begin // CELL : end // CELL]
+        np.add(piece[0::CELL], piece[1::CELL], out=cell)
+        for offset in range(2, CELL):
+            cell += piece[offset::CELL]
     energy = cells.copy()
     energy[1:] += cells[:-1]
     energy[:-1] += cells[1:]
-    return Envelope(slope, energy)
+    return energy
+
+
+def _slope(signal_mv: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Second difference over LAG of the signal smoothed with weights 1 2 1, shorter by REACH at both ends of the last axis."""
+    pairs = signal_mv[..., :-1] + signal_mv[..., 1:]
+    smooth = pairs[..., :-1] + pairs[..., 1:]
+    rise = smooth[..., LAG:] - smooth[..., :-LAG]
+    return rise[..., :-LAG] - rise[..., LAG:]
 
 
 def block_level(energy: NDArray[np.float32], is_usable: NDArray[np.bool_]) -> NDArray[np.float32]:
@@ -117,7 +130,10 @@ def choose(candidates: Peaks) -> NDArray[np.int64]:
     beat = np.flatnonzero(candidates.share > THRESHOLD)
     beat = _without_weaker_neighbours(candidates, beat)
     for _ in range(2):
+        n_before = beat.size
         beat = _with_gaps_searched(candidates, beat)
+        if beat.size == n_before:
+            break
     return beat
 
 
@@ -135,6 +151,8 @@ def _without_weaker_neighbours(candidates: Peaks, beat: NDArray[np.int64]) -> ND
         drop = np.zeros(beat.size, dtype=bool)
         drop[1:] |= (close & later_is_weaker) | t_wave
         drop[:-1] |= close & ~later_is_weaker
+        if not drop.any():
+            break
         beat = beat[~drop]
     return beat
 
@@ -158,6 +176,8 @@ def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[n
     inside = (slot >= 0) & (slot < gap.size)
     inside[inside] = gap[slot[inside]] > SHORT_GAP * usual[slot[inside]]
     low = np.flatnonzero(inside)
+    if low.size == 0:
+        return beat
     slot = slot[low]
     after_s = (candidates.cell[low] - cell[slot]) * (CELL / WORKING_FS_HZ)
     before_s = (cell[slot + 1] - candidates.cell[low]) * (CELL / WORKING_FS_HZ)
@@ -196,16 +216,18 @@ def _local_median(values: NDArray[np.generic], gap: NDArray[np.int64]) -> NDArra
     return np.maximum(np.minimum(low, high), np.minimum(np.maximum(low, high), e))
 
 
-def fiducials(slope: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np.float64]:
+def fiducials(signal_mv: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np.float64]:
     """Working position of the steepest bend within 64 ms of each energy peak, by a parabola, shape (n_beats,)."""
-    reach = 2 * CELL
-    begin = np.clip(cell * CELL + CELL // 2 - reach, 1, slope.size - 2 * reach - 2)
-    rows = np.abs(sliding_window_view(slope, 2 * reach + 1)[begin])
-    at = begin + rows.argmax(axis=1)
-    left, middle, right = np.abs(slope[at - 1]), np.abs(slope[at]), np.abs(slope[at + 1])
-    bend = left - 2 * middle + right
-    shift = np.divide(0.5 * (left - right), bend, out=np.zeros_like(bend), where=bend < 0)
-    return at + np.clip(shift, -0.5, 0.5).astype(np.float64)
+    near = 2 * CELL
+    begin = np.clip(cell * CELL + CELL // 2 - near, REACH + 1, signal_mv.size - 2 * near - REACH - 2)
+    rows = sliding_window_view(signal_mv, 2 * near + 3 + 2 * REACH)[begin - REACH - 1]
+    bend = np.abs(_slope(rows))  # from one before to one after the places looked at
+    at = bend[:, 1:-1].argmax(axis=1)
+    row = np.arange(at.size)
+    left, middle, right = bend[row, at], bend[row, at + 1], bend[row, at + 2]
+    curve = left - 2 * middle + right
+    shift = np.divide(0.5 * (left - right), curve, out=np.zeros_like(curve), where=curve < 0)
+    return begin + at + np.clip(shift, -0.5, 0.5).astype(np.float64)
 
 
 def is_interloper(

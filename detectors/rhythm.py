@@ -45,11 +45,16 @@ def usual_rr_ms(before_ms: NDArray[np.float32], after_ms: NDArray[np.float32]) -
 
 
 def usual_rr_outside_ms(
-    before_ms: NDArray[np.float32], after_ms: NDArray[np.float32], is_ectopic: NDArray[np.bool_]
+    before_ms: NDArray[np.float32],
+    after_ms: NDArray[np.float32],
+    usual_ms: NDArray[np.float32],
+    is_ectopic: NDArray[np.bool_],
 ) -> NDArray[np.float32]:
     """The same, with ectopic runs of three or more left out: what a beat is early against is not the run it begins."""
     around = np.concatenate([[False, False], is_ectopic, [False, False]])
     middle = around[1:-3] & around[2:-2] & around[3:-1]
+    if not middle.any():
+        return usual_ms
     in_run = _near_sum(middle, 2) > 0  # the beats of the run and one on each side
     return _usual(before_ms, after_ms, in_run)
 

@@ -14,6 +14,7 @@ from numpy.typing import NDArray
 WORKING_FS_HZ = 125.0
 LOWEST_FS_HZ = 100.0
 HIGHEST_FS_HZ = 4000.0
+PIECE = 32_768  # working samples worked off at a time: they stay in the cache
 
 
 def check_rate(fs_hz: float) -> float:
@@ -85,10 +86,14 @@ def _whole_boxes(counts: NDArray[np.int16], size: int, n_boxes: int, gain: float
     counts = counts[: n_boxes * size]
     if size == 1:
         return counts * np.float32(gain)
-    boxes = np.add(counts[0::size], counts[1::size], dtype=np.float32)
-    for offset in range(2, size):
-        boxes += counts[offset::size]
-    boxes *= np.float32(gain / size)
+    boxes = np.empty(n_boxes, dtype=np.float32)
+    for begin in range(0, n_boxes, PIECE):
+        piece = boxes[begin : begin + PIECE]
+        part = counts[begin * size : (begin + piece.size) * size]
+        np.add(part[0::size], part[1::size], out=piece, dtype=np.float32)
+        for offset in range(2, size):
+            piece += part[offset::size]
+        piece *= np.float32(gain / size)
     return boxes
 
 

@@ -37,7 +37,7 @@ def test_usual_interval_outside_a_run_is_the_one_before_it() -> None:
     before, after = around([1000] * 30 + [400] * 60 + [1000] * 30)
     is_ectopic = np.zeros(before.size, dtype=bool)
     is_ectopic[31:91] = True
-    usual = rhythm.usual_rr_outside_ms(before, after, is_ectopic)
+    usual = rhythm.usual_rr_outside_ms(before, after, rhythm.usual_rr_ms(before, after), is_ectopic)
     np.testing.assert_allclose(usual[31:91], 1000, rtol=0.01)
 
 
