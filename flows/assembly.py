@@ -10,7 +10,7 @@ from __future__ import annotations
 import hashlib
 import re
 from collections.abc import Callable, Iterable, Sequence
-from datetime import datetime
+from datetime import datetime, timedelta
 from fractions import Fraction
 from pathlib import Path
 from typing import Any, NamedTuple
@@ -23,6 +23,8 @@ from flows.landing import typed_frame
 from flows.readers.recording import rate_ns
 from flows.register import Register, Wear
 from warehouse.parts import BLOCK_SAMPLES, Part, SignalReader, write_signal
+
+_UNSET_CLOCK = timedelta(days=180)
 
 
 class Assembled(NamedTuple):
@@ -47,10 +49,10 @@ def match(register: Register, device_serial: str, start_local: datetime | None, 
     """The wear of the device that covers the start, or None.
 
     A wall-clock start is read in the zone of each wear's patient unless the file says its zone. Where the file has no
-    start, the wear whose register row has one is taken when it is the only one.
+    start, or one of a clock that was never set, the wear whose register row has one is taken when it is the only one.
     """
     wears = register.wears_of(device_serial)
-    if start_local is None:
+    if start_local is None or _is_unset(start_local, wears):
         started = [wear for wear in wears if wear.start_local is not None]
         if len(started) != 1 or started[0].start_local is None:
             return None
@@ -60,6 +62,11 @@ def match(register: Register, device_serial: str, start_local: datetime | None, 
         if starts:
             return Match(wear, starts, False)
     return None
+
+
+def _is_unset(start_local: datetime, wears: Sequence[Wear]) -> bool:
+    """The device clock shows a time long before the device was first worn, as clocks do that begin at a fixed date."""
+    return bool(wears) and start_local < wears[0].from_utc - _UNSET_CLOCK
 
 
 def device_key(device_serial: str) -> str:
@@ -88,7 +95,9 @@ def _part(
     return DeliveredPart(
         delivery_id=delivery_id,
         possible_starts_ns=tuple(to_ns(start) for start in matched.possible_starts) if matched else (),
-        wall_clock_ns=to_ns(head["start_local"]) if head["start_local"] and head["file_zone"] is None else None,
+        wall_clock_ns=to_ns(head["start_local"])
+        if matched and not matched.start_from_register and head["file_zone"] is None
+        else None,
         resolution_ms=head["start_resolution_ms"],
         rate=Fraction(head["rate_numerator"], head["rate_denominator"]),
         pieces=tuple(Piece(offset, size) for _, offset, size in sizes.iter_rows()),

@@ -83,7 +83,7 @@ def _reason_text(name: str, delivery_id: str, code: str, reason: str) -> str:
 
 def _zip_away(files: Sequence[Path], target: Path) -> None:
     beside = target.with_name(f".writing-{target.name}")
-    with zipfile.ZipFile(beside, "w", zipfile.ZIP_DEFLATED) as archive:
+    with zipfile.ZipFile(beside, "w", zipfile.ZIP_STORED) as archive:
         for path in files:
             archive.write(path, path.name.encode("utf-8", "replace").decode())
     beside.replace(target)

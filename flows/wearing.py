@@ -82,5 +82,6 @@ def _without_wear(serial: str | None, opened: Opened) -> Declined:
     return Waits(
         "wear_not_in_register",
         f"device {serial} starts {opened.start_local:%Y-%m-%d %H:%M} local time, in none of its wears in "
-        "register/wears.csv; expected a row whose from_local and to_local hold it. Correct it, then run again.",
+        "register/wears.csv; expected a row whose from_local and to_local hold it. Correct it, or enter start_local if "
+        "the device clock was not set, then run again.",
     )

@@ -77,7 +77,7 @@ FINDINGS = {
     "overlap_trimmed": "samples that another part holds too were taken once",
     "resolution_reduced": "samples wider than 16 bit were stored in coarser steps",
     "missing_samples": "the file marks samples as missing",
-    "start_from_register": "the file has no start; the register's was used",
+    "start_from_register": "the file has no start, or its clock was never set; the register's was used",
     "device_from_file_name": "the file has no device serial; its name was used",
     "first_of_several_leads": "several leads are there; the first was taken",
     "channel_chosen_by_unit": "no channel is called ECG; the only voltage was taken",

@@ -235,6 +235,19 @@ def test_start_from_the_register(programme):
     assert recording["findings"] == "device_from_file_name start_from_register"
 
 
+def test_a_clock_that_was_never_set(programme, make_edf):
+    """A start long before the device was first worn waits, and is replaced once the register has a start."""
+    content = make_edf(date="01.01.10", recording="Startdate 01-JAN-2010 X X SRL-1001")
+    programme.deliver("SRL-1001.edf", content)
+    programme.run()
+    (row,) = programme.rows("deliveries")
+    assert (row["code"], "start_local" in row["reason"]) == ("wear_not_in_register", True)
+    programme.register("P-0001,", "SRL-1001,P-0001,2026-02-28,,2026-03-01 09:15")
+    assert programme.run().accepted == 1
+    (recording,) = programme.rows("recordings")
+    assert (str(recording["start_utc"]), recording["findings"]) == ("2026-03-01 09:15:00", "start_from_register")
+
+
 def test_marks_become_rows_at_their_instant(programme, make_edf):
     """Patient marks land with their instant; words of the patient field are masked."""
     onsets = [f"+{n}" for n in range(60)]

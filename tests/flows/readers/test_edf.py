@@ -245,6 +245,19 @@ def test_equipment_is_the_first_device_word(opened):
     assert opened(recording="Startdate 01-MAR-2026 ADM-7 tech_9 SRL-1001").device_words[0] == "SRL-1001"
 
 
+def test_signals_of_other_rates_side_by_side(tmp_path, ecg):
+    """A slow signal beside the ECG in the same records does not shift the ECG's samples."""
+    path = tmp_path / "two.edf"
+    millivolts = ecg(15_000) / 1000
+    breath = edfio.EdfSignal(np.sin(np.arange(1500) / 9), 25, label="Resp", physical_range=(-1, 1))
+    heart = edfio.EdfSignal(millivolts, 250, label="ECG", physical_dimension="mV", physical_range=(-5, 5))
+    edfio.Edf([breath, heart], data_record_duration=2).write(path)
+    recording = open_delivery([path])
+    # Source: edfio 0.4.18 (writer)
+    assert np.array_equal(recording.read(0, 15_000), edfio.read_edf(path).signals[1].digital)
+    assert recording.rate == Fraction(250)
+
+
 def test_odd_rates_are_exact(opened):
     """4,999 samples in 20 s are 4999/20 Hz, not a rounded number."""
     recording = opened(np.zeros(4999 * 3, "<i2"), per_record=4999, record_s="20")
