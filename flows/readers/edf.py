@@ -128,18 +128,24 @@ def _sentinel(header: Header, digital_low: int) -> int | None:
 
 
 def _record_times(path: Path, header: Header, rate: Fraction) -> RecordTimes:
+    """Times of the records; the first annotation channel begins with them, any of them may hold marks."""
     if not header.annotation_channels or not header.format.endswith(("+C", "+D")):
         return RecordTimes.continuous(header.n_records, header.record_s)
-    channel = header.annotation_channels[0]
     block = max(1, _READ_BYTES // header.record_bytes)
-    width = header.samples_per_record[channel] * header.sample_bytes
-    first = header.offset_in_record(channel)
+    columns = np.concatenate(
+        [
+            header.offset_in_record(channel) + np.arange(header.samples_per_record[channel] * header.sample_bytes)
+            for channel in header.annotation_channels
+        ]
+    )
+    is_one = len(header.annotation_channels) == 1
+    chosen = slice(columns[0], columns[-1] + 1) if is_one and columns.size else columns
 
     def pieces() -> Iterator[NDArray[np.uint8]]:
         with path.open("rb", buffering=0) as file:
             for start in range(0, header.n_records, block):
                 records = _read_records(file, header, start, min(block, header.n_records - start))
-                yield records[:, first : first + width]
+                yield records[:, chosen]
 
     return read_record_times(pieces(), header.record_s, rate, declared_gapless=header.format.endswith("+C"))
 

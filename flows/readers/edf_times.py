@@ -111,6 +111,9 @@ def _onsets(block: NDArray[np.uint8]) -> tuple[NDArray[np.int64], int, NDArray[n
     """First onset of each record in ns, most decimals, whether it is a time stamp, and whether more text follows."""
     head = block[:, :_LONGEST_ONSET]
     n_rows, width = head.shape
+    if width == 0:
+        none = np.zeros(n_rows, np.bool_)
+        return np.zeros(n_rows, np.int64), 0, none, none
     end = np.argmax(head == _END_OF_ONSET, axis=1)
     is_timed = (end > 1) & (end + 1 < width) & np.isin(head[:, 0], (0x2B, 0x2D))
     nano = np.zeros(n_rows, np.int64)

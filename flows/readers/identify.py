@@ -86,8 +86,8 @@ def _unknown(head: bytes) -> Refused:
             return Refused(
                 code, f"the file is {what}; expected one of: {_names()}. Export the recording as one of these."
             )
-    start = head.lstrip(b"\xef\xbb\xbf \t\r\n")[:200].lower()
-    if start.startswith((b"<!doctype html", b"<html")):
+    start = head[:1000].lower()
+    if b"<html" in start or b"<!doctype html" in start:
         return Refused(
             "web_page_not_data",
             "the file is a web page, as a login page that answered a download; expected a recording. "

@@ -141,6 +141,32 @@ def test_marks_in_any_text_coding(opened):
     assert codes(recording) == ["bad_annotation"]
 
 
+def test_marks_in_a_second_annotation_channel(opened):
+    """Times stand in the first annotation channel, marks are found in all of them."""
+    stamps = b"".join(f"+{n}\x14\x14\x00".encode().ljust(500, b"\0") for n in range(60))
+    channels = {"labels": ("ECG", "EDF Annotations"), "units": ("mV", ""), "others": {1: np.frombuffer(stamps, "<i2")}}
+    recording = opened(kind="EDF+C", onsets=seconds(60), annotations={7: b"+7.5\x14Button\x14\x00"}, **channels)
+    assert [(mark.offset_ns, mark.text) for mark in recording.marks] == [(7_500_000_000, "Button")]
+    assert codes(recording) == []
+
+
+@pytest.mark.parametrize(("kind", "expected"), [("EDF+C", ["bad_annotation"]), ("EDF+D", "no_time_in_record")])
+def test_annotation_channel_without_room(tmp_path, make_edf, kind, expected):
+    """An annotation channel of no bytes has no times: said in an EDF+C, refused in an EDF+D."""
+    whole = bytearray(make_edf(np.zeros(500, "<i2"), kind=kind, onsets=["+0", "+1"]))
+    at = 256 + 2 * 216 + 8  # samples per record of the second channel
+    assert whole[at : at + 2] == b"60"
+    whole[at : at + 8] = b"0       "
+    path = tmp_path / "a.edf"
+    path.write_bytes(whole)
+    if kind == "EDF+C":
+        assert expected[0] in codes(open_delivery([path]))
+    else:
+        with pytest.raises(Refused) as refusal:
+            open_delivery([path])
+        assert refusal.value.code == expected
+
+
 @pytest.mark.parametrize(
     ("changes", "cut", "extra", "records", "expected"),
     [
