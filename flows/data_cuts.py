@@ -12,6 +12,7 @@ from flows import register
 from flows import settings as programme_settings
 from flows.lock import folder_lock
 from flows.publication import built
+from flows.unmasking import ARMS, masked_copy
 from warehouse import cuts
 from warehouse.audit import Change, change_loads
 from warehouse.exports.catalogue import EXPORTS
@@ -25,16 +26,25 @@ class ExportError(ValueError):
 
 def freeze_standing(folder: Path, name: str, reason: str, actor_code: str | None) -> Path:
     """Freeze the standing publication with register and settings, and keep that in the history; returns its folder."""
-    inputs = [folder / "programme.toml", *sorted((folder / "register").glob("*.csv"))]
     lake = folder / "lake"
-    with folder_lock(folder):
+    with folder_lock(folder), tempfile.TemporaryDirectory(prefix="freeze-", dir=lake) as scratch:
         is_new = name not in cuts.cut_names(folder / "published")
-        cut = cuts.freeze(folder / "published", name, inputs, reason=reason)
+        cut = cuts.freeze(folder / "published", name, _inputs(folder, Path(scratch)), reason=reason)
         if is_new:
             now = datetime.now(UTC).replace(tzinfo=None)
             change = Change("cut", name, None, Published(folder / "published").name, reason or None)
             Ledger(lake).commit(change_loads(lake, [change], actor_code=actor_code, happened_utc=now), note="freeze")
     return cut
+
+
+def _inputs(folder: Path, scratch: Path) -> list[Path]:
+    """Settings and register as they are, but for the arms of a masked trial."""
+    settings = programme_settings.load(folder / "programme.toml")
+    files = {path.name: path for path in sorted((folder / "register").glob("*.csv"))}
+    if ARMS in files and not settings.trial.unmasked:
+        masked_copy(files[ARMS], scratch / ARMS)
+        files[ARMS] = scratch / ARMS
+    return [folder / "programme.toml", *files.values()]
 
 
 def cut_folder(folder: Path, name: str) -> Path:

@@ -1,4 +1,4 @@
-"""Verbs about frozen data cuts."""
+"""Verbs about frozen data cuts, exports and masked trials."""
 
 from __future__ import annotations
 
@@ -60,6 +60,20 @@ def _export(asked: argparse.Namespace) -> int:
     return 0
 
 
+def _unmask_arguments(parser: argparse.ArgumentParser) -> None:
+    folder_argument(parser)
+    parser.add_argument("--reason", required=True, help="why the arms may be seen now, kept in the history")
+    actor_option(parser)
+
+
+def _unmask(asked: argparse.Namespace) -> int:
+    from flows.unmasking import unmask
+
+    unmask(asked.folder, asked.reason, asked.by)
+    print(f"the arms are published from the next run on; now: burdenline run {asked.folder}")
+    return 0
+
+
 VERBS = (
     Verb(
         "freeze",
@@ -81,5 +95,12 @@ VERBS = (
         "burdenline export coast fhir --to coast.fhir.json",
         _export_arguments,
         _export,
+    ),
+    Verb(
+        "unmask",
+        "show the treatment arms of a masked trial from the next run on",
+        'burdenline unmask coast --reason "database lock" --by dm-1',
+        _unmask_arguments,
+        _unmask,
     ),
 )

@@ -11,13 +11,15 @@ from flows.verbs.verb import Verb, folder_argument, json_option
 
 def _inspect_arguments(parser: argparse.ArgumentParser) -> None:
     parser.add_argument("file", metavar="FILE", type=Path, help="an export")
+    parser.add_argument("--programme", metavar="DIR", type=Path, help="read it with this programme's settings")
     json_option(parser)
 
 
 def _inspect(asked: argparse.Namespace) -> int:
+    from flows import settings
     from flows.ingest import inspect
 
-    found = inspect(asked.file)
+    found = inspect(asked.file, settings.load(asked.programme / "programme.toml") if asked.programme else None)
     if asked.json:
         print(json.dumps(found, default=str))
     else:

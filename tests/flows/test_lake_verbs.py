@@ -133,3 +133,24 @@ def test_tidy_keeps_all_that_is_shown_or_frozen(capsys, coast):
     assert call(capsys, "tidy", coast, "--grace-h", "0")[0] == 0
     assert call(capsys, "thaw", coast, "visit-1", "--check")[0] == 0
     assert call(capsys, "verify", coast)[0] == 0
+
+
+def test_arms_of_a_masked_trial_are_nowhere_until_unmasked(capsys, coast):
+    """The arm stays out of tables, pages, exports and frozen inputs; unmasking needs a reason, which is kept."""
+    (coast / "register" / "arms.csv").write_text("patient_code,arm\nP-1,verum-x\n")
+    (coast / "register" / "visits.csv").write_text("patient_code,visit,target_day,window_days\nP-1,V1,2026-03-01,2\n")
+    call(capsys, "run", coast)
+    call(capsys, "freeze", coast, "visit-1")
+    assert call(capsys, "thaw", coast, "visit-1", "--check")[0] == 0
+    call(capsys, "export", coast, "csv", "--to", coast / "out")
+    shown = [path for top in ("published", "out") for path in (coast / top).rglob("*") if path.is_file()]
+    assert [path for path in shown if b"verum-x" in path.read_bytes()] == []
+    assert Published(coast / "published").table("visits")["arm"].to_list() == ["masked"]
+
+    assert call(capsys, "unmask", coast, "--reason", " ")[0] == 1
+    assert call(capsys, "unmask", coast, "--reason", "database lock", "--by", "dm-1")[0] == 0
+    assert call(capsys, "unmask", coast, "--reason", "again")[0] == 1
+    call(capsys, "run", coast)
+    assert Published(coast / "published").table("visits")["arm"].to_list() == ["verum-x"]
+    audit = Published(coast / "published").table("audit").filter(pl.col("reason") == "database lock")
+    assert audit["actor_code"].to_list() == ["dm-1"]
