@@ -1,12 +1,15 @@
 """Every published day can be traced to the bytes it came from, and two fingerprints can be compared."""
 
 import re
-from datetime import date
+from datetime import date, datetime
 from typing import Any
 
+import numpy as np
+import polars as pl
 import pytest
 
 from warehouse.compare import compare
+from warehouse.parts import write_signal
 from warehouse.publish import publish
 from warehouse.published import Published, PublishedError
 from warehouse.trace import trace
@@ -20,7 +23,14 @@ def published(lake: Any) -> Published:
     lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-03T00:00")
     lake.recording("R2", "P1", "2026-05-03T02:00", "2026-05-04T00:00")
     lake.recording("R3", "P2", "2026-05-02T00:00", "2026-05-03T00:00")
-    lake.land("segments", "R2", [{"recording_id": "R2", "segment": 0, "delivery_id": "D2"}])
+    hours = [datetime.fromisoformat(f"2026-05-03T{hour}:00") for hour in ("02", "03", "23")]
+    spans = [{"segment": 0, "start_utc": hours[0], "end_utc": hours[1]}, {"segment": 1, "start_utc": hours[2]}]
+    spans[1]["end_utc"] = datetime.fromisoformat("2026-05-04T00:00")
+    lake.land("segments", "R2", [{"recording_id": "R2", "delivery_id": "D2"} | span for span in spans])
+    for segment in (0, 1):
+        part = write_signal(lake.folder / "lake", "R2", segment, 0, np.full(9, segment, np.int16))
+        blocks = [*lake.ledger.parts("signal", "R2"), part]
+        lake.ledger.commit({("signal", "R2"): blocks})
     lake.land("deliveries", "00", [{"delivery_id": f"D{n}", "recording_id": f"R{n}"} for n in (1, 2, 3)])
     fingerprint = {"fingerprint": "f1", "detector_version": "1", "settings_json": "{}"}
     lake.land("fingerprints", "f1", [fingerprint], fingerprint="f1")
@@ -34,7 +44,8 @@ def test_a_day_is_traced_to_its_recordings_deliveries_and_parts(published: Publi
     found = trace(published, "P1", date(2026, 5, 2))
     assert found["recordings"]["recording_id"].to_list() == ["R1", "R2"]
     assert found["deliveries"]["delivery_id"].to_list() == ["D1", "D2"]
-    assert found["segments"]["delivery_id"].to_list() == ["D2"]
+    assert found["segments"]["segment"].to_list() == [0]
+    assert found["parts"].filter(pl.col("table_name") == "signal")["segment"].to_list() == [0]
     assert set(found["parts"]["part_key"]) == {"R1", "R2"}
     assert found["fingerprints"]["fingerprint"].to_list() == ["f1"]
     assert found["wear_days"]["local_day"].to_list() == [date(2026, 5, 2)]
