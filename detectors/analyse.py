@@ -144,14 +144,15 @@ def _enter_full_batches(
 
 
 def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Found:
-    member = book.enter(now.shape_mv, now.is_clean)
+    shape_mv = book.prepare(now.shape_mv)
+    member = book.enter(shape_mv, now.is_clean)
     return beats.Found(
         np.full(now.working.size, segment, dtype=np.int16),
         now.working,
         now.energy,
         *member,
-        features.amplitude_mv(now.shape_mv),
-        features.spread_ms(now.shape_mv),
+        features.amplitude_mv(shape_mv),
+        features.spread_ms(shape_mv),
     )
 
 

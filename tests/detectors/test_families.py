@@ -67,3 +67,15 @@ def test_fusion_is_a_sum_of_both_parents() -> None:
     assert fusion.is_fusion((NARROW + WIDE) / 2, NARROW, parents)
     for shape in (NARROW, WIDE, third):
         assert not fusion.is_fusion(shape, NARROW, parents)
+
+
+def test_mains_ripple_is_smoothed_away() -> None:
+    """Shapes with strong 50-Hz or 60-Hz ripple are smoothed before they are compared; clean and rough ones are not."""
+    clean, rough = noisy(NARROW, 200, 0.01, 1), noisy(NARROW, 200, 0.15, 1)
+    for unharmed in (clean, rough):
+        assert families.FamilyBook().prepare(unharmed) is unharmed
+    for mains_hz in (50, 60):
+        phase = np.random.default_rng(2).uniform(0, 6.28, (200, 1))
+        hummed = (clean + 0.2 * np.sin(2 * np.pi * mains_hz * T / 1000 + phase)).astype(np.float32)
+        prepared = families.FamilyBook().prepare(hummed)
+        assert np.abs(prepared - clean)[:, 1:15].max() < 0.04
