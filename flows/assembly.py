@@ -18,8 +18,9 @@ from typing import Any, NamedTuple
 import polars as pl
 
 from flows.clocks import possible_utc
-from flows.joining import Arrangement, DeliveredPart, Misfit, Piece, Span, arrange, from_ns, to_ns
+from flows.joining import Arrangement, Span, arrange
 from flows.landing import typed_frame
+from flows.placing import DeliveredPart, Misfit, Piece, from_ns, to_ns
 from flows.readers.recording import rate_ns
 from flows.register import Register, Wear
 from warehouse.parts import BLOCK_SAMPLES, Part, SignalReader, write_signal

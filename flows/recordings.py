@@ -15,8 +15,8 @@ import polars as pl
 
 from flows.assembly import Assembled, assemble, parts_of, signal_parts
 from flows.deliveries import ACCEPTED, QUARANTINED, WAITING, Deliveries, Loads, Pieces
-from flows.joining import DeliveredPart, Misfit, from_ns
 from flows.landing import Landed, typed_frame
+from flows.placing import DeliveredPart, Misfit, from_ns
 from flows.register import Register, Wear
 from warehouse.ledger import Ledger
 from warehouse.parts import Part, read_part, write_part, write_whole

@@ -10,7 +10,8 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from flows.clocks import offset_at, possible_utc
-from flows.joining import DeliveredPart, Misfit, Piece, arrange, from_ns, to_ns
+from flows.joining import arrange
+from flows.placing import DeliveredPart, Misfit, Piece, from_ns, to_ns
 
 FS_HZ = 100
 HOUR = 3600 * FS_HZ
