@@ -30,9 +30,11 @@ VERDICTS = (FELL, ROSE, WITHIN, TOO_LITTLE)
 NODE_STEP = 0.25
 GAMMA_NODES = np.arange(-7.0, 5.1, NODE_STEP)  # SDs of a log-gamma variable around its mean
 LEAST_VARIANCE = 1e-12
+NEGLIGIBLE_WEIGHT = 1e-4
 LEAST_SHAPE = 0.05  # fewer beats than this count as this many
-LOG_TOLERANCE = 1e-7
-WIDEST_LOG = 34.0  # ln ratio beyond which nothing is searched
+LOG_TOLERANCE = 1e-6
+WIDEST_LOG = 34.0  # ln beats beyond which nothing is searched
+FARTHEST_COUNT = 8.0  # ln ratio that counting alone may need on top of the other variation
 
 
 class Comparison(NamedTuple):
@@ -135,7 +137,7 @@ def compare(
 
 def _days_to_settle(chance: _Chance, level: Levels, weight: Floats, log_ratio: Floats) -> Floats:
     """Normal theory: the after period's own variance shrinks with its days, all else stays."""
-    now = (weight * chance.sd**2).sum(axis=1)
+    now = (chance.weight * chance.sd**2).sum(axis=1)
     own = (weight * level.variance[1::2]).sum(axis=1)
     days = level.days[1::2]
     allowed = (log_ratio / norm.ppf(1 - CHANCE_LIMIT)) ** 2 - (now - (weight * level.day_variance[1::2]).sum(axis=1))
@@ -162,7 +164,16 @@ def _variances(level: Levels, grid: Floats, excess: Floats, detection: float) ->
 def _if_nothing_changed(level: Levels, weight: Floats, variances: _Variances) -> _Chance:
     exposure = np.where(level.exposure[1::2] > 0, level.exposure[1::2], 1.0)
     centre = np.log(exposure)[:, None] + level.log_level[0::2] + level.total_shift[1::2]
-    return _Chance(centre, np.sqrt(np.maximum(sum(variances), LEAST_VARIANCE)), weight)
+    return _trimmed(_Chance(centre, np.sqrt(np.maximum(sum(variances), LEAST_VARIANCE)), weight))
+
+
+def _trimmed(chance: _Chance) -> _Chance:
+    """As many values of s as hold nearly all weight of every event: the rest costs time only."""
+    order = np.argsort(-chance.weight, axis=1)
+    kept = np.cumsum(np.take_along_axis(chance.weight, order, axis=1), axis=1) < 1 - NEGLIGIBLE_WEIGHT
+    order = order[:, : 1 + int(kept.sum(axis=1).max(initial=0))]
+    centre, sd, weight = (np.take_along_axis(table, order, axis=1) for table in chance)
+    return _Chance(centre, sd, weight / weight.sum(axis=1, keepdims=True))
 
 
 def _shares_pct(variances: _Variances, weight: Floats, observed: Floats) -> list[Floats]:
@@ -220,7 +231,10 @@ def _interval(chance: _Chance, observed: Floats) -> tuple[Floats, Floats]:
         fewer = np.where(beats > 0, _at_most(of_row, beats, log_ratio), 0.0)
         return (fewer + _at_most(of_row, beats + 1, log_ratio)) / 2 - tail
 
-    ends = np.full(n, -WIDEST_LOG), np.full(n, WIDEST_LOG)
+    middle = np.log(np.maximum(observed, LEAST_SHAPE)) - (chance.weight * chance.centre).sum(axis=1)
+    reach = 10 * chance.sd.max(axis=1, initial=0.0) + np.ptp(chance.centre, axis=1) + FARTHEST_COUNT
+    reach = np.minimum(reach, WIDEST_LOG)
+    ends = middle - reach, middle + reach
     high = np.exp(_root(beyond, *ends, np.arange(n), np.full(n, INTERVAL_TAIL)))
     low = np.exp(_root(beyond, *ends, np.arange(n), np.full(n, 1 - INTERVAL_TAIL)))
     return np.where(observed > 0, low, 0.0), high

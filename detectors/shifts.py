@@ -1,8 +1,8 @@
 """When did the level shift? A search that knows no therapy date, to be drawn beside the dates that are known.
 
-Least squares on a series, one change (`single_shift`) or as many as a penalty allows (`shifts`, the exact search of
-Killick, Fearnhead, Eckley, J Am Stat Assoc 2012;107:1590 with pruning). A shift is a description, never a verdict:
-ectopy drifts by itself, and a drift is cut into steps as well.
+Least squares on a series, one change (`single_shift`) or as many as a penalty allows (`shifts`, the exact search over
+all partitions of Jackson et al., IEEE Signal Process Lett 2005;12:105, without pruning as series are short).
+A shift is a description, never a verdict: ectopy drifts by itself, and a drift is cut into steps as well.
 """
 
 from __future__ import annotations
@@ -29,15 +29,17 @@ class Shift(NamedTuple):
 
 def single_shift(values: ArrayLike, weights: ArrayLike | None = None) -> Shift:
     """Best split of a series of shape (n,), n >= 2, with optional positive weights (inverse variances)."""
-    cost = _SegmentCost(values, weights)
-    n = len(cost)
+    y = np.asarray(values, dtype=float)
+    w = np.ones(len(y)) if weights is None else np.asarray(weights, dtype=float)
+    n = len(y)
     if n < 2:
         raise ValueError(f"a series of {n} values has no shift; expected at least two")
+    squares = _squares(y, w)
     split = np.arange(1, n)
-    remaining = cost(np.zeros(n - 1, dtype=int), split) + cost(split, np.full(n - 1, n))
+    remaining = squares[0, split] + squares[split, n]
     best = int(split[np.argmin(remaining)])
-    gain = float(cost(np.array([0]), np.array([n]))[0] - remaining.min())
-    return Shift(best, cost.mean(0, best), cost.mean(best, n), gain)
+    before, after = (float(np.average(y[part], weights=w[part])) for part in (slice(best), slice(best, n)))
+    return Shift(best, before, after, float(squares[0, n] - remaining.min()))
 
 
 def shifts(values: ArrayLike, noise_sd: ArrayLike, *, penalty: float | None = None, min_length: int = 2) -> Ints:
@@ -48,46 +50,30 @@ def shifts(values: ArrayLike, noise_sd: ArrayLike, *, penalty: float | None = No
     """
     y = np.asarray(values, dtype=float)
     n = len(y)
-    cost = _SegmentCost(y, np.broadcast_to(1 / np.asarray(noise_sd, dtype=float) ** 2, n))
+    squares = _squares(y, np.broadcast_to(1 / np.asarray(noise_sd, dtype=float) ** 2, n))
     toll = PENALTY_PER_LOG_N * np.log(max(n, 2)) if penalty is None else penalty
     best = np.full(n + 1, np.inf)
     best[0] = -toll
-    last = np.zeros(n + 1, dtype=int)
-    starts = np.array([0])
+    start = np.zeros(n + 1, dtype=np.int64)
     for end in range(min_length, n + 1):
-        total = best[starts] + cost(starts, np.full(len(starts), end)) + toll
-        chosen = int(np.argmin(total))
-        best[end], last[end] = total[chosen], starts[chosen]
-        new = end - min_length + 1
-        starts = np.append(starts[total - toll <= best[end]], new) if np.isfinite(best[new]) else starts
-    return _walk_back(last, n)
+        total = best[: end - min_length + 1] + squares[: end - min_length + 1, end]
+        start[end] = np.argmin(total)
+        best[end] = total[start[end]] + toll
+    return _walk_back(start, n)
 
 
-def _walk_back(last: Ints, n: int) -> Ints:
+def _walk_back(start: Ints, end: int) -> Ints:
     found = []
-    while n > 0 and last[n] > 0:
-        n = int(last[n])
-        found.append(n)
+    while end > 0 and start[end] > 0:
+        end = int(start[end])
+        found.append(end)
     return np.array(found[::-1], dtype=np.int64)
 
 
-class _SegmentCost:
-    """Weighted squares around the mean of any stretch, from running sums."""
-
-    def __init__(self, values: ArrayLike, weights: ArrayLike | None) -> None:
-        y = np.asarray(values, dtype=float)
-        w = np.ones(len(y)) if weights is None else np.asarray(weights, dtype=float)
-        y = y - y.mean() if len(y) else y  # keeps the sums small
-        self._shift = float(np.asarray(values, dtype=float).mean()) if len(y) else 0.0
-        self._w, self._wy, self._wyy = (np.concatenate([[0.0], np.cumsum(w * y**k)]) for k in (0, 1, 2))
-
-    def __len__(self) -> int:
-        return len(self._w) - 1
-
-    def __call__(self, start: Ints, end: Ints) -> Floats:
-        w, wy, wyy = (table[end] - table[start] for table in (self._w, self._wy, self._wyy))
-        return np.maximum(wyy - wy**2 / w, 0.0)
-
-    def mean(self, start: int, end: int) -> float:
-        """Weighted mean of the values from `start` to before `end`."""
-        return float((self._wy[end] - self._wy[start]) / (self._w[end] - self._w[start]) + self._shift)
+def _squares(values: Floats, weights: Floats) -> Floats:
+    """Weighted squares around the mean of values i to before j, shape (n + 1, n + 1); 0 where j <= i."""
+    y = values - values.mean() if len(values) else values  # keeps the sums small
+    w, wy, wyy = (np.concatenate([[0.0], np.cumsum(weights * y**k)]) for k in (0, 1, 2))
+    between = np.triu(w - w[:, None], 1)
+    mean_part = np.divide((wy - wy[:, None]) ** 2, between, out=np.zeros_like(between), where=between > 0)
+    return np.maximum(np.triu(wyy - wyy[:, None], 1) - mean_part, 0.0)
