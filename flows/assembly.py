@@ -152,7 +152,7 @@ def _arranged(
             return arrange(kept, zone), kept, misfits
         except Misfit as misfit:
             misfits.append(misfit)
-            kept = [part for part in kept if part.delivery_id != misfit.delivery_id]
+            kept = [part for part in kept if part.delivery_id not in misfit.delivery_ids]
     return None, kept, misfits
 
 

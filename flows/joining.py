@@ -63,7 +63,7 @@ def arrange(parts: Sequence[DeliveredPart], zone: str) -> Arrangement:
     for part in parts[1:]:
         if (part.rate, part.likeness) != (first.rate, first.likeness):
             raise Misfit(
-                part.delivery_id,
+                [part.delivery_id],
                 Refused(
                     "does_not_fit_recording",
                     f"rate {float(part.rate):g} Hz, lead or scale differ from the other parts of the same wear "
@@ -172,7 +172,7 @@ def _follow_on(
         other = segment.part_at(max(segment.n_samples - back, 0))
         later = max(part, other, key=lambda each: order[each.delivery_id])
         raise Misfit(
-            later.delivery_id,
+            [later.delivery_id],
             Refused(
                 "overlap_with_other_samples",
                 f"{-(start_ns - segment.end_ns) / 1e9:.1f} s of it overlap with another part of the same wear and hold "

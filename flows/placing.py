@@ -64,11 +64,11 @@ class DeliveredPart:
 
 
 class Misfit(Exception):
-    """A part does not fit to the others; the reason is a refusal of that delivery."""
+    """Parts do not fit to the others; the reason is a refusal of their deliveries."""
 
-    def __init__(self, delivery_id: str, reason: Refused) -> None:
+    def __init__(self, delivery_ids: Sequence[str], reason: Refused) -> None:
         super().__init__(reason.sentence)
-        self.delivery_id = delivery_id
+        self.delivery_ids = tuple(delivery_ids)
         self.reason = reason
 
 
@@ -79,16 +79,18 @@ def placed(parts: Sequence[DeliveredPart], zone: str) -> tuple[dict[str, int], d
     if keeping is not None and _seams(parts, keeping) > _seams(parts, following):
         moved = {name for name, start in keeping.items() if start != following.get(name)}
         return keeping, {name: [finding("clock_not_changed")] for name in sorted(moved)}
-    for part in parts:
-        if part.delivery_id not in following:
-            raise Misfit(
-                part.delivery_id,
-                Refused(
-                    "local_time_ambiguous",
-                    "the local start lies in the hour of a clock change and no other part of the wear touches it; "
-                    "expected a start that happened once. Deliver the part before or after it, then retry.",
-                ),
-            )
+    unsettled = [part.delivery_id for part in parts if part.delivery_id not in following]
+    if unsettled:
+        # All at once: with one of two left alone, the other would take a place that may not be its own.
+        raise Misfit(
+            unsettled,
+            Refused(
+                "local_time_ambiguous",
+                "the local start lies in the hour of a clock change, and the other parts of the wear do not say which "
+                "of two times is meant; expected a start that happened once. Deliver the part before or after it, or "
+                "one with its offset from UTC, then retry.",
+            ),
+        )
     return following, {}
 
 

@@ -178,12 +178,13 @@ class Recordings:
         )
 
     def _refuse(self, key: str, misfits: Sequence[Misfit]) -> None:
-        for misfit in misfits:
-            row: dict[str, Any] = self._deliveries.rows[misfit.delivery_id]
-            told = {"status": QUARANTINED, "code": misfit.reason.code, "reason": misfit.reason.sentence}
+        refused = [(delivery_id, misfit.reason) for misfit in misfits for delivery_id in misfit.delivery_ids]
+        for delivery_id, reason in refused:
+            row: dict[str, Any] = self._deliveries.rows[delivery_id]
+            told = {"status": QUARANTINED, "code": reason.code, "reason": reason.sentence}
             self._deliveries.put(row | told | {"recording_id": None, "signal_sha256": None})
-            self._refused.append(misfit.delivery_id)
-        self._pieces.without(key, [misfit.delivery_id for misfit in misfits])
+            self._refused.append(delivery_id)
+        self._pieces.without(key, [delivery_id for delivery_id, _ in refused])
 
 
 def _read_json(path: Path) -> dict[str, str]:

@@ -87,7 +87,7 @@ def test_other_samples_in_the_overlap_refuse_the_later_arrival():
     ]
     with pytest.raises(Misfit) as misfit:
         arrange(parts, "UTC")
-    assert (misfit.value.delivery_id, misfit.value.reason.code) == ("early", "overlap_with_other_samples")
+    assert (misfit.value.delivery_ids, misfit.value.reason.code) == (("early",), "overlap_with_other_samples")
 
 
 def test_other_rate_or_scale_is_refused():
@@ -97,7 +97,7 @@ def test_other_rate_or_scale_is_refused():
             arrange(
                 [part("a", "2026-03-01 00:00", NOISE[:99]), part("b", "2026-03-02 00:00", NOISE[:99], **odd)], "UTC"
             )
-        assert (misfit.value.delivery_id, misfit.value.reason.code) == ("b", "does_not_fit_recording")
+        assert (misfit.value.delivery_ids, misfit.value.reason.code) == (("b",), "does_not_fit_recording")
 
 
 @pytest.mark.parametrize("alone", [True, False])
@@ -129,6 +129,7 @@ def test_two_parts_for_one_place_in_a_doubled_hour_are_refused():
     with pytest.raises(Misfit) as misfit:
         arrange(parts, "Europe/Berlin")
     assert misfit.value.reason.code == "local_time_ambiguous"
+    assert misfit.value.delivery_ids == ("b", "c")
 
 
 @pytest.mark.parametrize(
