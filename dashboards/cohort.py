@@ -19,7 +19,7 @@ def context(tables: Tables) -> dict[str, Any]:
     cohort = tables.whole("cohort")
     kinds = cohort.filter(pl.col("measure") == MEASURE)
     return {
-        "sections": [_section(tables, kind) for kind in kinds["therapy_kind"].unique().sort()],
+        "sections": [_section(tables, kind) for kind in _by_size(kinds)],
         "responders": cohort_charts.responders(kinds) if kinds.height else None,
         "cohort": [
             row | {"measure_name": words.MEASURES.get(row["measure"], (row["measure"], "", 0))[0]}
@@ -31,6 +31,12 @@ def context(tables: Tables) -> dict[str, Any]:
 def data_files(tables: Tables) -> dict[str, pl.DataFrame]:
     """Return the downloads of the page by name."""
     return {name: tables.whole(name) for name in ("changes", "cohort")}
+
+
+def _by_size(kinds: pl.DataFrame) -> list[str]:
+    """Return the kinds of therapy, the one with most evaluable patients first."""
+    ordered = kinds.sort("evaluable_patients", "therapy_kind", descending=[True, False])
+    return ordered["therapy_kind"].unique(maintain_order=True).to_list()
 
 
 def _section(tables: Tables, kind: str) -> dict[str, Any]:

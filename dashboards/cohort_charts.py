@@ -9,32 +9,46 @@ import polars as pl
 from dashboards import words
 from dashboards.charts import GREY, Figure, as_text, axis, layout, values
 
+SMALLEST, LARGEST = 0.01, 100.0  # of the ratios that are drawn; what lies beyond stands at the edge
+RATIO_TICKS = {
+    0.01: "1/100",
+    0.03: "1/30",
+    0.1: "1/10",
+    0.3: "1/3",
+    1: "same",
+    3: "3 ×",
+    10: "10 ×",
+    30: "30 ×",
+    100: "100 ×",
+}
+
 
 def changes_of_all(changes: pl.DataFrame) -> Figure:
-    """Each patient's change of one measure, sorted, before the band that chance explains for that patient."""
+    """Each patient's ratio of after to before, sorted, before the band that chance explains for that patient."""
     place = list(range(1, changes.height + 1))
+    limits = changes.select(
+        low=(1 - pl.col("chance_fall_limit_pct") / 100).clip(SMALLEST, LARGEST),
+        high=(1 + pl.col("chance_rise_limit_pct") / 100).clip(SMALLEST, LARGEST),
+    )
     band = {
         "type": "bar",
         "name": "explained by chance",
         "x": place,
-        "y": values(changes["chance_fall_limit_pct"] + changes["chance_rise_limit_pct"], 2),
-        "base": values(-changes["chance_fall_limit_pct"], 2),
+        "y": values(limits["high"] - limits["low"], 4),
+        "base": values(limits["low"], 4),
         "marker": {"color": "--worn"},
         "hoverinfo": "skip",
     }
     points = [_verdict_points(changes, place, verdict) for verdict in words.VERDICTS]
     drawn_on = layout(
         380,
-        xaxis={
-            **GREY,
-            "title": {"text": "patients, from the largest fall"},
-            "showticklabels": False,
-            "showgrid": False,
-        },
-        yaxis=axis("change, %", (0, 1), rangemode="normal", zeroline=True, zerolinecolor="--ink"),
+        xaxis={**GREY, "title": {"text": "patients, from the largest fall"}, "showticklabels": False, "showgrid": False},
+        yaxis=axis("after over before", (0, 1), type="log", rangemode="normal", tickvals=list(RATIO_TICKS),
+                   ticktext=list(RATIO_TICKS.values())),
         bargap=0.1,
         hovermode="closest",
-    )
+        shapes=[{"type": "line", "xref": "paper", "x0": 0, "x1": 1, "y0": 1, "y1": 1, "line": {"color": "--ink", "width": 1}}],
+    )  # fmt: skip
     return Figure(data=[band, *(trace for trace in points if trace["x"])], layout=drawn_on)
 
 
@@ -48,16 +62,18 @@ VERDICT_MARKS = {
 
 def _verdict_points(changes: pl.DataFrame, place: list[int], verdict: str) -> dict[str, Any]:
     colour, symbol = VERDICT_MARKS[verdict]
-    known = pl.col("change_pct").is_not_null()
+    known = pl.col("ratio").is_not_null()
     rows = changes.with_columns(place=pl.Series(place, dtype=pl.Int64)).filter((pl.col("verdict") == verdict) & known)
     return {
         "type": "scatter",
         "mode": "markers",
         "name": words.VERDICTS[verdict][1],
         "x": rows["place"].to_list(),
-        "y": values(rows["change_pct"], 2),
-        "customdata": [[as_text(code)] for code in rows["patient_code"]],
-        "hovertemplate": "%{customdata[0]}: %{y:+.1f} %<extra></extra>",
+        "y": values(rows["ratio"].clip(SMALLEST, LARGEST), 4),
+        "customdata": [
+            [as_text(code), round(change, 1)] for code, change in rows.select("patient_code", "change_pct").rows()
+        ],
+        "hovertemplate": "%{customdata[0]}: %{customdata[1]:+} %<extra></extra>",
         "marker": {"color": colour, "symbol": symbol, "size": 9},
     }
 

@@ -96,7 +96,7 @@ def _beats_in_force(lake: Path, ledger: Ledger, content: dict[str, Any]) -> pl.D
 
 
 def _read(lake: Path, parts: list[Part]) -> pl.DataFrame:
-    wanted = ("segment", "sample", "beat_class", "family")
+    wanted = ("segment", "sample", "beat_utc", "beat_class", "family")
     return pl.concat([read_part(lake, part).select(wanted) for part in parts])
 
 
@@ -165,9 +165,7 @@ def reviews(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
         .sort("segment", "sample")
     )
     who = {name: pl.lit(value) for name, value in _who(content).items()}
-    return decided.select("segment", "sample", "decision", pl.col("beat_class").alias("automatic_class")).with_columns(
-        **who
-    )
+    return decided.select("segment", "sample", "beat_utc", "decision", automatic_class="beat_class").with_columns(**who)
 
 
 def _who(content: dict[str, Any]) -> dict[str, Any]:

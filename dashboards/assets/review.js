@@ -125,8 +125,9 @@
   }
 
   document.getElementById("save").addEventListener("click", () => {
-    if (!state.reader_code.trim()) { say("Enter your reader code before saving: a decision belongs to a reader."); reader.focus(); return; }
+    if (!/^[A-Za-z0-9._-]{1,40}$/.test(state.reader_code.trim())) { say("Enter your reader code before saving: letters, digits, dots and dashes, no blank. A decision belongs to a reader."); reader.focus(); return; }
     const content = file();
+    if (![content.families, content.beats, content.episodes, content.note].some((each) => each.length)) { say("Nothing is decided yet, so there is nothing to save."); return; }
     const link = document.createElement("a");
     link.href = URL.createObjectURL(new Blob([JSON.stringify(content, null, 1) + "\n"], { type: "application/json" }));
     const safe = (text) => text.replace(/[^A-Za-z0-9_-]+/g, "-").slice(0, 60);

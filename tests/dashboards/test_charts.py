@@ -68,11 +68,11 @@ def test_a_change_of_level_is_marked_on_its_day(timeline):
 
 
 def test_every_patient_stands_before_the_band_that_chance_explains(tables):
-    """The cohort figure has one bar from fall limit to rise limit and one mark by verdict for each change."""
+    """The cohort figure has one bar from the smallest to the largest ratio of chance and one mark by verdict for each change."""
     changes = tables.whole("changes").filter(pl.col("measure") == "v_burden_pct").sort("change_pct", nulls_last=True)
     band, *marks = cohort_charts.changes_of_all(changes)["data"]
     # Source: the invented changes: chance explains falls to 61 % and rises to 155 %
-    assert set(zip(band["base"], band["y"], strict=True)) == {(-61, 216), (None, None)}
+    assert set(zip(band["base"], band["y"], strict=True)) == {(0.39, 2.16), (None, None)}
     assert sorted(place for trace in marks for place in trace["x"]) == [1, 2, 3]
     assert {trace["name"] for trace in marks} == {"fell beyond chance", "within chance", "rose beyond chance"}
 

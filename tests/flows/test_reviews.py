@@ -31,8 +31,15 @@ BEATS = pl.DataFrame(
         "sample": [0, 100, 200, 300, 400, 500],
         "beat_class": list("NVVNVN"),
         "family": [0, 1, 1, 0, 2, 0],
+        "beat_utc": [datetime.fromisoformat("2026-05-01T00:00:00")] * 6,
     },
-    schema={"segment": pl.Int16, "sample": pl.Int64, "beat_class": pl.String, "family": pl.Int16},
+    schema={
+        "segment": pl.Int16,
+        "sample": pl.Int64,
+        "beat_class": pl.String,
+        "family": pl.Int16,
+        "beat_utc": pl.Datetime("us"),
+    },
 )
 
 

@@ -12,7 +12,7 @@ automatic AS (
 ),
 
 decisions AS (
-    SELECT recording_id, count(DISTINCT (segment, sample)) AS beats
+    SELECT recording_id, count(DISTINCT beat_utc) AS beats
     FROM lake.reviews
     GROUP BY recording_id
 ),
