@@ -15,7 +15,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from detectors import families, fusion, rhythm
-from detectors.features import qrs_width_ms, spread_ms
+from detectors.features import qrs_and_t_mv, qrs_width_ms, spread_ms
 
 EARLY = 0.87  # of the usual interval
 ON_TIME = 0.10  # either side of the usual interval
@@ -24,6 +24,10 @@ S_EARLY_AFTER_CHANGE = 0.85  # of the usual interval of 12 beats ago
 S_SUDDEN = 0.90  # of the interval before
 AF_IRREGULARITY = 0.6
 MEDIAN_SAMPLE = 4096  # beats of a family from which its medians are taken
+IRREGULAR_ON_TIME = 0.35  # of the main normal family's beats: irregular as in fibrillation
+ABERRANT_EARLY = 0.8  # of a family's beats
+ABERRANT_BEATS = 5  # of a family: fewer do not tell
+ABERRANT_SIZE = 0.8  # of the main normal family's
 LATE = 0.3  # log of RR before over RR after: a beat after a pause
 LATE_WIDTH = 0.2  # log of the width over normal: a narrow late beat is a normal one
 
@@ -77,6 +81,8 @@ class Shapes(NamedTuple):
     alike_in_centre: NDArray[np.float32]  # the same for 48 ms either side of the R peak
     spread_ms: NDArray[np.float32]  # shape (n_families,)
     width_ms: NDArray[np.float32]  # shape (n_families,)
+    size_mv: NDArray[np.float32]  # shape (n_families,)
+    t_follows_qrs: NDArray[np.bool_]  # shape (n_families,), T wave on the side of the QRS
     normal: NDArray[np.int64]  # numbers of the normal families, the main one first
 
 
@@ -135,11 +141,14 @@ def compare_shapes(habits: Habits, family_shape_mv: NDArray[np.float32]) -> Shap
     same, when they are as narrow and keep time as well, or when they come in long stretches on time (bundle-branch
     block).
     """
+    level_mv, t_peak_mv = qrs_and_t_mv(family_shape_mv)
     shapes = Shapes(
         families.likeness(family_shape_mv),
         families.likeness(family_shape_mv, families.QRS_CENTRE),
         spread_ms(family_shape_mv),
         qrs_width_ms(family_shape_mv),
+        families.unit(families.QRS.of(family_shape_mv))[1],
+        level_mv * t_peak_mv > 0,
         np.empty(0, dtype=np.int64),
     )
     main = int(np.argmax(habits.n_beats * (habits.asymmetry > -0.2)))
@@ -224,10 +233,24 @@ def judge_families(
 
 
 def is_never_ventricular(terms: NDArray[np.float64], habits: Habits, shapes: Shapes) -> NDArray[np.bool_]:
-    """Families that the model is not asked about: the normal ones, and narrow beats after a pause."""
+    """Families that the model is not asked about: normal ones, narrow beats after a pause, aberrant beats."""
     never = (habits.asymmetry > LATE) & (terms[:, TERMS.index("width")] < LATE_WIDTH)
+    never |= _is_aberrant(habits, shapes)
     never[shapes.normal] = True
     return never
+
+
+def _is_aberrant(habits: Habits, shapes: Shapes) -> NDArray[np.bool_]:
+    """Early families of an irregular rhythm that are smaller than normal and whose T wave follows the QRS.
+
+    Fibrillation conducts early beats with a bundle branch still refractory; a ventricular beat is as large as a
+    normal one or larger and its T wave opposes it. Small evidence: the two signs together, in irregular rhythm only.
+    """
+    main = shapes.normal[0]
+    is_small = shapes.size_mv < ABERRANT_SIZE * shapes.size_mv[main]
+    is_irregular = habits.on_time[main] < IRREGULAR_ON_TIME
+    is_common = habits.n_beats >= ABERRANT_BEATS
+    return is_irregular & is_common & (habits.early > ABERRANT_EARLY) & is_small & shapes.t_follows_qrs
 
 
 def _fusions(

@@ -131,8 +131,7 @@ class FamilyBook:
         self._grow(direction, size, shape_mv, left[is_clean[left]])
         if self.n_beats.size > known:
             again = self._match(direction[left], size[left])
-            for column, now in zip(member, again, strict=True):
-                column[left] = now
+            member.family[left], member.nearest[left], member.likeness[left] = again
         self._learn(shape_mv, member)
         return member
 
@@ -140,7 +139,8 @@ class FamilyBook:
         """Match beats with the known families: all in place, then those that fit none at all lags."""
         n_beats = direction.shape[0]
         if self.n_beats.size == 0:
-            return Membership(*np.full((2, n_beats), -1, dtype=np.int16), np.zeros(n_beats, dtype=np.float32))
+            none = np.full(n_beats, -1, dtype=np.int16)
+            return Membership(none, none.copy(), np.zeros(n_beats, dtype=np.float32))
         own_direction, own_size = unit(QRS.of(self.shape_mv))
         match = direction @ own_direction.T
         nearest = match.argmax(axis=1)

@@ -27,6 +27,14 @@ def amplitude_mv(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
     return np.where(highest >= -lowest, highest, lowest)
 
 
+def qrs_and_t_mv(shape_mv: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
+    """Mean level of the QRS and peak of the T wave against the level before the QRS, signed, shape (n_beats,), mV."""
+    baseline = np.median(shape_mv[:, _at(-112) : _at(-72)], axis=1)
+    t_wave = shape_mv[:, _at(176) : _at(384)] - baseline[:, None]
+    peak = np.take_along_axis(t_wave, np.abs(t_wave).argmax(axis=1)[:, None], axis=1)[:, 0]
+    return shape_mv[:, _at(-96) : _at(112)].mean(axis=1) - baseline, peak
+
+
 def spread_ms(shape_mv: NDArray[np.float32]) -> NDArray[np.float32]:
     """Four standard deviations of the squared slope in time, shape (n_beats,): a width that noise moves little.
 
