@@ -13,11 +13,13 @@ from pathlib import Path, PurePosixPath
 
 from flows.deliveries import Deliveries
 from flows.inbox import Candidate, files_with_header
+from flows.lock import folder_lock
 from flows.privacy import shown_name
 from warehouse.ledger import Ledger
 from warehouse.parts import write_whole
 
 REASON_SUFFIX = ".reason.txt"
+_LOCK_WAIT_S = 10.0
 
 
 def quarantine(
@@ -100,21 +102,27 @@ def _remove_empty_folders(inbox: Path, folder: Path) -> None:
 def retry(folder: Path, name: str) -> None:
     """Put a quarantined delivery back into the inbox and let the ledger forget it, so that the next run tries again.
 
-    Raises FileNotFoundError where the quarantine has no such file.
+    Raises FileNotFoundError where the quarantine has no such file, FileExistsError where the inbox has one of its name,
+    FolderBusy while a run holds the folder.
     """
     source = folder / "quarantine" / name
     if PurePosixPath(name).name != name or name.endswith(REASON_SUFFIX) or not (source.is_symlink() or source.exists()):
         raise FileNotFoundError(2, "is not a file of the quarantine folder; expected one of its names", str(source))
+    files = files_with_header(source)
+    for path in files:
+        if (folder / "inbox" / path.name).exists():
+            raise FileExistsError(17, "lies in the inbox already; let a run take it first", str(path.name))
     reason = source.with_name(name + REASON_SUFFIX)
-    deliveries = Deliveries(folder / "lake", ledger := Ledger(folder / "lake"))
-    for delivery_id in _deliveries_in(reason):
-        if delivery_id in deliveries.rows:
-            deliveries.drop(delivery_id)
-    if loads := deliveries.loads():
-        ledger.commit(loads, note="retry")
-    for path in files_with_header(source):
-        _move(path, folder / "inbox" / path.name)
-    reason.unlink(missing_ok=True)
+    with folder_lock(folder, _LOCK_WAIT_S):
+        deliveries = Deliveries(folder / "lake", ledger := Ledger(folder / "lake"))
+        for delivery_id in _deliveries_in(reason):
+            if delivery_id in deliveries.rows:
+                deliveries.drop(delivery_id)
+        if loads := deliveries.loads():
+            ledger.commit(loads, note="retry")
+        for path in files:
+            _move(path, folder / "inbox" / path.name)
+        reason.unlink(missing_ok=True)
 
 
 def _deliveries_in(reason: Path) -> list[str]:

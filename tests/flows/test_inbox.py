@@ -119,6 +119,17 @@ def test_retry_after_a_fix_of_the_settings(programme, make_edf):
     assert programme.deliveries() == {"SRL-1001.edf": ("accepted", None)}
 
 
+def test_retry_never_covers_a_newer_file(programme):
+    """A file that was delivered again under the name of a refused one stays as it is."""
+    programme.deliver("7.edf", b"first")
+    programme.run()
+    programme.deliver("7.edf", b"second")
+    with pytest.raises(FileExistsError):
+        retry(programme.folder, "7.edf")
+    assert (programme.inbox / "7.edf").read_bytes() == b"second"
+    assert (programme.quarantine / "7.edf").read_bytes() == b"first"
+
+
 @pytest.mark.parametrize("name", ["nothing.edf", "../inbox/a.edf", "a.edf.reason.txt"])
 def test_retry_of_what_is_not_there(programme, name):
     """Retry takes names of the quarantine folder only."""
