@@ -23,23 +23,24 @@ def cohort(compared: pl.DataFrame, therapies: pl.DataFrame, success_limit_pct: f
     """
     kinds = therapies.select("therapy_id", "therapy_kind", "therapy_day")
     first = (
-        compared.filter(pl.col("measure") != HEART_RATE.name)
-        .join(kinds, on="therapy_id")
+        compared.join(kinds, on="therapy_id")
         .sort("therapy_day", "therapy_id")
         .unique(["patient_code", "therapy_kind", "measure"], keep="first", maintain_order=True)
     )
+    return cohort_rows("cohort", first, success_limit_pct)
+
+
+def cohort_rows(table: str, compared: pl.DataFrame, success_limit_pct: float) -> pl.DataFrame:
+    """Rows of the published `table`, whose key names the groups and the limit, from comparisons with those groups."""
+    groups = [name for name in PUBLISHED[table].key if name != "limit_pct"]
     limits = sorted({*LIMITS_PCT, success_limit_pct})
+    ectopy = compared.filter(pl.col("measure") != HEART_RATE.name).sort(groups)
     rows = [
-        {"therapy_kind": kind, "measure": measure}
-        | _counts(of_group)
-        | _spread(of_group)
-        | _responders(of_group, limit)
-        for (kind, measure), of_group in first.sort("therapy_kind", "measure").group_by(
-            "therapy_kind", "measure", maintain_order=True
-        )
+        dict(zip(groups, key, strict=True)) | _counts(of_group) | _spread(of_group) | _responders(of_group, limit)
+        for key, of_group in ectopy.group_by(groups, maintain_order=True)
         for limit in limits
     ]
-    types = {name: polars_type(COLUMNS[name].type) for name in PUBLISHED["cohort"].columns}
+    types = {name: polars_type(COLUMNS[name].type) for name in PUBLISHED[table].columns}
     return pl.DataFrame({name: [row[name] for row in rows] for name in types}, schema=types)
 
 

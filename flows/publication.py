@@ -19,7 +19,7 @@ from flows import trends
 from flows.promotion import published_fingerprint
 from flows.register import Register
 from flows.settings import ChangeSettings, Settings
-from flows.visits import visits
+from flows.visits import responders, visit_changes, visits
 from warehouse.build import TrendBuild
 from warehouse.ledger import Ledger
 from warehouse.parts import Part
@@ -78,7 +78,8 @@ def built(
         measured = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
         for name, frame in trends.tables(**measured, change=settings.change, wear=settings.wear).items():
             build.add(name, frame)
-        build.add("visits", visits(people.visits, measured["wear_days"], settings.trial))
+        for name, frame in _trial_tables(people, measured, settings).items():
+            build.add(name, frame)
         yield build
 
 
@@ -90,6 +91,14 @@ def _check(build: TrendBuild) -> None:
             f"not published: {len(failures)} checks of warehouse/checks returned rows; "
             f"the publication before stays: {told}"
         )
+
+
+def _trial_tables(people: Register, measured: dict[str, pl.DataFrame], settings: Settings) -> dict[str, pl.DataFrame]:
+    of_visits = visits(people.visits, measured["wear_days"], settings.trial)
+    hours_and_days = measured["local_hours"], measured["wear_days"]
+    compared = visit_changes(of_visits, *hours_and_days, settings.change, settings.trial)
+    counted = responders(compared, settings.change.success_limit_pct)
+    return {"visits": of_visits, "visit_changes": compared, "responders": counted}
 
 
 def _register_frames(people: Register, change: ChangeSettings) -> dict[str, pl.DataFrame]:

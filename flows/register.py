@@ -53,7 +53,7 @@ class Wear(NamedTuple):
 @dataclass(frozen=True)
 class Register:
     """patients (patient_code, zone), wears (fields of Wear), therapies (therapy_id, patient_code, therapy_kind,
-    therapy_detail, therapy_day) and visits (patient_code, visit, arm, target_day, window_days) as frames."""
+    therapy_detail, therapy_day) and visits (patient_code, visit, arm, target_day, days_before, days_after) as frames."""
 
     patients: pl.DataFrame
     wears: pl.DataFrame
@@ -131,7 +131,8 @@ _VISIT_TYPES: dict[str, pl.DataType] = {
     "visit": pl.String(),
     "arm": pl.String(),
     "target_day": pl.Date(),
-    "window_days": pl.Int64(),
+    "days_before": pl.Int64(),
+    "days_after": pl.Int64(),
 }
 
 
@@ -320,22 +321,24 @@ def _therapies(path: Path, patients: dict[str, Any]) -> list[tuple[str, str, str
     ]
 
 
-def _visits(folder: Path, patients: dict[str, Any]) -> list[tuple[str, str, str | None, date, int]]:
+def _visits(folder: Path, patients: dict[str, Any]) -> list[tuple[str, str, str | None, date, int, int]]:
     """Planned visits of a trial with the patient's arm, None where arms.csv has none."""
     known = list(patients)
     arm_rows = _rows(folder / "arms.csv", ("patient_code", "arm"), needed=False)
     _unique(arm_rows, "patient_code", lambda row: row.known("patient_code", known, "patients.csv"))
     arms = {row.values["patient_code"]: row.code("arm") for row in arm_rows}
-    rows = _rows(folder / "visits.csv", ("patient_code", "visit", "target_day", "window_days"), needed=False)
+    columns = ("patient_code", "visit", "target_local", "days_before", "days_after")
+    rows = _rows(folder / "visits.csv", columns, needed=False)
     _unique(rows, "visit", lambda row: f"{row.known('patient_code', known, 'patients.csv')} {row.code('visit')}")
-    _unique(rows, "target_day", lambda row: f"{row.values['patient_code']} {row.needed_local('target_day').date()}")
+    _unique(rows, "target_local", lambda row: f"{row.values['patient_code']} {row.needed_local('target_local').date()}")
     return [
         (
             row.values["patient_code"],
             row.values["visit"],
             arms.get(row.values["patient_code"]),
-            row.needed_local("target_day").date(),
-            row.whole("window_days", 0, _LONGEST_WINDOW_DAYS),
+            row.needed_local("target_local").date(),
+            row.whole("days_before", 0, _LONGEST_WINDOW_DAYS),
+            row.whole("days_after", 0, _LONGEST_WINDOW_DAYS),
         )
         for row in rows
     ]

@@ -74,7 +74,7 @@ class TrialSettings:
 
     min_analysable_h_per_day: float = _setting(18.0, "analysable hours that make a day of a visit count", 0.05, 23)
     min_days_per_visit: int = _setting(3, "such days that a visit needs", 1, 60)
-    unmasked: bool = _setting(False, "show the arms of register/arms.csv in published tables")
+    unmask_reason: str = _setting("", "why the arms of register/arms.csv may be published; empty keeps them masked")
 
 
 @dataclass(frozen=True)
@@ -131,6 +131,15 @@ class NotifySettings:
     only_trouble: bool = _setting(False, "stay silent when everything was published without refusals")
 
 
+@dataclass(frozen=True)
+class StatusSettings:
+    """What `burdenline status` calls late. Execution only."""
+
+    expected_every_h: float = _setting(
+        0.0, "hours within which a run must have ended, 26 for a nightly; 0: any", 0, 8760
+    )
+
+
 RESULT_SECTIONS = ("detector",)
 
 
@@ -148,6 +157,7 @@ class Settings:
     site: SiteSettings = field(default_factory=SiteSettings)
     workers: WorkersSettings = field(default_factory=WorkersSettings)
     notify: NotifySettings = field(default_factory=NotifySettings)
+    status: StatusSettings = field(default_factory=StatusSettings)
 
 
 DEFAULTS = Settings()

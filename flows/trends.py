@@ -37,11 +37,8 @@ def tables(
     change: ChangeSettings,
     wear: WearSettings,
 ) -> dict[str, pl.DataFrame]:
-    """The published tables that need statistics, by name; frames and results have the columns of `schema.PUBLISHED`."""
-    events = therapies.select("patient_code", "therapy_id").sort("patient_code", "therapy_id").with_row_index("event")
-    days = _days(events, periods, wear_days)
-    cells = days.join(local_hours, on=["patient_code", "local_day"]).filter(pl.col("analysable_s") > 0)
-    cells = cells.sort("day", "clock_hour")
+    """The published tables of therapy events, by name; frames and results have the columns of `schema.PUBLISHED`."""
+    events, days, cells = _prepared(local_hours, wear_days, periods, therapies)
     compared = _changes(events, days, cells, change, wear)
     return {
         "changes": compared,
@@ -50,6 +47,29 @@ def tables(
         "level_shifts": level_shifts(local_hours, wear_days),
         "cohort": cohort(compared, therapies, change.success_limit_pct),
     }
+
+
+def changes(
+    *,
+    local_hours: pl.DataFrame,
+    wear_days: pl.DataFrame,
+    periods: pl.DataFrame,
+    therapies: pl.DataFrame,
+    change: ChangeSettings,
+    wear: WearSettings,
+) -> pl.DataFrame:
+    """The `changes` table alone, for whatever `therapies` names and `periods` spans."""
+    return _changes(*_prepared(local_hours, wear_days, periods, therapies), change, wear)
+
+
+def _prepared(
+    local_hours: pl.DataFrame, wear_days: pl.DataFrame, periods: pl.DataFrame, therapies: pl.DataFrame
+) -> tuple[pl.DataFrame, pl.DataFrame, pl.DataFrame]:
+    """Numbered events, the valid days of their periods, and the hours of those days."""
+    events = therapies.select("patient_code", "therapy_id").sort("patient_code", "therapy_id").with_row_index("event")
+    days = _days(events, periods, wear_days)
+    cells = days.join(local_hours, on=["patient_code", "local_day"]).filter(pl.col("analysable_s") > 0)
+    return events, days, cells.sort("day", "clock_hour")
 
 
 def _changes(

@@ -1,8 +1,8 @@
-"""The `visits` table of a trial: which wear days a visit has, and whether they meet the protocol.
+"""The tables of a trial: visits with their wear days and protocol, visits against the first, responders.
 
 A day belongs to the visit whose target is nearest within that visit's window, at equal distance to the later one
 (common practice, no source). Missing visits keep their row; nothing is imputed. Comparing arms is left to the trial's
-statistician: counts and analysable hours stand in the table, so that any rate model can take them up.
+statistician: counts and analysable hours stand in `visits`, so that any rate model can take them up.
 """
 
 from __future__ import annotations
@@ -12,18 +12,20 @@ from typing import Any
 
 import polars as pl
 
-from flows.settings import TrialSettings
+from flows.cohorts import cohort_rows
+from flows.settings import ChangeSettings, TrialSettings, WearSettings
+from flows.trends import changes
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
 
-MASKED = "masked"
+MASKED, NO_ARM = "masked", "none"
 _KEYS = ("patient_code", "visit")
 
 
 def visits(planned: pl.DataFrame, wear_days: pl.DataFrame, trial: TrialSettings) -> pl.DataFrame:
-    """Rows of `schema.PUBLISHED["visits"]` for `planned` visits (patient_code, visit, arm, target_day, window_days).
+    """Rows of `schema.PUBLISHED["visits"]` for the planned visits of the register.
 
-    Arms are masked unless the programme's settings say otherwise.
+    Arms are masked unless the programme's settings give a reason to show them.
     """
     days = _days_of_visits(planned)
     spans = days.group_by(_KEYS).agg(first_day=pl.col("local_day").min(), last_day=pl.col("local_day").max())
@@ -34,7 +36,7 @@ def visits(planned: pl.DataFrame, wear_days: pl.DataFrame, trial: TrialSettings)
         valid_days=is_valid.sum(),
         **{name: pl.col(name).filter(is_valid).sum() for name in ("analysable_h", "v_beats", "s_beats", "all_beats")},
     )
-    arm = pl.col("arm") if trial.unmasked else pl.when(pl.col("arm").is_not_null()).then(pl.lit(MASKED))
+    arm = pl.col("arm") if trial.unmask_reason else pl.when(pl.col("arm").is_not_null()).then(pl.lit(MASKED))
     table = (
         planned.with_columns(arm=arm)
         .join(spans, on=_KEYS, how="left")
@@ -49,17 +51,49 @@ def visits(planned: pl.DataFrame, wear_days: pl.DataFrame, trial: TrialSettings)
         .sort("patient_code", "target_day", "visit")
     )
     reasons = [_reason(row, trial) for row in table.iter_rows(named=True)]
-    types = {name: polars_type(COLUMNS[name].type) for name in PUBLISHED["visits"].columns}
-    return table.with_columns(reason=pl.Series(reasons, dtype=pl.String)).select(
-        pl.col(name).cast(kind) for name, kind in types.items()
+    return _published("visits", table.with_columns(reason=pl.Series(reasons, dtype=pl.String)))
+
+
+def visit_changes(
+    of_visits: pl.DataFrame,
+    local_hours: pl.DataFrame,
+    wear_days: pl.DataFrame,
+    change: ChangeSettings,
+    trial: TrialSettings,
+) -> pl.DataFrame:
+    """Rows of `schema.PUBLISHED["visit_changes"]`: every visit against the patient's first, as events are compared."""
+    ordered = of_visits.sort("patient_code", "target_day")
+    first = ordered.unique("patient_code", keep="first", maintain_order=True)
+    later = ordered.join(first, on=_KEYS, how="anti").select(*_KEYS, "arm", "first_day", "last_day")
+    spans = first.select("patient_code", "first_day", "last_day")
+    before = later.select(*_KEYS).join(spans, on="patient_code").with_columns(period=pl.lit("baseline"))
+    after = later.select(*_KEYS, "first_day", "last_day").with_columns(period=pl.lit("after"))
+    compared = changes(
+        local_hours=local_hours,
+        wear_days=wear_days.with_columns(is_valid_day=pl.col("analysable_h") >= trial.min_analysable_h_per_day),
+        periods=pl.concat([before, after]).rename({"visit": "therapy_id"}),
+        therapies=later.rename({"visit": "therapy_id"}),
+        change=change,
+        wear=WearSettings(trial.min_analysable_h_per_day, trial.min_days_per_visit),
     )
+    return _published("visit_changes", compared.rename({"therapy_id": "visit"}).join(later, on=_KEYS))
+
+
+def responders(compared: pl.DataFrame, success_limit_pct: float) -> pl.DataFrame:
+    """Rows of `schema.PUBLISHED["responders"]` from `visit_changes`; masked arms are counted together."""
+    return cohort_rows("responders", compared.with_columns(pl.col("arm").fill_null(NO_ARM)), success_limit_pct)
+
+
+def _published(table: str, frame: pl.DataFrame) -> pl.DataFrame:
+    return frame.select(pl.col(name).cast(polars_type(COLUMNS[name].type)) for name in PUBLISHED[table].columns)
 
 
 def _days_of_visits(planned: pl.DataFrame) -> pl.DataFrame:
     """One row per patient and calendar day within a window, with the visit it belongs to."""
-    window = pl.duration(days=pl.col("window_days"))
+    first = pl.col("target_day") - pl.duration(days=pl.col("days_before"))
+    last = pl.col("target_day") + pl.duration(days=pl.col("days_after"))
     return (
-        planned.with_columns(local_day=pl.date_ranges(pl.col("target_day") - window, pl.col("target_day") + window))
+        planned.with_columns(local_day=pl.date_ranges(first, last))
         .explode("local_day")
         .with_columns(distance=(pl.col("local_day") - pl.col("target_day")).abs())
         .sort("patient_code", "local_day", "distance", "target_day", descending=[False, False, False, True])

@@ -278,7 +278,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("mean_ratio_low", "DOUBLE", "", "Lower end of the 95 % interval of the mean ratio."),
     ("mean_ratio_high", "DOUBLE", "", "Upper end of the 95 % interval of the mean ratio."),
     ("visit", "VARCHAR", "", "Name of the planned visit, as in the register."),
-    ("arm", "VARCHAR", "", "Arm of the trial; masked unless the settings unmask it, NULL when the register has none."),
+    ("arm", "VARCHAR", "", "Arm of the trial; masked unless the settings give a reason to show it, NULL or none without one."),
     ("target_day", "DATE", "", "Local day for which the visit is planned."),
     ("meets_protocol", "BOOLEAN", "", "The visit has the days and analysable hours that the trial's settings ask for."),
     ("verdict", "VARCHAR", "", "fell_beyond_chance, rose_beyond_chance, within_chance or too_little_wear."),
@@ -582,6 +582,19 @@ PUBLISHED: dict[str, Table] = _tables(
         ("patient_code", "visit", "arm", "target_day", "first_day", "last_day", "wear_days", "valid_days",
          "analysable_h", "v_beats", "s_beats", "all_beats", "v_burden_pct", "s_burden_pct", "v_per_h",
          "meets_protocol", "reason"),
+    ),
+    Table(
+        "visit_changes", "one row per patient, later visit of a trial and measure", ("patient_code", "visit", "measure"),
+        ("patient_code", "visit", "arm", "measure", "baseline_value", "after_value", "baseline_days", "after_days",
+         "ratio", "ratio_low", "ratio_high", "change_pct", "chance_fall_limit_pct", "chance_rise_limit_pct",
+         "success_probability_pct", "verdict", "reason"),
+    ),
+    Table(
+        "responders", "one row per later visit of a trial, arm, measure and limit of response",
+        ("visit", "arm", "measure", "limit_pct"),
+        ("visit", "arm", "measure", "limit_pct", "patients", "evaluable_patients", "fell_patients", "rose_patients",
+         "responders", "responder_pct", "responder_pct_low", "responder_pct_high", "mean_ratio", "mean_ratio_low",
+         "mean_ratio_high"),
     ),
     Table(
         "level_shifts", "one row per patient and day on which the ventricular burden moved to another level",

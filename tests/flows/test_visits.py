@@ -8,19 +8,21 @@ import pytest
 import statsmodels.api as sm
 
 from flows.register import RegisterError, load
-from flows.settings import TrialSettings
-from flows.visits import visits
+from flows.settings import ChangeSettings, TrialSettings
+from flows.visits import responders, visit_changes, visits
+from warehouse.parts import empty_frame
 from warehouse.schema import PUBLISHED
 
 START = date(2026, 4, 1)
 
 
 def planned(*rows: tuple[str, str, str | None, int, int]) -> pl.DataFrame:
-    """Planned visits from patient, name, arm, target (days from START) and window."""
-    names = ["patient_code", "visit", "arm", "target_day", "window_days"]
+    """Planned visits from patient, name, arm, target (days from START) and days of the window to both sides."""
+    names = ["patient_code", "visit", "arm", "target_day", "days_before"]
     columns = [list(column) for column in zip(*rows, strict=True)]
     columns[3] = [START + timedelta(day) for day in columns[3]]
-    return pl.DataFrame(dict(zip(names, columns, strict=True)), schema_overrides={"arm": pl.String})
+    frame = pl.DataFrame(dict(zip(names, columns, strict=True)), schema_overrides={"arm": pl.String})
+    return frame.with_columns(days_after="days_before")
 
 
 def worn(patient: str, days: list[int], *, analysable_h: float = 22.0, v_beats: int = 2200) -> pl.DataFrame:
@@ -54,16 +56,53 @@ def test_a_visit_that_fails_the_protocol_says_why():
 
 
 def test_arms_stay_masked_until_they_are_unmasked():
-    """The arm is published only when the settings unmask it."""
+    """The arm is published only when the settings give a reason."""
     plan = planned(("P1", "V1", "active", 0, 5), ("P2", "V1", None, 0, 5))
     assert visits(plan, worn("P1", [0]), TrialSettings())["arm"].to_list() == ["masked", None]
-    assert visits(plan, worn("P1", [0]), TrialSettings(unmasked=True))["arm"].to_list() == ["active", None]
+    assert visits(plan, worn("P1", [0]), TrialSettings(unmask_reason="database locked"))["arm"].to_list() == [
+        "active",
+        None,
+    ]
 
 
 def test_no_trial_gives_an_empty_table():
     """A programme without planned visits has an empty table with the published columns."""
     table = visits(planned(("P1", "V1", None, 0, 5)).clear(), worn("P1", [0]), TrialSettings())
     assert (table.height, tuple(table.columns)) == (0, PUBLISHED["visits"].columns)
+    hours = empty_frame(PUBLISHED["local_hours"])
+    compared = visit_changes(table, hours, worn("P1", [0]), ChangeSettings(), TrialSettings())
+    assert (compared.height, responders(compared, 80.0).height) == (0, 0)
+
+
+def test_visits_are_compared_with_the_first_and_responders_counted():
+    """A visit's fall against the first visit has ratio, verdict and reason; responders are counted by visit and arm."""
+    plan = planned(
+        *[(f"P{i}", name, "B", day, 4) for i in range(3) for name, day in (("V1", 0), ("V2", 20), ("V3", 40))]
+    )
+    rng = np.random.default_rng(3)
+    level = {0: 300.0, 20: 20.0, 40: 280.0}
+    hours = pl.concat([
+        pl.DataFrame({
+            "patient_code": f"P{i}", "local_day": START + timedelta(target + day), "clock_hour": list(range(24)),
+            "analysable_s": 3600.0, "v_beats": rng.poisson(per_h * np.exp(0.2 * rng.standard_normal()), 24),
+            "s_beats": 0, "all_beats": 4200, "mean_rate_bpm": 70.0, "couplets": 0, "runs": 0, "bigeminy_s": 0.0,
+        })
+        for i in range(3) for target, per_h in level.items() for day in range(4)
+    ])  # fmt: skip
+    days = hours.group_by("patient_code", "local_day").agg(
+        pl.lit(24.0).alias("analysable_h"), pl.col("v_beats", "s_beats", "all_beats").sum()
+    )
+    trial = TrialSettings()
+    table = visit_changes(visits(plan, days, trial), hours, days, ChangeSettings(), trial)
+    burden = table.filter(pl.col("measure") == "v_burden_pct").sort("patient_code", "visit")
+    assert burden["visit"].to_list() == ["V2", "V3"] * 3
+    assert burden["verdict"].to_list() == ["fell_beyond_chance", "within_chance"] * 3
+    assert tuple(table.columns) == PUBLISHED["visit_changes"].columns
+    counted = responders(table, 80.0).filter((pl.col("measure") == "v_burden_pct") & (pl.col("limit_pct") == 80))
+    assert counted.select("visit", "arm", "patients", "responders").rows() == [
+        ("V2", "masked", 3, 3),
+        ("V3", "masked", 3, 0),
+    ]
 
 
 def registered(folder, visits_csv: str, arms_csv: str | None = None):
@@ -81,26 +120,29 @@ def test_visits_and_arms_are_read_from_the_register(tmp_path):
     """Planned visits carry the patient's arm where the register has one."""
     table = registered(
         tmp_path,
-        "patient_code,visit,target_day,window_days\nP-1,week4,2026-04-29,7\nP-2,week4,2026-05-02,7\n",
+        "patient_code,visit,target_local,days_before,days_after\nP-1,week4,2026-04-29,7,9\nP-2,week4,2026-05-02,7,9\n",
         "patient_code,arm\nP-1,B\n",
     )
-    assert table.rows() == [("P-1", "week4", "B", date(2026, 4, 29), 7), ("P-2", "week4", None, date(2026, 5, 2), 7)]
+    assert table.rows() == [
+        ("P-1", "week4", "B", date(2026, 4, 29), 7, 9),
+        ("P-2", "week4", None, date(2026, 5, 2), 7, 9),
+    ]
 
 
 @pytest.mark.parametrize(
     ("rows", "said"),
     [
-        ("P-9,week4,2026-04-29,7", "patient_code: found 'P-9'"),
-        ("P-1,week4,2026-04-29,-7", "a whole number from 0 to 180"),
-        ("P-1,week4,soon,7", "target_day"),
-        ("P-1,week4,2026-04-29,7\nP-1,week4,2026-05-29,7", "not in row 2 already"),
-        ("P-1,week4,2026-04-29,7\nP-1,week5,2026-04-29,7", "not in row 2 already"),
+        ("P-9,week4,2026-04-29,7,7", "patient_code: found 'P-9'"),
+        ("P-1,week4,2026-04-29,-7,7", "a whole number from 0 to 180"),
+        ("P-1,week4,soon,7,7", "target_local"),
+        ("P-1,week4,2026-04-29,7,7\nP-1,week4,2026-05-29,7,7", "not in row 2 already"),
+        ("P-1,week4,2026-04-29,7,7\nP-1,week5,2026-04-29,7,7", "not in row 2 already"),
     ],
 )
 def test_a_wrong_visit_leads_to_its_cell(tmp_path, rows, said):
     """A visit that cannot be used is refused with row, column and what is expected."""
     with pytest.raises(RegisterError, match=said):
-        registered(tmp_path, f"patient_code,visit,target_day,window_days\n{rows}\n")
+        registered(tmp_path, f"patient_code,visit,target_local,days_before,days_after\n{rows}\n")
 
 
 @pytest.fixture(scope="module")
@@ -117,7 +159,7 @@ def trial() -> pl.DataFrame:
             for day in range(target, target + 4):
                 level = np.exp(usual + effect + 0.4 * rng.standard_normal())
                 days.append(worn(f"P{i:02}", [day], v_beats=int(rng.poisson(level))))
-    return visits(planned(*plans), pl.concat(days), TrialSettings(unmasked=True))
+    return visits(planned(*plans), pl.concat(days), TrialSettings(unmask_reason="database locked"))
 
 
 def design_of(trial: pl.DataFrame) -> np.ndarray:
