@@ -12,7 +12,7 @@ from flows.readers.recording import Finding, Stretch, finding
 
 MISSING = -32768  # stored for a missing sample of a fitted lead
 _LARGEST = 32767
-_BLOCK = 2**20
+_BLOCK = 2**18
 
 
 class Wide(NamedTuple):
@@ -41,10 +41,13 @@ def fitted(lead: Wide) -> tuple[Wide, tuple[Finding, ...]]:
         findings.append(finding("resolution_reduced", f"{divisor} counts of the file make one"))
 
     def read(a: int, b: int) -> NDArray[np.int16]:
-        raw = lead.read(a, b)
-        missing = _missing(raw, lead.missing_count)
-        counts = np.rint((np.where(missing, 0, raw).astype(np.float64) - shift) / divisor)
-        return np.where(missing, MISSING, counts).astype(np.int16)
+        counts = np.empty(b - a, np.int16)
+        for first in range(a, b, _BLOCK):
+            raw = lead.read(first, min(first + _BLOCK, b))
+            missing = _missing(raw, lead.missing_count)
+            scaled = np.rint((np.where(missing, 0, raw).astype(np.float64) - shift) / divisor)
+            counts[first - a : first - a + raw.size] = np.where(missing, MISSING, scaled)
+        return counts
 
     def rail(count: int) -> int:
         return int(np.clip(round((count - shift) / divisor), -_LARGEST, _LARGEST))
