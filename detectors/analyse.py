@@ -160,7 +160,7 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
     """Classes, episodes and findings of gathered beats, with the whole recording as context."""
     found, bad, lengths, fs_hz = gathered.found, gathered.bad, gathered.lengths, gathered.fs_hz
     sample, timing = timing_of(found, bad, lengths, fs_hz)
-    labels = classify.classify(timing, found.member, gathered.book.shape_mv, weights)
+    labels = classify.classify(timing, found.member, found.spread_ms, gathered.book.shape_mv, weights)
     is_analysable = quality.is_outside(bad, found.segment, sample)
     bad = _with_doubtful_runs(bad, found, sample, timing, labels, is_analysable)
     is_analysable = quality.is_outside(bad, found.segment, sample)

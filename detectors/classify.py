@@ -23,6 +23,9 @@ S_EARLY = 0.885  # of the usual interval
 S_EARLY_AFTER_CHANGE = 0.85  # of the usual interval of 12 beats ago
 S_SUDDEN = 0.90  # of the interval before
 AF_IRREGULARITY = 0.6
+MERGED_ON_TIME = 0.08  # either side of the usual interval
+MERGED_WIDTH = 0.85  # of the family's
+MERGED_EARLY = 0.6  # of the family's beats
 MEDIAN_SAMPLE = 4096  # beats of a family from which its medians are taken
 IRREGULAR_ON_TIME = 0.35  # of the main normal family's beats: irregular as in fibrillation
 ABERRANT_EARLY = 0.8  # of a family's beats
@@ -89,10 +92,11 @@ class Shapes(NamedTuple):
 def classify(
     timing: Timing,
     member: families.Membership,
+    beat_spread_ms: NDArray[np.float32],
     family_shape_mv: NDArray[np.float32],
     weights: NDArray[np.float64] = WEIGHTS,
 ) -> Labels:
-    """Label all beats of a recording from their timing, their family and the families' averaged shapes."""
+    """Label all beats of a recording from their timing, family and width, and the families' averaged shapes."""
     n_families = family_shape_mv.shape[0]
     if n_families == 0:
         return Labels(np.full(member.family.size, "Q"), np.zeros(member.family.size), np.empty(0, dtype="<U1"))
@@ -106,6 +110,7 @@ def classify(
     odds[loose] = _loose_odds(timing, member, loose, habits.early[shapes.normal[0]], family_odds)
     is_v = odds > 0
     is_f = (member.family >= 0) & (family_class[member.family] == "F")
+    is_f |= is_v & _merges(timing, member, beat_spread_ms, habits, shapes)
     is_v &= ~is_f
     is_s = supraventricular(timing, is_v | is_f)
     beat_class = np.select([is_f, is_v, is_s], ["F", "V", "S"], "N")
@@ -269,6 +274,19 @@ def _fusions(
         if fusion.is_fusion(family_shape_mv[row], family_shape_mv[main], family_shape_mv[parents])
     ]
     return np.array(found, dtype=np.int64)
+
+
+def _merges(
+    timing: Timing,
+    member: families.Membership,
+    beat_spread_ms: NDArray[np.float32],
+    habits: Habits,
+    shapes: Shapes,
+) -> NDArray[np.bool_]:
+    """Beats of an early family that are themselves on time and clearly narrower: merged with the conducted beat."""
+    is_on_time = (np.abs(timing.before - 1) < MERGED_ON_TIME) & (np.abs(timing.after - 1) < ON_TIME)
+    is_narrower = beat_spread_ms < MERGED_WIDTH * shapes.spread_ms[member.family]
+    return is_on_time & is_narrower & (member.family >= 0) & (habits.early[member.family] > MERGED_EARLY)
 
 
 def _loose_odds(
