@@ -13,6 +13,7 @@ from warehouse import parts, schema
 from warehouse.build import COMPUTED_OUTSIDE, TrendBuild
 from warehouse.ledger import Ledger
 from warehouse.parts import write_part
+from warehouse.publish import publish
 
 SETTINGS = {
     "min_analysable_h_per_day": 10.0,
@@ -163,3 +164,42 @@ def lake(tmp_path: Path) -> Lake:
 def make_lake() -> type[Lake]:
     """Makes an empty lake in a given folder, for tests that need several."""
     return Lake
+
+
+@pytest.fixture
+def programme(lake: Lake) -> Lake:
+    """A lake with one patient, two recordings with beats, and one therapy event."""
+    return filled_lake(lake)
+
+
+@pytest.fixture(scope="session")
+def standing(tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """Published folder of that programme, for tests that only read."""
+    lake = filled_lake(Lake(tmp_path_factory.mktemp("standing")))
+    with lake.built() as build:
+        publish(build, lake.folder / "published", site=lambda _, folder: folder.mkdir(), stamp={"version": "7"})
+    return lake.folder / "published"
+
+
+def filled_lake(lake: Lake) -> Lake:
+    """Land a small programme."""
+    lake.patient("P1", "Europe/Lisbon")
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-03T00:00")
+    lake.recording("R2", "P1", "2026-06-01T00:00", "2026-06-02T00:00")
+    lake.therapy("P1", "2026-05-10", settling_days=7)
+    for number, name in enumerate(("R1", "R2")):
+        beats = [
+            {
+                "recording_id": name,
+                "fingerprint": "f1",
+                "segment": 0,
+                "sample": 200 * n,
+                "beat_utc": datetime.fromisoformat(f"2026-0{5 + number}-01T00:00"),
+                "beat_class": "NV"[n % 2],
+                "is_escape": False,
+                "is_analysable": True,
+            }
+            for n in range(4 + number)
+        ]
+        lake.land("beats", name, beats, fingerprint="f1")
+    return lake

@@ -272,7 +272,7 @@ def test_the_scratch_database_is_removed(lake: Any) -> None:
 
 
 @given(cuts=st.sets(st.integers(1, 3 * 96 - 1), max_size=6), zone=st.sampled_from(["Europe/Berlin", "Asia/Kathmandu"]))
-@settings(max_examples=8, deadline=None)
+@settings(max_examples=4, deadline=None)
 def test_wear_days_do_not_depend_on_how_the_wear_was_cut(
     tmp_path_factory: pytest.TempPathFactory, make_lake: Any, cuts: set[int], zone: str
 ) -> None:

@@ -1,4 +1,4 @@
-"""A publication is complete, switched in one step, the same when nothing changed, and read through one door."""
+"""A publication is switched in one step, the same when nothing changed, and whole after a kill or a full disk."""
 
 import json
 import os
@@ -9,18 +9,14 @@ import subprocess
 import sys
 import textwrap
 import time
-from datetime import datetime
 from pathlib import Path
 from typing import Any
 
-import duckdb
-import polars as pl
 import pytest
 
 from warehouse import cuts, ledger, schema
-from warehouse import publish as publication
 from warehouse.publish import PublishError, publish
-from warehouse.published import Published, PublishedError, QueryError, worked_queries
+from warehouse.published import Published, QueryError
 
 
 def _site(published: Published, folder: Path) -> None:
@@ -31,60 +27,6 @@ def _site(published: Published, folder: Path) -> None:
 def _publish(lake: Any, stamp: dict[str, Any] | None = None, fingerprint: str = "f1") -> bool:
     with lake.built(fingerprint) as build:
         return publish(build, lake.folder / "published", site=_site, stamp=stamp or {"version": "1"})
-
-
-@pytest.fixture
-def programme(lake: Any) -> Any:
-    """A lake with one patient, one recording with beats, and one therapy event."""
-    lake.patient("P1", "Europe/Lisbon")
-    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-03T00:00")
-    lake.recording("R2", "P1", "2026-06-01T00:00", "2026-06-02T00:00")
-    lake.therapy("P1", "2026-05-10", settling_days=7)
-    for number, name in enumerate(("R1", "R2")):
-        beats = [
-            {
-                "recording_id": name,
-                "fingerprint": "f1",
-                "segment": 0,
-                "sample": 200 * n,
-                "beat_utc": datetime.fromisoformat(f"2026-0{5 + number}-01T00:00"),
-                "beat_class": "NV"[n % 2],
-                "is_escape": False,
-                "is_analysable": True,
-            }
-            for n in range(4 + number)
-        ]
-        lake.land("beats", name, beats, fingerprint="f1")
-    return lake
-
-
-def test_a_publication_holds_every_table_of_the_dictionary(programme: Any) -> None:
-    """Database, Parquet tables and the reader agree on every table, its columns and its rows."""
-    assert _publish(programme)
-    published = Published(programme.folder / "published")
-    for name, table in schema.PUBLISHED.items():
-        frame = published.table(name)
-        assert frame.columns == list(table.columns)
-        assert published.frame(f"FROM {name} ORDER BY ALL").equals(frame.sort(pl.all())) or name == "parts"
-        assert published.frame(f"FROM {name}").height == frame.height
-        if name not in ("beats", "quality_windows", "strips"):
-            assert (programme.folder / "published" / "tables" / f"{name}.parquet").is_file()
-    assert published.table("beats").height == 9
-
-
-def test_every_table_and_column_says_what_it_is(programme: Any) -> None:
-    """COMMENTs in the database and the table data_dictionary come from the column dictionary."""
-    _publish(programme)
-    published = Published(programme.folder / "published")
-    comments = published.frame("SELECT table_name, column_name, comment FROM duckdb_columns() WHERE NOT internal")
-    assert comments["comment"].null_count() == 0
-    assert (
-        comments.height
-        == published.table("data_dictionary").height
-        == sum(len(table.columns) for table in schema.PUBLISHED.values())
-    )
-    tables = "SELECT comment FROM duckdb_tables() UNION ALL SELECT comment FROM duckdb_views() WHERE NOT internal"
-    assert set(published.frame(tables)["comment"]) == {table.grain for table in schema.PUBLISHED.values()}
 
 
 def test_publishing_the_same_again_switches_nothing(programme: Any) -> None:
@@ -110,17 +52,6 @@ def test_the_same_tables_make_the_same_bytes(programme: Any, tmp_path: Path) -> 
     assert len(files) > len(schema.PUBLISHED)
     for file in {file for file in files if file.suffix != ".duckdb"}:
         assert (a / file).read_bytes() == (b / file).read_bytes(), file
-
-
-def test_the_older_reader_copy_holds_the_same_tables(programme: Any) -> None:
-    """The copy in the older storage version has every table with the same rows."""
-    _publish(programme)
-    folder = programme.folder / "published"
-    with duckdb.connect(str(folder / publication.DATABASE_FOR_OLDER_READERS), read_only=True) as older:
-        tags = older.execute("SELECT tags FROM duckdb_databases() WHERE database_name LIKE 'burdenline%'").fetchone()
-        days = older.execute("SELECT count(*), sum(v_beats) FROM wear_days").fetchone()
-    assert "v1.2.0" in str(tags)
-    assert days == (5, 90 * 96 * 3)
 
 
 def test_an_open_reader_stays_with_its_edition(programme: Any) -> None:
@@ -177,41 +108,6 @@ def test_a_programme_folder_may_have_any_plain_name(make_lake: Any, tmp_path: Pa
     assert ledger.tidy(tmp_path / name / "lake", -1) == []
 
 
-def test_rows_of_one_recording_come_alone(programme: Any) -> None:
-    """`where` filters trend tables and tables that are read from the lake alike."""
-    _publish(programme)
-    published = Published(programme.folder / "published")
-    assert published.table("beats", {"recording_id": "R2"})["recording_id"].to_list() == ["R2"] * 5
-    assert published.table("hours", {"recording_id": "R2"}).height == 24
-    assert published.table("beats", {"recording_id": "R9"}).is_empty()
-
-
-@pytest.mark.parametrize(
-    ("sql", "words"),
-    [
-        ("FROM wear_day", 'Did you mean "wear_days"'),
-        ("SELECT v_burden FROM wear_days", "v_burden_pct"),
-        ("DROP TABLE wear_days", "expected one query that reads"),
-        ("CREATE TABLE x (i INTEGER)", "expected one query that reads"),
-        ("COPY wear_days TO 'x.csv'", "expected one query that reads"),
-        ("SELECT 1; SELECT 2", "expected one query that reads"),
-        ("", "expected one query that reads"),
-        ("SELEKT 1", "syntax error"),
-        ("FROM read_csv('/etc/hostname')", "disabled by configuration"),
-        ("FROM glob('/etc/*')", "disabled by configuration"),
-        ("INSTALL httpfs", "expected one query that reads"),
-        ("SET threads = 1", "expected one query that reads"),
-        ("SELECT error('broken row') FROM wear_days", "broken row"),
-        ("SELECT 1 UNION ALL SELECT error('last row')::INTEGER", "last row"),
-    ],
-)
-def test_a_query_that_does_not_read_the_publication_is_refused(programme: Any, sql: str, words: str) -> None:
-    """Unknown names come with the nearest ones; writing and reading elsewhere is refused."""
-    _publish(programme)
-    with pytest.raises(QueryError, match=re.escape(words)):
-        Published(programme.folder / "published").frame(sql)
-
-
 def test_a_lake_that_was_moved_away_is_missed_with_its_place(programme: Any) -> None:
     """Trend tables still answer without the lake; a query over beats says where it has to be."""
     _publish(programme)
@@ -220,19 +116,6 @@ def test_a_lake_that_was_moved_away_is_missed_with_its_place(programme: Any) -> 
     assert published.frame("FROM wear_days").height == 5
     with pytest.raises(QueryError, match=re.escape(f"put the lake back at {programme.folder / 'lake'}")):
         published.frame("FROM beats")
-
-
-def test_a_folder_without_publication_says_what_to_do(tmp_path: Path) -> None:
-    """Opening an empty folder names the command that publishes; an unknown table names the near ones."""
-    with pytest.raises(PublishedError, match="nothing is published"):
-        Published(tmp_path)
-
-
-def test_an_unknown_table_comes_with_near_names(programme: Any) -> None:
-    """The reader names the tables that may have been meant."""
-    _publish(programme)
-    with pytest.raises(PublishedError, match=r"no published table 'weardays'; did you mean wear_days"):
-        Published(programme.folder / "published").table("weardays")
 
 
 def test_a_foreign_file_in_the_place_of_a_link_is_not_overwritten(programme: Any) -> None:
@@ -274,22 +157,6 @@ def test_a_disk_that_is_too_small_leaves_the_standing_edition(programme: Any) ->
     assert (programme.folder / "published" / "current").readlink() == before
     assert [path.name for path in (programme.folder / "published" / ".editions").iterdir()] == [before.name]
     assert Published(programme.folder / "published").frame("FROM wear_days").height == 5
-
-
-@pytest.mark.parametrize("query", worked_queries(), ids=lambda query: query.name)
-def test_every_worked_query_answers(programme: Any, query: Any) -> None:
-    """Each worked query begins with its question and runs on a publication."""
-    _publish(programme)
-    assert query.question.endswith("?")
-    assert Published(programme.folder / "published").frame(query.sql).width >= 2
-
-
-def test_the_manifest_names_what_the_edition_was_made_from(programme: Any) -> None:
-    """Fingerprint, stamp, and rows and hash of every table stand in the manifest."""
-    _publish(programme, stamp={"version": "7"})
-    manifest = json.loads((programme.folder / "published" / "manifest.json").read_text())
-    assert (manifest["fingerprint"], manifest["stamp"], manifest["lake"]) == ("f1", {"version": "7"}, "../lake")
-    assert manifest["tables"]["wear_days"]["rows"] == 5
 
 
 @pytest.mark.parametrize("delay_ms", [5, 40, 90, 160, 300])
