@@ -73,26 +73,36 @@ def run(
     `actor_code` stands in the history beside edits of register and settings that this run is the first to see.
     Raises SettingsError, RegisterError, FolderBusy, LedgerError or CheckFailed; the publication then stays as it was.
     """
+    from flows import last_run
+
+    settings = programme_settings.load(folder / "programme.toml")
+    with folder_lock(folder, wait_s), last_run.noted(folder) as outcomes:
+        outcome = _bring_up_to_date(folder, settings, reporter, actor_code, analyse_all or analyse_here)
+        outcomes.append(outcome.outcome)
+    return outcome
+
+
+def _bring_up_to_date(
+    folder: Path, settings: Settings, reporter: Reporter, actor_code: str | None, analyse_all: Analyse
+) -> Outcome:
     from flows import edits, ingest, publication, register
     from warehouse.ledger import Ledger
 
-    settings = programme_settings.load(folder / "programme.toml")
-    with folder_lock(folder, wait_s):
-        people = register.load(folder, settings.programme.zone)
-        ledger = Ledger(folder / "lake")
-        edits.note_edits(folder / "lake", settings, people, ledger, actor_code)
-        arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)
-        work = [Work(folder, recording_id, settings) for recording_id in unanalysed(ledger, settings)]
-        for loads in (analyse_all or analyse_here)(work, reporter):
-            ledger.commit(loads, note="detect")
-        run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
-        if arrivals.changed or work:
-            _note_run(run_id, folder, ledger, arrivals, _outcome(True, arrivals.quarantined))
-        try:
-            changed = publication.refresh(folder, settings, people, ledger, reporter.say)
-        except publication.CheckFailed:
-            _note_run(run_id, folder, ledger, arrivals, "not_published")
-            raise
+    people = register.load(folder, settings.programme.zone)
+    ledger = Ledger(folder / "lake")
+    edits.note_edits(folder / "lake", settings, people, ledger, actor_code)
+    arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)
+    work = [Work(folder, recording_id, settings) for recording_id in unanalysed(ledger, settings)]
+    for loads in analyse_all(work, reporter):
+        ledger.commit(loads, note="detect")
+    run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
+    if arrivals.changed or work:
+        _note_run(run_id, folder, ledger, arrivals, _outcome(True, arrivals.quarantined))
+    try:
+        changed = publication.refresh(folder, settings, people, ledger, reporter.say)
+    except publication.CheckFailed:
+        _note_run(run_id, folder, ledger, arrivals, "not_published")
+        raise
     return Outcome(
         outcome=_outcome(changed, arrivals.quarantined),
         accepted=arrivals.accepted,

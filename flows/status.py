@@ -1,61 +1,155 @@
-"""How fresh the publication is and what waits, for a person in the morning and for a monitoring program."""
+"""How fresh the publication is, what waits and how long the disk lasts: for a person in the morning and for monitoring."""
 
 from __future__ import annotations
 
 import shutil
+from collections.abc import Iterator
+from datetime import UTC, datetime
 from pathlib import Path
 from typing import Any
 
 import polars as pl
 
+from flows import last_run
 from flows import settings as programme_settings
 from warehouse.published import Published
 
+GROWTH_DAYS = 30
+SHORTEST_GROWTH_DAYS = 7  # a younger lake mostly shows its first filling, not its growth
+SOON_FULL_DAYS = 30
 
-def status(folder: Path) -> dict[str, Any]:
+
+def status(folder: Path, now_utc: datetime | None = None) -> dict[str, Any]:
     """Collect plain values about a programme folder; a folder never published has `published` false.
 
-    Raises SettingsError when the folder is no programme.
+    `now_utc` is the instant as of which ages are told. Raises SettingsError when the folder is no programme.
     """
-    programme = programme_settings.load(folder / "programme.toml").programme
+    now_utc = now_utc or datetime.now(UTC)
+    settings = programme_settings.load(folder / "programme.toml")
     found: dict[str, Any] = {
-        "programme": programme.name,
+        "programme": settings.programme.name,
         "published": (folder / "published" / "burdenline.duckdb").exists(),
-        "inbox_files": sum(path.is_file() for path in (folder / "inbox").rglob("*")),
+        **_of_last_run(folder, now_utc),
+        "expected_every_h": settings.status.expected_every_h,
+        "inbox_files": len(_files(folder / "inbox")),
         "quarantined_files": sum(path.suffixes[-2:] != [".reason", ".txt"] for path in _files(folder / "quarantine")),
-        "disk_free_gb": round(shutil.disk_usage(folder).free / 1e9, 1),
+        **_of_disk(folder, now_utc),
     }
     if found["published"]:
-        found |= _of_publication(Published(folder / "published"))
-    return found
+        found |= _of_publication(Published(folder / "published"), now_utc)
+    return found | {"trouble": list(_trouble(found))}
+
+
+def _of_last_run(folder: Path, now_utc: datetime) -> dict[str, Any]:
+    last = last_run.read(folder)
+    if last is None:
+        return {"last_run_utc": None, "last_run_age_h": None, "last_outcome": None, "last_reason": None}
+    return {
+        "last_run_utc": f"{last.finished_utc:%Y-%m-%d %H:%M:%S}",
+        "last_run_age_h": _hours(now_utc - last.finished_utc),
+        "last_outcome": last.outcome,
+        "last_reason": last.reason or None,
+    }
+
+
+def _of_disk(folder: Path, now_utc: datetime) -> dict[str, Any]:
+    """Free space, and the days that it lasts at the lake's growth of the last month."""
+    free_bytes = shutil.disk_usage(folder).free
+    growth = _growth_bytes_per_day(folder / "lake", now_utc)
+    return {
+        "disk_free_gb": round(free_bytes / 1e9, 1),
+        "lake_growth_gb_per_day": None if growth is None else round(growth / 1e9, 4),
+        "days_until_full": int(free_bytes / growth) if growth else None,
+    }
+
+
+def _growth_bytes_per_day(lake: Path, now_utc: datetime) -> float | None:
+    """Bytes of the last month's part files per day; None for a lake too young to tell."""
+    stats = [path.stat() for path in _files(lake)]
+    ages_days = [(now_utc.timestamp() - stat.st_mtime) / 86400 for stat in stats]
+    span_days = min(GROWTH_DAYS, max(ages_days, default=0.0))
+    if span_days < SHORTEST_GROWTH_DAYS:
+        return None
+    return sum(stat.st_size for stat, age in zip(stats, ages_days, strict=True) if age < span_days) / span_days
 
 
 def _files(folder: Path) -> list[Path]:
     return [path for path in folder.rglob("*") if path.is_file()]
 
 
-def _of_publication(published: Published) -> dict[str, Any]:
-    deliveries, runs, recordings = (published.table(name) for name in ("deliveries", "runs_of_flow", "recordings"))
-    last = runs.sort("finished_utc").tail(1).to_dicts()
-    newest = recordings.group_by("patient_code").agg(pl.col("end_utc").max()).sort("patient_code")
+def _of_publication(published: Published, now_utc: datetime) -> dict[str, Any]:
+    deliveries, runs = published.table("deliveries"), published.table("runs_of_flow")
+    told = ("file_name", "code", "reason")
     return {
-        "last_run_utc": str(last[0]["finished_utc"]) if last else None,
-        "last_outcome": last[0]["outcome"] if last else None,
+        "last_publication_utc": runs.select(pl.col("finished_utc").max().dt.strftime("%Y-%m-%d %H:%M:%S")).item(),
         "deliveries": dict(deliveries.group_by("status").len().sort("status").iter_rows()),
-        "waiting": deliveries.filter(status="waiting").select("file_name", "code", "reason").to_dicts(),
-        "patients": [{"patient_code": code, "data_until_utc": str(until)} for code, until in newest.iter_rows()],
+        "waiting": deliveries.filter(status="waiting").select(told).to_dicts(),
+        "refused": deliveries.filter(status="quarantined")
+        .sort("received_utc", descending=True)
+        .select(told)
+        .to_dicts(),
+        "patients": list(_ages(published, now_utc.replace(tzinfo=None))),
     }
+
+
+def _ages(published: Published, now: datetime) -> Iterator[dict[str, Any]]:
+    """Until when there are data of each patient of the register, and how many hours ago that was."""
+    newest = published.table("recordings").group_by("patient_code").agg(pl.col("end_utc").max())
+    everybody = published.table("patients").join(newest, on="patient_code", how="left").sort("patient_code")
+    for code, until in everybody.select("patient_code", "end_utc").iter_rows():
+        age_h = None if until is None else _hours(now - until)
+        yield {"patient_code": code, "data_until_utc": until and f"{until:%Y-%m-%d %H:%M:%S}", "data_age_h": age_h}
+
+
+def _hours(span: Any) -> float:
+    return round(span.total_seconds() / 3600, 1)
+
+
+def _trouble(found: dict[str, Any]) -> Iterator[str]:
+    """What a person should look at, one sentence each."""
+    expected_h, age_h = found["expected_every_h"], found["last_run_age_h"]
+    if expected_h and age_h is None:
+        yield f"no run has ended here yet; one is expected every {expected_h:g} h"
+    elif expected_h and age_h > expected_h:
+        yield f"the last run ended {age_h:g} h ago; one is expected every {expected_h:g} h"
+    if found["last_outcome"] == "not_published":
+        yield f"the last run published nothing: {found['last_reason']}"
+    if found["days_until_full"] is not None and found["days_until_full"] < SOON_FULL_DAYS:
+        yield f"the disk is full in {found['days_until_full']} days at the growth of the last month"
+    if found["quarantined_files"]:
+        yield f"{found['quarantined_files']} refused files in quarantine, each with its reason beside it"
 
 
 def status_text(found: dict[str, Any]) -> str:
     """The same for people."""
+    lines = [f"{found['programme']}: {_last_run_text(found)}", *(f"look at: {line}" for line in found["trouble"])]
+    lines.append(_disk_text(found))
     if not found["published"]:
-        return f"{found['programme']}: nothing published yet; {found['inbox_files']} files in the inbox"
+        return "\n".join([*lines, f"nothing published yet; {found['inbox_files']} files in the inbox"])
     counts = ", ".join(f"{count} {name}" for name, count in found["deliveries"].items())
-    lines = [
-        f"{found['programme']}: {str(found['last_outcome']).replace('_', ' ')} at {found['last_run_utc']} UTC",
-        f"deliveries: {counts}; {found['quarantined_files']} files in quarantine; {found['disk_free_gb']} GB free",
+    lines += [
+        f"deliveries: {counts}; {found['inbox_files']} files in the inbox",
         *(f"waits: {row['file_name']}: {row['reason']}" for row in found["waiting"]),
-        *(f"{row['patient_code']}: data until {row['data_until_utc']} UTC" for row in found["patients"]),
+        *(f"refused: {row['file_name']}: {row['reason']}" for row in found["refused"]),
+        *(_patient_text(row) for row in found["patients"]),
     ]
     return "\n".join(lines)
+
+
+def _last_run_text(found: dict[str, Any]) -> str:
+    if found["last_run_utc"] is None:
+        return "no run yet"
+    outcome = found["last_outcome"].replace("_", " ")
+    return f"{outcome} at {found['last_run_utc']} UTC, {found['last_run_age_h']:g} h ago"
+
+
+def _disk_text(found: dict[str, Any]) -> str:
+    days, growth = found["days_until_full"], found["lake_growth_gb_per_day"]
+    lasts = f"enough for {days} days at the growth of the last month" if days is not None else "no growth last month"
+    return f"disk: {found['disk_free_gb']} GB free, {lasts if growth is not None else 'too early to say for how long'}"
+
+
+def _patient_text(row: dict[str, Any]) -> str:
+    if row["data_until_utc"] is None:
+        return f"{row['patient_code']}: no data yet"
+    return f"{row['patient_code']}: data until {row['data_until_utc']} UTC, {row['data_age_h']:g} h ago"
