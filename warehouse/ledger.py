@@ -93,6 +93,11 @@ class Ledger:
                 if self.version == version:
                     raise LedgerError(f"cannot write the ledger of {self._lake}: {problem}") from problem
 
+    def drop_history(self, grace_s: float) -> None:
+        """Remove the ledger's own files that the latest commit does not need and that are older than `grace_s`."""
+        self._delta.update_incremental()
+        self._delta.vacuum(int(max(grace_s, 0) // 3600), dry_run=False, enforce_retention_duration=False)
+
     def _append(self, commit: int, loads: Mapping[tuple[str, str], Sequence[Part]], note: str) -> None:
         rows = _load_rows(commit, loads)
         compact = len(self._delta.file_uris()) >= COMPACT_FILES
@@ -200,14 +205,18 @@ def verify(lake: Path) -> list[Damage]:
 def tidy(lake: Path, grace_s: float, *, keep: Collection[str] = ()) -> list[str]:
     """Remove part files that are neither in force nor in `keep` and older than `grace_s`; returns their paths.
 
+    The ledger's own files that were written anew since go as well.
+
     `keep` holds paths relative to the lake that a publication or a data cut still reads. The grace time protects parts
     that a running load has written and not yet committed.
     """
     # Files are listed before the ledger is read: a part committed in between is then in force, not missed.
     oldest_s = time.time() - grace_s
     files = [path for table in schema.LAKE for path in (lake / table).glob("*/*") if path.stat().st_mtime <= oldest_s]
-    wanted = {part.path for part in Ledger(lake).parts()} | set(keep)
+    ledger = Ledger(lake)
+    wanted = {part.path for part in ledger.parts()} | set(keep)
     removed = [path for path in files if path.relative_to(lake).as_posix() not in wanted]
     for path in removed:
         path.unlink(missing_ok=True)
+    ledger.drop_history(grace_s)
     return sorted(path.relative_to(lake).as_posix() for path in removed)

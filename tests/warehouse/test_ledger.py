@@ -188,6 +188,20 @@ def test_tidy_removes_only_old_files_that_nothing_names(tmp_path: Path) -> None:
     assert (tmp_path / kept.path).exists()
 
 
+def test_tidy_drops_files_that_the_ledger_wrote_anew(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """After many commits only the files of the latest state are left, and the same parts are in force."""
+    monkeypatch.setattr(ledger, "COMPACT_FILES", 3)
+    book = Ledger(tmp_path)
+    for name in "abcdefghij":
+        book.commit(_load(_row_part(tmp_path, name)))
+    before = book.parts()
+    ledger.tidy(tmp_path, -1)
+    assert len(list((tmp_path / "ledger").glob("*.parquet"))) <= 3
+    assert Ledger(tmp_path).parts() == book.parts() == before
+    book.commit({("fingerprints", "a"): []})
+    assert len(Ledger(tmp_path).parts()) == 9
+
+
 def test_landing_again_renews_the_grace_time(tmp_path: Path) -> None:
     """A part that a load wrote again is young, even when an earlier load had left the same bytes."""
     part = _row_part(tmp_path, "a")
