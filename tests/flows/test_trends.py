@@ -5,8 +5,12 @@ from datetime import date, timedelta
 import numpy as np
 import polars as pl
 import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
 
+from detectors.change import VERDICTS
 from flows import trends
+from flows.measures import MEASURES
 from flows.settings import ChangeSettings, WearSettings
 from warehouse.schema import PUBLISHED
 
@@ -86,9 +90,32 @@ def test_every_event_and_measure_has_a_row_with_the_published_columns():
     hours = wearing("P1", STEADY, LOWER) + wearing("P2", STEADY, [])
     table = changes(hours, {"T1": "P1", "T2": "P2", "T3": "P3"})
     assert tuple(table.columns) == PUBLISHED["changes"].columns
-    assert table.height == 3 * len(trends.MEASURES)
+    assert table.height == 3 * len(MEASURES)
     assert table.filter(pl.col("patient_code") != "P1")["verdict"].unique().to_list() == ["too_little_wear"]
     assert table["reason"].null_count() == 0
+
+
+def test_an_event_before_all_wear_or_in_the_future_has_no_verdict():
+    """Therapy events with wear on one side only have rows of too_little_wear that count the days there are."""
+    only_after = wearing("P1", [], STEADY)
+    only_before = [hours_of("P2", EVENT - timedelta(3 + i), level) for i, level in enumerate(STEADY)]
+    table = changes(only_after + only_before, {"T1": "P1", "T2": "P2"}).filter(pl.col("measure") == "v_burden_pct")
+    assert table["verdict"].unique().to_list() == ["too_little_wear"]
+    assert table.select("baseline_days", "after_days").rows() == [(0, 7), (7, 0)]
+    assert table["ratio"].null_count() == 2
+
+
+@settings(max_examples=12, deadline=None)
+@given(st.data())
+def test_any_wear_gives_one_row_per_event_and_measure(data):
+    """Whatever days and hours were worn, every event and measure has one row with a verdict word and a reason."""
+    some_hours = st.lists(st.integers(0, 23), min_size=1, max_size=24, unique=True)
+    worn = data.draw(st.dictionaries(st.integers(-20, 40), st.tuples(some_hours, st.integers(0, 3000)), min_size=1))
+    hours = [hours_of("P1", EVENT + timedelta(day), level, clock_hours=sorted(at)) for day, (at, level) in worn.items()]
+    table = changes(hours, {"T1": "P1", "T2": "P9"}, change=ChangeSettings())
+    assert table.select("therapy_id", "measure").n_unique() == table.height == 2 * len(MEASURES)
+    assert set(table["verdict"]) <= set(VERDICTS)
+    assert (table["reason"].str.len_chars() > 20).all()
 
 
 def test_no_therapy_gives_an_empty_table():
