@@ -108,7 +108,7 @@ def _part(
     )
 
 
-_LIKENESS = ("lead", "mv_per_count", "count_at_zero_mv", "rail_low_count", "rail_high_count", "missing_count")
+_LIKENESS = ("lead", "mv_per_count", "count_at_zero_mv")
 
 
 def signal_parts(blocks: pl.DataFrame) -> list[Part]:
@@ -235,5 +235,9 @@ def _recording_row(arrangement: Arrangement, segments: pl.DataFrame, wear: Wear,
         "sample_count": n_samples,
         "recorded_h": n_samples / arrangement.fs_hz / 3600,
         "findings": " ".join(sorted(codes)) or None,
+        # Headers that give each file's own extremes as its range: the widest of them all is nearest the converter's.
+        "rail_low_count": pieces["rail_low_count"].min(),
+        "rail_high_count": pieces["rail_high_count"].max(),
+        "missing_count": next(iter(pieces["missing_count"].drop_nulls()), None),
     }
     return typed_frame("recordings", [row | {name: head[name] for name in _LIKENESS}])

@@ -31,6 +31,7 @@ from flows.readers.identify import head_of, open_delivery
 from flows.readers.recording import NO_SITE, Opened, Site
 from flows.recordings import Recordings
 from flows.register import Register
+from flows.scaling import Scale, scaled_like
 from flows.settings import Settings
 from flows.staging import content_hash, hash_file, staged
 from flows.wearing import Wearing, wearing_of
@@ -172,7 +173,9 @@ class _Run:
         opened, serial, matched, file_zone = self._wearing(candidate, opened)
         if may_postpone and len(matched.possible_starts) > 1:
             raise _Later
+        scale = self._scale_of(serial, matched.wear.recording_id)
         with _faults_declined():
+            opened = scaled_like(opened, scale) if scale else opened
             landed = land(self._lake, opened, Identity(delivery_id, serial, file_zone))
         self._refuse_known_samples(landed, opened, matched)
         row = self._row(candidate, delivery_id, sha256) | {
@@ -189,6 +192,16 @@ class _Run:
         self._batch_samples += opened.n_samples
         if self._batch_samples >= _BATCH_SAMPLES or len(self._batch) >= _BATCH_DELIVERIES:
             self._commit()
+
+    def _scale_of(self, serial: str, recording_id: str) -> Scale | None:
+        """Scale of the recording's first part, whether it is in the ledger or still in the batch."""
+        known = self._recordings.scale_of(serial, recording_id)
+        batch = (
+            Scale.of(landed.pieces.row(0, named=True))
+            for name, landed in self._batch
+            if self._deliveries.rows[name]["recording_id"] == recording_id
+        )
+        return known or next(batch, None)
 
     def _accept_decisions(self, candidate: Candidate, delivery_id: str, sha256: str, file: Path) -> None:
         recording_id, loads = reviews.land(self._lake, self._ledger, file, delivery_id)

@@ -13,11 +13,12 @@ from typing import Any
 
 import polars as pl
 
-from flows.assembly import Assembled, assemble, parts_of, signal_parts
+from flows.assembly import Assembled, assemble, device_key, parts_of, signal_parts
 from flows.deliveries import ACCEPTED, QUARANTINED, WAITING, Deliveries, Loads, Pieces
 from flows.landing import Landed, typed_frame
 from flows.placing import DeliveredPart, Misfit, from_ns
 from flows.register import Register, Wear
+from flows.scaling import Scale
 from warehouse.ledger import Ledger
 from warehouse.parts import Part, read_part, write_part, write_whole
 from warehouse.schema import LAKE
@@ -46,6 +47,14 @@ class Recordings:
         for key in keys:
             loads |= self._device(key, has_new=key in changed)
         return loads
+
+    def scale_of(self, device_serial: str, recording_id: str) -> Scale | None:
+        """Scale of the first accepted part of a recording, None when there is none yet."""
+        pieces = self._pieces.of("pieces", device_key(device_serial)).sort("arrival_number")
+        for piece in pieces.unique("delivery_id", keep="first", maintain_order=True).iter_rows(named=True):
+            if self._deliveries.rows[piece["delivery_id"]]["recording_id"] == recording_id:
+                return Scale.of(piece)
+        return None
 
     def committed(self) -> None:
         """Remember which devices are in line, now that the ledger has them."""

@@ -76,6 +76,7 @@ FINDINGS = {
     "clock_not_changed": "the device clock did not follow a clock change; times come from the neighbour part",
     "overlap_trimmed": "samples that another part holds too were taken once",
     "resolution_reduced": "samples wider than 16 bit were stored in coarser steps",
+    "rescaled_to_recording": "the part has another scale; its samples were put into that of the wear's first part",
     "missing_samples": "the file marks samples as missing",
     "start_from_register": "the file has no start, or its clock was never set; the register's was used",
     "device_from_file_name": "the file has no device serial; its name was used",

@@ -131,6 +131,37 @@ def test_overlap_is_trimmed_when_equal_and_refused_when_not(programme, make_edf)
     assert programme.run().changed is False
 
 
+@pytest.mark.parametrize("nights", [1, 2])
+def test_parts_scaled_by_their_own_extremes_join(programme, make_edf, nights):
+    """Files whose header range is their own extremes join in the first one's counts; the widest range counts as rails."""
+    signal = noise(7200 * 50)
+    signal[3600 * 50 :] //= 2
+    for n, (first, limit) in enumerate(((0, 1000), (3600 * 50, 700))):
+        digital, physical = (str(-limit), str(limit)), (f"{-limit * 0.00488:.4f}"[:8], f"{limit * 0.00488:.4f}"[:8])
+        part = signal[first : first + 3600 * 50]
+        content = make_edf(part, per_record=50, time=f"{n + 8:02}.00.00", digital=digital, physical=physical)
+        programme.deliver(f"SRL-1001_{n}.edf", content, minute=n)
+        if nights == 2:
+            programme.run()
+    programme.run()
+    (samples,) = programme.samples(RECORDING)
+    assert np.array_equal(samples, signal)
+    (recording,) = programme.rows("recordings")
+    assert (recording["rail_low_count"], recording["rail_high_count"]) == (-1000, 1000)
+
+
+def test_a_part_of_twice_the_scale_is_put_into_the_first_one_s(programme, make_edf):
+    """A part exported with half the counts per millivolt gives the same millivolts, with a finding."""
+    signal = noise(7200 * 50)
+    programme.deliver("SRL-1001_0.edf", make_edf(signal[: 3600 * 50], per_record=50, time="08.00.00"))
+    halved = make_edf(signal[3600 * 50 :] // 2, per_record=50, time="09.00.00", physical=("-10", "10"))
+    programme.deliver("SRL-1001_1.edf", halved, minute=1)
+    programme.run()
+    (samples,) = programme.samples(RECORDING)
+    assert np.abs(samples[3600 * 50 :].astype(int) - signal[3600 * 50 :] // 2 * 2).max() <= 1
+    assert "rescaled_to_recording" in programme.rows("recordings")[0]["findings"]
+
+
 def test_same_bytes_and_same_samples_are_counted_once(programme, make_edf):
     """The same file under another name and the same samples under another header are skipped and linked."""
     programme.deliver("SRL-1001.edf", make_edf())
