@@ -119,7 +119,7 @@ def classify(
 
 def family_habits(timing: Timing, member: families.Membership, n_families: int) -> Habits:
     """Timing and scatter of every family."""
-    order = np.argsort(member.family, kind="stable")
+    order = np.argsort(member.family, kind="stable").astype(np.int32)
     edges = np.searchsorted(member.family[order], np.arange(n_families + 1))
     everything = np.ones(member.family.size, dtype=bool)
     fast = _fast(timing, everything, _is_early(timing), everything)

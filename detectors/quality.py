@@ -90,9 +90,11 @@ def _near_mean(values: NDArray[np.floating]) -> NDArray[np.float64]:
 
 
 def _near_sum(values: NDArray[np.float64], reach: int = REACH_BLOCKS) -> NDArray[np.float64]:
-    total = np.concatenate([[0.0], np.cumsum(values)])
-    index = np.arange(values.size)
-    return total[np.minimum(index + reach + 1, values.size)] - total[np.maximum(index - reach, 0)]
+    """Sum of the values within `reach` blocks of each block, shape (n_blocks,)."""
+    total = np.zeros(values.size + 2 * reach + 1)
+    np.cumsum(values, out=total[reach + 1 : reach + 1 + values.size])
+    total[reach + 1 + values.size :] = total[reach + values.size]
+    return total[2 * reach + 1 :] - total[: values.size]
 
 
 def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.str_]:

@@ -173,7 +173,9 @@ def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_
     return np.where(seen >= 8, _near_sum(jump & counted, reach_beats) / np.maximum(seen, 1), 0).astype(np.float32)
 
 
-def _near_sum(flag: NDArray[np.bool_], reach: int) -> NDArray[np.int64]:
-    total = np.concatenate([[0], np.cumsum(flag)])
-    index = np.arange(flag.size)
-    return total[np.minimum(index + reach + 1, flag.size)] - total[np.maximum(index - reach, 0)]
+def _near_sum(flag: NDArray[np.bool_], reach: int) -> NDArray[np.int32]:
+    """Flags set within `reach` beats of each beat, shape (n_beats,)."""
+    total = np.zeros(flag.size + 2 * reach + 1, dtype=np.int32)
+    np.cumsum(flag, out=total[reach + 1 : reach + 1 + flag.size])
+    total[reach + 1 + flag.size :] = total[reach + flag.size]
+    return total[2 * reach + 1 :] - total[: flag.size]

