@@ -278,7 +278,12 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("mean_ratio_low", "DOUBLE", "", "Lower end of the 95 % interval of the mean ratio."),
     ("mean_ratio_high", "DOUBLE", "", "Upper end of the 95 % interval of the mean ratio."),
     ("visit", "VARCHAR", "", "Name of the planned visit, as in the register."),
-    ("arm", "VARCHAR", "", "Arm of the trial; masked unless the settings give a reason to show it, NULL or none without one."),
+    (
+        "arm",
+        "VARCHAR",
+        "",
+        "Arm of the trial; masked unless the settings give a reason to show it, NULL or none without one.",
+    ),
     ("target_day", "DATE", "", "Local day for which the visit is planned."),
     ("meets_protocol", "BOOLEAN", "", "The visit has the days and analysable hours that the trial's settings ask for."),
     ("verdict", "VARCHAR", "", "fell_beyond_chance, rose_beyond_chance, within_chance or too_little_wear."),
