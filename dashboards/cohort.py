@@ -10,7 +10,7 @@ from dashboards import addresses, cohort_charts, words
 from dashboards.tables import Tables
 
 PAGE = "cohort.html"
-TABLES = ("changes", "therapies", "cohort")
+TABLES = ("changes", "therapies", "cohort", "visits", "responders")
 MEASURE = "v_burden_pct"
 
 
@@ -20,6 +20,8 @@ def context(tables: Tables) -> dict[str, Any]:
     kinds = cohort.filter(pl.col("measure") == MEASURE)
     return {
         "sections": [_section(tables, kind) for kind in _by_size(kinds)],
+        "visits": _visits(tables),
+        "arms": tables.whole("responders").filter(pl.col("measure") == MEASURE).rows(named=True),
         "responders": cohort_charts.responders(kinds) if kinds.height else None,
         "cohort": [
             row | {"measure_name": words.MEASURES.get(row["measure"], (row["measure"], "", 0))[0]}
@@ -30,7 +32,12 @@ def context(tables: Tables) -> dict[str, Any]:
 
 def data_files(tables: Tables) -> dict[str, pl.DataFrame]:
     """Return the downloads of the page by name."""
-    return {name: tables.whole(name) for name in ("changes", "cohort")}
+    return {name: tables.whole(name) for name in ("changes", "cohort", "visits", "responders")}
+
+
+def _visits(tables: Tables) -> list[dict[str, Any]]:
+    visits = tables.whole("visits").sort("target_day", "visit", "patient_code")
+    return [row | {"page": addresses.patient_page(row["patient_code"])} for row in visits.rows(named=True)]
 
 
 def _by_size(kinds: pl.DataFrame) -> list[str]:

@@ -35,6 +35,7 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
         "finding": range_words(measured),
         "timeline": charts.timeline(rows) if wear_days.height else None,
         "clock_map": charts.clock_map(rows["local_hours"]) if measured.height else None,
+        "visits": _visits(rows["visits"], rows["visit_changes"]),
         "level_shifts": rows["level_shifts"].sort("local_day").rows(named=True),
         "densest": _densest(rows["local_hours"]),
         "clock_hours": _by_clock(rows["local_hours"]),
@@ -94,6 +95,13 @@ def _event(therapy: dict[str, Any], rows: dict[str, pl.DataFrame]) -> dict[str, 
         "changes": {measure: by_measure[measure] for measure in words.MEASURES if measure in by_measure},
         "periods": [spans[period] for period in ("baseline", "settling", "after") if period in spans],
     }
+
+
+def _visits(visits: pl.DataFrame, changes: pl.DataFrame) -> list[dict[str, Any]]:
+    """Return the planned visits of a trial, each with its change against the first where there is one."""
+    verdicts = {row["visit"]: row for row in changes.filter(pl.col("measure") == "v_burden_pct").iter_rows(named=True)}
+    ordered = visits.sort("target_day", "visit").rows(named=True)
+    return [row | {"change": verdicts.get(row["visit"])} for row in ordered]
 
 
 def _densest(local_hours: pl.DataFrame) -> dict[str, Any] | None:

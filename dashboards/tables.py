@@ -51,7 +51,7 @@ class Tables:
 
     BY_PATIENT = (
         "patients", "recordings", "wear_days", "local_hours", "therapies", "periods", "changes", "rate_effects",
-        "level_shifts", "attention",
+        "level_shifts", "attention", "visits", "visit_changes",
     )  # fmt: skip
     BY_RECORDING = ("recordings", "segments", "families", "hours", "findings", "review_sheet", "reviewed")
     LARGE = ("strips", "episodes", "quality_windows")

@@ -250,6 +250,13 @@ def invented_rows(patients: int = 4) -> dict[str, list[dict[str, Any]]]:
              "responder_pct": 100 * responders / 3, "responder_pct_low": 6.1, "responder_pct_high": 93.9,
              "mean_ratio": 0.8, "mean_ratio_low": 0.1, "mean_ratio_high": 5.0}
         )  # fmt: skip
+    for visit, target, met in (("entry", date(2026, 3, 4), True), ("week 3", date(2026, 3, 25), False)):
+        rows["visits"].append(
+            {"patient_code": "SKERRY-0001", "visit": visit, "arm": "masked", "target_day": target, "first_day": target,
+             "last_day": target, "wear_days": 1, "valid_days": int(met), "analysable_h": 13.2 if met else 6.0,
+             "v_beats": 900, "all_beats": 9000, "v_burden_pct": 10.0, "meets_protocol": met,
+             "reason": None if met else "1 valid day is missing."}
+        )  # fmt: skip
     rows["level_shifts"].append(
         {"patient_code": "SKERRY-0001", "local_day": date(2026, 3, 20), "level_before": 12.5, "level_after": 1.9}
     )

@@ -234,6 +234,15 @@ def test_a_verdict_stands_with_both_values_and_their_wear(site):
         assert part in text, part
 
 
+def test_planned_visits_stand_on_the_pages(site):
+    """A trial's visits are listed with their protocol, for the patient and over all patients."""
+    own = pages_of(site)["patients/SKERRY-0001.html"].text
+    assert "week 3 masked 25 Mar 2026 25 Mar 2026 0 of 1 10.00 %" in own
+    assert "not met: 1 valid day is missing." in own
+    assert "1 of 2 planned visits meet the protocol" in pages_of(site)["cohort.html"].text
+    assert "Planned visits" not in pages_of(site)["patients/SKERRY-0002.html"].text
+
+
 def test_too_little_wear_is_said_without_values(site):
     """Where a side has too few days the headline gives no figures to misread."""
     text = pages_of(site)["patients/SKERRY-0004.html"].text
