@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from detectors import qrs
 from detectors.chunks import Blocks
-from detectors.results import QualityWindows
+from detectors.results import QUALITY_REASONS, QualityWindows
 from detectors.signal import WORKING_FS_HZ
 
 REACH_BLOCKS = 2  # either side: 7.7 s in all
@@ -97,38 +97,34 @@ def _near_sum(values: NDArray[np.float64], reach: int = REACH_BLOCKS) -> NDArray
     return total[2 * reach + 1 :] - total[: values.size]
 
 
-def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.str_]:
-    """Reason per block why it is not analysable, '' when it is."""
+def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.int8]:
+    """Reason per block why it is not analysable, index into QUALITY_REASONS, -1 when it is."""
     blocks = one.blocks
     if blocks.noise.size == 0:
-        return np.empty(0, dtype="<U8")
+        return np.empty(0, dtype=np.int8)
     noise, odd = (np.nan_to_num(v, nan=0.0) for v in (_relative_noise(blocks), _near_mean(one.distance)))
     is_noisy = (noise > NOISY * quiet) & (odd > ODD) | (noise > VERY_NOISY * quiet) | (odd > VERY_ODD)
-    is_noisy = _near_sum(is_noisy.astype(np.float64), MARGIN_BLOCKS) > 0
-    return np.select(
-        [
-            blocks.is_missing,
-            blocks.is_rail,
-            blocks.is_flat,
-            ~(blocks.level >= LEAD_OFF * usual_level) | np.isinf(blocks.level),
-            is_noisy,
-        ],
-        ["missing", "rail", "flat", "lead_off", "noise"],
-        "",
-    ).astype("<U8")
+    reason = np.full(blocks.noise.size, -1, dtype=np.int8)
+    reason[_near_sum(is_noisy.astype(np.float64), MARGIN_BLOCKS) > 0] = QUALITY_REASONS.index("noise")
+    reason[~((blocks.level >= LEAD_OFF * usual_level) & np.isfinite(blocks.level))] = QUALITY_REASONS.index("lead_off")
+    reason[blocks.is_flat] = QUALITY_REASONS.index("flat")
+    reason[blocks.is_rail] = QUALITY_REASONS.index("rail")
+    reason[blocks.is_missing] = QUALITY_REASONS.index("missing")
+    return reason
 
 
 def _stretches(
-    reason: NDArray[np.str_], n_samples: int, fs_hz: float
+    reason: NDArray[np.int8], n_samples: int, fs_hz: float
 ) -> tuple[NDArray[np.int64], NDArray[np.int64], NDArray[np.str_]]:
     """First sample, last sample and reason of every stretch of equal reason."""
-    if reason.size == 0:
+    if reason.size == 0:  # shorter than one working sample
         return (*np.array([[0], [n_samples - 1]])[:, : int(n_samples > 0)], np.full(int(n_samples > 0), "missing"))
-    edge = np.concatenate([[0], np.flatnonzero(reason[1:] != reason[:-1]) + 1, [reason.size]])
+    edge = np.concatenate([[0], np.flatnonzero(np.diff(reason)) + 1, [reason.size]])
     sample = np.minimum(np.ceil(edge * qrs.BLOCK * fs_hz / WORKING_FS_HZ).astype(np.int64), n_samples)
     sample[-1] = n_samples
-    is_bad = reason[edge[:-1]] != ""
-    return sample[:-1][is_bad], sample[1:][is_bad] - 1, reason[edge[:-1]][is_bad]
+    code = reason[edge[:-1]]
+    is_bad = code >= 0
+    return sample[:-1][is_bad], sample[1:][is_bad] - 1, np.array(QUALITY_REASONS)[code[is_bad]]
 
 
 def with_noise(
@@ -146,8 +142,13 @@ def with_noise(
                 rows.append((number, begin, min(known_first - 1, end), "noise"))
             begin = max(begin, known_last + 1)
     rows.sort(key=lambda row: row[:2])
-    columns = zip(*rows, strict=True) if rows else ((), (), (), ())
-    return QualityWindows(*(np.array(c, dtype=old.dtype) for c, old in zip(columns, bad, strict=True)))
+    columns = list(zip(*rows, strict=True)) or [()] * len(bad)
+    return QualityWindows(
+        np.array(columns[0], dtype=np.int16),
+        np.array(columns[1], dtype=np.int64),
+        np.array(columns[2], dtype=np.int64),
+        np.array(columns[3], dtype=bad.quality_reason.dtype),
+    )
 
 
 def is_outside(bad: QualityWindows, segment: NDArray[np.int16], sample: NDArray[np.int64]) -> NDArray[np.bool_]:
