@@ -25,6 +25,7 @@ CUT_STEP = qrs.BLOCK * qrs.LONG_STEP  # working samples: chunks and guards begin
 GUARD = -(-round(qrs.GUARD_S * WORKING_FS_HZ) // CUT_STEP) * CUT_STEP
 CLEAN = 0.25  # noise energy over the QRS level of beats that may found a family
 FLAT_MV = 0.012  # a block that moves less than this is flat
+DROPPED_MV = 0.8  # a block without QRS that moves more than this is no pause
 
 
 class Scale(NamedTuple):
@@ -43,6 +44,7 @@ class Blocks(NamedTuple):
     is_flat: NDArray[np.bool_]
     is_rail: NDArray[np.bool_]
     is_missing: NDArray[np.bool_]
+    is_dropped: NDArray[np.bool_]  # the lead slides far without any QRS: the electrode let go
     noise: NDArray[np.float32]  # mean slope energy outside QRS complexes, mV, NaN when there is no such time
     level: NDArray[np.float32]  # QRS level, mV; inf where unknown
 
@@ -77,7 +79,7 @@ def join_blocks(parts: list[Blocks]) -> Blocks:
     """Blocks of consecutive chunks as one; none for a segment shorter than a working sample."""
     if not parts:
         flag, number = np.empty(0, dtype=bool), np.empty(0, dtype=np.float32)
-        return Blocks(flag, flag, flag, number, number)
+        return Blocks(flag, flag, flag, flag, number, number)
     return Blocks(*(np.concatenate(column) for column in zip(*parts, strict=True)))
 
 
@@ -92,36 +94,46 @@ def cuts(n_samples: int, fs_hz: float, chunk_s: float) -> Iterator[tuple[int, in
 def read_chunk(segment: Segment, begin: int, end: int, scale: Scale) -> tuple[ChunkBeats, Blocks]:
     """Beats and block quality of working samples `begin` to `end`; nothing of the guards is returned."""
     n_working = signal.working_length(segment.n_samples, scale.fs_hz)
-    first = max(0, begin - GUARD)
-    last = min(n_working, end + GUARD)
+    first, last = max(0, begin - GUARD), min(n_working, end + GUARD)
     span = signal.stored_span(first, last, scale.fs_hz, segment.n_samples)
     counts = segment.read(*span)
     flags = _flags(counts, first, last, span[0], scale)
-    n_blocks = flags[0].size
-    signal_mv = signal.box_averages(_without_gaps(counts, scale), first, last, scale.fs_hz, scale.mv_per_count)
-    framed = _framed(signal_mv, n_blocks)
+    working_mv = signal.box_averages(_without_gaps(counts, scale), first, last, scale.fs_hz, scale.mv_per_count)
+    framed = _framed(working_mv, flags.is_flat.size)
+    found, blocks = _find(framed, flags)
+    inner = slice((begin - first) // qrs.BLOCK, -(-(end - first) // qrs.BLOCK))
+    mine = slice(*np.searchsorted(found.working, [begin - first, end - first]))
+    shapes = _shapes(framed, found.working[mine])
+    shapes -= np.float32(scale.count_at_zero_mv * scale.mv_per_count)
+    beats = ChunkBeats(found.working[mine] + first, found.energy[mine], shapes, found.is_clean[mine])
+    return beats, Blocks(*(column[inner] for column in blocks))
+
+
+class _Beats(NamedTuple):
+    working: NDArray[np.float64]
+    energy: NDArray[np.float32]
+    is_clean: NDArray[np.bool_]
+
+
+def _find(framed: NDArray[np.float32], flags: _Flags) -> tuple[_Beats, Blocks]:
+    """Beats, in order, and block quality of a framed signal; positions count from the begin of the signal."""
     signal_mv = framed[SHAPE_BEFORE + 1 : -SHAPE_AFTER - 2]
+    is_silent = flags.is_flat | flags.is_rail | flags.is_missing
     energy = qrs.slope_energy(signal_mv)
-    _silence(energy, flags[2])
-    level = qrs.block_level(energy, ~(flags[0] | flags[1] | flags[2]))
+    _silence(energy, flags.is_missing)
+    level = qrs.block_level(energy, ~is_silent)
     candidates = qrs.peaks(signal_mv, energy, level)
     beat = qrs.choose(candidates)
     cell = candidates.cell[beat]
-    noise = np.where(flags[0] | flags[1] | flags[2], np.float32(np.nan), _noise(energy, cell, n_blocks))
-    working = qrs.fiducials(signal_mv, cell)
-    mine = (working >= begin - first) & (working < end - first)
-    beat, cell, working = beat[mine], cell[mine], working[mine]
+    noise = np.where(is_silent, np.float32(np.nan), _noise(energy, cell, level.size))
+    highest = energy.reshape(level.size, -1).max(axis=1)
+    is_dropped = (highest < qrs.LOW_THRESHOLD * level) & (flags.range_mv > DROPPED_MV)
     block = cell // qrs.BLOCK_CELLS
-    inner = slice((begin - first) // qrs.BLOCK, -(-(end - first) // qrs.BLOCK))
-    shapes = _shapes(framed, working)
-    shapes -= np.float32(scale.count_at_zero_mv * scale.mv_per_count)
-    beats = ChunkBeats(
-        working=working + first,
-        energy=candidates.energy[beat],
-        shape_mv=shapes,
-        is_clean=np.nan_to_num(noise, nan=0.0)[block] < CLEAN * level[block],
-    )
-    return beats, Blocks(*(flag[inner] for flag in flags), noise[inner], level[inner])
+    is_clean = np.nan_to_num(noise, nan=0.0)[block] < CLEAN * level[block]
+    working = qrs.fiducials(signal_mv, cell)
+    order = np.argsort(working, kind="stable")
+    beats = _Beats(working[order], candidates.energy[beat][order], is_clean[order])
+    return beats, Blocks(flags.is_flat, flags.is_rail, flags.is_missing, is_dropped, noise, level)
 
 
 def _framed(signal_mv: NDArray[np.float32], n_blocks: int) -> NDArray[np.float32]:
@@ -185,20 +197,25 @@ def _without_gaps(counts: NDArray[np.int16], scale: Scale) -> NDArray[np.int16]:
     return filled
 
 
-def _flags(
-    counts: NDArray[np.int16], first: int, last: int, offset: int, scale: Scale
-) -> tuple[NDArray[np.bool_], NDArray[np.bool_], NDArray[np.bool_]]:
-    """Flat, rail and missing flags per block of working samples `first` to `last`."""
+class _Flags(NamedTuple):
+    is_flat: NDArray[np.bool_]
+    is_rail: NDArray[np.bool_]
+    is_missing: NDArray[np.bool_]
+    range_mv: NDArray[np.float64]
+
+
+def _flags(counts: NDArray[np.int16], first: int, last: int, offset: int, scale: Scale) -> _Flags:
+    """What the stored counts say per block of working samples `first` to `last`."""
     n_blocks = -(-(last - first) // qrs.BLOCK)
     begin = first + np.arange(n_blocks) * qrs.BLOCK
     edges = np.floor(begin * (scale.fs_hz / WORKING_FS_HZ)).astype(np.int64) - offset
     edges = np.minimum(edges, max(counts.size - 1, 0))
     lowest = np.minimum.reduceat(counts, edges).astype(np.int64)
     highest = np.maximum.reduceat(counts, edges).astype(np.int64)
-    is_flat = (highest - lowest) * abs(scale.mv_per_count) < FLAT_MV
+    range_mv = (highest - lowest) * abs(scale.mv_per_count)
     is_missing = np.zeros(n_blocks, dtype=bool)
     if scale.missing_count is not None and lowest.min() <= scale.missing_count <= highest.max():
         is_missing = np.logical_or.reduceat(counts == scale.missing_count, edges)
     low, high = scale.rails if scale.rails is not None else (-(2**15), 2**15 - 1)
     is_rail = ((lowest <= low) | (highest >= high)) & ~is_missing
-    return is_flat, is_rail, is_missing
+    return _Flags(range_mv < FLAT_MV, is_rail, is_missing, range_mv)

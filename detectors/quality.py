@@ -106,7 +106,8 @@ def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.int8]:
     is_noisy = (noise > NOISY * quiet) & (odd > ODD) | (noise > VERY_NOISY * quiet) | (odd > VERY_ODD)
     reason = np.full(blocks.noise.size, -1, dtype=np.int8)
     reason[_near_sum(is_noisy.astype(np.float64), MARGIN_BLOCKS) > 0] = QUALITY_REASONS.index("noise")
-    reason[~((blocks.level >= LEAD_OFF * usual_level) & np.isfinite(blocks.level))] = QUALITY_REASONS.index("lead_off")
+    has_qrs = (blocks.level >= LEAD_OFF * usual_level) & np.isfinite(blocks.level) & ~blocks.is_dropped
+    reason[~has_qrs] = QUALITY_REASONS.index("lead_off")
     reason[blocks.is_flat] = QUALITY_REASONS.index("flat")
     reason[blocks.is_rail] = QUALITY_REASONS.index("rail")
     reason[blocks.is_missing] = QUALITY_REASONS.index("missing")

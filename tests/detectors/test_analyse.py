@@ -212,6 +212,19 @@ def test_missing_samples_break_the_intervals() -> None:
     assert counts.size / FS_HZ - 13 < analysis.analysable_s < counts.size / FS_HZ - 8
 
 
+def test_sliding_lead_without_qrs_is_no_pause() -> None:
+    """Four seconds in which the lead slides back from far away are lead-off; the same without sliding are a pause."""
+    truth = synthetic_beats.exact_beats(NORMAL * 40 + [("N", 4.0)] + NORMAL * 40, fs_hz=FS_HZ)
+    n_samples = int(truth.sample[-1]) + 2 * FS_HZ
+    ecg = synthetic.draw(truth, n_samples=n_samples, fs_hz=FS_HZ).astype(float)
+    ecg += NOISY_MV * np.random.default_rng(7).standard_normal(n_samples)
+    assert analyse_signal(ecg, fs_hz=FS_HZ).episodes.episode_kind.tolist() == ["pause"]
+    begin = int(truth.sample[40]) + FS_HZ // 2
+    ecg[begin:] += 6 * np.exp(-np.arange(n_samples - begin) / (1.2 * FS_HZ))
+    slid = analyse_signal(ecg, fs_hz=FS_HZ)
+    assert slid.episodes.episode_kind.size == 0 and "lead_off" in slid.quality.quality_reason.tolist()
+
+
 def test_white_noise_does_not_make_beats() -> None:
     """White noise of 0.1 mV keeps the share of true beats among the found ones at 98 % or more in analysable time."""
     rhythm = NORMAL * 700

@@ -16,7 +16,7 @@ N_BLOCKS = 60
 def seen(noise: np.ndarray, distance: np.ndarray, level: np.ndarray | None = None) -> quality.Seen:
     flag = np.zeros(N_BLOCKS, dtype=bool)
     level = np.full(N_BLOCKS, 10, dtype=np.float32) if level is None else level.astype(np.float32)
-    return quality.Seen(N_BLOCKS * BLOCK, Blocks(flag, flag, flag, noise.astype(np.float32), level), distance)
+    return quality.Seen(N_BLOCKS * BLOCK, Blocks(flag, flag, flag, flag, noise.astype(np.float32), level), distance)
 
 
 def quiet() -> tuple[np.ndarray, np.ndarray]:
