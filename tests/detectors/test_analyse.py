@@ -219,7 +219,7 @@ def test_sliding_lead_without_qrs_is_no_pause() -> None:
     ecg = synthetic.draw(truth, n_samples=n_samples, fs_hz=FS_HZ).astype(float)
     ecg += NOISY_MV * np.random.default_rng(7).standard_normal(n_samples)
     assert analyse_signal(ecg, fs_hz=FS_HZ).episodes.episode_kind.tolist() == ["pause"]
-    begin = int(truth.sample[40]) + FS_HZ // 2
+    begin = int(truth.sample[39]) + FS_HZ // 2
     ecg[begin:] += 6 * np.exp(-np.arange(n_samples - begin) / (1.2 * FS_HZ))
     slid = analyse_signal(ecg, fs_hz=FS_HZ)
     assert slid.episodes.episode_kind.size == 0 and "lead_off" in slid.quality.quality_reason.tolist()
