@@ -498,8 +498,8 @@ LAKE: dict[str, Table] = _tables(
     Table(
         "reviews", "one row per beat whose class an over-reader's file decides; accepted normal beats are left out",
         ("delivery_id", "segment", "sample"),
-        ("delivery_id", "recording_id", "read_fingerprint", "segment", "sample", "beat_utc", "reader_code", "reviewed_utc",
-         "automatic_class", "decision"),
+        ("delivery_id", "recording_id", "read_fingerprint", "segment", "sample", "beat_utc", "reader_code",
+         "reviewed_utc", "automatic_class", "decision"),
     ),
     Table(
         "inputs", "one row per value of the register files and the settings, as last seen",
