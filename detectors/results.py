@@ -44,7 +44,7 @@ class Beats(NamedTuple):
     qrs_width_ms: NDArray[np.float32]
     amplitude_mv: NDArray[np.float32]
     polarity: NDArray[np.int8]
-    coupling_ms: NDArray[np.float32]  # NaN unless premature
+    coupling_ms: NDArray[np.float32]  # RR before, for premature beats after one that is not ectopic; NaN for others
     prematurity_pct: NDArray[np.float32]
     pause_kind: NDArray[np.int8]  # index into PAUSE_KINDS
     r_on_t_index: NDArray[np.float32]
@@ -89,7 +89,7 @@ class QualityWindows(NamedTuple):
 class Finding(NamedTuple):
     """Something about the whole recording that a reader of its numbers must know."""
 
-    code: str  # for example lead_not_limb_like, mostly_noise, no_analysable_time
+    code: str  # lead_not_limb_like, lead_upside_down, low_amplitude, mostly_noise or no_analysable_time
     detail: str
 
 
