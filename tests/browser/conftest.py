@@ -11,11 +11,22 @@ from typing import Any
 
 import pytest
 
+from dashboards.addresses import patient_page
 from dashboards.site import build_site
 
 HOSTILE = "<script>alert(1)</script>\"'><img src=x onerror=alert(2)>"
+LONG_CODE = "K" * 150 + "\N{HEBREW LETTER ALEF}\N{RIGHT-TO-LEFT OVERRIDE}" + "9" * 48
 NAMES = ("chromium", "chromium-browser", "google-chrome")
 DASHBOARD_TESTS = Path(__file__).parents[1] / "dashboards"
+
+
+@pytest.fixture(scope="session")
+def pages(site: Path) -> list[str]:
+    """One page of each kind, and those of patients with hostile and with endless codes."""
+    recording = "CN0000-20260302.html"
+    patients = [patient_page(code) for code in ("SKERRY-0001", "SKERRY-0002", LONG_CODE)]
+    whole = ["index.html", "cohort.html", "trail.html", "methods.html", "dictionary.html"]
+    return [*whole, *patients, f"recordings/{recording}", f"review/{recording}"]
 
 
 @pytest.fixture(scope="session")
@@ -38,6 +49,8 @@ def site(tmp_path_factory: pytest.TempPathFactory) -> Path:
     rows["therapies"][1]["therapy_detail"] = HOSTILE
     rows["attention"][1]["attention_reason"] = HOSTILE
     rows["recordings"][2]["lead"] = HOSTILE
+    for row in [row for table in rows.values() for row in table if row.get("patient_code") == "SKERRY-0003"]:
+        row["patient_code"] = LONG_CODE
     folder = tmp_path_factory.mktemp("published") / "site"
     build_site(invented["InventedPublication"](rows), folder, programme_name="Skerry Coast Clinics", version="0.1.0")
     return folder
