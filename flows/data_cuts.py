@@ -41,7 +41,7 @@ def _inputs(folder: Path, scratch: Path) -> list[Path]:
     """Settings and register as they are, but for the arms of a masked trial."""
     settings = programme_settings.load(folder / "programme.toml")
     files = {path.name: path for path in sorted((folder / "register").glob("*.csv"))}
-    if ARMS in files and not settings.trial.unmasked:
+    if ARMS in files and not settings.trial.unmask_reason:
         masked_copy(files[ARMS], scratch / ARMS)
         files[ARMS] = scratch / ARMS
     return [folder / "programme.toml", *files.values()]

@@ -7,6 +7,7 @@ The template that `burdenline init` writes is made from the same dataclasses, so
 from __future__ import annotations
 
 import difflib
+import json
 import tomllib
 from dataclasses import Field, asdict, dataclass, field, fields
 from pathlib import Path
@@ -120,6 +121,9 @@ class WorkersSettings:
     """Execution only: never changes a result."""
 
     processes: int = _setting(1, "recordings analysed at the same time on this host", 1, 256)
+    scheduler: str = _setting(
+        "", "address of a Dask scheduler, tcp://host:8786, to analyse on its workers; empty: here"
+    )
 
 
 @dataclass(frozen=True)
@@ -199,6 +203,8 @@ def _value(where: str, setting: Field, value: Any) -> Any:
         check_zone(where, str(value))
     if setting.name == "webhook" and value and not str(value).startswith(("http://", "https://")):
         raise SettingsError(f"{where} = {value!r}; expected an address that begins with http:// or https://")
+    if setting.name == "scheduler" and value and not str(value).startswith(("tcp://", "tls://")):
+        raise SettingsError(f"{where} = {value!r}; expected an address such as tcp://host:8786")
     if setting.name == "accepted_files" and value not in ("leave", "remove"):
         raise SettingsError(f"{where} = {value!r}; expected leave or remove")
     return value
@@ -228,15 +234,14 @@ def template(name: str, zone: str) -> str:
         defaults = getattr(DEFAULTS, section.name)
         values = asdict(defaults) | ({"name": name, "zone": zone} if section.name == "programme" else {})
         for setting in fields(defaults):
-            lines.append(f"{setting.name} = {_toml(values[setting.name])}  # {setting.metadata['meaning']}")
+            lines.append(f"{setting.name} = {toml_value(values[setting.name])}  # {setting.metadata['meaning']}")
         lines.append("")
     return "\n".join(lines)
 
 
-def _toml(value: Any) -> str:
-    if isinstance(value, bool):
-        return str(value).lower()
-    return '"' + value.replace("\\", "\\\\").replace('"', '\\"') + '"' if isinstance(value, str) else str(value)
+def toml_value(value: Any) -> str:
+    """A setting's value as TOML writes it; JSON's spelling of these types is TOML's too."""
+    return json.dumps(value, ensure_ascii=False)
 
 
 def result_settings(settings: Settings) -> dict[str, Any]:

@@ -9,6 +9,7 @@ from pathlib import Path
 
 from flows import settings as programme_settings
 from flows.lock import folder_lock
+from flows.settings import toml_value
 from flows.visits import MASKED
 from warehouse.audit import Change, change_loads
 from warehouse.ledger import Ledger
@@ -22,31 +23,32 @@ class UnmaskError(ValueError):
 
 
 def unmask(folder: Path, reason: str, actor_code: str | None) -> None:
-    """Set [trial] unmasked = true and keep who did it, when and why in the history; the next run publishes the arms.
+    """Write [trial] unmask_reason and keep who did it, when and why in the history; the next run publishes the arms.
 
     Raises UnmaskError when the arms are already shown or no reason is given.
     """
     path = folder / "programme.toml"
-    if programme_settings.load(path).trial.unmasked:
+    if programme_settings.load(path).trial.unmask_reason:
         raise UnmaskError(f"{path}: the arms are already unmasked; the table audit says since when and why")
     if not reason.strip():
         raise UnmaskError("--reason is empty; expected why the arms may be seen now")
     lake = folder / "lake"
     with folder_lock(folder):
         now = datetime.now(UTC).replace(tzinfo=None)
-        change = Change("settings", "programme.toml trial unmasked", "False", "True", reason)
+        change = Change("settings", "programme.toml trial unmask_reason", "", reason, reason)
         Ledger(lake).commit(change_loads(lake, [change], actor_code=actor_code, happened_utc=now), note="unmask")
-        write_whole(path, _with_unmasked(path.read_text(encoding="utf-8")).encode())
+        write_whole(path, _with_reason(path.read_text(encoding="utf-8"), reason).encode())
 
 
-def _with_unmasked(toml: str) -> str:
+def _with_reason(toml: str, reason: str) -> str:
     """The settings with the one line changed, or added at the head of its section."""
-    changed, count = re.subn(r"^(\s*unmasked\s*=\s*)false\b", r"\1true", toml, flags=re.M)
+    line = f"unmask_reason = {toml_value(reason)}"
+    changed, count = re.subn(r"^\s*unmask_reason\s*=[^#\n]*", lambda found: f"{line}  ", toml, flags=re.M)
     if count:
         return changed
     if re.search(r"^\[trial\]", toml, flags=re.M):
-        return re.sub(r"^\[trial\].*$", r"\g<0>\nunmasked = true", toml, count=1, flags=re.M)
-    return f"{toml.rstrip()}\n\n[trial]\nunmasked = true\n"
+        return re.sub(r"^\[trial\].*$", lambda found: f"{found[0]}\n{line}", toml, count=1, flags=re.M)
+    return f"{toml.rstrip()}\n\n[trial]\n{line}\n"
 
 
 def masked_copy(arms: Path, to: Path) -> None:

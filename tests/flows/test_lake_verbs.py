@@ -138,7 +138,9 @@ def test_tidy_keeps_all_that_is_shown_or_frozen(capsys, coast):
 def test_arms_of_a_masked_trial_are_nowhere_until_unmasked(capsys, coast):
     """The arm stays out of tables, pages, exports and frozen inputs; unmasking needs a reason, which is kept."""
     (coast / "register" / "arms.csv").write_text("patient_code,arm\nP-1,verum-x\n")
-    (coast / "register" / "visits.csv").write_text("patient_code,visit,target_day,window_days\nP-1,V1,2026-03-01,2\n")
+    (coast / "register" / "visits.csv").write_text(
+        "patient_code,visit,target_local,days_before,days_after\nP-1,V1,2026-03-01,2,2\n"
+    )
     call(capsys, "run", coast)
     call(capsys, "freeze", coast, "visit-1")
     assert call(capsys, "thaw", coast, "visit-1", "--check")[0] == 0
@@ -153,4 +155,4 @@ def test_arms_of_a_masked_trial_are_nowhere_until_unmasked(capsys, coast):
     call(capsys, "run", coast)
     assert Published(coast / "published").table("visits")["arm"].to_list() == ["verum-x"]
     audit = Published(coast / "published").table("audit").filter(pl.col("reason") == "database lock")
-    assert audit["actor_code"].to_list() == ["dm-1"]
+    assert audit.select("new_value", "actor_code").rows() == [("database lock", "dm-1")]
