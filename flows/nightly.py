@@ -77,7 +77,7 @@ def run(
 
     settings = programme_settings.load(folder / "programme.toml")
     with folder_lock(folder, wait_s), last_run.noted(folder) as outcomes:
-        outcome = _bring_up_to_date(folder, settings, reporter, actor_code, analyse_all or analyse_here)
+        outcome = _bring_up_to_date(folder, settings, reporter, actor_code, analyse_all or analyse_where_set)
         outcomes.append(outcome.outcome)
     return outcome
 
@@ -147,6 +147,15 @@ def unanalysed(ledger: Ledger, settings: Settings) -> list[str]:
     name = fingerprint_of(settings)
     done = {part.key for part in ledger.parts("quarter_hours") if part.fingerprint == name}
     return sorted({part.key for part in ledger.parts("recordings")} - done)
+
+
+def analyse_where_set(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
+    """Analyse recordings on this host, or on the Dask scheduler that the settings name."""
+    if work and work[0].settings.workers.scheduler:
+        from flows.workers import analyse_on_workers
+
+        return analyse_on_workers(work, reporter)
+    return analyse_here(work, reporter)
 
 
 def analyse_here(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:

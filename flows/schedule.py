@@ -7,6 +7,7 @@ Final states: Published, Published with refusals, Unchanged, Not published.
 from __future__ import annotations
 
 import os
+from collections import deque
 from collections.abc import Iterator, Sequence
 from pathlib import Path
 from typing import Any
@@ -20,6 +21,7 @@ os.environ.setdefault("PREFECT_SERVER_EPHEMERAL_STARTUP_TIMEOUT_SECONDS", "120")
 from prefect import flow, get_run_logger, task
 from prefect.artifacts import create_markdown_artifact, create_table_artifact
 from prefect.client.schemas.objects import StateType
+from prefect.futures import PrefectFuture
 from prefect.schedules import Cron, Schedule
 from prefect.states import State
 
@@ -52,12 +54,26 @@ def analyse_recording_task(item: Work) -> dict:
 
 
 def analyse_as_tasks(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
-    """Run one Prefect task per recording; yields loads as they are done."""
-    futures = [analyse_recording_task.submit(item) for item in work]
-    for item, future in zip(work, futures, strict=True):
-        loads = future.result()
-        reporter.say(f"analysed {item.recording_id}")
-        yield loads
+    """Run one Prefect task per recording, as many at a time as the settings allow; yields loads as they are done.
+
+    A Dask scheduler repeats failed recordings by itself, so it gets them without tasks around them.
+    """
+    if work and work[0].settings.workers.scheduler:
+        yield from nightly.analyse_where_set(work, reporter)
+        return
+    running: deque[tuple[Work, PrefectFuture[dict]]] = deque()
+    for item in work:
+        running.append((item, analyse_recording_task.submit(item)))
+        if len(running) >= item.settings.workers.processes:
+            yield _finished(*running.popleft(), reporter)
+    while running:
+        yield _finished(*running.popleft(), reporter)
+
+
+def _finished(item: Work, future: PrefectFuture[dict], reporter: Reporter) -> dict:
+    loads = future.result()
+    reporter.say(f"analysed {item.recording_id}")
+    return loads
 
 
 class _RunLog(Silent):

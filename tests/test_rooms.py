@@ -20,7 +20,7 @@ LIBRARIES = {
     "warehouse": {"duckdb", "polars", "deltalake", "numpy", "xlsxwriter", "pyreadstat"},
     "dashboards": {"plotly", "polars", "jinja2", "markupsafe"},
     "flows/readers": {"numpy", "polars", "pydicom", "soundfile"},
-    "flows": {"polars", "numpy", "prefect", "prefect_dask", "rich", "jinja2", "jsonschema"},
+    "flows": {"polars", "numpy", "prefect", "distributed", "rich", "jinja2", "jsonschema"},
 }
 MODULES = sorted(path for room in ROOMS for path in (ROOT / room).rglob("*.py"))
 

@@ -43,6 +43,14 @@ from flows.schedule import nightly_flow
 print(nightly_flow(sys.argv[1], return_state=True).name)
 """
 
+REPORTS_ON_ITSELF = """
+from flows import schedule
+from prefect.analytics import is_telemetry_enabled
+from prefect.settings import get_current_settings
+wishes = get_current_settings()
+print(is_telemetry_enabled(), wishes.server.analytics_enabled, wishes.cloud.enable_orchestration_telemetry)
+"""
+
 
 @pytest.fixture
 def coast(tmp_path):
@@ -67,7 +75,9 @@ def guarded(tmp_path):
     (tmp_path / "guard" / "sitecustomize.py").write_text(GUARD)
     tried = tmp_path / "tried.txt"
     # A fresh home: no settings of a person may switch off, or on, what is tested here.
-    environment = {name: value for name, value in os.environ.items() if not name.startswith("PREFECT_")} | {
+    environment = {
+        name: value for name, value in os.environ.items() if not name.startswith(("PREFECT_", "CI", "DO_NOT"))
+    } | {
         "PYTHONPATH": f"{tmp_path / 'guard'}{os.pathsep}{ROOT}",
         "TRIED": str(tried),
         "HOME": str(tmp_path / "home"),
@@ -104,6 +114,12 @@ def test_the_nightly_flow_reaches_only_this_host(guarded, coast):
     done, tried = guarded("-c", NIGHTLY, str(coast))
     assert done.stdout.splitlines()[-1:] == ["Published"], done.stderr[-2000:]
     assert tried == []
+
+
+def test_prefect_does_not_report_on_itself(guarded):
+    """What Prefect and its server would send home minutes later, when no test looks any more, is switched off."""
+    done, _ = guarded("-c", REPORTS_ON_ITSELF)
+    assert done.stdout.split() == ["False"] * 3, done.stderr[-2000:]
 
 
 def test_a_run_needs_no_network_device(coast):

@@ -1,0 +1,116 @@
+"""Recordings analysed by the workers of a Dask scheduler: they write parts, this process alone commits them.
+
+Every worker has the same burdenline installed and sees the programme folder under the same path.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Sequence
+from typing import TYPE_CHECKING
+
+from flows import nightly
+from flows.detect import fingerprint_of
+from flows.nightly import Work
+from flows.progress import Reporter
+
+if TYPE_CHECKING:
+    from distributed import Client, Future
+
+CONNECT_S = 20.0
+WORKERS_AWAY_S = 60.0
+RETRIES = 1
+
+
+class WorkersError(RuntimeError):
+    """Recordings cannot be analysed on the Dask scheduler; what was committed before stays, the next run goes on."""
+
+
+def analyse_on_workers(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
+    """Analyse recordings on the scheduler that the settings name; yields loads to commit as they are done.
+
+    A recording whose worker dies is given to another one; doing it twice writes the same files. Raises WorkersError.
+    """
+    if not work:
+        return
+    address = work[0].settings.workers.scheduler
+    with _connected(address) as client:
+        _await_workers(client, address)
+        running = {
+            client.submit(analyse_seen, item, key=f"analyse-{item.recording_id}", pure=False, retries=RETRIES): item
+            for item in work
+        }
+        for number, future in enumerate(_as_done(client, list(running), address), start=1):
+            item = running[future]
+            yield _loads(future, item, address)
+            reporter.say(f"  analysed {item.recording_id} ({number} of {len(work)})")
+
+
+def analyse_seen(item: Work) -> dict:
+    """Analyse one recording in a worker, once it is sure that the worker sees the folder."""
+    if not (item.folder / "lake" / "ledger").is_dir():
+        raise WorkersError(
+            f"a worker does not see {item.folder}; share the folder with every worker under the same path"
+        )
+    return nightly.analyse_one(item)
+
+
+def _connected(address: str) -> Client:
+    try:
+        from distributed import Client
+    except ImportError:
+        raise WorkersError(
+            f"[workers] scheduler = {address!r} needs the extra dask; install burdenline[dask], or empty the setting"
+        ) from None
+    try:
+        return Client(address, timeout=CONNECT_S)
+    except (OSError, ValueError):
+        raise WorkersError(
+            f"no Dask scheduler answers at {address} within {CONNECT_S:g} s; start `dask scheduler` there, "
+            "or empty [workers] scheduler to analyse on this host"
+        ) from None
+
+
+def _await_workers(client: Client, address: str) -> None:
+    try:
+        client.wait_for_workers(1, timeout=WORKERS_AWAY_S)
+    except TimeoutError:
+        raise _without_workers(address) from None
+
+
+def _without_workers(address: str) -> WorkersError:
+    return WorkersError(f"the scheduler at {address} has had no worker for {WORKERS_AWAY_S:g} s; start `dask worker`")
+
+
+def _as_done(client: Client, running: Sequence[Future], address: str) -> Iterator[Future]:
+    """Futures in the order in which they end, however they end; gives up when every worker stays away."""
+    from distributed import CancelledError, wait
+
+    while running:
+        try:
+            wait(running, timeout=WORKERS_AWAY_S, return_when="FIRST_COMPLETED")
+        except CancelledError:
+            pass  # the future that was cancelled says so when it is asked for its result
+        except TimeoutError:
+            if not client.nthreads():
+                raise _without_workers(address) from None
+        ended = {future for future in running if future.done()}
+        yield from ended
+        running = [future for future in running if future not in ended]
+
+
+def _loads(future: Future, item: Work, address: str) -> dict:
+    from distributed import CancelledError, KilledWorker
+
+    try:
+        loads = future.result()
+    except CancelledError:
+        raise WorkersError(f"the connection to the Dask scheduler at {address} was lost; run again") from None
+    except KilledWorker:
+        raise WorkersError(
+            f"{item.recording_id} ended every worker that tried it, out of memory perhaps; give the workers more, "
+            "or empty [workers] scheduler to analyse on this host"
+        ) from None
+    expected = ("fingerprints", fingerprint_of(item.settings))
+    if expected not in loads:
+        raise WorkersError(f"the workers at {address} run another burdenline; install this one there")
+    return loads
