@@ -48,6 +48,17 @@ class Blocks(NamedTuple):
     noise: NDArray[np.float32]  # mean slope energy outside QRS complexes, mV, NaN when there is no such time
     level: NDArray[np.float32]  # QRS level, mV; inf where unknown
 
+    def part(self, rows: slice) -> Blocks:
+        """Some of the blocks, as views."""
+        return Blocks(
+            self.is_flat[rows],
+            self.is_rail[rows],
+            self.is_missing[rows],
+            self.is_dropped[rows],
+            self.noise[rows],
+            self.level[rows],
+        )
+
 
 class ChunkBeats(NamedTuple):
     """Beats of one chunk. Arrays of shape (n_beats,)."""
@@ -106,7 +117,7 @@ def read_chunk(segment: Segment, begin: int, end: int, scale: Scale) -> tuple[Ch
     shapes = _shapes(framed, found.working[mine])
     shapes -= np.float32(scale.count_at_zero_mv * scale.mv_per_count)
     beats = ChunkBeats(found.working[mine] + first, found.energy[mine], shapes, found.is_clean[mine])
-    return beats, Blocks(*(column[inner] for column in blocks))
+    return beats, blocks.part(inner)
 
 
 class _Beats(NamedTuple):
@@ -131,8 +142,8 @@ def _find(framed: NDArray[np.float32], flags: _Flags) -> tuple[_Beats, Blocks]:
     block = cell // qrs.BLOCK_CELLS
     is_clean = np.nan_to_num(noise, nan=0.0)[block] < CLEAN * level[block]
     working = qrs.fiducials(signal_mv, cell)
-    order = np.argsort(working, kind="stable")
-    beats = _Beats(working[order], candidates.energy[beat][order], is_clean[order])
+    one_each = qrs.without_twins(working, candidates.energy[beat])
+    beats = _Beats(working[one_each], candidates.energy[beat][one_each], is_clean[one_each])
     return beats, Blocks(flags.is_flat, flags.is_rail, flags.is_missing, is_dropped, noise, level)
 
 
@@ -201,7 +212,7 @@ class _Flags(NamedTuple):
     is_flat: NDArray[np.bool_]
     is_rail: NDArray[np.bool_]
     is_missing: NDArray[np.bool_]
-    range_mv: NDArray[np.float64]
+    range_mv: NDArray[np.floating]
 
 
 def _flags(counts: NDArray[np.int16], first: int, last: int, offset: int, scale: Scale) -> _Flags:

@@ -30,6 +30,7 @@ GUARD_S = 60.0
 THRESHOLD = 0.32  # of the local level
 LOW_THRESHOLD = 0.13  # of the local level, for the search in gaps
 REFRACTORY_S = 0.24
+TWIN_S = 0.20  # two bends of one wide QRS; no two beats come so close
 T_WAVE_S = 0.38
 T_WAVE_ENERGY = 0.8  # a T wave has less energy than this share of its QRS
 T_WAVE_SHARPNESS = 0.45  # and bends less sharply than this share of its QRS
@@ -228,6 +229,17 @@ def fiducials(signal_mv: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArra
     curve = left - 2 * middle + right
     shift = np.divide(0.5 * (left - right), curve, out=np.zeros_like(curve), where=curve < 0)
     return begin + at + np.clip(shift, -0.5, 0.5).astype(np.float64)
+
+
+def without_twins(working: NDArray[np.float64], energy: NDArray[np.float32]) -> NDArray[np.int64]:
+    """Beats in order of their positions, without the weaker of two whose bends lie within one QRS of each other."""
+    order = np.argsort(working, kind="stable")
+    is_close = np.diff(working[order]) < TWIN_S * WORKING_FS_HZ
+    later_is_weaker = np.diff(energy[order]) < 0
+    drop = np.zeros(order.size, dtype=bool)
+    drop[1:] |= is_close & later_is_weaker
+    drop[:-1] |= is_close & ~later_is_weaker
+    return order[~drop]
 
 
 def is_interloper(

@@ -56,3 +56,10 @@ def test_weak_rare_detection_between_beats_on_time_is_an_interloper() -> None:
     rare = np.array([False, True, False, True, False, True, False])
     assert qrs.is_interloper(energy, before, after, usual, rare).tolist() == [False, True, False, True] + [False] * 3
     assert not qrs.is_interloper(energy, before, after, usual, np.zeros(7, dtype=bool)).any()
+
+
+def test_of_two_bends_of_one_complex_the_stronger_stays() -> None:
+    """Positions closer than any two beats can be are one beat; the rest comes back in order of position."""
+    working = np.array([100.0, 220.0, 205.0, 400.0])
+    energy = np.array([1.0, 1.0, 0.6, 1.0], dtype=np.float32)
+    assert qrs.without_twins(working, energy).tolist() == [0, 1, 3]
