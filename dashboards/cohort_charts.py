@@ -43,7 +43,7 @@ def changes_of_all(changes: pl.DataFrame) -> Figure:
     drawn_on = layout(
         380,
         xaxis={**GREY, "title": {"text": "patients, from the largest fall"}, "showticklabels": False, "showgrid": False},
-        yaxis=axis("after over before", (0, 1), type="log", rangemode="normal", tickvals=list(RATIO_TICKS),
+        yaxis=axis("", (0, 1), type="log", rangemode="normal", tickvals=list(RATIO_TICKS),
                    ticktext=list(RATIO_TICKS.values())),
         bargap=0.1,
         hovermode="closest",

@@ -76,6 +76,8 @@ def change_words(change: dict[str, Any]) -> str:
     if change["verdict"] == "too_little_wear":
         return f"{name.lower()}: too little wear to judge a change"
     before, after = (words.number(change[f"{side}_value"], 1) for side in ("baseline", "after"))
+    if change["recurrence_day"]:
+        return f"{name.lower()} fell beyond chance at first and is back since {words.day(change['recurrence_day'])}"
     verb = {"fell_beyond_chance": "fell beyond chance", "rose_beyond_chance": "rose beyond chance"}
     said = verb.get(change["verdict"], "did not change more than chance explains")
     return f"{name.lower()} {said}, {before} → {after} {unit}"

@@ -6,6 +6,7 @@ import csv
 import io
 import os
 import re
+from datetime import date
 from html.parser import HTMLParser
 from pathlib import Path
 
@@ -232,6 +233,14 @@ def test_a_verdict_stands_with_both_values_and_their_wear(site):
         "100 %",
     ):
         assert part in text, part
+
+
+def test_a_recurrence_is_the_headline(rows, publish, tmp_path):
+    """Where ectopy came back the headline says so instead of averaging over both."""
+    rows["changes"][0]["recurrence_day"] = date(2026, 3, 22)
+    text = pages_of(build(publish(rows), tmp_path / "site"))["patients/SKERRY-0001.html"].text
+    said = "Ventricular burden fell beyond chance at first and is back since 22 Mar 2026 after start of bisoprolol 5 mg"
+    assert said in text
 
 
 def test_planned_visits_stand_on_the_pages(site):
