@@ -5,6 +5,7 @@ Every worker has the same burdenline installed and sees the programme folder und
 
 from __future__ import annotations
 
+import logging
 from collections.abc import Iterator, Sequence
 from typing import TYPE_CHECKING
 
@@ -61,6 +62,8 @@ def _connected(address: str) -> Client:
         raise WorkersError(
             f"[workers] scheduler = {address!r} needs the extra dask; install burdenline[dask], or empty the setting"
         ) from None
+    # The stack traces that its loggers print of a lost connection say less than the sentences below.
+    logging.getLogger("distributed.client").setLevel(logging.CRITICAL)
     try:
         return Client(address, timeout=CONNECT_S)
     except (OSError, ValueError):

@@ -9,6 +9,7 @@ import sys
 import time
 from datetime import datetime
 from pathlib import Path
+from unittest.mock import create_autospec
 
 import polars as pl
 import pytest
@@ -196,6 +197,28 @@ def test_a_scheduler_without_workers_is_one_sentence(coast, cluster, monkeypatch
         process.wait(30)
     with pytest.raises(WorkersError, match=r"has had no worker for 2 s; start `dask worker`"):
         run(coast)
+
+
+@needs_dask
+def test_a_recording_that_ends_every_worker_is_named(coast):
+    """A recording on which one worker after the other died is named, with what to do."""
+    from distributed import Future, KilledWorker
+
+    future = create_autospec(Future, instance=True)
+    future.result.side_effect = KilledWorker("analyse-SRL-1_20260301", None, 3)
+    with pytest.raises(WorkersError, match="SRL-1_20260301 ended every worker that tried it, out of memory perhaps"):
+        workers._loads(future, Work(coast, "SRL-1_20260301", load(coast / "programme.toml")), "tcp://host:8786")
+
+
+@needs_dask
+def test_workers_of_another_version_are_refused(coast):
+    """What workers with another detector made is not committed; the sentence says to install the same one."""
+    from distributed import Future
+
+    future = create_autospec(Future, instance=True)
+    future.result.return_value = {("fingerprints", "of another detector"): []}
+    with pytest.raises(WorkersError, match="the workers at tcp://host:8786 run another burdenline"):
+        workers._loads(future, Work(coast, "SRL-1_20260301", load(coast / "programme.toml")), "tcp://host:8786")
 
 
 def test_without_the_extra_the_setting_says_what_to_install(coast, monkeypatch):
