@@ -23,7 +23,7 @@ MAIN_SCATTER_ALLOWED = 10.0  # times the median distance in the main family
 TIGHTEST = 0.96  # correlation that a family asks whose beats scatter little
 SCATTER_ALLOWED = 5.0  # times the median distance of a family's own beats
 AMPLITUDE_LIMIT = 2.0  # sizes within this factor
-MOST_FAMILIES = 64
+MANY_FAMILIES = 64  # with every so many, a new family needs four times the beats
 RIPPLE = 0.3  # of the QRS: less does no harm
 RIPPLE_TONE = 3.1
 RIPPLE_SAMPLES = 15  # 280 to 160 ms before the R peak
@@ -163,19 +163,22 @@ class FamilyBook:
         shape_mv: NDArray[np.float32],
         free: NDArray[np.int64],
     ) -> None:
-        """Found families among free beats, the most common shape first, until no two beats are alike."""
-        most = min(MOST_FAMILIES, self.n_beats.size + MOST_NEW_FAMILIES)
-        while free.size >= 2 and self.n_beats.size < most:
-            seed = _seed(direction, free)
+        """Found families among free beats, the most common shape first, until no two beats are alike.
+
+        The more families there are, the more beats a new one needs: a long recording must not fill up with rare noise
+        and have no room left for a new focus.
+        """
+        for _ in range(MOST_NEW_FAMILIES):
+            seed = _seed(direction, free) if free.size >= 2 else -1
             if seed < 0:
                 break
             shape, scatter, is_member = _settle(direction, size, shape_mv, free, seed)
             if self.n_beats.size == 0:
                 self.loosest = float(np.clip(1 - MAIN_SCATTER_ALLOWED * scatter, LOOSEST, LOOSEST_WHEN_CLEAN))
-            limit = max(_limit(scatter), self.loosest)
-            self.shape_mv = np.vstack([self.shape_mv, shape[None]])
-            self.limit = np.append(self.limit, np.float32(limit))
-            self.n_beats = np.append(self.n_beats, 0)
+            if np.count_nonzero(is_member) >= _least_beats(self.n_beats.size):
+                self.shape_mv = np.vstack([self.shape_mv, shape[None]])
+                self.limit = np.append(self.limit, np.float32(max(_limit(scatter), self.loosest)))
+                self.n_beats = np.append(self.n_beats, 0)
             free = free[~is_member & (free != seed)]
 
     def _learn(self, shape_mv: NDArray[np.float32], member: Membership) -> None:
@@ -189,6 +192,11 @@ class FamilyBook:
             weight = count[family] / (min(self.n_beats[family], MEMORY_BEATS) + count[family])
             self.shape_mv[family] += np.float32(weight) * (shape_mv[mine].mean(axis=0) - self.shape_mv[family])
         self.n_beats += count
+
+
+def _least_beats(n_families: int) -> int:
+    """Beats that a family needs to be founded beside so many others: 1, 4, 16, ..."""
+    return 4 ** (n_families // MANY_FAMILIES)
 
 
 def _same_size(size: NDArray[np.float32], other: NDArray[np.float32]) -> NDArray[np.bool_]:

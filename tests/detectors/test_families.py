@@ -79,3 +79,14 @@ def test_mains_ripple_is_smoothed_away() -> None:
         hummed = (clean + 0.2 * np.sin(2 * np.pi * mains_hz * T / 1000 + phase)).astype(np.float32)
         prepared = families.FamilyBook().prepare(hummed)
         assert np.abs(prepared - clean)[:, 1:15].max() < 0.04
+
+
+def test_a_new_focus_finds_room_beside_many_rare_families() -> None:
+    """After far more rare shapes than families are kept, a shape that repeats often still founds its family."""
+    rng = np.random.default_rng(6)
+    rare = [noisy(np.cumsum(rng.standard_normal(SHAPE_LENGTH)), 2, 0.01, seed) for seed in range(200)]
+    batches = [np.concatenate([noisy(NARROW, 100, 0.02, i), *rare[i * 25 : i * 25 + 25]]) for i in range(8)]
+    book, _ = entered(*batches)
+    assert book.n_beats.size < 150
+    member = book.enter(noisy(WIDE, 40, 0.02, 99), np.ones(40, dtype=bool))
+    assert np.unique(member.family).tolist() == [book.n_beats.size - 1]
