@@ -19,7 +19,7 @@ from flows.progress import SILENT, Reporter
 from flows.settings import Settings
 
 if TYPE_CHECKING:
-    from flows.ingest import Arrivals
+    from flows.arrivals.ingest import Arrivals
     from warehouse.ledger import Ledger
 
 DONE, FAILED, USAGE, DONE_WITH_REFUSALS = 0, 1, 2, 3
@@ -85,7 +85,8 @@ def run(
 def _bring_up_to_date(
     folder: Path, settings: Settings, reporter: Reporter, actor_code: str | None, analyse_all: Analyse
 ) -> Outcome:
-    from flows import edits, ingest, publication, register
+    from flows import edits, publication, register
+    from flows.arrivals import ingest
     from warehouse.ledger import Ledger
 
     people = register.load(folder, settings.programme.zone)

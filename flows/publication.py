@@ -15,11 +15,11 @@ from pathlib import Path
 import polars as pl
 
 from dashboards.site import build_site
-from flows import trends
+from flows.change import trends
+from flows.change.visits import responders, visit_changes, visits
 from flows.promotion import published_fingerprint
 from flows.register import Register
 from flows.settings import ChangeSettings, Settings
-from flows.visits import responders, visit_changes, visits
 from warehouse.build import TrendBuild
 from warehouse.ledger import Ledger
 from warehouse.parts import Part

@@ -19,7 +19,7 @@ from typing import Any, NamedTuple
 
 import polars as pl
 
-from flows.clocks import possible_utc
+from flows.arrivals.clocks import possible_utc
 from flows.settings import SettingsError, check_zone
 
 THERAPY_KINDS = ("medication_start", "medication_stop", "dose_change", "ablation", "other")

@@ -8,9 +8,9 @@ from datetime import UTC, datetime
 from pathlib import Path
 
 from flows import settings as programme_settings
+from flows.change.visits import MASKED
 from flows.lock import folder_lock
 from flows.settings import toml_value
-from flows.visits import MASKED
 from warehouse.audit import Change, change_loads
 from warehouse.ledger import Ledger
 from warehouse.parts import write_whole

@@ -17,7 +17,7 @@ def _inspect_arguments(parser: argparse.ArgumentParser) -> None:
 
 def _inspect(asked: argparse.Namespace) -> int:
     from flows import settings
-    from flows.ingest import inspect
+    from flows.arrivals.ingest import inspect
 
     found = inspect(asked.file, settings.load(asked.programme / "programme.toml") if asked.programme else None)
     if asked.json:
@@ -34,7 +34,7 @@ def _retry_arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def _retry(asked: argparse.Namespace) -> int:
-    from flows.quarantine import retry
+    from flows.arrivals.quarantine import retry
 
     retry(asked.folder, asked.file)
     print(f"{asked.file} is back in the inbox; next: burdenline run {asked.folder}")

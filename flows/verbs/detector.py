@@ -25,7 +25,7 @@ def _score_arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def _score(asked: argparse.Namespace) -> int:
-    from flows import score
+    from flows.scoring import score
 
     report = score.score_folder(
         asked.folder,

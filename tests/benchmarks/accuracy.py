@@ -20,7 +20,7 @@ from detectors.analyse import CHUNK_S, Gathered, Options, conclude, gather, timi
 from detectors.annotations import beat_annotations, beat_classes
 from detectors.results import Segment
 from detectors.scoring import CLASSES, compare_beats, gross, match_beats, match_window, statistics
-from flows.score_record import Labelled, open_labelled
+from flows.scoring.score_record import Labelled, open_labelled
 
 ROOT = Path(__file__).parents[2]
 DEFAULT = Path(os.environ.get("BURDENLINE_REFERENCE_ECG", ROOT.parent / "shared" / "reference-ecg")) / "mitdb"

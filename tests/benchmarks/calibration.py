@@ -26,8 +26,8 @@ from scipy.stats import norm
 
 from detectors import change, variability
 from detectors.standardise import HourCells, over_dispersion, standardised_days
-from flows.courses import compared
-from flows.measures import MEASURES, MeasuredDays
+from flows.change.courses import compared
+from flows.change.measures import MEASURES, MeasuredDays
 from flows.settings import ChangeSettings, WearSettings
 
 Floats = NDArray[np.float64]

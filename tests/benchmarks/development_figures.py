@@ -10,7 +10,7 @@ import json
 import sys
 from pathlib import Path
 
-from flows.score import score_folder
+from flows.scoring.score import score_folder
 
 TARGET = Path(__file__).parents[2] / "dashboards" / "development_figures.json"
 KEPT = (

@@ -42,7 +42,8 @@ def anonymous_mb() -> float:
 
 def land(folder: Path) -> None:
     """Ingest in this process, watching its memory; prints seconds and MB."""
-    from flows import ingest, register, settings
+    from flows import register, settings
+    from flows.arrivals import ingest
     from warehouse.ledger import Ledger
 
     peak, done = [0.0], threading.Event()

@@ -18,8 +18,8 @@ from scipy.signal import resample_poly
 
 from detectors.scoring import gross
 from flows.readers.recording import Opened
-from flows.score_record import Labelled, open_labelled, score_record
-from flows.score_report import FIGURES, Options
+from flows.scoring.score_record import Labelled, open_labelled, score_record
+from flows.scoring.score_report import FIGURES, Options
 
 MV_PER_COUNT = 0.0025
 Changed = Callable[[NDArray[np.float64], float], NDArray[np.float64]]

@@ -82,7 +82,8 @@ def _programme(folder: Path, recording: Path, days: float) -> None:
 
 def _job(folder: Path) -> None:
     """Run ingest, detection, publication and an idle run; print stage, seconds and peak anonymous memory in MB."""
-    from flows import ingest, nightly, publication, register
+    from flows import nightly, publication, register
+    from flows.arrivals import ingest
     from flows.progress import Silent
     from flows.settings import load
     from warehouse.ledger import Ledger

@@ -10,8 +10,8 @@ import pytest
 from detectors.annotations import beat_annotations
 from detectors.results import Analysis
 from detectors.scoring import compare_beats, statistics
-from flows import score_record
-from flows.score_record import Labelled
+from flows.scoring import score_record
+from flows.scoring.score_record import Labelled
 
 # Source: labels of the MIT-BIH Arrhythmia Database (Moody & Mark, IEEE Eng Med Biol 2001;20:45).
 # The floors are a little under what the detector reaches: a guard against loss, not a claim.

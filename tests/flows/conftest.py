@@ -7,7 +7,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from flows.ingest import Arrivals, ingest
+from flows.arrivals.ingest import Arrivals, ingest
 from flows.register import load as load_register
 from warehouse.ledger import Ledger
 from warehouse.parts import SignalReader, read_part

@@ -6,7 +6,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from flows.clocks import offset_at, possible_utc
+from flows.arrivals.clocks import offset_at, possible_utc
 
 
 @pytest.mark.parametrize(

@@ -6,9 +6,9 @@ from pathlib import Path
 
 import pytest
 
-from flows.inbox import look
-from flows.privacy import shown_name, without_words
-from flows.quarantine import retry
+from flows.arrivals.inbox import look
+from flows.arrivals.privacy import shown_name, without_words
+from flows.arrivals.quarantine import retry
 from flows.settings import InboxSettings
 
 HEADER = "{0} 2 250 4\n{0}.dat 16 200 16 0 0 0 0 II\n{0}b.dat 16 200 16 0 0 0 0 V1\n"
@@ -235,7 +235,7 @@ def test_impossible_file_times_do_no_harm(programme, make_edf, mtime_s):
 
 def test_a_file_that_cannot_be_read_waits(programme, make_edf, monkeypatch):
     """A read error leaves the delivery in the inbox with a clear word; the others are taken."""
-    from flows import staging
+    from flows.arrivals import staging
 
     real = staging._copied
 

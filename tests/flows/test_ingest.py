@@ -9,8 +9,8 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from flows import ingest as ingest_module
-from flows.ingest import inspect
+from flows.arrivals import ingest as ingest_module
+from flows.arrivals.ingest import inspect
 from flows.readers.identify import open_delivery
 from warehouse.ledger import Ledger
 from warehouse.parts import write_part
@@ -99,7 +99,7 @@ def test_late_part_reuses_landed_samples_and_withdraws_what_was_derived(programm
     ledger = Ledger(lake)
     before = {part.path for part in ledger.parts("signal", RECORDING)}
     rows = {"finding_code": "x", "finding_detail": "", "recording_id": RECORDING, "fingerprint": "f"}
-    from flows.landing import typed_frame
+    from flows.arrivals.landing import typed_frame
 
     ledger.commit(
         {
@@ -257,7 +257,7 @@ def test_start_from_the_register(programme):
     assert programme.deliveries() == {"1001.hea": ("quarantined", "start_time_unknown")}
     assert {path.name for path in programme.quarantine.iterdir()} == {"1001.hea", "1001.dat", "1001.hea.reason.txt"}
     programme.register("P-0001,", "1001,P-0001,2026-02-28,,2026-03-01 10:00")
-    from flows.quarantine import retry
+    from flows.arrivals.quarantine import retry
 
     retry(programme.folder, "1001.hea")
     programme.run()
@@ -347,7 +347,7 @@ def test_killed_at_any_step_the_next_run_ends_the_same(make_programme, make_edf,
 
 def _die_at(patch, step, death):
     """Make the `death`-th call of a step end the run, as a kill would."""
-    from flows import deliveries, inbox, ingest, landing, quarantine, recordings
+    from flows.arrivals import deliveries, inbox, ingest, landing, quarantine, recordings
 
     homes = {
         "write_part": [(deliveries, "write_part"), (recordings, "write_part")],
@@ -488,7 +488,7 @@ def test_a_zip_of_a_telling_name_keeps_its_device(programme):
     (name,) = [path.name for path in programme.quarantine.iterdir() if path.suffix == ".zip"]
     assert "doe" not in name
     (programme.folder / "programme.toml").write_text("[site]\nmv_per_count = 0.005\n")
-    from flows.quarantine import retry
+    from flows.arrivals.quarantine import retry
 
     retry(programme.folder, name)
     assert programme.run().accepted == 1

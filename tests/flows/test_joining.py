@@ -9,9 +9,9 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
-from flows.clocks import offset_at, possible_utc
-from flows.joining import arrange
-from flows.placing import DeliveredPart, Misfit, Piece, from_ns, to_ns
+from flows.arrivals.clocks import offset_at, possible_utc
+from flows.arrivals.joining import arrange
+from flows.arrivals.placing import DeliveredPart, Misfit, Piece, from_ns, to_ns
 
 FS_HZ = 100
 HOUR = 3600 * FS_HZ

@@ -13,7 +13,7 @@ import polars as pl
 import pytest
 import sleepecg
 
-from flows import reviews
+from flows.arrivals import reviews
 from flows.edf_write import EdfHeader, Piece, write_edf
 from flows.nightly import DONE, DONE_WITH_REFUSALS, run
 from flows.programme import make_folder

@@ -9,7 +9,7 @@ import pytest
 import wfdb
 
 from detectors import synthetic
-from flows import score
+from flows.scoring import score
 
 FS_HZ = 250
 

@@ -9,8 +9,8 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from detectors.change import VERDICTS
-from flows import trends
-from flows.measures import MEASURES
+from flows.change import trends
+from flows.change.measures import MEASURES
 from flows.settings import ChangeSettings, WearSettings
 from warehouse.schema import PUBLISHED
 

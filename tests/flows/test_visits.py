@@ -7,9 +7,9 @@ import polars as pl
 import pytest
 import statsmodels.api as sm
 
+from flows.change.visits import responders, visit_changes, visits
 from flows.register import RegisterError, load
 from flows.settings import ChangeSettings, TrialSettings
-from flows.visits import responders, visit_changes, visits
 from warehouse.parts import empty_frame
 from warehouse.schema import PUBLISHED
 

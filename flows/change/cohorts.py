@@ -8,7 +8,7 @@ import polars as pl
 
 from detectors.change import FELL, ROSE, TOO_LITTLE
 from detectors.cohort import geometric_mean_ratio, wilson_share
-from flows.measures import HEART_RATE
+from flows.change.measures import HEART_RATE
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
 

@@ -1,6 +1,6 @@
 """Run the detector over a folder of labelled WFDB records and score it as ANSI/AAMI EC57 asks.
 
-One record is scored in flows/score_record.py; how a report looks stands in flows/score_report.py and dashboards/.
+One record is scored in flows/scoring/score_record.py; how a report looks stands in flows/scoring/score_report.py and dashboards/.
 """
 
 from __future__ import annotations
@@ -19,8 +19,8 @@ from detectors.scoring import LEARNING_S
 from flows.readers.codes import Refused
 from flows.readers.recording import Opened
 from flows.readers.wfdb_annotations import AnnotationError
-from flows.score_record import Labelled, ScoreError, open_labelled, open_signal, score_record
-from flows.score_report import NoiseScore, Options, RecordScore, Report, write_page
+from flows.scoring.score_record import Labelled, ScoreError, open_labelled, open_signal, score_record
+from flows.scoring.score_report import NoiseScore, Options, RecordScore, Report, write_page
 
 __all__ = ["NOISE_LEVELS_DB", "ScoreError", "score_folder", "write_page"]
 

@@ -14,7 +14,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from flows.placing import SEAM_NS, DeliveredPart, Misfit, placed, tolerance_ns
+from flows.arrivals.placing import SEAM_NS, DeliveredPart, Misfit, placed, tolerance_ns
 from flows.readers.codes import Refused
 from flows.readers.recording import Finding, finding, rate_ns
 

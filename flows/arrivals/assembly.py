@@ -17,10 +17,10 @@ from typing import Any, NamedTuple
 
 import polars as pl
 
-from flows.clocks import possible_utc
-from flows.joining import Arrangement, Span, arrange
-from flows.landing import typed_frame
-from flows.placing import DeliveredPart, Misfit, Piece, from_ns, to_ns
+from flows.arrivals.clocks import possible_utc
+from flows.arrivals.joining import Arrangement, Span, arrange
+from flows.arrivals.landing import typed_frame
+from flows.arrivals.placing import DeliveredPart, Misfit, Piece, from_ns, to_ns
 from flows.readers.recording import rate_ns
 from flows.register import Register, Wear
 from warehouse.parts import BLOCK_SAMPLES, Part, SignalReader, write_signal

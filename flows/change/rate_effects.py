@@ -10,8 +10,8 @@ import numpy as np
 import polars as pl
 
 from detectors import rate_dependence as effects
-from flows.courses import gap_excess
-from flows.measures import HEART_RATE, V_PER_H, measured_days
+from flows.change.courses import gap_excess
+from flows.change.measures import HEART_RATE, V_PER_H, measured_days
 from flows.settings import ChangeSettings
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED

@@ -16,7 +16,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from flows.clocks import offset_at
+from flows.arrivals.clocks import offset_at
 from flows.readers.codes import Refused
 from flows.readers.recording import Finding, finding, rate_ns
 

@@ -12,9 +12,9 @@ from typing import Any
 
 import polars as pl
 
-from flows.cohorts import cohort_rows
+from flows.change.cohorts import cohort_rows
+from flows.change.trends import changes
 from flows.settings import ChangeSettings, TrialSettings, WearSettings
-from flows.trends import changes
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
 

@@ -9,8 +9,8 @@ from collections.abc import Sequence
 from dataclasses import replace
 from typing import NamedTuple
 
-from flows.assembly import Match, match
-from flows.privacy import shown_serial, without_words
+from flows.arrivals.assembly import Match, match
+from flows.arrivals.privacy import shown_serial, without_words
 from flows.readers.codes import Declined, Refused, Waits
 from flows.readers.recording import Finding, Opened, finding
 from flows.register import Register

@@ -17,24 +17,24 @@ from datetime import datetime
 from pathlib import Path
 from typing import Any
 
-from flows import inbox as door
-from flows import reviews
-from flows.assembly import Match
-from flows.deliveries import ACCEPTED, QUARANTINED, SKIPPED, WAITING, Deliveries, Loads, Pieces
-from flows.inbox import Candidate, SeenFiles
-from flows.landing import Identity, Landed, land
-from flows.privacy import shown_name, shown_serial
-from flows.quarantine import quarantine, remove
+from flows.arrivals import inbox as door
+from flows.arrivals import reviews
+from flows.arrivals.assembly import Match
+from flows.arrivals.deliveries import ACCEPTED, QUARANTINED, SKIPPED, WAITING, Deliveries, Loads, Pieces
+from flows.arrivals.inbox import Candidate, SeenFiles
+from flows.arrivals.landing import Identity, Landed, land
+from flows.arrivals.privacy import shown_name, shown_serial
+from flows.arrivals.quarantine import quarantine, remove
+from flows.arrivals.recordings import Recordings
+from flows.arrivals.scaling import Scale, scaled_like
+from flows.arrivals.staging import content_hash, hash_file, staged
+from flows.arrivals.wearing import Wearing, wearing_of
 from flows.readers.archive import Limits, is_archive
 from flows.readers.codes import Declined, Refused, Waits
 from flows.readers.identify import head_of, open_delivery
 from flows.readers.recording import NO_SITE, Opened, Site
-from flows.recordings import Recordings
 from flows.register import Register
-from flows.scaling import Scale, scaled_like
 from flows.settings import Settings
-from flows.staging import content_hash, hash_file, staged
-from flows.wearing import Wearing, wearing_of
 from warehouse.ledger import Ledger
 from warehouse.parts import PartError
 

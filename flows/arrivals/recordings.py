@@ -13,12 +13,12 @@ from typing import Any
 
 import polars as pl
 
-from flows.assembly import Assembled, assemble, device_key, parts_of, signal_parts
-from flows.deliveries import ACCEPTED, QUARANTINED, WAITING, Deliveries, Loads, Pieces
-from flows.landing import Landed, typed_frame
-from flows.placing import DeliveredPart, Misfit, from_ns
+from flows.arrivals.assembly import Assembled, assemble, device_key, parts_of, signal_parts
+from flows.arrivals.deliveries import ACCEPTED, QUARANTINED, WAITING, Deliveries, Loads, Pieces
+from flows.arrivals.landing import Landed, typed_frame
+from flows.arrivals.placing import DeliveredPart, Misfit, from_ns
+from flows.arrivals.scaling import Scale
 from flows.register import Register, Wear
-from flows.scaling import Scale
 from warehouse.ledger import Ledger
 from warehouse.parts import Part, read_part, write_part, write_whole
 from warehouse.schema import LAKE

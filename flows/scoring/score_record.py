@@ -19,7 +19,7 @@ from flows.readers.recording import NO_SITE, Opened, Site
 from flows.readers.wfdb import names_in_header
 from flows.readers.wfdb_annotations import read_annotations
 from flows.readers.wfdb_header import read_header
-from flows.score_report import Judged, Options, RecordScore
+from flows.scoring.score_report import Judged, Options, RecordScore
 
 _V = CLASSES.index("V")
 

@@ -10,7 +10,7 @@ import polars as pl
 from numpy.typing import NDArray
 
 from detectors.rates import FitError, fit_quasi_poisson, series_design
-from flows.measures import V_PER_H, MeasuredDays, measured_days
+from flows.change.measures import V_PER_H, MeasuredDays, measured_days
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
 

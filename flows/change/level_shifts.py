@@ -8,8 +8,8 @@ import numpy as np
 import polars as pl
 
 from detectors.shifts import shifts
-from flows.courses import day_noise, log_levels, step_sd
-from flows.measures import V_BURDEN, measured_days
+from flows.change.courses import day_noise, log_levels, step_sd
+from flows.change.measures import V_BURDEN, measured_days
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
 

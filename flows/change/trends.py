@@ -10,13 +10,13 @@ import polars as pl
 
 from detectors.change import TOO_LITTLE
 from detectors.variability import regression_to_mean
-from flows.cohorts import cohort
-from flows.courses import compared, recurrence_days
-from flows.level_shifts import level_shifts
-from flows.measures import HEART_RATE, MEASURES, Measure, measured_days
-from flows.rate_effects import rate_effects
-from flows.reasons import reason
-from flows.series_fits import series_fits
+from flows.change.cohorts import cohort
+from flows.change.courses import compared, recurrence_days
+from flows.change.level_shifts import level_shifts
+from flows.change.measures import HEART_RATE, MEASURES, Measure, measured_days
+from flows.change.rate_effects import rate_effects
+from flows.change.reasons import reason
+from flows.change.series_fits import series_fits
 from flows.settings import ChangeSettings, WearSettings
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED

@@ -12,7 +12,7 @@ from detectors import change as statistics
 from detectors.shifts import shifts
 from detectors.spread import Periods, shown_share
 from detectors.variability import excess_of_gap
-from flows.measures import HEART_RATE, Measure, MeasuredDays
+from flows.change.measures import HEART_RATE, Measure, MeasuredDays
 from flows.settings import ChangeSettings, WearSettings
 
 EPOCH = date(1970, 1, 1)

@@ -12,8 +12,8 @@ from typing import Any
 
 import polars as pl
 
-from flows.assembly import device_key
-from flows.landing import typed_frame
+from flows.arrivals.assembly import device_key
+from flows.arrivals.landing import typed_frame
 from warehouse.ledger import Ledger
 from warehouse.parts import Part, read_part, write_part
 

@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from detectors import change as statistics
-from flows.measures import NOUNS
+from flows.change.measures import NOUNS
 from flows.settings import WearSettings
 
 FULL_CLOCK_PCT = 100.0

@@ -15,8 +15,8 @@ from typing import Any
 import jsonschema
 import polars as pl
 
-from flows.deliveries import Loads
-from flows.landing import typed_frame
+from flows.arrivals.deliveries import Loads
+from flows.arrivals.landing import typed_frame
 from flows.readers.codes import Refused
 from warehouse.ledger import Ledger
 from warehouse.parts import Part, read_part, write_part

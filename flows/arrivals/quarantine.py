@@ -11,10 +11,10 @@ import zipfile
 from collections.abc import Collection, Sequence
 from pathlib import Path, PurePosixPath
 
-from flows.deliveries import Deliveries
-from flows.inbox import Candidate, files_with_header
+from flows.arrivals.deliveries import Deliveries
+from flows.arrivals.inbox import Candidate, files_with_header
+from flows.arrivals.privacy import shown_name
 from flows.lock import folder_lock
-from flows.privacy import shown_name
 from warehouse.ledger import Ledger
 from warehouse.parts import write_whole
 

@@ -1,0 +1,1 @@
+"""From hours and periods to the tables that answer "did it change?"."""

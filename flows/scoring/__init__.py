@@ -1,0 +1,1 @@
+"""The detector against expert labels, over a folder of records."""
