@@ -13,12 +13,13 @@ from flows.verbs.verb import Verb, folder_argument, json_option
 
 def _sql_arguments(parser: argparse.ArgumentParser) -> None:
     folder_argument(parser)
-    parser.add_argument(
+    query = parser.add_argument(
         "query",
-        metavar="QUERY",
-        nargs="?",
+        metavar="[QUERY]",
         help="one SQL query over the published tables, - to read it from standard input, nothing for a prompt",
     )
+    # Not nargs="?": that takes the query as left out as soon as an option stands before it.
+    query.required = False
     form = parser.add_mutually_exclusive_group()
     form.add_argument("--csv", action="store_true", help="print comma-separated values")
     form.add_argument("--json", action="store_true", help="print a list of row objects")

@@ -88,7 +88,7 @@ def test_a_mistake_is_answered_with_one_sentence(capsys, tmp_path, coast, words,
 
 
 def test_sql_answers_in_the_form_that_was_asked(capsys, coast, tmp_path):
-    """The same rows come as a table, CSV, JSON objects or a Parquet file."""
+    """The same rows come as a table, CSV, JSON objects or a Parquet file, the form named before or after the query."""
     query = "select patient_code, local_day, all_beats from wear_days"
     code, out, _ = told(capsys, "sql", coast, query, "--json")
     (row,) = json.loads(out)
@@ -96,6 +96,8 @@ def test_sql_answers_in_the_form_that_was_asked(capsys, coast, tmp_path):
     assert (row["patient_code"], row["local_day"]) == ("P-1", "2026-03-01")
     _, out, _ = told(capsys, "sql", coast, query, "--csv")
     assert out.splitlines() == ["patient_code,local_day,all_beats", f"P-1,2026-03-01,{row['all_beats']}"]
+    _, before_the_query, _ = told(capsys, "sql", coast, "--csv", query)
+    assert before_the_query == out
     _, out, _ = told(capsys, "sql", coast, query)
     assert "P-1" in out
     assert out.splitlines()[-1] == "1 row"
