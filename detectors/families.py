@@ -27,7 +27,8 @@ MANY_FAMILIES = 64  # with every so many, a new family needs four times the beat
 RIPPLE = 0.3  # of the QRS: less does no harm
 RIPPLE_TONE = 3.1
 RIPPLE_SAMPLES = 15  # 280 to 160 ms before the R peak
-MOST_NEW_FAMILIES = 32  # in one batch
+MOST_NEW_FAMILIES = 32  # in the first batch
+MOST_LATER_FAMILIES = 8  # in each batch after it
 SEED_SAMPLE = 128  # beats of which one becomes the seed of a family
 SCATTER_SAMPLE = 512  # beats from which the scatter of a family is taken
 MEAN_SAMPLE = 512  # beats of a batch from which the averaged shape learns
@@ -168,8 +169,9 @@ class FamilyBook:
         The more families there are, the more beats a new one needs: a long recording must not fill up with rare noise
         and have no room left for a new focus.
         """
-        for _ in range(MOST_NEW_FAMILIES):
-            seed = _seed(direction, free) if free.size >= 2 else -1
+        direction, size = direction[free], size[free]
+        for _ in range(MOST_NEW_FAMILIES if self.n_beats.size == 0 else MOST_LATER_FAMILIES):
+            seed = _seed(direction)
             if seed < 0:
                 break
             shape, scatter, is_member = _settle(direction, size, shape_mv, free, seed)
@@ -179,7 +181,8 @@ class FamilyBook:
                 self.shape_mv = np.vstack([self.shape_mv, shape[None]])
                 self.limit = np.append(self.limit, np.float32(max(_limit(scatter), self.loosest)))
                 self.n_beats = np.append(self.n_beats, 0)
-            free = free[~is_member & (free != seed)]
+            is_member[seed] = True
+            free, direction, size = free[~is_member], direction[~is_member], size[~is_member]
 
     def _learn(self, shape_mv: NDArray[np.float32], member: Membership) -> None:
         """Move every averaged shape towards the beats it was given."""
@@ -203,12 +206,13 @@ def _same_size(size: NDArray[np.float32], other: NDArray[np.float32]) -> NDArray
     return (size < AMPLITUDE_LIMIT * other) & (other < AMPLITUDE_LIMIT * size)
 
 
-def _seed(direction: NDArray[np.float32], free: NDArray[np.int64]) -> int:
-    """The beat with most look-alikes among an even sample of the free beats; -1 when no two are alike."""
-    sample = free[:: -(-free.size // SEED_SAMPLE)]
-    friends = (direction[sample] @ direction[sample].T > LOOSEST).sum(axis=0)
-    best = int(friends.argmax())
-    return int(sample[best]) if friends[best] >= 2 else -1
+def _seed(direction: NDArray[np.float32]) -> int:
+    """Row of the beat with most look-alikes among an even sample of beats; -1 when no two are alike."""
+    step = max(1, -(-direction.shape[0] // SEED_SAMPLE))
+    sample = direction[::step]
+    friends = (sample @ sample.T > LOOSEST).sum(axis=0)
+    best = int(friends.argmax()) if friends.size else 0
+    return best * step if friends.size and friends[best] >= 2 else -1
 
 
 def _settle(
@@ -218,15 +222,16 @@ def _settle(
     free: NDArray[np.int64],
     seed: int,
 ) -> tuple[NDArray[np.float32], float, NDArray[np.bool_]]:
-    """Averaged shape, scatter and members of the family that a seed founds."""
-    shape, scatter = shape_mv[seed], _first_scatter(direction[free] @ direction[seed])
-    near = _same_size(size[free], size[seed])
+    """Averaged shape, scatter and members of the family that a seed founds; `free` are the beats' rows in `shape_mv`."""
+    shape, scatter = shape_mv[free[seed]], _first_scatter(direction @ direction[seed])
+    near = _same_size(size, size[seed])
     for _ in range(3):
-        in_place = direction[free] @ unit(QRS.of(shape[None]))[0][0]
+        in_place = direction @ unit(QRS.of(shape[None]))[0][0]
         is_member = (in_place > _limit(scatter)) & near
-        if not is_member.any():
+        member = free[is_member]
+        if member.size == 0:
             break
-        shape = shape_mv[free[is_member]].mean(axis=0)
+        shape = shape_mv[member[:: -(-member.size // MEAN_SAMPLE)]].mean(axis=0)
         scatter = _quantile(1 - in_place[is_member], 0.5)
     return shape, scatter, is_member
 
