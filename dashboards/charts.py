@@ -14,7 +14,7 @@ from zoneinfo import ZoneInfo
 
 import polars as pl
 
-from dashboards import words
+from dashboards import marks, words
 
 
 class Figure(TypedDict):
@@ -50,11 +50,12 @@ def axis(title: str, domain: tuple[float, float], **more: Any) -> dict[str, Any]
 def timeline(rows: Mapping[str, pl.DataFrame]) -> Figure:
     """One day axis for a patient: burden, hours that carry it, heart rate; therapy marks and gaps run through all.
 
-    `rows` holds the patient's rows of wear_days, therapies, periods, changes and level_shifts by table.
+    `rows` holds the patient's rows of patients, wear_days, therapies, periods, changes, level_shifts and marks by table.
     """
     wear_days, therapies = rows["wear_days"].sort("local_day"), rows["therapies"]
     burden = [_burden_days(wear_days, valid=True), _burden_days(wear_days, valid=False)]
     data = [trace for trace in burden if trace["x"]] + [*_wear_bars(wear_days), _rate_days(wear_days)]
+    data += _mark_days(rows["marks"], rows["patients"]["zone"][0])
     first, last = _span(wear_days, therapies)
     drawn_on = layout(
         520,
@@ -63,6 +64,7 @@ def timeline(rows: Mapping[str, pl.DataFrame]) -> Figure:
         yaxis=axis("V burden, %", (0.50, 1.0)),
         yaxis2=axis("hours", (0.25, 0.44), **_hours_scale(wear_days)),
         yaxis3=axis("rate, /min", (0.0, 0.19), rangemode="normal", nticks=4),
+        yaxis4=_marks_axis((0.45, 0.48)),
         barmode="overlay",
         bargap=0.15,
         hovermode="x unified",
@@ -122,6 +124,34 @@ def _rate_days(wear_days: pl.DataFrame) -> dict[str, Any]:
     }
 
 
+def _mark_days(of_patient: pl.DataFrame, zone: str) -> Iterable[dict[str, Any]]:
+    """Yield the trace of the days with marks of the patient, if any; hovering tells when and what."""
+    days = marks.by_day(of_patient, zone)
+    if days:
+        told = [as_text(said, longest=120) for said in days.values()]
+        yield _marks_trace([str(day) for day in days], told)
+
+
+def _marks_trace(x: list[str], told: list[str]) -> dict[str, Any]:
+    return {
+        "type": "scatter",
+        "mode": "markers",
+        "name": "marks of the patient",
+        "x": x,
+        "y": [0] * len(x),
+        "yaxis": "y4",
+        "text": told,
+        "marker": {"color": "--ink", "size": 9, "symbol": "triangle-down"},
+        "cliponaxis": False,
+        "hovertemplate": "%{text}<extra>marked</extra>",
+    }
+
+
+def _marks_axis(domain: tuple[float, float]) -> dict[str, Any]:
+    """A band without a scale, in which only the place along the days tells something."""
+    return {"domain": list(domain), "range": [-1, 1], "visible": False, "fixedrange": True}
+
+
 def _span(wear_days: pl.DataFrame, therapies: pl.DataFrame) -> tuple[datetime, datetime]:
     known = [*wear_days["local_day"], *therapies["therapy_day"].drop_nulls()]
     half_day = timedelta(hours=18)
@@ -177,9 +207,9 @@ def _therapy_notes(therapies: pl.DataFrame) -> list[dict[str, Any]]:
     ]  # fmt: skip
 
 
-def as_text(words_of_others: str) -> str:
-    """Plotly reads a small markup in its texts; text from a register must stay text, and short."""
-    short = words_of_others if len(words_of_others) <= 40 else words_of_others[:39] + "…"
+def as_text(words_of_others: str, longest: int = 40) -> str:
+    """Plotly reads a small markup in its texts; text from a register or a device must stay text, and short."""
+    short = words_of_others if len(words_of_others) <= longest else words_of_others[: longest - 1] + "…"
     return short.replace("&", "&amp;").replace("<", "&lt;").replace(">", "&gt;")
 
 
@@ -216,10 +246,10 @@ def clock_map(local_hours: pl.DataFrame) -> Figure:
     return Figure(data=[trace], layout=drawn_on)
 
 
-def wearing(hours: pl.DataFrame, zone: str) -> Figure:
-    """Hour by hour through one recording: minutes that could be analysed, ectopic beats, heart rate."""
+def wearing(hours: pl.DataFrame, of_patient: pl.DataFrame, zone: str) -> Figure:
+    """Hour by hour through one recording: minutes that could be analysed, ectopic beats, heart rate, patient's marks."""
     hours = hours.upsample("hour_utc", every="1h")  # an hour without samples is a gap, not a step
-    x = _on_the_clock(hours["hour_utc"], zone)
+    x = _on_the_clock(hours["hour_utc"], zone, hours["hour_utc"][0])
     middle = 30 * 60 * 1000
     minutes = [
         ("recorded_s", "recorded", "--gap"),
@@ -237,12 +267,16 @@ def wearing(hours: pl.DataFrame, zone: str) -> Figure:
          "yaxis": "y3", "line": {"color": "--rate", "width": 1.5, "shape": "hv"}, "connectgaps": False,
          "hovertemplate": "%{y:.0f} /min<extra></extra>"}
     )  # fmt: skip
+    if of_patient.height:
+        told = [as_text(text) for text in of_patient["mark_text"]]
+        data.append(_marks_trace(_on_the_clock(of_patient["mark_utc"], zone, hours["hour_utc"][0]), told))
     drawn_on = layout(
         480,
         xaxis={**GREY, "type": "date", "anchor": "y3", "hoverformat": "%a %-d %b, %H h", "tickformat": "%H h\n%-d %b"},
         yaxis=axis("beats in the hour", (0.54, 1.0)),
         yaxis2=axis("minutes", (0.27, 0.47), range=[0, 61], tickvals=[0, 30, 60]),
         yaxis3=axis("rate, /min", (0.0, 0.20), rangemode="normal", nticks=4),
+        yaxis4=_marks_axis((0.485, 0.515)),
         barmode="overlay",
         hovermode="x unified",
     )
@@ -263,9 +297,9 @@ def _hourly_beats(hours: pl.DataFrame, x: list[str], beat_class: str, offset: in
     }
 
 
-def _on_the_clock(instants_utc: pl.Series, zone: str) -> list[str]:
-    """Return instants on the local clock of the first one; the clock is not turned when daylight saving changes."""
-    first = words.local_time(instants_utc[0], zone)
+def _on_the_clock(instants_utc: pl.Series, zone: str, first_utc: datetime) -> list[str]:
+    """Return instants on the local clock of the first hour; the clock is not turned when daylight saving changes."""
+    first = words.local_time(first_utc, zone)
     offset = first.utcoffset() or ZoneInfo(zone).utcoffset(None) or timedelta(0)
     return [str(instant + offset) for instant in instants_utc]
 

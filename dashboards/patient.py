@@ -7,7 +7,7 @@ from typing import Any
 
 import polars as pl
 
-from dashboards import addresses, charts, strips, words
+from dashboards import addresses, charts, marks, strips, words
 from dashboards.tables import Tables
 
 FAMILIES_SHOWN = 5  # of each recording
@@ -35,6 +35,7 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
         "finding": range_words(measured),
         "timeline": charts.timeline(rows) if wear_days.height else None,
         "clock_map": charts.clock_map(rows["local_hours"]) if measured.height else None,
+        "marks": rows["marks"].sort("mark_utc", "mark_text").rows(named=True),
         "visits": _visits(rows["visits"], rows["visit_changes"]),
         "level_shifts": rows["level_shifts"].sort("local_day").rows(named=True),
         "densest": _densest(rows["local_hours"]),
@@ -150,16 +151,17 @@ def _strips(tables: Tables, recordings: pl.DataFrame) -> Iterable[dict[str, Any]
     for recording_id in ends:
         kept = tables.large("strips", recording_id).filter(pl.col("beat_class").is_in(ECTOPIC)).head(STRIPS_SHOWN)
         zone = recordings.row(by_predicate=pl.col("recording_id") == recording_id, named=True)["zone"]
-        drawn = draw_rows(kept, zone)
+        drawn = draw_rows(kept, zone, tables.of_recording("marks", recording_id))
         calmest = min(drawn, key=lambda row: row["drawing"].height, default=None)
         yield from (row | {"on_paper": row is calmest} for row in drawn)
 
 
-def draw_rows(rows: pl.DataFrame, zone: str) -> list[dict[str, Any]]:
-    """Return strip rows with their drawing and their local time."""
+def draw_rows(rows: pl.DataFrame, zone: str, of_patient: pl.DataFrame) -> list[dict[str, Any]]:
+    """Return strip rows with their drawing, their local time and the patient's marks within them."""
     drawings = strips.draw_strips(rows)
+    inside = [marks.within(row, of_patient, zone) for row in rows.iter_rows(named=True)]
     kept = rows.drop("samples_mv", "beat_samples", "beat_classes").rows(named=True)
     return [
-        row | {"drawing": drawing, "zone": zone, "page": addresses.recording_page(row["recording_id"])}
-        for row, drawing in zip(kept, drawings, strict=True)
+        row | {"drawing": drawing, "zone": zone, "page": addresses.recording_page(row["recording_id"]), "marks": found}
+        for row, drawing, found in zip(kept, drawings, inside, strict=True)
     ]

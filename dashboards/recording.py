@@ -23,7 +23,8 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
     families = tables.of_recording("families", recording_id).sort("beat_count", "family", descending=[True, False])
     episodes = tables.large("episodes", recording_id)
     windows = tables.large("quality_windows", recording_id).sort("duration_s", "start_utc", descending=[True, False])
-    drawn = draw_rows(tables.large("strips", recording_id), zone)
+    marks = tables.of_recording("marks", recording_id).sort("mark_utc", "mark_text")
+    drawn = draw_rows(tables.large("strips", recording_id), zone, marks)
     return {
         "recording": recording,
         "patient_page": addresses.patient_page(recording["patient_code"]) if recording["patient_code"] else None,
@@ -32,7 +33,8 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
         "findings": _findings(recording, tables.of_recording("findings", recording_id)),
         "segments": tables.of_recording("segments", recording_id).sort("segment").rows(named=True),
         "hours": hours.rows(named=True),
-        "wearing": charts.wearing(hours, zone) if hours.height else None,
+        "wearing": charts.wearing(hours, marks, zone) if hours.height else None,
+        "marks": marks.rows(named=True),
         "families": draw_families(families.head(FAMILIES_SHOWN)),
         "families_count": families.height,
         "episode_counts": _counts(episodes, "episode_kind"),

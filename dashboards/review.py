@@ -26,7 +26,8 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
     recording_id = recording["recording_id"]
     sheet = tables.of_recording("review_sheet", recording_id).sort("review_rank")
     shapes = {row["family"]: row for row in draw_families(tables.of_recording("families", recording_id))}
-    drawn = draw_rows(tables.large("strips", recording_id), recording["zone"])
+    marks = tables.of_recording("marks", recording_id)
+    drawn = draw_rows(tables.large("strips", recording_id), recording["zone"], marks)
     items = [row | {"shape": shapes[row["family"]]} for row in sheet.head(FAMILIES_SHOWN).rows(named=True)]
     return {
         "recording": recording,

@@ -51,9 +51,9 @@ class Tables:
 
     BY_PATIENT = (
         "patients", "recordings", "wear_days", "local_hours", "therapies", "periods", "changes", "rate_effects",
-        "level_shifts", "attention", "visits", "visit_changes",
+        "level_shifts", "attention", "visits", "visit_changes", "marks",
     )  # fmt: skip
-    BY_RECORDING = ("recordings", "segments", "families", "hours", "findings", "review_sheet", "reviewed")
+    BY_RECORDING = ("recordings", "segments", "families", "hours", "findings", "marks", "review_sheet", "reviewed")
     LARGE = ("strips", "episodes", "quality_windows")
 
     def __init__(self, published: PublishedTables) -> None:

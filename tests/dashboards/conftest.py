@@ -260,6 +260,15 @@ def invented_rows(patients: int = 4) -> dict[str, list[dict[str, Any]]]:
     rows["level_shifts"].append(
         {"patient_code": "SKERRY-0001", "local_day": date(2026, 3, 20), "level_before": 12.5, "level_after": 1.9}
     )
+    rows["marks"] += [
+        {"recording_id": "CN0000-20260302", "patient_code": "SKERRY-0001", "mark_utc": datetime.fromisoformat(at),
+         "mark_text": text}
+        for at, text in (
+            ("2026-03-02T12:00:04", "fluttering"),  # four seconds into the first strip
+            ("2026-03-02T18:00:00", ""),
+            ("2026-03-04T00:30:00", "dizzy on the stairs"),  # still the day before on the Azores
+        )
+    ]  # fmt: skip
     rows["rate_effects"].append(
         {"patient_code": "SKERRY-0001", "therapy_id": "T000", "dependence": "follows_rate",
          "reason": "Ectopy rises with the heart rate in the baseline hours (r 0.60)."}

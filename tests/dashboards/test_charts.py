@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 import json
-from datetime import date
+from datetime import date, datetime
 
 import plotly.graph_objects
 import polars as pl
 import pytest
 
 from dashboards import charts, cohort_charts
+from dashboards.marks import by_day
 from dashboards.tables import Tables
 
 CODE = "SKERRY-0001"
@@ -38,7 +39,11 @@ def test_plotly_accepts_the_figures(tables, timeline):
     """Every property of the figures is one that plotly knows, with a value it allows."""
     hours = tables.of_recording("hours", "CN0000-20260302")
     changes = tables.whole("changes").filter(pl.col("measure") == "v_burden_pct").sort("change_pct", nulls_last=True)
-    figures = [timeline, charts.wearing(hours, "Atlantic/Azores"), cohort_charts.changes_of_all(changes)]
+    figures = [
+        timeline,
+        charts.wearing(hours, tables.of_recording("marks", "CN0000-20260302"), "Atlantic/Azores"),
+        cohort_charts.changes_of_all(changes),
+    ]
     for figure in (*figures, cohort_charts.responders(tables.whole("cohort"))):
         # Source: plotly's own schema, checked by its graph objects
         plotly.graph_objects.Figure(coloured(figure))
@@ -65,6 +70,24 @@ def test_a_change_of_level_is_marked_on_its_day(timeline):
     """A day on which the burden moved, found from the days alone, is a dashed line in the burden panel."""
     (mark,) = [shape for shape in timeline["layout"]["shapes"] if shape.get("yref") == "y domain"]
     assert (mark["x0"], mark["line"]["dash"]) == ("2026-03-20", "dash")
+
+
+def test_marks_of_the_patient_stand_on_their_local_day(timeline):
+    """Each local day with marks is one place on the day axis, with clock times and texts as published."""
+    (marked,) = [trace for trace in timeline["data"] if trace["name"] == "marks of the patient"]
+    # Source: tz database, the Azores are an hour behind UTC in winter: 00:30 UTC on 4 March is 23:30 on the 3rd
+    assert dict(zip(marked["x"], marked["text"], strict=True)) == {
+        "2026-03-02": "11:00 fluttering; 17:00",
+        "2026-03-03": "23:30 dizzy on the stairs",
+    }
+
+
+def test_a_day_of_many_marks_names_the_first_three():
+    """However often a button is pressed, the text of a day stays short and says how much it leaves out."""
+    pressed = pl.DataFrame(
+        {"mark_utc": [datetime.fromisoformat(f"2026-03-02T09:0{at}") for at in range(5)], "mark_text": [""] * 5}
+    )
+    assert list(by_day(pressed, "UTC").values()) == ["09:00; 09:01; 09:02; 2 more"]
 
 
 def test_every_patient_stands_before_the_band_that_chance_explains(tables):
@@ -99,5 +122,5 @@ def test_hours_run_on_across_a_clock_change():
         pl.datetime(2026, 10, 24, 22), pl.datetime(2026, 10, 25, 4), "1h", time_unit="us", eager=True
     )
     # Source: tz database, Europe/Berlin leaves summer time on 25 October 2026 at 01:00 UTC
-    shown = charts._on_the_clock(hours, "Europe/Berlin")
+    shown = charts._on_the_clock(hours, "Europe/Berlin", hours[0])
     assert shown[0] == "2026-10-25 00:00:00" and len(set(shown)) == len(shown) == 7

@@ -160,6 +160,7 @@ def test_hostile_text_is_shown_as_text(rows, publish, tmp_path):
     rows["deliveries"][1] |= {"file_name": HOSTILE, "reason": HOSTILE}
     rows["changes"][0]["reason"] = HOSTILE
     rows["strips"][0]["strip_reason"] = HOSTILE
+    rows["marks"][0]["mark_text"] = HOSTILE
     rows["data_dictionary"][0]["meaning"] = HOSTILE
     site = tmp_path / "site"
     build_site(publish(rows), site, programme_name=HOSTILE, version="0.1.0")
@@ -241,6 +242,13 @@ def test_a_recurrence_is_the_headline(rows, publish, tmp_path):
     text = pages_of(build(publish(rows), tmp_path / "site"))["patients/SKERRY-0001.html"].text
     said = "Ventricular burden fell beyond chance at first and is back since 22 Mar 2026 after start of bisoprolol 5 mg"
     assert said in text
+
+
+def test_a_mark_of_the_patient_stands_beside_the_strip_that_holds_it(site):
+    """Only the strip in which the patient pressed the button says so, with the local time and the text."""
+    for address in ("patients/SKERRY-0001.html", "recordings/CN0000-20260302.html", "review/CN0000-20260302.html"):
+        assert pages_of(site)[address].text.count("marked by the patient at 11:00:04: fluttering") == 1, address
+    assert "marked by the patient" not in pages_of(site)["recordings/CN0001-20260320.html"].text
 
 
 def test_planned_visits_stand_on_the_pages(site):
