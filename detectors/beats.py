@@ -34,11 +34,11 @@ class Found(NamedTuple):
 
     def keep(self, chosen: NDArray[np.bool_]) -> Found:
         """The chosen beats only."""
-        return Found(*(column[chosen] for column in self))
+        return Found._make(column[chosen] for column in self)
 
 
 def join(parts: list[Found]) -> Found:
-    """One table of all batches; the parts are given up column by column, so that memory does not double."""
+    """One table of all batches."""
     kinds = ("int16", "float64", "float32", "int16", "int16", "float32", "float32", "float32")
     if not parts:
         return Found(*(np.empty(0, dtype=kind) for kind in kinds))

@@ -8,13 +8,15 @@ maxima on both sides instead of a running estimate, so that one huge beat or a b
 
 from __future__ import annotations
 
-from typing import NamedTuple
+from typing import NamedTuple, TypeVar
 
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
 from detectors.signal import WORKING_FS_HZ
+
+_Real = TypeVar("_Real", np.int64, np.float32)
 
 LAG = 4  # working samples, 32 ms: the second difference passes 5 to 25 Hz and nothing of drift
 REACH = LAG + 1  # working samples that the second difference of the smoothed signal needs on either side
@@ -159,7 +161,7 @@ def _without_weaker_neighbours(candidates: Peaks, beat: NDArray[np.int64]) -> ND
 
 
 def _is_t_wave(
-    after_s: NDArray[np.float64], energy: NDArray[np.float32], sharpness: NDArray[np.float32]
+    after_s: NDArray[np.floating], energy: NDArray[np.float32], sharpness: NDArray[np.float32]
 ) -> NDArray[np.bool_]:
     """T waves among candidates `after_s` after a QRS, with their energy and sharpness over those of the QRS."""
     blunt = (after_s < T_WAVE_S) & (sharpness < T_WAVE_SHARPNESS) & (energy < T_WAVE_ENERGY)
@@ -206,7 +208,7 @@ def _usual_t_wave(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[np.floa
     return _local_median(np.maximum(strongest / candidates.energy[beat], LEAST_T)[:-1], gap)
 
 
-def _local_median(values: NDArray[np.generic], gap: NDArray[np.int64]) -> NDArray[np.generic]:
+def _local_median(values: NDArray[_Real], gap: NDArray[np.int64]) -> NDArray[_Real]:
     """Median of each value and the two on either side, not across a gap of FAR_S: reach in time stays bounded."""
     index = np.arange(gap.size)
     is_far = gap > FAR_S * WORKING_FS_HZ / CELL

@@ -74,10 +74,11 @@ def _usual(
     index = np.arange(coarse.size + 1)
     coarse = np.interp(index, index[:-1][is_known], coarse[is_known]).astype(np.float32)
     part = np.arange(USUAL_STEP_BEATS, dtype=np.float32) / USUAL_STEP_BEATS
-    return (coarse[:-1, None] + np.diff(coarse)[:, None] * part).ravel()[: before_ms.size]
+    between = coarse[:-1, None] + np.diff(coarse)[:, None] * part
+    return between.ravel()[: before_ms.size].astype(np.float32, copy=False)
 
 
-def _median_of_known(rr_ms: NDArray[np.float32]) -> NDArray[np.float32]:
+def _median_of_known(rr_ms: NDArray[np.floating]) -> NDArray[np.float32]:
     """Lower median of the known values around every USUAL_STEP_BEATS-th one, NaN where none is known."""
     reach, step = USUAL_REACH_BEATS, USUAL_STEP_BEATS
     edge = np.full(reach, np.nan, dtype=np.float32)
