@@ -31,6 +31,7 @@ from flows.nightly import Work
 from flows.notify import notify
 from flows.progress import Reporter, Silent
 from flows.sentences import is_sentence, sentence
+from flows.workers import WorkersAway
 from warehouse.published import Published
 
 NIGHT_S = 12 * 3600
@@ -85,8 +86,8 @@ class _RunLog(Silent):
 
 
 def _can_heal(task: Any, run: Any, state: State) -> bool:
-    """A busy folder, a full disk or a share that is away can heal; wrong settings or a failed check cannot."""
-    return isinstance(state.result(raise_on_failure=False), (OSError, FolderBusy))
+    """A busy folder, a full disk, a share or workers that are away can heal; wrong settings or a failed check cannot."""
+    return isinstance(state.result(raise_on_failure=False), (OSError, FolderBusy, WorkersAway))
 
 
 @task(

@@ -26,6 +26,10 @@ class WorkersError(RuntimeError):
     """Recordings cannot be analysed on the Dask scheduler; what was committed before stays, the next run goes on."""
 
 
+class WorkersAway(WorkersError):
+    """Scheduler or workers are not there at the moment: the only trouble with them that can heal by itself."""
+
+
 def analyse_on_workers(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
     """Analyse recordings on the scheduler that the settings name; yields loads to commit as they are done.
 
@@ -67,7 +71,7 @@ def _connected(address: str) -> Client:
     try:
         return Client(address, timeout=CONNECT_S)
     except (OSError, ValueError):
-        raise WorkersError(
+        raise WorkersAway(
             f"no Dask scheduler answers at {address} within {CONNECT_S:g} s; start `dask scheduler` there, "
             "or empty [workers] scheduler to analyse on this host"
         ) from None
@@ -80,8 +84,8 @@ def _await_workers(client: Client, address: str) -> None:
         raise _without_workers(address) from None
 
 
-def _without_workers(address: str) -> WorkersError:
-    return WorkersError(f"the scheduler at {address} has had no worker for {WORKERS_AWAY_S:g} s; start `dask worker`")
+def _without_workers(address: str) -> WorkersAway:
+    return WorkersAway(f"the scheduler at {address} has had no worker for {WORKERS_AWAY_S:g} s; start `dask worker`")
 
 
 def _as_done(client: Client, running: Sequence[Future], address: str) -> Iterator[Future]:
@@ -107,7 +111,7 @@ def _loads(future: Future, item: Work, address: str) -> dict:
     try:
         loads = future.result()
     except CancelledError:
-        raise WorkersError(f"the connection to the Dask scheduler at {address} was lost; run again") from None
+        raise WorkersAway(f"the connection to the Dask scheduler at {address} was lost; run again") from None
     except KilledWorker:
         raise WorkersError(
             f"{item.recording_id} ended every worker that tried it, out of memory perhaps; give the workers more, "

@@ -21,7 +21,7 @@ from flows.nightly import Work, run
 from flows.programme import make_folder
 from flows.progress import Silent
 from flows.settings import SettingsError, load
-from flows.workers import WorkersError
+from flows.workers import WorkersAway, WorkersError
 
 ROOT = Path(__file__).parents[2]
 DEVICES = ("SRL-1", "SRL-2", "SRL-3", "SRL-4")
@@ -167,7 +167,7 @@ def test_a_lost_scheduler_ends_the_run_and_the_next_completes(coast, expected, c
         if line.startswith("  analysed"):
             cluster.stop()
 
-    with pytest.raises(WorkersError, match=r"connection to the Dask scheduler at tcp://.* was lost; run again"):
+    with pytest.raises(WorkersAway, match=r"connection to the Dask scheduler at tcp://.* was lost; run again"):
         run(coast, reporter=Say(kill_all))
     assert not (coast / "published").exists()
     use_scheduler(coast, "")
@@ -182,7 +182,7 @@ def test_an_address_without_scheduler_is_one_sentence(coast, monkeypatch):
         free.bind(("127.0.0.1", 0))
         address = f"tcp://127.0.0.1:{free.getsockname()[1]}"
     use_scheduler(coast, address)
-    with pytest.raises(WorkersError, match=f"no Dask scheduler answers at {address} .* start `dask scheduler`"):
+    with pytest.raises(WorkersAway, match=f"no Dask scheduler answers at {address} .* start `dask scheduler`"):
         run(coast)
     assert not (coast / "published").exists()
 
@@ -195,7 +195,7 @@ def test_a_scheduler_without_workers_is_one_sentence(coast, cluster, monkeypatch
     for process in cluster.workers:
         process.kill()
         process.wait(30)
-    with pytest.raises(WorkersError, match=r"has had no worker for 2 s; start `dask worker`"):
+    with pytest.raises(WorkersAway, match=r"has had no worker for 2 s; start `dask worker`"):
         run(coast)
 
 
@@ -242,3 +242,13 @@ def test_an_address_must_be_one(coast):
     use_scheduler(coast, "host:8786")
     with pytest.raises(SettingsError, match=r"scheduler = 'host:8786'; expected an address such as tcp://host:8786"):
         load(coast / "programme.toml")
+
+
+@pytest.mark.parametrize(("problem", "heals"), [(WorkersAway("lost"), True), (WorkersError("no extra"), False)])
+def test_the_flow_tries_again_when_workers_were_away(problem, heals):
+    """The scheduled flow repeats a run whose scheduler was away, and none that somebody must mend."""
+    from prefect.states import Failed
+
+    from flows.schedule import _can_heal
+
+    assert _can_heal(None, None, Failed(data=problem)) is heals
