@@ -78,3 +78,34 @@ def test_the_deployment_file_names_a_flow_that_exists():
     assert deployment["concurrency_limit"] == 1
     assert deployment["schedules"][0]["timezone"]
     assert deployment["triggers"][0]["expect"] == ["burdenline.deliveries.arrived"]
+
+
+def test_no_more_recordings_at_a_time_than_the_settings_allow(monkeypatch):
+    """A night of many recordings starts a task only when one of the allowed number before it has ended."""
+    from flows import schedule
+    from flows.nightly import Work
+    from flows.progress import SILENT
+    from flows.settings import Settings, WorkersSettings
+
+    begun, ended, at_once = [], [], []
+
+    class Future:
+        def __init__(self, item):
+            self.item = item
+
+        def result(self):
+            ended.append(self.item.recording_id)
+            return {"of": self.item.recording_id}
+
+    class Task:
+        def submit(self, item):
+            begun.append(item.recording_id)
+            at_once.append(len(begun) - len(ended))
+            return Future(item)
+
+    monkeypatch.setattr(schedule, "analyse_recording_task", Task())
+    settings = Settings(workers=WorkersSettings(processes=3))
+    names = [f"SRL-{n}_20260301" for n in range(10)]
+    loads = list(schedule.analyse_as_tasks([Work(Path("coast"), name, settings) for name in names], SILENT))
+    assert max(at_once) == 3
+    assert [each["of"] for each in loads] == names
