@@ -43,6 +43,33 @@ class QuarterHours(NamedTuple):
     irregular_s: NDArray[np.float64]
 
 
+class FamilyQuarters(NamedTuple):
+    """One entry per shape family and quarter of a UTC hour in which it has beats. Arrays have shape (n_entries,)."""
+
+    quarter_us: NDArray[np.int64]  # start of the quarter, microseconds since 1970 UTC
+    family: NDArray[np.int16]  # -1 for beats of no family
+    beat_count: NDArray[np.int64]  # analysable beats
+
+
+def family_quarters(analysis: Analysis, segment_start_us: NDArray[np.int64]) -> FamilyQuarters:
+    """Count the analysable beats of every family in every quarter of a UTC hour, by quarter and family.
+
+    `segment_start_us` as for `quarter_hours`.
+    """
+    good = analysis.beats.is_analysable
+    family, n_columns = analysis.beats.family[good], len(analysis.families.beat_count) + 1
+    quarter = _Clock(segment_start_us, analysis.fs_hz).quarter(
+        analysis.beats.segment[good], analysis.beats.sample[good]
+    )
+    quarters = np.unique(quarter)
+    cell = np.searchsorted(quarters, quarter) * n_columns + family + 1
+    count = np.bincount(cell, minlength=len(quarters) * n_columns)
+    held = np.flatnonzero(count)
+    return FamilyQuarters(
+        quarters[held // n_columns] * QUARTER_US, (held % n_columns - 1).astype(np.int16), count[held].astype(np.int64)
+    )
+
+
 def quarter_hours(analysis: Analysis, segment_start_us: NDArray[np.int64]) -> QuarterHours:
     """Sum beats, episodes and quality of one recording over quarters of UTC hours.
 

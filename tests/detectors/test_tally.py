@@ -4,7 +4,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from detectors.results import Analysis, Beats, Episodes, Families, QualityWindows
-from detectors.tally import QUARTER_US, quarter_hours
+from detectors.tally import QUARTER_US, family_quarters, quarter_hours
 
 FS_HZ = 250.0
 
@@ -100,3 +100,17 @@ def test_recorded_seconds_add_up_wherever_the_recording_starts(start_us, length_
     assert result.recorded_s.sum() == pytest.approx(int(length_s * FS_HZ) / FS_HZ, abs=1e-4)
     assert (result.recorded_s <= 900.0).all()
     assert (result.quarter_us % QUARTER_US == 0).all()
+
+
+def test_family_beats_are_counted_by_quarter():
+    """Each family's analysable beats are counted in the quarter they lie in; beats of no family count as -1."""
+    found = analysis([100, 200, 950, 960, 970, 980], bad=[(965, 975, "noise")], length_s=1800)
+    family = np.array([0, -1, 1, 0, 1, 0], np.int16)
+    families = found.families._replace(beat_count=np.array([3, 2]))
+    found = found._replace(beats=found.beats._replace(family=family), families=families)
+    rows = family_quarters(found, start(QUARTER_US))
+    quarters = (rows.quarter_us // QUARTER_US).tolist()
+    assert list(zip(quarters, rows.family.tolist(), rows.beat_count.tolist(), strict=True)) == [
+        (1, -1, 1), (1, 0, 1), (2, 0, 2), (2, 1, 1),
+    ]  # fmt: skip
+    assert rows.beat_count.sum() == quarter_hours(found, start(QUARTER_US)).all_beats.sum()
