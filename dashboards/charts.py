@@ -54,7 +54,10 @@ def timeline(rows: Mapping[str, pl.DataFrame]) -> Figure:
     """
     wear_days, therapies = rows["wear_days"].sort("local_day"), rows["therapies"]
     burden = [_burden_days(wear_days, valid=True), _burden_days(wear_days, valid=False)]
-    data = [trace for trace in burden if trace["x"]] + [*_wear_bars(wear_days), _rate_days(wear_days)]
+    data = [trace for trace in (_day_intervals(wear_days), *burden) if trace["x"]] + [
+        *_wear_bars(wear_days),
+        _rate_days(wear_days),
+    ]
     data += _mark_days(rows["marks"], rows["patients"]["zone"][0])
     first, last = _span(wear_days, therapies)
     drawn_on = layout(
@@ -84,10 +87,32 @@ def _burden_days(wear_days: pl.DataFrame, *, valid: bool) -> dict[str, Any]:
         "name": "burden, valid day" if valid else "burden, too few hours",
         "x": _days(rows["local_day"]),
         "y": values(rows["v_burden_pct"], 3),
-        "customdata": rows.select("v_beats", "all_beats", pl.col("analysable_h").round(1)).rows(),
-        "hovertemplate": "%{y:.2f} %: %{customdata[0]:,} V of %{customdata[1]:,} beats in %{customdata[2]} h"
+        "customdata": rows.select("v_beats", "all_beats", pl.col("analysable_h").round(1), _told_interval()).rows(),
+        "hovertemplate": "%{y:.2f} %%{customdata[3]}: %{customdata[0]:,} V of %{customdata[1]:,} beats in %{customdata[2]} h"
         "<extra></extra>",
         "marker": marker | {"symbol": "circle"},
+        "cliponaxis": False,
+    }
+
+
+def _told_interval() -> pl.Expr:
+    """The day's interval as hovering tells it; nothing where there is none."""
+    ends = (pl.col(f"v_burden_{end}_pct").round(2).cast(pl.String) for end in ("low", "high"))
+    return pl.format(" ({} to {})", *ends).fill_null("").alias("interval")
+
+
+def _day_intervals(wear_days: pl.DataFrame) -> dict[str, Any]:
+    """One thin bar per day: a line from the low to the high end, with a break after each."""
+    known = wear_days.drop_nulls("v_burden_low_pct")
+    ends = zip(values(known["v_burden_low_pct"], 3), values(known["v_burden_high_pct"], 3), strict=True)
+    return {
+        "type": "scatter",
+        "mode": "lines",
+        "name": "95 % interval within the day",
+        "x": [place for day in _days(known["local_day"]) for place in (day, day, None)],
+        "y": [place for low, high in ends for place in (low, high, None)],
+        "line": {"color": "--v", "width": 1.2},
+        "hoverinfo": "skip",
         "cliponaxis": False,
     }
 

@@ -173,6 +173,13 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("trigeminy_s", "DOUBLE", "s", "Seconds in ventricular trigeminy."),
     ("irregular_s", "DOUBLE", "s", "Seconds of irregular rhythm that looks like atrial fibrillation (context only)."),
     ("v_burden_pct", "DOUBLE", "%", "Ventricular ectopic beats per 100 analysable beats (fusion beats not counted)."),
+    (
+        "v_burden_low_pct",
+        "DOUBLE",
+        "%",
+        "Lower end of the 95 % interval of the day's burden from the scatter of its clock hours, not of other days.",
+    ),
+    ("v_burden_high_pct", "DOUBLE", "%", "Upper end of that interval; NULL with beats in fewer than 3 clock hours."),
     ("s_burden_pct", "DOUBLE", "%", "Supraventricular ectopic beats per 100 analysable beats."),
     ("v_per_h", "DOUBLE", "1/h", "Ventricular ectopic beats per analysable hour."),
     ("clock_hours_covered", "SMALLINT", "h", "Clock hours with at least 15 analysable minutes."),
@@ -551,7 +558,8 @@ PUBLISHED: dict[str, Table] = _tables(
     Table(
         "wear_days", "one row per patient and local calendar day with wear", ("patient_code", "local_day"),
         ("patient_code", "local_day", "day_h", "recorded_h", "worn_h", "analysable_h", "clock_hours_covered",
-         "is_valid_day", *_COUNTS, "decided_beats", "v_burden_pct", "s_burden_pct", "v_per_h", "mean_rate_bpm", *_RHYTHM),
+         "is_valid_day", *_COUNTS, "decided_beats", "v_burden_pct", "v_burden_low_pct", "v_burden_high_pct",
+         "s_burden_pct", "v_per_h", "mean_rate_bpm", *_RHYTHM),
     ),
     Table(
         "therapies", "one row per therapy event of the register", ("therapy_id",),

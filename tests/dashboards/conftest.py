@@ -143,8 +143,9 @@ def _add_recording(rows: Any, rng: random.Random, code: str, recording_id: str, 
         counts = day_counts(rng, burden * rng.uniform(0.75, 1.3), hours)
         total, v_total = total + counts["all_beats"], v_total + counts["v_beats"]
         day = {"patient_code": code, "local_day": local_day}
+        interval = {"v_burden_low_pct": 0.8 * counts["v_burden_pct"], "v_burden_high_pct": 1.3 * counts["v_burden_pct"]}
         rows["wear_days"].append(
-            day | counts | {"day_h": 24.0, "recorded_h": hours + 1, "worn_h": hours + 0.7, "analysable_h": hours,
+            day | counts | interval | {"day_h": 24.0, "recorded_h": hours + 1, "worn_h": hours + 0.7, "analysable_h": hours,
                             "clock_hours_covered": min(24, int(hours)), "is_valid_day": hours >= 10}
         )  # fmt: skip
         for hour in range(24 - int(hours), 24):

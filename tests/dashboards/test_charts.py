@@ -60,6 +60,17 @@ def test_days_with_too_few_hours_are_drawn_apart(timeline, tables):
     assert len(valid["x"]) + len(short["x"]) == days.height
 
 
+def test_a_thin_bar_spans_the_interval_of_each_day(timeline, tables):
+    """Each day with an interval has one bar from its lower to its upper end; a day without one has none."""
+    days = tables.of_patient("wear_days", CODE)
+    (bars,) = [trace for trace in timeline["data"] if trace["name"] == "95 % interval within the day"]
+    drawn = list(zip(bars["x"][::3], bars["y"][::3], bars["y"][1::3], strict=True))
+    assert drawn[0] == ("2026-03-02", *days.select(pl.col("v_burden_low_pct", "v_burden_high_pct").round(3)).row(0))
+    assert len(drawn) == days.height
+    unknown = days.with_columns(v_burden_low_pct=None, v_burden_high_pct=None).cast(days.schema)
+    assert charts._day_intervals(unknown)["x"] == []
+
+
 def test_days_without_wear_between_wears_are_shaded(timeline):
     """The thirteen days between the two wears are one shaded stretch."""
     (gap,) = [shape for shape in timeline["layout"]["shapes"] if shape.get("fillcolor") == "--gap"]

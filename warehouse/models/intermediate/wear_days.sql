@@ -44,10 +44,14 @@ SELECT
     coalesce(covered.clock_hours_covered, 0) AS clock_hours_covered,
     days.analysable_h >= settings.min_analysable_h_per_day AS is_valid_day,
     100 * days.v_beats / nullif(days.all_beats, 0) AS v_burden_pct,
+    interval.v_burden_low_pct,
+    interval.v_burden_high_pct,
     100 * days.s_beats / nullif(days.all_beats, 0) AS s_burden_pct,
     days.v_beats / nullif(days.analysable_h, 0) AS v_per_h
 FROM days
 CROSS JOIN programme.settings AS settings
 INNER JOIN programme.local_days AS calendar
     ON calendar.zone = days.patient_zone AND calendar.local_day = days.local_day
+LEFT JOIN burden_intervals AS interval
+    ON interval.patient_code = days.patient_code AND interval.local_day = days.local_day
 LEFT JOIN covered ON covered.patient_code = days.patient_code AND covered.local_day = days.local_day
