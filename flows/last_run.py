@@ -26,13 +26,16 @@ class LastRun(NamedTuple):
 
 @contextmanager
 def noted(folder: Path) -> Iterator[list[str]]:
-    """Note how the body ends; the body appends its outcome. An error that is a bug is noted by its type only."""
+    """Note how the body ends; the body appends its outcome. An error that is a bug is noted by its type only.
+
+    A process that is killed leaves no note; the last run is then the one before it.
+    """
     outcomes: list[str] = []
     try:
         yield outcomes
     except Exception as problem:
         with suppress(OSError):  # a full disk must not hide what went wrong
-            _write(folder, "not_published", sentence(problem) if is_sentence(problem) else type(problem).__name__)
+            _write(folder, "not_published", _reason(problem))
         raise
     _write(folder, outcomes[-1], "")
 
@@ -44,6 +47,13 @@ def read(folder: Path) -> LastRun | None:
         return LastRun(datetime.fromisoformat(found["finished_utc"]), found["outcome"], found["reason"])
     except (FileNotFoundError, ValueError, KeyError, TypeError):
         return None
+
+
+def _reason(problem: Exception) -> str:
+    """Why in words that monitoring may keep: an error of the system without its path, which may hold a person's name."""
+    if isinstance(problem, OSError):
+        return problem.strerror or type(problem).__name__
+    return sentence(problem) if is_sentence(problem) else type(problem).__name__
 
 
 def _write(folder: Path, outcome: str, reason: str) -> None:

@@ -109,3 +109,17 @@ def test_no_more_recordings_at_a_time_than_the_settings_allow(monkeypatch):
     loads = list(schedule.analyse_as_tasks([Work(Path("coast"), name, settings) for name in names], SILENT))
     assert max(at_once) == 3
     assert [each["of"] for each in loads] == names
+
+
+def test_a_dask_scheduler_gets_the_recordings_without_tasks(monkeypatch):
+    """With [workers] scheduler set the flow hands all recordings to it in one go and starts no task for any."""
+    from flows import schedule, workers
+    from flows.nightly import Work
+    from flows.progress import SILENT
+    from flows.settings import Settings, WorkersSettings
+
+    monkeypatch.setattr(schedule, "analyse_recording_task", None)
+    monkeypatch.setattr(workers, "analyse_on_workers", lambda work, reporter: ({"of": w.recording_id} for w in work))
+    settings = Settings(workers=WorkersSettings(scheduler="tcp://127.0.0.1:8786"))
+    work = [Work(Path("coast"), name, settings) for name in ("SRL-1_20260301", "SRL-2_20260301")]
+    assert [each["of"] for each in schedule.analyse_as_tasks(work, SILENT)] == ["SRL-1_20260301", "SRL-2_20260301"]

@@ -94,6 +94,17 @@ def test_a_run_that_failed_is_told_with_its_reason(empty):
     assert status(empty)["trouble"] == [f"the last run published nothing: {raised.value}"]
 
 
+def test_no_file_name_reaches_monitoring(empty):
+    """An error of the system is told without its path, a bug by its type alone: both may hold a person's name."""
+    for problem, told in (
+        (OSError(28, "No space left on device", "inbox/Ada Example.edf"), "No space left on device"),
+        (KeyError("Ada Example"), "KeyError"),
+    ):
+        with pytest.raises(type(problem)), last_run.noted(empty):
+            raise problem
+        assert last_run.read(empty).reason == told
+
+
 def test_the_disk_forecast_follows_the_last_month(empty, monkeypatch):
     """Free bytes over the bytes that landed per day in the last 30 days are the days until full."""
     now = datetime(2026, 6, 30, tzinfo=UTC)
