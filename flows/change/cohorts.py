@@ -8,7 +8,7 @@ import polars as pl
 
 from detectors.change import FELL, ROSE, TOO_LITTLE
 from detectors.cohort import geometric_mean_ratio, wilson_share
-from flows.change.measures import HEART_RATE
+from flows.change.measures import ECTOPY
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
 
@@ -34,7 +34,7 @@ def cohort_rows(table: str, compared: pl.DataFrame, success_limit_pct: float) ->
     """Rows of the published `table`, whose key names the groups and the limit, from comparisons with those groups."""
     groups = [name for name in PUBLISHED[table].key if name != "limit_pct"]
     limits = sorted({*LIMITS_PCT, success_limit_pct})
-    ectopy = compared.filter(pl.col("measure") != HEART_RATE.name).sort(groups)
+    ectopy = compared.filter(pl.col("measure").is_in(ECTOPY)).sort(groups)
     rows = [
         dict(zip(groups, key, strict=True)) | _counts(of_group) | _spread(of_group) | _responders(of_group, limit)
         for key, of_group in ectopy.group_by(groups, maintain_order=True)

@@ -34,6 +34,7 @@ _V, _S, _BEATS = pl.col("v_beats"), pl.col("s_beats"), pl.col("all_beats")
 HEART_RATE = Measure("mean_rate_bpm", pl.col("mean_rate_bpm") * _HOURS, _HOURS, 1, RATE_DAY_SD, None, "mean heart rate")
 V_BURDEN = Measure("v_burden_pct", _V, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular burden")
 V_PER_H = Measure("v_per_h", _V, _HOURS, 1, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular beats per hour")
+RUNS_PER_24H = Measure("runs_per_24h", pl.col("runs"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "runs per 24 h")
 MEASURES = (
     V_BURDEN,
     V_PER_H,
@@ -44,9 +45,10 @@ MEASURES = (
     Measure(
         "bigeminy_pct", pl.col("bigeminy_s"), pl.col("analysable_s"), 100, ECTOPY_DAY_SD, REPETITIVE_FORMS, "bigeminy"
     ),
-    Measure("runs_per_24h", pl.col("runs"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "runs per 24 h"),
+    RUNS_PER_24H,
 )
 
+ECTOPY = tuple(measure.name for measure in MEASURES if measure is not HEART_RATE)
 NOUNS = {measure.name: measure.noun for measure in MEASURES}
 
 

@@ -6,6 +6,7 @@ from collections.abc import Mapping
 from typing import Any
 
 from detectors import change as statistics
+from flows.change.extremes import BY_NAME, rank_reason
 from flows.change.measures import NOUNS
 from flows.settings import WearSettings
 
@@ -15,6 +16,8 @@ NOTABLE_SHARE_OF_FALL = 0.25  # of the observed fall, from which regression to t
 
 def reason(row: Mapping[str, Any], wear: WearSettings) -> str:
     """Sentences for one row of `changes`: the verdict with its figures, then what qualifies it."""
+    if row["measure"] in BY_NAME:
+        return rank_reason(row, wear)
     verdict = {
         statistics.TOO_LITTLE: _too_little,
         statistics.FELL: _beyond_chance,

@@ -12,6 +12,7 @@ from detectors.change import TOO_LITTLE
 from detectors.variability import regression_to_mean
 from flows.change.cohorts import cohort
 from flows.change.courses import compared, recurrence_days
+from flows.change.extremes import EXTREMES, compared_by_rank, excess_of_runs
 from flows.change.level_shifts import level_shifts
 from flows.change.measures import HEART_RATE, MEASURES, Measure, measured_days
 from flows.change.rate_effects import rate_effects
@@ -78,9 +79,11 @@ def _changes(
     """Baseline and after of every therapy event and measure."""
     frame = _wear(events, days, cells)
     of_measure = {measure.name: _compare(measure, cells, len(events), change, wear) for measure in MEASURES}
+    excess = excess_of_runs(cells, len(events), change)
+    by_rank = [compared_by_rank(extreme, cells, len(events), excess, wear) for extreme in EXTREMES]
     rates = of_measure[HEART_RATE.name].select(baseline_rate_bpm="baseline_value", after_rate_bpm="after_value")
-    rows = [pl.concat([frame, of_measure[measure.name], rates], how="horizontal") for measure in MEASURES]
-    result = pl.concat(rows).sort("event", maintain_order=True)
+    rows = [pl.concat([frame, of_one, rates], how="horizontal") for of_one in (*of_measure.values(), *by_rank)]
+    result = pl.concat(rows, how="diagonal_relaxed").sort("event", maintain_order=True)
     columns = PUBLISHED["changes"].columns
     reasons = pl.Series("reason", [reason(row, wear) for row in result.iter_rows(named=True)], dtype=pl.String)
     return result.with_columns(reasons).select(pl.col(name).cast(polars_type(COLUMNS[name].type)) for name in columns)

@@ -10,6 +10,7 @@ from hypothesis import strategies as st
 
 from detectors.change import VERDICTS
 from flows.change import trends
+from flows.change.extremes import EXTREMES
 from flows.change.measures import MEASURES
 from flows.settings import ChangeSettings, WearSettings
 from warehouse.schema import PUBLISHED
@@ -26,7 +27,8 @@ def hours_of(patient: str, day: date, level: float, *, clock_hours=range(24), ra
     return pl.DataFrame(
         {"patient_code": patient, "local_day": day, "clock_hour": hours, "analysable_s": 3600.0, "v_beats": v_beats,
          "s_beats": 3, "all_beats": round(60 * rate_bpm), "mean_rate_bpm": rate_bpm, "couplets": 0, "runs": 0,
-         "bigeminy_s": 0.0}
+         "longest_run_beats": 0, "fastest_run_bpm": None, "bigeminy_s": 0.0},
+        schema_overrides={"fastest_run_bpm": pl.Float32},
     )  # fmt: skip
 
 
@@ -90,7 +92,7 @@ def test_every_event_and_measure_has_a_row_with_the_published_columns():
     hours = wearing("P1", STEADY, LOWER) + wearing("P2", STEADY, [])
     table = changes(hours, {"T1": "P1", "T2": "P2", "T3": "P3"})
     assert tuple(table.columns) == PUBLISHED["changes"].columns
-    assert table.height == 3 * len(MEASURES)
+    assert table.height == 3 * (len(MEASURES) + len(EXTREMES))
     assert table.filter(pl.col("patient_code") != "P1")["verdict"].unique().to_list() == ["too_little_wear"]
     assert table["reason"].null_count() == 0
 
@@ -113,7 +115,7 @@ def test_any_wear_gives_one_row_per_event_and_measure(data):
     worn = data.draw(st.dictionaries(st.integers(-20, 40), st.tuples(some_hours, st.integers(0, 3000)), min_size=1))
     hours = [hours_of("P1", EVENT + timedelta(day), level, clock_hours=sorted(at)) for day, (at, level) in worn.items()]
     table = changes(hours, {"T1": "P1", "T2": "P9"}, change=ChangeSettings())
-    assert table.select("therapy_id", "measure").n_unique() == table.height == 2 * len(MEASURES)
+    assert table.select("therapy_id", "measure").n_unique() == table.height == 2 * (len(MEASURES) + len(EXTREMES))
     assert set(table["verdict"]) <= set(VERDICTS)
     assert (table["reason"].str.len_chars() > 20).all()
 
@@ -335,3 +337,75 @@ def test_step_and_slope_after_the_event():
     assert fit["step_ratio_low"] < 0.2 < fit["step_ratio_high"] < 0.3
     assert fit["slope_ratio_per_week_low"] < 2 < fit["slope_ratio_per_week_high"] < 2.6
     assert too_short["step_ratio"] is None
+
+
+def running(day: date, longest: int, fastest: float | None, *, clock_hours=range(24), run_at: int = 14) -> pl.DataFrame:
+    """Hours of a day of P1 with one run in the hour `run_at`."""
+    hours = hours_of("P1", day, 40, clock_hours=clock_hours)
+    has_run = (pl.col("clock_hour") == run_at) & (longest > 0)
+    return hours.with_columns(
+        runs=has_run.cast(pl.Int64),
+        longest_run_beats=pl.when(has_run).then(longest).otherwise(0).cast(pl.Int64),
+        fastest_run_bpm=pl.when(has_run).then(fastest).cast(pl.Float32),
+    )
+
+
+BEFORE, AFTER = [EVENT - timedelta(7 - i) for i in range(7)], [EVENT + timedelta(7 + i) for i in range(7)]
+
+
+def test_runs_that_get_shorter_and_slower_are_told_by_rank():
+    """The longest and fastest run have the largest value of each side and a verdict by the ranks of the days."""
+    hours = [running(day, 9 + i, 160.0 + i) for i, day in enumerate(BEFORE)]
+    hours += [running(day, 3, 130.0 - i) if i < 4 else running(day, 0, None) for i, day in enumerate(AFTER)]
+    table = changes(hours, {"T1": "P1"})
+    longest, fastest = row(table, "longest_run_beats"), row(table, "fastest_run_bpm")
+    assert (longest["baseline_value"], longest["after_value"]) == (15, 3)
+    assert (fastest["baseline_value"], fastest["after_value"]) == (166, 130)
+    assert longest["verdict"] == fastest["verdict"] == "fell_beyond_chance"
+    assert longest["ratio"] is longest["change_pct"] is longest["chance_fall_limit_pct"] is None
+    # Source: one of C(14, 7) = 3,432 arrangements, 0.029 %; of the days with runs one of C(11, 4) = 330, 0.30 %
+    assert "7 days before and 7 after" in longest["reason"] and "0.029 %" in longest["reason"]
+    assert "7 days before and 4 after" in fastest["reason"] and "0.3 %" in fastest["reason"]
+
+
+def test_more_wear_makes_a_larger_largest_value_but_no_verdict():
+    """A run that is longer only because more days were worn after is within chance."""
+    lengths = [3, 0, 4, 0, 0, 5, 3]
+    hours = [running(day, length, 140.0) for day, length in zip(BEFORE, lengths, strict=True)]
+    days = [EVENT + timedelta(7 + i) for i in range(28)]
+    hours += [running(day, length, 140.0) for day, length in zip(days, [*lengths * 3, *lengths[:6], 12], strict=True)]
+    longest = row(changes(hours, {"T1": "P1"}), "longest_run_beats")
+    assert (longest["baseline_value"], longest["after_value"], longest["verdict"]) == (5, 12, "within_chance")
+    assert "12 beats after" in longest["reason"]
+
+
+def test_runs_of_lost_nights_do_not_count_as_gone():
+    """Runs at night are within chance when no night was worn after; without any common hour there is no verdict."""
+    hours = [running(day, 8 + i, 150.0, run_at=3) for i, day in enumerate(BEFORE)]
+    lost = [running(day, 0, None, clock_hours=range(8, 24)) for day in AFTER]
+    assert row(changes(hours + lost, {"T1": "P1"}), "longest_run_beats")["verdict"] == "within_chance"
+    night = [running(day, 8, 150.0, clock_hours=range(12), run_at=3) for day in BEFORE]
+    daytime = [running(day, 0, None, clock_hours=range(12, 24)) for day in AFTER]
+    found = row(changes(night + daytime, {"T1": "P1"}), "longest_run_beats")
+    assert found["verdict"] == "too_little_wear"
+    assert "over the same clock hours" in found["reason"]
+
+
+def test_runs_that_stop_leave_no_speed_to_compare():
+    """Without a run after, the longest run fell and the fastest has no value and no verdict beyond chance."""
+    hours = [running(day, 8, 150.0 + i) for i, day in enumerate(BEFORE)] + [running(day, 0, None) for day in AFTER]
+    table = changes(hours, {"T1": "P1"})
+    longest, fastest = row(table, "longest_run_beats"), row(table, "fastest_run_bpm")
+    assert (longest["verdict"], longest["after_value"]) == ("fell_beyond_chance", 0)
+    assert (fastest["verdict"], fastest["after_value"]) == ("within_chance", None)
+    assert "cannot be compared" in fastest["reason"]
+
+
+def test_ranks_allow_for_the_time_between_the_periods():
+    """A difference between all days of two weeks five weeks apart is within chance once levels drift as published."""
+    later = [day + timedelta(28) for day in AFTER]
+    hours = [running(day, 9 + i, 160.0) for i, day in enumerate(BEFORE)] + [running(day, 3, 130.0) for day in later]
+    many = [table.with_columns(runs=pl.col("runs") * (20 + 7 * (i % 7))) for i, table in enumerate(hours)]
+    assert row(changes(many, {"T1": "P1"}), "longest_run_beats")["verdict"] == "fell_beyond_chance"
+    drifting = row(changes(many, {"T1": "P1"}, change=ChangeSettings()), "longest_run_beats")
+    assert drifting["verdict"] == "within_chance"

@@ -86,7 +86,8 @@ def test_visits_are_compared_with_the_first_and_responders_counted():
             "patient_code": f"P{i}", "local_day": START + timedelta(target + day), "clock_hour": list(range(24)),
             "analysable_s": 3600.0, "v_beats": rng.poisson(per_h * np.exp(0.2 * rng.standard_normal()), 24),
             "s_beats": 0, "all_beats": 4200, "mean_rate_bpm": 70.0, "couplets": 0, "runs": 0, "bigeminy_s": 0.0,
-        })
+            "longest_run_beats": 0, "fastest_run_bpm": None,
+        }, schema_overrides={"fastest_run_bpm": pl.Float32})
         for i in range(3) for target, per_h in level.items() for day in range(4)
     ])  # fmt: skip
     days = hours.group_by("patient_code", "local_day").agg(

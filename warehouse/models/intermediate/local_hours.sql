@@ -15,6 +15,8 @@ SELECT
     60 * sum(rr_count) / nullif(sum(rr_sum_s), 0) AS mean_rate_bpm,
     sum(couplets) AS couplets,
     sum(runs) AS runs,
+    max(longest_run_beats) AS longest_run_beats,
+    max(fastest_run_bpm) AS fastest_run_bpm,
     sum(bigeminy_s) AS bigeminy_s,
     100 * sum(v_beats) / nullif(sum(all_beats), 0) AS v_burden_pct,
     3600 * sum(v_beats) / nullif(sum(analysable_s), 0) AS v_per_h
