@@ -40,10 +40,8 @@ def analyse_on_workers(work: Sequence[Work], reporter: Reporter) -> Iterator[dic
     address = work[0].settings.workers.scheduler
     with _connected(address) as client:
         _await_workers(client, address)
-        running = {
-            client.submit(analyse_seen, item, key=f"analyse-{item.recording_id}", pure=False, retries=RETRIES): item
-            for item in work
-        }
+        # Not pure: each submission has a key of its own, so that programmes that share a scheduler stay apart.
+        running = {client.submit(analyse_seen, item, pure=False, retries=RETRIES): item for item in work}
         for number, future in enumerate(_as_done(client, list(running), address), start=1):
             item = running[future]
             yield _loads(future, item, address)

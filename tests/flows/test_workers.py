@@ -158,6 +158,22 @@ def test_a_killed_worker_loses_and_doubles_nothing(coast, expected, cluster):
 
 
 @needs_dask
+def test_two_programmes_share_a_scheduler(coast, fresh, expected, cluster, tmp_path):
+    """Recordings of the same name in two programmes that use one scheduler at once stay apart."""
+    other = copy(fresh, tmp_path / "other")
+    for folder in (coast, other):
+        use_scheduler(folder, cluster.address)
+    tables_of_other = []
+
+    def run_other(line):
+        if line.endswith("(1 of 4)"):
+            tables_of_other.append(tables_after_run(other))
+
+    assert tables_after_run(coast, reporter=Say(run_other)) == expected
+    assert tables_of_other == [expected]
+
+
+@needs_dask
 def test_a_lost_scheduler_ends_the_run_and_the_next_completes(coast, expected, cluster, monkeypatch):
     """A scheduler lost half-way ends the run with one sentence; the next run, on this host, publishes everything."""
     monkeypatch.setattr(workers, "CONNECT_S", 3.0)
