@@ -613,6 +613,12 @@ PUBLISHED: dict[str, Table] = _tables(
          "success_probability_pct", "verdict", "reason"),
     ),
     Table(
+        "rate_by_clock_hour", "one row per patient, therapy event and hour of the day with a heart rate",
+        ("patient_code", "therapy_id", "clock_hour"),
+        ("patient_code", "therapy_id", "clock_hour", "baseline_rate_bpm", "after_rate_bpm", "baseline_analysable_h",
+         "after_analysable_h"),
+    ),
+    Table(
         "responders", "one row per later visit of a trial, arm, measure and limit of response",
         ("visit", "arm", "measure", "limit_pct"),
         ("visit", "arm", "measure", "limit_pct", "patients", "evaluable_patients", "fell_patients", "rose_patients",

@@ -10,6 +10,7 @@ import polars as pl
 
 from detectors.change import TOO_LITTLE
 from detectors.variability import regression_to_mean
+from flows.change.clock_rates import rate_by_clock_hour
 from flows.change.cohorts import cohort
 from flows.change.courses import compared, recurrence_days
 from flows.change.extremes import EXTREMES, compared_by_rank, excess_of_runs
@@ -44,6 +45,7 @@ def tables(
     return {
         "changes": compared,
         "rate_effects": rate_effects(events, cells, compared, change),
+        "rate_by_clock_hour": rate_by_clock_hour(cells),
         "series_fits": series_fits(events, cells, periods),
         "level_shifts": level_shifts(local_hours, wear_days),
         "cohort": cohort(compared, therapies, change.success_limit_pct),

@@ -409,3 +409,20 @@ def test_ranks_allow_for_the_time_between_the_periods():
     assert row(changes(many, {"T1": "P1"}), "longest_run_beats")["verdict"] == "fell_beyond_chance"
     drifting = row(changes(many, {"T1": "P1"}, change=ChangeSettings()), "longest_run_beats")
     assert drifting["verdict"] == "within_chance"
+
+
+def test_heart_rate_by_hour_of_the_day_before_and_after():
+    """Every clock hour has its mean rate on both sides, days weighed by analysable time, NULL where none was worn."""
+    half = hours_of("P1", EVENT - timedelta(2), 40, rate_bpm=60).with_columns(analysable_s=pl.lit(1800.0))
+    before = [half, hours_of("P1", EVENT - timedelta(1), 40, rate_bpm=90)]
+    after = [hours_of("P1", EVENT + timedelta(7 + i), 40, rate_bpm=50, clock_hours=range(6, 24)) for i in range(2)]
+    tables = programme(before + after, {"T1": "P1"})
+    tables["wear_days"] = tables["wear_days"].with_columns(is_valid_day=pl.lit(True))
+    table = trends.tables(**tables, change=NO_DRIFT, wear=WearSettings())["rate_by_clock_hour"]
+    assert tuple(table.columns) == PUBLISHED["rate_by_clock_hour"].columns
+    by_hour = {found["clock_hour"]: found for found in table.rows(named=True)}
+    assert sorted(by_hour) == list(range(24))
+    # Source: (0.5 h x 60 + 1 h x 90) / 1.5 h, by hand
+    assert (by_hour[3]["baseline_rate_bpm"], by_hour[3]["baseline_analysable_h"]) == (80, 1.5)
+    assert (by_hour[3]["after_rate_bpm"], by_hour[3]["after_analysable_h"]) == (None, 0)
+    assert (by_hour[12]["after_rate_bpm"], by_hour[12]["after_analysable_h"]) == (50, 2)
