@@ -12,7 +12,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors.families import QRS, unit
+from detectors.families import QRS, REACH, unit
 
 LEAST_LIKENESS = 0.90  # the loosest that a family asks of its own beats
 AMPLITUDE_LIMIT = 2.5  # wider than within a recording: the next patch lies on another spot of skin
@@ -53,34 +53,39 @@ def match_families(
 
 
 class _Known:
-    """Patient-wide families so far."""
+    """Patient-wide families so far, with what a comparison needs of them."""
 
     def __init__(self, of_shape: tuple[int, ...]) -> None:
         self.shape_mv = np.empty((0, *of_shape), dtype=np.float32)
-        self.n_beats = np.empty(0, dtype=np.int64)
+        self.shifted = np.empty((0, 2 * REACH + 1, QRS.length), dtype=np.float32)  # unit QRS at all lags
+        self.size = np.empty(0, dtype=np.float32)
         self.origin = np.empty(0, dtype="<U1")
+        self.n_beats = np.empty(0, dtype=np.int64)
 
     def enter(self, origin: str, shape_mv: NDArray[np.float32], n_beats: int) -> tuple[int, float]:
         """Number of the family that a shape joins or founds, and its likeness to that family before."""
         number, like = self._most_alike(origin, shape_mv)
         if number < 0:
-            self.shape_mv = np.vstack([self.shape_mv, shape_mv[None]])
-            self.n_beats = np.append(self.n_beats, n_beats)
-            self.origin = np.append(self.origin, origin)
-            return len(self.n_beats) - 1, float("nan")
+            number = self._found(origin, shape_mv)
         self.n_beats[number] += n_beats
         weight = np.float32(n_beats / max(int(self.n_beats[number]), 1))
         self.shape_mv[number] += weight * (shape_mv - self.shape_mv[number])
+        own = self.shape_mv[number : number + 1]
+        self.shifted[number], self.size[number] = unit(QRS.at_all_lags(own))[0][0], unit(QRS.of(own))[1][0]
         return number, like
 
     def _most_alike(self, origin: str, shape_mv: NDArray[np.float32]) -> tuple[int, float]:
         """The most similar family of the class whose size fits, -1 when none is similar enough."""
-        if not self.n_beats.size:
-            return -1, float("nan")
         direction, size = unit(QRS.of(shape_mv[None]))
-        own_size = unit(QRS.of(self.shape_mv))[1]
-        match = (unit(QRS.at_all_lags(self.shape_mv))[0] @ direction[0]).max(axis=1)
-        fits = (size < AMPLITUDE_LIMIT * own_size) & (own_size < AMPLITUDE_LIMIT * size) & (self.origin == origin)
+        match = (self.shifted @ direction[0]).max(axis=1)
+        fits = (size < AMPLITUDE_LIMIT * self.size) & (self.size < AMPLITUDE_LIMIT * size) & (self.origin == origin)
         match = np.where(fits, match, -1)
-        best = int(match.argmax())
-        return (best, float(match[best])) if match[best] > LEAST_LIKENESS else (-1, float("nan"))
+        best = int(match.argmax()) if match.size else -1
+        return (best, float(match[best])) if best >= 0 and match[best] > LEAST_LIKENESS else (-1, float("nan"))
+
+    def _found(self, origin: str, shape_mv: NDArray[np.float32]) -> int:
+        self.shape_mv = np.vstack([self.shape_mv, shape_mv[None]])
+        self.shifted = np.concatenate([self.shifted, np.zeros_like(self.shifted, shape=(1, *self.shifted.shape[1:]))])
+        self.size, self.n_beats = np.append(self.size, np.float32(0)), np.append(self.n_beats, 0)
+        self.origin = np.append(self.origin, origin)
+        return len(self.origin) - 1

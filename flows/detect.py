@@ -18,14 +18,16 @@ import polars as pl
 from detectors.analyse import DETECTOR_VERSION, analyse_recording
 from detectors.results import PAUSE_KINDS, Analysis, Segment
 from detectors.strips import beats_within, choose_strips
-from detectors.tally import quarter_hours
+from detectors.tally import family_quarters, quarter_hours
 from flows.settings import Settings, result_settings
 from warehouse.parts import Part, SignalReader, frame_schema, write_part
 from warehouse.schema import LAKE
 
 BEATS_PER_PART = 250_000
 _ADDED_LATER = ("recording_id", "fingerprint")
-DERIVED_TABLES = ("beats", "families", "episodes", "quality_windows", "findings", "quarter_hours", "strips")
+DERIVED_TABLES = (
+    "beats", "families", "family_quarters", "episodes", "quality_windows", "findings", "quarter_hours", "strips",
+)  # fmt: skip
 
 
 def fingerprint_of(settings: Settings) -> str:
@@ -103,10 +105,11 @@ def _frames(
         columns = {name: column[begin : begin + BEATS_PER_PART] for name, column in analysis.beats._asdict().items()}
         yield "beats", _beats(columns, analysis.fs_hz, start_us)
     yield "families", _families(analysis)
+    yield "family_quarters", _by_quarter(family_quarters(analysis, start_us)._asdict())
     yield "episodes", _spans(analysis.episodes._asdict(), analysis.fs_hz, start_us)
     yield "quality_windows", _spans(analysis.quality._asdict(), analysis.fs_hz, start_us)
     yield "findings", _findings(analysis)
-    yield "quarter_hours", _quarter_hours(analysis, start_us)
+    yield "quarter_hours", _by_quarter(quarter_hours(analysis, start_us)._asdict())
     yield "strips", _strips(analysis, start_us, recording, reader)
 
 
@@ -163,8 +166,7 @@ def _findings(analysis: Analysis) -> pl.DataFrame:
     return pl.DataFrame(rows, schema={"finding_code": pl.String, "finding_detail": pl.String}, orient="row")
 
 
-def _quarter_hours(analysis: Analysis, start_us: np.ndarray) -> pl.DataFrame:
-    columns = quarter_hours(analysis, start_us)._asdict()
+def _by_quarter(columns: dict[str, np.ndarray]) -> pl.DataFrame:
     quarter_utc = pl.Series("quarter_utc", columns.pop("quarter_us"), dtype=pl.Int64).cast(pl.Datetime("us"))
     return _number_or_null(pl.DataFrame(columns).with_columns(quarter_utc))
 

@@ -16,6 +16,7 @@ import polars as pl
 
 from dashboards.site import build_site
 from flows.change import trends
+from flows.change.patient_families import patient_families
 from flows.change.visits import responders, visit_changes, visits
 from flows.promotion import published_fingerprint
 from flows.register import Register
@@ -78,6 +79,7 @@ def built(
         measured = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
         for name, frame in trends.tables(**measured, change=settings.change, wear=settings.wear).items():
             build.add(name, frame)
+        build.add("patient_families", patient_families(build.frame("family_shapes")))
         for name, frame in _trial_tables(people, measured, settings).items():
             build.add(name, frame)
         yield build

@@ -26,7 +26,9 @@ from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets
 
 MODELS: dict[str, tuple[str, ...]] = {
     "staging": ("patients", "therapies", "recording_wears", "decided_beats", "counted_quarters", "patient_quarters"),
-    "intermediate": ("hours", "local_hours", "burden_intervals", "wear_days", "period_spans", "periods"),
+    "intermediate": ("hours", "local_hours", "burden_intervals", "wear_days", "period_spans", "periods",
+        "family_days", "family_shapes",
+    ),
     "marts": (
         "deliveries", "recordings", "segments", "families", "episodes", "findings", "marks", "attention_from_days",
         "attention_from_therapies", "attention", "review_sheet", "decisions", "reviews",

@@ -131,6 +131,9 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("shape_mv", "REAL[]", "mV", "Averaged beat from 280 ms before to 440 ms after the R peak, 125 values a second."),
     ("mean_coupling_ms", "REAL", "ms", "Mean coupling interval of the family's premature beats."),
     ("coupling_spread_ms", "REAL", "ms", "90th minus 10th percentile of the coupling interval."),
+    ("patient_family", "SMALLINT", "", "Number of the shape family over all recordings of the patient, from 0."),
+    ("likeness", "REAL", "", "Correlation with the patient's family as it was before; NULL for the first of its shape."),
+    ("share_of_day_pct", "DOUBLE", "%", "Share of the recording's analysable beats of that local day."),
     # episodes
     ("episode_kind", "VARCHAR", "", "couplet, run, sv_run, bigeminy, trigeminy, pause or irregular."),
     ("first_sample", "BIGINT", "samples", "First sample within the segment."),
@@ -477,6 +480,11 @@ LAKE: dict[str, Table] = _tables(
          "amplitude_mv", "mean_coupling_ms", "coupling_spread_ms", "shape_mv"),
     ),
     Table(
+        "family_quarters", "one row per shape family and quarter of a UTC hour with analysable beats of it",
+        ("recording_id", "family", "quarter_utc"),
+        ("recording_id", "fingerprint", "family", "quarter_utc", "beat_count"),
+    ),
+    Table(
         "episodes", "one row per couplet, run, bigeminy or trigeminy stretch, pause or irregular stretch",
         ("recording_id", "episode_kind", "segment", "first_sample"),
         ("recording_id", "fingerprint", "episode_kind", "segment", "first_sample", "last_sample", "start_utc", "end_utc",
@@ -545,6 +553,16 @@ PUBLISHED: dict[str, Table] = _tables(
     LAKE["segments"],
     LAKE["beats"],
     LAKE["families"],
+    Table(
+        "patient_families", "one row per shape family of at least 10 beats, matched across the patient's recordings",
+        ("recording_id", "family"),
+        ("recording_id", "patient_code", "family", "patient_family", "family_class", "beat_count", "likeness"),
+    ),
+    Table(
+        "family_days", "one row per recording, shape family and local day with analysable beats of it",
+        ("recording_id", "family", "local_day"),
+        ("recording_id", "patient_code", "family", "local_day", "beat_count", "share_of_day_pct"),
+    ),
     LAKE["episodes"],
     LAKE["quality_windows"],
     LAKE["findings"],
