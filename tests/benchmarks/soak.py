@@ -1,7 +1,7 @@
 """Two hundred small deliveries over sixty simulated nights, late, twice and withdrawn ones among them.
 
 Run from the checkout: python -m tests.benchmarks.soak FOLDER [--nights 60] [--patches 90] [--seed 1]
-Every night is one run of the whole job in this process. Printed are, per night, what was new, seconds and memory; then
+Every night is one run of the whole job in this process. Printed are, per night, what was new, CPU seconds and memory; then
 what a night costs by itself, per new delivery and per delivery that was there before; then whether the tables are those
 of one run over everything.
 """
@@ -52,7 +52,7 @@ class Night(NamedTuple):
 
     new: int
     before: int
-    seconds: float
+    cpu_s: float
     memory_mb: float
 
 
@@ -115,12 +115,12 @@ def _serial(patch: int) -> str:
 def _night(folder: Path, night: int, new: list[Arrival], asked: argparse.Namespace, gone: int, before: int) -> Night:
     for arrival in new:
         _deliver(folder / "inbox", arrival, _first_night(arrival.patch, asked.patches, asked.nights))
-    begun = time.perf_counter()
+    begun = time.process_time()
     outcome = nightly.run(folder)
-    done = Night(len(new), before, time.perf_counter() - begun, _memory_mb())
+    done = Night(len(new), before, time.process_time() - begun, _memory_mb())
     print(
         f"night {night:3}  {done.new:3} new, {gone} withdrawn  {outcome.outcome:10} {outcome.analysed_recordings:3} "
-        f"analysed  {done.seconds:6.2f} s  {done.memory_mb:6.0f} MB",
+        f"analysed  {done.cpu_s:6.2f} CPU s  {done.memory_mb:6.0f} MB",
         flush=True,
     )
     return done
@@ -162,11 +162,11 @@ def _memory_mb() -> float:
 
 def _print_summary(nights: list[Night]) -> None:
     print(f"{sum(night.new for night in nights)} deliveries in {len(nights)} nights")
-    seconds = np.array([night.seconds for night in nights])
+    cpu_s = np.array([night.cpu_s for night in nights])
     causes = np.array([(1, night.new, night.before) for night in nights])
-    (alone, per_new, per_old), *_ = np.linalg.lstsq(causes, seconds, rcond=None)
+    (alone, per_new, per_old), *_ = np.linalg.lstsq(causes, cpu_s, rcond=None)
     print(
-        f"a night costs {alone:.2f} s, {per_new:.3f} s per new delivery, {per_old:.4f} s per one that was there before"
+        f"a night costs {alone:.2f} CPU s, {per_new:.3f} per new delivery, {per_old:.4f} per one that was there before"
     )
     third = len(nights) // 3
     middle, last = (np.mean([each.memory_mb for each in part]) for part in (nights[third:-third], nights[-third:]))

@@ -174,6 +174,19 @@ def test_two_programmes_share_a_scheduler(coast, fresh, expected, cluster, tmp_p
 
 
 @needs_dask
+def test_a_killed_run_leaves_nothing_twice(coast, expected, cluster):
+    """After a kill -9 of the run while the workers are busy the next run on the same scheduler publishes the same."""
+    use_scheduler(coast, cluster.address)
+    command = [sys.executable, "-m", "flows.cli", "run", str(coast)]
+    with subprocess.Popen(command, cwd=ROOT, stderr=subprocess.PIPE, text=True) as killed:
+        for line in killed.stderr:
+            if line.startswith("  analysed"):
+                killed.kill()
+    assert not (coast / "published").exists()
+    assert tables_after_run(coast) == expected
+
+
+@needs_dask
 def test_a_lost_scheduler_ends_the_run_and_the_next_completes(coast, expected, cluster, monkeypatch):
     """A scheduler lost half-way ends the run with one sentence; the next run, on this host, publishes everything."""
     monkeypatch.setattr(workers, "CONNECT_S", 3.0)
