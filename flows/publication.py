@@ -25,6 +25,7 @@ from warehouse.build import TrendBuild
 from warehouse.ledger import Ledger
 from warehouse.parts import Part
 from warehouse.publish import publish
+from warehouse.published import Published
 
 SHOWN_ROWS = 3
 
@@ -40,7 +41,8 @@ def refresh(folder: Path, settings: Settings, people: Register, ledger: Ledger, 
     """
     say("building tables")
     fingerprint = published_fingerprint(folder / "lake", settings)
-    with built(folder, settings, people, ledger.parts(), fingerprint) as build:
+    standing = Published(folder / "published") if (folder / "published" / "current").exists() else None
+    with built(folder, settings, people, ledger.parts(), fingerprint, standing) as build:
         build.run_models("marts")
         _check(build)
         say("publishing")
@@ -60,9 +62,17 @@ def refresh(folder: Path, settings: Settings, people: Register, ledger: Ledger, 
 
 @contextmanager
 def built(
-    folder: Path, settings: Settings, people: Register, parts: Sequence[Part], fingerprint: str
+    folder: Path,
+    settings: Settings,
+    people: Register,
+    parts: Sequence[Part],
+    fingerprint: str,
+    standing: Published | None = None,
 ) -> Iterator[TrendBuild]:
-    """Build the tables up to `changes` from the given parts under one fingerprint."""
+    """Build the tables up to `changes` from the given parts under one fingerprint.
+
+    What the edition `standing` already has of patients without changes is taken over from it.
+    """
     with (
         tempfile.TemporaryDirectory(prefix="build-", dir=folder / "lake") as workdir,
         TrendBuild(
@@ -72,6 +82,7 @@ def built(
             settings=_model_settings(settings),
             fingerprint=fingerprint,
             workdir=Path(workdir),
+            standing=standing,
         ) as build,
     ):
         build.run_models("staging")

@@ -7,11 +7,13 @@ named after the table they make; the order in which they run is `MODELS`, and a 
 - `register.*`: patients, wears, therapies,
 - `programme.settings`: one row, a column per threshold, and the published fingerprint,
 - `programme.zone_offsets` and `programme.local_days`: the rules of the patients' time zones (see `warehouse.zones`).
+
+With a standing edition only the quarter hours of patients with changes are read (see `warehouse.kept`).
 """
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from importlib import resources
 from pathlib import Path
 from typing import NamedTuple, Self
@@ -21,12 +23,14 @@ import polars as pl
 
 from warehouse import schema
 from warehouse.database import open_database
+from warehouse.kept import TAKEN, TALLIES, grounds, kept_patients, offer, with_kept_rows
 from warehouse.parts import Part, checked_frame, polars_type, scan_parts
-from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets
+from warehouse.published import Published
+from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets, zone_rules
 
 MODELS: dict[str, tuple[str, ...]] = {
     "staging": ("patients", "therapies", "recording_wears", "decided_beats", "counted_quarters", "patient_quarters"),
-    "intermediate": ("hours", "local_hours", "burden_intervals", "wear_days", "period_spans", "periods",
+    "intermediate": ("hours", "recording_tallies", "local_hours", "burden_intervals", "wear_days", "period_spans", "periods",
         "family_days", "family_shapes",
     ),
     "marts": (
@@ -99,7 +103,8 @@ class TrendBuild:
     """Scratch database in which the trend tables are built; use it as a context manager.
 
     `register` has the frames of REGISTER and `settings` the values of SETTINGS (further ones are ignored).
-    Of `parts` those without a fingerprint and those of `fingerprint` are used.
+    Of `parts` those without a fingerprint and those of `fingerprint` are used. Rows of patients without changes are
+    taken over from `standing`, an edition whose checks were asked; the tables are the same without it.
     """
 
     def __init__(
@@ -111,12 +116,15 @@ class TrendBuild:
         settings: Mapping[str, float | int | str],
         fingerprint: str,
         workdir: Path,
+        standing: Published | None = None,
     ) -> None:
         self.lake = lake
         self.parts = [p for p in parts if p.table == "fingerprints" or p.fingerprint in ("", fingerprint)]
         self.fingerprint = fingerprint
         self._register = register
         self._settings = settings
+        self._standing = standing
+        self.grounds: dict[str, str] = {}
         self._database = workdir / "build.duckdb"
 
     def __enter__(self) -> Self:
@@ -130,6 +138,8 @@ class TrendBuild:
         self._load_register()
         self._load_settings()
         self._load_lake()
+        self._keep_patients()
+        self._load_tallies()
         self._load_calendar()
         self.add("parts", parts_frame(self.parts))
         self.add("data_dictionary", dictionary_frame())
@@ -158,14 +168,47 @@ class TrendBuild:
     def _load_lake(self) -> None:
         for name, table in schema.LAKE.items():
             paths = [part.path for part in self.parts if part.table == name]
-            if name in _NOT_FOR_MODELS:
+            if name in (*_NOT_FOR_MODELS, *TALLIES):
                 continue
             if name in READ_IN_PLACE and paths:
                 query = parts_query(table, [str(self.lake / path) for path in paths])
                 self.connection.execute(f"CREATE VIEW lake.{name} AS {query}")
             else:
-                types = {column: schema.COLUMNS[column].type for column in table.columns}
-                self._insert(f"lake.{name}", types, scan_parts(self.lake, table, paths).collect())
+                self._insert_parts(table, paths)
+
+    def _keep_patients(self) -> None:
+        years = self.connection.sql("SELECT min(start_utc), max(end_utc) FROM lake.recordings").fetchall()[0]
+        self.grounds = grounds(
+            self.parts,
+            self._register,
+            over_read=[
+                row[0] for row in self.connection.sql("SELECT DISTINCT recording_id FROM lake.reviews").fetchall()
+            ],
+            zone_rules=zone_rules(self._register["patients"]["zone"], *years),
+            common=self._common_grounds(),
+        )
+        kept = kept_patients(self._standing, self.grounds)
+        offer(self.connection, self._standing, kept)
+        self._keeps_patients = bool(kept)
+
+    def _common_grounds(self) -> Iterator[str]:
+        yield from (duckdb.__version__, self.fingerprint)
+        yield from (f"{name} {self._settings[name]!r}" for name in SETTINGS)
+        yield from (column_definitions(schema.PUBLISHED[table]) for table in TAKEN.values())
+        yield from (_model(layer, name) for layer in ("staging", "intermediate") for name in MODELS[layer])
+
+    def _load_tallies(self) -> None:
+        kept = self.connection.sql(
+            "SELECT recording_id FROM register.wears SEMI JOIN kept.patients USING (patient_code)"
+        )
+        left_out = {recording_id for (recording_id,) in kept.fetchall()}
+        for name in TALLIES:
+            paths = [part.path for part in self.parts if part.table == name and part.key not in left_out]
+            self._insert_parts(schema.LAKE[name], paths)
+
+    def _insert_parts(self, table: schema.Table, paths: list[str]) -> None:
+        types = {column: schema.COLUMNS[column].type for column in table.columns}
+        self._insert(f"lake.{table.name}", types, scan_parts(self.lake, table, paths).collect())
 
     def _load_calendar(self) -> None:
         # Without any tallies a calendar around some day does: nothing is joined to it.
@@ -186,7 +229,9 @@ class TrendBuild:
     def run_models(self, layer: str) -> None:
         """Make the tables of one layer of MODELS, in order; published tables get the dictionary's columns and types."""
         for name in MODELS[layer]:
-            query = resources.files("warehouse").joinpath("models", layer, f"{name}.sql").read_text(encoding="utf-8")
+            query = _model(layer, name)
+            if self._keeps_patients and name in TAKEN:
+                query = with_kept_rows(name, query)
             if name in schema.PUBLISHED:
                 query = typed_query(schema.PUBLISHED[name], query)
             try:
@@ -217,6 +262,10 @@ class TrendBuild:
                 claims[f"{name}_has_one_row_per_key"] = f"SELECT {key} FROM {name} GROUP BY {key} HAVING count(*) > 1"
         failures = (Failure(claim, pl.DataFrame(self.connection.sql(query))) for claim, query in claims.items())
         return [failure for failure in failures if failure.rows.height]
+
+
+def _model(layer: str, name: str) -> str:
+    return resources.files("warehouse").joinpath("models", layer, f"{name}.sql").read_text(encoding="utf-8")
 
 
 def column_definitions(table: schema.Table) -> str:

@@ -23,6 +23,7 @@ from pathlib import Path
 from typing import Any
 
 from warehouse.build import TrendBuild
+from warehouse.kept import GROUNDS
 from warehouse.ledger import Damage
 from warehouse.parts import Part, file_sha256, write_whole
 from warehouse.publish import write_tables
@@ -47,7 +48,7 @@ def freeze(published: Path, name: str, inputs: Sequence[Path], *, reason: str = 
     standing = Published(published)
     cut, staging = published / "cuts" / name, published / "cuts" / f".{name}.staging"
     shutil.rmtree(staging, ignore_errors=True)
-    shutil.copytree((published / "current").resolve(), staging)
+    shutil.copytree((published / "current").resolve(), staging, ignore=shutil.ignore_patterns(GROUNDS))
     (staging / "inputs").mkdir()
     for path in inputs:
         shutil.copyfile(path, staging / "inputs" / path.name)

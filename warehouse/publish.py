@@ -27,14 +27,15 @@ import polars as pl
 from warehouse import schema
 from warehouse.build import READ_IN_PLACE, ArrowStream, TrendBuild, column_definitions, parts_query
 from warehouse.database import open_database
+from warehouse.kept import GROUNDS
 from warehouse.parts import file_sha256, write_whole
 from warehouse.published import DATABASE, MANIFEST, Published
 
 DATABASE_FOR_OLDER_READERS = "burdenline_duckdb1.duckdb"
-"""The same database in a storage version that DuckDB 1.2 and later read."""
+"""Another name of the database, whose storage version DuckDB 1.2 and later read."""
 
-_STORAGE = {DATABASE: None, DATABASE_FOR_OLDER_READERS: "v1.2.0"}
-_PIECES = (*_STORAGE, "tables", "site", MANIFEST)
+_STORAGE_VERSION = "v1.2.0"
+_PIECES = (DATABASE, DATABASE_FOR_OLDER_READERS, "tables", "site", MANIFEST)
 _ROW_GROUP_ROWS = 8192  # small, so that one recording's rows are read without the others'
 
 
@@ -85,11 +86,12 @@ def _write_edition(
     content = json.dumps(manifest, indent=1, sort_keys=True).encode()
     edition = staging.with_name(hashlib.sha256(content).hexdigest()[:16])
     if not edition.exists():
-        for name, storage in _STORAGE.items():
-            _write_database(build, published, staging / name, storage)
+        _write_database(build, published, staging / DATABASE)
+        (staging / DATABASE_FOR_OLDER_READERS).symlink_to(DATABASE)
         write_whole(staging / MANIFEST, content)
         site(Published(published, edition=staging), staging / "site")
         staging.rename(edition)
+    write_whole(edition / GROUNDS, json.dumps(build.grounds, indent=1, sort_keys=True).encode())
     return edition
 
 
@@ -121,11 +123,10 @@ def write_tables(build: TrendBuild, folder: Path) -> dict[str, dict[str, Any]]:
     return described
 
 
-def _write_database(build: TrendBuild, published: Path, path: Path, storage: str | None) -> None:
+def _write_database(build: TrendBuild, published: Path, path: Path) -> None:
     connection = open_database(":memory:")
     connection.execute(f"SET file_search_path = {_quoted(str(published.resolve()))}")
-    version = f"(STORAGE_VERSION '{storage}')" if storage else ""
-    connection.execute(f"ATTACH {_quoted(str(path))} AS edition {version}")
+    connection.execute(f"ATTACH {_quoted(str(path))} AS edition (STORAGE_VERSION '{_STORAGE_VERSION}')")
     connection.execute("USE edition")
     connection.execute("BEGIN")
     for name, table in schema.PUBLISHED.items():

@@ -59,6 +59,11 @@ class Published:
         """What the edition was made from: fingerprint, stamp, and rows and hash of each table."""
         return json.loads((self._edition / MANIFEST).read_text(encoding="utf-8"))
 
+    @property
+    def edition(self) -> Path:
+        """Folder of the edition."""
+        return self._edition
+
     @cached_property
     def lake(self) -> Path:
         """Folder of the parts that the edition reads in place."""

@@ -162,6 +162,7 @@ def publication(folder: Path, recordings: int, found: dict[str, float], what: st
     with timed(f"{what}: all", found):
         with timed(f"{what}: parts in force", found):
             parts = Ledger(folder / "lake").parts()
+        standing = Published(folder / "published") if (folder / "published" / "current").exists() else None
         build = TrendBuild(
             folder / "lake",
             parts,
@@ -169,6 +170,7 @@ def publication(folder: Path, recordings: int, found: dict[str, float], what: st
             settings=SETTINGS,
             fingerprint=FINGERPRINT,
             workdir=folder / "work",
+            standing=standing,
         )
         with build:
             with timed(f"{what}: models", found):

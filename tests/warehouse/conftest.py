@@ -14,6 +14,7 @@ from warehouse.build import COMPUTED_OUTSIDE, TrendBuild
 from warehouse.ledger import Ledger
 from warehouse.parts import write_part
 from warehouse.publish import publish
+from warehouse.published import Published
 
 SETTINGS = {
     "min_analysable_h_per_day": 10.0,
@@ -99,7 +100,12 @@ class Lake:
 
     @contextmanager
     def built(
-        self, fingerprint: str = "f1", work: str = "work", changes: list[dict[str, Any]] | None = None, **settings: Any
+        self,
+        fingerprint: str = "f1",
+        work: str = "work",
+        changes: list[dict[str, Any]] | None = None,
+        standing: Published | None = None,
+        **settings: Any,
     ) -> Iterator[TrendBuild]:
         """A finished build over everything that was landed; `changes` stands for the statistics."""
         build = TrendBuild(
@@ -109,6 +115,7 @@ class Lake:
             settings=SETTINGS | settings,
             fingerprint=fingerprint,
             workdir=self.folder / work,
+            standing=standing,
         )
         with build:
             build.run_models("staging")

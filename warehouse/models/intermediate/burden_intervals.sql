@@ -8,6 +8,7 @@ WITH hours AS (
     SELECT
         patient_code,
         local_day,
+        clock_hour,
         v_beats,
         all_beats,
         sum(v_beats) OVER day / sum(all_beats) OVER day AS share
@@ -22,8 +23,10 @@ scatter AS (
         local_day,
         any_value(share) AS share,
         count(*) - 1 AS freedom,
-        sum(all_beats) / greatest(1, sum((v_beats - share * all_beats) ** 2 / nullif(all_beats * share * (1 - share), 0))
-            / (count(*) - 1)) AS effective_beats
+        -- Fractions are added in the order of the hours, so that the sum is the same to the last bit in every build.
+        sum(all_beats) / greatest(1, sum(
+            (v_beats - share * all_beats) ** 2 / nullif(all_beats * share * (1 - share), 0) ORDER BY clock_hour
+        ) / (count(*) - 1)) AS effective_beats
     FROM hours
     GROUP BY patient_code, local_day
     HAVING count(*) >= 3

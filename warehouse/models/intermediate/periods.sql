@@ -6,8 +6,8 @@ WITH days AS (
         span.period,
         count(*) AS wear_days,
         count_if(day.is_valid_day) AS valid_days,
-        sum(day.worn_h) AS worn_h,
-        sum(day.analysable_h) AS analysable_h,
+        sum(day.worn_h ORDER BY day.local_day) AS worn_h,
+        sum(day.analysable_h ORDER BY day.local_day) AS analysable_h,
         sum(day.all_beats) AS all_beats,
         sum(day.v_beats) AS v_beats,
         sum(day.s_beats) AS s_beats

@@ -1,6 +1,6 @@
 -- one row per recording and quarter hour, beats counted by the class that holds; key recording_id, quarter_utc
 -- Decisions of over-readers move beats between the classes; what they call noise is no beat. Couplets, runs and rates
--- stay as found automatically.
+-- stay as found automatically. Seconds become decimals, so that no sum of them depends on the order of the rows.
 WITH moved AS (
     SELECT
         recording_id,
@@ -24,7 +24,14 @@ SELECT
         v_beats + coalesce(v_more, 0) AS v_beats,
         f_beats + coalesce(f_more, 0) AS f_beats,
         q_beats + coalesce(q_more, 0) AS q_beats,
-        all_beats - coalesce(noise, 0) AS all_beats
+        all_beats - coalesce(noise, 0) AS all_beats,
+        recorded_s::DECIMAL(18, 6) AS recorded_s,
+        worn_s::DECIMAL(18, 6) AS worn_s,
+        analysable_s::DECIMAL(18, 6) AS analysable_s,
+        rr_sum_s::DECIMAL(18, 6) AS rr_sum_s,
+        bigeminy_s::DECIMAL(18, 6) AS bigeminy_s,
+        trigeminy_s::DECIMAL(18, 6) AS trigeminy_s,
+        irregular_s::DECIMAL(18, 6) AS irregular_s
     ),
     coalesce(decided_beats, 0) AS decided_beats
 FROM lake.quarter_hours AS quarter
