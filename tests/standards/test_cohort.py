@@ -2,7 +2,7 @@
 
 import numpy as np
 import pytest
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy import stats
 from statsmodels.stats.multitest import multipletests
@@ -87,6 +87,7 @@ def test_p_values_looked_at_together():
     assert cohort.benjamini_hochberg_rejected(FIFTEEN).sum() == 4
 
 
+@settings(max_examples=25)  # the library takes its time
 @given(st.lists(st.floats(0, 1), min_size=1, max_size=30))
 def test_multiple_p_values_equal_the_library(p_values):
     """Both procedures reject what the library rejects, in any order."""
