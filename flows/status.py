@@ -140,7 +140,7 @@ def _last_run_text(found: dict[str, Any]) -> str:
     if found["last_run_utc"] is None:
         return "no run yet"
     outcome = found["last_outcome"].replace("_", " ")
-    return f"{outcome} at {found['last_run_utc']} UTC, {found['last_run_age_h']:g} h ago"
+    return f"{outcome} at {found['last_run_utc']} UTC, {_ago(found['last_run_age_h'])}"
 
 
 def _disk_text(found: dict[str, Any]) -> str:
@@ -152,4 +152,8 @@ def _disk_text(found: dict[str, Any]) -> str:
 def _patient_text(row: dict[str, Any]) -> str:
     if row["data_until_utc"] is None:
         return f"{row['patient_code']}: no data yet"
-    return f"{row['patient_code']}: data until {row['data_until_utc']} UTC, {row['data_age_h']:g} h ago"
+    return f"{row['patient_code']}: data until {row['data_until_utc']} UTC, {_ago(row['data_age_h'])}"
+
+
+def _ago(hours: float) -> str:
+    return f"{hours:g} h ago" if hours < 48 else f"{hours / 24:.0f} days ago"

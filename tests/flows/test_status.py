@@ -53,6 +53,7 @@ def test_the_age_of_data_counts_to_now(coast):
         {"patient_code": "P-2", "data_until_utc": None, "data_age_h": None},
     ]
     assert "P-1: data until 2026-03-01 08:05:00 UTC, 36 h ago\nP-2: no data yet" in status_text(found)
+    assert "UTC, 31 days ago" in status_text(status(coast, datetime(2026, 4, 1, 8, 5, tzinfo=UTC)))
 
 
 def test_refused_deliveries_are_told_with_their_reason(coast):
