@@ -271,6 +271,43 @@ def clock_map(local_hours: pl.DataFrame) -> Figure:
     return Figure(data=[trace], layout=drawn_on)
 
 
+def coupling(coupled: pl.DataFrame) -> Figure:
+    """Mean coupling interval and its spread, family by family, at the day on which their recording began."""
+    data = []
+    for (beat_class,), rows in coupled.partition_by("family_class", as_dict=True, maintain_order=True).items():
+        for column, yaxis in (("mean_coupling_ms", "y"), ("coupling_spread_ms", "y2")):
+            data.append(_coupling_marks(str(beat_class), rows, column, yaxis))
+    first, last = coupled["start_day"].min(), coupled["start_day"].max()
+    around = [str(_midnight(first) - timedelta(days=2)), str(_midnight(last) + timedelta(days=2))]  # type: ignore[arg-type]
+    drawn_on = layout(
+        360,
+        xaxis={**GREY, "type": "date", "range": around, "anchor": "y2", "tickformat": "%-d %b\n%Y"},
+        yaxis=axis("mean, ms", (0.40, 1.0), rangemode="normal"),
+        yaxis2=axis("spread, ms", (0.0, 0.30), nticks=4),
+    )
+    return Figure(data=data, layout=drawn_on)
+
+
+def _coupling_marks(beat_class: str, rows: pl.DataFrame, column: str, yaxis: str) -> dict[str, Any]:
+    """One mark per family, its area by the number of beats."""
+    largest = 24
+    most: int = rows["beat_count"].max()  # type: ignore[assignment]  # a BIGINT column
+    return {
+        "type": "scatter",
+        "mode": "markers",
+        "name": f"families of {beat_class} beats",
+        "showlegend": yaxis == "y",
+        "x": _days(rows["start_day"]),
+        "y": values(rows[column], 0),
+        "yaxis": yaxis,
+        "customdata": rows.select("family", "beat_count").rows(),
+        "hovertemplate": "family %{customdata[0]}: %{y} ms in %{customdata[1]:,} beats<extra></extra>",
+        "marker": {"color": CLASS_COLOURS.get(beat_class, "--f"), "opacity": 0.75, "size": rows["beat_count"].to_list(),
+                   "sizemode": "area", "sizeref": 2 * max(most, 1) / largest**2, "sizemin": 3},
+        "cliponaxis": False,
+    }  # fmt: skip
+
+
 def wearing(hours: pl.DataFrame, of_patient: pl.DataFrame, zone: str) -> Figure:
     """Hour by hour through one recording: minutes that could be analysed, ectopic beats, heart rate, patient's marks."""
     hours = hours.upsample("hour_utc", every="1h")  # an hour without samples is a gap, not a step

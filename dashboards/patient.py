@@ -23,6 +23,7 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
     recordings = rows["recordings"].sort("start_utc", "recording_id")
     events = [_event(row, rows) for row in therapies.rows(named=True)]
     measured = wear_days.drop_nulls("v_burden_pct")
+    coupled = _coupled(tables, recordings)
     return {
         "patient": rows["patients"].row(0, named=True),
         "wear_days": wear_days.rows(named=True),
@@ -36,6 +37,9 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
         "timeline": charts.timeline(rows) if wear_days.height else None,
         "clock_map": charts.clock_map(rows["local_hours"]) if measured.height else None,
         "marks": rows["marks"].sort("mark_utc", "mark_text").rows(named=True),
+        "coupling": charts.coupling(coupled) if coupled.height else None,
+        "coupled": coupled.rows(named=True),
+        "coupling_finding": coupling_words(coupled),
         "visits": _visits(rows["visits"], rows["visit_changes"]),
         "level_shifts": rows["level_shifts"].sort("local_day").rows(named=True),
         "densest": _densest(rows["local_hours"]),
@@ -69,6 +73,18 @@ def range_words(measured: pl.DataFrame) -> str:
     low, high = measured["v_burden_pct"].min(), measured["v_burden_pct"].max()
     on_days = words.counted(measured.height, "wear day")
     return f"Ventricular burden between {words.number(low, 1)} and {words.number(high, 1)} % on {on_days}"  # type: ignore[arg-type]
+
+
+def coupling_words(coupled: pl.DataFrame) -> str:
+    """Return the coupling of the largest families of the first and the last recording that have one."""
+    largest = coupled.unique("recording_id", keep="first", maintain_order=True)
+    told = [
+        f"{words.number(row['mean_coupling_ms'])} ms with a spread of {words.number(row['coupling_spread_ms'])} ms in "
+        f"{words.counted(row['beat_count'], row['family_class'] + ' beat')} from {words.day(row['start_day'])}"
+        for row in largest.iter_rows(named=True)
+    ]
+    ends = told if len(told) < 2 else [told[0], told[-1]]
+    return f"Coupling of the largest family: {', then '.join(ends)}"
 
 
 def change_words(change: dict[str, Any]) -> str:
@@ -123,16 +139,31 @@ def _by_clock(local_hours: pl.DataFrame) -> list[dict[str, Any]]:
     return [{"local_day": row[0], "hours": dict(zip(wide.columns[1:], row[1:], strict=True))} for row in wide.rows()]
 
 
+def _coupled(tables: Tables, recordings: pl.DataFrame) -> pl.DataFrame:
+    """Return the largest ectopic families that have a coupling interval, with the local day their recording began."""
+    families = [
+        _ectopic(tables, row["recording_id"]).with_columns(
+            start_day=pl.lit(words.local_time(row["start_utc"], row["zone"]).date())
+        )
+        for row in recordings.iter_rows(named=True)
+    ]
+    columns = ("start_day", "recording_id", "family", "family_class", "beat_count", "mean_coupling_ms",
+               "coupling_spread_ms")  # fmt: skip
+    empty = pl.DataFrame(schema=dict.fromkeys(columns, pl.Null))
+    return pl.concat(families).select(columns).drop_nulls("mean_coupling_ms") if families else empty
+
+
+def _ectopic(tables: Tables, recording_id: str) -> pl.DataFrame:
+    """Return the largest ectopic families of a recording, largest first."""
+    families = tables.of_recording("families", recording_id).filter(pl.col("family_class").is_in(ECTOPIC))
+    return families.sort("beat_count", "family", descending=[True, False]).head(FAMILIES_SHOWN)
+
+
 def _recording(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
-    families = tables.of_recording("families", recording["recording_id"]).sort(
-        "beat_count", "family", descending=[True, False]
-    )
-    ectopic = families.filter(pl.col("family_class").is_in(ECTOPIC)).head(FAMILIES_SHOWN)
     return recording | {
         "page": addresses.recording_page(recording["recording_id"]),
         "reviewed": next(tables.of_recording("reviewed", recording["recording_id"]).iter_rows(named=True), None),
-        "families": draw_families(ectopic),
-        "families_count": families.height,
+        "families": draw_families(_ectopic(tables, recording["recording_id"])),
     }
 
 

@@ -11,6 +11,7 @@ import pytest
 
 from dashboards import charts, cohort_charts
 from dashboards.marks import by_day
+from dashboards.patient import _coupled
 from dashboards.tables import Tables
 
 CODE = "SKERRY-0001"
@@ -81,6 +82,16 @@ def test_a_change_of_level_is_marked_on_its_day(timeline):
     """A day on which the burden moved, found from the days alone, is a dashed line in the burden panel."""
     (mark,) = [shape for shape in timeline["layout"]["shapes"] if shape.get("yref") == "y domain"]
     assert (mark["x0"], mark["line"]["dash"]) == ("2026-03-20", "dash")
+
+
+def test_coupling_is_drawn_where_it_is_known(tables):
+    """Each ectopic family with a coupling interval is one mark of its mean and one of its spread, at its recording's day."""
+    coupled = _coupled(tables, tables.of_patient("recordings", CODE))
+    mean, spread = charts.coupling(coupled)["data"]
+    assert mean["x"] == spread["x"] == ["2026-03-02"] * 2 + ["2026-03-20"] * 2
+    # Source: the invented families: 470 ms with a spread of 38 ms
+    assert (set(mean["y"]), set(spread["y"])) == ({470.0}, {38.0})
+    plotly.graph_objects.Figure(coloured(charts.coupling(coupled)))
 
 
 def test_marks_of_the_patient_stand_on_their_local_day(timeline):

@@ -251,6 +251,15 @@ def test_a_mark_of_the_patient_stands_beside_the_strip_that_holds_it(site):
     assert "marked by the patient" not in pages_of(site)["recordings/CN0001-20260320.html"].text
 
 
+def test_coupling_is_named_with_its_beats_and_days(site, rows):
+    """The coupling chart is headed by the largest families of the first and the last recording."""
+    text = pages_of(site)["patients/SKERRY-0001.html"].text
+    said = (
+        r"Coupling of the largest family: 470 ms with a spread of 38 ms in [\d\s]+ V beats from 2 Mar 2026, then 470 ms"
+    )
+    assert re.search(said, text)
+
+
 def test_planned_visits_stand_on_the_pages(site):
     """A trial's visits are listed with their protocol, for the patient and over all patients."""
     own = pages_of(site)["patients/SKERRY-0001.html"].text
