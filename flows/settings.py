@@ -86,6 +86,9 @@ class AttentionSettings:
     run_beats: int = _setting(3, "beats of a ventricular run", 3, 100)
     fast_run_bpm: float = _setting(120.0, "rate of a ventricular run, 1/min", 60, 300)
     pause_ms: int = _setting(3000, "pause, ms", 1000, 10000)
+    sustained_run_s: float = _setting(30.0, "length of a ventricular run that counts as sustained, s", 5, 600)
+    short_coupling_ms: float = _setting(300.0, "mean coupling interval of a ventricular family, ms", 100, 600)
+    patch_end_days: int = _setting(2, "days before the registered end of a wear that is still open", 0, 30)
 
 
 @dataclass(frozen=True)

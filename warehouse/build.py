@@ -35,7 +35,7 @@ MODELS: dict[str, tuple[str, ...]] = {
     ),
     "marts": (
         "deliveries", "recordings", "segments", "families", "episodes", "findings", "marks", "attention_from_days",
-        "attention_from_therapies", "attention", "review_sheet", "decisions", "reviews",
+        "attention_from_therapies", "attention_from_recordings", "attention", "review_sheet", "decisions", "reviews",
         "reviewed", "latest_decisions", "reader_conflicts", "reader_agreement", "runs_of_flow", "audit", "fingerprints",
     ),
 }  # fmt: skip
@@ -74,6 +74,9 @@ SETTINGS: dict[str, str] = {
     "attention_run_beats": "INTEGER",
     "attention_fast_run_bpm": "DOUBLE",
     "attention_pause_ms": "DOUBLE",
+    "attention_sustained_run_s": "DOUBLE",
+    "attention_short_coupling_ms": "DOUBLE",
+    "attention_patch_end_days": "INTEGER",
 }
 
 

@@ -25,6 +25,9 @@ SETTINGS = {
     "attention_run_beats": 3,
     "attention_fast_run_bpm": 120.0,
     "attention_pause_ms": 3000,
+    "attention_sustained_run_s": 30.0,
+    "attention_short_coupling_ms": 300.0,
+    "attention_patch_end_days": 2,
 }
 QUARTER = timedelta(minutes=15)
 

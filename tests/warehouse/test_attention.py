@@ -1,6 +1,6 @@
 """The attention list: who needs a look and why, from reference lines and therapy events, in a fixed order."""
 
-from datetime import date
+from datetime import date, datetime
 from typing import Any
 
 import polars as pl
@@ -55,6 +55,59 @@ def test_runs_and_pauses_count_since_they_were_first_seen(lake: Any) -> None:
         ("P1", "ventricular_run", "2026-05-01"),
     ]
     assert _list(lake, attention_run_beats=6, attention_fast_run_bpm=150.0, attention_pause_ms=4000) == []
+
+
+def test_a_run_of_thirty_seconds_comes_first(lake: Any) -> None:
+    """A sustained ventricular run is a reason of its own since its local day; shorter and other episodes are not."""
+    lake.patient("P1", "Atlantic/Azores")
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-04T00:00", v_beats=0)
+    row = {"recording_id": "R1", "fingerprint": "f1", "segment": 0, "rate_bpm": 150.0}
+    # Source: 2022 ESC guideline on ventricular arrhythmias: sustained from 30 s on
+    told = [("run", 29.9, "2026-05-01T12:00"), ("run", 30.0, "2026-05-03T00:30"), ("pause", 40.0, "2026-05-02T12:00")]
+    episodes = [
+        row
+        | {"episode_kind": kind, "first_sample": place, "duration_s": length_s, "start_utc": datetime.fromisoformat(at)}
+        for place, (kind, length_s, at) in enumerate(told)
+    ]
+    lake.land("episodes", "R1", episodes, "f1")
+    # Source: tz database: the Azores keep UTC in summer
+    assert _list(lake) == [("P1", "sustained_run", "2026-05-03")]
+    with lake.built() as build:
+        assert build.frame("attention")["attention_reason"].item() == (
+            "ventricular run of 30 s at 150/min, the longest of 1 that reach 30 s, on 2026-05-03"
+        )
+    assert _list(lake, attention_sustained_run_s=31.0) == []
+
+
+def test_a_family_that_couples_early_is_listed(lake: Any) -> None:
+    """The mean coupling of a ventricular family under the line is a reason, of ten beats or more."""
+    lake.patient("P1")
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-04T00:00", v_beats=0)
+    row = {"recording_id": "R1", "fingerprint": "f1"}
+    told = [("V", 10, 290.0), ("V", 9, 250.0), ("S", 50, 280.0), ("V", 900, 480.0)]
+    families = [
+        row | {"family": place, "family_class": kind, "beat_count": beats, "mean_coupling_ms": coupling_ms}
+        for place, (kind, beats, coupling_ms) in enumerate(told)
+    ]
+    lake.land("families", "R1", families, "f1")
+    assert _list(lake) == [("P1", "short_coupling", "2026-05-01")]
+    with lake.built() as build:
+        assert (
+            "come 290 ms after the beat before in a family of 10 beats"
+            in build.frame("attention")["attention_reason"][0]
+        )
+    assert _list(lake, attention_short_coupling_ms=290.0) == []
+
+
+def test_an_open_wear_near_its_end_is_listed(lake: Any) -> None:
+    """A wear that the register ends within two days is a reason, unless its recording reaches that end already."""
+    lake.patient("P1")
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-05T00:00", v_beats=0)
+    assert _list(lake) == []
+    lake.wears[0]["to_utc"] = datetime.fromisoformat("2026-05-06T09:00")
+    assert _list(lake) == [("P1", "patch_about_to_end", "2026-05-04")]
+    lake.wears[0]["to_utc"] = datetime.fromisoformat("2026-05-07T09:00")
+    assert _list(lake) == []
 
 
 def test_a_missing_follow_up_shows_once_the_programme_has_gone_on(lake: Any) -> None:

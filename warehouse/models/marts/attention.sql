@@ -3,13 +3,16 @@ WITH reasons AS (
     SELECT * FROM attention_from_days
     UNION ALL
     SELECT * FROM attention_from_therapies
+    UNION ALL
+    SELECT * FROM attention_from_recordings
 ),
 
 urgency AS (
     SELECT attention_code, place
     FROM (VALUES
-        ('fast_run', 1), ('long_pause', 2), ('rose_beyond_chance', 3), ('recurrence', 4), ('ventricular_run', 5),
-        ('burden_over_line', 6), ('follow_up_missing', 7), ('too_little_wear', 8)
+        ('sustained_run', 1), ('fast_run', 2), ('long_pause', 3), ('rose_beyond_chance', 4), ('recurrence', 5),
+        ('short_coupling', 6), ('ventricular_run', 7), ('burden_over_line', 8), ('patch_about_to_end', 9),
+        ('follow_up_missing', 10), ('too_little_wear', 11)
     ) AS listed (attention_code, place)
 )
 
