@@ -87,9 +87,12 @@ def _bring_up_to_date(
 ) -> Outcome:
     from flows import edits, publication, register
     from flows.arrivals import ingest
+    from warehouse import layout
     from warehouse.ledger import Ledger
 
     people = register.load(folder, settings.programme.zone)
+    if copy := layout.migrate(folder / "lake"):
+        reporter.say(f"lake of an older layout brought up to date; as it was: {copy}")
     ledger = Ledger(folder / "lake")
     edits.note_edits(folder / "lake", settings, people, ledger, actor_code)
     arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)

@@ -9,7 +9,6 @@ Rows that are history are dropped when the table is written anew every COMPACT_F
 
 from __future__ import annotations
 
-import json
 import time
 from collections.abc import Collection, Mapping, Sequence
 from pathlib import Path
@@ -19,11 +18,9 @@ import polars as pl
 from deltalake import CommitProperties, DeltaTable, write_deltalake
 from deltalake.exceptions import DeltaError
 
-from warehouse import schema
-from warehouse.parts import Part, file_sha256, write_whole
-
-LAYOUT = 1
-"""Number of the lake's layout; raised when an older program could no longer read what a newer one wrote."""
+from warehouse import layout, schema
+from warehouse.layout import check_layout, found_layout, note_layout
+from warehouse.parts import Part, file_sha256
 
 COMPACT_FILES = 40
 _PATTERN_CHARACTERS = "*?[]{}%"
@@ -150,10 +147,10 @@ def _in_force(rows: pl.DataFrame) -> pl.DataFrame:
 
 
 def _open_or_create(lake: Path) -> DeltaTable:
-    folder, layout_file = lake / "ledger", lake / "layout.json"
+    folder = lake / "ledger"
     address = _address(folder)
-    if layout_file.exists():
-        _check_layout(layout_file)
+    check_layout(lake)
+    if found_layout(lake) is not None:
         if not DeltaTable.is_deltatable(address):
             raise LedgerError(
                 f"{folder} is gone, but {lake} holds landed parts; restore the ledger folder from a copy, "
@@ -170,7 +167,7 @@ def _open_or_create(lake: Path) -> DeltaTable:
         # The log is the audit trail of every load, so it is never shortened.
         configuration={"delta.enableExpiredLogCleanup": "false"},
     )
-    write_whole(layout_file, json.dumps({"layout": LAYOUT}).encode())
+    note_layout(lake, layout.LAYOUT)
     return delta
 
 
@@ -182,12 +179,6 @@ def _address(folder: Path) -> str:
             f"{folder.resolve()}: {' '.join(found)} in the path would be read as a search pattern; rename that folder"
         )
     return folder.resolve().as_uri()
-
-
-def _check_layout(layout_file: Path) -> None:
-    found = json.loads(layout_file.read_text(encoding="utf-8")).get("layout")
-    if found != LAYOUT:
-        raise LedgerError(f"{layout_file}: layout {found}; this version of burdenline reads layout {LAYOUT}")
 
 
 def verify(lake: Path) -> list[Damage]:

@@ -138,14 +138,6 @@ def test_a_moved_lake_keeps_its_parts(tmp_path: Path) -> None:
     assert ledger.verify(tmp_path / "new") == []
 
 
-def test_a_lake_of_a_newer_layout_is_refused(tmp_path: Path) -> None:
-    """Both layout numbers are named."""
-    Ledger(tmp_path)
-    (tmp_path / "layout.json").write_text('{"layout": 7}')
-    with pytest.raises(LedgerError, match=r"layout 7.*reads layout 1"):
-        Ledger(tmp_path)
-
-
 @pytest.mark.parametrize("name", ["trial [A]", "what?", "100%", "{x}", "a*"])
 def test_a_path_that_is_a_search_pattern_is_refused(tmp_path: Path, name: str) -> None:
     """The characters and the folder are named before anything is written."""
