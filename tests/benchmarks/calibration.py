@@ -1,6 +1,6 @@
 """Does the change statistic keep its promises? Simulated programmes, one line per cell.
 
-    python tests/benchmarks/calibration.py [--patients 1000] [--csv FILE]
+    python -m tests.benchmarks.calibration [--patients 1000] [--csv FILE] [--every N] [--batches 30]
 
 Every patient has hours with a circadian shape, salvos, lost blocks (half of the patients lose their nights in the
 after period), days that vary with a log SD, and in half of the cells the published drift between the periods.
@@ -35,6 +35,7 @@ Floats = NDArray[np.float64]
 SETTLING_D = 7
 HOUR_SD = 0.4  # of ln count within a day
 CIRCADIAN = 1 + 0.6 * np.cos(2 * np.pi * (np.arange(24) - 14) / 24)
+SUCCESS_RATIO = 0.2  # the default limit of success, a fall of 80 %
 NIGHT = np.arange(24) < 8
 
 
@@ -56,6 +57,12 @@ CELLS = [
         [1.0, 0.5, 0.2, 0.05],
     )
 ]  # fmt: skip
+
+RELIABILITY_CELLS = [
+    Cell(5, 7, 0.6, 60.0, False, 1.0),
+    Cell(3, 3, 0.6, 60.0, False, 1.0),
+    Cell(5, 7, 0.6, 1.0, False, 1.0),
+]
 
 
 def days_of(cell: Cell) -> tuple[Floats, NDArray[np.bool_]]:
@@ -145,18 +152,27 @@ def _marks(cell: Cell, result: dict[str, Any], patients: int) -> list[str]:
     return marks
 
 
-def reliability(patients: int, seed: int) -> list[tuple[float, float, int]]:
+def reliability(cell: Cell, batches: int, patients: int) -> list[tuple[float, float, int]]:
     """Stated probability of success against its frequency in tenths, true ln ratios uniform; (stated, true, n)."""
-    rng = np.random.default_rng(seed)
-    cell = Cell(5, 7, 0.6, 60.0, False, 1.0)
-    ratio = np.exp(rng.uniform(np.log(0.01), np.log(2.0), patients))
-    stated = simulate(cell, patients, rng, ratio).success_probability_pct
-    tenth = np.minimum((stated // 10).astype(int), 9)
-    return [
-        (float(stated[tenth == k].mean()), 100 * float(np.mean(ratio[tenth == k] < 0.2)), int((tenth == k).sum()))
-        for k in range(10)
-        if (tenth == k).any()
-    ]
+    stated, succeeded = [], []
+    for seed in range(batches):
+        rng = np.random.default_rng(seed)
+        ratio = np.exp(rng.uniform(np.log(0.01), np.log(2.0), patients))
+        stated.append(simulate(cell, patients, rng, ratio).success_probability_pct)
+        succeeded.append(ratio < SUCCESS_RATIO)
+    said, true = np.concatenate(stated), np.concatenate(succeeded)
+    tenth = np.minimum((said // 10).astype(int), 9)
+    tenths = [tenth == k for k in range(10) if (tenth == k).any()]
+    return [(float(said[of].mean()), 100 * float(true[of].mean()), int(of.sum())) for of in tenths]
+
+
+def print_reliability(batches: int, patients: int) -> None:
+    """Print the tenths of every cell of RELIABILITY_CELLS; those off by more than the promise are marked."""
+    for cell in RELIABILITY_CELLS:
+        print(f"success probability, {cell.before_d} and {cell.after_d} days, {cell.per_h:g} per hour: stated, true")
+        for stated, true, n in reliability(cell, batches, patients):
+            mark = "off" if abs(stated - true) > 5 else ""
+            print(f"{stated:6.1f} {true:6.1f} {n:7} patients  {mark}", flush=True)
 
 
 def main() -> int:
@@ -164,6 +180,7 @@ def main() -> int:
     parser.add_argument("--patients", type=int, default=1000, help="patients per cell")
     parser.add_argument("--csv", type=Path, help="write the table there as well")
     parser.add_argument("--every", type=int, default=1, help="run every n-th cell only")
+    parser.add_argument("--batches", type=int, default=30, help="programmes for the probability of success")
     given = parser.parse_args()
     print("before after day_sd  per_h drift ratio | cover%  fell% ideal%  best%  sd limit%  outside the promise")
     rows = []
@@ -178,9 +195,7 @@ def main() -> int:
         )
     for mark in ("under", "over", "false_falls", "weak"):
         print(f"{mark}: {sum(mark in row['mark'].split() for row in rows)} of {len(rows)} cells")
-    print("success probability: stated %, true %, patients")
-    for stated, true, n in reliability(4 * given.patients, 1):
-        print(f"{stated:6.1f} {true:6.1f} {n:6}")
+    print_reliability(given.batches, given.patients)
     if given.csv:
         with given.csv.open("w", newline="") as file:
             writer = csv.DictWriter(file, rows[0])

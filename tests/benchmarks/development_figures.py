@@ -24,6 +24,7 @@ KEPT = (
     "noise",
     "reliability",
 )
+OF_RECORD = ("record", "has_af", "v_burden_found_pct", "v_burden_expert_pct")
 
 
 def main(reference: Path) -> None:
@@ -35,6 +36,7 @@ def main(reference: Path) -> None:
         "data": "22 records of the MIT-BIH Arrhythmia Database (Moody and Mark 2001), first signal",
         "record_count": len(report["records"]),
         **{name: report[name] for name in KEPT},
+        "v_burdens": [{name: row[name] for name in OF_RECORD} for row in report["records"]],
     }
     TARGET.write_text(json.dumps(figures, indent=1) + "\n", encoding="utf-8")
 
