@@ -46,7 +46,9 @@ def _thaw(asked: argparse.Namespace) -> int:
 
 def _export_arguments(parser: argparse.ArgumentParser) -> None:
     folder_argument(parser)
-    parser.add_argument("what", metavar="WHAT", help="csv, parquet, excel, fhir, sdtm, sdtm-xpt, atr or edf-events")
+    parser.add_argument(
+        "what", metavar="WHAT", help="csv, parquet, excel, fhir, sdtm, sdtm-xpt, atr, edf-events or strips"
+    )
     parser.add_argument("--to", metavar="PATH", type=Path, required=True, help="file or folder to write")
     parser.add_argument("--cut", metavar="NAME", default="", help="export a frozen cut, not the standing publication")
     parser.add_argument("--study", metavar="CODE", default="STUDY", help="study code in SDTM-like rows")

@@ -3,6 +3,8 @@
 import json
 import shutil
 from datetime import datetime
+from pathlib import Path
+from xml.etree import ElementTree
 
 import polars as pl
 import pytest
@@ -10,8 +12,11 @@ import sleepecg
 
 from flows.cli import main
 from flows.edf_write import EdfHeader, Piece, write_edf
+from warehouse.cautions import CAUTIONS
 from warehouse.ledger import Ledger
 from warehouse.published import Published
+
+SVG = {"svg": "http://www.w3.org/2000/svg"}
 
 
 @pytest.fixture
@@ -116,12 +121,34 @@ def test_a_wear_day_can_be_traced_to_its_delivery(capsys, coast):
     assert call(capsys, "trace", coast, "--patient", "P-1", "--day", "2026-03-09")[0] == 1
 
 
-@pytest.mark.parametrize("what", ["csv", "parquet", "excel", "fhir", "sdtm", "sdtm-xpt", "atr", "edf-events"])
+@pytest.mark.parametrize("what", ["csv", "parquet", "excel", "fhir", "sdtm", "sdtm-xpt", "atr", "edf-events", "strips"])
 def test_every_export_writes_files(capsys, coast, tmp_path, what):
     """Each export of the catalogue writes at least one file and names it."""
     code, out = call(capsys, "export", coast, what, "--to", tmp_path / f"out.{what}")
     assert code == 0
     assert out.splitlines()
+
+
+def test_strips_are_drawings_that_say_what_they_are(capsys, coast, tmp_path):
+    """Every strip of a cut becomes an SVG to paper scale with cut, fingerprint and all cautions in its text."""
+    call(capsys, "freeze", coast, "visit-1")
+    code, out = call(capsys, "export", coast, "strips", "--to", tmp_path / "strips", "--cut", "visit-1")
+    strips = Published(coast / "published").table("strips")
+    files = [Path(line) for line in out.splitlines()]
+    assert code == 0
+    assert len(files) == strips.height > 0
+    for file, strip in zip(files, strips.iter_rows(named=True), strict=True):
+        drawing = ElementTree.parse(file).getroot()
+        told = drawing.findtext("svg:desc", namespaces=SVG)
+        assert "visit-1" in told
+        assert strip["fingerprint"] in told
+        assert all(caution in told for caution in CAUTIONS)
+        shown = " ".join(drawing.itertext())
+        assert strip["recording_id"] in shown
+        assert [text.text for text in drawing.findall("svg:svg/svg:text", SVG)] == strip["beat_classes"]
+        box = drawing.find("svg:svg", SVG)
+        # 25 mm/s in units of 0.1 mm: common practice, no source
+        assert int(box.get("width")) == round(len(strip["samples_mv"]) / strip["fs_hz"] * 250)
 
 
 def test_tidy_keeps_all_that_is_shown_or_frozen(capsys, coast):
