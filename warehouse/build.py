@@ -184,15 +184,17 @@ class TrendBuild:
         self.grounds = grounds(
             self.parts,
             self._register,
-            over_read=[
-                row[0] for row in self.connection.sql("SELECT DISTINCT recording_id FROM lake.reviews").fetchall()
-            ],
+            over_read=self._over_read(),
             zone_rules=zone_rules(self._register["patients"]["zone"], *years),
             common=self._common_grounds(),
         )
         kept = kept_patients(self._standing, self.grounds)
         offer(self.connection, self._standing, kept)
         self._keeps_patients = bool(kept)
+
+    def _over_read(self) -> list[str]:
+        named = self.connection.sql("SELECT recording_id FROM lake.reviews UNION SELECT recording_id FROM lake.decisions")
+        return [recording_id for (recording_id,) in named.fetchall()]
 
     def _common_grounds(self) -> Iterator[str]:
         yield from (duckdb.__version__, self.fingerprint)
