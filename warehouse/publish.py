@@ -25,7 +25,7 @@ import duckdb
 import polars as pl
 
 from warehouse import schema
-from warehouse.build import READ_IN_PLACE, ArrowStream, TrendBuild, column_definitions, parts_query
+from warehouse.build import READ_IN_PLACE, TrendBuild, column_definitions, parts_query
 from warehouse.database import open_database
 from warehouse.kept import GROUNDS
 from warehouse.parts import file_sha256, write_whole
@@ -136,10 +136,8 @@ def _write_database(build: TrendBuild, published: Path, path: Path) -> None:
         else:
             connection.execute(f"CREATE TABLE {name} ({column_definitions(table)})")
             if name not in READ_IN_PLACE:
-                rows = pl.read_parquet(path.parent / "tables" / f"{name}.parquet", glob=False, hive_partitioning=False)
-                connection.register("arriving", ArrowStream(rows))
-                connection.execute(f"INSERT INTO {name} BY NAME FROM arriving")
-                connection.unregister("arriving")
+                rows = _quoted(str(path.parent / "tables" / f"{name}.parquet"))
+                connection.execute(f"INSERT INTO {name} BY NAME FROM read_parquet({rows}, hive_partitioning = false)")
         connection.execute(_comments(table, "VIEW" if paths else "TABLE"))
     connection.execute("COMMIT")
     connection.execute("USE memory")
