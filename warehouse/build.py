@@ -29,7 +29,10 @@ from warehouse.published import Published
 from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets, zone_rules
 
 MODELS: dict[str, tuple[str, ...]] = {
-    "staging": ("patients", "therapies", "recording_wears", "decided_beats", "counted_quarters", "patient_quarters"),
+    "staging": (
+        "patients", "therapies", "recording_wears", "decided_beats", "rejected_episodes", "read_quarters",
+        "counted_quarters", "patient_quarters",
+    ),
     "intermediate": ("hours", "recording_tallies", "local_hours", "burden_intervals", "wear_days", "period_spans", "periods",
         "family_days", "family_shapes",
     ),

@@ -322,6 +322,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("reader_codes", "VARCHAR", "", "Codes of all readers, separated by blanks."),
     ("decided_beats", "BIGINT", "beats", "Analysable beats whose class an over-reader decided; the counts hold it."),
     ("unmet_decisions", "BIGINT", "beats", "Decisions without a published beat within 150 ms."),
+    ("rejected_episodes", "BIGINT", "", "Runs and pauses that their readers reject; counts of runs and pauses hold it."),
     ("automatic_v_beats", "BIGINT", "beats", "Analysable beats found as V automatically, before any decision."),
     ("automatic_all_beats", "BIGINT", "beats", "Analysable beats found automatically, before any decision."),
     ("automatic_v_burden_pct", "DOUBLE", "%", "Ventricular burden found automatically, before any decision."),
@@ -667,7 +668,8 @@ PUBLISHED: dict[str, Table] = _tables(
     LAKE["reviews"],
     Table(
         "reviewed", "one row per recording that an over-reader decided on", ("recording_id",),
-        ("recording_id", "patient_code", "reader_codes", "decided_beats", "unmet_decisions", "decided_v_pct",
+        ("recording_id", "patient_code", "reader_codes", "decided_beats", "unmet_decisions", "rejected_episodes",
+         "decided_v_pct",
          "automatic_v_beats", "automatic_all_beats", "automatic_v_burden_pct", "v_beats", "all_beats", "v_burden_pct"),
     ),
     Table(

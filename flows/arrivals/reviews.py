@@ -148,9 +148,10 @@ def reviews(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
 
     Accepted normal beats are left out: they are most of a recording and change nothing.
     """
-    by_family = {row["family"]: row["decision"] for row in content["families"] if row["decision"]}
     families = pl.DataFrame(
-        list(by_family.items()), schema={"family": beats.schema["family"], "of_family": pl.String}, orient="row"
+        list(_of_families(content).items()),
+        schema={"family": beats.schema["family"], "of_family": pl.String},
+        orient="row",
     )
     by_beat = _single(content).with_columns(
         of_beat=pl.Series([row["decision"] for row in content["beats"]], dtype=pl.String)
@@ -166,6 +167,20 @@ def reviews(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
     )
     who = {name: pl.lit(value) for name, value in _who(content).items()}
     return decided.select("segment", "sample", "beat_utc", "decision", automatic_class="beat_class").with_columns(**who)
+
+
+def _of_families(content: dict[str, Any]) -> dict[int, str]:
+    """Return what is decided of each family that has a decision, its own or that of the family it looks like.
+
+    A family that holds different shapes has none: no single class would be right for its beats.
+    """
+    rows = {row["family"]: row for row in content["families"] if not row["is_mixed"]}
+    decided = {family: row["decision"] for family, row in rows.items() if row["decision"]}
+    for family, row in rows.items():
+        alike = rows.get(row["same_as"])
+        if not row["decision"] and alike and alike["decision"]:
+            decided[family] = alike["automatic"] if alike["decision"] == "accept" else alike["decision"]
+    return decided
 
 
 def _who(content: dict[str, Any]) -> dict[str, Any]:

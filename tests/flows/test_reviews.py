@@ -88,6 +88,21 @@ def test_a_shape_remark_decides_no_class():
     assert (row["decision"], row["is_mixed"], row["same_as_family"]) == (None, True, 2)
 
 
+def test_a_family_of_the_same_shape_takes_the_class_decided_for_the_other():
+    """Merging gives the other family's class, accepted or relabelled; a decision of its own goes before it."""
+    merged = family(2, None, "N") | {"same_as": 1}
+    assert classes(CONTENT | {"families": [family(1, "S"), merged]}) == {100: "S", 200: "S", 400: "S"}
+    assert classes(CONTENT | {"families": [family(1, "accept", "F"), merged]})[400] == "F"
+    assert classes(CONTENT | {"families": [family(1, "S"), merged | {"decision": "N"}]})[400] == "N"
+    assert 400 not in classes(CONTENT | {"families": [family(1, None), merged]})
+
+
+def test_a_family_of_different_shapes_stays_as_found():
+    """No class is applied to a family that is to be split; beats relabelled one by one count."""
+    mixed = family(1, "S") | {"is_mixed": True}
+    assert classes(CONTENT | {"families": [mixed], "beats": [beat(200, "noise")]}) == {200: "noise"}
+
+
 @pytest.mark.parametrize(
     ("change", "code"),
     [

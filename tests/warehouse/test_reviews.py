@@ -130,6 +130,64 @@ def test_decisions_follow_beats_that_are_renumbered(read: Any) -> None:
     assert (reviewed(read)["decided_beats"], reviewed(read)["unmet_decisions"]) == (2, 0)
 
 
+def runs(lake: Any, decided: dict[str, list[str]]) -> dict[str, Any]:
+    """Land two runs and a pause of the recording and what each reader says of them; returns what is counted."""
+    found = [("run", 0, 0, 3, 140.0, 1.2), ("run", 15000, 60, 9, 170.0, 35.0), ("pause", 30000, 120, 2, None, 3.4)]
+    row = {"recording_id": "R1", "fingerprint": "f1", "segment": 0}
+    episodes = [
+        row
+        | {"episode_kind": kind, "first_sample": sample, "start_utc": START + timedelta(seconds=after_s)}
+        | {"beat_count": beats, "rate_bpm": rate_bpm, "duration_s": length_s}
+        for kind, sample, after_s, beats, rate_bpm, length_s in found
+    ]
+    lake.land("episodes", "R1", episodes, "f1")
+    for reader, decisions in decided.items():
+        who = {"recording_id": "R1", "read_fingerprint": "f0", "reader_code": reader, "reviewed_utc": NOON}
+        rows = [
+            who
+            | {
+                "delivery_id": f"D{reader}",
+                "decision_order": order,
+                "decision_subject": "episode",
+                "decision": decision,
+            }
+            | {"episode_kind": found[order][0], "segment": 0, "sample": found[order][1] + 20}
+            for order, decision in enumerate(decisions)
+        ]
+        lake.land("decisions", f"D{reader}", rows)
+    with lake.built() as build:
+        assert build.check() == []
+        (day,) = build.frame("wear_days").rows(named=True)
+        listed = set(build.frame("attention")["attention_code"])
+        rejected = build.frame("reviewed")["rejected_episodes"].item()
+    names = ("runs", "pauses", "longest_run_beats", "fastest_run_bpm", "longest_pause_ms")
+    return {name: day[name] for name in names} | {"listed": listed, "rejected": rejected}
+
+
+@pytest.fixture
+def with_runs(lake: Any) -> Any:
+    """A recording in whose only quarter hour two runs and a pause were counted."""
+    lake.patient("P1")
+    tally = {"runs": 2, "pauses": 1, "longest_run_beats": 9, "fastest_run_bpm": 170.0, "longest_pause_ms": 3400.0}
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-01T00:15", v_beats=0, **tally)
+    return lake
+
+
+def test_a_rejected_run_is_not_counted(with_runs: Any) -> None:
+    """Counts, longest and fastest run and attention leave out what a reader rejects, also under another detector."""
+    assert runs(with_runs, {"A": ["accept", "reject", "reject"]}) == {
+        "runs": 1, "pauses": 0, "longest_run_beats": 3, "fastest_run_bpm": 140.0, "longest_pause_ms": None,
+        "listed": {"ventricular_run", "fast_run"}, "rejected": 2,
+    }  # fmt: skip
+
+
+def test_a_run_on_which_readers_differ_stays(with_runs: Any) -> None:
+    """Only what every reader of it rejects is left out."""
+    found = runs(with_runs, {"A": ["reject", "reject"], "B": ["reject", "accept"]})
+    assert (found["runs"], found["longest_run_beats"], found["rejected"]) == (1, 9, 1)
+    assert "sustained_run" in found["listed"]
+
+
 def families(lake: Any, reader: str, decided: dict[int, tuple[str, int]]) -> None:
     """Land decisions on whole families: number -> class and beats."""
     rows = [

@@ -13,6 +13,7 @@ sustained AS (
         episode.rate_bpm,
         (episode.start_utc + to_seconds(placed.offset_s))::DATE AS local_day
     FROM episodes AS episode
+    ANTI JOIN rejected_episodes USING (recording_id, episode_kind, segment, first_sample)
     CROSS JOIN programme.settings AS settings
     INNER JOIN placed
         ON placed.recording_id = episode.recording_id

@@ -24,7 +24,9 @@ met AS (
         count(*) FILTER (WHERE is_analysable AND beat_class = 'V') AS v_beats
     FROM decided_beats
     GROUP BY recording_id
-)
+),
+
+rejected AS (SELECT recording_id, count(*) AS episodes FROM rejected_episodes GROUP BY recording_id)
 
 SELECT
     recordings.recording_id,
@@ -32,6 +34,7 @@ SELECT
     reader_codes,
     decided_beats,
     greatest(coalesce(decisions.beats, 0) - coalesce(met.beats, 0), 0) AS unmet_decisions,
+    coalesce(rejected.episodes, 0) AS rejected_episodes,
     100 * coalesce(met.v_beats, 0) / nullif(automatic_v_beats, 0) AS decided_v_pct,
     automatic_v_beats,
     automatic_all_beats,
@@ -44,3 +47,4 @@ INNER JOIN recordings USING (recording_id)
 LEFT JOIN automatic USING (recording_id)
 LEFT JOIN decisions USING (recording_id)
 LEFT JOIN met USING (recording_id)
+LEFT JOIN rejected USING (recording_id)

@@ -1,6 +1,6 @@
 -- one row per recording and quarter hour, beats counted by the class that holds; key recording_id, quarter_utc
--- Decisions of over-readers move beats between the classes; what they call noise is no beat. Couplets, runs and rates
--- stay as found automatically. Seconds become decimals, so that no sum of them depends on the order of the rows.
+-- Decisions of over-readers move beats between the classes; what they call noise is no beat. Runs and pauses that
+-- they reject are not counted; couplets and rates stay as found automatically. Seconds become decimals, so that no sum of them depends on the order of the rows.
 WITH moved AS (
     SELECT
         recording_id,
@@ -31,8 +31,15 @@ SELECT
         rr_sum_s::DECIMAL(18, 6) AS rr_sum_s,
         bigeminy_s::DECIMAL(18, 6) AS bigeminy_s,
         trigeminy_s::DECIMAL(18, 6) AS trigeminy_s,
-        irregular_s::DECIMAL(18, 6) AS irregular_s
+        irregular_s::DECIMAL(18, 6) AS irregular_s,
+        CASE WHEN was_read THEN read_quarters.runs ELSE quarter.runs END AS runs,
+        CASE WHEN was_read THEN read_quarters.sv_runs ELSE quarter.sv_runs END AS sv_runs,
+        CASE WHEN was_read THEN read_quarters.pauses ELSE quarter.pauses END AS pauses,
+        CASE WHEN was_read THEN read_quarters.longest_run_beats ELSE quarter.longest_run_beats END AS longest_run_beats,
+        CASE WHEN was_read THEN read_quarters.fastest_run_bpm ELSE quarter.fastest_run_bpm END AS fastest_run_bpm,
+        CASE WHEN was_read THEN read_quarters.longest_pause_ms ELSE quarter.longest_pause_ms END AS longest_pause_ms
     ),
     coalesce(decided_beats, 0) AS decided_beats
 FROM lake.quarter_hours AS quarter
 LEFT JOIN moved USING (recording_id, quarter_utc)
+LEFT JOIN read_quarters USING (recording_id, quarter_utc)
