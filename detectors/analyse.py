@@ -97,8 +97,8 @@ def analyse_recording(
     """
     scale = chunks.Scale(signal.check_rate(fs_hz), mv_per_count, count_at_zero_mv, rails, missing_count)
     chunks.check_scale(scale)
-    gathered = gather(segments, scale, chunk_s, progress or (lambda n_samples: None))
-    return conclude(gathered, Options(bigeminy_min_cycles, trigeminy_min_cycles, pause_ms, full_pause_tolerance_pct))
+    options = Options(bigeminy_min_cycles, trigeminy_min_cycles, pause_ms, full_pause_tolerance_pct)
+    return conclude(gather(segments, scale, chunk_s, progress or (lambda n_samples: None)), options)
 
 
 def gather(
@@ -106,39 +106,51 @@ def gather(
 ) -> Gathered:
     """Read all segments once: beats with their families, and the quality of the time around them."""
     book = FamilyBook()
-    parts: list[beats.Found] = []
-    seen: list[quality.Seen] = []
-    for number, segment in enumerate(segments):
-        waiting: list[chunks.ChunkBeats] = []
-        blocks: list[chunks.Blocks] = []
-        done, first_part = 0, len(parts)
-        for begin, end in chunks.cuts(segment.n_samples, scale.fs_hz, chunk_s):
-            found, quiet = chunks.read_chunk(segment, begin, end, scale)
-            waiting = _enter_full_batches(book, parts, number, [*waiting, found])
-            blocks.append(quiet)
-            now = min(round(end * scale.fs_hz / signal.WORKING_FS_HZ), segment.n_samples)
-            progress(now - done)
-            done = now
-        progress(segment.n_samples - done)
-        parts.extend(_enter(book, number, part) for part in waiting if part.working.size)
-        working = np.concatenate([np.empty(0), *(part.working for part in parts[first_part:])])
-        likeness = np.concatenate([np.empty(0, dtype=np.float32), *(part.likeness for part in parts[first_part:])])
-        seen.append(quality.look(segment.n_samples, chunks.join_blocks(blocks), working, likeness))
+    table = beats.Growing()
+    seen = [_read(segment, n, scale, chunk_s, book, table, progress) for n, segment in enumerate(segments)]
     bad = quality.windows(seen, scale.fs_hz)
-    every = beats.join(parts)
-    parts.clear()
     lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
+    del seen
+    every = table.since(0)
     artefact = beats.is_artefact(every, timing_of(every, bad, lengths, scale.fs_hz)[1])
     return Gathered(every.keep(~artefact), book, bad, lengths, scale.fs_hz)
 
 
+def _read(
+    segment: Segment,
+    number: int,
+    scale: chunks.Scale,
+    chunk_s: float,
+    book: FamilyBook,
+    table: beats.Growing,
+    progress: Callable[[int], None],
+) -> quality.Seen:
+    """Read a segment chunk by chunk: its beats go into `book` and `table`, what quality needs is returned."""
+    waiting: list[chunks.ChunkBeats] = []
+    blocks: list[chunks.Blocks] = []
+    done, first_beat = 0, table.n_beats
+    for begin, end in chunks.cuts(segment.n_samples, scale.fs_hz, chunk_s):
+        found, quiet = chunks.read_chunk(segment, begin, end, scale)
+        waiting = _enter_full_batches(book, table, number, [*waiting, found])
+        blocks.append(quiet)
+        now = min(round(end * scale.fs_hz / signal.WORKING_FS_HZ), segment.n_samples)
+        progress(now - done)
+        done = now
+    progress(segment.n_samples - done)
+    for rest in waiting:
+        if rest.working.size:
+            table.append(_enter(book, number, rest))
+    mine = table.since(first_beat)
+    return quality.look(segment.n_samples, chunks.join_blocks(blocks), mine.working, mine.likeness)
+
+
 def _enter_full_batches(
-    book: FamilyBook, parts: list[beats.Found], segment: int, waiting: list[chunks.ChunkBeats]
+    book: FamilyBook, table: beats.Growing, segment: int, waiting: list[chunks.ChunkBeats]
 ) -> list[chunks.ChunkBeats]:
     """Enter the waiting beats by whole batches and return the rest, so that batches do not depend on the cuts."""
     beats_now = chunks.join(waiting)
     while beats_now.working.size >= BATCH_BEATS:
-        parts.append(_enter(book, segment, beats_now.part(slice(BATCH_BEATS))))
+        table.append(_enter(book, segment, beats_now.part(slice(BATCH_BEATS))))
         beats_now = beats_now.part(slice(BATCH_BEATS, None))
     return [beats_now]
 
@@ -167,7 +179,8 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
     widths = features.qrs_width_ms(gathered.book.shape_mv)
     table = beats.beat_table(found, sample, timing, labels, widths, is_analysable, options.full_pause_tolerance_pct)
     analysable_s = quality.analysable_s(int(lengths.sum()), bad, fs_hz)
-    groups = beats.family_table(table, gathered.book, labels, widths)
+    groups = beats.family_table(table, gathered.book, labels.family_class, widths)
+    del gathered, found, timing, labels  # what the table does not share goes before the next step needs room
     return Analysis(
         table,
         groups,
@@ -208,13 +221,14 @@ def timing_of(
     np.clip(sample, 0, lengths[found.segment] - 1, out=sample)
     gap = quality.has_gap_before(bad, found.segment, sample)
     before, after = rhythm.rr_intervals_ms(found.segment, position, fs_hz, gap)
+    del position
     return sample, classify.Timing(before, after, rhythm.usual_rr_ms(before, after))
 
 
 def _episodes(table: Beats, fs_hz: float, options: Options) -> Episodes:
-    good = np.flatnonzero(table.is_analysable)
-    is_neighbour = np.diff(good, prepend=-2) == 1
-    before_ms = np.where(is_neighbour, table.rr_before_ms[good], np.float32(np.nan))
+    good = table.is_analysable
+    follows_good = np.concatenate([[False], good[:-1]]) if good.size else good
+    before_ms = np.where(follows_good, table.rr_before_ms, np.float32(np.nan))[good]
     irregular = rhythm.irregularity(before_ms, table.beat_class[good] == "N")
     return episodes.find_episodes(
         episodes.Rhythm(table.segment[good], table.sample[good], table.beat_class[good], before_ms, irregular),

@@ -12,6 +12,7 @@ from detectors.classify import S_EARLY, Labels, Timing
 from detectors.families import FamilyBook, Membership
 from detectors.results import Beats, Families
 
+FIRST_ROOM = 4096  # beats
 RARE = 3  # beats of a family that may be an artefact
 
 
@@ -33,16 +34,34 @@ class Found(NamedTuple):
         return Membership(self.family, self.nearest, self.likeness)
 
     def keep(self, chosen: NDArray[np.bool_]) -> Found:
-        """The chosen beats only."""
-        return Found._make(column[chosen] for column in self)
+        """The chosen beats only; the columns are closed up in place, which spares a second table."""
+        rows = np.flatnonzero(chosen)
+        for column in self:
+            column[: rows.size] = column[rows]
+        return Found._make(column[: rows.size] for column in self)
 
 
-def join(parts: list[Found]) -> Found:
-    """One table of all batches."""
-    kinds = ("int16", "float64", "float32", "int16", "int16", "float32", "float32", "float32")
-    if not parts:
-        return Found(*(np.empty(0, dtype=kind) for kind in kinds))
-    return Found(*(np.concatenate(column) for column in zip(*parts, strict=True)))
+class Growing:
+    """Found beats batch by batch, in columns that double when they are full; no batch is kept beside them."""
+
+    def __init__(self) -> None:
+        kinds = ("int16", "float64", "float32", "int16", "int16", "float32", "float32", "float32")
+        self.n_beats = 0
+        self._columns = [np.empty(FIRST_ROOM, dtype=kind) for kind in kinds]
+
+    def append(self, batch: Found) -> None:
+        """Copy a batch behind the beats so far."""
+        begin, self.n_beats = self.n_beats, self.n_beats + batch.working.size
+        for number, values in enumerate(batch):
+            if self.n_beats > self._columns[number].size:
+                larger = np.empty(2 * self.n_beats, dtype=self._columns[number].dtype)
+                larger[:begin] = self._columns[number][:begin]
+                self._columns[number] = larger
+            self._columns[number][begin : self.n_beats] = values
+
+    def since(self, first: int) -> Found:
+        """All beats from number `first` on, as views that the next batch may leave behind."""
+        return Found._make(column[first : self.n_beats] for column in self._columns)
 
 
 def is_artefact(found: Found, timing: Timing) -> NDArray[np.bool_]:
@@ -101,7 +120,9 @@ def _is_alone(is_ectopic: NDArray[np.bool_], is_premature: NDArray[np.bool_]) ->
     return is_premature & ~around[:-2] & ~around[2:]
 
 
-def family_table(beats: Beats, book: FamilyBook, labels: Labels, family_width_ms: NDArray[np.float32]) -> Families:
+def family_table(
+    beats: Beats, book: FamilyBook, family_class: NDArray[np.str_], family_width_ms: NDArray[np.float32]
+) -> Families:
     """The table of families that analysis returns."""
     n_families = book.n_beats.size
     order = np.argsort(beats.family, kind="stable")
@@ -117,7 +138,7 @@ def family_table(beats: Beats, book: FamilyBook, labels: Labels, family_width_ms
         if coupling.size:
             rows[row, 3:] = coupling.mean(), np.subtract(*np.percentile(coupling, [90, 10]))
     return Families(
-        family_class=labels.family_class,
+        family_class=family_class,
         beat_count=rows[:, 0].astype(np.int64),
         share_pct=100 * rows[:, 1] / max(np.count_nonzero(beats.is_analysable), 1),
         qrs_width_ms=family_width_ms,

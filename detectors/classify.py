@@ -62,7 +62,7 @@ class Labels(NamedTuple):
     """Class and log odds of being ventricular per beat, class per family."""
 
     beat_class: NDArray[np.str_]
-    odds: NDArray[np.float64]
+    odds: NDArray[np.float32]
     family_class: NDArray[np.str_]
 
 
@@ -99,13 +99,15 @@ def classify(
     """Label all beats of a recording from their timing, family and width, and the families' averaged shapes."""
     n_families = family_shape_mv.shape[0]
     if n_families == 0:
-        return Labels(np.full(member.family.size, "Q"), np.zeros(member.family.size), np.empty(0, dtype="<U1"))
+        return Labels(
+            np.full(member.family.size, "Q"), np.zeros(member.family.size, np.float32), np.empty(0, dtype="<U1")
+        )
     habits = family_habits(timing, member, n_families)
     shapes = compare_shapes(habits, family_shape_mv)
     family_odds = judge_families(family_terms(habits, shapes), habits, shapes, weights)
     family_class = np.where(family_odds > 0, "V", "N")
     family_class[_fusions(family_odds, habits, shapes, family_shape_mv)] = "F"
-    odds = family_odds[member.family]
+    odds = family_odds.astype(np.float32)[member.family]
     loose = np.flatnonzero(member.family < 0)
     odds[loose] = _loose_odds(timing, member, loose, habits.early[shapes.normal[0]], family_odds)
     is_v = odds > 0

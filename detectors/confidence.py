@@ -19,24 +19,21 @@ FUSION = 0.70  # one record only: our judgement
 
 
 def probability(
-    beat_class: NDArray[np.str_], odds: NDArray[np.float64], before: NDArray[np.float32]
+    beat_class: NDArray[np.str_], odds: NDArray[np.floating], before: NDArray[np.float32]
 ) -> NDArray[np.float32]:
     """Estimated probability that each class is right, shape (n_beats,).
 
     `odds` are log odds of being ventricular, `before` the RR interval before over the usual one, NaN after a gap.
     """
-    is_sure = (before < CLEARLY_EARLY) | (before > IN_A_STRETCH)
-    return np.select(
-        [beat_class == "V", beat_class == "N", beat_class == "S", beat_class == "F"],
-        [
-            _logistic(VENTRICULAR[0] + VENTRICULAR[1] * odds),
-            _logistic(NORMAL[0] - NORMAL[1] * odds),
-            np.where(is_sure, SUPRAVENTRICULAR, BARELY_EARLY),
-            FUSION,
-        ],
-        0.5,
-    ).astype(np.float32)
+    out = np.full(beat_class.size, 0.5, dtype=np.float32)
+    is_v, is_n, is_s = (beat_class == name for name in "VNS")
+    out[is_v] = _logistic(VENTRICULAR[0] + VENTRICULAR[1] * odds[is_v])
+    out[is_n] = _logistic(NORMAL[0] - NORMAL[1] * odds[is_n])
+    is_sure = (before[is_s] < CLEARLY_EARLY) | (before[is_s] > IN_A_STRETCH)
+    out[is_s] = np.where(is_sure, SUPRAVENTRICULAR, BARELY_EARLY)
+    out[beat_class == "F"] = FUSION
+    return out
 
 
-def _logistic(log_odds: NDArray[np.float64]) -> NDArray[np.float64]:
+def _logistic(log_odds: NDArray[np.floating]) -> NDArray[np.floating]:
     return 1 / (1 + np.exp(-log_odds))

@@ -258,9 +258,13 @@ def is_interloper(
     """
     if energy.size < 3:
         return np.zeros(energy.size, dtype=bool)
-    weaker_neighbour = np.minimum(np.append(energy[1:], energy[-2]), np.insert(energy[:-1], 0, energy[1]))
-    share = energy / weaker_neighbour
-    around = (before_ms + after_ms) / usual_ms
-    between = (around > 0.85) & (around < 1.2)
-    on_time = (np.abs(before_ms / usual_ms - 1) < 0.15) & (np.abs(after_ms / usual_ms - 1) < 0.15)
-    return is_rare & (((share < FAR_WEAKER) & ~on_time) | (between & (share < WEAKER)))
+    rare = np.flatnonzero(is_rare)
+    last = energy.size - 1
+    previous, following = np.where(rare > 0, rare - 1, 1), np.where(rare < last, rare + 1, last - 1)
+    share = energy[rare] / np.minimum(energy[previous], energy[following])
+    before, after = before_ms[rare] / usual_ms[rare], after_ms[rare] / usual_ms[rare]
+    between = (before + after > 0.85) & (before + after < 1.2)
+    on_time = (np.abs(before - 1) < 0.15) & (np.abs(after - 1) < 0.15)
+    found = np.zeros(energy.size, dtype=bool)
+    found[rare] = ((share < FAR_WEAKER) & ~on_time) | (between & (share < WEAKER))
+    return found

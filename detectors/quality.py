@@ -46,7 +46,9 @@ def look(n_samples: int, blocks: Blocks, working: NDArray[np.float64], likeness:
     The best, not the mean: noise moves every beat, an ectopic or a fused one only itself.
     """
     n_blocks = blocks.noise.size
-    block = np.minimum(working // qrs.BLOCK, n_blocks - 1).astype(np.int64)
+    block = working.astype(np.int64)
+    block //= qrs.BLOCK
+    np.minimum(block, n_blocks - 1, out=block)
     distance = np.full(n_blocks, np.inf)
     np.minimum.at(distance, block, np.minimum(1 - likeness, DISTANCE_CAP))
     return Seen(n_samples, blocks, np.where(np.isinf(distance), np.nan, distance))

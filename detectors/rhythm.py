@@ -64,7 +64,8 @@ def _usual(
 ) -> NDArray[np.float32]:
     if before_ms.size == 0:
         return before_ms
-    rr_ms = (before_ms + after_ms) / 2
+    rr_ms = before_ms + after_ms
+    rr_ms *= np.float32(0.5)
     if not is_left_out.all():
         rr_ms[is_left_out] = np.nan
     coarse = _median_of_known(rr_ms)
@@ -150,10 +151,10 @@ def fast_stretches(
     jump = np.nan_to_num(before_ms[after] / before_ms[np.maximum(after - 1, 0)], nan=0.0) > 1.15
     much_faster = total / length < MUCH_FASTER * reference_ms[onset]
     counts = (length <= RAMP_BEATS) | much_faster | jump
-    change = np.zeros(before_ms.size + 1, dtype=np.int64)
+    change = np.zeros(before_ms.size + 1, dtype=np.int32)
     np.add.at(change, onset[counts], 1)
     np.add.at(change, (onset + length)[counts], -1)
-    return np.cumsum(change[:-1]) > 0
+    return np.cumsum(change[:-1], dtype=np.int32) > 0
 
 
 def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_beats: int = 24) -> NDArray[np.float32]:
@@ -171,7 +172,10 @@ def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_
     counted[1:] = is_known[1:] & is_known[:-1]
     jump[1:] = np.abs(np.diff(rr_ms)) > 0.08 * np.minimum(rr_ms[1:], rr_ms[:-1])
     seen = _near_sum(counted, reach_beats)
-    return np.where(seen >= 8, _near_sum(jump & counted, reach_beats) / np.maximum(seen, 1), 0).astype(np.float32)
+    share = _near_sum(jump & counted, reach_beats).astype(np.float32)
+    share /= np.maximum(seen, 1)
+    share[seen < 8] = 0
+    return share
 
 
 def _near_sum(flag: NDArray[np.bool_], reach: int) -> NDArray[np.int32]:
