@@ -35,8 +35,12 @@ MEASURES = {
     "v_per_h": ("Ventricular beats per analysable hour", "/h", 1),
     "couplets_per_24h": ("Couplets per 24 h", "/24 h", 1),
     "runs_per_24h": ("Runs per 24 h", "/24 h", 1),
+    "longest_run_beats": ("Longest run of all days", "beats", 0),
+    "fastest_run_bpm": ("Fastest run of all days", "/min", 0),
+    "bigeminy_pct": ("Time in bigeminy", "%", 2),
     "mean_rate_bpm": ("Mean heart rate", "/min", 0),
 }
+MEASURES_ON_SCREEN = ("longest_run_beats", "fastest_run_bpm", "bigeminy_pct")  # a printed summary has two pages
 
 THERAPIES = {
     "medication_start": "start of",

@@ -104,15 +104,15 @@ def rank_reason(row: Mapping[str, Any], wear: WearSettings) -> str:
 
 
 def _comparison(row: Mapping[str, Any], extreme: Extreme) -> str:
-    ranked = row["ranked_before"], row["ranked_after"]
-    if min(ranked) == 0:
-        return f"Runs on {ranked[0]} and {ranked[1]} days: their {extreme.noun} cannot be compared by day."
-    days = f"{ranked[0]} days before and {ranked[1]} after, by rank over the clock hours worn on both sides"
-    chance = f"{row['rank_chance_pct']:.2g} %"
+    before, after = row["ranked_before"], row["ranked_after"]
+    if min(before, after) == 0:
+        return f"Days with runs are {before} before and {after} after, so that they cannot be compared."
+    probability = row["rank_chance_pct"]
+    chance = f"{probability:.2g} %" if probability < 10 else f"{probability:.0f} %"
+    ranks = f"days by rank over the clock hours worn on both sides, {before} before and {after} after: {chance}"
     if row["verdict"] == WITHIN:
-        return f"Chance explains the difference between the days ({days}: {chance})."
-    direction = extreme.lower if row["verdict"] == FELL else extreme.higher
-    return f"That of single days is {direction} than chance explains ({days}: {chance})."
+        return f"Chance explains how the days differ ({ranks})."
+    return f"That of single days is {extreme.lower if row['verdict'] == FELL else extreme.higher} than chance explains ({ranks})."
 
 
 def _shown(value: float | None, extreme: Extreme) -> str:

@@ -9,6 +9,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from dashboards import words
 from detectors.change import VERDICTS
 from flows.change import trends
 from flows.change.extremes import EXTREMES
@@ -376,8 +377,8 @@ def test_runs_that_get_shorter_and_slower_are_told_by_rank():
     assert longest["verdict"] == fastest["verdict"] == "fell_beyond_chance"
     assert longest["ratio"] is longest["change_pct"] is longest["chance_fall_limit_pct"] is None
     # Source: one of C(14, 7) = 3,432 arrangements, 0.029 %; of the days with runs one of C(11, 4) = 330, 0.30 %
-    assert "7 days before and 7 after" in longest["reason"] and "0.029 %" in longest["reason"]
-    assert "7 days before and 4 after" in fastest["reason"] and "0.3 %" in fastest["reason"]
+    assert "7 before and 7 after: 0.029 %" in longest["reason"]
+    assert "7 before and 4 after: 0.3 %" in fastest["reason"]
 
 
 def test_more_wear_makes_a_larger_largest_value_but_no_verdict():
@@ -410,7 +411,7 @@ def test_runs_that_stop_leave_no_speed_to_compare():
     longest, fastest = row(table, "longest_run_beats"), row(table, "fastest_run_bpm")
     assert (longest["verdict"], longest["after_value"]) == ("fell_beyond_chance", 0)
     assert (fastest["verdict"], fastest["after_value"]) == ("within_chance", None)
-    assert "cannot be compared" in fastest["reason"]
+    assert "7 before and 0 after, so that they cannot be compared" in fastest["reason"]
 
 
 def test_ranks_allow_for_the_time_between_the_periods():
@@ -438,3 +439,8 @@ def test_heart_rate_by_hour_of_the_day_before_and_after():
     assert (by_hour[3]["baseline_rate_bpm"], by_hour[3]["baseline_analysable_h"]) == (80, 1.5)
     assert (by_hour[3]["after_rate_bpm"], by_hour[3]["after_analysable_h"]) == (None, 0)
     assert (by_hour[12]["after_rate_bpm"], by_hour[12]["after_analysable_h"]) == (50, 2)
+
+
+def test_every_measure_has_its_words_on_the_pages():
+    """What `changes` compares is what the pages can name."""
+    assert set(words.MEASURES) == {compared.name for compared in (*MEASURES, *EXTREMES)}
