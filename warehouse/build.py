@@ -196,7 +196,9 @@ class TrendBuild:
         self._keeps_patients = bool(kept)
 
     def _over_read(self) -> list[str]:
-        named = self.connection.sql("SELECT recording_id FROM lake.reviews UNION SELECT recording_id FROM lake.decisions")
+        named = self.connection.sql(
+            "SELECT recording_id FROM lake.reviews UNION SELECT recording_id FROM lake.decisions"
+        )
         return [recording_id for (recording_id,) in named.fetchall()]
 
     def _common_grounds(self) -> Iterator[str]:
