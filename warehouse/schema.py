@@ -132,7 +132,12 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("mean_coupling_ms", "REAL", "ms", "Mean coupling interval of the family's premature beats."),
     ("coupling_spread_ms", "REAL", "ms", "90th minus 10th percentile of the coupling interval."),
     ("patient_family", "SMALLINT", "", "Number of the shape family over all recordings of the patient, from 0."),
-    ("likeness", "REAL", "", "Correlation with the patient's family as it was before; NULL for the first of its shape."),
+    (
+        "likeness",
+        "REAL",
+        "",
+        "Correlation with the patient's family as it was before; NULL for the first of its shape.",
+    ),
     ("share_of_day_pct", "DOUBLE", "%", "Share of the recording's analysable beats of that local day."),
     # episodes
     ("episode_kind", "VARCHAR", "", "couplet, run, sv_run, bigeminy, trigeminy, pause or irregular."),
@@ -322,7 +327,12 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("reader_codes", "VARCHAR", "", "Codes of all readers, separated by blanks."),
     ("decided_beats", "BIGINT", "beats", "Analysable beats whose class an over-reader decided; the counts hold it."),
     ("unmet_decisions", "BIGINT", "beats", "Decisions without a published beat within 150 ms."),
-    ("rejected_episodes", "BIGINT", "", "Runs and pauses that their readers reject; counts of runs and pauses hold it."),
+    (
+        "rejected_episodes",
+        "BIGINT",
+        "",
+        "Runs and pauses that their readers reject; counts of runs and pauses hold it.",
+    ),
     ("automatic_v_beats", "BIGINT", "beats", "Analysable beats found as V automatically, before any decision."),
     ("automatic_all_beats", "BIGINT", "beats", "Analysable beats found automatically, before any decision."),
     ("automatic_v_burden_pct", "DOUBLE", "%", "Ventricular burden found automatically, before any decision."),
