@@ -159,10 +159,15 @@ class _Clock:
         self.sample_us = 1e6 / fs_hz
 
     def instant(self, segment: NDArray, sample: NDArray) -> NDArray[np.int64]:
-        return self.start_us[segment] + np.rint(sample * self.sample_us).astype(np.int64)
+        since_start = sample * self.sample_us
+        instant = np.rint(since_start, out=since_start).astype(np.int64)
+        instant += self.start_us[segment]
+        return instant
 
     def quarter(self, segment: NDArray, sample: NDArray) -> NDArray[np.int64]:
-        return self.instant(segment, sample) // QUARTER_US
+        instant = self.instant(segment, sample)
+        instant //= QUARTER_US
+        return instant
 
     def spans(self, segment: NDArray, first: NDArray, end: NDArray) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
         return self.instant(segment, first), self.instant(segment, end)
