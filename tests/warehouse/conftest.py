@@ -81,6 +81,10 @@ class Lake:
         )
         self.land("recordings", recording_id, [_recording(recording_id, start_utc, end_utc)])
         self.land("quarter_hours", recording_id, tallies, fingerprint)
+        of_family = tallies.select(
+            "recording_id", "fingerprint", "quarter_utc", family=pl.lit(0, dtype=pl.Int16), beat_count="all_beats"
+        )
+        self.land("family_quarters", recording_id, of_family, fingerprint)
 
     def land(self, table: str, key: str, rows: pl.DataFrame | list[dict[str, Any]], fingerprint: str = "") -> None:
         """Land rows of any lake table; columns that are not given are NULL."""
