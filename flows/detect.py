@@ -23,7 +23,7 @@ from flows.settings import Settings, result_settings
 from warehouse.parts import Part, SignalReader, frame_schema, write_part
 from warehouse.schema import LAKE
 
-BEATS_PER_PART = 250_000
+BEATS_PER_PART = 100_000
 _ADDED_LATER = ("recording_id", "fingerprint")
 DERIVED_TABLES = (
     "beats", "families", "family_quarters", "episodes", "quality_windows", "findings", "quarter_hours", "strips",
