@@ -325,8 +325,9 @@ def wearing(hours: pl.DataFrame, of_patient: pl.DataFrame, zone: str) -> Figure:
     ]  # fmt: skip
     data += [_hourly_beats(hours, x, beat_class, middle * place, middle) for place, beat_class in enumerate(("V", "S"))]
     data.append(
-        {"type": "scatter", "mode": "lines", "name": "mean heart rate", "x": x, "y": values(hours["mean_rate_bpm"], 1),
-         "yaxis": "y3", "line": {"color": "--rate", "width": 1.5, "shape": "hv"}, "connectgaps": False,
+        {"type": "scatter", "mode": "lines+markers", "name": "mean heart rate", "x": x,
+         "y": values(hours["mean_rate_bpm"], 1), "yaxis": "y3", "marker": {"color": "--rate", "size": 4},
+         "line": {"color": "--rate", "width": 1.5, "shape": "hv"}, "connectgaps": False,
          "hovertemplate": "%{y:.0f} /min<extra></extra>"}
     )  # fmt: skip
     if of_patient.height:
