@@ -278,7 +278,8 @@ def coupling(coupled: pl.DataFrame) -> Figure:
         for column, yaxis in (("mean_coupling_ms", "y"), ("coupling_spread_ms", "y2")):
             data.append(_coupling_marks(str(beat_class), rows, column, yaxis))
     first, last = coupled["start_day"].min(), coupled["start_day"].max()
-    around = [str(_midnight(first) - timedelta(days=2)), str(_midnight(last) + timedelta(days=2))]  # type: ignore[arg-type]
+    margin = timedelta(days=2)
+    around = [str(_midnight(first) - margin), str(_midnight(last) + margin)]  # type: ignore[arg-type]  # DATE columns
     drawn_on = layout(
         360,
         xaxis={**GREY, "type": "date", "range": around, "anchor": "y2", "tickformat": "%-d %b\n%Y"},

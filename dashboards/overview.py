@@ -29,7 +29,8 @@ def context(tables: Tables) -> dict[str, Any]:
     """Return everything that the overview shows."""
     wear_days = tables.whole("wear_days")
     last_day: date | None = wear_days["local_day"].max()  # type: ignore[assignment]  # a DATE column
-    calendar = calendar_days(wear_days["local_day"].min(), last_day) if last_day else None  # type: ignore[arg-type]
+    first_day: date | None = wear_days["local_day"].min()  # type: ignore[assignment]  # a DATE column
+    calendar = calendar_days(first_day, last_day) if first_day and last_day else None
     attention = tables.whole("attention").sort("attention_rank", "patient_code", "attention_code")
     ranks = _first_ranks(attention)
     codes = sorted(tables.whole("patients")["patient_code"], key=lambda code: (ranks.get(code, len(ranks) + 1), code))

@@ -72,7 +72,8 @@ def range_words(measured: pl.DataFrame) -> str:
         return "No analysable beat yet: ventricular burden is not known"
     low, high = measured["v_burden_pct"].min(), measured["v_burden_pct"].max()
     on_days = words.counted(measured.height, "wear day")
-    return f"Ventricular burden between {words.number(low, 1)} and {words.number(high, 1)} % on {on_days}"  # type: ignore[arg-type]
+    between = f"{words.number(low, 1)} and {words.number(high, 1)}"  # type: ignore[arg-type]  # a DOUBLE column
+    return f"Ventricular burden between {between} % on {on_days}"
 
 
 def coupling_words(coupled: pl.DataFrame) -> str:

@@ -114,7 +114,7 @@ def _typed(table: schema.Table, values: pl.Series) -> pl.Series:
 
 def _is_castable(found: pl.DataType, expected: pl.DataType) -> bool:
     if isinstance(found, pl.List) and isinstance(expected, pl.List):
-        return _is_castable(found.inner, expected.inner) or found.inner == expected.inner  # type: ignore[arg-type]
+        return _is_castable(found.inner, expected.inner) or found.inner == expected.inner  # type: ignore[arg-type]  # inner types
     both_integer = found.is_integer() and expected.is_integer()
     return found == pl.Null or both_integer or (found.is_numeric() and expected.is_float())
 

@@ -205,7 +205,8 @@ def _start(head: str | None) -> tuple[datetime | None, str | None]:
     year, month, day, hour, minute = (int(part) for part in found.groups()[:5])
     micros = round(float(found[7] or 0) * 1_000_000)
     try:
-        start = datetime(year, month, day, hour, minute, int(found[6] or 0)) + timedelta(microseconds=micros)  # noqa: DTZ001
+        whole_s = datetime(year, month, day, hour, minute, int(found[6] or 0))  # noqa: DTZ001  wall clock of the device
+        start = whole_s + timedelta(microseconds=micros)
         if found[8] is None:
             return start, None
         offset = timedelta(hours=int(found[8][:3]), minutes=int(found[8][0] + found[8][3:]))

@@ -126,7 +126,7 @@ def test_only_changed_pages_are_rendered_again(rows, publish, tmp_path):
     rendered = {
         address
         for address in pages_of(new)
-        if not os.path.samefile(new / address, old / address)  # noqa: PTH121
+        if not os.path.samefile(new / address, old / address)  # noqa: PTH121  paths as text
     }
     assert rendered == {"index.html", f"patients/{changed['patient_code']}.html"}
     assert bytes_of(new) == bytes_of(build(publish(rows), tmp_path / "afresh"))
