@@ -6,12 +6,13 @@
 from __future__ import annotations
 
 import multiprocessing
+import time
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor, as_completed
 from dataclasses import asdict, dataclass
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NamedTuple
 
 from flows import settings as programme_settings
 from flows.lock import folder_lock
@@ -20,6 +21,7 @@ from flows.settings import Settings
 
 if TYPE_CHECKING:
     from flows.arrivals.ingest import Arrivals
+    from flows.last_run import RunEnd
     from warehouse.ledger import Ledger
 
 DONE, FAILED, USAGE, DONE_WITH_REFUSALS = 0, 1, 2, 3
@@ -57,7 +59,16 @@ class Work:
     settings: Settings
 
 
-Analyse = Callable[[Sequence[Work], Reporter], Iterator[dict]]
+class Analysed(NamedTuple):
+    """One recording as the detector left it: the loads to commit, and how long that took for how much signal."""
+
+    recording_id: str
+    recorded_h: float
+    analysed_s: float
+    loads: dict
+
+
+Analyse = Callable[[Sequence[Work], Reporter], Iterator[Analysed]]
 
 
 def run(
@@ -76,14 +87,19 @@ def run(
     from flows import last_run
 
     settings = programme_settings.load(folder / "programme.toml")
-    with folder_lock(folder, wait_s), last_run.noted(folder) as outcomes:
-        outcome = _bring_up_to_date(folder, settings, reporter, actor_code, analyse_all or analyse_where_set)
-        outcomes.append(outcome.outcome)
+    with folder_lock(folder, wait_s), last_run.noted(folder) as end:
+        outcome = _bring_up_to_date(folder, settings, reporter, actor_code, analyse_all or analyse_where_set, end)
+        end.outcome = outcome.outcome
     return outcome
 
 
 def _bring_up_to_date(
-    folder: Path, settings: Settings, reporter: Reporter, actor_code: str | None, analyse_all: Analyse
+    folder: Path,
+    settings: Settings,
+    reporter: Reporter,
+    actor_code: str | None,
+    analyse_all: Analyse,
+    end: RunEnd,
 ) -> Outcome:
     from flows import edits, publication, register
     from flows.arrivals import ingest
@@ -97,8 +113,9 @@ def _bring_up_to_date(
     edits.note_edits(folder / "lake", settings, people, ledger, actor_code)
     arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)
     work = [Work(folder, recording_id, settings) for recording_id in unanalysed(ledger, settings)]
-    for loads in analyse_all(work, reporter):
-        ledger.commit(loads, note="detect")
+    for analysed in analyse_all(work, reporter):
+        ledger.commit(analysed.loads, note="detect")
+        end.analysed.append(analysed)
     run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
     if arrivals.changed or work:
         _note_run(run_id, folder, ledger, arrivals, _outcome(True, arrivals.quarantined))
@@ -153,7 +170,7 @@ def unanalysed(ledger: Ledger, settings: Settings) -> list[str]:
     return sorted({part.key for part in ledger.parts("recordings")} - done)
 
 
-def analyse_where_set(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
+def analyse_where_set(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]:
     """Analyse recordings on this host, or on the Dask scheduler that the settings name."""
     if work and work[0].settings.workers.scheduler:
         from flows.workers import analyse_on_workers
@@ -162,7 +179,7 @@ def analyse_where_set(work: Sequence[Work], reporter: Reporter) -> Iterator[dict
     return analyse_here(work, reporter)
 
 
-def analyse_here(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
+def analyse_here(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]:
     """Analyse recordings on this host, one after the other or in the processes that the settings allow."""
     processes = min(len(work), work[0].settings.workers.processes) if work else 0
     if processes <= 1:
@@ -176,8 +193,8 @@ def analyse_here(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
             yield finished.result()
 
 
-def analyse_one(item: Work, reporter: Reporter = SILENT) -> dict:
-    """Run the detector over one landed recording and write its parts; returns the loads to commit.
+def analyse_one(item: Work, reporter: Reporter = SILENT) -> Analysed:
+    """Run the detector over one landed recording and write its parts.
 
     Doing it twice writes the same files, so a worker that dies can simply be repeated.
     """
@@ -185,6 +202,7 @@ def analyse_one(item: Work, reporter: Reporter = SILENT) -> dict:
     from warehouse.ledger import Ledger
     from warehouse.parts import read_part
 
+    begun_s = time.monotonic()
     lake = item.folder / "lake"
     ledger = Ledger(lake)
     recording = read_part(lake, ledger.parts("recordings", item.recording_id)[0]).row(0, named=True)
@@ -197,4 +215,5 @@ def analyse_one(item: Work, reporter: Reporter = SILENT) -> dict:
         )
     name = detect.fingerprint_of(item.settings)
     loads = detect.land_analysis(lake, recording, segments, signal, analysis, name)
-    return loads | {("fingerprints", name): [detect.fingerprint_part(lake, item.settings)]}
+    loads[("fingerprints", name)] = [detect.fingerprint_part(lake, item.settings)]
+    return Analysed(item.recording_id, recording["recorded_h"], time.monotonic() - begun_s, loads)

@@ -27,7 +27,7 @@ from prefect.states import State
 
 from flows import nightly, settings
 from flows.lock import FolderBusy
-from flows.nightly import Work
+from flows.nightly import Analysed, Work
 from flows.notify import notify
 from flows.progress import Reporter, Silent
 from flows.sentences import is_sentence, sentence
@@ -49,20 +49,20 @@ class CronError(ValueError):
     retry_delay_seconds=[10, 60],
     timeout_seconds=3600,
 )
-def analyse_recording_task(item: Work) -> dict:
+def analyse_recording_task(item: Work) -> Analysed:
     """Analyse one recording and write its parts; repeating it writes the same files."""
     return nightly.analyse_one(item)
 
 
-def analyse_as_tasks(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
-    """Run one Prefect task per recording, as many at a time as the settings allow; yields loads as they are done.
+def analyse_as_tasks(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]:
+    """Run one Prefect task per recording, as many at a time as the settings allow; yields them as they are done.
 
     A Dask scheduler repeats failed recordings by itself, so it gets them without tasks around them.
     """
     if work and work[0].settings.workers.scheduler:
         yield from nightly.analyse_where_set(work, reporter)
         return
-    running: deque[tuple[Work, PrefectFuture[dict]]] = deque()
+    running: deque[tuple[Work, PrefectFuture[Analysed]]] = deque()
     for item in work:
         running.append((item, analyse_recording_task.submit(item)))
         if len(running) >= item.settings.workers.processes:
@@ -71,10 +71,10 @@ def analyse_as_tasks(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]
         yield _finished(*running.popleft(), reporter)
 
 
-def _finished(item: Work, future: PrefectFuture[dict], reporter: Reporter) -> dict:
-    loads = future.result()
+def _finished(item: Work, future: PrefectFuture[Analysed], reporter: Reporter) -> Analysed:
+    analysed = future.result()
     reporter.say(f"analysed {item.recording_id}")
-    return loads
+    return analysed
 
 
 class _RunLog(Silent):

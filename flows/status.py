@@ -3,20 +3,25 @@
 from __future__ import annotations
 
 import shutil
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from datetime import UTC, datetime
 from pathlib import Path
+from statistics import median
 from typing import Any
 
 import polars as pl
 
 from flows import last_run
 from flows import settings as programme_settings
+from flows.last_run import Duration
 from warehouse.published import Published
 
 GROWTH_DAYS = 30
 SHORTEST_GROWTH_DAYS = 7  # a younger lake mostly shows its first filling, not its growth
 SOON_FULL_DAYS = 30
+SLOW_TIMES = 3.0  # as slow per hour of signal as the median of the last recordings
+FEWEST_DURATIONS = 5  # for a median that says anything
+SHORTEST_SLOW_S = 10.0
 
 
 def status(folder: Path, now_utc: datetime | None = None) -> dict[str, Any]:
@@ -28,6 +33,7 @@ def status(folder: Path, now_utc: datetime | None = None) -> dict[str, Any]:
     settings = programme_settings.load(folder / "programme.toml")
     found: dict[str, Any] = {
         "programme": settings.programme.name,
+        "as_of_utc": f"{now_utc:%Y-%m-%d %H:%M:%S}",
         "published": (folder / "published" / "burdenline.duckdb").exists(),
         **_of_last_run(folder, now_utc),
         "expected_every_h": settings.status.expected_every_h,
@@ -43,13 +49,34 @@ def status(folder: Path, now_utc: datetime | None = None) -> dict[str, Any]:
 def _of_last_run(folder: Path, now_utc: datetime) -> dict[str, Any]:
     last = last_run.read(folder)
     if last is None:
-        return {"last_run_utc": None, "last_run_age_h": None, "last_outcome": None, "last_reason": None}
+        return {
+            "last_run_utc": None,
+            "last_run_age_h": None,
+            "last_outcome": None,
+            "last_reason": None,
+            "slow_recordings": [],
+        }
     return {
         "last_run_utc": f"{last.finished_utc:%Y-%m-%d %H:%M:%S}",
         "last_run_age_h": _hours(now_utc - last.finished_utc),
         "last_outcome": last.outcome,
         "last_reason": last.reason or None,
+        "slow_recordings": _slow(last.analysed),
     }
+
+
+def _slow(analysed: Sequence[Duration]) -> list[dict[str, Any]]:
+    """Recordings that took the detector much longer per hour of signal than the others did, the slowest first."""
+    if len(analysed) < FEWEST_DURATIONS:
+        return []
+    usual = median(each.analysed_s / each.recorded_h for each in analysed)
+    rows = [
+        each._asdict() | {"times_as_slow": round(each.analysed_s / each.recorded_h / usual, 1)}
+        for each in analysed
+        if each.analysed_s >= SHORTEST_SLOW_S
+    ]
+    slow = [row for row in rows if row["times_as_slow"] >= SLOW_TIMES]
+    return sorted(slow, key=lambda row: row["times_as_slow"], reverse=True)
 
 
 def _of_disk(folder: Path, now_utc: datetime) -> dict[str, Any]:
@@ -116,6 +143,11 @@ def _trouble(found: dict[str, Any]) -> Iterator[str]:
         yield f"the last run published nothing: {found['last_reason']}"
     if found["days_until_full"] is not None and found["days_until_full"] < SOON_FULL_DAYS:
         yield f"the disk is full in {found['days_until_full']} days at the growth of the last month"
+    for row in found["slow_recordings"]:
+        yield (
+            f"{row['recording_id']} took {row['analysed_s']:.0f} s to analyse, "
+            f"{row['times_as_slow']:g} times as long per hour as usual"
+        )
     if found["quarantined_files"]:
         yield f"{found['quarantined_files']} refused files in quarantine, each with its reason beside it"
 

@@ -11,7 +11,7 @@ from typing import TYPE_CHECKING
 
 from flows import nightly
 from flows.detect import fingerprint_of
-from flows.nightly import Work
+from flows.nightly import Analysed, Work
 from flows.progress import Reporter
 
 if TYPE_CHECKING:
@@ -30,8 +30,8 @@ class WorkersAway(WorkersError):
     """Scheduler or workers are not there at the moment: the only trouble with them that can heal by itself."""
 
 
-def analyse_on_workers(work: Sequence[Work], reporter: Reporter) -> Iterator[dict]:
-    """Analyse recordings on the scheduler that the settings name; yields loads to commit as they are done.
+def analyse_on_workers(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]:
+    """Analyse recordings on the scheduler that the settings name; yields them as they are done.
 
     A recording whose worker dies is given to another one; doing it twice writes the same files. Raises WorkersError.
     """
@@ -44,11 +44,11 @@ def analyse_on_workers(work: Sequence[Work], reporter: Reporter) -> Iterator[dic
         running = {client.submit(analyse_seen, item, pure=False, retries=RETRIES): item for item in work}
         for number, future in enumerate(_as_done(client, list(running), address), start=1):
             item = running[future]
-            yield _loads(future, item, address)
+            yield _analysed(future, item, address)
             reporter.say(f"  analysed {item.recording_id} ({number} of {len(work)})")
 
 
-def analyse_seen(item: Work) -> dict:
+def analyse_seen(item: Work) -> Analysed:
     """Analyse one recording in a worker, once it is sure that the worker sees the folder."""
     if not (item.folder / "lake" / "ledger").is_dir():
         raise WorkersError(
@@ -103,11 +103,11 @@ def _as_done(client: Client, running: Sequence[Future], address: str) -> Iterato
         running = [future for future in running if future not in ended]
 
 
-def _loads(future: Future, item: Work, address: str) -> dict:
+def _analysed(future: Future, item: Work, address: str) -> Analysed:
     from distributed import CancelledError, KilledWorker
 
     try:
-        loads = future.result()
+        analysed = future.result()
     except CancelledError:
         raise WorkersAway(f"the connection to the Dask scheduler at {address} was lost; run again") from None
     except KilledWorker:
@@ -116,6 +116,6 @@ def _loads(future: Future, item: Work, address: str) -> dict:
             "or empty [workers] scheduler to analyse on this host"
         ) from None
     expected = ("fingerprints", fingerprint_of(item.settings))
-    if expected not in loads:
+    if expected not in analysed.loads:
         raise WorkersError(f"the workers at {address} run another burdenline; install this one there")
-    return loads
+    return analysed

@@ -88,7 +88,7 @@ def _stages(folder: Path) -> dict[str, Cost]:
     loads: list[dict] = []
 
     def analyse() -> None:
-        loads.extend(nightly.analyse_one(item) for item in _work(folder))
+        loads.extend(nightly.analyse_one(item).loads for item in _work(folder))
 
     def commit() -> None:
         for each in loads:
@@ -123,8 +123,8 @@ def _analyse_on(folder: Path, count: int) -> float:
     with LocalCluster(n_workers=count, threads_per_worker=1, dashboard_address=None) as cluster:
         work = _work(folder, cluster.scheduler_address)
         begun = time.perf_counter()
-        for loads in workers.analyse_on_workers(work, SILENT):
-            ledger.commit(loads, note="detect")
+        for analysed in workers.analyse_on_workers(work, SILENT):
+            ledger.commit(analysed.loads, note="detect")
         return time.perf_counter() - begun
 
 

@@ -1,5 +1,6 @@
 """What `burdenline status` says in the morning."""
 
+import json
 import os
 from datetime import UTC, datetime, timedelta
 from types import SimpleNamespace
@@ -132,3 +133,19 @@ def test_a_damaged_note_is_no_run(empty):
     (empty / "lake").mkdir()
     (empty / "lake" / "last_run.json").write_text("{")
     assert last_run.read(empty) is None
+
+
+def test_a_recording_that_took_unusually_long_is_trouble(coast):
+    """A recording that took three times as long per hour as the median of the last ones is named, also after idle runs."""
+    note = coast / "lake" / "last_run.json"
+    last = json.loads(note.read_text())
+    [own] = last["analysed"]
+    assert own[0] == "SRL-1_20260301" and own[1] == pytest.approx(300 / 3600, rel=0.1) and own[2] > 0
+    usual = [[f"SRL-{n}_20260201", 300.0, 12.0] for n in range(2, 7)]
+    note.write_text(json.dumps(last | {"analysed": [["SRL-9_20260201", 150.0, 30.0], *usual]}))
+    run(coast)
+    found = status(coast)
+    assert [(row["recording_id"], row["times_as_slow"]) for row in found["slow_recordings"]] == [
+        ("SRL-9_20260201", 5.0)
+    ]
+    assert "SRL-9_20260201 took 30 s to analyse, 5 times as long per hour as usual" in found["trouble"]

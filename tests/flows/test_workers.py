@@ -18,7 +18,7 @@ import sleepecg
 
 from flows import workers
 from flows.edf_write import EdfHeader, Piece, write_edf
-from flows.nightly import Work, run
+from flows.nightly import Analysed, Work, run
 from flows.programme import make_folder
 from flows.progress import Silent
 from flows.settings import SettingsError, load
@@ -237,7 +237,7 @@ def test_a_recording_that_ends_every_worker_is_named(coast):
     future = create_autospec(Future, instance=True)
     future.result.side_effect = KilledWorker("analyse-SRL-1_20260301", None, 3)
     with pytest.raises(WorkersError, match="SRL-1_20260301 ended every worker that tried it, out of memory perhaps"):
-        workers._loads(future, Work(coast, "SRL-1_20260301", load(coast / "programme.toml")), "tcp://host:8786")
+        workers._analysed(future, Work(coast, "SRL-1_20260301", load(coast / "programme.toml")), "tcp://host:8786")
 
 
 @needs_dask
@@ -246,9 +246,9 @@ def test_workers_of_another_version_are_refused(coast):
     from distributed import Future
 
     future = create_autospec(Future, instance=True)
-    future.result.return_value = {("fingerprints", "of another detector"): []}
+    future.result.return_value = Analysed("SRL-1_20260301", 0.1, 1.0, {("fingerprints", "of another detector"): []})
     with pytest.raises(WorkersError, match="the workers at tcp://host:8786 run another burdenline"):
-        workers._loads(future, Work(coast, "SRL-1_20260301", load(coast / "programme.toml")), "tcp://host:8786")
+        workers._analysed(future, Work(coast, "SRL-1_20260301", load(coast / "programme.toml")), "tcp://host:8786")
 
 
 def test_without_the_extra_the_setting_says_what_to_install(coast, monkeypatch):
