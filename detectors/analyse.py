@@ -184,7 +184,7 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
     return Analysis(
         table,
         groups,
-        _episodes(table, fs_hz, options),
+        episodes_of(table, fs_hz, options),
         bad,
         findings.findings(analysable_s, float(lengths.sum()) / fs_hz, table, groups),
         fs_hz,
@@ -225,7 +225,8 @@ def timing_of(
     return sample, classify.Timing(before, after, rhythm.usual_rr_ms(before, after))
 
 
-def _episodes(table: Beats, fs_hz: float, options: Options) -> Episodes:
+def episodes_of(table: Beats, fs_hz: float, options: Options) -> Episodes:
+    """All episodes of labelled beats; beats that are not analysable take no part and break the rhythm."""
     good = table.is_analysable
     follows_good = np.concatenate([[False], good[:-1]]) if good.size else good
     before_ms = np.where(follows_good, table.rr_before_ms, np.float32(np.nan))[good]

@@ -105,11 +105,11 @@ def _frames(
         columns = {name: column[begin : begin + BEATS_PER_PART] for name, column in analysis.beats._asdict().items()}
         yield "beats", _beats(columns, analysis.fs_hz, start_us)
     yield "families", _families(analysis)
-    yield "family_quarters", _by_quarter(family_quarters(analysis, start_us)._asdict())
-    yield "episodes", _spans(analysis.episodes._asdict(), analysis.fs_hz, start_us)
-    yield "quality_windows", _spans(analysis.quality._asdict(), analysis.fs_hz, start_us)
+    yield "family_quarters", quarters_frame(family_quarters(analysis, start_us)._asdict())
+    yield "episodes", spans_frame(analysis.episodes._asdict(), analysis.fs_hz, start_us)
+    yield "quality_windows", spans_frame(analysis.quality._asdict(), analysis.fs_hz, start_us)
     yield "findings", _findings(analysis)
-    yield "quarter_hours", _by_quarter(quarter_hours(analysis, start_us)._asdict())
+    yield "quarter_hours", quarters_frame(quarter_hours(analysis, start_us)._asdict())
     yield "strips", _strips(analysis, start_us, recording, reader)
 
 
@@ -151,7 +151,7 @@ def _families(analysis: Analysis) -> pl.DataFrame:
     return _number_or_null(pl.DataFrame(families)).with_columns(numbers, shapes)
 
 
-def _spans(columns: dict[str, np.ndarray], fs_hz: float, start_us: np.ndarray) -> pl.DataFrame:
+def spans_frame(columns: dict[str, np.ndarray], fs_hz: float, start_us: np.ndarray) -> pl.DataFrame:
     segment, first, end = columns["segment"], columns["first_sample"], columns["last_sample"] + 1
     frame = pl.DataFrame(columns).with_columns(
         _instants(start_us, segment, first, fs_hz).alias("start_utc"),
@@ -166,7 +166,7 @@ def _findings(analysis: Analysis) -> pl.DataFrame:
     return pl.DataFrame(rows, schema={"finding_code": pl.String, "finding_detail": pl.String}, orient="row")
 
 
-def _by_quarter(columns: dict[str, np.ndarray]) -> pl.DataFrame:
+def quarters_frame(columns: dict[str, np.ndarray]) -> pl.DataFrame:
     quarter_utc = pl.Series("quarter_utc", columns.pop("quarter_us"), dtype=pl.Int64).cast(pl.Datetime("us"))
     return _number_or_null(pl.DataFrame(columns).with_columns(quarter_utc))
 

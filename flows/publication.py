@@ -18,6 +18,7 @@ from dashboards.site import build_site
 from flows.change import trends
 from flows.change.patient_families import patient_families
 from flows.change.visits import responders, visit_changes, visits
+from flows.over_read import add_reviewed
 from flows.promotion import published_fingerprint
 from flows.register import Register
 from flows.settings import ChangeSettings, Settings
@@ -85,10 +86,13 @@ def built(
             standing=standing,
         ) as build,
     ):
+        build.run_models("decided")
+        add_reviewed(build)
         build.run_models("staging")
         build.run_models("intermediate")
         measured = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
-        for name, frame in trends.tables(**measured, change=settings.change, wear=settings.wear).items():
+        made = trends.tables(trends.Inputs(**measured), settings.change, settings.wear)
+        for name, frame in made.published.items():
             build.add(name, frame)
         build.add("patient_families", patient_families(build.frame("family_shapes")))
         for name, frame in _trial_tables(people, measured, settings).items():

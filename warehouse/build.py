@@ -6,6 +6,7 @@ named after the table they make; the order in which they run is `MODELS`, and a 
 - `lake.*`: the parts in force of the published fingerprint, with the columns of `schema.LAKE`,
 - `register.*`: patients, wears, therapies,
 - `programme.settings`: one row, a column per threshold, and the published fingerprint,
+- `reviewed.*`: quarter hours and episodes of over-read recordings, which the caller adds after the layer `decided`,
 - `programme.zone_offsets` and `programme.local_days`: the rules of the patients' time zones (see `warehouse.zones`).
 
 With a standing edition only the quarter hours of patients with changes are read (see `warehouse.kept`).
@@ -29,17 +30,16 @@ from warehouse.published import Published
 from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets, zone_rules
 
 MODELS: dict[str, tuple[str, ...]] = {
-    "staging": (
-        "patients", "therapies", "recording_wears", "decided_beats", "rejected_episodes", "read_quarters",
-        "counted_quarters", "patient_quarters",
-    ),
+    "decided": ("decided_beats", "rejected_episodes"),
+    "staging": ("patients", "therapies", "recording_wears", "counted_quarters", "patient_quarters"),
     "intermediate": ("hours", "recording_tallies", "local_hours", "burden_intervals", "wear_days", "period_spans", "periods",
         "family_days", "family_shapes",
     ),
     "marts": (
         "deliveries", "recordings", "segments", "families", "episodes", "findings", "marks", "attention_from_days",
         "attention_from_therapies", "attention_from_recordings", "attention", "review_sheet", "decisions", "reviews",
-        "reviewed", "latest_decisions", "reader_conflicts", "reader_agreement", "runs_of_flow", "audit", "fingerprints",
+        "undecided_families", "reviewed", "review_effort", "latest_decisions", "reader_conflicts", "reader_agreement",
+        "runs_of_flow", "audit", "fingerprints",
     ),
 }  # fmt: skip
 
@@ -53,6 +53,13 @@ COMPUTED_OUTSIDE = tuple(
     not in (*READ_IN_PLACE, "parts", "data_dictionary", *(model for layer in MODELS.values() for model in layer))
 )
 """Published tables that no model makes: statistics, which the caller adds between intermediate and marts."""
+
+REVIEWED: dict[str, dict[str, str]] = {
+    "quarter_hours": {
+        name: schema.COLUMNS[name].type for name in (*schema.LAKE["quarter_hours"].columns, "decided_beats")
+    },
+    "episodes": {name: schema.COLUMNS[name].type for name in (*schema.LAKE["episodes"].columns, "is_counted")},
+}
 
 _NOT_FOR_MODELS = ("signal", "pieces", "inputs")
 
@@ -139,8 +146,10 @@ class TrendBuild:
         self.connection = open_database(str(self._database))
         # One thread: sums of fractions come out the same to the last bit, and thousands of small files load faster.
         self.connection.execute("SET threads = 1")
-        for layer in ("lake", "register", "programme"):
+        for layer in ("lake", "reviewed", "register", "programme"):
             self.connection.execute(f"CREATE SCHEMA {layer}")
+        for name, types in REVIEWED.items():
+            self._create(f"reviewed.{name}", types)
         self._load_register()
         self._load_settings()
         self._load_lake()
@@ -187,7 +196,7 @@ class TrendBuild:
         self.grounds = grounds(
             self.parts,
             self._register,
-            over_read=self._over_read(),
+            over_read=self.over_read,
             zone_rules=zone_rules(self._register["patients"]["zone"], *years),
             common=self._common_grounds(),
         )
@@ -195,9 +204,11 @@ class TrendBuild:
         offer(self.connection, self._standing, kept)
         self._keeps_patients = bool(kept)
 
-    def _over_read(self) -> list[str]:
+    @property
+    def over_read(self) -> list[str]:
+        """Recordings on which an over-reader decided anything, in order."""
         named = self.connection.sql(
-            "SELECT recording_id FROM lake.reviews UNION SELECT recording_id FROM lake.decisions"
+            "SELECT recording_id FROM lake.reviews UNION SELECT recording_id FROM lake.decisions ORDER BY recording_id"
         )
         return [recording_id for (recording_id,) in named.fetchall()]
 
@@ -229,9 +240,15 @@ class TrendBuild:
         self._insert("programme.zone_offsets", OFFSETS, zone_offsets(zones, first_utc, last_utc))
         self._insert("programme.local_days", DAYS, local_days(zones, first_utc, last_utc))
 
-    def _insert(self, name: str, types: Mapping[str, str], frame: pl.DataFrame) -> None:
+    def _create(self, name: str, types: Mapping[str, str]) -> None:
         columns = ", ".join(f"{column} {kind}" for column, kind in types.items())
         self.connection.execute(f"CREATE TABLE {name} ({columns})")
+
+    def _insert(self, name: str, types: Mapping[str, str], frame: pl.DataFrame) -> None:
+        self._create(name, types)
+        self._append(name, frame)
+
+    def _append(self, name: str, frame: pl.DataFrame) -> None:
         self.connection.register("arriving", ArrowStream(frame))
         self.connection.execute(f"INSERT INTO {name} BY NAME FROM arriving")
         self.connection.unregister("arriving")
@@ -254,6 +271,16 @@ class TrendBuild:
         described = schema.PUBLISHED[table]
         types = {name: schema.COLUMNS[name].type for name in described.columns}
         self._insert(table, types, checked_frame(described, frame))
+
+    def add_reviewed(self, quarter_hours: pl.DataFrame, episodes: pl.DataFrame) -> None:
+        """Add what an over-read recording holds by the classes decided; columns as in REVIEWED."""
+        self._append("reviewed.quarter_hours", quarter_hours)
+        self._append("reviewed.episodes", episodes)
+
+    def of_recording(self, model: str, recording_id: str) -> pl.DataFrame:
+        """Rows of one recording of a table that a model made."""
+        rows = self.connection.sql(f"FROM {model}").filter(duckdb.ColumnExpression("recording_id") == recording_id)
+        return pl.DataFrame(rows)
 
     def frame(self, table: str) -> pl.DataFrame:
         """Rows of a table of the build, ordered by key where it is a published one."""

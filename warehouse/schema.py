@@ -140,6 +140,13 @@ COLUMNS: dict[str, Column] = _dictionary(
     ),
     ("share_of_day_pct", "DOUBLE", "%", "Share of the recording's analysable beats of that local day."),
     # episodes
+    ("is_automatic", "BOOLEAN", "", "The episode follows from the classes found automatically."),
+    (
+        "is_counted",
+        "BOOLEAN",
+        "",
+        "The episode follows from the classes that hold after over-reading and no reader's decision leaves it out.",
+    ),
     ("episode_kind", "VARCHAR", "", "couplet, run, sv_run, bigeminy, trigeminy, pause or irregular."),
     ("first_sample", "BIGINT", "samples", "First sample within the segment."),
     ("last_sample", "BIGINT", "samples", "Last sample within the segment."),
@@ -333,6 +340,32 @@ COLUMNS: dict[str, Column] = _dictionary(
         "",
         "Runs and pauses that their readers reject; counts of runs and pauses hold it.",
     ),
+    (
+        "decided_class",
+        "VARCHAR",
+        "",
+        "What over-readers decided for more than half of the family's beats, NULL for none.",
+    ),
+    ("automatic_couplets", "BIGINT", "", "Ventricular couplets found automatically, before any decision."),
+    ("automatic_runs", "BIGINT", "", "Ventricular runs found automatically, before any decision."),
+    ("undecided_families", "BIGINT", "", "Shape families that a reader marked as holding different shapes."),
+    ("undecided_v_beats", "BIGINT", "beats", "Analysable V beats of such a family on which nothing is decided."),
+    ("undecided_other_beats", "BIGINT", "beats", "Its analysable beats of other classes on which nothing is decided."),
+    ("v_burden_least_pct", "DOUBLE", "%", "Ventricular burden if no undecided beat of such families were V."),
+    ("v_burden_most_pct", "DOUBLE", "%", "Ventricular burden if every undecided beat of such families were V."),
+    (
+        "decisions_to_goal",
+        "BIGINT",
+        "",
+        "Decisions on families, in the order of the sheet, that settle 95 % of the burden.",
+    ),
+    (
+        "seconds_per_decision",
+        "SMALLINT",
+        "s",
+        "Time that a decision is taken to need: a shape and two strips to look at. Common practice, no source.",
+    ),
+    ("minutes_to_goal", "DOUBLE", "min", "Decisions to the goal times the time that a decision is taken to need."),
     ("automatic_v_beats", "BIGINT", "beats", "Analysable beats found as V automatically, before any decision."),
     ("automatic_all_beats", "BIGINT", "beats", "Analysable beats found automatically, before any decision."),
     ("automatic_v_burden_pct", "DOUBLE", "%", "Ventricular burden found automatically, before any decision."),
@@ -528,8 +561,8 @@ LAKE: dict[str, Table] = _tables(
     Table(
         "decisions", "one row per decision in an over-reader's file", ("delivery_id", "decision_order"),
         ("delivery_id", "decision_order", "recording_id", "read_fingerprint", "reader_code", "reviewed_utc",
-         "decision_subject", "family", "segment", "sample", "episode_kind", "automatic_class", "beat_count", "decision",
-         "same_as_family", "is_mixed", "note"),
+         "decision_subject", "family", "segment", "sample", "start_utc", "episode_kind", "automatic_class", "beat_count",
+         "decision", "same_as_family", "is_mixed", "note"),
     ),
     Table(
         "reviews", "one row per beat whose class an over-reader's file decides; accepted normal beats are left out",
@@ -563,7 +596,10 @@ PUBLISHED: dict[str, Table] = _tables(
     ),
     LAKE["segments"],
     LAKE["beats"],
-    LAKE["families"],
+    Table(
+        "families", "one row per shape family of a recording", ("recording_id", "family"),
+        (*LAKE["families"].columns, "decided_class"),
+    ),
     Table(
         "patient_families", "one row per shape family of at least 10 beats, matched across the patient's recordings",
         ("recording_id", "family"),
@@ -574,7 +610,11 @@ PUBLISHED: dict[str, Table] = _tables(
         ("recording_id", "family", "local_day"),
         ("recording_id", "patient_code", "family", "local_day", "beat_count", "share_of_day_pct"),
     ),
-    LAKE["episodes"],
+    Table(
+        "episodes", "one row per episode, found automatically or by the classes that over-readers decided",
+        ("recording_id", "episode_kind", "segment", "first_sample", "last_sample"),
+        (*LAKE["episodes"].columns, "is_automatic", "is_counted"),
+    ),
     LAKE["quality_windows"],
     LAKE["findings"],
     Table(
@@ -670,7 +710,8 @@ PUBLISHED: dict[str, Table] = _tables(
         ("attention_rank", "patient_code", "attention_code", "attention_reason", "since_day"),
     ),
     Table(
-        "review_sheet", "one row per recording and shape family, in the order in which an over-reader decides",
+        "review_sheet",
+        "one row per recording and shape family with counted beats, in the order in which an over-reader decides",
         ("recording_id", "family"),
         ("recording_id", "review_rank", "family", "family_class", "beat_count", "v_share_pct", "settled_pct"),
     ),
@@ -679,8 +720,20 @@ PUBLISHED: dict[str, Table] = _tables(
     Table(
         "reviewed", "one row per recording that an over-reader decided on", ("recording_id",),
         ("recording_id", "patient_code", "reader_codes", "decided_beats", "unmet_decisions", "rejected_episodes",
-         "decided_v_pct",
-         "automatic_v_beats", "automatic_all_beats", "automatic_v_burden_pct", "v_beats", "all_beats", "v_burden_pct"),
+         "decided_v_pct", "automatic_v_beats", "automatic_all_beats", "automatic_v_burden_pct", "v_beats", "all_beats",
+         "v_burden_pct", "automatic_couplets", "couplets", "automatic_runs", "runs", "undecided_families",
+         "v_burden_least_pct", "v_burden_most_pct"),
+    ),
+    Table(
+        "undecided_families", "one row per shape family that an over-reader marked as holding different shapes",
+        ("recording_id", "family"),
+        ("recording_id", "patient_code", "family", "reader_codes", "undecided_v_beats", "undecided_other_beats"),
+    ),
+    Table(
+        "review_effort", "one row per recording with a ventricular family: what it takes to settle its burden",
+        ("recording_id",),
+        ("recording_id", "patient_code", "decisions_to_goal", "settled_pct", "seconds_per_decision", "minutes_to_goal",
+         "decided_v_pct"),
     ),
     Table(
         "reader_conflicts", "one row per family or beat that two readers decided differently",

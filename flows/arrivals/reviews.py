@@ -40,7 +40,7 @@ def land(lake: Path, ledger: Ledger, path: Path, delivery_id: str) -> tuple[str,
     content = read(path)
     beats = _beats_in_force(lake, ledger, content)
     loads: Loads = {}
-    for table, rows in (("decisions", decisions(content)), ("reviews", reviews(content, beats))):
+    for table, rows in (("decisions", decisions(content, beats)), ("reviews", reviews(content, beats))):
         frame = rows.with_columns(delivery_id=pl.lit(delivery_id))
         typed = typed_frame(table, frame.rows(named=True))
         loads[table, delivery_id] = [write_part(lake, table, delivery_id, typed)] if typed.height else []
@@ -101,27 +101,42 @@ def _read(lake: Path, parts: list[Part]) -> pl.DataFrame:
 
 
 def _fitting(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
-    """Refuse decisions that name families or beats which the analysis does not have."""
-    families = {row["family"] for row in content["families"]} - set(beats["family"])
-    single = _single(content).join(beats, on=("segment", "sample"), how="anti")
-    twice = _single(content).is_duplicated().sum() + len(content["families"])
-    twice -= len({row["family"] for row in content["families"]})
-    if families or single.height or twice:
+    """Refuse decisions that name families, beats or begins of episodes which the analysis does not have."""
+    named = {row["family"] for row in content["families"]}
+    unknown = named - set(beats["family"])
+    single, begins = _single(content), _begins(content)
+    lost, beginless = (places.join(beats, on=("segment", "sample"), how="anti").height for places in (single, begins))
+    twice = len(content["families"]) - len(named)
+    twice += sum(places.height - places.unique().height for places in (single, begins))
+    if unknown or lost or beginless or twice:
         raise Refused(
             "decisions_do_not_fit",
-            f"the decisions on {content['recording_id']} name {len(families)} families and {single.height} beats that "
-            f"its analysis does not have, and {twice} twice; expected those of its over-read sheet. Save them again.",
+            f"the decisions on {content['recording_id']} name {len(unknown)} families, {lost} beats and {beginless} "
+            f"runs or pauses that its analysis does not have, and {twice} twice; expected those of its over-read sheet. "
+            "Save them again.",
         )
     return beats
 
 
+_PLACE = {"segment": pl.Int16, "sample": pl.Int64}
+
+
 def _single(content: dict[str, Any]) -> pl.DataFrame:
     rows = [(row["segment"], row["sample"]) for row in content["beats"]]
-    return pl.DataFrame(rows, schema={"segment": pl.Int16, "sample": pl.Int64}, orient="row")
+    return pl.DataFrame(rows, schema=_PLACE, orient="row")
 
 
-def decisions(content: dict[str, Any]) -> pl.DataFrame:
-    """Return one row per decision of a file, in the order of the file: families, beats, episodes, note."""
+def _begins(content: dict[str, Any]) -> pl.DataFrame:
+    """Where the episodes of the file begin: each at one of its beats, by the automatic and by the decided classes."""
+    rows = [(row["segment"], row["first_sample"], row["episode_kind"]) for row in content["episodes"]]
+    return pl.DataFrame(rows, schema={**_PLACE, "episode_kind": pl.String}, orient="row")
+
+
+def decisions(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
+    """Return one row per decision of a file, in the order of the file: families, beats, episodes, note.
+
+    An episode gets the instant at which it begins, so that it is met again when segments are numbered anew.
+    """
     rows = [
         {"decision_subject": "family", "automatic_class": row["automatic"], "same_as_family": row["same_as"]}
         | {name: row[name] for name in ("family", "beat_count", "decision", "is_mixed")}
@@ -140,7 +155,11 @@ def decisions(content: dict[str, Any]) -> pl.DataFrame:
     if content["note"]:
         rows.append({"decision_subject": "note", "note": content["note"]})
     numbered = [row | {"decision_order": order} | _who(content) for order, row in enumerate(rows)]
-    return typed_frame("decisions", numbered).drop("delivery_id")
+    instants = (
+        _begins(content).join(beats, on=("segment", "sample")).select(*_PLACE, "episode_kind", start_utc="beat_utc")
+    )
+    frame = typed_frame("decisions", numbered).drop("delivery_id", "start_utc")
+    return frame.join(instants, on=(*_PLACE, "episode_kind"), how="left", maintain_order="left")
 
 
 def reviews(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:

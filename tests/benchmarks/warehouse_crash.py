@@ -93,6 +93,7 @@ def publish_all(folder: Path, ledger: Ledger, stamp: int = 0) -> None:
         folder / "lake", parts, register=register, settings=SETTINGS, fingerprint="f", workdir=folder / "work"
     )
     with build:
+        build.run_models("decided")
         build.run_models("staging")
         build.run_models("intermediate")
         for name in COMPUTED_OUTSIDE:

@@ -177,6 +177,7 @@ def publication(folder: Path, recordings: int, found: dict[str, float], what: st
         )
         with build:
             with timed(f"{what}: models", found):
+                build.run_models("decided")
                 build.run_models("staging")
                 build.run_models("intermediate")
                 for name in COMPUTED_OUTSIDE:

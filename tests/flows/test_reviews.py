@@ -13,11 +13,18 @@ import polars as pl
 import pytest
 import sleepecg
 
+from detectors.analyse import Options
+from detectors.relabel import relabelled
+from detectors.tally import quarter_hours
 from flows.arrivals import reviews
+from flows.detect import quarters_frame
 from flows.edf_write import EdfHeader, Piece, write_edf
 from flows.nightly import DONE, DONE_WITH_REFUSALS, run
+from flows.over_read import read_landed
 from flows.programme import make_folder
 from flows.readers.codes import Refused
+from warehouse.ledger import Ledger
+from warehouse.parts import read_part
 from warehouse.published import Published
 
 FS_HZ = 360
@@ -84,7 +91,7 @@ def test_a_shape_remark_decides_no_class():
     """A family of which only the shape was remarked keeps its class undecided, and the remark is a row."""
     content = CONTENT | {"families": [family(1, None) | {"is_mixed": True, "same_as": 2}]}
     assert classes(content) == {}
-    (row,) = reviews.decisions(content).rows(named=True)
+    (row,) = reviews.decisions(content, BEATS).rows(named=True)
     assert (row["decision"], row["is_mixed"], row["same_as_family"]) == (None, True, 2)
 
 
@@ -147,6 +154,20 @@ def decided(folder: Path, **more: Any) -> dict[str, Any]:
     return copy.deepcopy(CONTENT) | named | {"families": [family(largest["family"], "N")]} | more
 
 
+def test_a_landed_analysis_is_read_back_as_it_was(programme: Path):
+    """Without a decision, counting a recording anew gives its episodes and quarter hours to the last bit."""
+    ledger = Ledger(programme / "lake")
+    recording_id = ledger.parts("recordings")[0].key
+    landed = read_landed(programme / "lake", ledger.parts(), recording_id)
+    beats = landed.analysis.beats
+    again = relabelled(landed.analysis, beats.beat_class, np.ones(beats.sample.size, bool), Options())
+    for name, found in again.episodes._asdict().items():
+        assert np.array_equal(found, getattr(landed.analysis.episodes, name)), name
+    (part,) = ledger.parts("quarter_hours")
+    as_landed = read_part(programme / "lake", part).drop("recording_id", "fingerprint")
+    assert quarters_frame(quarter_hours(again, landed.start_us)._asdict()).select(as_landed.columns).equals(as_landed)
+
+
 def test_decisions_move_the_published_numbers_and_say_so(programme: Path):
     """A family called normal leaves the burden of recording, day and page; the automatic number stays beside it."""
     before = Published(programme / "published").table("recordings").row(0, named=True)
@@ -162,6 +183,9 @@ def test_decisions_move_the_published_numbers_and_say_so(programme: Path):
     assert after["v_beats"] == before["v_beats"] - moved
     assert reviewed["automatic_v_beats"] == before["v_beats"]
     assert published.table("wear_days")["v_beats"].sum() == after["v_beats"]
+    assert reviewed["couplets"] < reviewed["automatic_couplets"]
+    assert published.table("wear_days")["couplets"].sum() == reviewed["couplets"]
+    assert published.table("episodes").filter(~pl.col("is_counted"))["is_automatic"].all()
     page = (programme / "published" / "site" / "recordings" / f"{after['recording_id']}.html").read_text("utf-8")
     assert "Reviewed by A" in " ".join(page.split())
     assert run(programme).outcome == "unchanged"
@@ -174,8 +198,9 @@ def test_decisions_move_the_published_numbers_and_say_so(programme: Path):
         {"recording_id": "SN999_20260101"},
         {"families": [family(999, "N")]},
         {"beats": [beat(1, "N")]},
+        {"episodes": [{"episode_kind": "run", "segment": 0, "first_sample": 1, "decision": "reject"}]},
     ],
-    ids=["another analysis", "another recording", "unknown family", "unknown beat"],
+    ids=["another analysis", "another recording", "unknown family", "unknown beat", "unknown run"],
 )
 def test_decisions_that_do_not_fit_change_nothing(programme: Path, change: dict[str, Any]):
     """Decisions for another analysis or recording, or on what it does not have, go to quarantine as a whole."""

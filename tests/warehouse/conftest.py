@@ -9,6 +9,7 @@ from typing import Any
 import polars as pl
 import pytest
 
+from flows.over_read import add_reviewed
 from warehouse import parts, schema
 from warehouse.build import COMPUTED_OUTSIDE, TrendBuild
 from warehouse.ledger import Ledger
@@ -30,6 +31,7 @@ SETTINGS = {
     "attention_patch_end_days": 2,
 }
 QUARTER = timedelta(minutes=15)
+FS_HZ = 250
 
 
 class Lake:
@@ -80,11 +82,21 @@ class Lake:
             }
         )
         self.land("recordings", recording_id, [_recording(recording_id, start_utc, end_utc)])
+        self.segments(recording_id, [(start_utc, end_utc)])
         self.land("quarter_hours", recording_id, tallies, fingerprint)
         of_family = tallies.select(
             "recording_id", "fingerprint", "quarter_utc", family=pl.lit(0, dtype=pl.Int16), beat_count="all_beats"
         )
         self.land("family_quarters", recording_id, of_family, fingerprint)
+
+    def segments(self, recording_id: str, spans: list[tuple[datetime, datetime]]) -> None:
+        """Land the gap-free stretches of a recording."""
+        rows = [
+            {"recording_id": recording_id, "segment": number, "start_utc": start, "end_utc": end}
+            | {"sample_count": round((end - start).total_seconds() * FS_HZ)}
+            for number, (start, end) in enumerate(spans)
+        ]
+        self.land("segments", recording_id, rows)
 
     def land(self, table: str, key: str, rows: pl.DataFrame | list[dict[str, Any]], fingerprint: str = "") -> None:
         """Land rows of any lake table; columns that are not given are NULL."""
@@ -125,6 +137,8 @@ class Lake:
             standing=standing,
         )
         with build:
+            build.run_models("decided")
+            add_reviewed(build)
             build.run_models("staging")
             build.run_models("intermediate")
             build.add("changes", _changes(changes or []))
@@ -163,7 +177,7 @@ def _recording(recording_id: str, start_utc: datetime, end_utc: datetime) -> dic
         "start_utc": start_utc,
         "end_utc": end_utc,
         "zone": "UTC",
-        "fs_hz": 250.0,
+        "fs_hz": float(FS_HZ),
         "recorded_h": (end_utc - start_utc) / timedelta(hours=1),
     }
 

@@ -8,7 +8,7 @@ import pytest
 # claim -> statement that breaks it in the build
 BREAKERS = {
     "analysable_time_lies_within_worn_time": "UPDATE lake.quarter_hours SET analysable_s = worn_s + 1",
-    "beat_classes_add_up_to_all_beats": "UPDATE lake.quarter_hours SET n_beats = n_beats + 1",
+    "beat_classes_add_up_to_all_beats": "UPDATE counted_quarters SET n_beats = n_beats + 1",
     "every_burden_lies_between_0_and_100": "UPDATE periods SET v_burden_pct = 101",
     "every_day_lies_within_its_interval": "UPDATE wear_days SET v_burden_high_pct = v_burden_pct / 2",
     "every_fall_beyond_chance_exceeds_its_limit": "UPDATE changes SET change_pct = -10, chance_fall_limit_pct = 20",

@@ -26,10 +26,13 @@ def read(lake: Any) -> Any:
             "sample": places * FS_HZ,
             "beat_class": ["V" if (place % 10 == 0 and place < 100) or place >= 100 else "N" for place in places],
             "is_analysable": [place < 100 for place in places],
+            "rr_before_ms": [None, *[1000.0] * 104],
             "beat_utc": [START + timedelta(seconds=place) for place in places],
         }
     )
     lake.land("beats", "R1", beats, "f1")
+    bad = {"recording_id": "R1", "fingerprint": "f1", "segment": 0, "quality_reason": "noise"}
+    lake.land("quality_windows", "R1", [bad | {"first_sample": 24900, "last_sample": 26249}], "f1")
     return lake
 
 
@@ -127,65 +130,132 @@ def test_decisions_follow_beats_that_are_renumbered(read: Any) -> None:
         }
     )
     read.land("beats", "R1", renumbered, "f1")
+    read.segments("R1", [(START, START + timedelta(seconds=60))] * 4)
     assert (reviewed(read)["decided_beats"], reviewed(read)["unmet_decisions"]) == (2, 0)
 
 
-def runs(lake: Any, decided: dict[str, list[str]]) -> dict[str, Any]:
-    """Land two runs and a pause of the recording and what each reader says of them; returns what is counted."""
-    found = [("run", 0, 0, 3, 140.0, 1.2), ("run", 15000, 60, 9, 170.0, 35.0), ("pause", 30000, 120, 2, None, 3.4)]
-    row = {"recording_id": "R1", "fingerprint": "f1", "segment": 0}
-    episodes = [
-        row
-        | {"episode_kind": kind, "first_sample": sample, "start_utc": START + timedelta(seconds=after_s)}
-        | {"beat_count": beats, "rate_bpm": rate_bpm, "duration_s": length_s}
-        for kind, sample, after_s, beats, rate_bpm, length_s in found
-    ]
-    lake.land("episodes", "R1", episodes, "f1")
-    for reader, decisions in decided.items():
-        who = {"recording_id": "R1", "read_fingerprint": "f0", "reader_code": reader, "reviewed_utc": NOON}
-        rows = [
-            who
-            | {
-                "delivery_id": f"D{reader}",
-                "decision_order": order,
-                "decision_subject": "episode",
-                "decision": decision,
-            }
-            | {"episode_kind": found[order][0], "segment": 0, "sample": found[order][1] + 20}
-            for order, decision in enumerate(decisions)
-        ]
-        lake.land("decisions", f"D{reader}", rows)
-    with lake.built() as build:
-        assert build.check() == []
-        (day,) = build.frame("wear_days").rows(named=True)
-        listed = set(build.frame("attention")["attention_code"])
-        rejected = build.frame("reviewed")["rejected_episodes"].item()
-    names = ("runs", "pauses", "longest_run_beats", "fastest_run_bpm", "longest_pause_ms")
-    return {name: day[name] for name in names} | {"listed": listed, "rejected": rejected}
+RUN = {"run": (20, 3), "long run": (60, 9)}  # first beat and beats
 
 
 @pytest.fixture
 def with_runs(lake: Any) -> Any:
-    """A recording in whose only quarter hour two runs and a pause were counted."""
+    """A recording of a beat a second with a run of 3 V, a run of 9 V, a couplet and a pause of 4 s."""
     lake.patient("P1")
-    tally = {"runs": 2, "pauses": 1, "longest_run_beats": 9, "fastest_run_bpm": 170.0, "longest_pause_ms": 3400.0}
-    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-01T00:15", v_beats=0, **tally)
+    lake.recording("R1", "P1", "2026-05-01T00:00", "2026-05-01T00:15")
+    beat_class = ["N"] * 120
+    for first, length in (*RUN.values(), (100, 2)):
+        beat_class[first : first + length] = ["V"] * length
+    rr_s = [0.4 if kind == "V" else 1.0 for kind in beat_class]
+    rr_s[110] = 4.0
+    at_s = [0.0]
+    for step in rr_s[1:]:
+        at_s.append(at_s[-1] + step)
+    beats = {
+        "recording_id": "R1", "fingerprint": "f1", "segment": 0, "is_analysable": True,
+        "sample": [round(second * FS_HZ) for second in at_s], "beat_class": beat_class,
+        "rr_before_ms": [None, *(1000 * step for step in rr_s[1:])],
+        "beat_utc": [START + timedelta(seconds=second) for second in at_s], "family": 1,
+    }  # fmt: skip
+    lake.land("beats", "R1", pl.DataFrame(beats), "f1")
+    lake.at_s = at_s
     return lake
 
 
+def reject(lake: Any, reader: str, decided: dict[tuple[str, int], str]) -> None:
+    """Land what a reader says of episodes, each known by its kind and its first beat."""
+    who = {"recording_id": "R1", "read_fingerprint": "f0", "reader_code": reader, "reviewed_utc": NOON}
+    rows = [
+        who
+        | {"delivery_id": f"D{reader}", "decision_order": order, "decision_subject": "episode", "decision": decision}
+        | {"episode_kind": kind, "segment": 7, "sample": 1}
+        | {"start_utc": START + timedelta(seconds=lake.at_s[first] + 0.1)}
+        for order, ((kind, first), decision) in enumerate(decided.items())
+    ]
+    lake.land("decisions", f"D{reader}", rows)
+
+
+def counted(lake: Any) -> dict[str, Any]:
+    """What the only day counts after the decisions, and what is said of the recording."""
+    with lake.built(attention_sustained_run_s=3.0) as build:
+        assert build.check() == []
+        (day,) = build.frame("wear_days").rows(named=True)
+        (reviewed,) = build.frame("reviewed").rows(named=True)
+        listed = set(build.frame("attention")["attention_code"])
+        episodes = build.frame("episodes")
+    names = ("couplets", "runs", "pauses", "longest_run_beats", "longest_pause_ms", "v_beats", "all_beats",
+             "mean_rate_bpm")  # fmt: skip
+    return {name: day[name] for name in names} | {"reviewed": reviewed, "listed": listed, "episodes": episodes}
+
+
 def test_a_rejected_run_is_not_counted(with_runs: Any) -> None:
-    """Counts, longest and fastest run and attention leave out what a reader rejects, also under another detector."""
-    assert runs(with_runs, {"A": ["accept", "reject", "reject"]}) == {
-        "runs": 1, "pauses": 0, "longest_run_beats": 3, "fastest_run_bpm": 140.0, "longest_pause_ms": None,
-        "listed": {"ventricular_run", "fast_run"}, "rejected": 2,
-    }  # fmt: skip
+    """Counts, longest run and attention leave out what a reader rejects, met by its instant; its beats stay V."""
+    reject(with_runs, "A", {("run", 20): "accept", ("run", 60): "reject", ("pause", 109): "reject"})
+    found = counted(with_runs)
+    assert (found["runs"], found["longest_run_beats"], found["couplets"], found["pauses"]) == (1, 3, 1, 0)
+    assert (found["longest_pause_ms"], found["v_beats"]) == (None, 14)
+    assert found["reviewed"]["rejected_episodes"] == 2
+    assert "sustained_run" not in found["listed"]
+    left_out = found["episodes"].filter(~pl.col("is_counted"))
+    assert (left_out.height, left_out["is_automatic"].any()) == (2, False)  # no automatic episodes were landed
 
 
 def test_a_run_on_which_readers_differ_stays(with_runs: Any) -> None:
     """Only what every reader of it rejects is left out."""
-    found = runs(with_runs, {"A": ["reject", "reject"], "B": ["reject", "accept"]})
-    assert (found["runs"], found["longest_run_beats"], found["rejected"]) == (1, 9, 1)
+    reject(with_runs, "A", {("run", 20): "reject", ("run", 60): "reject"})
+    reject(with_runs, "B", {("run", 20): "reject", ("run", 60): "accept"})
+    found = counted(with_runs)
+    assert (found["runs"], found["longest_run_beats"], found["reviewed"]["rejected_episodes"]) == (1, 9, 1)
     assert "sustained_run" in found["listed"]
+
+
+def relabel(lake: Any, decided: dict[int, str]) -> None:
+    """Land decisions on single beats by their number."""
+    row = {"delivery_id": "D1", "recording_id": "R1", "read_fingerprint": "f1", "reader_code": "A"}
+    row |= {"reviewed_utc": NOON, "segment": 0, "automatic_class": "V"}
+    beats = [
+        row | {"sample": number, "decision": decision, "beat_utc": START + timedelta(seconds=lake.at_s[number])}
+        for number, decision in decided.items()
+    ]
+    lake.land("reviews", "D1", beats)
+    one = {name: row[name] for name in ("delivery_id", "recording_id", "read_fingerprint", "reader_code")}
+    one |= {"reviewed_utc": NOON, "decision_order": 0, "decision_subject": "note", "note": "read"}
+    lake.land("decisions", "D1", [one])
+
+
+def test_couplets_and_runs_follow_from_the_decided_classes(with_runs: Any) -> None:
+    """A V called N shortens its run to a couplet or divides it; a V between two V makes a run of them."""
+    relabel(with_runs, {20: "N", 64: "N", 102: "V"})
+    found = counted(with_runs)
+    # Source: by hand; run of 3 -> couplet, run of 9 -> two runs of 4, couplet and one more -> run of 3
+    assert (found["couplets"], found["runs"], found["longest_run_beats"]) == (1, 3, 4)
+    assert (found["reviewed"]["runs"], found["reviewed"]["couplets"]) == (3, 1)
+
+
+def test_intervals_join_where_a_reader_sees_noise(with_runs: Any) -> None:
+    """A beat that is none leaves a longer interval behind, here a pause, and no gap in the mean rate."""
+    relabel(with_runs, {5: "noise", 6: "noise"})
+    found = counted(with_runs)
+    # Source: by hand; three intervals of 1 s become one of 3 s, 119 intervals 117
+    assert (found["pauses"], found["all_beats"]) == (2, 118)
+    assert found["mean_rate_bpm"] == pytest.approx(60 * 117 / with_runs.at_s[-1])
+
+
+def test_a_family_of_different_shapes_leaves_the_burden_open(with_runs: Any) -> None:
+    """A family marked as mixed is listed with its undecided beats and the burden's bounds; relabelled beats are decided."""
+    relabel(with_runs, {20: "N", 21: "V"})
+    mark = {
+        "delivery_id": "D2", "decision_order": 0, "recording_id": "R1", "read_fingerprint": "f1", "reader_code": "A",
+        "reviewed_utc": NOON, "decision_subject": "family", "family": 1, "is_mixed": True,
+    }  # fmt: skip
+    with_runs.land("decisions", "D2", [mark])
+    with with_runs.built() as build:
+        (family,) = build.frame("undecided_families").rows(named=True)
+        (found,) = build.frame("reviewed").rows(named=True)
+    # Source: by hand; 14 V of 120 beats of the family, two of them decided
+    assert (family["undecided_v_beats"], family["undecided_other_beats"]) == (12, 106)
+    assert found["undecided_families"] == 1
+    assert found["v_burden_least_pct"] == pytest.approx(100 * 1 / 120)
+    assert found["v_burden_most_pct"] == pytest.approx(100 * 119 / 120)
 
 
 def families(lake: Any, reader: str, decided: dict[int, tuple[str, int]]) -> None:

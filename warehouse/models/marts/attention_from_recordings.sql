@@ -13,12 +13,11 @@ sustained AS (
         episode.rate_bpm,
         (episode.start_utc + to_seconds(placed.offset_s))::DATE AS local_day
     FROM episodes AS episode
-    ANTI JOIN rejected_episodes USING (recording_id, episode_kind, segment, first_sample)
     CROSS JOIN programme.settings AS settings
     INNER JOIN placed
         ON placed.recording_id = episode.recording_id
         AND episode.start_utc >= placed.from_utc AND episode.start_utc < placed.to_utc
-    WHERE episode.episode_kind = 'run' AND episode.duration_s >= settings.attention_sustained_run_s
+    WHERE episode.episode_kind = 'run' AND episode.is_counted AND episode.duration_s >= settings.attention_sustained_run_s
 ),
 
 -- Of fewer beats the mean is too easily a matter of beats found at the wrong place.
@@ -35,7 +34,7 @@ early AS (
     INNER JOIN placed
         ON placed.recording_id = family.recording_id
         AND recording.start_utc >= placed.from_utc AND recording.start_utc < placed.to_utc
-    WHERE family.family_class = 'V' AND family.beat_count >= 10
+    WHERE coalesce(family.decided_class, family.family_class) = 'V' AND family.beat_count >= 10
         AND family.mean_coupling_ms < settings.attention_short_coupling_ms
 ),
 

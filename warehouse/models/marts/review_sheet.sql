@@ -1,17 +1,28 @@
--- one row per recording and shape family, in the order in which an over-reader decides; key recording_id, family
+-- one row per recording and shape family with counted beats, in the order in which an over-reader decides; key recording_id, family
 -- A decision on a ventricular family moves the burden by all its beats, so these come first, largest first. Of the rest
 -- the larger come first, too: a family that is ventricular after all would add that many beats.
-WITH ordered AS (
+WITH counted AS (
+    SELECT recording_id, family, sum(beat_count) AS beat_count
+    FROM family_days
+    GROUP BY recording_id, family
+),
+
+ordered AS (
     SELECT
-        recording_id,
-        family,
-        family_class,
-        beat_count,
+        family.recording_id,
+        family.family,
+        family.family_class,
+        counted.beat_count,
         row_number() OVER in_order AS review_rank,
-        sum(beat_count) FILTER (WHERE family_class = 'V') OVER (PARTITION BY recording_id) AS v_total,
-        sum(beat_count) FILTER (WHERE family_class = 'V') OVER in_order AS v_settled
-    FROM families
-    WINDOW in_order AS (PARTITION BY recording_id ORDER BY family_class = 'V' DESC, beat_count DESC, family)
+        sum(counted.beat_count) FILTER (WHERE family.family_class = 'V') OVER (PARTITION BY family.recording_id) AS v_total,
+        sum(counted.beat_count) FILTER (WHERE family.family_class = 'V') OVER in_order AS v_settled
+    FROM lake.families AS family
+    INNER JOIN recording_wears USING (recording_id)
+    INNER JOIN counted USING (recording_id, family)
+    WINDOW in_order AS (
+        PARTITION BY family.recording_id
+        ORDER BY family.family_class = 'V' DESC, counted.beat_count DESC, family.family
+    )
 )
 
 SELECT

@@ -6,8 +6,19 @@ WITH readers AS (
 ),
 
 automatic AS (
-    SELECT recording_id, sum(v_beats) AS automatic_v_beats, sum(all_beats) AS automatic_all_beats
+    SELECT
+        recording_id,
+        sum(v_beats) AS automatic_v_beats,
+        sum(all_beats) AS automatic_all_beats,
+        sum(couplets) AS automatic_couplets,
+        sum(runs) AS automatic_runs
     FROM lake.quarter_hours
+    GROUP BY recording_id
+),
+
+counted AS (
+    SELECT recording_id, sum(couplets) AS couplets, sum(runs) AS runs
+    FROM reviewed.quarter_hours
     GROUP BY recording_id
 ),
 
@@ -26,7 +37,22 @@ met AS (
     GROUP BY recording_id
 ),
 
-rejected AS (SELECT recording_id, count(*) AS episodes FROM rejected_episodes GROUP BY recording_id)
+rejected AS (
+    SELECT recording_id, count(*) AS episodes
+    FROM reviewed.episodes
+    WHERE NOT is_counted
+    GROUP BY recording_id
+),
+
+undecided AS (
+    SELECT
+        recording_id,
+        count(*) AS undecided_families,
+        sum(undecided_v_beats) AS v_beats,
+        sum(undecided_other_beats) AS other_beats
+    FROM undecided_families
+    GROUP BY recording_id
+)
 
 SELECT
     recordings.recording_id,
@@ -41,10 +67,19 @@ SELECT
     100 * automatic_v_beats / nullif(automatic_all_beats, 0) AS automatic_v_burden_pct,
     recordings.v_beats,
     all_beats,
-    v_burden_pct
+    v_burden_pct,
+    automatic_couplets,
+    couplets,
+    automatic_runs,
+    runs,
+    coalesce(undecided_families, 0) AS undecided_families,
+    100 * (recordings.v_beats - undecided.v_beats) / nullif(all_beats, 0) AS v_burden_least_pct,
+    100 * (recordings.v_beats + undecided.other_beats) / nullif(all_beats, 0) AS v_burden_most_pct
 FROM readers
 INNER JOIN recordings USING (recording_id)
 LEFT JOIN automatic USING (recording_id)
+LEFT JOIN counted USING (recording_id)
 LEFT JOIN decisions USING (recording_id)
 LEFT JOIN met USING (recording_id)
 LEFT JOIN rejected USING (recording_id)
+LEFT JOIN undecided USING (recording_id)

@@ -9,7 +9,7 @@ WITH latest AS (
 ),
 
 found AS (
-    SELECT recording_id, segment, sample, beat_utc, beat_class, is_analysable
+    SELECT recording_id, segment, sample, beat_utc, beat_class, family, is_analysable
     FROM lake.beats
     WHERE recording_id IN (SELECT recording_id FROM latest)
 ),
@@ -33,6 +33,7 @@ of_reader AS (
         arg_min(decision, abs(epoch_us(decided_utc) - epoch_us(beat_utc))) AS decision,
         any_value(beat_utc) AS beat_utc,
         any_value(beat_class) AS beat_class,
+        any_value(family) AS family,
         any_value(is_analysable) AS is_analysable
     FROM neighbours
     WHERE abs(epoch_us(decided_utc) - epoch_us(beat_utc)) <= 150000
@@ -45,6 +46,7 @@ SELECT
     sample,
     any_value(beat_utc) AS beat_utc,
     any_value(beat_class) AS beat_class,
+    any_value(family) AS family,
     any_value(is_analysable) AS is_analysable,
     CASE count(DISTINCT decision) WHEN 1 THEN any_value(decision) ELSE any_value(beat_class) END AS decision
 FROM of_reader
