@@ -28,7 +28,6 @@ from warehouse.ledger import Damage
 from warehouse.parts import Part, file_sha256, write_whole
 from warehouse.publish import write_tables
 from warehouse.published import MANIFEST, Published
-from warehouse.store import complete
 
 CUT = "cut.json"
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,60}")
@@ -113,7 +112,6 @@ def damages(published: Path, name: str) -> list[Damage]:
     cut, written = published / "cuts" / name, described(published, name)
     found = {path: digest for path, digest in _hashes(cut).items() if path != CUT and not _differs_by_itself(path)}
     lake = cut / written["lake"]
-    complete(lake, written["parts"])
     parts = {path: file_sha256(lake / path) for path in written["parts"] if (lake / path).is_file()}
     return [*_differences(written["files"], found), *_differences(written["parts"], parts)]
 
