@@ -21,8 +21,9 @@ Flags = NDArray[np.bool_]
 LEAST_WEIGHT = 1e-12  # of a period without days
 RICH_BEATS_PER_DAY = 12.0  # independent beats per day from which the logarithm of a day is nearly normal
 GRID = np.geomspace(1 / 16, 5, 32)  # of s, relative to the typical value of the measure
-PRIOR_MEDIANS = np.geomspace(0.15, 4.0, 15)  # candidates for the programme's median s, relative to the typical value
-PRIOR_SPREADS = (0.2, 0.4, 0.7)  # candidates for the SD of ln s between patients
+# Candidates for a programme: its median s, relative to the typical value, and the SD of ln s between its patients.
+PRIOR_MEDIANS, PRIOR_SPREADS = (table.ravel() for table in np.meshgrid(np.geomspace(0.15, 4.0, 15), (0.2, 0.4, 0.7)))
+WEIGHT_STEPS = 128  # weights of candidates are whole multiples of 1 / WEIGHT_STEPS before they are scaled to sum 1
 MEDIAN_DOUBT = 1.0  # SD of ln median before any patient of the programme is seen
 LEVEL_NODES = np.arange(-5.0, 5.1, 0.5)  # SDs around the level of a sparse period
 TABLE_STEP = 0.1  # of ln mean
@@ -124,15 +125,17 @@ def _fit_of_sparse(days: Periods, log_level: Floats, variance: Floats, grid: Flo
 
 def _log_count_probability(beats: Floats, row: Ints, log_mean: Floats, s: float) -> Floats:
     """ln P(count = beats[row]) up to a constant per count, for a day of ln mean `log_mean` that varies with SD `s`."""
-    table_at = np.arange(log_mean.min(initial=0.0), log_mean.max(initial=0.0) + 2 * TABLE_STEP, TABLE_STEP)
+    first, last = np.floor(log_mean.min(initial=0.0) / TABLE_STEP), np.ceil(log_mean.max(initial=0.0) / TABLE_STEP)
+    table_at = np.arange(int(first), int(last) + 2) * TABLE_STEP  # the same places whichever other days are looked at
     of_node = table_at[:, None] + s * HERMITE_NODES
     expected = np.exp(of_node)
     table = np.empty((len(beats), len(table_at)))
     for i, c in enumerate(beats):
         table[i] = logsumexp(c * of_node - expected, axis=1, b=HERMITE_WEIGHTS)
-    place = (log_mean - table_at[0]) / TABLE_STEP
-    left = place.astype(np.int64)
+    place = log_mean / TABLE_STEP
+    left = np.floor(place).astype(np.int64)
     part, column = place - left, row[:, None]
+    left -= int(first)
     return table[column, left] * (1 - part) + table[column, left + 1] * part
 
 
@@ -142,19 +145,43 @@ def shown_share(beats_per_day: Floats, sd: Floats | float) -> Floats:
     return np.asarray((of_days / (1 + of_days)) ** 2)
 
 
-def spread_weights(fit: Floats, grid: Floats, typical: float) -> Floats:
+def explained_by_candidates(fit: Floats, grid: Floats, typical: float) -> Floats:
+    """How well each candidate programme explains each patient: log likelihoods, shape (n_patients, n_candidates).
+
+    `fit` has shape (n_patients, n_grid). A patient's row follows from his own days alone.
+    """
+    return np.asarray(logsumexp(fit[:, :, None] + _log_prior(grid, typical), axis=1))
+
+
+def programme_weights(explained: Floats) -> Floats:
+    """Weights of the candidates by how well they explain all patients, shape (n_candidates,), sum 1.
+
+    Empirical Bayes with the candidates' doubt kept. Rounded, so that a new day of one patient of many seldom moves
+    what the others borrow.
+    """
+    candidate = explained.sum(axis=0) - 0.5 * (np.log(PRIOR_MEDIANS) / MEDIAN_DOUBT) ** 2
+    steps = np.rint(WEIGHT_STEPS * np.exp(candidate - logsumexp(candidate)))
+    return np.asarray(steps / steps.sum())
+
+
+def nothing_lent() -> Floats:
+    """Weights of the candidates before any patient of the programme is seen: the typical value, in doubt."""
+    return programme_weights(np.zeros((0, len(PRIOR_MEDIANS))))
+
+
+def spread_weights(fit: Floats, explained: Floats, programme: Floats, grid: Floats, typical: float) -> Floats:
     """Posterior weights of s, shape of `fit`: (n_patients, n_grid), rows sum to 1.
 
-    s is lognormal between the patients of a programme; its median and spread are averaged over candidates by how well
-    they explain all patients (empirical Bayes with the candidates' doubt kept). A patient with many days follows his
-    own days, one with a single day the programme, and a programme of one patient the typical value.
+    s is lognormal between the patients of a programme; its median and spread are averaged over the candidates with
+    the weights `programme`. A patient with many days follows his own days, one with a single day the programme, and a
+    programme of one patient the typical value.
     """
-    log_s = np.log(grid / typical)[:, None]
-    medians, spreads = (table.ravel() for table in np.meshgrid(np.log(PRIOR_MEDIANS), PRIOR_SPREADS))
-    prior = -0.5 * ((log_s - medians) / spreads) ** 2
-    prior -= logsumexp(prior, axis=0)
-    joint = fit[:, :, None] + prior
-    explained = logsumexp(joint, axis=1)
-    candidate = explained.sum(axis=0) - 0.5 * (medians / MEDIAN_DOUBT) ** 2
-    candidate -= logsumexp(candidate)
-    return np.einsum("ikc,c->ik", np.exp(joint - explained[:, None, :]), np.exp(candidate))
+    held = np.flatnonzero(programme)
+    joint = fit[:, :, None] + _log_prior(grid, typical)[:, held] - explained[:, None, held]
+    return np.asarray((np.exp(joint) * programme[held]).sum(axis=2))
+
+
+def _log_prior(grid: Floats, typical: float) -> Floats:
+    """ln prior of every s of the grid under every candidate, shape (n_grid, n_candidates)."""
+    prior = -0.5 * ((np.log(grid / typical)[:, None] - np.log(PRIOR_MEDIANS)) / PRIOR_SPREADS) ** 2
+    return np.asarray(prior - logsumexp(prior, axis=0))

@@ -141,18 +141,35 @@ def excess_of_gap(
     return max(0.0, float(contrast / scale - 1 / len(before) - 1 / len(after)))
 
 
-def regression_to_mean(log_level: ArrayLike, error_variance: ArrayLike) -> Floats:
-    """Change of ln level that a second look brings by itself to patients chosen for their first, shape (n,).
+class Usual(NamedTuple):
+    """The usual ln level of a programme's patients and how much patients differ; NaN where too few are known."""
 
-    Each patient is drawn to the mean of all by the share that chance has in the differences between patients
-    (from memory: Davis, Am J Epidemiol 1976;104:493). NaN with fewer than MIN_PATIENTS known levels.
+    log_level: float
+    between_variance: float
+
+
+def usual_of(log_level: ArrayLike, error_variance: ArrayLike) -> Usual:
+    """Mean and variance between patients of ln levels of shape (n,), known with `error_variance`; NaN are left out.
+
+    Rounded (mean to 0.1, variance to two digits), so that one patient of many seldom moves what is said of the others.
+    NaN with fewer than MIN_PATIENTS known levels.
     """
     level, error = np.asarray(log_level, dtype=float), np.asarray(error_variance, dtype=float)
     known = np.isfinite(level) & np.isfinite(error)
     if known.sum() < MIN_PATIENTS:
-        return np.full(level.shape, np.nan)
+        return Usual(np.nan, np.nan)
     between = max(float(level[known].var(ddof=1) - error[known].mean()), 0.0)
-    return (level[known].mean() - level) * error / (between + error)
+    return Usual(round(float(level[known].mean()), 1), float(f"{between:.2g}"))
+
+
+def regression_to_mean(log_level: ArrayLike, error_variance: ArrayLike, usual: Usual) -> Floats:
+    """Change of ln level that a second look brings by itself to patients chosen for their first, shape (n,).
+
+    Each patient is drawn to the mean of all by the share that chance has in the differences between patients
+    (from memory: Davis, Am J Epidemiol 1976;104:493). NaN where the usual level is.
+    """
+    level, error = np.asarray(log_level, dtype=float), np.asarray(error_variance, dtype=float)
+    return np.asarray((usual.log_level - level) * error / (usual.between_variance + error))
 
 
 def _typical_within(series: SpontaneousSeries) -> float:

@@ -61,9 +61,8 @@ class ChangeSettings:
     settling_days_ablation: int = _setting(14, "days after an ablation that are left out", 0, 365)
     settling_days_other: int = _setting(7, "days after any other event that are left out", 0, 365)
     success_limit_pct: float = _setting(80.0, "reduction that the programme calls success, %", 1, 99.9)
-    # Measured on the development records; errors that both periods of a patient share would cancel.
-    detection_sd_ln: float = _setting(
-        0.2, "SD of ln(found / true ectopic beats) between recordings, for the chance limits, 0 to ignore", 0, 1
+    detector_error_share: float = _setting(
+        1.0, "share of the detector's measured error within a patient in the chance limits, 0 to ignore", 0, 10
     )
     gap_drift_share: float = _setting(
         1.0, "share of the published drift over weeks (Circulation 1988;78:286) in the chance limits, 0 for none", 0, 1

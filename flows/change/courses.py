@@ -10,9 +10,9 @@ from numpy.typing import NDArray
 
 from detectors import change as statistics
 from detectors.shifts import shifts
-from detectors.spread import Periods, shown_share
+from detectors.spread import Periods, nothing_lent, shown_share
 from detectors.variability import excess_of_gap
-from flows.change.measures import HEART_RATE, Measure, MeasuredDays
+from flows.change.measures import Measure, MeasuredDays
 from flows.settings import ChangeSettings, WearSettings
 
 EPOCH = date(1970, 1, 1)
@@ -37,16 +37,26 @@ def gap_excess(measure: Measure, days: MeasuredDays, n_events: int, share: float
     return excess * share
 
 
+def seen(measure: Measure, days: MeasuredDays, n_events: int) -> statistics.Seen:
+    """The two sides of every event, before the programme lends anything."""
+    periods = Periods(2 * days.event + days.is_after, days.counts, days.exposure, days.dispersion)
+    return statistics.seen(periods, n_events, measure.day_sd)
+
+
 def compared(
-    measure: Measure, days: MeasuredDays, n_events: int, change: ChangeSettings, wear: WearSettings
+    measure: Measure,
+    days: MeasuredDays,
+    of: statistics.Seen,
+    programme: NDArray[np.float64],
+    change: ChangeSettings,
+    wear: WearSettings,
 ) -> statistics.Comparison:
-    """The comparison of the two sides of every event."""
+    """The comparison of the two sides of every event, given the weights of `spread.programme_weights`."""
     return statistics.compare(
-        Periods(2 * days.event + days.is_after, days.counts, days.exposure, days.dispersion),
-        n_events,
-        excess=gap_excess(measure, days, n_events, change.gap_drift_share),
-        detection_variance=0.0 if measure is HEART_RATE else 2 * change.detection_sd_ln**2,
-        typical_sd=measure.day_sd,
+        of,
+        programme=programme,
+        excess=gap_excess(measure, days, len(of.fit), change.gap_drift_share),
+        error=measure.error(change.detector_error_share),
         success_limit_pct=change.success_limit_pct,
         min_days=wear.min_days_per_period,
     )
@@ -59,6 +69,7 @@ def recurrence_days(
 
     The after days are cut where their level first steps up (`detectors.shifts`). It is a recurrence when the days
     before the cut lie below the baseline beyond chance and the days from the cut on above those before, beyond chance.
+    Nothing is borrowed from the programme, whose spread between days the recurrences themselves have swollen.
     """
     cut = _first_rise(days, n_events, measure.day_sd)
     candidates = np.flatnonzero(cut != NO_DAY)
@@ -67,8 +78,12 @@ def recurrence_days(
     is_late = of_candidates.is_after & (of_candidates.local_day >= cut[of_candidates.event])
     rising = of_candidates._replace(event=row)
     later = rising._replace(is_after=is_late).where(rising.is_after)
-    fell = compared(measure, rising.where(~is_late), len(candidates), change, wear).verdict == statistics.FELL
-    rose = compared(measure, later, len(candidates), change, wear).verdict == statistics.ROSE
+
+    def verdict(sides: MeasuredDays) -> NDArray[np.str_]:
+        return compared(measure, sides, seen(measure, sides, len(candidates)), nothing_lent(), change, wear).verdict
+
+    fell = verdict(rising.where(~is_late)) == statistics.FELL
+    rose = verdict(later) == statistics.ROSE
     back = {int(event): EPOCH + timedelta(days=int(cut[event])) for event in candidates[fell & rose]}
     return [back.get(event) for event in range(n_events)]
 

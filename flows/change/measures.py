@@ -9,11 +9,18 @@ import numpy as np
 import polars as pl
 from numpy.typing import NDArray
 
+from detectors.change import DetectorError
 from detectors.standardise import HourCells, over_dispersion, standardised_days
 from detectors.variability import REPETITIVE_FORMS, SINGLE_BEATS, SpontaneousSeries
 
 ECTOPY_DAY_SD = 0.6  # of ln level; the within-week spread of the 1988 series (variability.SINGLE_BEATS)
 RATE_DAY_SD = 0.06  # common practice, no source: a mean heart rate varies by some 6 % from day to day
+
+# What the detector does differently in two periods of one patient. Measured on the development records; derived from
+# dashboards/development_figures.json in tests/flows/test_detector_error.py.
+REPEATABILITY_SD_LN = 0.06  # of ln(found / true ventricular beats) between the halves of a record, counting taken off
+FALSE_V_PER_BEAT, FALSE_S_PER_BEAT = 0.0002, 0.006  # root mean square over records with little of that ectopy
+BEATS_PER_H = 4200  # 70 beats a minute, to state false beats by the hour
 
 
 @dataclass(frozen=True)
@@ -27,26 +34,52 @@ class Measure:
     day_sd: float
     drift: SpontaneousSeries | None
     noun: str
+    beats_each: int = 1  # ectopic beats that must be found for one to count; 0 where the detector adds no error
+    false_rate: float = 0.0  # false counts per unit of exposure
+
+    def error(self, share: float) -> DetectorError:
+        """What the detector adds to a comparison; `share` of what was measured.
+
+        Runs fail with each of their beats, so that their error is the larger. Records with little ectopy were too few
+        hours to hold a false couplet or run; their false rate is taken as 0.
+        """
+        return DetectorError(share * REPEATABILITY_SD_LN * self.beats_each, share * self.false_rate)
 
 
 _HOURS = pl.col("analysable_s") / 3600
 _V, _S, _BEATS = pl.col("v_beats"), pl.col("s_beats"), pl.col("all_beats")
-HEART_RATE = Measure("mean_rate_bpm", pl.col("mean_rate_bpm") * _HOURS, _HOURS, 1, RATE_DAY_SD, None, "mean heart rate")
-V_BURDEN = Measure("v_burden_pct", _V, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular burden")
-V_PER_H = Measure("v_per_h", _V, _HOURS, 1, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular beats per hour")
-RUNS_PER_24H = Measure("runs_per_24h", pl.col("runs"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "runs per 24 h")
+HEART_RATE = Measure(
+    "mean_rate_bpm", pl.col("mean_rate_bpm") * _HOURS, _HOURS, 1, RATE_DAY_SD, None, "mean heart rate", beats_each=0
+)
+V_BURDEN = Measure(
+    "v_burden_pct", _V, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular burden", false_rate=FALSE_V_PER_BEAT
+)
+V_PER_H = Measure(
+    "v_per_h", _V, _HOURS, 1, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular beats per hour",
+    false_rate=FALSE_V_PER_BEAT * BEATS_PER_H,
+)  # fmt: skip
+RUNS_PER_24H = Measure(
+    "runs_per_24h", pl.col("runs"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "runs per 24 h", beats_each=3
+)
 MEASURES = (
     V_BURDEN,
     V_PER_H,
     # No series is published for supraventricular beats; the ventricular one is borrowed.
-    Measure("s_burden_pct", _S, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "supraventricular burden"),
-    HEART_RATE,
-    Measure("couplets_per_24h", pl.col("couplets"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "couplets per 24 h"),
     Measure(
-        "bigeminy_pct", pl.col("bigeminy_s"), pl.col("analysable_s"), 100, ECTOPY_DAY_SD, REPETITIVE_FORMS, "bigeminy"
+        "s_burden_pct", _S, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "supraventricular burden",
+        false_rate=FALSE_S_PER_BEAT,
+    ),
+    HEART_RATE,
+    Measure(
+        "couplets_per_24h", pl.col("couplets"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "couplets per 24 h",
+        beats_each=2,
+    ),
+    Measure(
+        "bigeminy_pct", pl.col("bigeminy_s"), pl.col("analysable_s"), 100, ECTOPY_DAY_SD, REPETITIVE_FORMS, "bigeminy",
+        beats_each=3,
     ),
     RUNS_PER_24H,
-)
+)  # fmt: skip
 
 ECTOPY = tuple(measure.name for measure in MEASURES if measure is not HEART_RATE)
 NOUNS = {measure.name: measure.noun for measure in MEASURES}

@@ -5,17 +5,21 @@ The statistics are in `detectors.change`; here frames become arrays, results bec
 
 from __future__ import annotations
 
+from collections.abc import Mapping
+from typing import NamedTuple
+
 import numpy as np
 import polars as pl
 
-from detectors.change import TOO_LITTLE
+from detectors.change import TOO_LITTLE, Seen
 from detectors.variability import regression_to_mean
 from flows.change.clock_rates import rate_by_clock_hour
 from flows.change.cohorts import cohort
-from flows.change.courses import compared, recurrence_days
+from flows.change.courses import compared, recurrence_days, seen
 from flows.change.extremes import EXTREMES, compared_by_rank, excess_of_runs
+from flows.change.lending import NOTHING_KEPT, Kept, Lent, evidence_of, is_same, lent
 from flows.change.level_shifts import level_shifts
-from flows.change.measures import HEART_RATE, MEASURES, Measure, measured_days
+from flows.change.measures import HEART_RATE, MEASURES, Measure, MeasuredDays, measured_days
 from flows.change.rate_effects import rate_effects
 from flows.change.reasons import reason
 from flows.change.series_fits import series_fits
@@ -30,59 +34,101 @@ AS_COMPARED = (
 )  # fmt: skip
 
 
-def tables(
-    *,
-    local_hours: pl.DataFrame,
-    wear_days: pl.DataFrame,
-    periods: pl.DataFrame,
-    therapies: pl.DataFrame,
-    change: ChangeSettings,
-    wear: WearSettings,
-) -> dict[str, pl.DataFrame]:
-    """The published tables of therapy events, by name; frames and results have the columns of `schema.PUBLISHED`."""
-    events, days, cells = _prepared(local_hours, wear_days, periods, therapies)
-    compared = _changes(events, days, cells, change, wear)
-    return {
+PER_PATIENT = ("changes", "rate_effects", "rate_by_clock_hour", "series_fits", "level_shifts")
+"""Tables whose rows follow from one patient and what the programme lends."""
+
+
+class Inputs(NamedTuple):
+    """Published tables from which changes follow."""
+
+    local_hours: pl.DataFrame
+    wear_days: pl.DataFrame
+    periods: pl.DataFrame
+    therapies: pl.DataFrame
+
+    def without(self, patients: list[str]) -> Inputs:
+        """The rows of all other patients."""
+        return Inputs._make(table.filter(~pl.col("patient_code").is_in(patients)) for table in self)
+
+
+class Tables(NamedTuple):
+    """The published tables of therapy events by name, and the evidence that the next publication may take over."""
+
+    published: dict[str, pl.DataFrame]
+    evidence: pl.DataFrame
+
+
+class _Looked(NamedTuple):
+    """Events with the days and hours of their periods, and what each measure shows before anything is lent."""
+
+    events: pl.DataFrame
+    days: pl.DataFrame
+    cells: pl.DataFrame
+    measured: dict[str, tuple[MeasuredDays, Seen]]
+
+    def evidence(self) -> pl.DataFrame:
+        return pl.concat([evidence_of(name, self.events, of) for name, (_, of) in self.measured.items()])
+
+
+def tables(inputs: Inputs, change: ChangeSettings, wear: WearSettings, kept: Kept = NOTHING_KEPT) -> Tables:
+    """The published tables of therapy events; frames have the columns of `schema.PUBLISHED`.
+
+    Rows of `kept` patients are taken over where the programme still lends the same; the tables are the same without.
+    """
+    fresh = inputs.without(kept.patients) if kept.patients else inputs
+    looked = _look(fresh)
+    evidence = pl.concat([kept.evidence.filter(pl.col("patient_code").is_in(kept.patients)), looked.evidence()])
+    now = lent(evidence)
+    if kept.patients and not is_same(now, lent(kept.evidence)):
+        return tables(inputs, change, wear)
+    compared = _changes(looked, now, change, wear)
+    made = {
         "changes": compared,
-        "rate_effects": rate_effects(events, cells, compared, change),
-        "rate_by_clock_hour": rate_by_clock_hour(cells),
-        "series_fits": series_fits(events, cells, periods),
-        "level_shifts": level_shifts(local_hours, wear_days),
-        "cohort": cohort(compared, therapies, change.success_limit_pct),
+        "rate_effects": rate_effects(looked.events, looked.cells, compared, change),
+        "rate_by_clock_hour": rate_by_clock_hour(looked.cells),
+        "series_fits": series_fits(looked.events, looked.cells, fresh.periods),
+        "level_shifts": level_shifts(fresh.local_hours, fresh.wear_days),
     }
+    rows = {name: pl.concat([*([kept.rows[name]] if kept.patients else []), made[name]]) for name in PER_PATIENT}
+    whole = {name: table.sort(PUBLISHED[name].key) for name, table in rows.items()}
+    of_all = {"cohort": cohort(whole["changes"], inputs.therapies, change.success_limit_pct)}
+    return Tables(whole | of_all, evidence)
 
 
-def changes(
-    *,
-    local_hours: pl.DataFrame,
-    wear_days: pl.DataFrame,
-    periods: pl.DataFrame,
-    therapies: pl.DataFrame,
-    change: ChangeSettings,
-    wear: WearSettings,
-) -> pl.DataFrame:
+def changes(inputs: Inputs, change: ChangeSettings, wear: WearSettings) -> pl.DataFrame:
     """The `changes` table alone, for whatever `therapies` names and `periods` spans."""
-    return _changes(*_prepared(local_hours, wear_days, periods, therapies), change, wear)
+    looked = _look(inputs)
+    return _changes(looked, lent(looked.evidence()), change, wear)
 
 
-def _prepared(
-    local_hours: pl.DataFrame, wear_days: pl.DataFrame, periods: pl.DataFrame, therapies: pl.DataFrame
-) -> tuple[pl.DataFrame, pl.DataFrame, pl.DataFrame]:
-    """Numbered events, the valid days of their periods, and the hours of those days."""
-    events = therapies.select("patient_code", "therapy_id").sort("patient_code", "therapy_id").with_row_index("event")
-    days = _days(events, periods, wear_days)
-    cells = days.join(local_hours, on=["patient_code", "local_day"]).filter(pl.col("analysable_s") > 0)
-    return events, days, cells.sort("day", "clock_hour")
+def _look(inputs: Inputs) -> _Looked:
+    """Numbered events, the valid days of their periods, the hours of those days."""
+    named = inputs.therapies.select("patient_code", "therapy_id")
+    events = named.sort("patient_code", "therapy_id").with_row_index("event")
+    days = _days(events, inputs.periods, inputs.wear_days)
+    cells = days.join(inputs.local_hours, on=["patient_code", "local_day"]).filter(pl.col("analysable_s") > 0)
+    cells = cells.sort("day", "clock_hour")
+    measured = {measure.name: measured_days(measure, cells, events.height) for measure in MEASURES}
+    return _Looked(
+        events,
+        days,
+        cells,
+        {measure.name: (of := measured[measure.name], seen(measure, of, events.height)) for measure in MEASURES},
+    )
 
 
 def _changes(
-    events: pl.DataFrame, days: pl.DataFrame, cells: pl.DataFrame, change: ChangeSettings, wear: WearSettings
+    looked: _Looked, programme: Mapping[str, Lent], change: ChangeSettings, wear: WearSettings
 ) -> pl.DataFrame:
     """Baseline and after of every therapy event and measure."""
-    frame = _wear(events, days, cells)
-    of_measure = {measure.name: _compare(measure, cells, len(events), change, wear) for measure in MEASURES}
-    excess = excess_of_runs(cells, len(events), change)
-    by_rank = [compared_by_rank(extreme, cells, len(events), excess, wear) for extreme in EXTREMES]
+    events, cells = looked.events, looked.cells
+    frame = _wear(events, looked.days, cells)
+    of_measure = {
+        measure.name: _compare(measure, *looked.measured[measure.name], programme[measure.name], change, wear)
+        for measure in MEASURES
+    }
+    excess = excess_of_runs(cells, events.height, change)
+    by_rank = [compared_by_rank(extreme, cells, events.height, excess, wear) for extreme in EXTREMES]
     rates = of_measure[HEART_RATE.name].select(baseline_rate_bpm="baseline_value", after_rate_bpm="after_value")
     rows = [pl.concat([frame, of_one, rates], how="horizontal") for of_one in (*of_measure.values(), *by_rank)]
     result = pl.concat(rows, how="diagonal_relaxed").sort("event", maintain_order=True)
@@ -121,16 +167,15 @@ def _wear(events: pl.DataFrame, days: pl.DataFrame, cells: pl.DataFrame) -> pl.D
 
 
 def _compare(
-    measure: Measure, cells: pl.DataFrame, n_events: int, change: ChangeSettings, wear: WearSettings
+    measure: Measure, days: MeasuredDays, of: Seen, programme: Lent, change: ChangeSettings, wear: WearSettings
 ) -> pl.DataFrame:
     """Columns of one measure, one row per event in their order."""
-    days = measured_days(measure, cells, n_events)
-    found = compared(measure, days, n_events, change, wear)
+    found = compared(measure, days, of, programme.spread, change, wear)
+    n_events = len(found.ratio)
     is_ectopy = measure is not HEART_RATE
     recurrence = recurrence_days(measure, days, n_events, change, wear) if is_ectopy else [None] * n_events
-    regression = regression_to_mean(
-        np.log(np.where(found.baseline > 0, found.baseline, np.nan)), found.baseline_variance
-    )
+    log_level = np.log(np.where(found.baseline > 0, found.baseline, np.nan))
+    regression = regression_to_mean(log_level, found.baseline_variance, programme.baseline)
     success = np.where(is_ectopy & (found.verdict != TOO_LITTLE), found.success_probability_pct, np.nan)
     columns = {name: getattr(found, name) for name in AS_COMPARED} | {
         "measure": [measure.name] * n_events,

@@ -13,7 +13,7 @@ from typing import Any
 import polars as pl
 
 from flows.change.cohorts import cohort_rows
-from flows.change.trends import changes
+from flows.change.trends import Inputs, changes
 from flows.settings import ChangeSettings, TrialSettings, WearSettings
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
@@ -68,14 +68,14 @@ def visit_changes(
     spans = first.select("patient_code", "first_day", "last_day")
     before = later.select(*_KEYS).join(spans, on="patient_code").with_columns(period=pl.lit("baseline"))
     after = later.select(*_KEYS, "first_day", "last_day").with_columns(period=pl.lit("after"))
-    compared = changes(
+    inputs = Inputs(
         local_hours=local_hours,
         wear_days=wear_days.with_columns(is_valid_day=pl.col("analysable_h") >= trial.min_analysable_h_per_day),
         periods=pl.concat([before, after]).rename({"visit": "therapy_id"}),
         therapies=later.rename({"visit": "therapy_id"}),
-        change=change,
-        wear=WearSettings(trial.min_analysable_h_per_day, trial.min_days_per_visit),
     )
+    wear = WearSettings(trial.min_analysable_h_per_day, trial.min_days_per_visit)
+    compared = changes(inputs, change, wear)
     return _published("visit_changes", compared.rename({"therapy_id": "visit"}).join(later, on=_KEYS))
 
 

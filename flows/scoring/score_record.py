@@ -94,6 +94,7 @@ def score_record(record: Labelled, options: Options) -> RecordScore:
         "escape_as": options.escape_as,
     }
     everything = compare_beats(labels, test, **how)
+    halves = tuple(_outside(bad, half, n_samples) for half in ((0, n_samples // 2), (n_samples // 2, n_samples)))
     truth = sorted_out(labels, n_samples, options.escape_as)
     # experts label no single beats within ventricular flutter or fibrillation, so nothing there can be compared
     comparable = beats.is_analysable & ~inside(test.sample, truth.fibrillation)
@@ -103,6 +104,7 @@ def score_record(record: Labelled, options: Options) -> RecordScore:
         has_af=record.has_af,
         beats=everything,
         beats_analysable=compare_beats(labels, test, left_out=bad, **how),
+        halves=tuple(compare_beats(labels, test, left_out=spans, **how | {"learning_s": 0.0}) for spans in halves),
         runs={ectopy: compare_runs(labels, test, ectopy=ectopy, **how) for ectopy in "VS"},
         found_v_burden_pct=_v_burden_pct(test.symbol[comparable] == "V"),
         true_v_burden_pct=_v_burden_pct(truth.beat_class == _V),
@@ -110,6 +112,13 @@ def score_record(record: Labelled, options: Options) -> RecordScore:
         judged=_judged(everything, analysis),
         findings=tuple(finding.code for finding in analysis.findings),
     )
+
+
+def _outside(bad: NDArray[np.int64], part: tuple[int, int], n_samples: int) -> NDArray[np.int64]:
+    """Ordered spans, first to last sample, of all that is bad or lies outside `part`."""
+    first, end = part
+    within = np.clip(bad[(bad[:, 1] >= first) & (bad[:, 0] < end)], first, end - 1)
+    return np.concatenate([[[-1, first - 1]], within, [[end, n_samples]]]).astype(np.int64)
 
 
 def _v_burden_pct(is_v: NDArray[np.bool_]) -> float:

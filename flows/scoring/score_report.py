@@ -52,6 +52,7 @@ class RecordScore:
     has_af: bool
     beats: BeatScore
     beats_analysable: BeatScore
+    halves: tuple[BeatScore, ...]  # first and second half in analysable time, learning included
     runs: Mapping[str, RunScore]
     found_v_burden_pct: float
     true_v_burden_pct: float

@@ -25,8 +25,9 @@ from numpy.typing import NDArray
 from scipy.stats import norm
 
 from detectors import change, variability
+from detectors.spread import programme_weights
 from detectors.standardise import HourCells, over_dispersion, standardised_days
-from flows.change.courses import compared
+from flows.change.courses import compared, seen
 from flows.change.measures import MEASURES, MeasuredDays
 from flows.settings import ChangeSettings, WearSettings
 
@@ -104,8 +105,10 @@ def simulate(cell: Cell, patients: int, rng: np.random.Generator, ratio: Floats)
     measured = MeasuredDays(
         owner, np.tile(is_after, patients), np.tile(days, patients), level.counts, level.exposure, dispersion[period]
     )
-    settings = ChangeSettings(gap_drift_share=float(cell.drift), detection_sd_ln=0.0)
-    return compared(MEASURES[0], measured, patients, settings, WearSettings(min_days_per_period=1))
+    settings = ChangeSettings(gap_drift_share=float(cell.drift), detector_error_share=0.0)
+    of = seen(MEASURES[0], measured, patients)
+    programme = programme_weights(of.explained)
+    return compared(MEASURES[0], measured, of, programme, settings, WearSettings(min_days_per_period=1))
 
 
 def ideal_power(cell: Cell) -> tuple[float, float]:

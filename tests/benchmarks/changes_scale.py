@@ -59,7 +59,7 @@ def main(sizes: list[int]) -> None:
     for patients in sizes:
         made = programme(patients)
         began = time.process_time()
-        tables = trends.tables(**made, change=ChangeSettings(), wear=WearSettings())
+        tables = trends.tables(trends.Inputs(**made), ChangeSettings(), WearSettings()).published
         seconds = time.process_time() - began
         print(f"{patients} patients, {tables['changes'].height} rows of changes: {seconds:.1f} CPU s", flush=True)
 

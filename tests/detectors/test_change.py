@@ -20,11 +20,13 @@ def periods(counts, *, exposure=1.0, dispersion=1.0) -> Periods:
     return Periods(period, beats.astype(float), np.full(size, exposure), np.full(size, dispersion))
 
 
-def compare(days: Periods, *, excess=0.0, typical_sd=0.6, success_limit_pct=80.0, min_days=1) -> change.Comparison:
+def compare(
+    days: Periods, *, excess=0.0, typical_sd=0.6, success_limit_pct=80.0, min_days=1, error=change.NO_ERROR
+) -> change.Comparison:
     n_events = int(days.period.max()) // 2 + 1
     return change.compare(
-        days, n_events, excess=np.full(n_events, excess), typical_sd=typical_sd,
-        success_limit_pct=success_limit_pct, min_days=min_days,
+        change.seen(days, n_events, typical_sd), excess=np.full(n_events, excess),
+        success_limit_pct=success_limit_pct, error=error, min_days=min_days,
     )  # fmt: skip
 
 
@@ -127,13 +129,55 @@ def test_over_dispersed_counts_widen_the_interval():
 
 def test_the_variance_is_told_apart():
     """Counting, days, gap and detection share the variance of the log ratio, each as theory has it."""
-    found = change.compare(
-        periods([([100.0], [100.0])]), 1, excess=np.array([3.0]), typical_sd=COUNTING_ONLY, success_limit_pct=80,
-        detection_variance=0.02,
-    )  # fmt: skip
+    found = compare(
+        periods([([100.0], [100.0])]), excess=3.0, typical_sd=COUNTING_ONLY, error=change.DetectorError(sd_ln=0.1)
+    )
     # Source: variances of ln of two counts of 100 (2 / 100) beside 0.02 of detection
     shares = found.counting_share_pct[0], found.day_share_pct[0], found.gap_share_pct[0], found.detection_share_pct[0]
     assert shares == pytest.approx((50, 0, 0, 50), abs=0.5)
+
+
+def test_false_beats_can_make_up_a_baseline_or_an_after_period():
+    """False beats count against a verdict: taken off a baseline that falls, put on top of what rises."""
+    error = change.DetectorError(false_rate=50.0)
+    days = periods([([40], [0]), ([1000], [500]), ([0], [60]), ([0], [400])])
+    found = compare(days, typical_sd=COUNTING_ONLY, error=error)
+    assert found.verdict.tolist() == ["within_chance", "fell_beyond_chance", "within_chance", "rose_beyond_chance"]
+    # Source: counting alone, of 950 true beats and with 50 false ones on top; the ends of Poisson ratios, mid-P
+    plain, fewer, more = (
+        compare(periods([([n], [c])]), typical_sd=COUNTING_ONLY) for n, c in ((1000, 500), (950, 500), (1000, 450))
+    )
+    assert found.ratio_high[1] == pytest.approx(fewer.ratio_high[0], rel=1e-2)
+    assert found.ratio_low[1] == pytest.approx(more.ratio_low[0], rel=1e-2)
+    assert found.ratio[1] == plain.ratio[0]
+
+
+def test_what_may_be_false_beats_alone_has_no_lower_end():
+    """When false beats explain all that is left after, the fall may be complete: the lower end of the ratio is 0."""
+    days = periods([([10_000], [30])])
+    found = compare(days, typical_sd=COUNTING_ONLY, error=change.DetectorError(false_rate=50.0))
+    assert (found.ratio_low[0], found.verdict[0]) == (0, "fell_beyond_chance")
+    assert compare(days, typical_sd=COUNTING_ONLY).ratio_low[0] > 0
+
+
+@settings(max_examples=25, deadline=None)
+@given(st.data())
+def test_the_answer_does_not_depend_on_which_other_events_are_asked(data):
+    """An event has the same answer, to the last bit, alone and among others, given what the programme lends."""
+    side = st.lists(st.integers(0, 3) | st.integers(0, 5000), max_size=6)
+    events = data.draw(
+        st.lists(st.tuples(side, side), min_size=2, max_size=5).filter(lambda all_: any(map(any, all_[0])))
+    )
+    lent = spread.programme_weights(change.seen(periods(events), len(events), 0.6).explained)
+
+    def answer(some):
+        of = change.seen(periods(some), len(some), 0.6)
+        error = change.DetectorError(0.1, 2.0)
+        return change.compare(of, programme=lent, excess=np.ones(len(some)), success_limit_pct=80, error=error)
+
+    together, alone = answer(events), answer(events[:1])
+    for name, column in alone._asdict().items():
+        assert np.array_equal(column[:1], getattr(together, name)[:1], equal_nan=column.dtype.kind == "f"), name
 
 
 levels_of_days = st.lists(st.integers(0, 5000), min_size=1, max_size=9)

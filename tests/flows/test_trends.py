@@ -13,12 +13,12 @@ from dashboards import words
 from detectors.change import VERDICTS
 from flows.change import trends
 from flows.change.extremes import EXTREMES
-from flows.change.measures import MEASURES
+from flows.change.measures import MEASURES, REPEATABILITY_SD_LN
 from flows.settings import ChangeSettings, WearSettings
 from warehouse.schema import PUBLISHED
 
 EVENT = date(2026, 3, 20)
-DAYS_ALONE = ChangeSettings(gap_drift_share=0.0, detection_sd_ln=0.0)
+DAYS_ALONE = ChangeSettings(gap_drift_share=0.0, detector_error_share=0.0)
 DAY_SHAPE = 1 + 0.8 * np.cos(2 * np.pi * (np.arange(24) - 14) / 24)
 
 
@@ -61,8 +61,12 @@ def programme(hours: list[pl.DataFrame], events: dict[str, str]) -> dict[str, pl
     }
 
 
+def tables_of(inputs, change=DAYS_ALONE, wear=WearSettings()):  # noqa: B008 - frozen settings
+    return trends.tables(trends.Inputs(**inputs), change, wear).published
+
+
 def changes(hours, events, change=DAYS_ALONE, wear=WearSettings()):  # noqa: B008 - frozen settings
-    return trends.tables(**programme(hours, events), change=change, wear=wear)["changes"]
+    return tables_of(programme(hours, events), change, wear)["changes"]
 
 
 def wearing(patient: str, before: list[float], after: list[float], **of_after) -> list[pl.DataFrame]:
@@ -127,7 +131,7 @@ def test_no_therapy_gives_an_empty_table():
     table = changes(wearing("P1", STEADY, LOWER), {"T1": "P1"}).clear()
     tables = programme(wearing("P1", STEADY, LOWER), {"T1": "P1"})
     tables |= {"therapies": tables["therapies"].clear(), "periods": tables["periods"].clear()}
-    assert trends.tables(**tables, change=DAYS_ALONE, wear=WearSettings())["changes"].equals(table)
+    assert tables_of(tables)["changes"].equals(table)
 
 
 def test_losing_the_nights_does_not_look_like_a_change():
@@ -208,11 +212,35 @@ def test_time_between_the_periods_widens_the_chance_limit():
 def test_the_error_of_the_detector_widens_the_chance_limit():
     """However steady the days, a fall that the detector's own error explains is not beyond chance; its share is told."""
     steady = [400.0] * 20
-    change = replace(DAYS_ALONE, detection_sd_ln=0.2)
+    change = replace(DAYS_ALONE, detector_error_share=0.2 / REPEATABILITY_SD_LN)
     found = row(changes(wearing("P1", steady, [0.7 * level for level in steady]), {"T1": "P1"}, change=change))
     # Source: normal theory, 1 - exp(-1.645 x 0.2 x sqrt(2)) = 37.2 %, by hand
     assert 37 < found["chance_fall_limit_pct"] < 45
     assert (found["verdict"], found["detection_share_pct"] > 50) == ("within_chance", True)
+
+
+def test_a_fall_by_a_third_over_two_weeks_is_judged_by_how_the_days_vary():
+    """From 20 % to 13 % over seven days each side is beyond chance where the days vary little, not where they swing."""
+    for swing, verdict in ((0.02, "fell_beyond_chance"), (0.3, "within_chance")):
+        days = 835 * np.exp(swing * np.array([-1.2, 0.7, -0.4, 1.1, 0.2, -0.9, 0.5]))
+        hours = wearing("P1", list(days), list(0.65 * days[::-1]))
+        found = row(changes(hours, {"T1": "P1"}, change=ChangeSettings()))
+        assert found["after_value"] / found["baseline_value"] == pytest.approx(0.65, abs=0.01)
+        assert found["verdict"] == verdict
+
+
+def test_a_burden_that_false_beats_make_up_never_falls_beyond_chance():
+    """A baseline below the false beats of the detector proves nothing by vanishing; its row says so."""
+    few = [2 / 24] * 7  # two beats a day, one in 50,000
+    hours = [
+        day.with_columns(v_beats=(pl.int_range(pl.len()) < 2 * is_before).cast(pl.Int64))
+        for is_before, side in ((1, wearing("P1", few, [])), (0, wearing("P1", [], few)))
+        for day in side
+    ]
+    counted = row(changes(hours, {"T1": "P1"}))
+    found = row(changes(hours, {"T1": "P1"}, change=replace(DAYS_ALONE, detector_error_share=1.0)))
+    assert (counted["verdict"], found["verdict"]) == ("fell_beyond_chance", "within_chance")
+    assert found["chance_fall_limit_pct"] == 100
 
 
 def test_a_recurrence_has_its_first_day():
@@ -289,7 +317,7 @@ def test_a_fall_through_the_heart_rate_alone_is_seen_as_such():
         return hours.with_columns(v_beats=pl.Series(v_beats), mean_rate_bpm=pl.Series(rate))
 
     hours = [day(i, 75) for i in range(-7, 0)] + [day(i, 62) for i in range(7, 14)]
-    tables = trends.tables(**programme(hours, {"T1": "P1"}), change=DAYS_ALONE, wear=WearSettings())
+    tables = tables_of(programme(hours, {"T1": "P1"}))
     found = tables["rate_effects"].row(0, named=True)
     assert found["dependence"] == "follows_rate"
     assert found["ratio"] < 0.6
@@ -301,9 +329,7 @@ def test_a_fall_through_the_heart_rate_alone_is_seen_as_such():
 
 def test_an_event_without_wear_keeps_its_row_on_rate():
     """A therapy event without any wear has a row of unknown dependence."""
-    tables = trends.tables(
-        **programme(wearing("P1", STEADY, LOWER), {"T1": "P1", "T2": "P2"}), change=DAYS_ALONE, wear=WearSettings()
-    )
+    tables = tables_of(programme(wearing("P1", STEADY, LOWER), {"T1": "P1", "T2": "P2"}))
     found = tables["rate_effects"].filter(pl.col("patient_code") == "P2").row(0, named=True)
     assert (found["dependence"], found["equal_rate_ratio"]) == ("unknown", None)
     assert tuple(tables["rate_effects"].columns) == PUBLISHED["rate_effects"].columns
@@ -314,7 +340,7 @@ def test_levels_shift_where_they_did():
     rng = np.random.default_rng(10)
     noisy = [level * np.exp(0.2 * rng.standard_normal()) for level in [400] * 8 + [60] * 8]
     tables = programme(wearing("P1", noisy[:8], noisy[8:]) + wearing("P2", STEADY, STEADY), {"T1": "P1", "T2": "P2"})
-    found = trends.tables(**tables, change=DAYS_ALONE, wear=WearSettings())["level_shifts"]
+    found = tables_of(tables)["level_shifts"]
     assert found.select("patient_code", "local_day").rows() == [("P1", EVENT + timedelta(7))]
     assert found["level_before"][0] / found["level_after"][0] == pytest.approx(400 / 60, rel=0.25)
 
@@ -328,7 +354,7 @@ def test_a_cohort_counts_every_patient_and_imputes_none():
     ]
     hours += wearing("P4", STEADY, [])
     events = {f"T{i}": f"P{i}" for i in range(5)}
-    table = trends.tables(**programme(hours, events), change=DAYS_ALONE, wear=WearSettings())["cohort"]
+    table = tables_of(programme(hours, events))["cohort"]
     burden = table.filter(pl.col("measure") == "v_burden_pct").sort("limit_pct")
     assert burden["limit_pct"].to_list() == [50, 70, 80, 90]
     assert burden["responders"].to_list() == [3, 2, 2, 1]
@@ -345,7 +371,7 @@ def test_step_and_slope_after_the_event():
     before = 400 * np.exp(0.05 * rng.standard_normal(14))
     after = 80 * 2 ** (np.arange(14) / 7) * np.exp(0.05 * rng.standard_normal(14))
     tables = programme(wearing("P1", list(before), list(after)) + wearing("P2", [400], [40]), {"T1": "P1", "T2": "P2"})
-    found = trends.tables(**tables, change=DAYS_ALONE, wear=WearSettings())["series_fits"]
+    found = tables_of(tables)["series_fits"]
     fit, too_short = found.rows(named=True)
     assert fit["step_ratio_low"] < 0.2 < fit["step_ratio_high"] < 0.3
     assert fit["slope_ratio_per_week_low"] < 2 < fit["slope_ratio_per_week_high"] < 2.6
@@ -431,7 +457,7 @@ def test_heart_rate_by_hour_of_the_day_before_and_after():
     after = [hours_of("P1", EVENT + timedelta(7 + i), 40, rate_bpm=50, clock_hours=range(6, 24)) for i in range(2)]
     tables = programme(before + after, {"T1": "P1"})
     tables["wear_days"] = tables["wear_days"].with_columns(is_valid_day=pl.lit(True))
-    table = trends.tables(**tables, change=DAYS_ALONE, wear=WearSettings())["rate_by_clock_hour"]
+    table = tables_of(tables)["rate_by_clock_hour"]
     assert tuple(table.columns) == PUBLISHED["rate_by_clock_hour"].columns
     by_hour = {found["clock_hour"]: found for found in table.rows(named=True)}
     assert sorted(by_hour) == list(range(24))

@@ -110,7 +110,8 @@ def test_a_second_look_regresses_by_the_share_of_chance():
     rng = np.random.default_rng(3)
     usual = rng.normal(2, 1.0, 4000)
     first, second = (usual + rng.normal(0, 0.7, 4000) for _ in range(2))
-    expected = v.regression_to_mean(first, np.full(4000, 0.49))
+    error = np.full(4000, 0.49)
+    expected = v.regression_to_mean(first, error, v.usual_of(first, error))
     high = first > 3
     assert (second - first)[high].mean() == pytest.approx(expected[high].mean(), abs=0.03)
-    assert np.isnan(v.regression_to_mean(first[:4], np.full(4, 0.49))).all()
+    assert np.isnan(v.regression_to_mean(first, error, v.usual_of(first[:4], error[:4]))).all()
