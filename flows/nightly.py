@@ -103,10 +103,11 @@ def _bring_up_to_date(
 ) -> Outcome:
     from flows import edits, publication, register
     from flows.arrivals import ingest
-    from warehouse import layout
+    from warehouse import cache, layout
     from warehouse.ledger import Ledger
 
     people = register.load(folder, settings.programme.zone)
+    cache.settle(folder / "lake", settings.lake.store)
     if copy := layout.migrate(folder / "lake"):
         reporter.say(f"lake of an older layout brought up to date; as it was: {copy}")
     ledger = Ledger(folder / "lake")
@@ -119,6 +120,7 @@ def _bring_up_to_date(
     run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
     if arrivals.changed or work:
         _note_run(run_id, folder, ledger, arrivals, _outcome(True, arrivals.quarantined))
+    ledger.fill_cache()
     try:
         changed = publication.refresh(folder, settings, people, ledger, reporter.say)
     except publication.CheckFailed:

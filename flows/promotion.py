@@ -9,11 +9,11 @@ from pathlib import Path
 from flows.detect import fingerprint_of
 from flows.settings import Settings
 from warehouse.audit import Change, change_loads
+from warehouse.cache import PROMOTION_FILE, write_shared
 from warehouse.ledger import Ledger
-from warehouse.parts import read_part, write_whole
+from warehouse.parts import read_part
 
 PRESENT = "present"
-_FILE = "promoted.json"
 
 
 class PromotionError(ValueError):
@@ -22,7 +22,7 @@ class PromotionError(ValueError):
 
 def published_fingerprint(lake: Path, settings: Settings) -> str:
     """The promoted fingerprint, or that of the present detector and settings when none is promoted."""
-    path = lake / _FILE
+    path = lake / PROMOTION_FILE
     promoted = json.loads(path.read_text(encoding="utf-8"))["fingerprint"] if path.exists() else PRESENT
     return fingerprint_of(settings) if promoted == PRESENT else promoted
 
@@ -43,7 +43,7 @@ def promote(
     change = Change("promotion", "fingerprint", published_fingerprint(lake, settings), fingerprint, reason)
     now = datetime.now(UTC).replace(tzinfo=None)
     ledger.commit(change_loads(lake, [change], actor_code=actor_code, happened_utc=now), note="promote")
-    write_whole(lake / _FILE, json.dumps({"fingerprint": fingerprint}).encode())
+    write_shared(lake, PROMOTION_FILE, json.dumps({"fingerprint": fingerprint}).encode())
 
 
 def check_known(ledger: Ledger, fingerprint: str) -> None:

@@ -33,6 +33,7 @@ from flows.progress import Reporter, Silent
 from flows.sentences import is_sentence, sentence
 from flows.workers import WorkersAway
 from warehouse.published import Published
+from warehouse.store import StoreAway
 
 NIGHT_S = 12 * 3600
 WAIT_FOR_FOLDER_S = 600.0
@@ -87,7 +88,7 @@ class _RunLog(Silent):
 
 def _can_heal(task: Any, run: Any, state: State) -> bool:
     """A busy folder, a full disk, a share or workers that are away can heal; wrong settings or a failed check cannot."""
-    return isinstance(state.result(raise_on_failure=False), (OSError, FolderBusy, WorkersAway))
+    return isinstance(state.result(raise_on_failure=False), (OSError, FolderBusy, WorkersAway, StoreAway))
 
 
 @task(

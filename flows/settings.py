@@ -8,11 +8,14 @@ from __future__ import annotations
 
 import difflib
 import json
+import re
 import tomllib
 from dataclasses import Field, asdict, dataclass, field, fields
 from pathlib import Path
 from typing import Any
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
+
+_STORE_URL = re.compile(r"s3://[a-z0-9][a-z0-9.-]{1,61}[a-z0-9](/[A-Za-z0-9._-]+)*")
 
 
 class SettingsError(ValueError):
@@ -130,6 +133,15 @@ class WorkersSettings:
 
 
 @dataclass(frozen=True)
+class LakeSettings:
+    """Where landed parts are kept. Execution only: never changes a result."""
+
+    store: str = _setting(
+        "", "S3-compatible place of the lake, s3://bucket/prefix; lake/ is then a cache of it; empty: in lake/ alone"
+    )
+
+
+@dataclass(frozen=True)
 class NotifySettings:
     """Who is told how a scheduled run ended. Execution only; nothing is sent when both are empty."""
 
@@ -162,6 +174,7 @@ class Settings:
     attention: AttentionSettings = field(default_factory=AttentionSettings)
     inbox: InboxSettings = field(default_factory=InboxSettings)
     site: SiteSettings = field(default_factory=SiteSettings)
+    lake: LakeSettings = field(default_factory=LakeSettings)
     workers: WorkersSettings = field(default_factory=WorkersSettings)
     notify: NotifySettings = field(default_factory=NotifySettings)
     status: StatusSettings = field(default_factory=StatusSettings)
@@ -208,6 +221,8 @@ def _value(where: str, setting: Field, value: Any) -> Any:
         raise SettingsError(f"{where} = {value!r}; expected an address that begins with http:// or https://")
     if setting.name == "scheduler" and value and not str(value).startswith(("tcp://", "tls://")):
         raise SettingsError(f"{where} = {value!r}; expected an address such as tcp://host:8786")
+    if setting.name == "store" and value and not _STORE_URL.fullmatch(str(value)):
+        raise SettingsError(f"{where} = {value!r}; expected an address such as s3://bucket/prefix, without a key in it")
     if setting.name == "accepted_files" and value not in ("leave", "remove"):
         raise SettingsError(f"{where} = {value!r}; expected leave or remove")
     return value

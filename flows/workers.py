@@ -1,18 +1,23 @@
 """Recordings analysed by the workers of a Dask scheduler: they write parts, this process alone commits them.
 
-Every worker has the same burdenline installed and sees the programme folder under the same path.
+Every worker has the same burdenline installed and sees the programme folder under the same path, or the lake's store.
 """
 
 from __future__ import annotations
 
 import logging
+import tempfile
 from collections.abc import Iterator, Sequence
+from dataclasses import replace
+from pathlib import Path
 from typing import TYPE_CHECKING
 
 from flows import nightly
 from flows.detect import fingerprint_of
 from flows.nightly import Analysed, Work
 from flows.progress import Reporter
+from warehouse.cache import noted_url, settle
+from warehouse.store import Store
 
 if TYPE_CHECKING:
     from distributed import Client, Future
@@ -49,12 +54,22 @@ def analyse_on_workers(work: Sequence[Work], reporter: Reporter) -> Iterator[Ana
 
 
 def analyse_seen(item: Work) -> Analysed:
-    """Analyse one recording in a worker, once it is sure that the worker sees the folder."""
-    if not (item.folder / "lake" / "ledger").is_dir():
+    """Analyse one recording in a worker: in the folder where the worker sees it, else out of and into the lake's store."""
+    lake, url = item.folder / "lake", item.settings.lake.store
+    if (lake / "ledger").is_dir() and noted_url(lake) == url:
+        return nightly.analyse_one(item)
+    if not url:
         raise WorkersError(
-            f"a worker does not see {item.folder}; share the folder with every worker under the same path"
+            f"a worker does not see {item.folder}; share the folder with every worker under the same path, "
+            "or keep the lake in a store ([lake] store)"
         )
-    return nightly.analyse_one(item)
+    with tempfile.TemporaryDirectory(prefix="burdenline-") as scratch:
+        elsewhere = replace(item, folder=Path(scratch))
+        settle(elsewhere.folder / "lake", url)
+        analysed = nightly.analyse_one(elsewhere)
+        made = [part.path for parts in analysed.loads.values() for part in parts]
+        Store(url).push(elsewhere.folder / "lake", made)
+        return analysed
 
 
 def _connected(address: str) -> Client:

@@ -23,6 +23,7 @@ from pathlib import Path
 from typing import Any
 
 from warehouse.build import TrendBuild
+from warehouse.cache import complete
 from warehouse.kept import GROUNDS
 from warehouse.ledger import Damage
 from warehouse.parts import Part, file_sha256, write_whole
@@ -112,6 +113,7 @@ def damages(published: Path, name: str) -> list[Damage]:
     cut, written = published / "cuts" / name, described(published, name)
     found = {path: digest for path, digest in _hashes(cut).items() if path != CUT and not _differs_by_itself(path)}
     lake = cut / written["lake"]
+    complete(lake, written["parts"])
     parts = {path: file_sha256(lake / path) for path in written["parts"] if (lake / path).is_file()}
     return [*_differences(written["files"], found), *_differences(written["parts"], parts)]
 

@@ -13,7 +13,7 @@ import shutil
 from collections.abc import Callable
 from pathlib import Path
 
-from warehouse.parts import write_whole
+from warehouse.cache import LAYOUT_FILE, noted_url, write_shared
 
 LAYOUT = 1
 """Number of the present layout; raised, with a step in MIGRATIONS, when an older program could no longer read it."""
@@ -24,8 +24,6 @@ MIGRATIONS: dict[int, Callable[[Path], None]] = {}
 A step writes new files beside and renames them, and it may begin anew after it was killed at any place.
 """
 
-_FILE = "layout.json"
-
 
 class LayoutError(RuntimeError):
     """The lake has another layout; the message names both numbers and what to do."""
@@ -33,7 +31,7 @@ class LayoutError(RuntimeError):
 
 def found_layout(lake: Path) -> int | None:
     """Number of the lake's layout; None for a lake that was never written."""
-    path = lake / _FILE
+    path = lake / LAYOUT_FILE
     if not path.exists():
         return None
     try:
@@ -46,7 +44,7 @@ def found_layout(lake: Path) -> int | None:
 
 def note_layout(lake: Path, number: int) -> None:
     """Write the number down."""
-    write_whole(lake / _FILE, json.dumps({"layout": number}).encode())
+    write_shared(lake, LAYOUT_FILE, json.dumps({"layout": number}).encode())
 
 
 def check_layout(lake: Path) -> None:
@@ -75,6 +73,8 @@ def migrate(lake: Path) -> Path | None:
     if found is None or found >= LAYOUT:
         check_layout(lake)
         return None
+    if url := noted_url(lake):
+        raise LayoutError(f"{url}: layout {found}; this version reads layout {LAYOUT} and changes no lake in a store")
     missing = [number for number in range(found, LAYOUT) if number not in MIGRATIONS]
     if missing:
         raise LayoutError(

@@ -11,16 +11,19 @@ from __future__ import annotations
 
 import time
 from collections.abc import Collection, Mapping, Sequence
+from contextlib import AbstractContextManager, nullcontext
 from pathlib import Path
 from typing import NamedTuple
 
 import polars as pl
 from deltalake import CommitProperties, DeltaTable, write_deltalake
-from deltalake.exceptions import DeltaError
+from deltalake.exceptions import DeltaError, TableNotFoundError
 
 from warehouse import layout, schema
+from warehouse.cache import refresh, store_of
 from warehouse.layout import check_layout, found_layout, note_layout
 from warehouse.parts import Part, file_sha256
+from warehouse.store import Store, StoreError
 
 COMPACT_FILES = 40
 _PATTERN_CHARACTERS = "*?[]{}%"
@@ -55,13 +58,15 @@ class Ledger:
 
     def __init__(self, lake: Path) -> None:
         self._lake = lake
-        self._delta = _open_or_create(lake)
+        self._store = store_of(lake)
+        self._delta = _open_or_create(lake, self._store)
         self._rows: tuple[int, pl.DataFrame] = (-1, pl.DataFrame(schema=_ROW_SCHEMA))
 
     @property
     def version(self) -> int:
         """Number of the latest commit, whoever made it."""
-        self._delta.update_incremental()
+        with _told_by(self._store):
+            self._delta.update_incremental()
         return self._delta.version()
 
     def parts(self, table: str | None = None, key: str | None = None) -> list[Part]:
@@ -78,22 +83,40 @@ class Ledger:
 
         Parts of the same table and key under another fingerprint stay; an empty sequence withdraws those of every
         fingerprint. Other loads stay as they are. Returns the number of the commit. When another committer was faster,
-        it is tried again on top of theirs. Raises LedgerError for parts of another load and for parts without a file.
+        it is tried again on top of theirs. Where the lake has a store its parts are put there first. Raises LedgerError for
+        parts of another load and for parts without a file, StoreError for what the store does not take.
         """
         self._check(loads)
+        if self._store:
+            self._store.push(self._lake, [part.path for parts in loads.values() for part in parts])
         while True:
             version = self.version
             try:
-                self._append(version + 1, loads, note)
+                with _told_by(self._store):
+                    self._append(version + 1, loads, note)
                 return version + 1
             except DeltaError as problem:
                 if self.version == version:
+                    if self._store:
+                        raise self._store.sentence(problem) from None
                     raise LedgerError(f"cannot write the ledger of {self._lake}: {problem}") from problem
+
+    def fill_cache(self) -> None:
+        """Get all parts in force but the samples from the lake's store, where it has one, for readers that know only files."""
+        if not self._store:
+            return
+        wanted = {part.path: part.sha256 for part in self.parts() if part.table != "signal"}
+        if lacking := self._store.fetch(self._lake, wanted):
+            raise StoreError(
+                f"{len(lacking)} parts are not in {self._store.url} as they were landed, {lacking[0]} for one; "
+                "`burdenline verify` lists them, restore them from a copy"
+            )
 
     def drop_history(self, grace_s: float) -> None:
         """Remove the ledger's own files that the latest commit does not need and that are older than `grace_s`."""
-        self._delta.update_incremental()
-        self._delta.vacuum(int(max(grace_s, 0) // 3600), dry_run=False, enforce_retention_duration=False)
+        with _told_by(self._store):
+            self._delta.update_incremental()
+            self._delta.vacuum(int(max(grace_s, 0) // 3600), dry_run=False, enforce_retention_duration=False)
 
     def _append(self, commit: int, loads: Mapping[tuple[str, str], Sequence[Part]], note: str) -> None:
         rows = _load_rows(commit, loads)
@@ -114,14 +137,17 @@ class Ledger:
             for part in parts:
                 if (part.table, part.key) != (table, key):
                     raise LedgerError(f"{part.path} belongs to load {part.table}/{part.key}, not to {table}/{key}")
-                if not (self._lake / part.path).is_file():
+                if not self._store and not (self._lake / part.path).is_file():
                     raise LedgerError(f"{part.path} is not in {self._lake}; write the part before it is committed")
 
     def _read(self) -> pl.DataFrame:
         version = self.version
         if self._rows[0] != version:
             # Only the names: the addresses are percent-encoded, and all files lie in the ledger's own folder.
-            files = [self._lake / "ledger" / Path(uri).name for uri in self._delta.file_uris()]
+            names = [f"ledger/{Path(uri).name}" for uri in self._delta.file_uris()]
+            if self._store:
+                self._store.fetch(self._lake, dict.fromkeys(names, ""))
+            files = [self._lake / name for name in names]
             rows = (
                 pl.read_parquet(files, glob=False).select(list(_ROW_SCHEMA))
                 if files
@@ -146,27 +172,37 @@ def _in_force(rows: pl.DataFrame) -> pl.DataFrame:
     return in_force.sort("table", "key", "fingerprint", "segment", "block", "path")
 
 
-def _open_or_create(lake: Path) -> DeltaTable:
-    folder = lake / "ledger"
-    address = _address(folder)
+def _told_by(store: Store | None) -> AbstractContextManager[None]:
+    """Errors of a store become sentences; those of a folder speak for themselves."""
+    return store.told() if store else nullcontext()
+
+
+def _open_or_create(lake: Path, store: Store | None) -> DeltaTable:
+    if store:
+        refresh(lake, store)
+    address, options = (f"{store.url}/ledger", store.delta_options) if store else (_address(lake / "ledger"), None)
     check_layout(lake)
     if found_layout(lake) is not None:
-        if not DeltaTable.is_deltatable(address):
+        try:
+            with _told_by(store):
+                return DeltaTable(address, storage_options=options)
+        except TableNotFoundError:
             raise LedgerError(
-                f"{folder} is gone, but {lake} holds landed parts; restore the ledger folder from a copy, "
+                f"{address} is gone, but {lake} holds landed parts; restore the ledger folder from a copy, "
                 f"or remove {lake} whole and run again over the inbox"
-            )
-        return DeltaTable(address)
-    folder.mkdir(parents=True, exist_ok=True)
-    delta = DeltaTable.create(
-        address,
-        schema=pl.Schema(_ROW_SCHEMA),
-        mode="ignore",
-        name="ledger",
-        description="which parts of the lake are in force",
-        # The log is the audit trail of every load, so it is never shortened.
-        configuration={"delta.enableExpiredLogCleanup": "false"},
-    )
+            ) from None
+    (lake / "ledger").mkdir(parents=True, exist_ok=True)
+    with _told_by(store):
+        delta = DeltaTable.create(
+            address,
+            schema=pl.Schema(_ROW_SCHEMA),
+            mode="ignore",
+            name="ledger",
+            description="which parts of the lake are in force",
+            # The log is the audit trail of every load, so it is never shortened.
+            configuration={"delta.enableExpiredLogCleanup": "false"},
+            storage_options=options,
+        )
     note_layout(lake, layout.LAYOUT)
     return delta
 
@@ -182,14 +218,21 @@ def _address(folder: Path) -> str:
 
 
 def verify(lake: Path) -> list[Damage]:
-    """Every part in force whose file is missing or whose bytes are not those that were landed."""
+    """Every part in force whose file is missing or whose bytes are not those that were landed.
+
+    Where the lake has a store its objects are read too, and the folder may lack what the store holds.
+    """
+    parts, store = Ledger(lake).parts(), store_of(lake)
     damages = []
-    for part in Ledger(lake).parts():
+    for part in parts:
         path = lake / part.path
-        if not path.is_file():
+        if path.is_file():
+            if file_sha256(path) != part.sha256:
+                damages.append(Damage(part.path, "bytes changed after it landed"))
+        elif not store:
             damages.append(Damage(part.path, "missing"))
-        elif file_sha256(path) != part.sha256:
-            damages.append(Damage(part.path, "bytes changed after it landed"))
+    if store:
+        damages += [Damage(*found) for found in store.changed({part.path: part.sha256 for part in parts})]
     return damages
 
 
@@ -202,12 +245,16 @@ def tidy(lake: Path, grace_s: float, *, keep: Collection[str] = ()) -> list[str]
     that a running load has written and not yet committed.
     """
     # Files are listed before the ledger is read: a part committed in between is then in force, not missed.
-    oldest_s = time.time() - grace_s
+    oldest_s, store = time.time() - grace_s, store_of(lake)
     files = [path for table in schema.LAKE for path in (lake / table).glob("*/*") if path.stat().st_mtime <= oldest_s]
+    objects = [found for table in schema.LAKE for found in store.objects(table)] if store else []
     ledger = Ledger(lake)
     wanted = {part.path for part in ledger.parts()} | set(keep)
-    removed = [path for path in files if path.relative_to(lake).as_posix() not in wanted]
-    for path in removed:
-        path.unlink(missing_ok=True)
+    here = {path.relative_to(lake).as_posix() for path in files} - wanted
+    there = {found.path for found in objects if found.put_s <= oldest_s} - wanted
+    for path in here:
+        (lake / path).unlink(missing_ok=True)
+    if store:
+        store.remove(sorted(there))
     ledger.drop_history(grace_s)
-    return sorted(path.relative_to(lake).as_posix() for path in removed)
+    return sorted(here | there)
