@@ -18,7 +18,7 @@ import numpy as np
 
 from detectors import synthetic
 from detectors.synthetic import Hour, Noise, Rhythm
-from flows.edf_write import EdfHeader, Piece, write_edf
+from flows.edf_write import EdfHeader, Mark, Piece, write_edf
 from flows.programme import make_folder
 
 SEED = 2026
@@ -33,6 +33,14 @@ _WEAR_BEGINS_H = 10  # o'clock
 _WORN = Noise(lead_off_per_h=0.15)
 
 
+class Press(NamedTuple):
+    """The patient presses the button of the patch: so long after the first window of a day of the wear begins."""
+
+    day: int
+    minute: float
+    text: str
+
+
 class Wear(NamedTuple):
     """One patch on one patient: from 10:00 of a day of the story."""
 
@@ -40,6 +48,7 @@ class Wear(NamedTuple):
     days: int
     rhythm: Rhythm
     nights: bool = True  # False: taken off from 22:00 to 7:00
+    presses: tuple[Press, ...] = ()
 
 
 class Therapy(NamedTuple):
@@ -73,9 +82,11 @@ def story() -> tuple[Patient, ...]:
     stopped = calm._replace(v_share_pct=2.0, rate_bpm=62, v_day_sd=0.15)
     atrial = calm._replace(v_share_pct=0.4, s_share_pct=4.0, rate_bpm=74)
     medication, ablation = "medication_start", "ablation"
+    before = (Press(0, 12.4, "skipped beats"), Press(2, 31.0, "button"), Press(3, 5.25, "skipped beats"))
+    back_again = (Press(1, 8.5, "palpitations"), Press(4, 22.75, "palpitations, dizzy"))
     return (
         Patient("HB-101", "beta-blocker responder", (
-            Wear(1, 6, one_focus),
+            Wear(1, 6, one_focus, presses=before),
             Wear(18, 6, one_focus._replace(v_share_pct=2.2, rate_bpm=66)),
             Wear(52, 6, one_focus._replace(v_share_pct=1.8, rate_bpm=65)),
         ), (Therapy(8, medication, "bisoprolol 5 mg daily"),), fs_hz=250),
@@ -91,7 +102,7 @@ def story() -> tuple[Patient, ...]:
         ), (Therapy(12, ablation, "right ventricular outflow tract"),)),
         Patient("LT-202", "early recurrence after ablation", (
             Wear(5, 6, recurring), Wear(30, 6, recurring._replace(v_share_pct=1.0)),
-            Wear(51, 6, recurring._replace(v_share_pct=15.0)),
+            Wear(51, 6, recurring._replace(v_share_pct=15.0), presses=back_again),
         ), (Therapy(13, ablation, "left ventricular summit"),)),
         Patient("DN-301", "too little wear after therapy", (
             Wear(6, 6, short_wear), Wear(26, 1, short_wear._replace(v_share_pct=4.0)),
@@ -100,7 +111,8 @@ def story() -> tuple[Patient, ...]:
             Wear(7, 6, slowed), Wear(27, 6, slowed._replace(rate_bpm=62)),
         ), (Therapy(16, "dose_change", "ivabradine 5 to 7.5 mg twice daily"),), zone="Atlantic/Azores"),
         Patient("DN-303", "atrial ectopy, then an irregular rhythm; no therapy", (
-            Wear(8, 5, atrial), Wear(40, 3, atrial._replace(atrial_fibrillation=True, s_share_pct=0.0)),
+            Wear(8, 5, atrial), Wear(40, 3, atrial._replace(atrial_fibrillation=True, s_share_pct=0.0),
+                                     presses=(Press(1, 17.5, "heart races"),)),
         )),
     )  # fmt: skip
 
@@ -162,14 +174,22 @@ def _write_register(register: Path, patients: tuple[Patient, ...]) -> None:
 
 def _write_wear(inbox: Path, patient: Patient, wear: Wear, seed: int) -> None:
     start = _start(wear)
-    header = EdfHeader(patient.code, _serial(patient, wear), start, patient.fs_hz, synthetic.MV_PER_COUNT)
+    header = EdfHeader(
+        patient.code, _serial(patient, wear), start, patient.fs_hz, synthetic.MV_PER_COUNT, has_marks=bool(wear.presses)
+    )
     path = inbox / f"{header.device_serial}_{start:%Y%m%d}.edf"
     write_edf(path, header, _windows(wear, patient.fs_hz, seed))
     _set_time(path, start + timedelta(days=wear.days + 2))
 
 
 def _windows(wear: Wear, fs_hz: int, seed: int) -> Iterator[Piece]:
-    return (Piece(elapsed_h * 3_600_000, hour.counts) for elapsed_h, hour in true_windows(wear, fs_hz, seed))
+    waiting = list(wear.presses)
+    for elapsed_h, hour in true_windows(wear, fs_hz, seed):
+        begin_ms = elapsed_h * 3_600_000
+        pressed = [press for press in waiting if press.day == elapsed_h // 24]
+        waiting = [press for press in waiting if press not in pressed]
+        marks = tuple(Mark(begin_ms + round(press.minute * 60_000), press.text) for press in pressed)
+        yield Piece(begin_ms, hour.counts, marks)
 
 
 def true_windows(wear: Wear, fs_hz: int, seed: int) -> Iterator[tuple[int, Hour]]:

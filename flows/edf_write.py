@@ -18,6 +18,7 @@ from numpy.typing import NDArray
 
 _MONTHS = ("JAN", "FEB", "MAR", "APR", "MAY", "JUN", "JUL", "AUG", "SEP", "OCT", "NOV", "DEC")
 _TIME_BYTES = 24  # room for the time-keeping annotation of one data record
+_MARK_BYTES = 40  # and for a mark beside it
 _DIGITAL_MIN, _DIGITAL_MAX = -32768, 32767
 
 
@@ -31,19 +32,34 @@ class EdfHeader(NamedTuple):
     mv_per_count: float
     lead: str = "ECG"
     record_s: int = 10  # length of one data record
+    has_marks: bool = False  # there is room for one mark in each data record
+
+    @property
+    def annotation_bytes(self) -> int:
+        """Room for annotations in one data record."""
+        return _TIME_BYTES + _MARK_BYTES * self.has_marks
+
+
+class Mark(NamedTuple):
+    """Something that the patient marked, in whole milliseconds after the start of the file."""
+
+    offset_ms: int
+    text: str
 
 
 class Piece(NamedTuple):
-    """Samples and where they begin, in whole milliseconds after the start of the file."""
+    """Samples and where they begin, in whole milliseconds after the start of the file, and the marks within them."""
 
     offset_ms: int
     counts: NDArray[np.int16]
+    marks: tuple[Mark, ...] = ()
 
 
 def write_edf(path: Path, header: EdfHeader, pieces: Iterable[Piece]) -> None:
     """Write pieces in time order; each is a whole number of data records and does not begin before the last one ends.
 
-    Raises ValueError for a piece that breaks this, or for a code with blanks or characters outside printable ASCII.
+    Raises ValueError for a piece that breaks this, for a code with blanks or characters outside printable ASCII, and for
+    annotations that a data record has no room for.
     """
     count, is_continuous, next_ms = 0, True, 0
     with path.open("wb") as file:
@@ -61,7 +77,7 @@ def write_edf(path: Path, header: EdfHeader, pieces: Iterable[Piece]) -> None:
 
 
 def _records(header: EdfHeader, piece: Piece, next_ms: int) -> NDArray[np.void]:
-    """Data records of a piece: samples, then the annotation that keeps the time."""
+    """Data records of a piece: samples, then the annotation that keeps the time, then the marks of its seconds."""
     per_record = header.fs_hz * header.record_s
     count, rest = divmod(len(piece.counts), per_record)
     if rest or piece.offset_ms < next_ms:
@@ -69,17 +85,24 @@ def _records(header: EdfHeader, piece: Piece, next_ms: int) -> NDArray[np.void]:
             f"piece at {piece.offset_ms} ms with {len(piece.counts)} samples; expected a multiple of {per_record} "
             f"samples beginning at {next_ms} ms or later"
         )
-    records = np.zeros(count, np.dtype([("counts", "<i2", (per_record,)), ("time", f"S{_TIME_BYTES}")]))
+    records = np.zeros(count, np.dtype([("counts", "<i2", (per_record,)), ("notes", f"S{header.annotation_bytes}")]))
     records["counts"] = piece.counts.reshape(count, per_record)
     first_ms = piece.offset_ms + header.start_local.microsecond // 1000
-    records["time"] = [_time_keeping(first_ms + n * header.record_s * 1000) for n in range(count)]
+    notes = [_note(first_ms + n * header.record_s * 1000, "") for n in range(count)]
+    for mark in piece.marks:
+        number = (mark.offset_ms - piece.offset_ms) // (header.record_s * 1000)
+        notes[number] += b"\0" + _note(mark.offset_ms + header.start_local.microsecond // 1000, f"{mark.text}\x14")
+        if len(notes[number]) > header.annotation_bytes:
+            raise ValueError(f"no room for the mark {mark.text!r}; a data record holds {header.annotation_bytes} bytes")
+    records["notes"] = notes
     return records
 
 
-def _time_keeping(onset_ms: int) -> bytes:
+def _note(onset_ms: int, text: str) -> bytes:
+    """A time-stamped annotation; without a text it keeps the time of its record."""
     seconds, rest_ms = divmod(onset_ms, 1000)
     fraction = f".{rest_ms:03d}".rstrip("0") if rest_ms else ""
-    return f"+{seconds}{fraction}\x14\x14".encode()
+    return f"+{seconds}{fraction}\x14{text or chr(0x14)}".encode()
 
 
 def _write_header(file: BinaryIO, header: EdfHeader, count: int, is_continuous: bool) -> None:
@@ -94,7 +117,7 @@ def _write_header(file: BinaryIO, header: EdfHeader, count: int, is_continuous: 
         (header.lead, 16), ("EDF Annotations", 16), ("adhesive patch", 80), ("", 80), ("mV", 8), ("", 8),
         (low_mv, 8), ("-1", 8), (high_mv, 8), ("1", 8),
         (str(_DIGITAL_MIN), 8), (str(_DIGITAL_MIN), 8), (str(_DIGITAL_MAX), 8), (str(_DIGITAL_MAX), 8),
-        ("", 80), ("", 80), (str(header.fs_hz * header.record_s), 8), (str(_TIME_BYTES // 2), 8), ("", 32), ("", 32),
+        ("", 80), ("", 80), (str(header.fs_hz * header.record_s), 8), (str(header.annotation_bytes // 2), 8), ("", 32), ("", 32),
     ):  # fmt: skip
         file.write(_field(text, width))
 

@@ -58,7 +58,7 @@ def test_a_wear_has_one_window_every_three_hours(programme):
     """A file of one day holds eight windows, three hours apart."""
     file = min((programme / "inbox").glob("SK101*.edf"))
     raw = file.read_bytes()
-    record_bytes = 10 * 250 * 2 + 24
+    record_bytes = 10 * 250 * 2 + 64  # marks of the patient have room
     onsets_s = np.array(
         [float(raw[at : at + 24].split(b"\x14")[0]) for at in range(768 + 5000, len(raw), record_bytes)]
     )
@@ -66,6 +66,13 @@ def test_a_wear_has_one_window_every_three_hours(programme):
     assert raw[192:197] == b"EDF+D"
     assert onsets_s[np.concatenate([[0], breaks + 1])].tolist() == [n * 10_800 for n in range(8)]
     assert len(onsets_s) == 8 * demo.WINDOW_S // 10
+
+
+def test_presses_of_the_button_stand_in_the_file(programme):
+    """The patient's button of the first day is an annotation of its file, as long after the start as the story says."""
+    press = demo.story()[0].wears[0].presses[0]
+    (mark,) = edfio.read_edf(min((programme / "inbox").glob("SK101*.edf"))).annotations
+    assert (mark.onset, mark.text) == (pytest.approx(60 * press.minute), press.text)
 
 
 def test_three_days_cover_the_clock():

@@ -7,7 +7,7 @@ import numpy as np
 import pyedflib
 import pytest
 
-from flows.edf_write import EdfHeader, Piece, write_edf
+from flows.edf_write import EdfHeader, Mark, Piece, write_edf
 
 START = datetime(2026, 3, 2, 9, 30, 15)  # noqa: DTZ001  the clock at the patient's place
 HEADER = EdfHeader("DN-301", "SK20417", START, fs_hz=250, mv_per_count=0.0025, record_s=1)
@@ -45,6 +45,23 @@ def test_gap_makes_the_file_discontinuous(tmp_path):
     # Source: EDF+ specification, section 2.1.1: EDF+D marks interrupted recordings
     assert raw[192:197] == b"EDF+D"
     assert not edfio.read_edf(path).is_continuous
+
+
+def test_marks_are_read_by_two_libraries(tmp_path):
+    """A mark stands in the data record of its instant and comes back with its time and text."""
+    path = tmp_path / "marked.edf"
+    marks = (Mark(1500, "palpitations"), Mark(2000, "dizzy"))
+    write_edf(path, HEADER._replace(has_marks=True), [Piece(0, ramp(4), marks)])
+    assert [(a.onset, a.text) for a in edfio.read_edf(path).annotations] == [(1.5, "palpitations"), (2.0, "dizzy")]
+    with pyedflib.EdfReader(str(path)) as by_pyedflib:
+        onset_s, _, text = by_pyedflib.readAnnotations()
+        assert (onset_s.tolist(), text.tolist()) == ([1.5, 2.0], ["palpitations", "dizzy"])
+
+
+def test_a_mark_without_room_is_refused(tmp_path):
+    """A file whose header leaves no room for marks takes none."""
+    with pytest.raises(ValueError, match="no room for the mark 'palpitations on the stairs'"):
+        write_edf(tmp_path / "n.edf", HEADER, [Piece(0, ramp(1), (Mark(0, "palpitations on the stairs"),))])
 
 
 def test_start_within_a_second(tmp_path):
