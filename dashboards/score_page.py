@@ -3,26 +3,11 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from pathlib import Path
 from typing import Any
 
-import jinja2
-from markupsafe import Markup
-
-from dashboards import words
-
-_ROOM = Path(__file__).parent
+from dashboards.alone import render_alone
 
 
 def render(report: Mapping[str, Any]) -> str:
     """Return the page for a report of plain values, as `burdenline score --json` prints it."""
-    environment = jinja2.Environment(
-        loader=jinja2.FileSystemLoader(_ROOM / "templates"),
-        autoescape=True,
-        undefined=jinja2.StrictUndefined,
-        trim_blocks=True,
-        lstrip_blocks=True,
-    )
-    environment.filters |= words.FILTERS
-    style = Markup((_ROOM / "assets" / "site.css").read_text(encoding="utf-8"))  # our own file, no user text
-    return environment.get_template("score.html.j2").render(report=report, style=style, words=words)
+    return render_alone("score.html.j2", report=report)

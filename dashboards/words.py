@@ -126,6 +126,13 @@ def local_time(instant_utc: datetime, zone: str) -> datetime:
     return instant_utc.replace(tzinfo=UTC).astimezone(ZoneInfo(zone))
 
 
+def age(hours: float | None) -> str:
+    """Return a span of hours as people say it: in hours up to two days, then in days."""
+    if hours is None:
+        return MISSING
+    return f"{number(hours, 0 if hours >= 10 else 1)} h" if hours < 48 else f"{number(hours / 24)} days"
+
+
 def therapy(kind: str, detail: str | None) -> str:
     """Return a therapy event in words, such as 'start of bisoprolol 5 mg'."""
     return " ".join(part for part in (THERAPIES.get(kind, kind), detail) if part).rstrip(",")
@@ -160,6 +167,7 @@ FILTERS: dict[str, Callable[..., Any]] = {
     "signed": signed,
     "day": day,
     "clock": clock,
+    "age": age,
     "plain": plain,
     "sentence": sentence,
     "word": lambda code, words: words.get(code, plain(code)),

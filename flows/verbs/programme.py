@@ -60,12 +60,17 @@ def _outcome_text(outcome: Any) -> str:
 def _status_arguments(parser: argparse.ArgumentParser) -> None:
     folder_argument(parser)
     json_option(parser)
+    parser.add_argument("--html", type=Path, metavar="FILE", help="also write the status as one page")
 
 
 def _status(asked: argparse.Namespace) -> int:
+    from dashboards.status_page import status_html
     from flows.status import status, status_text
+    from warehouse.parts import write_whole
 
     found = status(asked.folder)
+    if asked.html:
+        write_whole(asked.html, status_html(found).encode())
     print(json.dumps(found) if asked.json else status_text(found))
     return 0
 
