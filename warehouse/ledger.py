@@ -9,6 +9,7 @@ Rows that are history are dropped when the table is written anew every COMPACT_F
 
 from __future__ import annotations
 
+import os
 import time
 from collections.abc import Collection, Mapping, Sequence
 from contextlib import AbstractContextManager, nullcontext
@@ -119,8 +120,8 @@ class Ledger:
             self._delta.vacuum(int(max(grace_s, 0) // 3600), dry_run=False, enforce_retention_duration=False)
 
     def _append(self, commit: int, loads: Mapping[tuple[str, str], Sequence[Part]], note: str) -> None:
-        rows = _load_rows(commit, loads)
-        compact = len(self._delta.file_uris()) >= COMPACT_FILES
+        rows, files_before = _load_rows(commit, loads), self._delta.file_uris()
+        compact = len(files_before) >= COMPACT_FILES
         if compact:
             rows = _in_force(pl.concat([self._read(), rows]))
         write_deltalake(
@@ -129,6 +130,15 @@ class Ledger:
             mode="overwrite" if compact else "append",
             commit_properties=CommitProperties(custom_metadata={"note": note}, max_commit_retries=0),
         )
+        if not self._store:
+            self._flush(commit, set(self._delta.file_uris()) - set(files_before))
+
+    def _flush(self, commit: int, new_files: Collection[str]) -> None:
+        """Bring a commit to the disk, so that no power loss undoes it after a caller relied on it and moved a file."""
+        folder = self._lake / "ledger"
+        for path in (*(folder / Path(uri).name for uri in new_files), folder / "_delta_log" / f"{commit:020d}.json"):
+            with path.open("rb") as file:
+                os.fsync(file.fileno())
 
     def _check(self, loads: Mapping[tuple[str, str], Sequence[Part]]) -> None:
         for (table, key), parts in loads.items():
@@ -148,11 +158,10 @@ class Ledger:
             if self._store:
                 self._store.fetch(self._lake, dict.fromkeys(names, ""))
             files = [self._lake / name for name in names]
-            rows = (
-                pl.read_parquet(files, glob=False).select(list(_ROW_SCHEMA))
-                if files
-                else pl.DataFrame(schema=_ROW_SCHEMA)
-            )
+            try:
+                rows = pl.read_parquet(files, glob=False).select(list(_ROW_SCHEMA)) if files else self._rows[1].clear()
+            except pl.exceptions.ComputeError as problem:
+                raise _damaged(self._lake / "ledger", problem) from None
             self._rows = (version, rows)
         return self._rows[1]
 
@@ -170,6 +179,11 @@ def _in_force(rows: pl.DataFrame) -> pl.DataFrame:
     latest = commit.max().over("table", "key", "fingerprint")
     in_force = rows.filter((commit == latest) & (commit > withdrawn))
     return in_force.sort("table", "key", "fingerprint", "segment", "block", "path")
+
+
+def _damaged(where: Path | str, problem: Exception) -> LedgerError:
+    said = str(problem).partition("\n")[0]
+    return LedgerError(f"{where} cannot be read ({said}); restore the ledger folder from a copy")
 
 
 def _told_by(store: Store | None) -> AbstractContextManager[None]:
@@ -191,6 +205,8 @@ def _open_or_create(lake: Path, store: Store | None) -> DeltaTable:
                 f"{address} is gone, but {lake} holds landed parts; restore the ledger folder from a copy, "
                 f"or remove {lake} whole and run again over the inbox"
             ) from None
+        except DeltaError as problem:
+            raise _damaged(address, problem) from None
     (lake / "ledger").mkdir(parents=True, exist_ok=True)
     with _told_by(store):
         delta = DeltaTable.create(

@@ -235,3 +235,22 @@ def test_a_killed_committer_leaves_a_whole_ledger(tmp_path: Path, delay_ms: int)
     book.commit({("signal", "r"): []})
     ledger.tidy(tmp_path, 0)
     assert not list((tmp_path / "signal").glob("*/*"))
+
+
+def test_a_commit_is_on_the_disk_before_anybody_relies_on_it(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A commit flushes the rows and the entry of the log that make it, so that a power loss cannot undo it later."""
+    book, part, flushed = Ledger(tmp_path), _row_part(tmp_path, "a"), set()
+    monkeypatch.setattr(os, "fsync", lambda descriptor: flushed.add(os.fstat(descriptor).st_ino))
+    commit = book.commit(_load(part))
+    made = [tmp_path / "ledger" / "_delta_log" / f"{commit:020d}.json", *(tmp_path / "ledger").glob("*.parquet")]
+    assert len(made) == 2 and {path.stat().st_ino for path in made} <= flushed
+
+
+@pytest.mark.parametrize("torn", ["_delta_log/*1.json", "*.parquet"])
+def test_a_torn_ledger_is_one_sentence(tmp_path: Path, torn: str) -> None:
+    """A ledger whose log or rows are half there says which folder to restore."""
+    Ledger(tmp_path).commit(_load(_row_part(tmp_path, "a")))
+    [path] = (tmp_path / "ledger").glob(torn)
+    path.write_bytes(path.read_bytes()[:40])
+    with pytest.raises(LedgerError, match=r"ledger cannot be read .*; restore the ledger folder from a copy"):
+        Ledger(tmp_path).parts()
