@@ -78,18 +78,24 @@ def run(
     wait_s: float = 0.0,
     actor_code: str | None = None,
     analyse_all: Analyse | None = None,
+    flow_run: str = "",
 ) -> Outcome:
     """Bring the published tables and pages of a programme folder up to date with inbox, register and settings.
 
     `actor_code` stands in the history beside edits of register and settings that this run is the first to see.
+    `flow_run` names the run in the log (`flows.run_log`).
     Raises SettingsError, RegisterError, FolderBusy, LedgerError or CheckFailed; the publication then stays as it was.
     """
-    from flows import last_run
+    from flows import last_run, run_log
 
     settings = programme_settings.load(folder / "programme.toml")
-    with folder_lock(folder, wait_s), last_run.noted(folder) as end:
-        outcome = _bring_up_to_date(folder, settings, reporter, actor_code, analyse_all or analyse_where_set, end)
+    run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
+    with folder_lock(folder, wait_s), last_run.noted(folder) as end, run_log.opened(folder, flow_run or run_id):
+        outcome = _bring_up_to_date(
+            folder, settings, reporter, actor_code, analyse_all or analyse_where_set, end, run_id
+        )
         end.outcome = outcome.outcome
+        run_log.tell("run ended", outcome=outcome.outcome)
     return outcome
 
 
@@ -100,8 +106,9 @@ def _bring_up_to_date(
     actor_code: str | None,
     analyse_all: Analyse,
     end: RunEnd,
+    run_id: str,
 ) -> Outcome:
-    from flows import edits, publication, register
+    from flows import edits, publication, register, run_log
     from flows.arrivals import ingest
     from warehouse import cache, layout
     from warehouse.ledger import Ledger
@@ -117,7 +124,10 @@ def _bring_up_to_date(
     for analysed in analyse_all(work, reporter):
         ledger.commit(analysed.loads, note="detect")
         end.analysed.append(analysed)
-    run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
+        recording_id, recorded_h, analysed_s = analysed[:3]
+        run_log.tell(
+            "recording analysed", recording=recording_id, recorded_h=round(recorded_h, 4), seconds=round(analysed_s, 2)
+        )
     if arrivals.changed or work:
         _note_run(run_id, folder, ledger, arrivals, _outcome(True, arrivals.quarantined))
     ledger.fill_cache()

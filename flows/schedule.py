@@ -22,6 +22,7 @@ from prefect import flow, get_run_logger, task
 from prefect.artifacts import create_markdown_artifact, create_table_artifact
 from prefect.client.schemas.objects import StateType
 from prefect.futures import PrefectFuture
+from prefect.runtime import flow_run
 from prefect.schedules import Cron, Schedule
 from prefect.states import State
 
@@ -100,7 +101,13 @@ def _can_heal(task: Any, run: Any, state: State) -> bool:
 )
 def refresh_folder_task(folder: Path) -> dict[str, Any]:
     """Run the whole job on a programme folder, one task per recording; returns what it did."""
-    outcome = nightly.run(folder, reporter=_RunLog(), wait_s=WAIT_FOR_FOLDER_S, analyse_all=analyse_as_tasks)
+    outcome = nightly.run(
+        folder,
+        reporter=_RunLog(),
+        wait_s=WAIT_FOR_FOLDER_S,
+        analyse_all=analyse_as_tasks,
+        flow_run=str(flow_run.id or ""),
+    )
     return outcome.as_dict()
 
 

@@ -17,6 +17,7 @@ from datetime import datetime
 from pathlib import Path
 from typing import Any
 
+from flows import run_log
 from flows.arrivals import inbox as door
 from flows.arrivals import reviews
 from flows.arrivals.assembly import Match
@@ -305,6 +306,13 @@ class _Run:
         self._new[row["status"]].add(row["delivery_id"])
         told = f"into {row['recording_id']}" if row["status"] == ACCEPTED else f"{row['code']}: {row['reason']}"
         self._say(f"  {row['status']} {row['file_name']} {told}")
+        run_log.tell(
+            "delivery decided",
+            delivery=row["delivery_id"],
+            status=row["status"],
+            code=row["code"],
+            recording=row["recording_id"],
+        )
 
     def _move_decided(self) -> None:
         """Do with the files what the ledger says; a run that was killed before this is finished here."""
