@@ -7,9 +7,9 @@ Uncertainty comes from counting (over-dispersed), from days (`spread`), from the
 detector: what differs between the periods in its share of beats found widens the log ratio, and its false beats can make
 up a baseline that then seems to fall, or an after period that seems to rise.
 
-`seen` looks at the days of each patient alone, `spread.programme_weights` at what all of them lend each other, and
-`compare` answers. An event's answer follows from its own days and the programme's weights, to the last bit, whichever
-other events are asked about with it.
+`seen` looks at the days of each patient alone, `spread.programme_spread` at what all of them lend each other, and
+`compare` answers. An event's answer follows from its own days and what is lent, to the last bit, whichever other events
+are asked about with it.
 """
 
 from __future__ import annotations
@@ -26,9 +26,9 @@ from detectors.spread import (
     GRID,
     Levels,
     Periods,
-    explained_by_candidates,
+    UsualSpread,
     levels,
-    programme_weights,
+    programme_spread,
     shown_share,
     spread_weights,
 )
@@ -72,7 +72,6 @@ class Seen(NamedTuple):
     grid: Floats
     typical_sd: float
     fit: Floats  # shape (n_events, n_grid): log likelihood of the SD between days
-    explained: Floats  # shape (n_events, n_candidates), see `spread.explained_by_candidates`
 
 
 class DetectorError(NamedTuple):
@@ -94,20 +93,21 @@ class _Variances(NamedTuple):
     detection: Floats
 
 
-def seen(days: Periods, n_events: int, typical_sd: float) -> Seen:
+def seen(days: Periods, n_events: int, typical_sd: float, independent: Floats | None = None) -> Seen:
     """Look at the days of every event; period 2 i is the baseline and 2 i + 1 the after period of event i.
 
-    `typical_sd` is the usual SD of ln level between days where the programme knows nothing yet.
+    `typical_sd` is the usual SD of ln level between days where the programme knows nothing yet, `independent` the share
+    of each period's days that tell their spread as independent ones do (all by default), shape (2 n_events,).
     """
     grid = GRID * typical_sd
-    level = levels(days, 2 * n_events, grid)
+    level = levels(days, 2 * n_events, grid, independent)
     fit = level.fit[0::2] + level.fit[1::2]
-    return Seen(level, grid, typical_sd, fit, explained_by_candidates(fit, grid, typical_sd))
+    return Seen(level, grid, typical_sd, fit)
 
 
-def usual_level(of: Seen, programme: Floats) -> tuple[Floats, Floats]:
+def usual_level(of: Seen, usual: UsualSpread) -> tuple[Floats, Floats]:
     """ln level of every baseline, NaN where it has no days or beats, and its variance; both of shape (n_events,)."""
-    weight = spread_weights(of.fit, of.explained, programme, of.grid, of.typical_sd)
+    weight = spread_weights(of.fit, of.grid, usual)
     value, _, _ = _typical_day(of.level, np.repeat(weight, 2, axis=0))
     return _log(value[0::2]), mean(weight, of.level.variance[0::2])
 
@@ -117,20 +117,20 @@ def compare(
     *,
     excess: Floats,
     success_limit_pct: float,
-    programme: Floats | None = None,
+    usual: UsualSpread | None = None,
     error: DetectorError = NO_ERROR,
     min_days: int = 1,
 ) -> Comparison:
     """Compare baseline and after of every event.
 
     `excess`, shape (n_events,), is the variance that the time between the periods adds, as a multiple of the variance
-    between days (`variability.excess_of_gap`; 0 to ignore it). `programme` are the weights of `programme_weights`, by
-    default those of these events. Periods with fewer than `min_days` days give too_little_wear.
+    between days (`variability.excess_of_gap`; 0 to ignore it). `usual` is what the programme lends, by default what these
+    events say together. Periods with fewer than `min_days` days give too_little_wear.
     """
     level, grid = of.level, of.grid
     n_events = len(of.fit)
-    lent = programme_weights(of.explained) if programme is None else programme
-    weight = spread_weights(of.fit, of.explained, lent, grid, of.typical_sd)
+    lent = programme_spread(of.fit, grid, of.typical_sd) if usual is None else usual
+    weight = spread_weights(of.fit, grid, lent)
     variances = _variances(level, grid, excess, 2 * error.sd_ln**2)
     chance, falling, rising = _if_nothing_changed(level, weight, variances, error.false_rate)
     value, beats, per_beat = _typical_day(level, np.repeat(weight, 2, axis=0))
@@ -215,7 +215,8 @@ def _shares_pct(variances: _Variances, weight: Floats, observed: Floats) -> list
 
 def _variance_source(level: Levels, day_sd: Floats) -> NDArray[np.str_]:
     days = np.maximum(level.days, 1)
-    own = ((days - 1) * shown_share(level.total / days, np.repeat(day_sd, 2))).reshape(-1, 2).sum(axis=1)
+    told = level.independent * shown_share(level.total / days, np.repeat(day_sd, 2))
+    own = ((days - 1) * told).reshape(-1, 2).sum(axis=1)
     return np.select([own < OWN_DAYS_FEW, own < OWN_DAYS_ENOUGH], ["programme", "both"], "patient")
 
 

@@ -22,8 +22,8 @@ LEAST_WEIGHT = 1e-12  # of a period without days
 RICH_BEATS_PER_DAY = 12.0  # independent beats per day from which the logarithm of a day is nearly normal
 GRID = np.geomspace(1 / 16, 5, 32)  # of s, relative to the typical value of the measure
 # Candidates for a programme: its median s, relative to the typical value, and the SD of ln s between its patients.
-PRIOR_MEDIANS, PRIOR_SPREADS = (table.ravel() for table in np.meshgrid(np.geomspace(0.15, 4.0, 15), (0.2, 0.4, 0.7)))
-WEIGHT_STEPS = 128  # weights of candidates are whole multiples of 1 / WEIGHT_STEPS before they are scaled to sum 1
+PRIOR_MEDIANS, PRIOR_SPREADS = (table.ravel() for table in np.meshgrid(np.geomspace(0.15, 4.0, 57), (0.2, 0.4, 0.7)))
+ROUNDED_TO = 0.05  # of ln s: what the programme lends
 MEDIAN_DOUBT = 1.0  # SD of ln median before any patient of the programme is seen
 LEVEL_NODES = np.arange(-5.0, 5.1, 0.5)  # SDs around the level of a sparse period
 TABLE_STEP = 0.1  # of ln mean
@@ -40,6 +40,13 @@ class Periods(NamedTuple):
     dispersion: Floats  # variance over mean of the counting noise, >= 1
 
 
+class UsualSpread(NamedTuple):
+    """What a programme says of the s of a patient whose days are not known: ln s is normal."""
+
+    log_median: float
+    sd: float  # between patients, with the doubt about the median
+
+
 class Levels(NamedTuple):
     """Per period; (n_periods, n_grid) where it depends on s, else (n_periods,)."""
 
@@ -51,11 +58,15 @@ class Levels(NamedTuple):
     variance: Floats  # of log_level
     day_variance: Floats  # its part that counting noise does not make
     total_shift: Floats  # ln of a sparse period's expected total over that of typical days
+    independent: Floats  # share of its days that tell the spread as independent ones do
     fit: Floats  # log likelihood of s
 
 
-def levels(days: Periods, n_periods: int, grid: Floats) -> Levels:
+def levels(days: Periods, n_periods: int, grid: Floats, independent: Floats | None = None) -> Levels:
     """Level of every period at every s of `grid`, shape (n_grid,).
+
+    `independent`, shape (n_periods,), says what share of the likelihood of s counts where days resemble their
+    neighbours (`variability.independent_share`; all of it by default).
 
     Rich periods: normal theory on the days' logarithms, a count c standing for ln level with mean digamma(c + 1/2)
     and variance trigamma(c + 1/2), the likelihood of s integrated over the level (restricted likelihood). Sparse
@@ -77,7 +88,9 @@ def levels(days: Periods, n_periods: int, grid: Floats) -> Levels:
         for of_total, of_logs in zip(by_total[:3], by_logs[:3], strict=True)
     )
     shift = np.where(is_sparse[:, None], by_total[3], 0.0)
-    return Levels(n, total, total_exposure, is_sparse, log_level, variance, day_variance, shift, fit)
+    share = np.ones(n_periods) if independent is None else independent
+    fit = fit * share[:, None]
+    return Levels(n, total, total_exposure, is_sparse, log_level, variance, day_variance, shift, share, fit)
 
 
 def _sums(period: Ints, values: Floats, n_periods: int) -> Floats:
@@ -145,43 +158,38 @@ def shown_share(beats_per_day: Floats, sd: Floats | float) -> Floats:
     return np.asarray((of_days / (1 + of_days)) ** 2)
 
 
-def explained_by_candidates(fit: Floats, grid: Floats, typical: float) -> Floats:
-    """How well each candidate programme explains each patient: log likelihoods, shape (n_patients, n_candidates).
+def programme_spread(fit: Floats, grid: Floats, typical: float) -> UsualSpread:
+    """The usual s from what all patients of a programme show, `fit` of shape (n_patients, n_grid).
 
-    `fit` has shape (n_patients, n_grid). A patient's row follows from his own days alone.
+    s is lognormal between patients; its median and spread are averaged over candidates by how well they explain all
+    patients (empirical Bayes with the candidates' doubt kept). Without patients it is the typical value, in doubt.
+    Rounded to 0.05, so that new days of a few patients seldom move what the others borrow.
     """
-    return np.asarray(logsumexp(fit[:, :, None] + _log_prior(grid, typical), axis=1))
+    log_s = np.log(grid / typical)[:, None]
+    prior = -0.5 * ((log_s - np.log(PRIOR_MEDIANS)) / PRIOR_SPREADS) ** 2
+    prior = np.exp(prior - logsumexp(prior, axis=0))
+    best = fit.max(axis=1, keepdims=True, initial=-np.inf)
+    explained = np.log(np.exp(fit - best) @ prior).sum(axis=0)
+    candidate = explained - 0.5 * (np.log(PRIOR_MEDIANS) / MEDIAN_DOUBT) ** 2
+    weight = np.exp(candidate - logsumexp(candidate))
+    log_median = weight @ np.log(PRIOR_MEDIANS)
+    variance = weight @ (PRIOR_SPREADS**2 + (np.log(PRIOR_MEDIANS) - log_median) ** 2)
+    return UsualSpread(_rounded(log_median) + np.log(typical), max(_rounded(np.sqrt(variance)), ROUNDED_TO))
 
 
-def programme_weights(explained: Floats) -> Floats:
-    """Weights of the candidates by how well they explain all patients, shape (n_candidates,), sum 1.
-
-    Empirical Bayes with the candidates' doubt kept. Rounded, so that a new day of one patient of many seldom moves
-    what the others borrow.
-    """
-    candidate = explained.sum(axis=0) - 0.5 * (np.log(PRIOR_MEDIANS) / MEDIAN_DOUBT) ** 2
-    steps = np.rint(WEIGHT_STEPS * np.exp(candidate - logsumexp(candidate)))
-    return np.asarray(steps / steps.sum())
+def nothing_lent(typical: float) -> UsualSpread:
+    """The usual s before any patient of the programme is seen."""
+    return programme_spread(np.zeros((0, len(GRID))), GRID * typical, typical)
 
 
-def nothing_lent() -> Floats:
-    """Weights of the candidates before any patient of the programme is seen: the typical value, in doubt."""
-    return programme_weights(np.zeros((0, len(PRIOR_MEDIANS))))
-
-
-def spread_weights(fit: Floats, explained: Floats, programme: Floats, grid: Floats, typical: float) -> Floats:
+def spread_weights(fit: Floats, grid: Floats, usual: UsualSpread) -> Floats:
     """Posterior weights of s, shape of `fit`: (n_patients, n_grid), rows sum to 1.
 
-    s is lognormal between the patients of a programme; its median and spread are averaged over the candidates with
-    the weights `programme`. A patient with many days follows his own days, one with a single day the programme, and a
-    programme of one patient the typical value.
+    A patient with many days follows his own days, one with a single day the programme.
     """
-    held = np.flatnonzero(programme)
-    joint = fit[:, :, None] + _log_prior(grid, typical)[:, held] - explained[:, None, held]
-    return np.asarray((np.exp(joint) * programme[held]).sum(axis=2))
+    joint = fit - 0.5 * ((np.log(grid) - usual.log_median) / usual.sd) ** 2
+    return np.asarray(np.exp(joint - logsumexp(joint, axis=1, keepdims=True)))
 
 
-def _log_prior(grid: Floats, typical: float) -> Floats:
-    """ln prior of every s of the grid under every candidate, shape (n_grid, n_candidates)."""
-    prior = -0.5 * ((np.log(grid / typical)[:, None] - np.log(PRIOR_MEDIANS)) / PRIOR_SPREADS) ** 2
-    return np.asarray(prior - logsumexp(prior, axis=0))
+def _rounded(value: float) -> float:
+    return round(float(value) / ROUNDED_TO) * ROUNDED_TO

@@ -5,6 +5,7 @@ All on natural logarithms of counts or rates, standard normal theory. Nothing he
 
 from __future__ import annotations
 
+from functools import lru_cache
 from typing import NamedTuple
 
 import numpy as np
@@ -121,6 +122,24 @@ def variogram(gap_d: ArrayLike, series: SpontaneousSeries) -> Floats:
     return np.where(gap > 0, np.interp(np.log(np.maximum(gap, 1.0)), np.log(series.gap_d), half_variance), 0.0)
 
 
+@lru_cache(maxsize=4096)
+def independent_share(day: tuple[int, ...], series: SpontaneousSeries) -> float:
+    """As how many independent days these days tell their spread, over their number; both less one, 1 for a single day.
+
+    Days of a drifting level resemble their neighbours, so that the sum of squares around their mean varies more than
+    that of independent ones. Its degrees of freedom are those of Satterthwaite (doi:10.2307/3002019) under the
+    published series.
+    """
+    n = len(day)
+    if n < 2:
+        return 1.0
+    gaps = np.subtract.outer(np.array(day), np.array(day))
+    alike = -variogram(gaps, series)
+    alike -= alike.mean(axis=0)
+    around_mean = alike - alike.mean(axis=1, keepdims=True)
+    return float(np.trace(around_mean) ** 2 / (around_mean * around_mean.T).sum() / (n - 1))
+
+
 def excess_of_gap(
     before_d: ArrayLike, after_d: ArrayLike, series: SpontaneousSeries, seen: tuple[float, float] = (1.0, 1.0)
 ) -> float:
@@ -141,14 +160,14 @@ def excess_of_gap(
     return max(0.0, float(contrast / scale - 1 / len(before) - 1 / len(after)))
 
 
-class Usual(NamedTuple):
+class UsualLevel(NamedTuple):
     """The usual ln level of a programme's patients and how much patients differ; NaN where too few are known."""
 
     log_level: float
     between_variance: float
 
 
-def usual_of(log_level: ArrayLike, error_variance: ArrayLike) -> Usual:
+def usual_of(log_level: ArrayLike, error_variance: ArrayLike) -> UsualLevel:
     """Mean and variance between patients of ln levels of shape (n,), known with `error_variance`; NaN are left out.
 
     Rounded (mean to 0.1, variance to two digits), so that one patient of many seldom moves what is said of the others.
@@ -157,12 +176,12 @@ def usual_of(log_level: ArrayLike, error_variance: ArrayLike) -> Usual:
     level, error = np.asarray(log_level, dtype=float), np.asarray(error_variance, dtype=float)
     known = np.isfinite(level) & np.isfinite(error)
     if known.sum() < MIN_PATIENTS:
-        return Usual(np.nan, np.nan)
+        return UsualLevel(np.nan, np.nan)
     between = max(float(level[known].var(ddof=1) - error[known].mean()), 0.0)
-    return Usual(round(float(level[known].mean()), 1), float(f"{between:.2g}"))
+    return UsualLevel(round(float(level[known].mean()), 1), float(f"{between:.2g}"))
 
 
-def regression_to_mean(log_level: ArrayLike, error_variance: ArrayLike, usual: Usual) -> Floats:
+def regression_to_mean(log_level: ArrayLike, error_variance: ArrayLike, usual: UsualLevel) -> Floats:
     """Change of ln level that a second look brings by itself to patients chosen for their first, shape (n,).
 
     Each patient is drawn to the mean of all by the share that chance has in the differences between patients

@@ -4,14 +4,15 @@ from __future__ import annotations
 
 from datetime import date, timedelta
 from itertools import pairwise
+from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
 
 from detectors import change as statistics
 from detectors.shifts import shifts
-from detectors.spread import Periods, nothing_lent, shown_share
-from detectors.variability import excess_of_gap
+from detectors.spread import Periods, UsualSpread, nothing_lent, shown_share
+from detectors.variability import excess_of_gap, independent_share
 from flows.change.measures import Measure, MeasuredDays
 from flows.settings import ChangeSettings, WearSettings
 
@@ -21,41 +22,57 @@ PRIOR_STEPS = 4
 MEDIAN_STEP = 0.6745 * np.sqrt(2)  # median of |difference| of two normal values, in SDs of one
 
 
-def gap_excess(measure: Measure, days: MeasuredDays, n_events: int, share: float) -> NDArray[np.float64]:
-    """Variance that the time between the two sides adds, per event (`variability.excess_of_gap`); 0 without both."""
-    excess = np.zeros(n_events)
+class Drift(NamedTuple):
+    """What the published drift of the level means for the days of every event."""
+
+    excess: NDArray[np.float64]  # shape (n_events,): variance that the time between the sides adds, 0 without both
+    independent: NDArray[
+        np.float64
+    ]  # shape (2 n_events,): share of the days that tell their spread as independent ones
+
+
+def drift_of(measure: Measure, days: MeasuredDays, n_events: int, share: float) -> Drift:
+    """`variability.excess_of_gap` and `variability.independent_share` of every event; `share` of the published drift."""
+    drift = Drift(np.zeros(n_events), np.ones(2 * n_events))
     if measure.drift is None or share == 0:
-        return excess
+        return drift
     beats = days.counts / days.dispersion
-    ends = np.searchsorted(days.event, np.arange(n_events + 1))
-    for i, (first, last) in enumerate(pairwise(ends)):
-        day, is_after = days.local_day[first:last], days.is_after[first:last]
-        if is_after.any() and not is_after.all():
-            of_day = beats[first:last]
-            seen = shown_share(np.array([of_day[~is_after].mean(), of_day[is_after].mean()]), measure.day_sd)
-            excess[i] = excess_of_gap(day[~is_after], day[is_after], measure.drift, (seen[0], seen[1]))
-    return excess * share
+    ends = np.searchsorted(2 * days.event + days.is_after, np.arange(2 * n_events + 1))
+    sides = [slice(first, last) for first, last in pairwise(ends)]
+    for period, side in enumerate(sides):
+        if side.start < side.stop:
+            day = days.local_day[side] - days.local_day[side.start]
+            seen_share = shown_share(beats[side].mean(), measure.day_sd)
+            dependent = 1 - independent_share(tuple(day.tolist()), measure.drift)
+            drift.independent[period] = 1 - share * float(seen_share) * dependent
+    for event, (before, after) in enumerate(zip(sides[::2], sides[1::2], strict=True)):
+        if before.start < before.stop and after.start < after.stop:
+            of_sides = np.array([beats[side].mean() for side in (before, after)])
+            told = shown_share(of_sides, measure.day_sd) * drift.independent[2 * event : 2 * event + 2]
+            gap = excess_of_gap(days.local_day[before], days.local_day[after], measure.drift, (told[0], told[1]))
+            drift.excess[event] = share * gap
+    return drift
 
 
-def seen(measure: Measure, days: MeasuredDays, n_events: int) -> statistics.Seen:
+def seen(measure: Measure, days: MeasuredDays, n_events: int, drift: Drift) -> statistics.Seen:
     """The two sides of every event, before the programme lends anything."""
     periods = Periods(2 * days.event + days.is_after, days.counts, days.exposure, days.dispersion)
-    return statistics.seen(periods, n_events, measure.day_sd)
+    return statistics.seen(periods, n_events, measure.day_sd, drift.independent)
 
 
 def compared(
     measure: Measure,
-    days: MeasuredDays,
     of: statistics.Seen,
-    programme: NDArray[np.float64],
+    drift: Drift,
+    usual: UsualSpread,
     change: ChangeSettings,
     wear: WearSettings,
 ) -> statistics.Comparison:
-    """The comparison of the two sides of every event, given the weights of `spread.programme_weights`."""
+    """The comparison of the two sides of every event, given what the programme lends."""
     return statistics.compare(
         of,
-        programme=programme,
-        excess=gap_excess(measure, days, len(of.fit), change.gap_drift_share),
+        usual=usual,
+        excess=drift.excess,
         error=measure.error(change.detector_error_share),
         success_limit_pct=change.success_limit_pct,
         min_days=wear.min_days_per_period,
@@ -80,7 +97,9 @@ def recurrence_days(
     later = rising._replace(is_after=is_late).where(rising.is_after)
 
     def verdict(sides: MeasuredDays) -> NDArray[np.str_]:
-        return compared(measure, sides, seen(measure, sides, len(candidates)), nothing_lent(), change, wear).verdict
+        drift = drift_of(measure, sides, len(candidates), change.gap_drift_share)
+        of = seen(measure, sides, len(candidates), drift)
+        return compared(measure, of, drift, nothing_lent(measure.day_sd), change, wear).verdict
 
     fell = verdict(rising.where(~is_late)) == statistics.FELL
     rose = verdict(later) == statistics.ROSE

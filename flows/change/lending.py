@@ -7,34 +7,29 @@ and what is lent is rounded. So as long as it stays, one patient's new days move
 
 from __future__ import annotations
 
-import hashlib
 from collections.abc import Mapping
-from importlib import resources
-from importlib.metadata import version
 from typing import NamedTuple
 
 import numpy as np
 import polars as pl
-from numpy.typing import NDArray
 
 from detectors.change import Seen, usual_level
-from detectors.spread import PRIOR_MEDIANS, nothing_lent, programme_weights
-from detectors.variability import Usual, usual_of
-from flows.change.measures import MEASURES
-from flows.settings import ChangeSettings, WearSettings
+from detectors.spread import GRID, UsualSpread, nothing_lent, programme_spread
+from detectors.variability import UsualLevel, usual_of
+from flows.change.measures import MEASURES, Measure
 
 KEYS = ("patient_code", "therapy_id", "measure")
-EXPLAINED = pl.Array(pl.Float64, len(PRIOR_MEDIANS))
+FIT = pl.Array(pl.Float64, len(GRID))
 EVIDENCE: dict[str, pl.DataType | type[pl.DataType]] = {
-    **dict.fromkeys(KEYS, pl.String), "log_level": pl.Float64, "error_variance": pl.Float64, "explained": EXPLAINED
+    **dict.fromkeys(KEYS, pl.String), "log_level": pl.Float64, "error_variance": pl.Float64, "fit": FIT
 }  # fmt: skip
 
 
 class Lent(NamedTuple):
     """What the programme lends for one measure."""
 
-    spread: NDArray[np.float64]  # weights of `spread.programme_weights`
-    baseline: Usual
+    spread: UsualSpread
+    baseline: UsualLevel
 
 
 class Kept(NamedTuple):
@@ -50,41 +45,31 @@ NOTHING_KEPT = Kept([], pl.DataFrame(schema=EVIDENCE), {})
 
 def evidence_of(measure: str, events: pl.DataFrame, of: Seen) -> pl.DataFrame:
     """One row per event with the columns of EVIDENCE; `events` are those of `of`, in their order."""
-    log_level, error_variance = usual_level(of, nothing_lent())
+    log_level, error_variance = usual_level(of, nothing_lent(of.typical_sd))
     return events.select(
         "patient_code",
         "therapy_id",
         measure=pl.lit(measure),
         log_level=pl.Series(log_level),
         error_variance=pl.Series(error_variance),
-        explained=pl.Series(of.explained, dtype=EXPLAINED),
+        fit=pl.Series(of.fit, dtype=FIT),
     )
 
 
 def lent(evidence: pl.DataFrame) -> dict[str, Lent]:
     """What all evidence together lends, for every measure."""
     ordered = evidence.sort(KEYS)
-    of_measure = {measure.name: ordered.filter(pl.col("measure") == measure.name) for measure in MEASURES}
-    return {
-        name: Lent(programme_weights(rows["explained"].to_numpy()), usual_of(rows["log_level"], rows["error_variance"]))
-        for name, rows in of_measure.items()
-    }
+    return {measure.name: _lent_of(measure, ordered.filter(pl.col("measure") == measure.name)) for measure in MEASURES}
+
+
+def _lent_of(measure: Measure, evidence: pl.DataFrame) -> Lent:
+    spread = programme_spread(evidence["fit"].to_numpy(), GRID * measure.day_sd, measure.day_sd)
+    return Lent(spread, usual_of(evidence["log_level"], evidence["error_variance"]))
 
 
 def is_same(one: Mapping[str, Lent], other: Mapping[str, Lent]) -> bool:
     """Whether two programmes lend the same."""
     return all(
-        np.array_equal(one[name].spread, other[name].spread)
-        and np.array_equal(one[name].baseline, other[name].baseline, equal_nan=True)
+        np.array_equal([*one[name].spread, *one[name].baseline], [*other[name].spread, *other[name].baseline], True)
         for name in one
     )
-
-
-def made_by(change: ChangeSettings, wear: WearSettings) -> str:
-    """Hash of what the rows follow from beside patients: the settings, the source of the statistics, the libraries."""
-    digest = hashlib.sha256(repr((change, wear, [version(name) for name in ("numpy", "scipy", "polars")])).encode())
-    for room in ("detectors", "flows.change"):
-        for file in sorted(resources.files(room).iterdir(), key=lambda file: file.name):
-            if file.name.endswith(".py"):
-                digest.update(file.read_bytes())
-    return digest.hexdigest()

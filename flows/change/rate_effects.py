@@ -10,7 +10,7 @@ import numpy as np
 import polars as pl
 
 from detectors import rate_dependence as effects
-from flows.change.courses import gap_excess
+from flows.change.courses import drift_of
 from flows.change.measures import HEART_RATE, V_PER_H, measured_days
 from flows.settings import ChangeSettings
 from warehouse.parts import polars_type
@@ -28,7 +28,8 @@ def rate_effects(
     The kind of dependence is read from the baseline hours alone, so that the therapy does not enter it.
     """
     per_event = _columns_of_changes(events, compared)
-    excess = gap_excess(V_PER_H, measured_days(V_PER_H, cells, len(events)), len(events), change.gap_drift_share)
+    days = measured_days(V_PER_H, cells, len(events))
+    excess = drift_of(V_PER_H, days, len(events), change.gap_drift_share).excess
     hours = cells.filter(pl.col("mean_rate_bpm").is_not_null() & (pl.col("analysable_s") >= LEAST_ANALYSABLE_S))
     names = ("v_beats", "analysable_s", "mean_rate_bpm", "side", "day")
     beats, seconds, rate, side, day = (hours[name].to_numpy() for name in names)

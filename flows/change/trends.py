@@ -15,7 +15,7 @@ from detectors.change import TOO_LITTLE, Seen
 from detectors.variability import regression_to_mean
 from flows.change.clock_rates import rate_by_clock_hour
 from flows.change.cohorts import cohort
-from flows.change.courses import compared, recurrence_days, seen
+from flows.change.courses import Drift, compared, drift_of, recurrence_days, seen
 from flows.change.extremes import EXTREMES, compared_by_rank, excess_of_runs
 from flows.change.lending import NOTHING_KEPT, Kept, Lent, evidence_of, is_same, lent
 from flows.change.level_shifts import level_shifts
@@ -58,16 +58,24 @@ class Tables(NamedTuple):
     evidence: pl.DataFrame
 
 
+class _Measured(NamedTuple):
+    """The days of one measure, what drift means for them, and what they show before anything is lent."""
+
+    days: MeasuredDays
+    drift: Drift
+    seen: Seen
+
+
 class _Looked(NamedTuple):
-    """Events with the days and hours of their periods, and what each measure shows before anything is lent."""
+    """Events with the days and hours of their periods, and each measure on them."""
 
     events: pl.DataFrame
     days: pl.DataFrame
     cells: pl.DataFrame
-    measured: dict[str, tuple[MeasuredDays, Seen]]
+    measured: dict[str, _Measured]
 
     def evidence(self) -> pl.DataFrame:
-        return pl.concat([evidence_of(name, self.events, of) for name, (_, of) in self.measured.items()])
+        return pl.concat([evidence_of(name, self.events, of) for name, (_, _, of) in self.measured.items()])
 
 
 def tables(inputs: Inputs, change: ChangeSettings, wear: WearSettings, kept: Kept = NOTHING_KEPT) -> Tables:
@@ -76,7 +84,7 @@ def tables(inputs: Inputs, change: ChangeSettings, wear: WearSettings, kept: Kep
     Rows of `kept` patients are taken over where the programme still lends the same; the tables are the same without.
     """
     fresh = inputs.without(kept.patients) if kept.patients else inputs
-    looked = _look(fresh)
+    looked = _look(fresh, change)
     evidence = pl.concat([kept.evidence.filter(pl.col("patient_code").is_in(kept.patients)), looked.evidence()])
     now = lent(evidence)
     if kept.patients and not is_same(now, lent(kept.evidence)):
@@ -97,24 +105,25 @@ def tables(inputs: Inputs, change: ChangeSettings, wear: WearSettings, kept: Kep
 
 def changes(inputs: Inputs, change: ChangeSettings, wear: WearSettings) -> pl.DataFrame:
     """The `changes` table alone, for whatever `therapies` names and `periods` spans."""
-    looked = _look(inputs)
+    looked = _look(inputs, change)
     return _changes(looked, lent(looked.evidence()), change, wear)
 
 
-def _look(inputs: Inputs) -> _Looked:
+def _look(inputs: Inputs, change: ChangeSettings) -> _Looked:
     """Numbered events, the valid days of their periods, the hours of those days."""
     named = inputs.therapies.select("patient_code", "therapy_id")
     events = named.sort("patient_code", "therapy_id").with_row_index("event")
     days = _days(events, inputs.periods, inputs.wear_days)
     cells = days.join(inputs.local_hours, on=["patient_code", "local_day"]).filter(pl.col("analysable_s") > 0)
     cells = cells.sort("day", "clock_hour")
-    measured = {measure.name: measured_days(measure, cells, events.height) for measure in MEASURES}
-    return _Looked(
-        events,
-        days,
-        cells,
-        {measure.name: (of := measured[measure.name], seen(measure, of, events.height)) for measure in MEASURES},
-    )
+    measured = {measure.name: _measure(measure, cells, events.height, change) for measure in MEASURES}
+    return _Looked(events, days, cells, measured)
+
+
+def _measure(measure: Measure, cells: pl.DataFrame, n_events: int, change: ChangeSettings) -> _Measured:
+    days = measured_days(measure, cells, n_events)
+    drift = drift_of(measure, days, n_events, change.gap_drift_share)
+    return _Measured(days, drift, seen(measure, days, n_events, drift))
 
 
 def _changes(
@@ -124,7 +133,7 @@ def _changes(
     events, cells = looked.events, looked.cells
     frame = _wear(events, looked.days, cells)
     of_measure = {
-        measure.name: _compare(measure, *looked.measured[measure.name], programme[measure.name], change, wear)
+        measure.name: _compare(measure, looked.measured[measure.name], programme[measure.name], change, wear)
         for measure in MEASURES
     }
     excess = excess_of_runs(cells, events.height, change)
@@ -167,13 +176,13 @@ def _wear(events: pl.DataFrame, days: pl.DataFrame, cells: pl.DataFrame) -> pl.D
 
 
 def _compare(
-    measure: Measure, days: MeasuredDays, of: Seen, programme: Lent, change: ChangeSettings, wear: WearSettings
+    measure: Measure, of: _Measured, programme: Lent, change: ChangeSettings, wear: WearSettings
 ) -> pl.DataFrame:
     """Columns of one measure, one row per event in their order."""
-    found = compared(measure, days, of, programme.spread, change, wear)
+    found = compared(measure, of.seen, of.drift, programme.spread, change, wear)
     n_events = len(found.ratio)
     is_ectopy = measure is not HEART_RATE
-    recurrence = recurrence_days(measure, days, n_events, change, wear) if is_ectopy else [None] * n_events
+    recurrence = recurrence_days(measure, of.days, n_events, change, wear) if is_ectopy else [None] * n_events
     log_level = np.log(np.where(found.baseline > 0, found.baseline, np.nan))
     regression = regression_to_mean(log_level, found.baseline_variance, programme.baseline)
     success = np.where(is_ectopy & (found.verdict != TOO_LITTLE), found.success_probability_pct, np.nan)

@@ -168,12 +168,13 @@ def test_the_answer_does_not_depend_on_which_other_events_are_asked(data):
     events = data.draw(
         st.lists(st.tuples(side, side), min_size=2, max_size=5).filter(lambda all_: any(map(any, all_[0])))
     )
-    lent = spread.programme_weights(change.seen(periods(events), len(events), 0.6).explained)
+    of_all = change.seen(periods(events), len(events), 0.6)
+    lent = spread.programme_spread(of_all.fit, of_all.grid, 0.6)
 
     def answer(some):
         of = change.seen(periods(some), len(some), 0.6)
         error = change.DetectorError(0.1, 2.0)
-        return change.compare(of, programme=lent, excess=np.ones(len(some)), success_limit_pct=80, error=error)
+        return change.compare(of, usual=lent, excess=np.ones(len(some)), success_limit_pct=80, error=error)
 
     together, alone = answer(events), answer(events[:1])
     for name, column in alone._asdict().items():
