@@ -6,9 +6,11 @@ Final states: Published, Published with refusals, Unchanged, Not published.
 
 from __future__ import annotations
 
+import asyncio
 import os
 from collections import deque
 from collections.abc import Iterator, Sequence
+from itertools import pairwise
 from pathlib import Path
 from typing import Any
 
@@ -26,8 +28,8 @@ from prefect.runtime import flow_run
 from prefect.schedules import Cron, Schedule
 from prefect.states import State
 
-from flows import nightly, settings
-from flows.lock import FolderBusy
+from flows import due, nightly, settings
+from flows.lock import FolderBusy, schedule_lock
 from flows.nightly import Analysed, Work
 from flows.notify import notify
 from flows.progress import Reporter, Silent
@@ -38,6 +40,7 @@ from warehouse.store import StoreAway
 
 NIGHT_S = 12 * 3600
 WAIT_FOR_FOLDER_S = 600.0
+RUNS_LOOKED_AHEAD = 400
 
 
 class CronError(ValueError):
@@ -161,18 +164,22 @@ def _leave_artifacts(programme: Path, outcome: dict[str, Any]) -> None:
 def serve_nightly(folder: Path, cron: str, zone: str = "") -> None:
     """Serve the nightly flow on this host until stopped; needs no server to be installed.
 
-    Raises CronError for cron fields that cannot be read and SettingsError for a folder that is no programme or a zone
-    that is not known.
+    Raises CronError for cron fields that cannot be read, SettingsError for a folder that is no programme or a zone that
+    is not known, FolderBusy for a folder that is scheduled already.
     """
     programme = settings.load(folder / "programme.toml").programme
     if zone:
         settings.check_zone("--zone", zone)
-    nightly_flow.serve(
-        name=f"{folder.resolve().name} nightly",
-        parameters={"folder": str(folder.resolve())},
-        schedule=nightly_schedule(cron, zone or programme.zone),
-        limit=1,
-    )
+    schedule = nightly_schedule(cron, zone or programme.zone)
+    with schedule_lock(folder):
+        due.promise(folder, cron, zone or programme.zone, longest_gap_h(cron, zone or programme.zone))
+        nightly_flow.serve(
+            name=f"{folder.resolve().name} nightly",
+            parameters={"folder": str(folder.resolve())},
+            schedule=schedule,
+            limit=1,
+        )
+        due.end_promise(folder)  # a person stopped it; a process that is ended otherwise does not come here
 
 
 def nightly_schedule(cron: str, zone: str) -> Schedule:
@@ -183,3 +190,11 @@ def nightly_schedule(cron: str, zone: str) -> Schedule:
         raise CronError(
             f'--cron {cron!r} cannot be read; expected five fields, for example "0 3 * * *" for every night at three'
         ) from None
+
+
+def longest_gap_h(cron: str, zone: str) -> float:
+    """Most hours between two of the next runs, a day of 25 hours among them."""
+    from prefect.server.schemas.schedules import CronSchedule
+
+    runs = asyncio.run(CronSchedule(cron=cron, timezone=zone).get_dates(n=RUNS_LOOKED_AHEAD))
+    return max((b - a).total_seconds() for a, b in pairwise(runs)) / 3600

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import shutil
 from collections.abc import Iterator, Sequence
+from dataclasses import asdict
 from datetime import UTC, datetime
 from pathlib import Path
 from statistics import median
@@ -11,14 +12,20 @@ from typing import Any
 
 import polars as pl
 
-from flows import last_run
+from flows import due, last_run, nightly
 from flows import settings as programme_settings
+from flows.arrivals.inbox import SeenFiles, look
 from flows.last_run import Duration
+from flows.settings import Settings
+from warehouse.layout import found_layout
+from warehouse.ledger import Ledger, LedgerError
 from warehouse.published import Published
+from warehouse.store import StoreError
 
 GROWTH_DAYS = 30
 SHORTEST_GROWTH_DAYS = 7  # a younger lake mostly shows its first filling, not its growth
 SOON_FULL_DAYS = 30
+LATE_H = 2.0  # one run may take longer than the one before it
 SLOW_TIMES = 3.0  # as slow per hour of signal as the median of the last recordings
 FEWEST_DURATIONS = 5  # for a median that says anything
 SHORTEST_SLOW_S = 10.0
@@ -37,12 +44,18 @@ def status(folder: Path, now_utc: datetime | None = None) -> dict[str, Any]:
         "published": (folder / "published" / "burdenline.duckdb").exists(),
         **_of_last_run(folder, now_utc),
         "expected_every_h": settings.status.expected_every_h,
+        "schedule": _of_schedule(folder, now_utc),
         "inbox_files": len(_files(folder / "inbox")),
         "quarantined_files": sum(path.suffixes[-2:] != [".reason", ".txt"] for path in _files(folder / "quarantine")),
         **_of_disk(folder, now_utc),
     }
     if found["published"]:
         found |= _of_publication(Published(folder / "published"), now_utc)
+    found["queue"] = {
+        "new_files": _new_files(folder, settings, now_utc),
+        "waiting": found.get("deliveries", {}).get("waiting", 0),
+        "unanalysed_recordings": _unanalysed(folder, settings),
+    }
     return found | {"trouble": list(_trouble(found))}
 
 
@@ -77,6 +90,32 @@ def _slow(analysed: Sequence[Duration]) -> list[dict[str, Any]]:
     ]
     slow = [row for row in rows if row["times_as_slow"] >= SLOW_TIMES]
     return sorted(slow, key=lambda row: row["times_as_slow"], reverse=True)
+
+
+def _of_schedule(folder: Path, now_utc: datetime) -> dict[str, Any] | None:
+    """What `burdenline schedule` promised, and how long ago it began to."""
+    promised = due.promised(folder)
+    if promised is None:
+        return None
+    since = datetime.fromisoformat(promised.since_utc).replace(tzinfo=UTC)
+    return asdict(promised) | {"age_h": _hours(now_utc - since)}
+
+
+def _new_files(folder: Path, settings: Settings, now_utc: datetime) -> int:
+    """Deliveries in the inbox that no run has looked at."""
+    seen = SeenFiles(folder / "lake" / "seen.json")
+    found = look(folder / "inbox", settings.inbox, now_utc.timestamp())
+    return sum(not seen.is_unchanged(each.name, each.size, each.mtime_ns) for each in found)
+
+
+def _unanalysed(folder: Path, settings: Settings) -> int | None:
+    """Landed recordings without beats; None where nothing was landed or the lake cannot be asked."""
+    if found_layout(folder / "lake") is None:
+        return None
+    try:
+        return len(nightly.unanalysed(Ledger(folder / "lake"), settings))
+    except (LedgerError, StoreError):
+        return None  # the next run says why; freshness and queue must be told all the same
 
 
 def _of_disk(folder: Path, now_utc: datetime) -> dict[str, Any]:
@@ -139,6 +178,8 @@ def _trouble(found: dict[str, Any]) -> Iterator[str]:
         yield f"no run has ended here yet; one is expected every {expected_h:g} h"
     elif expected_h and age_h > expected_h:
         yield f"the last run ended {age_h:g} h ago; one is expected every {expected_h:g} h"
+    elif not expected_h:
+        yield from _missed(found["schedule"], age_h)
     if found["last_outcome"] == "not_published":
         yield f"the last run published nothing: {found['last_reason']}"
     if found["days_until_full"] is not None and found["days_until_full"] < SOON_FULL_DAYS:
@@ -152,12 +193,28 @@ def _trouble(found: dict[str, Any]) -> Iterator[str]:
         yield f"{found['quarantined_files']} refused files in quarantine, each with its reason beside it"
 
 
+def _missed(schedule: dict[str, Any] | None, age_h: float | None) -> Iterator[str]:
+    """Say that a run of the promised schedule is overdue."""
+    if schedule is None:
+        return
+    without_run_h = min(schedule["age_h"], schedule["age_h"] if age_h is None else age_h)
+    if without_run_h > schedule["longest_gap_h"] + LATE_H:
+        yield (
+            f"a run of the schedule {schedule['cron']} ({schedule['zone']}) was missed: none has ended for "
+            f"{without_run_h:g} h; is `burdenline schedule` still running?"
+        )
+
+
 def status_text(found: dict[str, Any]) -> str:
     """The same for people."""
     lines = [f"{found['programme']}: {_last_run_text(found)}", *(f"look at: {line}" for line in found["trouble"])]
-    lines.append(_disk_text(found))
+    lines += [_disk_text(found), _queue_text(found["queue"])]
+    if schedule := found["schedule"]:
+        lines.append(
+            f"schedule: {schedule['cron']} ({schedule['zone']}), {schedule['longest_gap_h']:g} h at most between runs"
+        )
     if not found["published"]:
-        return "\n".join([*lines, f"nothing published yet; {found['inbox_files']} files in the inbox"])
+        return "\n".join([*lines, "nothing published yet"])
     counts = ", ".join(f"{count} {name}" for name, count in found["deliveries"].items())
     lines += [
         f"deliveries: {counts}; {found['inbox_files']} files in the inbox",
@@ -179,6 +236,12 @@ def _disk_text(found: dict[str, Any]) -> str:
     days, growth = found["days_until_full"], found["lake_growth_gb_per_day"]
     lasts = f"enough for {days} days at the growth of the last month" if days is not None else "no growth last month"
     return f"disk: {found['disk_free_gb']} GB free, {lasts if growth is not None else 'too early to say for how long'}"
+
+
+def _queue_text(queue: dict[str, Any]) -> str:
+    unanalysed = queue["unanalysed_recordings"]
+    recordings = f", {unanalysed} recordings to analyse" if unanalysed else ""
+    return f"queue: {queue['new_files']} new files in the inbox{recordings}"
 
 
 def _patient_text(row: dict[str, Any]) -> str:

@@ -3,7 +3,7 @@ import sys
 
 import pytest
 
-from flows.lock import FolderBusy, folder_lock
+from flows.lock import FolderBusy, folder_lock, schedule_lock
 
 HOLD = """
 import sys
@@ -36,4 +36,15 @@ def test_a_killed_holder_leaves_no_lock(tmp_path, holder):
     holder.kill()
     holder.wait(30)
     with folder_lock(tmp_path):
+        pass
+
+
+def test_a_folder_has_one_schedule(tmp_path):
+    """A second schedule of the folder leaves and names the first; runs go on beside it."""
+    with (
+        schedule_lock(tmp_path),
+        folder_lock(tmp_path),
+        pytest.raises(FolderBusy, match="is scheduled already, by process"),
+        schedule_lock(tmp_path),
+    ):
         pass

@@ -1,5 +1,6 @@
 """The wiring with Prefect; the logic is tested without it."""
 
+import contextlib
 import json
 from datetime import datetime
 from pathlib import Path
@@ -10,6 +11,7 @@ import yaml  # comes with Prefect
 
 from flows.cli import main
 from flows.edf_write import EdfHeader, Piece, write_edf
+from flows.lock import FolderBusy
 
 ROOT = Path(__file__).parents[2]
 
@@ -123,3 +125,21 @@ def test_a_dask_scheduler_gets_the_recordings_without_tasks(monkeypatch):
     settings = Settings(workers=WorkersSettings(scheduler="tcp://127.0.0.1:8786"))
     work = [Work(Path("coast"), name, settings) for name in ("SRL-1_20260301", "SRL-2_20260301")]
     assert [each["of"] for each in schedule.analyse_as_tasks(work, SILENT)] == ["SRL-1_20260301", "SRL-2_20260301"]
+
+
+@pytest.mark.parametrize("ends_by_itself", [True, False])
+def test_a_schedule_promises_runs_until_a_person_stops_it(coast, monkeypatch, ends_by_itself):
+    """While it serves, the promise stands and no second schedule begins; one whose process is ended still owes runs."""
+    from flows import due, schedule
+
+    def serve(**how):
+        assert due.promised(coast).longest_gap_h == 25.0, "the night on which the clocks go back"
+        with pytest.raises(FolderBusy, match="scheduled already"):
+            schedule.serve_nightly(coast, "0 4 * * *")
+        if not ends_by_itself:
+            raise SystemExit(0)
+
+    monkeypatch.setattr(schedule.nightly_flow, "serve", serve)
+    with contextlib.suppress(SystemExit):
+        schedule.serve_nightly(coast, "0 3 * * *", "Europe/Lisbon")
+    assert (due.promised(coast) is None) == ends_by_itself

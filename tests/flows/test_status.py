@@ -2,18 +2,20 @@
 
 import json
 import os
+import shutil
 from datetime import UTC, datetime, timedelta
 from types import SimpleNamespace
 
 import pytest
 import sleepecg
 
-from flows import last_run
+from flows import due, last_run
 from flows.edf_write import EdfHeader, Piece, write_edf
 from flows.nightly import run
 from flows.programme import make_folder
 from flows.register import RegisterError
 from flows.status import status, status_text
+from warehouse.ledger import Ledger
 
 WEARS = "device_serial,patient_code,from_local,to_local,start_local\nSRL-1,P-1,2026-03-01T08:00,,\n"
 
@@ -149,3 +151,32 @@ def test_a_recording_that_took_unusually_long_is_trouble(coast):
         ("SRL-9_20260201", 5.0)
     ]
     assert "SRL-9_20260201 took 30 s to analyse, 5 times as long per hour as usual" in found["trouble"]
+
+
+def test_the_queue_holds_what_no_run_has_looked_at(coast, empty):
+    """New files are those that no run decided; files that lie in the inbox after their run are not new."""
+    assert status(coast)["queue"] == {"new_files": 0, "waiting": 0, "unanalysed_recordings": 0}
+    (empty / "inbox" / "later.edf").write_text("Dear colleague")
+    found = status(empty)
+    assert found["queue"] == {"new_files": 1, "waiting": 0, "unanalysed_recordings": None}
+    assert "queue: 1 new files in the inbox" in status_text(found)
+
+
+def test_a_recording_that_was_landed_but_not_analysed_is_in_the_queue(coast, tmp_path):
+    """A recording whose results are not there, as after a killed run, is counted."""
+    folder = shutil.copytree(coast, tmp_path / "coast")
+    Ledger(folder / "lake").commit({("quarter_hours", "SRL-1_20260301"): []})
+    found = status(folder)
+    assert found["queue"]["unanalysed_recordings"] == 1 and "1 recordings to analyse" in status_text(found)
+
+
+def test_a_missed_run_of_the_schedule_is_trouble(empty):
+    """A promise of a run every 24 h is broken when none ended for 26 h, and not before; an ended promise is none."""
+    due.promise(empty, "0 3 * * *", "Europe/Lisbon", 24.0)
+    began = datetime.fromisoformat(due.promised(empty).since_utc).replace(tzinfo=UTC)
+    assert "schedule: 0 3 * * * (Europe/Lisbon), 24 h at most between runs" in status_text(status(empty, began))
+    assert status(empty, began + timedelta(hours=25.9))["trouble"] == []
+    [told] = status(empty, began + timedelta(hours=26.2))["trouble"]
+    assert told.startswith("a run of the schedule 0 3 * * * (Europe/Lisbon) was missed: none has ended for 26.2 h")
+    due.end_promise(empty)
+    assert status(empty, began + timedelta(hours=26.2))["trouble"] == []
