@@ -130,7 +130,8 @@ def _find(framed: NDArray[np.float32], flags: _Flags) -> tuple[_Beats, Blocks]:
     """Beats, in order, and block quality of a framed signal; positions count from the begin of the signal."""
     signal_mv = framed[SHAPE_BEFORE + 1 : -SHAPE_AFTER - 2]
     is_silent = flags.is_flat | flags.is_rail | flags.is_missing
-    energy = qrs.slope_energy(signal_mv)
+    bend = qrs.bends(signal_mv)
+    energy = qrs.slope_energy(bend)
     _silence(energy, flags.is_missing)
     level = qrs.block_level(energy, ~is_silent)
     candidates = qrs.peaks(signal_mv, energy, level)
@@ -141,7 +142,7 @@ def _find(framed: NDArray[np.float32], flags: _Flags) -> tuple[_Beats, Blocks]:
     is_dropped = (highest < qrs.LOW_THRESHOLD * level) & (flags.range_mv > DROPPED_MV)
     block = cell // qrs.BLOCK_CELLS
     is_clean = np.nan_to_num(noise, nan=0.0)[block] < CLEAN * level[block]
-    working = qrs.fiducials(signal_mv, cell)
+    working = qrs.fiducials(bend, cell)
     one_each = qrs.without_twins(working, candidates.energy[beat])
     beats = _Beats(working[one_each], candidates.energy[beat][one_each], is_clean[one_each])
     return beats, Blocks(flags.is_flat, flags.is_rail, flags.is_missing, is_dropped, noise, level)
@@ -186,9 +187,10 @@ def _shapes(framed: NDArray[np.float32], working: NDArray[np.float64]) -> NDArra
 
 def _noise(energy: NDArray[np.float32], cell: NDArray[np.int64], n_blocks: int) -> NDArray[np.float32]:
     """Mean energy per block from 290 ms after each beat to 130 ms before the next, NaN where that is too little."""
-    outside = np.ones(energy.size, dtype=np.float32)
-    for offset in range(-4, 10):
-        outside[np.clip(cell + offset, 0, energy.size - 1)] = 0
+    edges = np.zeros(energy.size + 14, dtype=np.int32)  # of the stretches around beats, 4 cells later than in `energy`
+    edges[cell] = 1
+    edges[cell + 14] -= 1
+    outside = (np.cumsum(edges, dtype=np.int32)[4 : energy.size + 4] == 0).astype(np.float32)
     total = (energy * outside).reshape(n_blocks, -1).sum(axis=1)
     count = outside.reshape(n_blocks, -1).sum(axis=1)
     return np.divide(total, count, out=np.full(n_blocks, np.nan, dtype=np.float32), where=count > 5)

@@ -49,25 +49,24 @@ FAR_WEAKER = 0.4  # slope energy over that of the weaker neighbour
 WEAKER = 0.75
 
 
-def slope_energy(signal_mv: NDArray[np.float32]) -> NDArray[np.float32]:
-    """Absolute second difference of the smoothed signal summed over 96 ms, once every 32 ms, shape (n // CELL,), 4 mV.
+def bends(signal_mv: NDArray[np.float32]) -> NDArray[np.float32]:
+    """How sharply the signal bends: absolute second difference of the smoothed signal, shape (n,), 4 mV, 0 at the ends.
 
     Worked off in pieces that stay in the processor's cache; values do not depend on them.
     """
-    n_samples = signal_mv.size // CELL * CELL
-    cells = np.zeros(n_samples // CELL, dtype=np.float32)
-    size = np.zeros(PIECE, dtype=np.float32)
-    for begin in range(0, n_samples, PIECE):
-        end = min(begin + PIECE, n_samples)
-        first, last = max(begin, REACH), min(end, signal_mv.size - REACH)
-        piece = size[: end - begin]
-        piece[: first - begin], piece[max(last - begin, 0) :] = 0, 0
-        if last > first:
-            np.abs(_slope(signal_mv[first - REACH : last + REACH]), out=piece[first - begin : last - begin])
-        cell = cells[begin // CELL : end // CELL]
-        np.add(piece[0::CELL], piece[1::CELL], out=cell)
-        for offset in range(2, CELL):
-            cell += piece[offset::CELL]
+    bend = np.zeros(signal_mv.size, dtype=np.float32)
+    for begin in range(REACH, signal_mv.size - REACH, PIECE):
+        end = min(begin + PIECE, signal_mv.size - REACH)
+        np.abs(_slope(signal_mv[begin - REACH : end + REACH]), out=bend[begin:end])
+    return bend
+
+
+def slope_energy(bend: NDArray[np.float32]) -> NDArray[np.float32]:
+    """Bends summed over 96 ms, once every 32 ms, shape (n // CELL,), 4 mV."""
+    whole = bend[: bend.size // CELL * CELL]
+    cells = whole[0::CELL] + whole[1::CELL]
+    for offset in range(2, CELL):
+        cells += whole[offset::CELL]
     energy = cells.copy()
     energy[1:] += cells[:-1]
     energy[:-1] += cells[1:]
@@ -116,9 +115,10 @@ class Peaks(NamedTuple):
 
 def peaks(signal_mv: NDArray[np.float32], energy: NDArray[np.float32], level: NDArray[np.float32]) -> Peaks:
     """Local maxima of the energy above the low threshold."""
-    middle = energy[1:-1]
-    limit = np.repeat(level * np.float32(LOW_THRESHOLD), BLOCK_CELLS)[1:-1]
-    cell = np.flatnonzero((middle > energy[:-2]) & (middle >= energy[2:]) & (middle > limit)) + 1
+    is_high = (energy.reshape(-1, BLOCK_CELLS) > (level * np.float32(LOW_THRESHOLD))[:, None]).ravel()
+    is_peak = is_high[1:-1] & (energy[1:-1] > energy[:-2])
+    is_peak &= energy[1:-1] >= energy[2:]
+    cell = np.flatnonzero(is_peak) + 1
     height = energy[cell]
     return Peaks(cell, height, height / level[cell // BLOCK_CELLS], _sharpness(signal_mv, cell))
 
@@ -175,7 +175,7 @@ def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[n
     cell = candidates.cell[beat]
     gap = np.diff(cell)
     usual = _local_median(gap, gap)
-    slot = np.searchsorted(cell, candidates.cell, side="right") - 1
+    slot = _last_beat(beat, candidates.cell.size)
     inside = (slot >= 0) & (slot < gap.size)
     inside[inside] = gap[slot[inside]] > SHORT_GAP * usual[slot[inside]]
     low = np.flatnonzero(inside)
@@ -197,13 +197,21 @@ def _with_gaps_searched(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[n
     return np.sort(np.concatenate([beat, low[order][is_strongest]]))
 
 
+def _last_beat(beat: NDArray[np.int64], n_candidates: int) -> NDArray[np.int64]:
+    """Number of the last beat at or before each candidate, -1 before the first."""
+    slot = np.full(n_candidates, 0)
+    slot[beat] = 1
+    slot = np.cumsum(slot)
+    slot -= 1
+    return slot
+
+
 def _usual_t_wave(candidates: Peaks, beat: NDArray[np.int64]) -> NDArray[np.float32]:
     """Energy of the T waves near each gap over their QRS: what an ectopic beat that looks like one must exceed."""
-    slot = np.searchsorted(candidates.cell[beat], candidates.cell, side="right") - 1
+    slot = _last_beat(beat, candidates.cell.size)
     after_s = (candidates.cell - candidates.cell[beat[slot]]) * (CELL / WORKING_FS_HZ)
     is_t = (slot >= 0) & (after_s > 0) & (after_s < T_WAVE_LATEST_S)
-    strongest = np.zeros(beat.size, dtype=np.float32)
-    np.maximum.at(strongest, slot[is_t], candidates.energy[is_t])
+    strongest = np.maximum.reduceat(np.where(is_t, candidates.energy, np.float32(0)), beat)
     gap = np.diff(candidates.cell[beat])
     return _local_median(np.maximum(strongest / candidates.energy[beat], LEAST_T)[:-1], gap)
 
@@ -219,15 +227,14 @@ def _local_median(values: NDArray[_Real], gap: NDArray[np.int64]) -> NDArray[_Re
     return np.maximum(np.minimum(low, high), np.minimum(np.maximum(low, high), e))
 
 
-def fiducials(signal_mv: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np.float64]:
+def fiducials(bend: NDArray[np.float32], cell: NDArray[np.int64]) -> NDArray[np.float64]:
     """Working position of the steepest bend within 64 ms of each energy peak, by a parabola, shape (n_beats,)."""
     near = 2 * CELL
-    begin = np.clip(cell * CELL + CELL // 2 - near, REACH + 1, signal_mv.size - 2 * near - REACH - 2)
-    rows = sliding_window_view(signal_mv, 2 * near + 3 + 2 * REACH)[begin - REACH - 1]
-    bend = np.abs(_slope(rows))  # from one before to one after the places looked at
-    at = bend[:, 1:-1].argmax(axis=1)
+    begin = np.clip(cell * CELL + CELL // 2 - near, REACH + 1, bend.size - 2 * near - REACH - 2)
+    rows = sliding_window_view(bend, 2 * near + 3)[begin - 1]  # from one before to one after the places looked at
+    at = rows[:, 1:-1].argmax(axis=1)
     row = np.arange(at.size)
-    left, middle, right = bend[row, at], bend[row, at + 1], bend[row, at + 2]
+    left, middle, right = rows[row, at], rows[row, at + 1], rows[row, at + 2]
     curve = left - 2 * middle + right
     shift = np.divide(0.5 * (left - right), curve, out=np.zeros_like(curve), where=curve < 0)
     return begin + at + np.clip(shift, -0.5, 0.5).astype(np.float64)

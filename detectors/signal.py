@@ -86,11 +86,12 @@ def _whole_boxes(counts: NDArray[np.int16], size: int, n_boxes: int, gain: float
     counts = counts[: n_boxes * size]
     if size == 1:
         return counts * np.float32(gain)
-    boxes = np.empty(n_boxes, dtype=np.float32)
+    boxes, numbers = np.empty(n_boxes, dtype=np.float32), np.empty(min(PIECE, n_boxes) * size, dtype=np.float32)
     for begin in range(0, n_boxes, PIECE):
         piece = boxes[begin : begin + PIECE]
-        part = counts[begin * size : (begin + piece.size) * size]
-        np.add(part[0::size], part[1::size], out=piece, dtype=np.float32)
+        part = numbers[: piece.size * size]
+        part[:] = counts[begin * size : (begin + piece.size) * size]  # adding numbers of one type is twice as fast
+        np.add(part[0::size], part[1::size], out=piece)
         for offset in range(2, size):
             piece += part[offset::size]
         piece *= np.float32(gain / size)

@@ -8,6 +8,7 @@ from __future__ import annotations
 import hashlib
 import json
 from collections.abc import Callable, Iterator, Mapping, Sequence
+from concurrent.futures import ThreadPoolExecutor
 from functools import partial
 from pathlib import Path
 from typing import Any
@@ -24,6 +25,7 @@ from warehouse.parts import Part, SignalReader, frame_schema, write_part
 from warehouse.schema import LAKE
 
 BEATS_PER_PART = 100_000
+_WRITERS = 2
 _ADDED_LATER = ("recording_id", "fingerprint")
 DERIVED_TABLES = (
     "beats", "families", "family_quarters", "episodes", "quality_windows", "findings", "quarter_hours", "strips",
@@ -59,7 +61,7 @@ def analyse_landed(
     progress: Callable[[int], None] | None = None,
 ) -> Analysis:
     """Run the detector over one landed recording; `recording` and `segments` are rows of the lake tables."""
-    reader = SignalReader(lake, signal)
+    reader = SignalReader(lake, signal, ahead=True)
     numbers = segments.sort("segment").select("segment", "sample_count")
     return analyse_recording(
         [Segment(samples, partial(reader.read, number)) for number, samples in numbers.iter_rows()],
@@ -86,31 +88,39 @@ def land_analysis(
     analysis: Analysis,
     fingerprint: str,
 ) -> dict[tuple[str, str], list[Part]]:
-    """Write the derived tables of one recording as parts; returns what the ledger must commit."""
+    """Write the derived tables of one recording as parts; returns what the ledger must commit.
+
+    Two tables at a time: one is computed while the other is compressed and flushed to disk.
+    """
     recording_id = recording["recording_id"]
     start_us = segments.sort("segment")["start_utc"].dt.timestamp("us").to_numpy()
+
+    def write(made: tuple[str, Callable[[], pl.DataFrame]]) -> Part:
+        table, frame = made
+        rows = _conform(table, frame(), recording_id, fingerprint)
+        return write_part(lake, table, recording_id, rows, fingerprint=fingerprint)
+
     loads: dict[tuple[str, str], list[Part]] = {}
-    for table, frame in _frames(analysis, start_us, recording, SignalReader(lake, signal)):
-        rows = _conform(table, frame, recording_id, fingerprint)
-        part = write_part(lake, table, recording_id, rows, fingerprint=fingerprint)
-        loads.setdefault((table, recording_id), []).append(part)
+    with ThreadPoolExecutor(_WRITERS) as pool:
+        for part in pool.map(write, _frames(analysis, start_us, recording, SignalReader(lake, signal))):
+            loads.setdefault((part.table, recording_id), []).append(part)
     return loads
 
 
 def _frames(
     analysis: Analysis, start_us: np.ndarray, recording: Mapping[str, Any], reader: SignalReader
-) -> Iterator[tuple[str, pl.DataFrame]]:
-    """The derived tables one after the other; beats in slices, so that memory does not grow with the recording."""
+) -> Iterator[tuple[str, Callable[[], pl.DataFrame]]]:
+    """How to make each derived table, what takes longest first; beats in slices, so that memory does not grow."""
+    fs_hz = analysis.fs_hz
+    yield "strips", lambda: _strips(analysis, start_us, recording, reader)
+    yield "quarter_hours", lambda: quarters_frame(quarter_hours(analysis, start_us)._asdict())
+    yield "family_quarters", lambda: quarters_frame(family_quarters(analysis, start_us)._asdict())
     for begin in range(0, max(len(analysis.beats.sample), 1), BEATS_PER_PART):
-        columns = {name: column[begin : begin + BEATS_PER_PART] for name, column in analysis.beats._asdict().items()}
-        yield "beats", _beats(columns, analysis.fs_hz, start_us)
-    yield "families", _families(analysis)
-    yield "family_quarters", quarters_frame(family_quarters(analysis, start_us)._asdict())
-    yield "episodes", spans_frame(analysis.episodes._asdict(), analysis.fs_hz, start_us)
-    yield "quality_windows", spans_frame(analysis.quality._asdict(), analysis.fs_hz, start_us)
-    yield "findings", _findings(analysis)
-    yield "quarter_hours", quarters_frame(quarter_hours(analysis, start_us)._asdict())
-    yield "strips", _strips(analysis, start_us, recording, reader)
+        yield "beats", partial(_beats, analysis, slice(begin, begin + BEATS_PER_PART), start_us)
+    yield "families", lambda: _families(analysis)
+    yield "episodes", lambda: spans_frame(analysis.episodes._asdict(), fs_hz, start_us)
+    yield "quality_windows", lambda: spans_frame(analysis.quality._asdict(), fs_hz, start_us)
+    yield "findings", lambda: _findings(analysis)
 
 
 def _conform(table: str, frame: pl.DataFrame, recording_id: str, fingerprint: str) -> pl.DataFrame:
@@ -132,13 +142,14 @@ _LETTERS = pl.Series([chr(code) for code in range(128)])
 _PAUSES = pl.Series([kind or None for kind in PAUSE_KINDS])
 
 
-def _beats(columns: dict[str, np.ndarray], fs_hz: float, start_us: np.ndarray) -> pl.DataFrame:
+def _beats(analysis: Analysis, rows: slice, start_us: np.ndarray) -> pl.DataFrame:
+    columns = {name: column[rows] for name, column in analysis.beats._asdict().items()}
     letters, pauses = columns["beat_class"].astype("<U1").view(np.uint32), columns["pause_kind"]
     numbers = pl.DataFrame(
         {name: column for name, column in columns.items() if name not in ("beat_class", "pause_kind")}
     )
     return _number_or_null(numbers).with_columns(
-        _instants(start_us, columns["segment"], columns["sample"], fs_hz).alias("beat_utc"),
+        _instants(start_us, columns["segment"], columns["sample"], analysis.fs_hz).alias("beat_utc"),
         _LETTERS.gather(letters).alias("beat_class"),
         _PAUSES.gather(pauses).alias("pause_kind"),
     )

@@ -114,6 +114,16 @@ def test_samples_read_back_exactly_over_any_range(
         reader.read(0, a, samples.size + 1)
 
 
+@pytest.mark.parametrize("ahead", [False, True])
+def test_samples_of_the_whole_range_read_back_exactly_in_overlapping_pieces(tmp_path: Path, ahead: bool) -> None:
+    """Long blocks of any int16 values survive, also when a thread unpacks the next block meanwhile."""
+    samples = np.random.default_rng(1).integers(-(2**15), 2**15, 500_000).astype(np.int16)
+    landed = [parts.write_signal(tmp_path, "r", 0, n, samples[a : a + 200_000]) for n, a in enumerate((0, 200_000))]
+    reader = parts.SignalReader(tmp_path, landed, ahead=ahead)
+    for a in (0, 90_000, 180_000, 270_000, 0):
+        assert np.array_equal(reader.read(0, a, a + 120_000), samples[a : a + 120_000])
+
+
 def test_samples_of_another_kind_are_refused(tmp_path: Path) -> None:
     """Only one-dimensional int16 counts of at most one block land."""
     for samples in (np.zeros(3), np.zeros((2, 2), np.int16), np.zeros(0, np.int16)):
