@@ -10,6 +10,7 @@ import asyncio
 import os
 from collections import deque
 from collections.abc import Iterator, Sequence
+from datetime import UTC, datetime, timedelta
 from itertools import pairwise
 from pathlib import Path
 from typing import Any
@@ -40,7 +41,7 @@ from warehouse.store import StoreAway
 
 NIGHT_S = 12 * 3600
 WAIT_FOR_FOLDER_S = 600.0
-RUNS_LOOKED_AHEAD = 400
+RUNS_LOOKED_AHEAD = 2500
 
 
 class CronError(ValueError):
@@ -196,5 +197,12 @@ def longest_gap_h(cron: str, zone: str) -> float:
     """Most hours between two of the next runs, a day of 25 hours among them."""
     from prefect.server.schemas.schedules import CronSchedule
 
-    runs = asyncio.run(CronSchedule(cron=cron, timezone=zone).get_dates(n=RUNS_LOOKED_AHEAD))
+    schedule = CronSchedule(cron=cron, timezone=zone)
+    a_year_on = datetime.now(UTC) + timedelta(days=366)
+    try:
+        runs = asyncio.run(schedule.get_dates(n=RUNS_LOOKED_AHEAD, end=a_year_on))
+        if len(runs) < 2:
+            runs = asyncio.run(schedule.get_dates(n=2))
+    except ValueError:
+        raise CronError(f"--cron {cron!r} names a day that never comes; expected one of the calendar") from None
     return max((b - a).total_seconds() for a, b in pairwise(runs)) / 3600

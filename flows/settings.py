@@ -222,7 +222,10 @@ def _value(where: str, setting: Field, value: Any) -> Any:
     if setting.name == "scheduler" and value and not str(value).startswith(("tcp://", "tls://")):
         raise SettingsError(f"{where} = {value!r}; expected an address such as tcp://host:8786")
     if setting.name == "store" and value and not _STORE_URL.fullmatch(str(value)):
-        raise SettingsError(f"{where} = {value!r}; expected an address such as s3://bucket/prefix, without a key in it")
+        # The value is not shown: it may hold a key.
+        raise SettingsError(
+            f"{where}: expected an address such as s3://bucket/prefix; keys belong into the environment"
+        )
     if setting.name == "accepted_files" and value not in ("leave", "remove"):
         raise SettingsError(f"{where} = {value!r}; expected leave or remove")
     return value

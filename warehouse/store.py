@@ -179,7 +179,10 @@ class Store:
                 f"{self.url} refused the access ({code or 'forbidden'}); its AWS_ACCESS_KEY_ID must be allowed to "
                 "list, get, put and delete there"
             )
-        return StoreAway(f"{self.url} does not answer ({_first_words(problem)}); nothing was lost, run again")
+        endpoint = os.environ.get("AWS_ENDPOINT_URL", "the region's own endpoint")
+        return StoreAway(
+            f"{self.url} does not answer at {endpoint} ({_last_words(problem)}); nothing was lost, run again later"
+        )
 
 
 def _side_by_side(do: Any, paths: Iterable[str]) -> list[Any]:
@@ -209,5 +212,6 @@ def _code_of(problem: Exception) -> str:
     return found[1] if found else ""
 
 
-def _first_words(problem: Exception) -> str:
-    return _code_of(problem) or str(problem).partition("\n")[0][:200]
+def _last_words(problem: Exception) -> str:
+    """What went wrong in the end; before it stand address, tries and seconds."""
+    return _code_of(problem) or str(problem).partition("\n\n")[0].split(" - ")[-1].strip()[:100]

@@ -143,3 +143,21 @@ def test_a_schedule_promises_runs_until_a_person_stops_it(coast, monkeypatch, en
     with contextlib.suppress(SystemExit):
         schedule.serve_nightly(coast, "0 3 * * *", "Europe/Lisbon")
     assert (due.promised(coast) is None) == ends_by_itself
+
+
+@pytest.mark.parametrize(
+    ("cron", "hours"),
+    [("0 3 * * *", 25), ("0 3 * * 1-5", 73), ("*/5 8-17 * * 1-5", 63 - 55 / 60), ("0 0 29 2 *", 4 * 8766)],
+)
+def test_the_longest_gap_of_a_schedule(cron, hours):
+    """Weekends, nights and the autumn day of 25 hours are seen; a yearly or rarer schedule has a gap too."""
+    from flows.schedule import longest_gap_h
+
+    assert longest_gap_h(cron, "Europe/Lisbon") == pytest.approx(hours, abs=1)
+
+
+def test_a_day_that_never_comes_is_one_sentence(coast, capsys):
+    """A cron field for 30 February is refused before anything is served."""
+    assert main(["schedule", str(coast), "--cron", "0 0 30 2 *"]) == 1
+    assert "names a day that never comes" in capsys.readouterr().err
+    assert not (coast / "lake" / "schedule.json").exists()
