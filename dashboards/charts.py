@@ -24,7 +24,7 @@ class Figure(TypedDict):
     layout: dict[str, Any]
 
 
-FONT = {"family": "system-ui, sans-serif", "size": 12, "color": "--ink"}
+FONT = {"family": "system-ui, sans-serif", "size": 13, "color": "--ink"}
 GREY = {"gridcolor": "--line", "linecolor": "--line", "zeroline": False, "tickcolor": "--line"}
 CLASS_COLOURS = {"V": "--v", "S": "--s"}
 
@@ -37,13 +37,13 @@ def layout(height: int, **more: Any) -> dict[str, Any]:
         "paper_bgcolor": "rgba(0,0,0,0)",
         "plot_bgcolor": "rgba(0,0,0,0)",
         "hoverlabel": {"bgcolor": "--sheet", "bordercolor": "--line", "font": FONT},
-        "legend": {"orientation": "h", "x": 0, "y": 1.0, "yanchor": "bottom", "font": {**FONT, "size": 11}},
+        "legend": {"orientation": "h", "x": 0, "y": 1.0, "yanchor": "bottom", "font": FONT},
         **more,
     }
 
 
 def axis(title: str, domain: tuple[float, float], **more: Any) -> dict[str, Any]:
-    text = {"text": title, "font": {**FONT, "size": 11}, "standoff": 6}
+    text = {"text": title, "font": FONT, "standoff": 6}
     return {**GREY, "title": text, "domain": list(domain), "rangemode": "tozero", "fixedrange": True, **more}
 
 
@@ -223,7 +223,7 @@ def _therapy_shapes(therapies: pl.DataFrame) -> Iterable[dict[str, Any]]:
 
 def _therapy_notes(therapies: pl.DataFrame) -> list[dict[str, Any]]:
     rows = therapies.drop_nulls("therapy_day").sort("therapy_day").iter_rows(named=True)
-    font = {**FONT, "size": 11, "color": "--therapy"}
+    font = {**FONT, "color": "--therapy"}
     return [
         {"x": str(row["therapy_day"]), "y": 0.995 - 0.055 * (order % 3), "xref": "x", "yref": "paper",
          "xanchor": "left", "yanchor": "top", "xshift": 4, "showarrow": False, "font": font,
@@ -272,39 +272,50 @@ def clock_map(local_hours: pl.DataFrame) -> Figure:
 
 
 def coupling(coupled: pl.DataFrame) -> Figure:
-    """Mean coupling interval and its spread, family by family, at the day on which their recording began."""
-    data = []
-    for (beat_class,), rows in coupled.partition_by("family_class", as_dict=True, maintain_order=True).items():
-        for column, yaxis in (("mean_coupling_ms", "y"), ("coupling_spread_ms", "y2")):
-            data.append(_coupling_marks(str(beat_class), rows, column, yaxis))
-    first, last = coupled["start_day"].min(), coupled["start_day"].max()
-    margin = timedelta(days=2)
-    around = [str(_midnight(first) - margin), str(_midnight(last) + margin)]  # type: ignore[arg-type]  # DATE columns
-    drawn_on = layout(
-        360,
-        xaxis={**GREY, "type": "date", "range": around, "anchor": "y2", "tickformat": "%-d %b\n%Y"},
-        yaxis=axis("mean, ms", (0.40, 1.0), rangemode="normal"),
-        yaxis2=axis("spread, ms", (0.0, 0.30), nticks=4),
+    """Coupling intervals, a row for each recording: a mark per family at its mean, a bar as long as its spread."""
+    ordered = coupled.with_columns(
+        row=pl.col("recording_id").rle_id().cast(pl.Float64),
+        place=pl.int_range(pl.len()).over("recording_id"),
     )
-    return Figure(data=data, layout=drawn_on)
+    ordered = ordered.with_columns(row=pl.col("row") + 0.16 * (pl.col("place") - 2).clip(-2, 2))
+    groups = ordered.partition_by("family_class", as_dict=True, maintain_order=True)
+    starts = coupled.unique("recording_id", keep="first", maintain_order=True)["start_day"]
+    drawn_on = layout(
+        coupling_height(coupled),
+        xaxis=axis("from the beat before, ms", (0, 1), rangemode="normal"),
+        yaxis={**GREY, "range": [len(starts) - 0.5, -0.5], "tickvals": list(range(len(starts))),
+               "ticktext": [words.day(day) for day in starts], "showgrid": False, "fixedrange": True},
+        hovermode="closest",
+        shapes=[{"type": "line", "xref": "paper", "x0": 0, "x1": 1, "y0": row - 0.5, "y1": row - 0.5,
+                 "line": {"color": "--line", "width": 1}} for row in range(1, len(starts))],
+    )  # fmt: skip
+    drawn_on["margin"] = {**drawn_on["margin"], "l": 96}
+    return Figure(data=[_coupling_marks(str(key[0]), rows) for key, rows in groups.items()], layout=drawn_on)
 
 
-def _coupling_marks(beat_class: str, rows: pl.DataFrame, column: str, yaxis: str) -> dict[str, Any]:
-    """One mark per family, its area by the number of beats."""
+def coupling_height(coupled: pl.DataFrame) -> int:
+    """Height of the coupling figure: a row for each recording."""
+    return 96 + 84 * coupled["recording_id"].n_unique()
+
+
+def _coupling_marks(beat_class: str, rows: pl.DataFrame) -> dict[str, Any]:
+    """One mark per family, its area by the number of beats, and its spread as a bar around it."""
     largest = 24
     most: int = rows["beat_count"].max()  # type: ignore[assignment]  # a BIGINT column
+    colour = CLASS_COLOURS.get(beat_class, "--f")
     return {
         "type": "scatter",
         "mode": "markers",
         "name": f"families of {beat_class} beats",
-        "showlegend": yaxis == "y",
-        "x": _days(rows["start_day"]),
-        "y": values(rows[column], 0),
-        "yaxis": yaxis,
-        "customdata": rows.select("family", "beat_count").rows(),
-        "hovertemplate": "family %{customdata[0]}: %{y} ms in %{customdata[1]:,} beats<extra></extra>",
-        "marker": {"color": CLASS_COLOURS.get(beat_class, "--f"), "opacity": 0.75, "size": rows["beat_count"].to_list(),
-                   "sizemode": "area", "sizeref": 2 * max(most, 1) / largest**2, "sizemin": 3},
+        "x": values(rows["mean_coupling_ms"], 0),
+        "y": values(rows["row"], 2),
+        "customdata": rows.select("family", "beat_count", pl.col("coupling_spread_ms").round(0)).rows(),
+        "hovertemplate": "family %{customdata[0]}: %{x} ms, spread %{customdata[2]} ms, %{customdata[1]:,} beats"
+        "<extra></extra>",
+        "error_x": {"type": "data", "array": values(rows["coupling_spread_ms"] / 2, 1), "color": colour, "width": 0,
+                    "thickness": 1.5},
+        "marker": {"color": colour, "opacity": 0.8, "size": rows["beat_count"].to_list(), "sizemode": "area",
+                   "sizeref": 2 * max(most, 1) / largest**2, "sizemin": 4},
         "cliponaxis": False,
     }  # fmt: skip
 
@@ -327,7 +338,7 @@ def wearing(hours: pl.DataFrame, of_patient: pl.DataFrame, zone: str) -> Figure:
     data += [_hourly_beats(hours, x, beat_class, middle * place, middle) for place, beat_class in enumerate(("V", "S"))]
     data.append(
         {"type": "scatter", "mode": "lines+markers", "name": "mean heart rate", "x": x,
-         "y": values(hours["mean_rate_bpm"], 1), "yaxis": "y3", "marker": {"color": "--rate", "size": 4},
+         "y": values(hours["mean_rate_bpm"], 1), "yaxis": "y3", "marker": {"color": "--rate", "size": 6, "symbol": "diamond"},
          "line": {"color": "--rate", "width": 1.5, "shape": "hv"}, "connectgaps": False,
          "hovertemplate": "%{y:.0f} /min<extra></extra>"}
     )  # fmt: skip

@@ -57,5 +57,6 @@ def _section(tables: Tables, kind: str) -> dict[str, Any]:
         "kind": kind,
         "figures": cohort.row(0, named=True),
         "chart": cohort_charts.changes_of_all(ordered),
+        "height": cohort_charts.changes_height(ordered),
         "changes": [row | {"page": addresses.patient_page(row["patient_code"])} for row in ordered.rows(named=True)],
     }

@@ -23,8 +23,19 @@ RATIO_TICKS = {
 }
 
 
+MOST_NAMED = 40
+"""Up to so many patients have a row with their code each; more stand side by side without."""
+
+
+def changes_height(changes: pl.DataFrame) -> int:
+    """Height of the figure of all changes."""
+    return 96 + 32 * changes.height if changes.height <= MOST_NAMED else 380
+
+
 def changes_of_all(changes: pl.DataFrame) -> Figure:
     """Each patient's ratio of after to before, sorted, before the band that chance explains for that patient."""
+    is_named = changes.height <= MOST_NAMED
+    ratio_axis, place_axis = ("x", "y") if is_named else ("y", "x")
     place = list(range(1, changes.height + 1))
     limits = changes.select(
         low=(1 - pl.col("chance_fall_limit_pct") / 100).clip(SMALLEST, LARGEST),
@@ -33,22 +44,32 @@ def changes_of_all(changes: pl.DataFrame) -> Figure:
     band = {
         "type": "bar",
         "name": "explained by chance",
-        "x": place,
-        "y": values(limits["high"] - limits["low"], 4),
+        "orientation": "h" if is_named else "v",
+        place_axis: place,
+        ratio_axis: values(limits["high"] - limits["low"], 4),
         "base": values(limits["low"], 4),
         "marker": {"color": "--worn"},
         "hoverinfo": "skip",
     }
-    points = [_verdict_points(changes, place, verdict) for verdict in words.VERDICTS]
+    points = [_verdict_points(changes, place, verdict, ratio_axis, place_axis) for verdict in words.VERDICTS]
+    ratios = axis("", (0, 1), type="log", rangemode="normal", tickvals=list(RATIO_TICKS),
+                  ticktext=list(RATIO_TICKS.values()))  # fmt: skip
+    places = {**GREY, "showgrid": False, "fixedrange": True, "range": [0.4, changes.height + 0.6]}
+    if is_named:
+        codes = [as_text(code, longest=16) for code in changes["patient_code"]]
+        places |= {"range": [changes.height + 0.6, 0.4], "tickvals": place, "ticktext": codes}
+    else:
+        places |= {"title": {"text": "patients, from the largest fall"}, "showticklabels": False}
+    same = {f"{ratio_axis}0": 1, f"{ratio_axis}1": 1, f"{place_axis}0": 0, f"{place_axis}1": 1}
     drawn_on = layout(
-        380,
-        xaxis={**GREY, "title": {"text": "patients, from the largest fall"}, "showticklabels": False, "showgrid": False},
-        yaxis=axis("", (0, 1), type="log", rangemode="normal", tickvals=list(RATIO_TICKS),
-                   ticktext=list(RATIO_TICKS.values())),
-        bargap=0.1,
+        changes_height(changes),
+        **{f"{ratio_axis}axis": ratios, f"{place_axis}axis": places},
+        bargap=0.35,
         hovermode="closest",
-        shapes=[{"type": "line", "xref": "paper", "x0": 0, "x1": 1, "y0": 1, "y1": 1, "line": {"color": "--ink", "width": 1}}],
-    )  # fmt: skip
+        shapes=[{"type": "line", f"{place_axis}ref": "paper", **same, "line": {"color": "--ink", "width": 1}}],
+    )
+    if is_named:
+        drawn_on["margin"] = {**drawn_on["margin"], "l": 130}
     return Figure(data=[band, *(trace for trace in points if trace["x"])], layout=drawn_on)
 
 
@@ -60,7 +81,9 @@ VERDICT_MARKS = {
 }
 
 
-def _verdict_points(changes: pl.DataFrame, place: list[int], verdict: str) -> dict[str, Any]:
+def _verdict_points(
+    changes: pl.DataFrame, place: list[int], verdict: str, ratio_axis: str, place_axis: str
+) -> dict[str, Any]:
     colour, symbol = VERDICT_MARKS[verdict]
     known = pl.col("ratio").is_not_null()
     rows = changes.with_columns(place=pl.Series(place, dtype=pl.Int64)).filter((pl.col("verdict") == verdict) & known)
@@ -68,13 +91,13 @@ def _verdict_points(changes: pl.DataFrame, place: list[int], verdict: str) -> di
         "type": "scatter",
         "mode": "markers",
         "name": words.VERDICTS[verdict][1],
-        "x": rows["place"].to_list(),
-        "y": values(rows["ratio"].clip(SMALLEST, LARGEST), 4),
+        place_axis: rows["place"].to_list(),
+        ratio_axis: values(rows["ratio"].clip(SMALLEST, LARGEST), 4),
         "customdata": [
             [as_text(code), round(change, 1)] for code, change in rows.select("patient_code", "change_pct").rows()
         ],
         "hovertemplate": "%{customdata[0]}: %{customdata[1]:+} %<extra></extra>",
-        "marker": {"color": colour, "symbol": symbol, "size": 9},
+        "marker": {"color": colour, "symbol": symbol, "size": 11},
     }
 
 

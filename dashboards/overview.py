@@ -11,7 +11,11 @@ from dashboards import addresses, words
 from dashboards.tables import Tables
 
 PAGE = "index.html"
-TABLES = ("patients", "wear_days", "recordings", "therapies", "changes", "attention", "deliveries", "runs_of_flow")
+TABLES = (
+    "patients", "wear_days", "recordings", "therapies", "changes", "attention", "deliveries", "runs_of_flow",
+    "review_effort",
+)  # fmt: skip
+SHEETS_SHOWN = 8
 LONGEST_CALENDAR_D = 120
 SHORTEST_CALENDAR_D = 28
 WEAR_LEVELS = ("none", "short", "valid")
@@ -46,12 +50,44 @@ def context(tables: Tables) -> dict[str, Any]:
         .head(20)
         .rows(named=True),
         "recordings": tables.whole("recordings").height,
+        "effort": _effort(tables),
+        "sheets": _sheets(tables),
     }
 
 
 def data_files(tables: Tables) -> dict[str, pl.DataFrame]:
     """Return the downloads of the overview by name."""
-    return {name: tables.whole(name) for name in ("attention", "wear_days", "deliveries", "changes")}
+    return {name: tables.whole(name) for name in ("attention", "wear_days", "deliveries", "changes", "review_effort")}
+
+
+def _effort(tables: Tables) -> dict[str, Any] | None:
+    """Return what the over-read sheets of all recordings ask for: the fewest and the most decisions and minutes."""
+    effort = tables.whole("review_effort")
+    if effort.is_empty():
+        return None
+    figures = effort.select(
+        "seconds_per_decision",
+        fewest=pl.col("decisions_to_goal").min(),
+        most=pl.col("decisions_to_goal").max(),
+        median_min=pl.col("minutes_to_goal").median(),
+        most_min=pl.col("minutes_to_goal").max(),
+        sheets=pl.len(),
+        untouched=(pl.col("decided_v_pct") == 0).sum(),
+    )
+    return figures.row(0, named=True)
+
+
+def _sheets(tables: Tables) -> list[dict[str, Any]]:
+    """Return the sheets on which most ventricular beats wait for a decision."""
+    burdens = tables.whole("recordings").select("recording_id", "v_beats", "all_beats", "v_burden_pct", "analysable_h")
+    waiting = tables.whole("review_effort").join(burdens, on="recording_id")
+    ordered = waiting.sort(
+        (100 - pl.col("decided_v_pct")) * pl.col("v_beats"), "recording_id", descending=[True, False]
+    )
+    return [
+        row | {"page": addresses.review_page(row["recording_id"])}
+        for row in ordered.head(SHEETS_SHOWN).iter_rows(named=True)
+    ]
 
 
 def _first_ranks(attention: pl.DataFrame) -> dict[str, int]:

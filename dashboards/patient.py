@@ -13,6 +13,7 @@ from dashboards.tables import Tables
 FAMILIES_SHOWN = 5  # of each recording
 STRIPS_SHOWN = 4  # of the first and of the last recording
 ECTOPIC = ("V", "F", "S")
+TIED = "\N{NO-BREAK SPACE}"
 
 
 def context(tables: Tables, patient_code: str) -> dict[str, Any]:
@@ -38,6 +39,7 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
         "clock_map": charts.clock_map(rows["local_hours"]) if measured.height else None,
         "marks": rows["marks"].sort("mark_utc", "mark_text").rows(named=True),
         "coupling": charts.coupling(coupled) if coupled.height else None,
+        "coupling_height": charts.coupling_height(coupled),
         "coupled": coupled.rows(named=True),
         "coupling_finding": coupling_words(coupled),
         "visits": _visits(rows["visits"], rows["visit_changes"]),
@@ -98,7 +100,7 @@ def change_words(change: dict[str, Any]) -> str:
         return f"{name.lower()} fell beyond chance at first and is back since {words.day(change['recurrence_day'])}"
     verb = {"fell_beyond_chance": "fell beyond chance", "rose_beyond_chance": "rose beyond chance"}
     said = verb.get(change["verdict"], "did not change more than chance explains")
-    return f"{name.lower()} {said}, {before} → {after} {unit}"
+    return f"{name.lower()} {said}, {before}{TIED}→{TIED}{after}{TIED}{unit}"
 
 
 def _event(therapy: dict[str, Any], rows: dict[str, pl.DataFrame]) -> dict[str, Any]:

@@ -20,6 +20,13 @@ from warehouse.cautions import CAUTIONS
 ROOM = Path(__file__).parent
 MANIFEST = "pages.json"
 
+# What plotly.js puts into a page of its own accord: an empty style (it adds its rules to it one by one) and the style of
+# the maps, which we do not draw. Only these very texts are allowed; a test in Chromium fails when plotly.js has others.
+CHART_STYLE_SOURCES = (
+    "'unsafe-hashes' 'sha256-47DEQpj8HBSa+/TImW+5JCeuQeRkm5NMpJWZG3hSuFU=' "
+    "'sha256-ji27qzEtxXZW+7dun6UwjHXJ18e6WAin1VvNtkzIE/o='"
+)
+
 # A spreadsheet runs text that begins like a formula; an apostrophe before it makes it text again.
 _NO_FORMULA = pl.col(pl.String).str.replace(r"^([=+\-@\t\r])", "'$1")
 
@@ -124,6 +131,6 @@ def _templates() -> jinja2.Environment:
         auto_reload=False,
     )
     environment.filters |= words.FILTERS
-    environment.globals["words"] = words
+    environment.globals |= {"words": words, "chart_style_sources": CHART_STYLE_SOURCES}
     environment.policies["json.dumps_kwargs"] = {"sort_keys": True, "allow_nan": False, "separators": (",", ":")}
     return environment

@@ -12,7 +12,9 @@ from dashboards.tables import Tables
 
 EPISODES_SHOWN = 60
 WINDOWS_SHOWN = 40
-FAMILIES_SHOWN = 16
+FAMILIES_SHOWN = 12
+SMALLEST_SHARE_PCT = 0.02  # of a family that is drawn, beyond the first few
+FAMILIES_ALWAYS = 4
 LISTED_EPISODES = ("run", "sv_run", "pause", "bigeminy", "trigeminy", "irregular")
 
 
@@ -22,7 +24,9 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
     hours = tables.of_recording("hours", recording_id).sort("hour_utc")
     families = tables.of_recording("families", recording_id).sort("beat_count", "family", descending=[True, False])
     episodes = tables.large("episodes", recording_id)
+    counted = episodes.filter("is_counted")
     windows = tables.large("quality_windows", recording_id).sort("duration_s", "start_utc", descending=[True, False])
+    drawn_families = _large(families)
     marks = tables.of_recording("marks", recording_id).sort("mark_utc", "mark_text")
     drawn = draw_rows(tables.large("strips", recording_id), zone, marks)
     return {
@@ -35,10 +39,13 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
         "hours": hours.rows(named=True),
         "wearing": charts.wearing(hours, marks, zone) if hours.height else None,
         "marks": marks.rows(named=True),
-        "families": draw_families(families.head(FAMILIES_SHOWN)),
+        "families": draw_families(drawn_families),
+        "other_families": families.tail(-drawn_families.height).drop("shape_mv").rows(named=True),
         "families_count": families.height,
-        "episode_counts": _counts(episodes, "episode_kind"),
-        "episodes": _longest(episodes),
+        "families_share_pct": drawn_families["share_pct"].sum(),
+        "episode_counts": _counts(counted, "episode_kind"),
+        "episodes_left_out": episodes.filter(pl.col("is_automatic") & ~pl.col("is_counted")).height,
+        "episodes": _longest(counted),
         "episodes_shown": EPISODES_SHOWN,
         "windows": windows.head(WINDOWS_SHOWN).rows(named=True),
         "windows_count": windows.height,
@@ -58,11 +65,18 @@ def data_files(tables: Tables, recording_id: str) -> dict[str, pl.DataFrame]:
 
 def _findings(recording: dict[str, Any], of_detector: pl.DataFrame) -> list[str]:
     """Return what a reader of the numbers must know: oddities of the file, then findings of the detector."""
-    of_file = [words.sentence(words.plain(code)) for code in (recording["findings"] or "").split()]
+    codes = (recording["findings"] or "").split()
+    of_file = [words.FINDINGS.get(code, words.sentence(words.plain(code))) for code in codes]
     return of_file + [
         f"{words.sentence(words.plain(code))}: {detail}" if detail else words.sentence(words.plain(code))
         for code, detail in of_detector.select("finding_code", "finding_detail").iter_rows()
     ]
+
+
+def _large(families: pl.DataFrame) -> pl.DataFrame:
+    """Return the families worth drawing, of rows that are sorted by size: the first few, and others of some share."""
+    is_large = (pl.col("share_pct") >= SMALLEST_SHARE_PCT) | (pl.int_range(pl.len()) < FAMILIES_ALWAYS)
+    return families.filter(is_large).head(FAMILIES_SHOWN)
 
 
 def _counts(frame: pl.DataFrame, column: str) -> dict[str, int]:

@@ -18,7 +18,6 @@ FAMILIES_SHOWN = 40
 STRIPS_OF_A_FAMILY = 2
 EPISODES_SHOWN = 30
 READ_EPISODES = ("run", "sv_run", "pause")
-GOAL_PCT = 95
 
 
 def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
@@ -28,15 +27,44 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
     shapes = {row["family"]: row for row in draw_families(tables.of_recording("families", recording_id))}
     marks = tables.of_recording("marks", recording_id)
     drawn = draw_rows(tables.large("strips", recording_id), recording["zone"], marks)
-    items = [row | {"shape": shapes[row["family"]]} for row in sheet.head(FAMILIES_SHOWN).rows(named=True)]
+    said = _said(tables.of_recording("decisions", recording_id), recording["fingerprint"])
+    items = [
+        row | {"shape": shapes[row["family"]], "said": said.get(row["family"], [])}
+        for row in sheet.head(FAMILIES_SHOWN).rows(named=True)
+    ]
+    shown = _with_strips(items, drawn)
+    beside = [strip for item in shown for strip in item["strips"]]
     return {
         "recording": recording,
         "recording_page": addresses.recording_page(recording_id),
-        "items": _with_strips(items, drawn),
+        "items": shown,
         "families_count": sheet.height,
-        "goal": _goal(sheet),
+        "effort": next(tables.of_recording("review_effort", recording_id).iter_rows(named=True), None),
+        "other_strips": [strip for strip in drawn if not any(strip is shown for shown in beside)],
         "episodes": _episodes(tables.large("episodes", recording_id)),
     }
+
+
+def _said(decisions: pl.DataFrame, fingerprint: str | None) -> dict[int, list[str]]:
+    """Return what each reader last said of each family in decisions that count already, in words."""
+    of_families = decisions.filter(
+        (pl.col("decision_subject") == "family") & (pl.col("read_fingerprint") == fingerprint)
+    ).sort("reviewed_utc", "delivery_id")
+    latest = of_families.unique(("family", "reader_code"), keep="last", maintain_order=True).sort("reader_code")
+    said: dict[int, list[str]] = {}
+    for row in latest.iter_rows(named=True):
+        said.setdefault(row["family"], []).append(f"{row['reader_code']}: {_in_words(row)}")
+    return said
+
+
+def _in_words(row: dict[str, Any]) -> str:
+    if row["is_mixed"]:
+        return "different shapes"
+    if row["decision"] is None:
+        return (
+            f"same shape as family {row['same_as_family']}" if row["same_as_family"] is not None else "nothing decided"
+        )
+    return f"accepted as {row['automatic_class']}" if row["decision"] == "accept" else str(row["decision"])
 
 
 def _with_strips(items: list[dict[str, Any]], drawn: list[dict[str, Any]]) -> list[dict[str, Any]]:
@@ -49,12 +77,6 @@ def _with_strips(items: list[dict[str, Any]], drawn: list[dict[str, Any]]) -> li
         item["strips"] = showing[:STRIPS_OF_A_FAMILY]
         free = [strip for strip in free if not any(strip is taken for taken in item["strips"])]
     return items
-
-
-def _goal(sheet: pl.DataFrame) -> dict[str, Any] | None:
-    """Return the row of the sheet with which the goal is reached."""
-    reached = sheet.filter(pl.col("settled_pct") >= GOAL_PCT)
-    return reached.row(0, named=True) if reached.height else None
 
 
 def _episodes(episodes: pl.DataFrame) -> list[dict[str, Any]]:

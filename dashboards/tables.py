@@ -53,7 +53,10 @@ class Tables:
         "patients", "recordings", "wear_days", "local_hours", "therapies", "periods", "changes", "rate_effects",
         "level_shifts", "attention", "visits", "visit_changes", "marks",
     )  # fmt: skip
-    BY_RECORDING = ("recordings", "segments", "families", "hours", "findings", "marks", "review_sheet", "reviewed")
+    BY_RECORDING = (
+        "recordings", "segments", "families", "hours", "findings", "marks", "review_sheet", "review_effort", "reviewed",
+        "undecided_families", "decisions",
+    )  # fmt: skip
     LARGE = ("strips", "episodes", "quality_windows")
 
     def __init__(self, published: PublishedTables) -> None:

@@ -10,7 +10,7 @@ from dashboards import addresses
 from dashboards.tables import Tables
 
 PAGE = "trail.html"
-TABLES = ("audit", "reader_agreement", "reader_conflicts", "reviewed", "recordings")
+TABLES = ("audit", "reader_agreement", "reader_conflicts", "reviewed", "undecided_families", "recordings")
 EDITS_SHOWN = 100
 
 
@@ -21,6 +21,10 @@ def context(tables: Tables) -> dict[str, Any]:
     return {
         "agreement": tables.whole("reader_agreement").rows(named=True),
         "conflicts": [row | {"page": addresses.review_page(row["recording_id"])} for row in conflicts.rows(named=True)],
+        "undecided": [
+            row | {"page": addresses.review_page(row["recording_id"])}
+            for row in tables.whole("undecided_families").rows(named=True)
+        ],
         "reviewed": [
             row | {"page": addresses.recording_page(row["recording_id"])}
             for row in tables.whole("reviewed").rows(named=True)
@@ -33,4 +37,4 @@ def context(tables: Tables) -> dict[str, Any]:
 
 def data_files(tables: Tables) -> dict[str, pl.DataFrame]:
     """Return the downloads of the page by name."""
-    return {name: tables.whole(name) for name in ("audit", "reader_agreement", "reader_conflicts", "reviewed")}
+    return {name: tables.whole(name) for name in TABLES if name != "recordings"}

@@ -16,6 +16,13 @@
   const empty = () => ({ reader_code: "", note: "", families: {}, beats: {}, episodes: {} });
   let state = empty();
   const familyOf = (item) => state.families[item.dataset.family] || {};
+  // What is decided of a family: nothing when it holds different shapes, else its own decision or that of the family it looks like.
+  function classOf(item) {
+    const { decision, same_as, is_mixed } = familyOf(item);
+    if (is_mixed) return undefined;
+    const alike = state.families[same_as];
+    return decision || (alike && !alike.is_mixed ? alike.decision : undefined);
+  }
   const beatName = (mark) => `${mark.dataset.segment}:${mark.dataset.sample}`;
   const episodeName = (row) => `${row.dataset.kind}:${row.dataset.segment}:${row.dataset.first}`;
 
@@ -28,8 +35,10 @@
   function show() {
     for (const item of items) {
       const { decision, same_as, is_mixed } = familyOf(item);
-      item.classList.toggle("decided", Boolean(decision));
-      press(item, decision);
+      item.classList.toggle("decided", Boolean(classOf(item)));
+      item.classList.toggle("open", Boolean(is_mixed));
+      press(item, is_mixed ? undefined : decision);
+      item.querySelector(".open-note").hidden = !is_mixed;
       item.querySelector("[data-same-as]").value = same_as ?? "";
       item.querySelector("[data-mixed]").checked = Boolean(is_mixed);
     }
@@ -41,12 +50,14 @@
     }
     reader.value = state.reader_code;
     note.value = state.note;
-    const decided = items.filter((item) => familyOf(item).decision);
-    const settled = decided.reduce((sum, item) => sum + Number(item.dataset.share), 0);
+    const decided = items.filter(classOf);
+    const left = items.filter((item) => familyOf(item).is_mixed);
+    const share = (some) => some.reduce((sum, item) => sum + Number(item.dataset.share), 0).toFixed(1);
     const single = Object.keys(state.beats).length;
-    document.getElementById("progress").textContent = decided.length || single
-      ? `${settled.toFixed(1)} % of the ventricular beats settled, ${decided.length} of ${items.length} families decided, ${single} single beats relabelled`
-      : "Nothing decided yet";
+    const told = [`${share(decided)} % of the ventricular beats settled`, `${decided.length} of ${items.length} families decided`];
+    if (left.length) told.push(`${left.length} left open with ${share(left)} %`);
+    if (single) told.push(`${single} single ${single === 1 ? "beat" : "beats"} relabelled`);
+    document.getElementById("progress").textContent = decided.length || single || left.length ? told.join(", ") : "Nothing decided yet";
   }
 
   function press(place, decision) {
@@ -75,7 +86,7 @@
     if (!button) return;
     const row = button.closest(".episode");
     if (row) { state.episodes[episodeName(row)] = button.dataset.decision; keep(); }
-    else decideFamily(button.closest(".item"), { decision: button.dataset.decision });
+    else decideFamily(button.closest(".item"), { decision: button.dataset.decision, is_mixed: false });
   });
   sheet.addEventListener("change", (change) => {
     const item = change.target.closest(".item");
@@ -98,9 +109,10 @@
     if (event.key === "k") goTo(items[Math.max(here - 1, 0)]);
     if (here < 0) return;
     const item = items[here];
+    if (event.key === "d") decideFamily(item, { is_mixed: !familyOf(item).is_mixed });
     if (event.key === "u") { delete state.families[item.dataset.family]; keep(); }
     if (decision) {
-      decideFamily(item, { decision: decision === item.dataset.automatic ? "accept" : decision });
+      decideFamily(item, { decision: decision === item.dataset.automatic ? "accept" : decision, is_mixed: false });
       goTo(items[here + 1]);
     }
   });

@@ -43,7 +43,30 @@ def decided(visit):
 def test_keys_decide_and_tell_what_is_settled(decided):
     """Two keys decide two families; the sheet tells the share of the burden they settle."""
     # Source: the invented sheet: shares 88.8 % and 11.2 %
-    assert "100.0 % of the ventricular beats settled, 2 of 3 families decided, 1 single beats" in progress(decided)
+    assert "100.0 % of the ventricular beats settled, 2 of 3 families decided, 1 single beat relabelled" in progress(
+        decided
+    )
+
+
+def test_a_family_of_different_shapes_is_left_open(decided):
+    """One key marks it; its share is told as open, not as settled, and a decision takes the mark away."""
+    decided.locator(".item").first.focus()
+    decided.keyboard.press("d")
+    assert "11.2 % of the ventricular beats settled" in progress(decided)
+    assert "1 left open with 88.8 %" in progress(decided)
+    assert decided.locator(".item").first.get_by_text("Left open").is_visible()
+    decided.keyboard.press("a")
+    assert "100.0 % of the ventricular beats settled" in progress(decided)
+
+
+def test_a_family_of_the_same_shape_counts_as_settled(decided):
+    """A family merged into a decided one is settled with it."""
+    second = decided.locator(".item").nth(1)
+    second.focus()
+    decided.keyboard.press("u")
+    assert "88.8 % of the ventricular beats settled" in progress(decided)
+    second.get_by_label("has the same shape as").select_option("1")
+    assert "100.0 % of the ventricular beats settled, 2 of 3" in progress(decided)
 
 
 def test_decisions_survive_a_reload(decided):

@@ -182,6 +182,10 @@ def _add_recording(rows: Any, rng: random.Random, code: str, recording_id: str, 
             {"recording_id": recording_id, "review_rank": rank, "family": family, "family_class": found["family_class"],
              "beat_count": found["beat_count"], "v_share_pct": share, "settled_pct": settled}
         )  # fmt: skip
+    rows["review_effort"].append(
+        {"recording_id": recording_id, "patient_code": code, "decisions_to_goal": 2, "settled_pct": 100.0,
+         "seconds_per_decision": 20, "minutes_to_goal": 2 / 3, "decided_v_pct": 0.0}
+    )  # fmt: skip
     for order, kind in enumerate(("V", "V", "S", "N")):
         rows["strips"].append(strip_row(recording_id, order, kind, start + timedelta(hours=3)))
     for order, kind in enumerate(("run", "couplet", "couplet", "pause")):
@@ -189,7 +193,8 @@ def _add_recording(rows: Any, rng: random.Random, code: str, recording_id: str, 
         rows["episodes"].append(
             {"recording_id": recording_id, "fingerprint": "f00dfeed", "episode_kind": kind, "segment": 0,
              "first_sample": 1000 * order, "last_sample": 1000 * order + 400, "start_utc": at,
-             "end_utc": at + timedelta(seconds=1.6), "beat_count": 3, "duration_s": 1.6, "rate_bpm": 128.0}
+             "end_utc": at + timedelta(seconds=1.6), "beat_count": 3, "duration_s": 1.6, "rate_bpm": 128.0,
+             "is_automatic": True, "is_counted": True}
         )  # fmt: skip
     rows["quality_windows"].append(
         {"recording_id": recording_id, "fingerprint": "f00dfeed", "segment": 0, "first_sample": 0, "last_sample": 9000,

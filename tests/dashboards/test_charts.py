@@ -85,13 +85,15 @@ def test_a_change_of_level_is_marked_on_its_day(timeline):
 
 
 def test_coupling_is_drawn_where_it_is_known(tables):
-    """Each ectopic family with a coupling interval is one mark of its mean and one of its spread, at its recording's day."""
+    """Each ectopic family with a coupling interval is one mark in its recording's row, with its spread as a bar."""
     coupled = _coupled(tables, tables.of_patient("recordings", CODE))
-    mean, spread = charts.coupling(coupled)["data"]
-    assert mean["x"] == spread["x"] == ["2026-03-02"] * 2 + ["2026-03-20"] * 2
+    figure = charts.coupling(coupled)
+    (of_v,) = figure["data"]
+    assert figure["layout"]["yaxis"]["ticktext"] == ["2 Mar 2026", "20 Mar 2026"]
+    assert [round(place) for place in of_v["y"]] == [0, 0, 1, 1] and len(set(of_v["y"])) == 4
     # Source: the invented families: 470 ms with a spread of 38 ms
-    assert (set(mean["y"]), set(spread["y"])) == ({470.0}, {38.0})
-    plotly.graph_objects.Figure(coloured(charts.coupling(coupled)))
+    assert (set(of_v["x"]), set(of_v["error_x"]["array"])) == ({470.0}, {19.0})
+    plotly.graph_objects.Figure(coloured(figure))
 
 
 def test_marks_of_the_patient_stand_on_their_local_day(timeline):
@@ -117,9 +119,19 @@ def test_every_patient_stands_before_the_band_that_chance_explains(tables):
     changes = tables.whole("changes").filter(pl.col("measure") == "v_burden_pct").sort("change_pct", nulls_last=True)
     band, *marks = cohort_charts.changes_of_all(changes)["data"]
     # Source: the invented changes: chance explains falls to 61 % and rises to 155 %
-    assert set(zip(band["base"], band["y"], strict=True)) == {(0.39, 2.16), (None, None)}
-    assert sorted(place for trace in marks for place in trace["x"]) == [1, 2, 3]
+    assert set(zip(band["base"], band["x"], strict=True)) == {(0.39, 2.16), (None, None)}
+    assert sorted(place for trace in marks for place in trace["y"]) == [1, 2, 3]
     assert {trace["name"] for trace in marks} == {"fell beyond chance", "within chance", "rose beyond chance"}
+
+
+def test_many_patients_stand_side_by_side(tables):
+    """More patients than have room for their codes stand in one row of bars, from the largest fall."""
+    changes = tables.whole("changes").filter(pl.col("measure") == "v_burden_pct").sort("change_pct", nulls_last=True)
+    many = pl.concat([changes] * 20)
+    figure = cohort_charts.changes_of_all(many)
+    assert figure["data"][0]["orientation"] == "v" and len(figure["data"][0]["x"]) == many.height
+    assert cohort_charts.changes_height(many) == figure["layout"]["height"] == 380
+    plotly.graph_objects.Figure(coloured(figure))
 
 
 def test_therapy_text_cannot_carry_markup(tables):

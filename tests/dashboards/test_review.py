@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from datetime import datetime
+
 from dashboards import review
 from dashboards.tables import Tables
 
@@ -30,14 +32,38 @@ def test_each_family_stands_with_strips_that_show_it(rows, publish):
     assert len(shown) == len(set(shown))
 
 
-def test_the_goal_is_the_first_row_that_settles_enough(rows, publish):
+def test_the_effort_of_the_sheet_stands_in_its_title(rows, publish):
     """The headline counts the decisions after which 95 % of the ventricular beats are settled."""
-    # Source: the running sum of the sheet: 88.8 % after one family, 100 % after two
-    assert sheet_of(rows, publish)["goal"]["review_rank"] == 2
+    assert sheet_of(rows, publish)["effort"]["decisions_to_goal"] == 2
+
+
+def test_strips_beside_no_family_stand_at_the_end(rows, publish):
+    """Every strip is on the sheet once, so that each of its beats can be relabelled."""
+    sheet = sheet_of(rows, publish)
+    beside = [strip["strip_reason"] for item in sheet["items"] for strip in item["strips"]]
+    others = [strip["strip_reason"] for strip in sheet["other_strips"]]
+    of_recording = [row["strip_reason"] for row in rows["strips"] if row["recording_id"] == RECORDING]
+    assert sorted(beside + others) == sorted(of_recording)
+
+
+def test_the_sheet_tells_what_readers_decided_before(rows, publish):
+    """Beside a family stands the latest word of each reader on it, under the analysis that the sheet shows only."""
+    decision = {"recording_id": RECORDING, "decision_subject": "family", "automatic_class": "V", "family": 1}
+    for order, (reader, decided, is_mixed, fingerprint) in enumerate(
+        (("A", "N", False, "f00dfeed"), ("A", "accept", False, "f00dfeed"), ("B", None, True, "f00dfeed"),
+         ("C", "S", False, "0ld"))
+    ):  # fmt: skip
+        more = {"delivery_id": f"D{order}", "decision_order": 0, "reader_code": reader, "decision": decided}
+        more |= {"is_mixed": is_mixed, "read_fingerprint": fingerprint, "reviewed_utc": datetime(2026, 4, order + 1)}  # noqa: DTZ001  UTC
+        rows["decisions"].append(decision | more)
+    first, second, *_ = sheet_of(rows, publish)["items"]
+    assert first["said"] == ["A: accepted as V", "B: different shapes"]
+    assert second["said"] == []
 
 
 def test_a_recording_without_families_has_an_empty_sheet(rows, publish):
     """Where nothing was found there is nothing to decide, and no error."""
     rows["review_sheet"].clear()
+    rows["review_effort"].clear()
     sheet = sheet_of(rows, publish)
-    assert sheet["items"] == [] and sheet["goal"] is None
+    assert sheet["items"] == [] and sheet["effort"] is None

@@ -199,6 +199,7 @@ def test_missing_burden_is_never_shown_as_a_number(rows, publish, tmp_path):
         row |= {"v_burden_pct": None, "s_burden_pct": None, "v_per_h": None, "mean_rate_bpm": None, "analysable_h": 0.0}
         row |= {"v_beats": 0, "all_beats": 0, "is_valid_day": False}
     rows["changes"].clear()
+    rows["review_effort"].clear()
     pages = pages_of(build(publish(rows), tmp_path / "site"))
     assert "No analysable beat yet: ventricular burden is not known" in pages["patients/SKERRY-0001.html"].text
     assert "%" not in re.sub(r"over the line of 10 %|11.8 %", "", pages["index.html"].text)
@@ -214,7 +215,7 @@ def test_burden_on_the_overview_names_its_denominator(site, rows):
     """Each patient's burden stands with its beats and analysable hours."""
     text = pages_of(site)["index.html"].text
     shown = re.findall(r"(\d+\.\d) % ([\d ]+) V of ([\d ]+) beats", text)
-    assert len(shown) == len(rows["patients"])
+    assert len(shown) == len(rows["patients"]) + len(rows["review_effort"])
     for burden, v_beats, all_beats in shown:
         v, n = (int(figure.replace(" ", "")) for figure in (v_beats, all_beats))
         # Source: burden definition, 100 x ectopic beats / all analysable beats
