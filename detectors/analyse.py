@@ -29,7 +29,9 @@ class Options(NamedTuple):
 class Gathered(NamedTuple):
     """All that needed samples; what follows needs beats only."""
 
-    found: beats.Found
+    found: beats.Kept
+    sample: NDArray[np.int64]
+    timing: classify.Timing
     book: FamilyBook
     bad: QualityWindows
     lengths: NDArray[np.int64]  # samples per segment
@@ -113,7 +115,8 @@ def gather(
     del seen
     every = table.since(0)
     artefact = beats.is_artefact(every, timing_of(every, bad, lengths, scale.fs_hz)[1])
-    return Gathered(every.keep(~artefact), book, bad, lengths, scale.fs_hz)
+    found = every.keep(~artefact)
+    return Gathered(found.kept, *timing_of(found, bad, lengths, scale.fs_hz), book, bad, lengths, scale.fs_hz)
 
 
 def _read(
@@ -170,8 +173,7 @@ def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Foun
 
 def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] = classify.WEIGHTS) -> Analysis:
     """Classes, episodes and findings of gathered beats, with the whole recording as context."""
-    found, bad, lengths, fs_hz = gathered.found, gathered.bad, gathered.lengths, gathered.fs_hz
-    sample, timing = timing_of(found, bad, lengths, fs_hz)
+    found, sample, timing, _, bad, lengths, fs_hz = gathered
     labels = classify.classify(timing, found.member, found.spread_ms, gathered.book.shape_mv, weights)
     is_analysable = quality.is_outside(bad, found.segment, sample)
     bad = _with_doubtful_runs(bad, found, sample, timing, labels, is_analysable)
@@ -195,7 +197,7 @@ def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] 
 
 def _with_doubtful_runs(
     bad: QualityWindows,
-    found: beats.Found,
+    found: beats.Kept,
     sample: NDArray[np.int64],
     timing: classify.Timing,
     labels: classify.Labels,

@@ -29,9 +29,9 @@ class Found(NamedTuple):
     spread_ms: NDArray[np.float32]
 
     @property
-    def member(self) -> Membership:
-        """Family of each beat."""
-        return Membership(self.family, self.nearest, self.likeness)
+    def kept(self) -> Kept:
+        """The columns that are needed once instants and intervals are known."""
+        return Kept(self.segment, self.family, self.nearest, self.likeness, self.amplitude_mv, self.spread_ms)
 
     def keep(self, chosen: NDArray[np.bool_]) -> Found:
         """The chosen beats only; the columns are closed up in place, which spares a second table."""
@@ -39,6 +39,22 @@ class Found(NamedTuple):
         for column in self:
             column[: rows.size] = column[rows]
         return Found._make(column[: rows.size] for column in self)
+
+
+class Kept(NamedTuple):
+    """What stays of found beats beside their samples and intervals. Arrays of shape (n_beats,)."""
+
+    segment: NDArray[np.int16]
+    family: NDArray[np.int16]
+    nearest: NDArray[np.int16]
+    likeness: NDArray[np.float32]
+    amplitude_mv: NDArray[np.float32]
+    spread_ms: NDArray[np.float32]
+
+    @property
+    def member(self) -> Membership:
+        """Family of each beat."""
+        return Membership(self.family, self.nearest, self.likeness)
 
 
 class Growing:
@@ -73,7 +89,7 @@ def is_artefact(found: Found, timing: Timing) -> NDArray[np.bool_]:
 
 
 def beat_table(
-    found: Found,
+    found: Kept,
     sample: NDArray[np.int64],
     timing: Timing,
     labels: Labels,
@@ -125,15 +141,13 @@ def family_table(
 ) -> Families:
     """The table of families that analysis returns."""
     n_families = book.n_beats.size
-    order = np.argsort(beats.family, kind="stable")
-    edges = np.searchsorted(beats.family[order], np.arange(n_families + 1))
     rows = np.full((n_families, 5), np.nan)
     for row in range(n_families):
-        mine = order[edges[row] : edges[row + 1]]
+        mine = beats.family == row
         coupling = beats.coupling_ms[mine]
         coupling = coupling[~np.isnan(coupling)]
-        rows[row, :2] = mine.size, np.count_nonzero(beats.is_analysable[mine])
-        if mine.size:
+        rows[row, :2] = np.count_nonzero(mine), np.count_nonzero(beats.is_analysable & mine)
+        if rows[row, 0]:
             rows[row, 2] = np.median(beats.amplitude_mv[mine])
         if coupling.size:
             rows[row, 3:] = coupling.mean(), np.subtract(*np.percentile(coupling, [90, 10]))

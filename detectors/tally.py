@@ -5,6 +5,7 @@ Quarter hours, because every civil time zone is a whole number of them away from
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from typing import NamedTuple
 
 import numpy as np
@@ -13,6 +14,7 @@ from numpy.typing import NDArray
 from detectors.results import BEAT_CLASSES, Analysis
 
 QUARTER_US = 900_000_000
+SLAB_BEATS = 2**16
 NOT_WORN = ("lead_off", "missing")
 
 
@@ -56,17 +58,18 @@ def family_quarters(analysis: Analysis, segment_start_us: NDArray[np.int64]) -> 
 
     `segment_start_us` as for `quarter_hours`.
     """
-    good = analysis.beats.is_analysable
-    family, n_columns = analysis.beats.family[good], len(analysis.families.beat_count) + 1
-    quarter = _Clock(segment_start_us, analysis.fs_hz).quarter(
-        analysis.beats.segment[good], analysis.beats.sample[good]
-    )
-    quarters = np.unique(quarter)
-    cell = np.searchsorted(quarters, quarter) * n_columns + family + 1
-    count = np.bincount(cell, minlength=len(quarters) * n_columns)
+    beats, n_columns = analysis.beats, len(analysis.families.beat_count) + 1
+    clock = _Clock(segment_start_us, analysis.fs_hz)
+    quarters = np.unique(_spread(*_recorded(analysis, clock))[0])
+    count = np.zeros(len(quarters) * n_columns, dtype=np.int64)
+    for rows in _slabs(len(beats.sample)):
+        good = beats.is_analysable[rows]
+        quarter = clock.quarter(beats.segment[rows][good], beats.sample[rows][good])
+        cell = np.searchsorted(quarters, quarter) * n_columns + beats.family[rows][good] + 1
+        count += np.bincount(cell, minlength=len(count))
     held = np.flatnonzero(count)
     return FamilyQuarters(
-        quarters[held // n_columns] * QUARTER_US, (held % n_columns - 1).astype(np.int16), count[held].astype(np.int64)
+        quarters[held // n_columns] * QUARTER_US, (held % n_columns - 1).astype(np.int16), count[held]
     )
 
 
@@ -77,8 +80,7 @@ def quarter_hours(analysis: Analysis, segment_start_us: NDArray[np.int64]) -> Qu
     Beats and episodes belong to the quarter of their first sample; seconds are split where a quarter ends.
     """
     clock = _Clock(segment_start_us, analysis.fs_hz)
-    segments = np.arange(len(analysis.segment_samples))
-    recorded = clock.spans(segments, np.zeros_like(segments), np.asarray(analysis.segment_samples))
+    recorded = _recorded(analysis, clock)
     quarters = np.unique(_spread(*recorded)[0])
     book = _Book(quarters)
 
@@ -117,17 +119,29 @@ def quarter_hours(analysis: Analysis, segment_start_us: NDArray[np.int64]) -> Qu
     )
 
 
+def _recorded(analysis: Analysis, clock: _Clock) -> tuple[NDArray[np.int64], NDArray[np.int64]]:
+    """Begin and end of each segment."""
+    segments = np.arange(len(analysis.segment_samples))
+    return clock.spans(segments, np.zeros_like(segments), np.asarray(analysis.segment_samples))
+
+
+def _slabs(n_beats: int) -> Iterator[slice]:
+    """The beats so many at a time: columns of 64 bits for all of them would take more room than the beats."""
+    return (slice(begin, begin + SLAB_BEATS) for begin in range(0, n_beats, SLAB_BEATS))
+
+
 def _beat_counts(analysis: Analysis, clock: _Clock, book: _Book) -> dict[str, NDArray]:
-    beats = analysis.beats
-    quarter = clock.quarter(beats.segment, beats.sample)
-    counts: dict[str, NDArray] = {
-        f"{name.lower()}_beats": book.count(quarter[beats.is_analysable & (beats.beat_class == name)])
-        for name in BEAT_CLASSES
-    }
-    counts["all_beats"] = book.count(quarter[beats.is_analysable])
-    measured = rate_intervals(analysis)
-    counts["rr_sum_s"] = book.total(quarter[measured], beats.rr_before_ms[measured] / 1000.0)
-    counts["rr_count"] = book.count(quarter[measured])
+    beats, measured = analysis.beats, rate_intervals(analysis)
+    counts: dict[str, NDArray] = {f"{name.lower()}_beats": book.zeros() for name in BEAT_CLASSES}
+    counts |= {"all_beats": book.zeros(), "rr_sum_s": book.zeros().astype(np.float64), "rr_count": book.zeros()}
+    for rows in _slabs(len(beats.sample)):
+        quarter = book.row(clock.quarter(beats.segment[rows], beats.sample[rows]))
+        good, usable = beats.is_analysable[rows], measured[rows]
+        for name in BEAT_CLASSES:
+            counts[f"{name.lower()}_beats"] += book.count_rows(quarter[good & (beats.beat_class[rows] == name)])
+        counts["all_beats"] += book.count_rows(quarter[good])
+        np.add.at(counts["rr_sum_s"], quarter[usable], beats.rr_before_ms[rows][usable] / 1000.0)
+        counts["rr_count"] += book.count_rows(quarter[usable])
     return counts
 
 
@@ -137,7 +151,9 @@ def rate_intervals(analysis: Analysis) -> NDArray[np.bool_]:
     It counts when both of its beats are analysable and no bad window lies between them.
     """
     beats, quality = analysis.beats, analysis.quality
-    windows_before = np.searchsorted(_order(quality.segment, quality.first_sample), _order(beats.segment, beats.sample))
+    windows, windows_before = _order(quality.segment, quality.first_sample), np.empty(len(beats.sample), dtype=np.int32)
+    for rows in _slabs(len(beats.sample)):
+        windows_before[rows] = np.searchsorted(windows, _order(beats.segment[rows], beats.sample[rows]))
     usable = beats.is_analysable & np.isfinite(beats.rr_before_ms)
     usable[1:] &= beats.is_analysable[:-1] & (windows_before[1:] == windows_before[:-1])
     return usable
@@ -190,19 +206,25 @@ class _Book:
     def __init__(self, quarters: NDArray[np.int64]) -> None:
         self.quarters = quarters
 
+    def zeros(self) -> NDArray[np.int64]:
+        return np.zeros(len(self.quarters), dtype=np.int64)
+
     def count(self, quarter: NDArray[np.int64]) -> NDArray[np.int64]:
-        return np.bincount(self._row(quarter), minlength=len(self.quarters)).astype(np.int64)
+        return self.count_rows(self.row(quarter))
+
+    def count_rows(self, row: NDArray[np.intp]) -> NDArray[np.int64]:
+        return np.bincount(row, minlength=len(self.quarters)).astype(np.int64)
 
     def total(self, quarter: NDArray[np.int64], amount: NDArray) -> NDArray[np.float64]:
-        return np.bincount(self._row(quarter), weights=amount, minlength=len(self.quarters)).astype(np.float64)
+        return np.bincount(self.row(quarter), weights=amount, minlength=len(self.quarters)).astype(np.float64)
 
     def seconds(self, start_us: NDArray[np.int64], end_us: NDArray[np.int64]) -> NDArray[np.float64]:
         return self.total(*_spread(start_us, end_us)).round(6)
 
     def largest(self, quarter: NDArray[np.int64], value: NDArray) -> NDArray[np.float64]:
         best = np.full(len(self.quarters), np.nan)
-        np.fmax.at(best, self._row(quarter), value)
+        np.fmax.at(best, self.row(quarter), value)
         return best
 
-    def _row(self, quarter: NDArray[np.int64]) -> NDArray[np.intp]:
+    def row(self, quarter: NDArray[np.int64]) -> NDArray[np.intp]:
         return np.searchsorted(self.quarters, quarter)

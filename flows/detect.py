@@ -24,7 +24,7 @@ from flows.settings import Settings, result_settings
 from warehouse.parts import Part, SignalReader, frame_schema, write_part
 from warehouse.schema import LAKE
 
-BEATS_PER_PART = 100_000
+BEATS_PER_PART = 50_000
 _WRITERS = 2
 _ADDED_LATER = ("recording_id", "fingerprint")
 DERIVED_TABLES = (

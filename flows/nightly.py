@@ -108,11 +108,12 @@ def _bring_up_to_date(
     end: RunEnd,
     run_id: str,
 ) -> Outcome:
-    from flows import edits, publication, register, run_log
+    from flows import edits, memory, publication, register, run_log
     from flows.arrivals import ingest
     from warehouse import cache, layout
     from warehouse.ledger import Ledger
 
+    memory.give_back()
     people = register.load(folder, settings.programme.zone)
     cache.settle(folder / "lake", settings.lake.store)
     if copy := layout.migrate(folder / "lake"):
@@ -210,11 +211,12 @@ def analyse_one(item: Work, reporter: Reporter = SILENT) -> Analysed:
 
     Doing it twice writes the same files, so a worker that dies can simply be repeated.
     """
-    from flows import detect
+    from flows import detect, memory
     from warehouse.ledger import Ledger
     from warehouse.parts import read_part
 
     begun_s = time.monotonic()
+    memory.give_back()
     lake = item.folder / "lake"
     ledger = Ledger(lake)
     recording = read_part(lake, ledger.parts("recordings", item.recording_id)[0]).row(0, named=True)
@@ -225,6 +227,7 @@ def analyse_one(item: Work, reporter: Reporter = SILENT) -> Analysed:
         analysis = detect.analyse_landed(
             lake, recording, segments, signal, item.settings, lambda samples: advance(samples / per_hour)
         )
+    memory.give_back()
     name = detect.fingerprint_of(item.settings)
     loads = detect.land_analysis(lake, recording, segments, signal, analysis, name)
     loads[("fingerprints", name)] = [detect.fingerprint_part(lake, item.settings)]

@@ -311,6 +311,8 @@ class SignalReader:
             piece = block[offset : offset + b - at]
             samples[at - a : at - a + piece.size] = piece
             at += piece.size
+        if b == length:
+            self._decoded.clear()  # read to its end: what comes next lies elsewhere
         return samples
 
     def _block(self, segment: int, number: int) -> NDArray[np.int16]:

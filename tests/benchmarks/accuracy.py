@@ -16,7 +16,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from detectors import chunks, classify
-from detectors.analyse import CHUNK_S, Gathered, Options, conclude, gather, timing_of
+from detectors.analyse import CHUNK_S, Gathered, Options, conclude, gather
 from detectors.annotations import beat_annotations, beat_classes
 from detectors.results import Segment
 from detectors.scoring import CLASSES, compare_beats, gross, match_beats, match_window, statistics
@@ -48,7 +48,7 @@ def read(header: Path) -> Record:
         float(opened.rate), opened.mv_per_count, opened.count_at_zero_mv, opened.rails, opened.missing_count
     )
     gathered = gather([Segment(opened.n_samples, opened.read)], scale, CHUNK_S, lambda n_samples: None)
-    sample, timing = timing_of(gathered.found, gathered.bad, gathered.lengths, gathered.fs_hz)
+    sample, timing = gathered.sample, gathered.timing
     n_families = gathered.book.n_beats.size
     habits = classify.family_habits(timing, gathered.found.member, n_families)
     shapes = classify.compare_shapes(habits, gathered.book.shape_mv)
