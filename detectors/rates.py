@@ -21,6 +21,7 @@ Floats = NDArray[np.float64]
 MAX_STEPS = 100
 TOLERANCE = 1e-11  # change of every coefficient at which a fit has settled
 LOG_ALPHA = (-14.0, 6.0)  # where ln alpha is searched; below it counts are Poisson
+LARGEST_RHO = 0.8  # correlation of a day with the day before beyond which a series is a trend
 TWO_SIDED_95 = float(norm.ppf(0.975))
 
 
@@ -100,6 +101,26 @@ def clustered_covariance(fit: RateFit, counts: ArrayLike, design: ArrayLike, clu
     bread = np.linalg.inv(x.T @ (fit.fitted[:, None] * x))
     few = n_groups / (n_groups - 1) * (len(x) - 1) / (len(x) - x.shape[1])
     return np.asarray(few * bread @ scores.T @ scores @ bread)
+
+
+def serial_inflation(fit: RateFit, counts: ArrayLike, day: ArrayLike) -> float:
+    """By what to multiply variances of a fit whose counts, on days of number `day` (n,), resemble those a day before.
+
+    (1 + rho) / (1 - rho), the variance of a mean of an autoregressive series over that of an independent one (Zwiers and
+    von Storch, J Climate 1995;8:336). rho is the lag-one correlation of Pearson's residuals over days with a day before
+    them, lifted by what p coefficients take from n residuals ((n rho + p) / (n - p), common practice, no source), never
+    below 0 nor above LARGEST_RHO.
+    """
+    y, t = np.asarray(counts, dtype=float), np.asarray(day, dtype=float)
+    residual = (y - fit.fitted) / np.sqrt(fit.fitted)
+    n, p = len(y), len(fit.coefficients)
+    follows = np.diff(t) == 1
+    if not follows.any() or n <= p or not residual.any():
+        return 1.0
+    scale = (n - 1) / follows.sum() / (residual @ residual)
+    seen = scale * (residual[1:] * residual[:-1])[follows].sum()
+    rho = float(np.clip((n * seen + p) / (n - p), 0.0, LARGEST_RHO))
+    return (1 + rho) / (1 - rho)
 
 
 def _checked(counts: ArrayLike, design: ArrayLike, exposure: ArrayLike | None) -> tuple[Floats, Floats, Floats]:

@@ -8,8 +8,9 @@ from typing import Any
 import numpy as np
 import polars as pl
 from numpy.typing import NDArray
+from scipy.stats import t
 
-from detectors.rates import FitError, fit_quasi_poisson, series_design
+from detectors.rates import FitError, fit_quasi_poisson, serial_inflation, series_design
 from flows.change.measures import V_PER_H, MeasuredDays, measured_days
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
@@ -23,7 +24,8 @@ def series_fits(events: pl.DataFrame, cells: pl.DataFrame, periods: pl.DataFrame
     """Rows of `schema.PUBLISHED["series_fits"]`: quasi-Poisson interrupted time series on the days of both periods.
 
     The step is at the first day after the settling time of the therapy kind, so that wash-in and blanking are its lag;
-    the slope from there on is beside the trend before. A description: days are taken as independent.
+    the slope from there on is beside the trend before. Intervals are Student's on the variance of over-dispersed
+    days, inflated where days resemble the day before (`rates.serial_inflation`).
     """
     days = measured_days(V_PER_H, cells, len(events))
     keys = ["patient_code", "therapy_id"]
@@ -50,10 +52,13 @@ def _fit(days: MeasuredDays, start_day: int | None) -> dict[str, Any]:
         fit = fit_quasi_poisson(days.counts, design, days.exposure)
     except FitError:
         return {}
+    variance = np.diag(fit.covariance) * serial_inflation(fit, days.counts, days.local_day)
+    error = t.ppf(0.975, len(design) - len(names)) * np.sqrt(variance)
     named = {"dispersion": fit.dispersion}
     for column, name in (("step", "step_ratio"), ("slope", "slope_ratio_per_week")):
-        ratio, low, high = fit.ratio(names.index(column))
-        named |= {name: ratio, f"{name}_low": low, f"{name}_high": high}
+        at = names.index(column)
+        ends = np.exp(fit.coefficients[at] + error[at] * np.array([0.0, -1.0, 1.0]))
+        named |= dict(zip((name, f"{name}_low", f"{name}_high"), ends.tolist(), strict=True))
     return named
 
 

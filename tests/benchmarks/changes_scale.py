@@ -2,8 +2,8 @@
 
     python -m tests.benchmarks.changes_scale [PATIENTS ...]
 
-All patients are computed anew whenever one of them has new days: the spread between days is borrowed from the whole
-programme, so that one patient's days may move every interval.
+Printed beside the whole programme: the next publication after new days of one patient and of a tenth of the patients,
+who alone are computed while the programme lends the same (`flows.change.lending`).
 """
 
 from __future__ import annotations
@@ -17,6 +17,8 @@ import numpy as np
 import polars as pl
 
 from flows.change import trends
+from flows.change.lending import Kept, is_same, lent
+from flows.change.trends import PER_PATIENT
 from flows.settings import ChangeSettings, WearSettings
 
 EVENT = date(2026, 3, 20)
@@ -26,7 +28,7 @@ DAY_SD, PATIENT_SD = 0.6, 1.5  # of ln ventricular beats per hour
 
 
 def programme(patients: int) -> dict[str, Any]:
-    """Arguments of `trends.tables` for patients with one ablation each, some rich in ectopy and some without."""
+    """Fields of `trends.Inputs` for patients with one ablation each, some rich in ectopy and some without."""
     rng = np.random.default_rng(1)
     usual = 3 + PATIENT_SD * rng.standard_normal((patients, 1, 1))
     log_level = usual + DAY_SD * rng.standard_normal((patients, DAYS, 1))
@@ -54,14 +56,38 @@ def programme(patients: int) -> dict[str, Any]:
     return {"local_hours": hours, "wear_days": days, "periods": pl.concat(spans), "therapies": events}
 
 
+def next_day(made: trends.Inputs, patients: list[str]) -> trends.Inputs:
+    """The same programme in which these patients had a fifth more ectopy on every day."""
+    is_one = pl.col("patient_code").is_in(patients)
+    v_beats = pl.when(is_one).then(pl.col("v_beats") + pl.col("v_beats") // 5).otherwise("v_beats")
+    return made._replace(local_hours=made.local_hours.with_columns(v_beats=v_beats))
+
+
+def kept(standing: trends.Tables, patients: list[str]) -> Kept:
+    """What the next publication takes over of these patients."""
+    of_kept = pl.col("patient_code").is_in(patients)
+    return Kept(patients, standing.evidence, {name: standing.published[name].filter(of_kept) for name in PER_PATIENT})
+
+
 def main(sizes: list[int]) -> None:
-    """Print one line per number of patients."""
+    """Print three lines per number of patients."""
+    settings = ChangeSettings(), WearSettings()
     for patients in sizes:
-        made = programme(patients)
+        made = trends.Inputs(**programme(patients))
+        codes = made.therapies["patient_code"].to_list()
         began = time.process_time()
-        tables = trends.tables(trends.Inputs(**made), ChangeSettings(), WearSettings()).published
-        seconds = time.process_time() - began
-        print(f"{patients} patients, {tables['changes'].height} rows of changes: {seconds:.1f} CPU s", flush=True)
+        standing = trends.tables(made, *settings)
+        whole_s = time.process_time() - began
+        rows = standing.published["changes"].height
+        print(f"{patients} patients, {rows} rows of changes: {whole_s:.1f} CPU s", flush=True)
+        for new in (codes[:1], codes[: patients // 10]):
+            tonight = next_day(made, new)
+            began = time.process_time()
+            over = trends.tables(tonight, *settings, kept(standing, codes[len(new) :]))
+            part_s = time.process_time() - began
+            is_lent = "the same" if is_same(lent(standing.evidence), lent(over.evidence)) else "other spreads"
+            print(f"  new days of {len(new)}: {part_s:.1f} CPU s, {part_s / whole_s:.2f} of the whole; ", end="")
+            print(f"the programme lends {is_lent}", flush=True)
 
 
 if __name__ == "__main__":

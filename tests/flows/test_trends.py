@@ -378,6 +378,19 @@ def test_step_and_slope_after_the_event():
     assert too_short["step_ratio"] is None
 
 
+def test_a_series_in_waves_has_a_wider_step_than_one_that_alternates():
+    """Days that resemble the day before widen the interval of the step."""
+    wave = np.tile([1.5, 1.6, 1.4, 0.6, 0.5, 0.55], 5)[:28]
+    alternating = np.tile([1.5, 0.6, 1.6, 0.5, 1.4, 0.55], 5)[:28]
+    widths = []
+    for pattern in (wave, alternating):
+        levels = 400 * pattern
+        tables = programme(wearing("P1", list(levels[:14]), list(0.3 * levels[14:])), {"T1": "P1"})
+        fit = tables_of(tables)["series_fits"].row(0, named=True)
+        widths.append(np.log(fit["step_ratio_high"] / fit["step_ratio_low"]))
+    assert widths[0] > 1.1 * widths[1]
+
+
 def running(day: date, longest: int, fastest: float | None, *, clock_hours=range(24), run_at: int = 14) -> pl.DataFrame:
     """Hours of a day of P1 with one run in the hour `run_at`."""
     hours = hours_of("P1", day, 40, clock_hours=clock_hours)
