@@ -41,6 +41,26 @@ def test_the_interval_is_wilsons_on_overdispersed_hours(lake: Any) -> None:
     assert found["v_burden_high_pct"] == pytest.approx(100 * high, rel=2e-3)
 
 
+def test_hours_in_waves_widen_the_interval(lake: Any) -> None:
+    """Hours that resemble their neighbours have the serial dispersion of Newey and West where it is the larger."""
+    v_beats = np.array([400, 360, 320, 200, 80, 40, 20, 40, 80, 200, 320, 360])
+    all_beats = np.array([4000, 4400, 3600, 4000, 4400, 3600, 4000, 4400, 3600, 4000, 4400, 3600])
+    found = day(lake, v_beats, all_beats)
+    # Source: statsmodels, GLM with binomial counts: scatter of independent hours, and HAC with Bartlett weights over 3 lags
+    counts, one = np.column_stack([v_beats, all_beats - v_beats]), np.ones((12, 1))
+    model = GLM(counts, one, family=Binomial())
+    independent = model.fit()
+    waves = model.fit(cov_type="HAC", cov_kwds={"maxlags": 3, "use_correction": True})
+    dispersion = (waves.bse / independent.bse).item() ** 2
+    assert dispersion > 1.5 * independent.pearson_chi2 / independent.df_resid
+    alpha = 2 * stats.norm.sf(stats.t.isf(0.025, 11))
+    low, high = proportion_confint(
+        v_beats.sum() / dispersion, all_beats.sum() / dispersion, alpha=alpha, method="wilson"
+    )
+    assert found["v_burden_low_pct"] == pytest.approx(100 * low, rel=2e-3)
+    assert found["v_burden_high_pct"] == pytest.approx(100 * high, rel=2e-3)
+
+
 @pytest.mark.parametrize("hours", [3, 8, 23])
 def test_even_hours_leave_only_counting(lake: Any, hours: int) -> None:
     """Hours that scatter less than counting explains are taken as scattering that much."""
