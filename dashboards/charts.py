@@ -84,7 +84,7 @@ def _burden_days(wear_days: pl.DataFrame, *, valid: bool) -> dict[str, Any]:
     return {
         "type": "scatter",
         "mode": "markers",
-        "name": "burden, valid day" if valid else "burden, too few hours",
+        "name": "valid day" if valid else "too few hours",
         "x": _days(rows["local_day"]),
         "y": values(rows["v_burden_pct"], 3),
         "customdata": rows.select("v_beats", "all_beats", pl.col("analysable_h").round(1), _told_interval()).rows(),
@@ -108,7 +108,7 @@ def _day_intervals(wear_days: pl.DataFrame) -> dict[str, Any]:
     return {
         "type": "scatter",
         "mode": "lines",
-        "name": "95 % interval within the day",
+        "name": "95 % interval",
         "x": [place for day in _days(known["local_day"]) for place in (day, day, None)],
         "y": [place for low, high in ends for place in (low, high, None)],
         "line": {"color": "--v", "width": 1.2},
@@ -161,7 +161,7 @@ def _marks_trace(x: list[str], told: list[str]) -> dict[str, Any]:
     return {
         "type": "scatter",
         "mode": "markers",
-        "name": "marks of the patient",
+        "name": "patient's marks",
         "x": x,
         "y": [0] * len(x),
         "yaxis": "y4",
@@ -294,8 +294,9 @@ def coupling(coupled: pl.DataFrame) -> Figure:
 
 
 def coupling_height(coupled: pl.DataFrame) -> int:
-    """Height of the coupling figure: a row for each recording."""
-    return 96 + 84 * coupled["recording_id"].n_unique()
+    """Height of the coupling figure: a row for each recording, lower rows where there are many."""
+    rows = coupled["recording_id"].n_unique()
+    return 96 + rows * (84 if rows <= 8 else 44)
 
 
 def _coupling_marks(beat_class: str, rows: pl.DataFrame) -> dict[str, Any]:
@@ -361,7 +362,7 @@ def wearing(hours: pl.DataFrame, of_patient: pl.DataFrame, zone: str) -> Figure:
 def _hourly_beats(hours: pl.DataFrame, x: list[str], beat_class: str, offset: int, width: int) -> dict[str, Any]:
     return {
         "type": "bar",
-        "name": f"{beat_class} beats in the hour",
+        "name": f"{beat_class} beats",
         "x": x,
         "y": hours[f"{beat_class.lower()}_beats"].to_list(),
         "offset": offset,

@@ -12,17 +12,20 @@ from dashboards.tables import Tables
 PAGE = "cohort.html"
 TABLES = ("changes", "therapies", "cohort", "visits", "responders")
 MEASURE = "v_burden_pct"
+FEWEST_DRAWN = 3  # evaluable patients of a kind of therapy: a share of fewer says next to nothing
 
 
 def context(tables: Tables) -> dict[str, Any]:
     """Return what the cohort page shows."""
     cohort = tables.whole("cohort")
     kinds = cohort.filter(pl.col("measure") == MEASURE)
+    drawn = kinds.filter(pl.col("evaluable_patients") >= FEWEST_DRAWN)
     return {
         "sections": [_section(tables, kind) for kind in _by_size(kinds)],
         "visits": _visits(tables),
         "arms": tables.whole("responders").filter(pl.col("measure") == MEASURE).rows(named=True),
-        "responders": cohort_charts.responders(kinds) if kinds.height else None,
+        "responders": cohort_charts.responders(drawn) if drawn.height else None,
+        "fewest_drawn": FEWEST_DRAWN,
         "cohort": [
             row | {"measure_name": words.MEASURES.get(row["measure"], (row["measure"], "", 0))[0]}
             for row in cohort.rows(named=True)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from typing import Any
 
 import polars as pl
@@ -53,7 +54,7 @@ def changes_of_all(changes: pl.DataFrame) -> Figure:
     }
     points = [_verdict_points(changes, place, verdict, ratio_axis, place_axis) for verdict in words.VERDICTS]
     ratios = axis("", (0, 1), type="log", rangemode="normal", tickvals=list(RATIO_TICKS),
-                  ticktext=list(RATIO_TICKS.values()))  # fmt: skip
+                  ticktext=list(RATIO_TICKS.values()), range=_ratio_range(limits, changes["ratio"]))  # fmt: skip
     places = {**GREY, "showgrid": False, "fixedrange": True, "range": [0.4, changes.height + 0.6]}
     if is_named:
         codes = [as_text(code, longest=16) for code in changes["patient_code"]]
@@ -71,6 +72,12 @@ def changes_of_all(changes: pl.DataFrame) -> Figure:
     if is_named:
         drawn_on["margin"] = {**drawn_on["margin"], "l": 130}
     return Figure(data=[band, *(trace for trace in points if trace["x"])], layout=drawn_on)
+
+
+def _ratio_range(limits: pl.DataFrame, ratios: pl.Series) -> list[float]:
+    """Ends of the logarithmic axis: all that is drawn, and never less than from a fourth to four times."""
+    drawn = pl.concat([limits["low"], limits["high"], ratios.clip(SMALLEST, LARGEST)]).drop_nulls().to_list()
+    return [math.log10(min([0.25, *drawn])) - 0.06, math.log10(max([4.0, *drawn])) + 0.06]
 
 
 VERDICT_MARKS = {

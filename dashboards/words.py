@@ -34,8 +34,8 @@ MEASURES = {
     "v_burden_pct": ("Ventricular burden", "%", 2),
     "s_burden_pct": ("Supraventricular burden", "%", 2),
     "v_per_h": ("Ventricular beats per hour", "/h", 1),
-    "couplets_per_24h": ("Couplets per 24 h", "/24 h", 1),
-    "runs_per_24h": ("Runs per 24 h", "/24 h", 1),
+    "couplets_per_24h": ("Couplets per 24 h", "/24\N{NO-BREAK SPACE}h", 1),
+    "runs_per_24h": ("Runs per 24 h", "/24\N{NO-BREAK SPACE}h", 1),
     "longest_run_beats": ("Longest run of all days", "beats", 0),
     "fastest_run_bpm": ("Fastest run of all days", "/min", 0),
     "bigeminy_pct": ("Time in bigeminy", "%", 2),
@@ -131,7 +131,7 @@ def ratio_interval(low: float | None, high: float | None) -> str:
     if low is None and high is None:
         return MISSING
     if (low or 0) < 1 / WIDE and (high is None or high > WIDE):
-        return "more than tenfold either way"
+        return "over 10-fold either way"
     return f"{significant(low)} to {significant(high)}"
 
 
@@ -140,7 +140,7 @@ def chance(fall_pct: float | None, rise_pct: float | None) -> str:
     if fall_pct is None or rise_pct is None:
         return MISSING
     if fall_pct > 100 - 100 / WIDE and rise_pct > 100 * WIDE - 100:
-        return "more than tenfold either way"
+        return "over 10-fold either way"
     rise = f"+{number(1 + rise_pct / 100)}-fold" if rise_pct >= 1000 else f"{signed(rise_pct)}\N{NO-BREAK SPACE}%"
     return f"{signed(-fall_pct)} to {rise}"
 

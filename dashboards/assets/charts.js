@@ -19,9 +19,19 @@
     return typeof value === "string" && /^--[a-z0-9-]+$/.test(value) ? colour(value) : value;
   }
 
+  // Paper is read from nearer than a screen: every text of the figure gets small letters.
+  function small(value) {
+    if (Array.isArray(value)) return value.forEach(small);
+    if (!value || typeof value !== "object") return undefined;
+    if (value.font) value.font.size = 10;
+    if (value.nticks) value.nticks = 2;
+    return Object.values(value).forEach(small);
+  }
+
   function draw(plot, width) {
     const figure = JSON.parse(document.getElementById(plot.dataset.figure).textContent);
     const { data, layout } = coloured(figure);
+    if (width) small({ layout });
     layout.width = width || plot.clientWidth;
     layout.height = plot.clientHeight || layout.height;
     if (layout.width < 520) { layout.margin.l = 46; layout.margin.r = 6; layout.showlegend = false; }

@@ -55,7 +55,7 @@ def test_plotly_accepts_the_figures(tables, timeline):
 
 def test_days_with_too_few_hours_are_drawn_apart(timeline, tables):
     """Valid and short days are two traces, together every day with a burden."""
-    valid, short = (trace for trace in timeline["data"] if trace["name"].startswith("burden"))
+    valid, short = (trace for trace in timeline["data"] if trace["name"] in ("valid day", "too few hours"))
     days = tables.of_patient("wear_days", CODE)
     assert valid["x"] == [str(day) for day in days.filter("is_valid_day")["local_day"]]
     assert len(valid["x"]) + len(short["x"]) == days.height
@@ -64,7 +64,7 @@ def test_days_with_too_few_hours_are_drawn_apart(timeline, tables):
 def test_a_thin_bar_spans_the_interval_of_each_day(timeline, tables):
     """Each day with an interval has one bar from its lower to its upper end; a day without one has none."""
     days = tables.of_patient("wear_days", CODE)
-    (bars,) = [trace for trace in timeline["data"] if trace["name"] == "95 % interval within the day"]
+    (bars,) = [trace for trace in timeline["data"] if trace["name"] == "95 % interval"]
     drawn = list(zip(bars["x"][::3], bars["y"][::3], bars["y"][1::3], strict=True))
     assert drawn[0] == ("2026-03-02", *days.select(pl.col("v_burden_low_pct", "v_burden_high_pct").round(3)).row(0))
     assert len(drawn) == days.height
@@ -98,7 +98,7 @@ def test_coupling_is_drawn_where_it_is_known(tables):
 
 def test_marks_of_the_patient_stand_on_their_local_day(timeline):
     """Each local day with marks is one place on the day axis, with clock times and texts as published."""
-    (marked,) = [trace for trace in timeline["data"] if trace["name"] == "marks of the patient"]
+    (marked,) = [trace for trace in timeline["data"] if trace["name"] == "patient's marks"]
     # Source: tz database, the Azores are an hour behind UTC in winter: 00:30 UTC on 4 March is 23:30 on the 3rd
     assert dict(zip(marked["x"], marked["text"], strict=True)) == {
         "2026-03-02": "11:00 fluttering; 17:00",

@@ -86,6 +86,59 @@ def test_every_page_forbids_foreign_content(site):
         assert not [a for _, a in page.elements if any(name.startswith("on") for name in a)], address
 
 
+def test_no_page_has_a_style_of_its_own(site):
+    """Styles come from the one style sheet: pages allow no others but those that the chart library brings, text by text."""
+    for page in pages_of(site).values():
+        (policy,) = [a["content"] for tag, a in page.elements if a.get("http-equiv") == "Content-Security-Policy"]
+        has_charts = any(a.get("src", "").endswith("plotly.min.js") for _, a in page.elements)
+        assert "'unsafe-inline'" not in policy and ("'unsafe-hashes'" in policy) == has_charts
+        assert not [tag for tag, a in page.elements if tag == "style" or "style" in a]
+
+
+def test_a_patient_with_thirty_recordings_has_a_page(rows, publish, tmp_path):
+    """However many patches a patient wore, each has its place on one page of bounded size."""
+    code = "SKERRY-0001"
+    first = next(row for row in rows["recordings"] if row["patient_code"] == code)
+    for table in ("recordings", "families", "hours", "review_sheet", "strips"):
+        own = [row for row in rows[table] if row["recording_id"] == first["recording_id"]]
+        rows[table] += [row | {"recording_id": f"MANY-{number}"} for number in range(28) for row in own]
+    page = pages_of(build(publish(rows), tmp_path / "site"))["patients/SKERRY-0001.html"]
+    assert page.text.count("MANY-") >= 28
+    assert (tmp_path / "site" / "patients" / "SKERRY-0001.html").stat().st_size < 1_500_000
+
+
+def test_runs_that_do_not_count_are_told_apart(rows, publish, tmp_path):
+    """Episodes that over-reading left out are neither counted nor listed, but their number is told."""
+    recording = "CN0000-20260302"
+    for row in rows["episodes"]:
+        if row["recording_id"] == recording and row["episode_kind"] == "run":
+            row["is_counted"] = False
+    text = pages_of(build(publish(rows), tmp_path / "site"))[f"recordings/{recording}.html"].text
+    assert "1 episode found automatically does not count after over-reading" in " ".join(text.split())
+    assert "ventricular run" not in text.split("Episodes")[-1].split("What was not analysed")[0]
+
+
+def test_families_left_open_are_listed_with_what_they_leave_open(rows, publish, tmp_path):
+    """A family marked as mixed stands on the trail, and its recording tells the bounds of the burden."""
+    recording = "CN0000-20260302"
+    rows["undecided_families"].append(
+        {"recording_id": recording, "patient_code": "SKERRY-0001", "family": 2, "reader_codes": "R-07",
+         "undecided_v_beats": 420, "undecided_other_beats": 3}
+    )  # fmt: skip
+    rows["reviewed"].append(
+        {"recording_id": recording, "patient_code": "SKERRY-0001", "reader_codes": "R-07", "decided_beats": 0,
+         "unmet_decisions": 0, "rejected_episodes": 0, "automatic_v_beats": 10, "automatic_all_beats": 100,
+         "automatic_v_burden_pct": 10.0, "v_beats": 10, "all_beats": 100, "v_burden_pct": 10.0, "automatic_couplets": 5,
+         "couplets": 4, "automatic_runs": 2, "runs": 1, "undecided_families": 1, "v_burden_least_pct": 8.25,
+         "v_burden_most_pct": 11.5}
+    )  # fmt: skip
+    pages = pages_of(build(publish(rows), tmp_path / "site"))
+    assert "1 shape family left open" in pages["trail.html"].text
+    told = " ".join(pages[f"recordings/{recording}.html"].text.split())
+    assert "couplets 5, now 4; runs 2, now 1" in told
+    assert "the burden lies between 8.25 and 11.50 %" in told
+
+
 def test_every_page_and_download_carries_the_cautions(site):
     """Pages and CSV files say what the numbers may not be used for."""
     for address, page in pages_of(site).items():

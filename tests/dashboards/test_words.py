@@ -12,6 +12,7 @@ from hypothesis import strategies as st
 
 import dashboards
 from dashboards import addresses, words
+from flows.readers.codes import FINDINGS
 
 STYLE = (Path(dashboards.__file__).parent / "assets" / "site.css").read_text("utf-8")
 
@@ -86,3 +87,35 @@ def test_text_colours_have_contrast_aa(scheme, ground):
     for name in ("ink", "soft", "link", "v", "s", "f", "q", "n", "fell", "rose", "even", "few", "therapy", "rate"):
         # Source: WCAG 2.2, success criterion 1.4.3 (level AA): at least 4.5 to 1
         assert contrast(colours[name], colours[ground]) >= 4.5, name
+
+
+def test_every_finding_of_a_file_is_told_in_a_sentence():
+    """The pages have a sentence for each code that a reader can attach to a recording, and no other."""
+    assert set(words.FINDINGS) == set(FINDINGS)
+
+
+def test_a_share_that_is_not_zero_is_not_shown_as_zero():
+    """Shares below the last digit shown are told as such; none at all stays 0."""
+    assert (words.share(0.003), words.share(0.01), words.share(0), words.share(None)) == ("< 0.01", "0.01", "0.00", "–")
+
+
+def test_intervals_that_say_nothing_are_told_in_words():
+    """From ten times less to ten times more is told so; what says more keeps its figures."""
+    assert words.ratio_interval(0.0025, 23) == words.chance(98, 4253) == "over 10-fold either way"
+    assert words.ratio_interval(0.05, None) == "over 10-fold either way"
+    assert words.ratio_interval(0.41, 0.53) == "0.41 to 0.53"
+    assert words.ratio_interval(None, None) == words.chance(None, 40) == "–"
+    assert words.chance(61, 155) == "\N{MINUS SIGN}61 to +155\N{NO-BREAK SPACE}%"
+    assert words.chance(80, 1400) == "\N{MINUS SIGN}80 to +15-fold"
+
+
+def test_days_within_sentences_are_written_out():
+    """A day of a reason is told as elsewhere on the pages; what only looks like one stays."""
+    assert words.dated("since 2026-03-02; no day: 2026-13-40") == (
+        "since 2\N{NO-BREAK SPACE}Mar\N{NO-BREAK SPACE}2026; no day: 2026-13-40"
+    )
+
+
+def test_ages_are_told_in_hours_then_days():
+    """Up to two days in hours, from then on in days."""
+    assert [words.age(hours) for hours in (3.24, 26, 72, None)] == ["3.2 h", "26 h", "3 days", "–"]
