@@ -1,6 +1,7 @@
 """When runs of a folder are due: what `burdenline schedule` promised, so that `burdenline status` can tell that one was missed.
 
-The promise stays when the host goes down or the process is killed; it ends when a person stops the schedule.
+The promise outlives the process that made it, for a schedule that did not come back after its host did is what must be told.
+Whoever gives a schedule up removes `lake/schedule.json`.
 """
 
 from __future__ import annotations
@@ -35,11 +36,6 @@ def promised(folder: Path) -> Due | None:
         return Due(**json.loads(_path(folder).read_text(encoding="utf-8")))
     except (FileNotFoundError, ValueError, TypeError):
         return None
-
-
-def end_promise(folder: Path) -> None:
-    """Forget it."""
-    _path(folder).unlink(missing_ok=True)
 
 
 def _path(folder: Path) -> Path:

@@ -10,6 +10,7 @@ import asyncio
 import os
 from collections import deque
 from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from datetime import UTC, datetime, timedelta
 from itertools import pairwise
 from pathlib import Path
@@ -27,9 +28,11 @@ from prefect.client.schemas.objects import StateType
 from prefect.futures import PrefectFuture
 from prefect.runtime import flow_run
 from prefect.schedules import Cron, Schedule
+from prefect.settings import PREFECT_API_URL, temporary_settings
 from prefect.states import State
 
 from flows import due, nightly, settings
+from flows.local_server import local_server
 from flows.lock import FolderBusy, schedule_lock
 from flows.nightly import Analysed, Work
 from flows.notify import notify
@@ -163,7 +166,7 @@ def _leave_artifacts(programme: Path, outcome: dict[str, Any]) -> None:
 
 
 def serve_nightly(folder: Path, cron: str, zone: str = "") -> None:
-    """Serve the nightly flow on this host until stopped; needs no server to be installed.
+    """Serve the nightly flow on this host until stopped, with a Prefect server of its own where none is named.
 
     Raises CronError for cron fields that cannot be read, SettingsError for a folder that is no programme or a zone that
     is not known, FolderBusy for a folder that is scheduled already.
@@ -174,13 +177,22 @@ def serve_nightly(folder: Path, cron: str, zone: str = "") -> None:
     schedule = nightly_schedule(cron, zone or programme.zone)
     with schedule_lock(folder):
         due.promise(folder, cron, zone or programme.zone, longest_gap_h(cron, zone or programme.zone))
-        nightly_flow.serve(
-            name=f"{folder.resolve().name} nightly",
-            parameters={"folder": str(folder.resolve())},
-            schedule=schedule,
-            limit=1,
-        )
-        due.end_promise(folder)  # a person stopped it; a process that is ended otherwise does not come here
+        with _server(folder):
+            nightly_flow.serve(
+                name=f"{folder.resolve().name} nightly",
+                parameters={"folder": str(folder.resolve())},
+                schedule=schedule,
+                limit=1,
+            )
+
+
+@contextmanager
+def _server(folder: Path) -> Iterator[None]:
+    if PREFECT_API_URL.value():
+        yield
+        return
+    with local_server(folder / "logs" / "prefect-server.log") as api, temporary_settings({PREFECT_API_URL: api}):
+        yield
 
 
 def nightly_schedule(cron: str, zone: str) -> Schedule:

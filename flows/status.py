@@ -201,7 +201,7 @@ def _missed(schedule: dict[str, Any] | None, age_h: float | None) -> Iterator[st
     if without_run_h > schedule["longest_gap_h"] + LATE_H:
         yield (
             f"a run of the schedule {schedule['cron']} ({schedule['zone']}) was missed: none has ended for "
-            f"{without_run_h:g} h; is `burdenline schedule` still running?"
+            f"{without_run_h:g} h; start `burdenline schedule` again, or remove lake/schedule.json where it was given up"
         )
 
 
@@ -211,7 +211,7 @@ def status_text(found: dict[str, Any]) -> str:
     lines += [_disk_text(found), _queue_text(found["queue"])]
     if schedule := found["schedule"]:
         lines.append(
-            f"schedule: {schedule['cron']} ({schedule['zone']}), {schedule['longest_gap_h']:g} h at most between runs"
+            f"schedule: {schedule['cron']} ({schedule['zone']}), {schedule['longest_gap_h']:.3g} h at most between runs"
         )
     if not found["published"]:
         return "\n".join([*lines, "nothing published yet"])

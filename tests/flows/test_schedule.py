@@ -2,6 +2,11 @@
 
 import contextlib
 import json
+import os
+import signal
+import subprocess
+import sys
+import time
 from datetime import datetime
 from pathlib import Path
 
@@ -14,6 +19,7 @@ from flows.edf_write import EdfHeader, Piece, write_edf
 from flows.lock import FolderBusy
 
 ROOT = Path(__file__).parents[2]
+LONGEST_WAIT_S = 420
 
 pytestmark = pytest.mark.filterwarnings("ignore")  # Prefect's own warnings are not ours to mend
 
@@ -127,22 +133,19 @@ def test_a_dask_scheduler_gets_the_recordings_without_tasks(monkeypatch):
     assert [each["of"] for each in schedule.analyse_as_tasks(work, SILENT)] == ["SRL-1_20260301", "SRL-2_20260301"]
 
 
-@pytest.mark.parametrize("ends_by_itself", [True, False])
-def test_a_schedule_promises_runs_until_a_person_stops_it(coast, monkeypatch, ends_by_itself):
-    """While it serves, the promise stands and no second schedule begins; one whose process is ended still owes runs."""
+def test_a_schedule_promises_runs(coast, monkeypatch):
+    """The promise stands while it serves, when no second schedule may begin, and after it ended, when runs are still owed."""
     from flows import due, schedule
 
     def serve(**how):
         assert due.promised(coast).longest_gap_h == 25.0, "the night on which the clocks go back"
         with pytest.raises(FolderBusy, match="scheduled already"):
             schedule.serve_nightly(coast, "0 4 * * *")
-        if not ends_by_itself:
-            raise SystemExit(0)
 
+    monkeypatch.setattr(schedule, "local_server", lambda log: contextlib.nullcontext("http://127.0.0.1:9/api"))
     monkeypatch.setattr(schedule.nightly_flow, "serve", serve)
-    with contextlib.suppress(SystemExit):
-        schedule.serve_nightly(coast, "0 3 * * *", "Europe/Lisbon")
-    assert (due.promised(coast) is None) == ends_by_itself
+    schedule.serve_nightly(coast, "0 3 * * *", "Europe/Lisbon")
+    assert due.promised(coast).cron == "0 3 * * *"
 
 
 @pytest.mark.parametrize(
@@ -161,3 +164,39 @@ def test_a_day_that_never_comes_is_one_sentence(coast, capsys):
     assert main(["schedule", str(coast), "--cron", "0 0 30 2 *"]) == 1
     assert "names a day that never comes" in capsys.readouterr().err
     assert not (coast / "lake" / "schedule.json").exists()
+
+
+def test_a_served_schedule_runs_and_ends_with_its_server(coast, tmp_path):
+    """`burdenline schedule` with no server anywhere runs the job at its time; ended, it ends its server as well."""
+    environment = {name: value for name, value in os.environ.items() if not name.startswith("PREFECT_")}
+    command = [sys.executable, "-m", "flows.cli", "schedule", str(coast), "--cron", "* * * * *"]
+    with (tmp_path / "words").open("wb") as words:
+        served = subprocess.Popen(
+            command,
+            cwd=ROOT,
+            env=environment | {"PREFECT_HOME": str(tmp_path / "prefect")},
+            stdout=words,
+            stderr=words,
+            start_new_session=True,
+        )
+    try:
+        deadline_s = time.monotonic() + LONGEST_WAIT_S
+        while not (coast / "published" / "current").exists():
+            assert served.poll() is None and time.monotonic() < deadline_s, (tmp_path / "words").read_text()[-3000:]
+            time.sleep(1)
+        served.send_signal(signal.SIGTERM)
+        assert served.wait(LONGEST_WAIT_S) == 0
+        wait_until_no_process_is_left(served.pid)
+    finally:
+        with contextlib.suppress(ProcessLookupError):
+            os.killpg(served.pid, signal.SIGKILL)
+
+
+def wait_until_no_process_is_left(group):
+    """A run that had begun ends first; then there must be neither run nor server."""
+    deadline_s = time.monotonic() + LONGEST_WAIT_S
+    with contextlib.suppress(ProcessLookupError):
+        while time.monotonic() < deadline_s:
+            os.killpg(group, 0)
+            time.sleep(1)
+        pytest.fail("a process of the schedule is left")
