@@ -5,6 +5,7 @@ Nothing is published when a check returns a row; the publication of the day befo
 
 from __future__ import annotations
 
+import hashlib
 import tempfile
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
@@ -84,6 +85,7 @@ def built(
             fingerprint=fingerprint,
             workdir=Path(workdir),
             standing=standing,
+            program=_program(settings),
         ) as build,
     ):
         build.run_models("decided")
@@ -98,6 +100,17 @@ def built(
         for name, frame in _trial_tables(people, measured, settings).items():
             build.add(name, frame)
         yield build
+
+
+def _program(settings: Settings) -> str:
+    """What rows kept per patient follow from beside parts, register and models: settings, libraries, our own source."""
+    digest = hashlib.sha256(repr((settings.change, settings.wear, settings.trial)).encode())
+    for library in ("numpy", "scipy", "polars"):
+        digest.update(version(library).encode())
+    for room in ("detectors", "flows"):
+        for path in sorted((Path(__file__).parents[1] / room).rglob("*.py")):
+            digest.update(path.read_bytes())
+    return digest.hexdigest()
 
 
 def _check(build: TrendBuild) -> None:

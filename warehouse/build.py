@@ -9,12 +9,16 @@ named after the table they make; the order in which they run is `MODELS`, and a 
 - `reviewed.*`: quarter hours and episodes of over-read recordings, which the caller adds after the layer `decided`,
 - `programme.zone_offsets` and `programme.local_days`: the rules of the patients' time zones (see `warehouse.zones`).
 
-With a standing edition only the quarter hours of patients with changes are read (see `warehouse.kept`).
+With a standing edition only the parts of patients with changes are read (see `warehouse.kept`). A table of
+`schema.OF_PATIENT` is then two: `anew.<table>` of these patients, `kept.<table>` of all others. Models that follow
+patient by patient read `anew`, models about the whole programme read the table itself, which is both.
 """
 
 from __future__ import annotations
 
 from collections.abc import Iterable, Iterator, Mapping
+from datetime import datetime
+from functools import cached_property
 from importlib import resources
 from pathlib import Path
 from typing import NamedTuple, Self
@@ -24,9 +28,18 @@ import polars as pl
 
 from warehouse import schema
 from warehouse.database import open_database
-from warehouse.kept import TAKEN, TALLIES, grounds, kept_patients, offer, with_kept_rows
+from warehouse.kept import (
+    OF_RECORDING,
+    Grounds,
+    common_grounds,
+    grounds_of,
+    offer,
+    patient_grounds,
+    read_handed,
+)
 from warehouse.parts import Part, checked_frame, polars_type, scan_parts
-from warehouse.published import Published
+from warehouse.published import DATABASE, Published
+from warehouse.slices import slice_count, slice_of
 from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets, zone_rules
 
 MODELS: dict[str, tuple[str, ...]] = {
@@ -61,7 +74,7 @@ REVIEWED: dict[str, dict[str, str]] = {
     "episodes": {name: schema.COLUMNS[name].type for name in (*schema.LAKE["episodes"].columns, "is_counted")},
 }
 
-_NOT_FOR_MODELS = ("signal", "pieces", "inputs")
+_NOT_FOR_MODELS = ("signal", "pieces", "delivered_marks", "inputs")
 
 REGISTER: dict[str, dict[str, str]] = {
     "patients": {"patient_code": "VARCHAR", "zone": "VARCHAR"},
@@ -117,7 +130,8 @@ class TrendBuild:
 
     `register` has the frames of REGISTER and `settings` the values of SETTINGS (further ones are ignored).
     Of `parts` those without a fingerprint and those of `fingerprint` are used. Rows of patients without changes are
-    taken over from `standing`, an edition whose checks were asked; the tables are the same without it.
+    taken over from `standing`, an edition whose checks were asked; the tables are the same without it. `program` says
+    what else rows of `schema.OF_PATIENT` follow from that the caller adds: another text builds every patient anew.
     """
 
     def __init__(
@@ -130,14 +144,18 @@ class TrendBuild:
         fingerprint: str,
         workdir: Path,
         standing: Published | None = None,
+        program: str = "",
     ) -> None:
         self.lake = lake
         self.parts = [p for p in parts if p.table == "fingerprints" or p.fingerprint in ("", fingerprint)]
         self.fingerprint = fingerprint
         self._register = register
         self._settings = settings
-        self._standing = standing
-        self.grounds: dict[str, str] = {}
+        self._program = program
+        self.standing = standing
+        self.kept: frozenset[str] = frozenset()
+        self.handed_on: dict[str, pl.DataFrame] = {}
+        self.slices = slice_count(register["patients"].height)
         self._database = workdir / "build.duckdb"
 
     def __enter__(self) -> Self:
@@ -146,15 +164,16 @@ class TrendBuild:
         self.connection = open_database(str(self._database))
         # One thread: sums of fractions come out the same to the last bit, and thousands of small files load faster.
         self.connection.execute("SET threads = 1")
-        for layer in ("lake", "reviewed", "register", "programme"):
+        for layer in ("lake", "reviewed", "register", "programme", "anew", "kept"):
             self.connection.execute(f"CREATE SCHEMA {layer}")
         for name, types in REVIEWED.items():
             self._create(f"reviewed.{name}", types)
         self._load_register()
         self._load_settings()
+        self._open_standing()
         self._load_lake()
         self._keep_patients()
-        self._load_tallies()
+        self._load_recordings()
         self._load_calendar()
         self.add("parts", parts_frame(self.parts))
         self.add("data_dictionary", dictionary_frame())
@@ -180,62 +199,84 @@ class TrendBuild:
         values = {name: self._settings[name] for name in SETTINGS} | {"fingerprint": self.fingerprint}
         self._insert("programme.settings", {**SETTINGS, "fingerprint": "VARCHAR"}, pl.DataFrame([values]))
 
+    def _open_standing(self) -> None:
+        """Attach the database of the standing edition as `standing` where rows may be taken over from it."""
+        before = grounds_of(self.standing, common_grounds(self._common_lines()))
+        self._before = before
+        if self.standing is None or not before.patients:
+            self.standing = None
+            return
+        path = str(self.standing.edition / DATABASE).replace("'", "''")
+        self.connection.execute(f"ATTACH '{path}' AS standing (READ_ONLY)")
+
+    def _common_lines(self) -> Iterator[str]:
+        yield from (duckdb.__version__, self._program, self.fingerprint, f"{self.slices} slices")
+        yield from (f"{name} {self._settings[name]!r}" for name in SETTINGS)
+        yield from (f"{table.name} {column_definitions(table)}" for table in schema.PUBLISHED.values())
+        yield from (_model(layer, name) for layer in MODELS for name in MODELS[layer])
+
     def _load_lake(self) -> None:
         for name, table in schema.LAKE.items():
-            paths = [part.path for part in self.parts if part.table == name]
-            if name in (*_NOT_FOR_MODELS, *TALLIES):
+            if name in (*_NOT_FOR_MODELS, *OF_RECORDING):
                 continue
-            if name in READ_IN_PLACE and paths:
-                query = parts_query(table, [str(self.lake / path) for path in paths])
+            parts = [part for part in self.parts if part.table == name]
+            if name in READ_IN_PLACE and parts:
+                query = parts_query(table, [str(self.lake / part.path) for part in parts])
                 self.connection.execute(f"CREATE VIEW lake.{name} AS {query}")
             else:
-                self._insert_parts(table, paths)
+                self._insert_parts(table, parts)
 
     def _keep_patients(self) -> None:
-        years = self.connection.sql("SELECT min(start_utc), max(end_utc) FROM lake.recordings").fetchall()[0]
-        self.grounds = grounds(
+        own = patient_grounds(
             self.parts,
             self._register,
-            over_read=self.over_read,
-            zone_rules=zone_rules(self._register["patients"]["zone"], *years),
-            common=self._common_grounds(),
+            decisions=self._decisions(),
+            zone_rules=zone_rules(self._register["patients"]["zone"], *self._recorded_span),
         )
-        kept = kept_patients(self._standing, self.grounds)
-        offer(self.connection, self._standing, kept)
-        self._keeps_patients = bool(kept)
+        self.grounds = Grounds(self._before.common, own)
+        self.kept = frozenset(code for code, digest in own.items() if self._before.patients.get(code) == digest)
+        offer(self.connection, sorted(self.kept))
+
+    @cached_property
+    def _recorded_span(self) -> tuple[datetime, datetime]:
+        """First and last instant of all recordings, of withdrawn ones too where the standing edition had them."""
+        read_before = set(self.standing.part_paths("recordings")) if self.standing else set()
+        fresh = [part.path for part in self.parts if part.table == "recordings" and part.path not in read_before]
+        spans = scan_parts(self.lake, schema.LAKE["recordings"], fresh).select("start_utc", "end_utc").collect()
+        if self.standing:
+            spans = pl.concat([spans, self.standing.table("recordings").select("start_utc", "end_utc")])
+        # Without any recording a calendar around some day does: nothing is joined to it.
+        some_day = pl.lit(datetime(2000, 1, 1))  # noqa: DTZ001 naive UTC as everywhere here
+        first, last = pl.col("start_utc").min(), pl.col("end_utc").max()
+        return spans.select(first.fill_null(some_day), last.fill_null(some_day)).row(0)
+
+    def _decisions(self) -> list[tuple[str, str]]:
+        return self.connection.sql(
+            "SELECT recording_id, delivery_id FROM lake.reviews UNION SELECT recording_id, delivery_id FROM lake.decisions"
+        ).fetchall()
 
     @property
     def over_read(self) -> list[str]:
-        """Recordings on which an over-reader decided anything, in order."""
-        named = self.connection.sql(
-            "SELECT recording_id FROM lake.reviews UNION SELECT recording_id FROM lake.decisions ORDER BY recording_id"
-        )
-        return [recording_id for (recording_id,) in named.fetchall()]
+        """Recordings of patients built anew on which an over-reader decided anything, in order."""
+        return sorted({recording_id for recording_id, _ in self._decisions()} - self._kept_recordings)
 
-    def _common_grounds(self) -> Iterator[str]:
-        yield from (duckdb.__version__, self.fingerprint)
-        yield from (f"{name} {self._settings[name]!r}" for name in SETTINGS)
-        yield from (column_definitions(schema.PUBLISHED[table]) for table in TAKEN.values())
-        yield from (_model(layer, name) for layer in ("staging", "intermediate") for name in MODELS[layer])
+    @cached_property
+    def _kept_recordings(self) -> frozenset[str]:
+        wears = self.connection.sql("SELECT recording_id FROM kept.wears").fetchall()
+        return frozenset(recording_id for (recording_id,) in wears)
 
-    def _load_tallies(self) -> None:
-        kept = self.connection.sql(
-            "SELECT recording_id FROM register.wears SEMI JOIN kept.patients USING (patient_code)"
-        )
-        left_out = {recording_id for (recording_id,) in kept.fetchall()}
-        for name in TALLIES:
-            paths = [part.path for part in self.parts if part.table == name and part.key not in left_out]
-            self._insert_parts(schema.LAKE[name], paths)
+    def _load_recordings(self) -> None:
+        for name in OF_RECORDING:
+            parts = [part for part in self.parts if part.table == name and part.key not in self._kept_recordings]
+            self._insert_parts(schema.LAKE[name], parts)
 
-    def _insert_parts(self, table: schema.Table, paths: list[str]) -> None:
+    def _insert_parts(self, table: schema.Table, parts: Iterable[Part]) -> None:
         types = {column: schema.COLUMNS[column].type for column in table.columns}
-        self._insert(f"lake.{table.name}", types, scan_parts(self.lake, table, paths).collect())
+        rows = scan_parts(self.lake, table, [part.path for part in parts]).collect()
+        self._insert(f"lake.{table.name}", types, rows)
 
     def _load_calendar(self) -> None:
-        # Without any tallies a calendar around some day does: nothing is joined to it.
-        some_day = "TIMESTAMP '2000-01-01'"
-        query = f"SELECT coalesce(min(quarter_utc), {some_day}), coalesce(max(quarter_utc), {some_day})"
-        first_utc, last_utc = self.connection.sql(f"{query} FROM lake.quarter_hours").fetchall()[0]
+        first_utc, last_utc = self._recorded_span
         zones = sorted(set(self._register["patients"]["zone"]))
         self._insert("programme.zone_offsets", OFFSETS, zone_offsets(zones, first_utc, last_utc))
         self._insert("programme.local_days", DAYS, local_days(zones, first_utc, last_utc))
@@ -253,24 +294,52 @@ class TrendBuild:
         self.connection.execute(f"INSERT INTO {name} BY NAME FROM arriving")
         self.connection.unregister("arriving")
 
+    @cached_property
+    def slices_anew(self) -> frozenset[int]:
+        """Slices that hold, or held in the standing edition, a patient whose rows are not taken over."""
+        codes = set(self._register["patients"]["patient_code"])
+        if self.standing:
+            codes |= set(self.standing.table("patients")["patient_code"])
+        return frozenset(slice_of(code, self.slices) for code in codes - self.kept)
+
     def run_models(self, layer: str) -> None:
         """Make the tables of one layer of MODELS, in order; published tables get the dictionary's columns and types."""
         for name in MODELS[layer]:
             query = _model(layer, name)
-            if self._keeps_patients and name in TAKEN:
-                query = with_kept_rows(name, query)
             if name in schema.PUBLISHED:
                 query = typed_query(schema.PUBLISHED[name], query)
             try:
-                self.connection.execute(f"CREATE TABLE {name} AS {query}")
+                self.connection.execute(f"CREATE TABLE {self._made(name)} AS {query}")
             except duckdb.Error as problem:
                 raise BuildError(f"model {layer}/{name}.sql: {problem}") from problem
+            self._join_kept(name)
 
     def add(self, table: str, frame: pl.DataFrame) -> None:
-        """Add a published table that was computed outside SQL; its columns, types and key are checked."""
+        """Add a published table that was computed outside SQL; its columns, types and key are checked.
+
+        Of a table of `schema.OF_PATIENT` these are the rows of the patients built anew.
+        """
         described = schema.PUBLISHED[table]
         types = {name: schema.COLUMNS[name].type for name in described.columns}
-        self._insert(table, types, checked_frame(described, frame))
+        self._insert(self._made(table), types, checked_frame(described, frame))
+        self._join_kept(table)
+
+    @staticmethod
+    def _made(table: str) -> str:
+        return f"anew.{table}" if table in schema.OF_PATIENT else table
+
+    def _join_kept(self, table: str) -> None:
+        if table in schema.OF_PATIENT:
+            kept = f" UNION ALL FROM kept.{table}" if self.kept else ""
+            self.connection.execute(f"CREATE VIEW {table} AS FROM anew.{table}{kept}")
+
+    def hand_on(self, name: str, frame: pl.DataFrame) -> None:
+        """Keep rows beside the edition that are not published and that the next build needs."""
+        self.handed_on[name] = frame
+
+    def handed(self, name: str) -> pl.DataFrame | None:
+        """Rows that the build of the standing edition handed on; None where nothing may be taken over from it."""
+        return read_handed(self.standing, name) if self.standing else None
 
     def add_reviewed(self, quarter_hours: pl.DataFrame, episodes: pl.DataFrame) -> None:
         """Add what an over-read recording holds by the classes decided; columns as in REVIEWED."""
@@ -288,7 +357,10 @@ class TrendBuild:
         return pl.DataFrame(self.connection.sql(f"FROM {table}{order}"))
 
     def check(self) -> list[Failure]:
-        """Ask every claim; returns those that do not hold. Claims are the files of `checks/` and the unique keys."""
+        """Ask every claim; returns those that do not hold. Claims are the files of `checks/` and the unique keys.
+
+        Rows taken over were asked when they were made.
+        """
         claims = {
             file.name.removesuffix(".sql"): file.read_text(encoding="utf-8")
             for file in sorted(resources.files("warehouse").joinpath("checks").iterdir(), key=lambda file: file.name)
@@ -296,7 +368,8 @@ class TrendBuild:
         for name, table in schema.PUBLISHED.items():
             if name not in READ_IN_PLACE:
                 key = ", ".join(table.key)
-                claims[f"{name}_has_one_row_per_key"] = f"SELECT {key} FROM {name} GROUP BY {key} HAVING count(*) > 1"
+                query = f"SELECT {key} FROM {self._made(name)} GROUP BY {key} HAVING count(*) > 1"
+                claims[f"{name}_has_one_row_per_key"] = query
         failures = (Failure(claim, pl.DataFrame(self.connection.sql(query))) for claim, query in claims.items())
         return [failure for failure in failures if failure.rows.height]
 

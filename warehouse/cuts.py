@@ -24,10 +24,10 @@ from typing import Any
 
 from warehouse.build import TrendBuild
 from warehouse.cache import complete
-from warehouse.kept import GROUNDS
+from warehouse.edition_tables import write_tables
+from warehouse.kept import KEPT
 from warehouse.ledger import Damage
 from warehouse.parts import Part, file_sha256, write_whole
-from warehouse.publish import write_tables
 from warehouse.published import MANIFEST, Published
 
 CUT = "cut.json"
@@ -49,7 +49,7 @@ def freeze(published: Path, name: str, inputs: Sequence[Path], *, reason: str = 
     standing = Published(published)
     cut, staging = published / "cuts" / name, published / "cuts" / f".{name}.staging"
     shutil.rmtree(staging, ignore_errors=True)
-    shutil.copytree((published / "current").resolve(), staging, ignore=shutil.ignore_patterns(GROUNDS))
+    shutil.copytree((published / "current").resolve(), staging, ignore=shutil.ignore_patterns(KEPT))
     (staging / "inputs").mkdir()
     for path in inputs:
         shutil.copyfile(path, staging / "inputs" / path.name)

@@ -1,120 +1,143 @@
 """Patients whose rows a build takes over from the edition that stands, because all that the rows follow from is the same.
 
-A patient's rows of `TAKEN` follow from the quarter hours of the patient's recordings, the therapies, the rules of the
-zone, the settings and the models. `grounds` hashes these per patient; an edition keeps the hashes beside its tables.
-A build reads the quarter hours of patients with another hash only, and its tables are those of a build over all: sums
-of fractions are made in decimals, which do not depend on the order of the rows.
+A patient's rows of `schema.OF_PATIENT` follow from the landed parts of the patient's recordings, what over-readers
+decided on them, the therapies, the rules of the zone, and from what is common to all: settings, models, program. The
+grounds hash these; an edition keeps
+the hashes beside its tables. A build reads the parts of patients with another hash only, and its tables are those of a
+build over all: sums of fractions are made in decimals, which do not depend on the order of the rows.
 """
 
 from __future__ import annotations
 
 import hashlib
+import io
 import json
 from collections.abc import Iterable, Mapping
 from pathlib import Path
+from typing import Any, NamedTuple
 
 import duckdb
 import polars as pl
 
 from warehouse import schema
-from warehouse.parts import Part, file_sha256
-from warehouse.published import Published
+from warehouse.parts import Part, file_sha256, write_whole
+from warehouse.published import DATABASE, Published
 
-GROUNDS = "grounds.json"
+KEPT = "kept"
+"""Folder of an edition with what only the build after it reads: it is not published and no cut has it."""
 
-TALLIES = ("quarter_hours", "family_quarters")
-"""Lake tables of which a build reads the parts of changed patients only."""
+_GROUNDS = "grounds.json"
 
-TAKEN = {
-    "hours": "hours",
-    "recording_tallies": "recordings",
-    "local_hours": "local_hours",
-    "wear_days": "wear_days",
-    "periods": "periods",
-    "family_days": "family_days",
-}
-"""Models whose rows are taken over, with the published table that has them; every one has a patient_code."""
+OF_RECORDING = (
+    "recordings", "segments", "families", "episodes", "findings", "marks", "quarter_hours", "family_quarters",
+)  # fmt: skip
+"""Lake tables with a load per recording, of which a build reads the parts of changed patients only."""
 
 
-def grounds(
+class Grounds(NamedTuple):
+    """SHA-256 of all that rows follow from: what is common to all patients, and what is a patient's own, by code."""
+
+    common: str
+    patients: dict[str, str]
+
+
+def common_grounds(lines: Iterable[str]) -> str:
+    """SHA-256 of what counts for every patient."""
+    return hashlib.sha256("\n".join(lines).encode()).hexdigest()
+
+
+def patient_grounds(
     parts: Iterable[Part],
     register: Mapping[str, pl.DataFrame],
     *,
-    over_read: Iterable[str],
+    decisions: Iterable[tuple[str, str]],
     zone_rules: Mapping[str, str],
-    common: Iterable[str],
 ) -> dict[str, str]:
-    """SHA-256 of all that the rows of a patient follow from, by patient code.
+    """SHA-256 of what is a patient's own, by patient code.
 
-    `over_read` names recordings with decisions of over-readers: their patients are built anew every time. `zone_rules`
-    says the rules of each zone, and `common` what counts for every patient.
+    `decisions` names recordings that were over-read, each with a delivery that says something of it; `zone_rules` says
+    the rules of each zone.
     """
-    landed: set[str] = set()
-    quarters: dict[str, list[str]] = {}
+    of_load: dict[tuple[str, str], list[str]] = {}
     for part in parts:
-        if part.table == "recordings":
-            landed.add(part.key)
-        elif part.table in TALLIES:
-            quarters.setdefault(part.key, []).append(part.sha256)
+        of_load.setdefault((part.table, part.key), []).append(part.sha256)
+    loads: dict[str, list[tuple[str, str]]] = {}
+    for recording_id, delivery_id in sorted(decisions):
+        loads.setdefault(recording_id, []).extend([("decisions", delivery_id), ("reviews", delivery_id)])
     said = {code: [zone_rules[zone]] for code, zone in register["patients"].select("patient_code", "zone").iter_rows()}
     wears = register["wears"].select("patient_code", "recording_id").sort(pl.all())
-    anew = set(wears.filter(pl.col("recording_id").is_in(list(over_read)))["patient_code"])
     for code, recording_id in wears.iter_rows():
-        if recording_id in landed and code in said:
-            said[code] += [recording_id, *sorted(quarters.get(recording_id, []))]
+        if ("recordings", recording_id) in of_load and code in said:
+            own = [(table, recording_id) for table in (*OF_RECORDING, "beats", "quality_windows")]
+            said[code] += [f"{load} {sorted(of_load.get(load, []))}" for load in own + loads.get(recording_id, [])]
     for row in register["therapies"].sort("therapy_id").iter_rows(named=True):
         if row["patient_code"] in said:
             said[row["patient_code"]].append(repr(sorted(row.items())))
-    beginning = hashlib.sha256("\n".join(common).encode())
-    return {code: _continued(beginning, lines) for code, lines in said.items() if code not in anew}
+    return {code: common_grounds(lines) for code, lines in said.items()}
 
 
-def _continued(beginning: hashlib._Hash, lines: Iterable[str]) -> str:
-    digest = beginning.copy()
-    digest.update("\n".join(lines).encode())
-    return digest.hexdigest()
+def write_kept(edition: Path, grounds: Grounds, handed_on: Mapping[str, pl.DataFrame]) -> None:
+    """Keep beside the tables and the database of an edition what the build after it needs."""
+    for name, frame in handed_on.items():
+        content = io.BytesIO()
+        frame.write_parquet(content)
+        write_whole(edition / KEPT / f"{name}.parquet", content.getbuffer())
+    told = {**grounds._asdict(), "database": file_sha256(edition / DATABASE)}
+    write_whole(edition / KEPT / _GROUNDS, json.dumps(told, indent=1, sort_keys=True).encode())
 
 
-def kept_patients(standing: Published | None, now: Mapping[str, str]) -> list[str]:
-    """Patients whose rows in the standing edition follow from the same grounds; none when its tables are not whole."""
-    if standing is None or not (standing.edition / GROUNDS).is_file():
-        return []
-    before = json.loads((standing.edition / GROUNDS).read_text(encoding="utf-8"))
-    kept = [code for code, digest in now.items() if before.get(code) == digest]
-    return kept if kept and all(_is_whole(standing, table) for table in TAKEN.values()) else []
+def read_handed(edition: Published, name: str) -> pl.DataFrame | None:
+    """Rows that the build of an edition handed on, None when it did not."""
+    path = edition.edition / KEPT / f"{name}.parquet"
+    return pl.read_parquet(path, glob=False, hive_partitioning=False) if path.is_file() else None
 
 
-def _is_whole(standing: Published, table: str) -> bool:
-    path = table_file(standing, table)
-    return path.is_file() and file_sha256(path) == standing.manifest["tables"][table]["sha256"]
+def grounds_of(standing: Published | None, common: str) -> Grounds:
+    """Grounds of the standing edition; those of no patient when nothing may be taken over from it.
+
+    That is so after a change of what is common to all, and when a byte of its tables or its database was changed.
+    """
+    before = _read(standing) if standing else {}
+    same = standing and before.get("common") == common and is_whole(standing)
+    return Grounds(common, before["patients"]) if same else Grounds(common, {})
 
 
-def table_file(standing: Published, table: str) -> Path:
-    """Parquet file of a table of the edition."""
-    return standing.edition / "tables" / f"{table}.parquet"
+def _read(edition: Published) -> dict[str, Any]:
+    path = edition.edition / KEPT / _GROUNDS
+    return json.loads(path.read_text(encoding="utf-8")) if path.is_file() else {}
 
 
-def offer(connection: duckdb.DuckDBPyConnection, standing: Published | None, patients: list[str]) -> None:
-    """Make `kept.patients` and, for each model of TAKEN, a view `kept.<model>` of the rows to take over."""
-    connection.execute("CREATE SCHEMA kept")
+def is_whole(edition: Published) -> bool:
+    """Tell whether the tables and the database of an edition are the bytes that were written."""
+    hashes = {edition.edition / DATABASE: _read(edition).get("database")}
+    for name in edition.manifest["tables"]:
+        hashes |= {path: edition.described(path)["sha256"] for path in edition.files(name)}
+    return all(path.is_file() and file_sha256(path) == digest for path, digest in hashes.items())
+
+
+def offer(connection: duckdb.DuckDBPyConnection, patients: Iterable[str]) -> None:
+    """Make `kept.patients`, `kept.wears` (recording and patient) and a view `kept.<table>` of the rows to take over.
+
+    The database of the standing edition is attached as `standing`; without patients there is none.
+    """
     connection.execute("CREATE TABLE kept.patients (patient_code VARCHAR)")
-    if standing is None or not patients:
+    connection.execute("CREATE TABLE kept.wears (recording_id VARCHAR, patient_code VARCHAR)")
+    codes = list(patients)
+    if not codes:
         return
-    connection.execute("INSERT INTO kept.patients SELECT unnest(?)", [patients])
-    for model, table in TAKEN.items():
-        path = str(table_file(standing, table)).replace("'", "''")
-        rows = f"SELECT * FROM read_parquet('{path}', hive_partitioning = false)"
-        connection.execute(f"CREATE VIEW kept.{model} AS {rows} SEMI JOIN kept.patients USING (patient_code)")
+    connection.execute("INSERT INTO kept.patients SELECT unnest(?)", [codes])
+    connection.execute(
+        "INSERT INTO kept.wears SELECT recording_id, patient_code FROM standing.recordings SEMI JOIN kept.patients"
+        " USING (patient_code)"
+    )
+    for name in schema.OF_PATIENT:
+        columns = ", ".join(schema.PUBLISHED[name].columns)
+        query = f"SELECT {columns} FROM standing.{name} SEMI JOIN {kept_owners(name)}"
+        connection.execute(f"CREATE VIEW kept.{name} AS {query}")
 
 
-def with_kept_rows(model: str, query: str) -> str:
-    """The rows of a model's query for patients built anew, and the kept ones of all others."""
-    anew = f"SELECT * FROM (\n{query}\n) ANTI JOIN kept.patients USING (patient_code)"
-    columns = schema.PUBLISHED[model].columns if model in schema.PUBLISHED else RECORDING_TALLIES
-    names = ", ".join(columns)
-    return f"SELECT {names} FROM ({anew}) UNION ALL SELECT {names} FROM kept.{model}"
-
-
-RECORDING_TALLIES = (
-    "recording_id", "patient_code", "fingerprint", "worn_h", "analysable_h", "all_beats", "v_beats", "decided_beats",
-)  # fmt: skip
+def kept_owners(table: str) -> str:
+    """Table of those whose rows are taken over, and the column that a table of OF_PATIENT knows them by."""
+    if "patient_code" in schema.PUBLISHED[table].columns:
+        return "kept.patients USING (patient_code)"
+    return "kept.wears USING (recording_id)"

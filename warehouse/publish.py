@@ -24,19 +24,17 @@ from typing import Any
 import duckdb
 import polars as pl
 
-from warehouse import schema
-from warehouse.build import READ_IN_PLACE, TrendBuild, column_definitions, parts_query
-from warehouse.database import open_database
-from warehouse.kept import GROUNDS
-from warehouse.parts import file_sha256, write_whole
+from warehouse.build import TrendBuild
+from warehouse.edition_database import write_database
+from warehouse.edition_tables import write_tables
+from warehouse.kept import is_whole, write_kept
+from warehouse.parts import write_whole
 from warehouse.published import DATABASE, MANIFEST, Published
 
 DATABASE_FOR_OLDER_READERS = "burdenline_duckdb1.duckdb"
 """Another name of the database, whose storage version DuckDB 1.2 and later read."""
 
-_STORAGE_VERSION = "v1.2.0"
 _PIECES = (DATABASE, DATABASE_FOR_OLDER_READERS, "tables", "site", MANIFEST)
-_ROW_GROUP_ROWS = 8192  # small, so that one recording's rows are read without the others'
 
 
 class PublishError(RuntimeError):
@@ -60,7 +58,7 @@ def publish(
     before = _standing(published)
     try:
         shutil.rmtree(staging, ignore_errors=True)
-        (staging / "tables").mkdir(parents=True)
+        staging.mkdir(parents=True)
         edition = _write_edition(build, published, staging, site, stamp)
         if before != edition:
             _switch(published, edition)
@@ -81,29 +79,33 @@ def _write_edition(
     site: Callable[[Published, Path], None],
     stamp: Mapping[str, Any],
 ) -> Path:
-    """Write an edition into `staging` and give it its name; one that is there already is not written again."""
-    manifest = _manifest(build, published, stamp, write_tables(build, staging / "tables"))
-    content = json.dumps(manifest, indent=1, sort_keys=True).encode()
+    """Write an edition into `staging` and give it its name; one that is there and whole is not written again."""
+    content = _manifest(build, published, stamp, write_tables(build, staging))
     edition = staging.with_name(hashlib.sha256(content).hexdigest()[:16])
-    if not edition.exists():
-        _write_database(build, published, staging / DATABASE)
-        (staging / DATABASE_FOR_OLDER_READERS).symlink_to(DATABASE)
-        write_whole(staging / MANIFEST, content)
-        site(Published(published, edition=staging), staging / "site")
-        staging.rename(edition)
-    write_whole(edition / GROUNDS, json.dumps(build.grounds, indent=1, sort_keys=True).encode())
+    if edition.exists() and is_whole(Published(published, edition=edition)):
+        write_kept(edition, build.grounds, build.handed_on)
+        return edition
+    write_whole(staging / MANIFEST, content)
+    tables = Published(published, edition=staging)
+    write_database(tables, staging / DATABASE, build.standing)
+    (staging / DATABASE_FOR_OLDER_READERS).symlink_to(DATABASE)
+    write_kept(staging, build.grounds, build.handed_on)
+    site(tables, staging / "site")
+    _settle(staging)
+    if edition.exists():
+        edition.rename(staging.with_name(".damaged"))
+    staging.rename(edition)
     return edition
 
 
-def _manifest(
-    build: TrendBuild, published: Path, stamp: Mapping[str, Any], tables: dict[str, dict[str, Any]]
-) -> dict[str, Any]:
-    return {
+def _manifest(build: TrendBuild, published: Path, stamp: Mapping[str, Any], tables: dict[str, dict[str, Any]]) -> bytes:
+    described = {
         "lake": _lake_from(published, build.lake),
         "fingerprint": build.fingerprint,
         "stamp": dict(stamp),
         "tables": tables,
     }
+    return json.dumps(described, indent=1, sort_keys=True).encode()
 
 
 def _lake_from(published: Path, lake: Path) -> str:
@@ -111,57 +113,24 @@ def _lake_from(published: Path, lake: Path) -> str:
     return Path(os.path.relpath(lake, published)).as_posix()
 
 
-def write_tables(build: TrendBuild, folder: Path) -> dict[str, dict[str, Any]]:
-    """Write the tables of a build that are copied as Parquet files; returns rows and SHA-256 of each."""
-    described = {}
-    for name in schema.PUBLISHED:
-        if name not in READ_IN_PLACE:
-            frame = build.frame(name)
-            path = folder / f"{name}.parquet"
-            frame.rechunk().write_parquet(path, compression="zstd", row_group_size=_ROW_GROUP_ROWS)
-            described[name] = {"rows": frame.height, "sha256": file_sha256(path)}
-    return described
+def _settle(folder: Path) -> None:
+    """Bring every new file and folder to the disk, so that a link never leads to what a power cut takes away."""
+    for place, folders, files in os.walk(folder, topdown=False):
+        paths = [Path(place, name) for name in (*files, *folders)]
+        # A file of several names is one of the standing edition, and lies on the disk already.
+        for path in (
+            path for path in paths if not path.is_symlink() and not (path.is_file() and path.stat().st_nlink > 1)
+        ):
+            _sync(path)
+    _sync(folder)
 
 
-def _write_database(build: TrendBuild, published: Path, path: Path) -> None:
-    connection = open_database(":memory:")
-    connection.execute(f"SET file_search_path = {_quoted(str(published.resolve()))}")
-    connection.execute(f"ATTACH {_quoted(str(path))} AS edition (STORAGE_VERSION '{_STORAGE_VERSION}')")
-    connection.execute("USE edition")
-    connection.execute("BEGIN")
-    for name, table in schema.PUBLISHED.items():
-        paths = _paths_in_place(build, published, name)
-        if paths:
-            connection.execute(f"CREATE VIEW {name} AS {parts_query(table, paths)}")
-        else:
-            connection.execute(f"CREATE TABLE {name} ({column_definitions(table)})")
-            if name not in READ_IN_PLACE:
-                rows = _quoted(str(path.parent / "tables" / f"{name}.parquet"))
-                connection.execute(f"INSERT INTO {name} BY NAME FROM read_parquet({rows}, hive_partitioning = false)")
-        connection.execute(_comments(table, "VIEW" if paths else "TABLE"))
-    connection.execute("COMMIT")
-    connection.execute("USE memory")
-    connection.execute("DETACH edition")
-    connection.close()
-
-
-def _paths_in_place(build: TrendBuild, published: Path, name: str) -> list[str]:
-    """Paths, as seen from the published folder, of the parts of a table that is read in place; [] for all others."""
-    lake = _lake_from(published, build.lake)
-    return [f"{lake}/{part.path}" for part in build.parts if part.table == name and name in READ_IN_PLACE]
-
-
-def _comments(table: schema.Table, kind: str) -> str:
-    """Statements that say what the table and each of its columns is; `kind` is TABLE or VIEW."""
-    statements = [f"COMMENT ON {kind} {table.name} IS {_quoted(table.grain)}"]
-    for column in (schema.COLUMNS[name] for name in table.columns):
-        unit = f" [{column.unit}]" if column.unit else ""
-        statements.append(f"COMMENT ON COLUMN {table.name}.{column.name} IS {_quoted(column.meaning + unit)}")
-    return ";\n".join(statements)
-
-
-def _quoted(text: str) -> str:
-    return "'" + text.replace("'", "''") + "'"
+def _sync(path: Path) -> None:
+    descriptor = os.open(path, os.O_RDONLY)
+    try:
+        os.fsync(descriptor)
+    finally:
+        os.close(descriptor)
 
 
 def _standing(published: Path) -> Path | None:
@@ -170,9 +139,11 @@ def _standing(published: Path) -> Path | None:
 
 
 def _switch(published: Path, edition: Path) -> None:
+    _sync(edition.parent)
     for piece in _PIECES:
         _link(published / piece, Path("current") / piece)
     _link(published / "current", edition.relative_to(published))
+    _sync(published)
 
 
 def _link(link: Path, target: Path) -> None:

@@ -20,6 +20,7 @@ import polars as pl
 from warehouse import schema
 from warehouse.database import open_database
 from warehouse.parts import scan_parts
+from warehouse.slices import slice_of
 
 DATABASE = "burdenline.duckdb"
 MANIFEST = "manifest.json"
@@ -60,6 +61,11 @@ class Published:
         return json.loads((self._edition / MANIFEST).read_text(encoding="utf-8"))
 
     @property
+    def folder(self) -> Path:
+        """The programme's published folder, from where a view finds its parts."""
+        return self._folder
+
+    @property
     def edition(self) -> Path:
         """Folder of the edition."""
         return self._edition
@@ -71,7 +77,21 @@ class Published:
 
     def has(self, name: str) -> bool:
         """Whether the edition has a table of this name."""
-        return self._file(name).is_file() or name in self._read_in_place()
+        return name in self.manifest["tables"] or name in self._read_in_place()
+
+    def files(self, name: str) -> list[Path]:
+        """Parquet files of a table that is not read in place: one, or one per slice in their order."""
+        return [self._edition / path for path in self.manifest["tables"][name]["files"]]
+
+    def described(self, file: Path) -> dict[str, Any]:
+        """Rows and SHA-256 of a Parquet file of the edition, as they were written."""
+        path = file.relative_to(self._edition)
+        return self.manifest["tables"][path.parts[1].removesuffix(".parquet")]["files"][path.as_posix()]
+
+    def part_paths(self, name: str, key: str | None = None) -> list[str]:
+        """Paths within the lake of the parts of a lake table behind the edition, of one load where given."""
+        where = {"table_name": name} if key is None else {"table_name": name, "part_key": key}
+        return self.table("parts", where)["part_path"].to_list()
 
     @property
     def name(self) -> str:
@@ -85,8 +105,8 @@ class Published:
     def scan(self, name: str, where: Mapping[str, object] | None = None) -> pl.LazyFrame:
         """The same as `table`, not read yet: for tables that are larger than memory."""
         where = where or {}
-        if self._file(name).is_file():
-            rows = pl.scan_parquet(self._file(name), glob=False, hive_partitioning=False)
+        if name in self.manifest["tables"]:
+            rows = self._scan_files(name, where)
         elif name in self._read_in_place():
             rows = self._scan_parts(name, where)
         else:
@@ -94,15 +114,27 @@ class Published:
         conditions = [pl.col(column) == value for column, value in where.items()]
         return rows.filter(conditions) if conditions else rows
 
-    def _file(self, name: str) -> Path:
-        return self._edition / "tables" / f"{name}.parquet"
+    def _scan_files(self, name: str, where: Mapping[str, object]) -> pl.LazyFrame:
+        files = self.files(name)
+        if len(files) > 1 and (code := self._patient_of(where)):
+            files = [files[slice_of(code, len(files))]]
+        rows = pl.scan_parquet(files, glob=False, hive_partitioning=False)
+        return rows if len(files) == 1 else rows.sort(schema.PUBLISHED[name].key)
+
+    def _patient_of(self, where: Mapping[str, object]) -> str | None:
+        recording_id = where.get("recording_id")
+        return str(where["patient_code"]) if "patient_code" in where else self._patients.get(str(recording_id))
+
+    @cached_property
+    def _patients(self) -> dict[str, str]:
+        return dict(self.table("recordings").select("recording_id", "patient_code").iter_rows())
 
     def _read_in_place(self) -> set[str]:
         return {name for name in schema.PUBLISHED if name not in self.manifest["tables"]}
 
     def _scan_parts(self, name: str, where: Mapping[str, object]) -> pl.LazyFrame:
-        key = {"part_key": where["recording_id"]} if "recording_id" in where else {}
-        paths = self.table("parts", {"table_name": name, **key})["part_path"]
+        recording_id = where.get("recording_id")
+        paths = self.part_paths(name, None if recording_id is None else str(recording_id))
         return scan_parts(self.lake, schema.PUBLISHED[name], paths)
 
     def frame(self, sql: str) -> pl.DataFrame:

@@ -590,6 +590,15 @@ LAKE: dict[str, Table] = _tables(
     ),
 )  # fmt: skip
 
+OF_PATIENT = (
+    "recordings", "segments", "families", "patient_families", "family_days", "episodes", "findings", "marks", "hours",
+    "local_hours", "wear_days", "periods", "review_sheet", "undecided_families", "reviewed",
+)  # fmt: skip
+"""Published tables that follow patient by patient: a row belongs to one patient and follows from no other's data."""
+
+SLICED = ("hours", "local_hours", "family_days", "episodes")
+"""The large ones among them: a folder of Parquet files, each with the rows of a group of patients."""
+
 # Tables of a publication, in the order in which a reader of the database meets them.
 PUBLISHED: dict[str, Table] = _tables(
     Table("patients", "one row per patient of the register", ("patient_code",), ("patient_code", "zone")),

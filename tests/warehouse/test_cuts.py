@@ -54,7 +54,7 @@ def test_every_number_of_a_cut_comes_out_of_its_parts_again(programme: Any) -> N
     programme.ledger.parts = lambda: frozen
     with programme.built() as build:
         assert cuts.moved_tables(published, "lock", build) == []
-        build.connection.execute("UPDATE wear_days SET v_beats = v_beats + 1 WHERE local_day = '2026-05-01'")
+        build.connection.execute("UPDATE anew.wear_days SET v_beats = v_beats + 1 WHERE local_day = '2026-05-01'")
         assert cuts.moved_tables(published, "lock", build) == ["wear_days"]
     assert [path.name for path in (published / "cuts").iterdir()] == ["lock"]
 
@@ -79,14 +79,14 @@ def test_every_damage_to_a_cut_is_named(programme: Any) -> None:
     cut = cuts.freeze(published, "lock", programme.inputs)
     (cut / "inputs" / "programme.toml").write_text("[programme]\nzone = 'UTC'\n")
     (cut / "tables" / "wear_days.parquet").write_bytes(b"x")
-    (cut / "tables" / "hours.parquet").unlink()
+    (cut / "tables" / "hours.parquet" / "00.parquet").unlink()
     (cut / "note.txt").write_text("mine")
     part = programme.ledger.parts("quarter_hours")[0].path
     (programme.folder / "lake" / part).write_bytes(b"x")
     assert cuts.damages(published, "lock") == [
         Damage("inputs/programme.toml", "bytes changed after the cut"),
         Damage("note.txt", "was added after the cut"),
-        Damage("tables/hours.parquet", "missing"),
+        Damage("tables/hours.parquet/00.parquet", "missing"),
         Damage("tables/wear_days.parquet", "bytes changed after the cut"),
         Damage(part, "bytes changed after the cut"),
     ]

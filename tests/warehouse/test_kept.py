@@ -11,8 +11,10 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from warehouse import schema
 from warehouse.build import TrendBuild
-from warehouse.publish import publish, write_tables
+from warehouse.edition_tables import write_tables
+from warehouse.publish import publish
 from warehouse.published import Published
 
 CODES = ("P1", "P2", "P3")
@@ -21,12 +23,26 @@ CODES = ("P1", "P2", "P3")
 def _land(lake: Any, code: str, number: int, seed: int) -> None:
     """A recording of two days whose seconds are fractions that no binary number holds."""
     n = pl.int_range(pl.len()) * (seed + 1)
-    first = 1 + 2 * number
+    first = _first_day(code) + 2 * number
     lake.recording(
         f"{code}-{number}", code, f"2026-05-{first:02}T05:00", f"2026-05-{first + 2:02}T11:00",
         recorded_s=900.0, worn_s=900 - n % 7 / 10, analysable_s=899 - n % 11 / 10, rr_sum_s=880 + n % 13 / 10,
         v_beats=n % 17,
     )  # fmt: skip
+    begin = datetime.fromisoformat(f"2026-05-{first:02}T07:00")
+    run = {
+        "recording_id": f"{code}-{number}",
+        "fingerprint": "f1",
+        "episode_kind": "run",
+        "segment": 0,
+        "start_utc": begin,
+    }
+    found = {"first_sample": 9, "last_sample": 99, "beat_count": 60, "rate_bpm": 90.0 + seed, "duration_s": 40.0}
+    lake.land("episodes", f"{code}-{number}", [run | found], fingerprint="f1")
+
+
+def _first_day(code: str) -> int:
+    return 1 + 8 * CODES.index(code)
 
 
 def _land_again(lake: Any, code: str, seed: int) -> None:
@@ -47,7 +63,8 @@ def _give_to_another(lake: Any, code: str, seed: int) -> None:
 
 
 def _over_read(lake: Any, code: str, seed: int) -> None:
-    beat = {"recording_id": f"{code}-0", "segment": 0, "sample": 0, "beat_utc": datetime.fromisoformat("2026-05-01T06")}
+    instant = datetime.fromisoformat(f"2026-05-{_first_day(code):02}T06")
+    beat = {"recording_id": f"{code}-0", "segment": 0, "sample": 0, "beat_utc": instant}
     found = {"fingerprint": "f1", "beat_class": "V", "is_escape": False, "is_analysable": True}
     lake.land("beats", f"{code}-0", [beat | found], fingerprint="f1")
     said = {"delivery_id": f"D{seed}", "reader_code": "qa-1", "reviewed_utc": datetime.fromisoformat("2026-06-01T00")}
@@ -95,7 +112,7 @@ edits = st.lists(st.tuples(st.sampled_from(EDITS), st.sampled_from(CODES), st.in
 @settings(max_examples=8, deadline=None)
 @given(edits=edits)
 def test_a_build_over_a_standing_edition_has_the_tables_of_a_full_build(make_lake: type, edits: list[Any]) -> None:
-    """Whatever changes, edition after edition, every table has the bytes of a build that takes nothing over."""
+    """Whatever changes, edition after edition, every file has the bytes of a build that takes nothing over, and its rows."""
     with tempfile.TemporaryDirectory() as name:
         lake = _programme(make_lake, Path(name))
         standing = _publish(lake)
@@ -104,6 +121,9 @@ def test_a_build_over_a_standing_edition_has_the_tables_of_a_full_build(make_lak
             standing = _publish(lake, standing)
         with lake.built() as build:
             assert _tables(build, lake.folder / "full") == standing.manifest["tables"]
+        for name in (*schema.SLICED, "wear_days", "attention", "parts"):
+            rows = standing.frame(f"FROM {name}").sort(schema.PUBLISHED[name].key)
+            assert rows.equals(standing.table(name)), name
 
 
 @pytest.mark.parametrize("edit", EDITS)
@@ -128,7 +148,7 @@ def test_other_settings_build_every_patient_anew(make_lake: type, tmp_path: Path
         assert _kept(build) == set(CODES)
     with lake.built(standing=standing, min_analysable_h_per_day=3.0) as build:
         assert _kept(build) == set()
-    table = standing.edition / "tables" / "hours.parquet"
+    table = standing.files("hours")[0]
     table.write_bytes(table.read_bytes()[:-1] + b"?")
     with lake.built(standing=standing) as build:
         assert _kept(build) == set()

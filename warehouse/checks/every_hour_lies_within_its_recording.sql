@@ -5,7 +5,7 @@ SELECT
     max(hour_utc) AS last_hour_utc,
     any_value(start_utc) AS start_utc,
     any_value(end_utc) AS end_utc
-FROM hours
-INNER JOIN recordings USING (recording_id)
+FROM anew.hours AS hours
+INNER JOIN anew.recordings USING (recording_id)
 GROUP BY hours.recording_id
 HAVING min(hour_utc) < date_trunc('hour', any_value(start_utc)) OR max(hour_utc) > any_value(end_utc)

@@ -1,4 +1,4 @@
--- a returned row is a patient whose wear days and quarter hours do not hold the same beats; kept patients were asked before
+-- a returned row is a patient whose wear days and quarter hours do not hold the same beats
 WITH from_quarters AS (
     SELECT patient_code, sum(all_beats) AS quarter_beats, sum(v_beats) AS quarter_v_beats
     FROM patient_quarters
@@ -8,8 +8,7 @@ WITH from_quarters AS (
 
 from_days AS (
     SELECT patient_code, sum(all_beats) AS day_beats, sum(v_beats) AS day_v_beats
-    FROM wear_days
-    ANTI JOIN kept.patients USING (patient_code)
+    FROM anew.wear_days
     GROUP BY patient_code
 )
 

@@ -5,6 +5,7 @@
 WITH latest AS (
     SELECT recording_id, beat_utc AS decided_utc, reader_code, arg_max(decision, (reviewed_utc, delivery_id)) AS decision
     FROM lake.reviews
+    ANTI JOIN kept.wears USING (recording_id)
     GROUP BY recording_id, beat_utc, reader_code
 ),
 

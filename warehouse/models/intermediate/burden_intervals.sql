@@ -13,7 +13,7 @@ WITH hours AS (
         v_beats,
         all_beats,
         sum(v_beats) OVER day / sum(all_beats) OVER day AS share
-    FROM local_hours
+    FROM anew.local_hours
     WHERE all_beats > 0
     WINDOW day AS (PARTITION BY patient_code, local_day)
 ),

@@ -1,4 +1,4 @@
--- one row per therapy event and period, with its first and last local day; key therapy_id, period
+-- one row per therapy event of a patient built anew and period, with its first and last local day; key therapy_id, period
 -- Baseline ends the day before the event and begins after the settling time of the event before it; the after period
 -- ends the day before the next event. A span without days has NULL for both. Events of one day share their spans.
 WITH events AS (
@@ -8,6 +8,7 @@ WITH events AS (
         therapy_day,
         therapy_day + max(settling_days) OVER same_day AS settled_day
     FROM register.therapies
+    ANTI JOIN kept.patients USING (patient_code)
     WINDOW same_day AS (PARTITION BY patient_code, therapy_day)
 ),
 

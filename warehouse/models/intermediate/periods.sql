@@ -12,7 +12,7 @@ WITH days AS (
         sum(day.v_beats) AS v_beats,
         sum(day.s_beats) AS s_beats
     FROM period_spans AS span
-    INNER JOIN wear_days AS day
+    INNER JOIN anew.wear_days AS day
         ON day.patient_code = span.patient_code AND day.local_day BETWEEN span.first_day AND span.last_day
     GROUP BY ALL
 ),

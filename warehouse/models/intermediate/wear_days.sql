@@ -33,7 +33,7 @@ WITH days AS (
 
 covered AS (
     SELECT patient_code, local_day, count(*) AS clock_hours_covered
-    FROM local_hours
+    FROM anew.local_hours
     WHERE analysable_s >= 900
     GROUP BY patient_code, local_day
 )

@@ -1,9 +1,10 @@
 -- one row per patient and reason for a look that episodes, shape families and wears give; key patient_code, attention_code
 -- "Now" is the latest day with wear in the whole programme, so the list follows from the data and not from a clock.
 WITH placed AS (
-    SELECT wear.recording_id, wear.patient_code, rule.from_utc, rule.to_utc, rule.offset_s
-    FROM recording_wears AS wear
-    INNER JOIN programme.zone_offsets AS rule ON rule.zone = wear.patient_zone
+    SELECT recording_id, patient_code, rule.from_utc, rule.to_utc, rule.offset_s
+    FROM recordings
+    INNER JOIN patients USING (patient_code)
+    INNER JOIN programme.zone_offsets AS rule ON rule.zone = patients.zone
 ),
 
 sustained AS (
@@ -58,8 +59,8 @@ SELECT
     max(duration_s) AS weight,
     min(local_day) AS since_day,
     printf('ventricular run of %.0f s at %.0f/min, the longest of %d that reach %g s, on %s', max(duration_s),
-        arg_max(rate_bpm, duration_s), count(*), any_value(settings.attention_sustained_run_s),
-        arg_max(local_day, duration_s)::VARCHAR) AS attention_reason
+        arg_max(rate_bpm, row(duration_s, rate_bpm)), count(*), any_value(settings.attention_sustained_run_s),
+        arg_max(local_day, row(duration_s, rate_bpm, local_day))::VARCHAR) AS attention_reason
 FROM sustained, programme.settings AS settings
 GROUP BY patient_code
 UNION ALL
@@ -69,7 +70,8 @@ SELECT
     -min(mean_coupling_ms),
     min(local_day),
     printf('ventricular beats come %.0f ms after the beat before in a family of %d beats of the recording from %s; the line is %g ms',
-        min(mean_coupling_ms), arg_min(beat_count, mean_coupling_ms), arg_min(local_day, mean_coupling_ms)::VARCHAR,
+        min(mean_coupling_ms), arg_min(beat_count, row(mean_coupling_ms, recording_id, beat_count)),
+        arg_min(local_day, row(mean_coupling_ms, recording_id, beat_count))::VARCHAR,
         any_value(settings.attention_short_coupling_ms))
 FROM early, programme.settings AS settings
 GROUP BY patient_code

@@ -3,7 +3,7 @@
 -- the larger come first, too: a family that is ventricular after all would add that many beats.
 WITH counted AS (
     SELECT recording_id, family, sum(beat_count) AS beat_count
-    FROM family_days
+    FROM anew.family_days
     GROUP BY recording_id, family
 ),
 

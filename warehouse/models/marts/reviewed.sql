@@ -50,7 +50,7 @@ undecided AS (
         count(*) AS undecided_families,
         sum(undecided_v_beats) AS v_beats,
         sum(undecided_other_beats) AS other_beats
-    FROM undecided_families
+    FROM anew.undecided_families
     GROUP BY recording_id
 )
 
@@ -76,7 +76,7 @@ SELECT
     100 * (recordings.v_beats - undecided.v_beats) / nullif(all_beats, 0) AS v_burden_least_pct,
     100 * (recordings.v_beats + undecided.other_beats) / nullif(all_beats, 0) AS v_burden_most_pct
 FROM readers
-INNER JOIN recordings USING (recording_id)
+INNER JOIN anew.recordings AS recordings USING (recording_id)
 LEFT JOIN automatic USING (recording_id)
 LEFT JOIN counted USING (recording_id)
 LEFT JOIN decisions USING (recording_id)

@@ -24,7 +24,7 @@ SELECT
     count(*) FILTER (WHERE beat.beat_class = 'V') AS undecided_v_beats,
     count(*) FILTER (WHERE beat.beat_class <> 'V') AS undecided_other_beats
 FROM mixed
-INNER JOIN recordings USING (recording_id)
+INNER JOIN anew.recordings AS recordings USING (recording_id)
 INNER JOIN lake.beats AS beat
     ON beat.recording_id = mixed.recording_id AND beat.family = mixed.family AND beat.is_analysable
 ANTI JOIN decided_beats AS decided
