@@ -29,6 +29,7 @@ def main(words: Sequence[str] | None = None) -> int:
     """Run one verb; returns the exit code: 0 done, 1 failed, 2 wrong usage, 3 done with refusals."""
     asked = _parser().parse_args(words)
     try:
+        _refuse_newer(asked)
         return asked.verb.body(asked)
     except BrokenPipeError:
         # The reader of our output has gone away (for example `| head`); Python would complain once more at exit.
@@ -42,6 +43,14 @@ def main(words: Sequence[str] | None = None) -> int:
             raise
         print(f"burdenline: {sentence(problem)}", file=sys.stderr)
         return 1
+
+
+def _refuse_newer(asked: argparse.Namespace) -> None:
+    """Leave a folder alone that a newer version has written, whatever is asked of it."""
+    if "folder" in asked:
+        from warehouse.layout import refuse_newer
+
+        refuse_newer(asked.folder / "lake")
 
 
 def _parser() -> argparse.ArgumentParser:

@@ -87,7 +87,12 @@ def run(
     Raises SettingsError, RegisterError, FolderBusy, LedgerError or CheckFailed; the publication then stays as it was.
     """
     from flows import last_run, run_log
+    from warehouse import layout
 
+    if layout.is_older(folder):
+        with folder_lock(folder, wait_s):
+            copy = layout.migrate(folder)
+        reporter.say(f"folder of an older layout brought up to date; as it was: {copy}")
     settings = programme_settings.load(folder / "programme.toml")
     run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
     with folder_lock(folder, wait_s), last_run.noted(folder) as end, run_log.opened(folder, flow_run or run_id):
@@ -110,14 +115,12 @@ def _bring_up_to_date(
 ) -> Outcome:
     from flows import edits, memory, publication, register, run_log
     from flows.arrivals import ingest
-    from warehouse import cache, layout
+    from warehouse import cache
     from warehouse.ledger import Ledger
 
     memory.give_back()
     people = register.load(folder, settings.programme.zone)
     cache.settle(folder / "lake", settings.lake.store)
-    if copy := layout.migrate(folder / "lake"):
-        reporter.say(f"lake of an older layout brought up to date; as it was: {copy}")
     ledger = Ledger(folder / "lake")
     edits.note_edits(folder / "lake", settings, people, ledger, actor_code)
     arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)

