@@ -24,11 +24,12 @@ from typing import Any
 
 from warehouse.build import TrendBuild
 from warehouse.cache import complete
+from warehouse.edition_database import write_database
 from warehouse.edition_tables import write_tables
 from warehouse.kept import KEPT
 from warehouse.ledger import Damage
 from warehouse.parts import Part, file_sha256, write_whole
-from warehouse.published import MANIFEST, Published
+from warehouse.published import DATABASE, MANIFEST, Published
 
 CUT = "cut.json"
 _NAME = re.compile(r"[A-Za-z0-9][A-Za-z0-9._-]{0,60}")
@@ -49,7 +50,10 @@ def freeze(published: Path, name: str, inputs: Sequence[Path], *, reason: str = 
     standing = Published(published)
     cut, staging = published / "cuts" / name, published / "cuts" / f".{name}.staging"
     shutil.rmtree(staging, ignore_errors=True)
-    shutil.copytree((published / "current").resolve(), staging, ignore=shutil.ignore_patterns(KEPT))
+    shutil.copytree((published / "current").resolve(), staging, symlinks=True, ignore=shutil.ignore_patterns(KEPT))
+    # That of an edition has a history of the editions before; written from the tables alone it is the same bytes.
+    (staging / DATABASE).unlink()
+    write_database(Published(published, edition=staging), staging / DATABASE)
     (staging / "inputs").mkdir()
     for path in inputs:
         shutil.copyfile(path, staging / "inputs" / path.name)
@@ -74,15 +78,10 @@ def _description(standing: Published, staging: Path, name: str, reason: str) -> 
         "fingerprint": standing.manifest["fingerprint"],
         "lake": Path(os.path.relpath(standing.lake, staging)).as_posix(),
         "libraries": {library: version(library) for library in _LIBRARIES},
-        "files": {path: digest for path, digest in _hashes(staging).items() if not _differs_by_itself(path)},
+        "files": _hashes(staging),
         "parts": dict(parts.iter_rows()),
     }
     return json.dumps(described, indent=1, sort_keys=True).encode()
-
-
-def _differs_by_itself(path: str) -> bool:
-    """Database files carry an identity of their own; their tables are hashed as Parquet files instead."""
-    return path.endswith(".duckdb")
 
 
 def _hashes(folder: Path) -> dict[str, str]:
@@ -111,7 +110,7 @@ def kept_parts(published: Path) -> set[str]:
 def damages(published: Path, name: str) -> list[Damage]:
     """Every file of the cut and every part behind it that is missing, was changed, or was added; [] when whole."""
     cut, written = published / "cuts" / name, described(published, name)
-    found = {path: digest for path, digest in _hashes(cut).items() if path != CUT and not _differs_by_itself(path)}
+    found = {path: digest for path, digest in _hashes(cut).items() if path != CUT}
     lake = cut / written["lake"]
     complete(lake, written["parts"])
     parts = {path: file_sha256(lake / path) for path in written["parts"] if (lake / path).is_file()}

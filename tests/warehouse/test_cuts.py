@@ -73,6 +73,27 @@ def test_freezing_the_same_again_changes_no_byte(programme: Any) -> None:
     assert [path.name for path in (published / "cuts").iterdir()] == ["lock"]
 
 
+def test_a_cut_is_the_same_bytes_whatever_was_published_before(make_lake: type, tmp_path: Path) -> None:
+    """A publication over an earlier one and one from nothing freeze to the same files, the database among them."""
+    for name in ("over an earlier one", "from nothing"):
+        lake = make_lake(tmp_path / name)
+        for code in ("P1", "P2"):
+            lake.patient(code)
+            lake.recording(f"{code}-1", code, "2026-05-01T00:00", "2026-05-03T00:00")
+        if name == "over an earlier one":
+            _publish(lake)
+        lake.recording("P1-2", "P1", "2026-06-01T00:00", "2026-06-03T00:00", v_beats=9)
+        standing = Published(lake.folder / "published") if name == "over an earlier one" else None
+        with lake.built(standing=standing) as build:
+            assert build.kept == ({"P2"} if standing else set())
+            publish(build, lake.folder / "published", site=lambda _, folder: folder.mkdir(), stamp={})
+        cuts.freeze(lake.folder / "published", "lock", [])
+    a, b = (tmp_path / name / "published" / "cuts" / "lock" for name in ("over an earlier one", "from nothing"))
+    files = [path.relative_to(a) for path in sorted(a.rglob("*")) if path.is_file()]
+    assert Path("burdenline.duckdb") in files
+    assert [file for file in files if (a / file).read_bytes() != (b / file).read_bytes()] == []
+
+
 def test_every_damage_to_a_cut_is_named(programme: Any) -> None:
     """A changed table, a changed input, a removed page, an added file and a changed part are each found."""
     published = _publish(programme)
@@ -81,9 +102,13 @@ def test_every_damage_to_a_cut_is_named(programme: Any) -> None:
     (cut / "tables" / "wear_days.parquet").write_bytes(b"x")
     (cut / "tables" / "hours.parquet" / "00.parquet").unlink()
     (cut / "note.txt").write_text("mine")
+    with (cut / "burdenline.duckdb").open("ab") as database:
+        database.write(b"x")
     part = programme.ledger.parts("quarter_hours")[0].path
     (programme.folder / "lake" / part).write_bytes(b"x")
     assert cuts.damages(published, "lock") == [
+        Damage("burdenline.duckdb", "bytes changed after the cut"),
+        Damage("burdenline_duckdb1.duckdb", "bytes changed after the cut"),
         Damage("inputs/programme.toml", "bytes changed after the cut"),
         Damage("note.txt", "was added after the cut"),
         Damage("tables/hours.parquet/00.parquet", "missing"),
