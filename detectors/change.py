@@ -144,7 +144,7 @@ def compare(
     per_baseline = _divide(per_beat[1::2], np.where(fewer_days > 0, baseline, np.nan))
     known = per_baseline * 0  # NaN where there is no ratio
     day_sd = np.exp(mean(weight, np.log(grid)))
-    missing = _days_to_settle(chance, level, weight, _log(after) - _log(baseline))
+    missing = _days_to_settle(chance, level, weight, _told_log_ratio(baseline, after, error.false_rate))
     counting, between, gap, detection = _shares_pct(variances, weight, observed)
     return Comparison(
         baseline=baseline,
@@ -165,6 +165,12 @@ def compare(
         days_to_settle=np.where(verdict == WITHIN, missing, np.nan),
         baseline_variance=mean(weight, level.variance[0::2] + variances.gap / 2),
     )
+
+
+def _told_log_ratio(baseline: Floats, after: Floats, false_rate: float) -> Floats:
+    """ln ratio that is left when false beats made up what they may of a fall or a rise; NaN for nothing."""
+    told = _log(after) - np.where(after < baseline, _log(baseline - false_rate), _log(baseline + false_rate))
+    return np.where((told < 0) == (after < baseline), told, np.nan)
 
 
 def _days_to_settle(chance: Chance, level: Levels, weight: Floats, log_ratio: Floats) -> Floats:

@@ -100,6 +100,8 @@ def rank_reason(row: Mapping[str, Any], wear: WearSettings) -> str:
             f"{values} {row['baseline_days']} valid days before and {row['after_days']} after; at least "
             f"{wear.min_days_per_period} on each side, over the same clock hours, are needed."
         )
+    if not row["baseline_value"] and not row["after_value"]:
+        return f"{values} There is nothing to compare."
     return f"{values} {_comparison(row, extreme)} A largest value grows with the wear, so no ratio is given."
 
 
@@ -109,10 +111,13 @@ def _comparison(row: Mapping[str, Any], extreme: Extreme) -> str:
         return f"Days with runs are {before} before and {after} after, so that they cannot be compared."
     probability = row["rank_chance_pct"]
     chance = f"{probability:.2g} %" if probability < 10 else f"{probability:.0f} %"
-    ranks = f"days by rank over the clock hours worn on both sides, {before} before and {after} after: {chance}"
+    days = f"{before} days before and {after} after, ordered by theirs over the same clock hours"
     if row["verdict"] == WITHIN:
-        return f"Chance explains how the days differ ({ranks})."
-    return f"That of single days is {extreme.lower if row['verdict'] == FELL else extreme.higher} than chance explains ({ranks})."
+        return f"Chance explains how the days differ: {days}, would lie so in {chance} of cases without any change."
+    shift = extreme.lower if row["verdict"] == FELL else extreme.higher
+    return (
+        f"That of single days is {shift} beyond chance: {days}, would lie so in {chance} of cases without any change."
+    )
 
 
 def _shown(value: float | None, extreme: Extreme) -> str:

@@ -34,8 +34,10 @@ class Measure:
     day_sd: float
     drift: SpontaneousSeries | None
     noun: str
+    unit: str
     beats_each: int = 1  # ectopic beats that must be found for one to count; 0 where the detector adds no error
     false_rate: float = 0.0  # false counts per unit of exposure
+    drift_is_borrowed: bool = False  # published for other beats
 
     def error(self, share: float) -> DetectorError:
         """What the detector adds to a comparison; `share` of what was measured.
@@ -49,40 +51,56 @@ class Measure:
 _HOURS = pl.col("analysable_s") / 3600
 _V, _S, _BEATS = pl.col("v_beats"), pl.col("s_beats"), pl.col("all_beats")
 HEART_RATE = Measure(
-    "mean_rate_bpm", pl.col("mean_rate_bpm") * _HOURS, _HOURS, 1, RATE_DAY_SD, None, "mean heart rate", beats_each=0
+    "mean_rate_bpm",
+    pl.col("mean_rate_bpm") * _HOURS,
+    _HOURS,
+    1,
+    RATE_DAY_SD,
+    None,
+    "mean heart rate",
+    "/min",
+    beats_each=0,
 )
 V_BURDEN = Measure(
-    "v_burden_pct", _V, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular burden", false_rate=FALSE_V_PER_BEAT
+    "v_burden_pct", _V, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular burden", "%", false_rate=FALSE_V_PER_BEAT
 )
 V_PER_H = Measure(
-    "v_per_h", _V, _HOURS, 1, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular beats per hour",
+    "v_per_h", _V, _HOURS, 1, ECTOPY_DAY_SD, SINGLE_BEATS, "ventricular beats per hour", "per hour",
     false_rate=FALSE_V_PER_BEAT * BEATS_PER_H,
 )  # fmt: skip
 RUNS_PER_24H = Measure(
-    "runs_per_24h", pl.col("runs"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "runs per 24 h", beats_each=3
+    "runs_per_24h",
+    pl.col("runs"),
+    _HOURS,
+    24,
+    ECTOPY_DAY_SD,
+    REPETITIVE_FORMS,
+    "runs per 24 h",
+    "per 24 h",
+    beats_each=3,
 )
 MEASURES = (
     V_BURDEN,
     V_PER_H,
     # No series is published for supraventricular beats; the ventricular one is borrowed.
     Measure(
-        "s_burden_pct", _S, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "supraventricular burden",
-        false_rate=FALSE_S_PER_BEAT,
+        "s_burden_pct", _S, _BEATS, 100, ECTOPY_DAY_SD, SINGLE_BEATS, "supraventricular burden", "%",
+        false_rate=FALSE_S_PER_BEAT, drift_is_borrowed=True,
     ),
     HEART_RATE,
     Measure(
-        "couplets_per_24h", pl.col("couplets"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "couplets per 24 h",
+        "couplets_per_24h", pl.col("couplets"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "couplets per 24 h", "per 24 h",
         beats_each=2,
     ),
     Measure(
-        "bigeminy_pct", pl.col("bigeminy_s"), pl.col("analysable_s"), 100, ECTOPY_DAY_SD, REPETITIVE_FORMS, "bigeminy",
+        "bigeminy_pct", pl.col("bigeminy_s"), pl.col("analysable_s"), 100, ECTOPY_DAY_SD, REPETITIVE_FORMS, "bigeminy", "%",
         beats_each=3,
     ),
     RUNS_PER_24H,
 )  # fmt: skip
 
 ECTOPY = tuple(measure.name for measure in MEASURES if measure is not HEART_RATE)
-NOUNS = {measure.name: measure.noun for measure in MEASURES}
+BY_NAME = {measure.name: measure for measure in MEASURES}
 
 
 class MeasuredDays(NamedTuple):

@@ -94,6 +94,12 @@ def _reason(row: Mapping[str, Any]) -> str:
     if row["equal_rate_ratio"] is not None:
         parts.append(
             f"At equal heart rate the ratio of ventricular beats per hour is {row['equal_rate_ratio']:.2f} "
-            f"(95 % interval {row['equal_rate_ratio_low']:.2f} to {row['equal_rate_ratio_high']:.2f})."
+            f"(95 % interval {row['equal_rate_ratio_low']:.2f} to {row['equal_rate_ratio_high']:.2f}): {_left_over(row)}."
         )
     return " ".join(parts)
+
+
+def _left_over(row: Mapping[str, Any]) -> str:
+    if row["equal_rate_ratio_low"] <= 1 <= row["equal_rate_ratio_high"]:
+        return "no change beyond what goes with the heart rate is shown"
+    return "a change that does not go with the heart rate"

@@ -142,7 +142,7 @@ def _changes(
     rows = [pl.concat([frame, of_one, rates], how="horizontal") for of_one in (*of_measure.values(), *by_rank)]
     result = pl.concat(rows, how="diagonal_relaxed").sort("event", maintain_order=True)
     columns = PUBLISHED["changes"].columns
-    reasons = pl.Series("reason", [reason(row, wear) for row in result.iter_rows(named=True)], dtype=pl.String)
+    reasons = pl.Series("reason", [reason(row, change, wear) for row in result.iter_rows(named=True)], dtype=pl.String)
     return result.with_columns(reasons).select(pl.col(name).cast(polars_type(COLUMNS[name].type)) for name in columns)
 
 
