@@ -15,6 +15,7 @@ from datetime import UTC, datetime, timedelta
 from itertools import pairwise
 from pathlib import Path
 from typing import Any
+from uuid import UUID
 
 # Read by Prefect when it is imported: nothing is sent anywhere, and a slow host gets time to start the local server.
 os.environ.setdefault("DO_NOT_TRACK", "1")
@@ -23,7 +24,12 @@ os.environ.setdefault("PREFECT_CLOUD_ENABLE_ORCHESTRATION_TELEMETRY", "false")
 os.environ.setdefault("PREFECT_SERVER_EPHEMERAL_STARTUP_TIMEOUT_SECONDS", "120")
 
 from prefect import flow, get_run_logger, task
-from prefect.artifacts import create_markdown_artifact, create_table_artifact
+from prefect.artifacts import (
+    create_markdown_artifact,
+    create_progress_artifact,
+    create_table_artifact,
+    update_progress_artifact,
+)
 from prefect.client.schemas.objects import StateType
 from prefect.futures import PrefectFuture
 from prefect.runtime import flow_run
@@ -80,6 +86,18 @@ def analyse_as_tasks(work: Sequence[Work], reporter: Reporter) -> Iterator[Analy
         yield _finished(*running.popleft(), reporter)
 
 
+def analyse_with_progress(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]:
+    """The same with a progress artifact that the server's pages show while the night goes on."""
+    if not work:
+        return
+    told = f"{len(work)} recordings to analyse"
+    shown = create_progress_artifact(progress=0.0, key="burdenline-recordings", description=told)
+    assert isinstance(shown, UUID)  # outside of an event loop it is made at once
+    for done, analysed in enumerate(analyse_as_tasks(work, reporter), start=1):
+        yield analysed
+        update_progress_artifact(artifact_id=shown, progress=100.0 * done / len(work))
+
+
 def _finished(item: Work, future: PrefectFuture[Analysed], reporter: Reporter) -> Analysed:
     analysed = future.result()
     reporter.say(f"analysed {item.recording_id}")
@@ -112,7 +130,7 @@ def refresh_folder_task(folder: Path) -> dict[str, Any]:
         folder,
         reporter=_RunLog(),
         wait_s=WAIT_FOR_FOLDER_S,
-        analyse_all=analyse_as_tasks,
+        analyse_all=analyse_with_progress,
         flow_run=str(flow_run.id or ""),
     )
     return outcome.as_dict()

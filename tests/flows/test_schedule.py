@@ -51,6 +51,8 @@ def coast(tmp_path):
 
 def test_the_nightly_flow_ends_in_states_that_tell(prefect_here, coast, tmp_path):
     """The flow publishes, names refusals in its final state, tells the command, and ends unchanged the next time."""
+    from prefect.client.orchestration import get_client
+
     from flows.schedule import nightly_flow
 
     told = tmp_path / "told.json"
@@ -60,6 +62,12 @@ def test_the_nightly_flow_ends_in_states_that_tell(prefect_here, coast, tmp_path
     assert (state.type.value, state.name) == ("COMPLETED", "Published with refusals")
     assert (coast / "published" / "site" / "index.html").exists()
     assert json.loads(told.read_text())["quarantined"] == 1
+    with get_client(sync_client=True) as client:
+        shown = {artifact.key: artifact.data for artifact in client.read_latest_artifacts()}
+    assert shown["burdenline-recordings"] == 100.0
+    [declined] = json.loads(shown["burdenline-not-in-the-numbers"])
+    assert declined["status"] == "quarantined" and declined["reason"]
+    assert "- accepted: 1" in shown["burdenline-outcome"]
     assert nightly_flow(str(coast), return_state=True).name == "Unchanged"
 
 
