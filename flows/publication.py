@@ -17,6 +17,7 @@ import polars as pl
 
 from dashboards.site import build_site
 from flows.change import trends
+from flows.change.lending import NOTHING_KEPT, Kept
 from flows.change.patient_families import patient_families
 from flows.change.visits import responders, visit_changes, visits
 from flows.over_read import add_reviewed
@@ -30,6 +31,7 @@ from warehouse.publish import publish
 from warehouse.published import Published
 
 SHOWN_ROWS = 3
+EVIDENCE_OF_CHANGES = "change_evidence"
 
 
 class CheckFailed(RuntimeError):
@@ -93,13 +95,24 @@ def built(
         build.run_models("staging")
         build.run_models("intermediate")
         measured = {name: build.frame(name) for name in ("local_hours", "wear_days", "periods", "therapies")}
-        made = trends.tables(trends.Inputs(**measured), settings.change, settings.wear)
+        made = trends.tables(trends.Inputs(**measured), settings.change, settings.wear, _kept_changes(build))
         for name, frame in made.published.items():
             build.add(name, frame)
+        build.hand_on(EVIDENCE_OF_CHANGES, made.evidence)
         build.add("patient_families", patient_families(build.frame("family_shapes")))
         for name, frame in _trial_tables(people, measured, settings).items():
             build.add(name, frame)
         yield build
+
+
+def _kept_changes(build: TrendBuild) -> Kept:
+    """Rows of changes that the build may take over, with what all patients of the standing edition lent."""
+    evidence = build.handed(EVIDENCE_OF_CHANGES)
+    if evidence is None or build.standing is None or not build.kept:
+        return NOTHING_KEPT
+    patients = sorted(build.kept)
+    of_kept = pl.col("patient_code").is_in(patients)
+    return Kept(patients, evidence, {name: build.standing.table(name).filter(of_kept) for name in trends.PER_PATIENT})
 
 
 def _program(settings: Settings) -> str:

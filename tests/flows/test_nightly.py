@@ -14,6 +14,9 @@ import polars as pl
 import pytest
 import sleepecg
 
+from flows.change import trends
+from flows.change.extremes import EXTREMES
+from flows.change.measures import MEASURES
 from flows.edf_write import EdfHeader, Piece, write_edf
 from flows.nightly import DONE, DONE_WITH_REFUSALS, run
 from flows.programme import make_folder
@@ -177,6 +180,45 @@ def test_a_wear_moved_to_another_patient_moves_every_number(three_patients):
     published = Published(three_patients / "published")
     assert published.table("wear_days").filter(patient_code="P-1").height == 0
     assert published.table("wear_days").filter(patient_code="P-2").height == 2
+
+
+def test_changes_of_patients_without_news_are_taken_over(three_patients, monkeypatch):
+    """When one therapy event moves, the changes of its patient alone are computed, with the tables of a full build."""
+    therapies = three_patients / "register" / "therapies.csv"
+    therapies.write_text(therapies.read_text() + "T-2,P-2,medication_start,,2026-03-06T09:00\n")
+    run(three_patients)
+    therapies.write_text(therapies.read_text().replace("2026-03-06", "2026-03-07"))
+    looked_at, look = [], trends._look
+    monkeypatch.setattr(
+        trends,
+        "_look",
+        lambda inputs, *rest: looked_at.append(inputs.therapies["patient_code"].to_list()) or look(inputs, *rest),
+    )
+    run(three_patients)
+    over = Published(three_patients / "published").manifest["tables"]
+    assert looked_at[0] == ["P-2"]
+    shutil.rmtree(three_patients / "published")
+    run(three_patients)
+    assert Published(three_patients / "published").manifest["tables"] == over
+
+
+def test_no_therapy_event_is_lost_or_stops_a_run(three_patients):
+    """Events before all wear, in the future, on one day, overlapping or with a single day of wear keep every row."""
+    events = [
+        ("T-before", "P-1", "ablation", "2025-11-30T09:00"), ("T-1", "P-1", "ablation", "2026-03-05T09:00"),
+        ("T-same-day", "P-1", "dose_change", "2026-03-05T21:00"), ("T-overlap", "P-1", "other", "2026-03-06T09:00"),
+        ("T-future", "P-2", "medication_stop", "2029-01-01T09:00"), ("T-within", "P-3", "other", "2026-03-03T08:02"),
+    ]  # fmt: skip
+    rows = "".join(f"{name},{patient},{kind},,{at}\n" for name, patient, kind, at in events)
+    (three_patients / "register" / "therapies.csv").write_text(
+        f"therapy_id,patient_code,therapy_kind,therapy_detail,at_local\n{rows}"
+    )
+    assert run(three_patients).exit_code == DONE
+    changes = Published(three_patients / "published").table("changes")
+    assert changes.height == len(events) * (len(MEASURES) + len(EXTREMES))
+    assert set(changes["therapy_id"]) == {name for name, *_ in events}
+    assert changes["verdict"].unique().to_list() == ["too_little_wear"]
+    assert changes["reason"].str.contains("are needed").all()
 
 
 def test_names_of_a_header_are_nowhere(three_patients):
