@@ -19,8 +19,8 @@ from warehouse.exports.catalogue import EXPORTS
 from warehouse.ledger import Ledger
 from warehouse.published import Published
 
-STRIPS = "strips"
-"""The export that draws, which the warehouse cannot; all others are in its catalogue."""
+STRIPS = {"strips": "svg", "strips-png": "png"}
+"""The exports that draw, which the warehouse cannot, with their form; all others are in its catalogue."""
 
 
 class ExportError(ValueError):
@@ -82,13 +82,13 @@ def _folder_as_it_was(inputs: Path, scratch: Path) -> Path:
 
 def export(folder: Path, what: str, to: Path, *, cut: str = "", study_code: str = "STUDY") -> list[Path]:
     """Write one export of the standing publication or of a cut; returns the files. Raises ExportError."""
-    known = (*EXPORTS, STRIPS)
+    known = (*EXPORTS, *STRIPS)
     if what not in known:
         near = difflib.get_close_matches(what, known, n=1)
         raise ExportError(f"unknown export {what!r}; {f'did you mean {near[0]}?' if near else ', '.join(known)}")
     published = Published(folder / "published", edition=cut_folder(folder, cut) if cut else None)
-    if what == STRIPS:
+    if what in STRIPS:
         from flows.strip_export import export_strips
 
-        return export_strips(published, to)
+        return export_strips(published, to, STRIPS[what])
     return EXPORTS[what].export(published, to, study_code)

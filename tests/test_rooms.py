@@ -18,7 +18,7 @@ MAY_IMPORT = {
 LIBRARIES = {
     "detectors": {"numpy", "scipy"},
     "warehouse": {"duckdb", "polars", "deltalake", "obstore", "numpy", "xlsxwriter", "pyreadstat"},
-    "dashboards": {"plotly", "polars", "jinja2", "markupsafe"},
+    "dashboards": {"plotly", "polars", "jinja2", "markupsafe", "PIL"},
     "flows/readers": {"numpy", "polars", "pydicom", "soundfile"},
     "flows": {"polars", "numpy", "prefect", "distributed", "rich", "jinja2", "jsonschema"},
 }

@@ -47,7 +47,9 @@ def _thaw(asked: argparse.Namespace) -> int:
 def _export_arguments(parser: argparse.ArgumentParser) -> None:
     folder_argument(parser)
     parser.add_argument(
-        "what", metavar="WHAT", help="csv, parquet, excel, fhir, sdtm, sdtm-xpt, atr, edf-events or strips"
+        "what",
+        metavar="WHAT",
+        help="csv, parquet, excel, fhir, sdtm, sdtm-xpt, atr, edf-events, strips (SVG) or strips-png",
     )
     parser.add_argument("--to", metavar="PATH", type=Path, required=True, help="file or folder to write")
     parser.add_argument("--cut", metavar="NAME", default="", help="export a frozen cut, not the standing publication")

@@ -7,6 +7,7 @@ from importlib.metadata import version
 from pathlib import Path
 from xml.etree import ElementTree
 
+import PIL.Image
 import polars as pl
 import pytest
 import sleepecg
@@ -123,7 +124,9 @@ def test_a_wear_day_can_be_traced_to_its_delivery(capsys, coast):
     assert call(capsys, "trace", coast, "--patient", "P-1", "--day", "2026-03-09")[0] == 1
 
 
-@pytest.mark.parametrize("what", ["csv", "parquet", "excel", "fhir", "sdtm", "sdtm-xpt", "atr", "edf-events", "strips"])
+@pytest.mark.parametrize(
+    "what", ["csv", "parquet", "excel", "fhir", "sdtm", "sdtm-xpt", "atr", "edf-events", "strips", "strips-png"]
+)
 def test_every_export_writes_files(capsys, coast, tmp_path, what):
     """Each export of the catalogue writes at least one file and names it."""
     code, out = call(capsys, "export", coast, what, "--to", tmp_path / f"out.{what}")
@@ -151,6 +154,22 @@ def test_strips_are_drawings_that_say_what_they_are(capsys, coast, tmp_path):
         box = drawing.find("svg:svg", SVG)
         # 25 mm/s in units of 0.1 mm: common practice, no source
         assert int(box.get("width")) == round(len(strip["samples_mv"]) / strip["fs_hz"] * 250)
+
+
+def test_strips_as_images_say_what_they_are(capsys, coast, tmp_path):
+    """Every strip becomes a PNG in print size with publication, fingerprint and all cautions in its description."""
+    code, out = call(capsys, "export", coast, "strips-png", "--to", tmp_path / "strips")
+    strips = Published(coast / "published").table("strips")
+    files = [Path(line) for line in out.splitlines()]
+    assert code == 0
+    assert len(files) == strips.height > 0
+    for file in files:
+        with PIL.Image.open(file) as image:
+            told = image.text["Description"]
+            # 254 dots an inch are one every 0.1 mm; PNG counts dots a metre
+            assert [round(dpi) for dpi in image.info["dpi"]] == [254, 254]
+        assert Published(coast / "published").name in told
+        assert all(caution in told for caution in CAUTIONS)
 
 
 def test_tidy_keeps_all_that_is_shown_or_frozen(capsys, coast):
