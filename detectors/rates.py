@@ -14,7 +14,7 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.optimize import brentq
 from scipy.special import digamma, gammaln, xlogy
-from scipy.stats import beta, binomtest, norm
+from scipy.stats import beta, binomtest, norm, t
 
 Floats = NDArray[np.float64]
 
@@ -42,7 +42,15 @@ class RateFit(NamedTuple):
 
     def ratio(self, column: int) -> tuple[float, float, float]:
         """Rate ratio of one column with its 95 % interval (normal theory on logarithms)."""
-        centre, error = self.coefficients[column], TWO_SIDED_95 * np.sqrt(self.covariance[column, column])
+        return self._ratio(column, TWO_SIDED_95 * np.sqrt(self.covariance[column, column]))
+
+    def student_ratio(self, column: int, inflation: float = 1.0) -> tuple[float, float, float]:
+        """The same with Student's t in place of the normal value, the variance multiplied by `inflation`."""
+        freedom = len(self.fitted) - len(self.coefficients)
+        return self._ratio(column, t.ppf(0.975, freedom) * np.sqrt(self.covariance[column, column] * inflation))
+
+    def _ratio(self, column: int, error: float) -> tuple[float, float, float]:
+        centre = self.coefficients[column]
         return float(np.exp(centre)), float(np.exp(centre - error)), float(np.exp(centre + error))
 
 
@@ -111,10 +119,10 @@ def serial_inflation(fit: RateFit, counts: ArrayLike, day: ArrayLike) -> float:
     them, lifted by what p coefficients take from n residuals ((n rho + p) / (n - p), common practice, no source), never
     below 0 nor above LARGEST_RHO.
     """
-    y, t = np.asarray(counts, dtype=float), np.asarray(day, dtype=float)
+    y = np.asarray(counts, dtype=float)
     residual = (y - fit.fitted) / np.sqrt(fit.fitted)
     n, p = len(y), len(fit.coefficients)
-    follows = np.diff(t) == 1
+    follows = np.diff(np.asarray(day)) == 1
     if not follows.any() or n <= p or not residual.any():
         return 1.0
     scale = (n - 1) / follows.sum() / (residual @ residual)
@@ -184,14 +192,14 @@ def series_design(
     `day` has shape (n,). The step is 1 from `event_day` + `lag_d` on (wash-in or blanking); trend and slope are per
     `period_d`; harmonics are sine and cosine pairs of that period. Choose lag and shape before looking.
     """
-    t = np.asarray(day, dtype=float)
-    after = t >= event_day + lag_d
-    columns = {"constant": np.ones(len(t)), "trend": t / period_d, "step": after.astype(float)}
+    days = np.asarray(day, dtype=float)
+    after = days >= event_day + lag_d
+    columns = {"constant": np.ones(len(days)), "trend": days / period_d, "step": after.astype(float)}
     if slope:
-        columns["slope"] = np.where(after, (t - event_day - lag_d) / period_d, 0.0)
+        columns["slope"] = np.where(after, (days - event_day - lag_d) / period_d, 0.0)
     for k in range(1, harmonics + 1):
-        columns[f"sin{k}"] = np.sin(2 * np.pi * k * t / period_d)
-        columns[f"cos{k}"] = np.cos(2 * np.pi * k * t / period_d)
+        columns[f"sin{k}"] = np.sin(2 * np.pi * k * days / period_d)
+        columns[f"cos{k}"] = np.cos(2 * np.pi * k * days / period_d)
     return np.column_stack(list(columns.values())), tuple(columns)
 
 

@@ -8,7 +8,6 @@ from typing import Any
 import numpy as np
 import polars as pl
 from numpy.typing import NDArray
-from scipy.stats import t
 
 from detectors.rates import FitError, fit_quasi_poisson, serial_inflation, series_design
 from flows.change.measures import V_PER_H, MeasuredDays, measured_days
@@ -52,13 +51,11 @@ def _fit(days: MeasuredDays, start_day: int | None) -> dict[str, Any]:
         fit = fit_quasi_poisson(days.counts, design, days.exposure)
     except FitError:
         return {}
-    variance = np.diag(fit.covariance) * serial_inflation(fit, days.counts, days.local_day)
-    error = t.ppf(0.975, len(design) - len(names)) * np.sqrt(variance)
+    inflation = serial_inflation(fit, days.counts, days.local_day)
     named = {"dispersion": fit.dispersion}
     for column, name in (("step", "step_ratio"), ("slope", "slope_ratio_per_week")):
-        at = names.index(column)
-        ends = np.exp(fit.coefficients[at] + error[at] * np.array([0.0, -1.0, 1.0]))
-        named |= dict(zip((name, f"{name}_low", f"{name}_high"), ends.tolist(), strict=True))
+        ends = fit.student_ratio(names.index(column), inflation)
+        named |= dict(zip((name, f"{name}_low", f"{name}_high"), ends, strict=True))
     return named
 
 
