@@ -17,6 +17,7 @@ import yaml  # comes with Prefect
 from flows.cli import main
 from flows.edf_write import EdfHeader, Piece, write_edf
 from flows.lock import FolderBusy
+from tests.flows.test_quiet_network import GUARD
 
 ROOT = Path(__file__).parents[2]
 LONGEST_WAIT_S = 420
@@ -175,14 +176,20 @@ def test_a_day_that_never_comes_is_one_sentence(coast, capsys):
 
 
 def test_a_served_schedule_runs_and_ends_with_its_server(coast, tmp_path):
-    """`burdenline schedule` with no server anywhere runs the job at its time; ended, it ends its server as well."""
-    environment = {name: value for name, value in os.environ.items() if not name.startswith("PREFECT_")}
+    """`burdenline schedule` with no server anywhere runs the job at its time, ends its server with itself, and stays on this host."""
+    (tmp_path / "sitecustomize.py").write_text(GUARD)
+    environment = {name: value for name, value in os.environ.items() if not name.startswith(("PREFECT_", "DO_NOT"))}
+    environment |= {
+        "PREFECT_HOME": str(tmp_path / "prefect"),
+        "PYTHONPATH": f"{tmp_path}{os.pathsep}{ROOT}",
+        "TRIED": str(tmp_path / "tried"),
+    }
     command = [sys.executable, "-m", "flows.cli", "schedule", str(coast), "--cron", "* * * * *"]
     with (tmp_path / "words").open("wb") as words:
         served = subprocess.Popen(
             command,
             cwd=ROOT,
-            env=environment | {"PREFECT_HOME": str(tmp_path / "prefect")},
+            env=environment,
             stdout=words,
             stderr=words,
             start_new_session=True,
@@ -195,6 +202,7 @@ def test_a_served_schedule_runs_and_ends_with_its_server(coast, tmp_path):
         served.send_signal(signal.SIGTERM)
         assert served.wait(LONGEST_WAIT_S) == 0
         wait_until_no_process_is_left(served.pid)
+        assert not (tmp_path / "tried").exists(), "a connection beyond this host was tried"
     finally:
         with contextlib.suppress(ProcessLookupError):
             os.killpg(served.pid, signal.SIGKILL)
