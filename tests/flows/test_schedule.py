@@ -176,7 +176,7 @@ def test_a_day_that_never_comes_is_one_sentence(coast, capsys):
 
 
 def test_a_served_schedule_runs_and_ends_with_its_server(coast, tmp_path):
-    """`burdenline schedule` with no server anywhere runs the job at its time, ends its server with itself, and stays on this host."""
+    """`burdenline schedule` without any server runs the job at its time, ends its server with itself, and stays on this host."""
     (tmp_path / "sitecustomize.py").write_text(GUARD)
     environment = {name: value for name, value in os.environ.items() if not name.startswith(("PREFECT_", "DO_NOT"))}
     environment |= {
