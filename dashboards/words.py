@@ -185,6 +185,8 @@ def age(hours: float | None) -> str:
     """Return a span of hours as people say it: in hours up to two days, then in days."""
     if hours is None:
         return MISSING
+    if hours < 1:
+        return "less than 1 h"
     return f"{number(hours, 0 if hours >= 10 else 1)} h" if hours < 48 else f"{number(hours / 24)} days"
 
 

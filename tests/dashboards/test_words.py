@@ -118,4 +118,10 @@ def test_days_within_sentences_are_written_out():
 
 def test_ages_are_told_in_hours_then_days():
     """Up to two days in hours, from then on in days."""
-    assert [words.age(hours) for hours in (3.24, 26, 72, None)] == ["3.2 h", "26 h", "3 days", "–"]
+    assert [words.age(hours) for hours in (0.04, 3.24, 26, 72, None)] == [
+        "less than 1 h",
+        "3.2 h",
+        "26 h",
+        "3 days",
+        "–",
+    ]
