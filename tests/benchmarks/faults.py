@@ -213,7 +213,8 @@ def _kill_after(folder: Path, moment_s: float, environment: dict[str, str] | Non
 
 def _run(folder: Path, environment: dict[str, str] | None = None) -> str:
     done = subprocess.run(_command(folder), capture_output=True, text=True, env=os.environ | (environment or {}))
-    return "" if done.returncode in (0, 3) else f"exit {done.returncode}: {done.stderr.strip()[-300:]}"
+    said = done.stderr.strip().splitlines() or ["nothing"]
+    return "" if done.returncode in (0, 3) else f"exit {done.returncode}: {said[-1][-300:]}"
 
 
 def _command(folder: Path) -> list[str]:
