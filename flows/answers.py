@@ -2,10 +2,13 @@
 
 from __future__ import annotations
 
+import io
 import json
 from pathlib import Path
 
 import polars as pl
+
+from warehouse.parts import write_whole
 
 
 def print_answer(
@@ -13,7 +16,9 @@ def print_answer(
 ) -> None:
     """Print every row of the answer, or write it to `parquet`."""
     if parquet is not None:
-        answer.write_parquet(parquet)
+        content = io.BytesIO()
+        answer.write_parquet(content)
+        write_whole(parquet, content.getbuffer())
         print(f"{answer.height} rows written to {parquet}")
     elif as_csv:
         print(answer.write_csv(), end="")

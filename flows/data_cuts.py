@@ -8,6 +8,8 @@ import tempfile
 from datetime import UTC, datetime
 from pathlib import Path
 
+import polars as pl
+
 from flows import register
 from flows import settings as programme_settings
 from flows.lock import folder_lock
@@ -81,14 +83,29 @@ def _folder_as_it_was(inputs: Path, scratch: Path) -> Path:
 
 
 def export(folder: Path, what: str, to: Path, *, cut: str = "", study_code: str = "STUDY") -> list[Path]:
-    """Write one export of the standing publication or of a cut; returns the files. Raises ExportError."""
+    """Write one export of the standing publication or of a cut; returns the files. Raises ExportError.
+
+    A single file is written beside and renamed, so that it is never a half one.
+    """
     known = (*EXPORTS, *STRIPS)
     if what not in known:
         near = difflib.get_close_matches(what, known, n=1)
         raise ExportError(f"unknown export {what!r}; {f'did you mean {near[0]}?' if near else ', '.join(known)}")
     published = Published(folder / "published", edition=cut_folder(folder, cut) if cut else None)
-    if what in STRIPS:
-        from flows.strip_export import export_strips
+    beside = to.with_name(f".writing-{to.name}")
+    try:
+        if what in STRIPS:
+            from flows.strip_export import export_strips
 
-        return export_strips(published, to, STRIPS[what])
-    return EXPORTS[what].export(published, to, study_code)
+            return export_strips(published, to, STRIPS[what])
+        if EXPORTS[what].writes == "folder":
+            return EXPORTS[what].export(published, to, study_code)
+        EXPORTS[what].export(published, beside, study_code)
+        return [beside.replace(to)]
+    except (OSError, pl.exceptions.ComputeError) as problem:
+        raise ExportError(
+            f"{to} could not be written: {' '.join(str(problem).split())}; what lies there of this export is not whole. "
+            "Free space or restore write access, then export again"
+        ) from problem
+    finally:
+        beside.unlink(missing_ok=True)

@@ -115,12 +115,13 @@ def _bring_up_to_date(
 ) -> Outcome:
     from flows import edits, memory, publication, register, run_log
     from flows.arrivals import ingest
-    from warehouse import cache
+    from warehouse import cache, layout
     from warehouse.ledger import Ledger
 
     memory.give_back()
     people = register.load(folder, settings.programme.zone)
     cache.settle(folder / "lake", settings.lake.store)
+    layout.refuse_missing_lake(folder)
     ledger = Ledger(folder / "lake")
     edits.note_edits(folder / "lake", settings, people, ledger, actor_code)
     arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)

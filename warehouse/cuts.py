@@ -22,6 +22,8 @@ from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
+import duckdb
+
 from warehouse.build import TrendBuild
 from warehouse.cache import complete
 from warehouse.edition_database import write_database
@@ -47,17 +49,15 @@ def freeze(published: Path, name: str, inputs: Sequence[Path], *, reason: str = 
     """
     if not _NAME.fullmatch(name):
         raise CutError(f"cut name {name!r}; expected letters, digits, dots, dashes and underscores")
-    standing = Published(published)
     cut, staging = published / "cuts" / name, published / "cuts" / f".{name}.staging"
-    shutil.rmtree(staging, ignore_errors=True)
-    shutil.copytree((published / "current").resolve(), staging, symlinks=True, ignore=shutil.ignore_patterns(KEPT))
-    # That of an edition has a history of the editions before; written from the tables alone it is the same bytes.
-    (staging / DATABASE).unlink()
-    write_database(Published(published, edition=staging), staging / DATABASE)
-    (staging / "inputs").mkdir()
-    for path in inputs:
-        shutil.copyfile(path, staging / "inputs" / path.name)
-    write_whole(staging / CUT, _description(standing, staging, name, reason))
+    try:
+        _fill(staging, Published(published), inputs, name, reason)
+    except (OSError, duckdb.Error) as problem:
+        shutil.rmtree(staging, ignore_errors=True)
+        raise CutError(
+            f"{cut} could not be written: {_first_reason(problem)}; nothing was frozen. "
+            "Free space or restore write access, then freeze again"
+        ) from problem
     if cut.exists():
         same = (cut / CUT).read_bytes() == (staging / CUT).read_bytes()
         shutil.rmtree(staging)
@@ -68,6 +68,24 @@ def freeze(published: Path, name: str, inputs: Sequence[Path], *, reason: str = 
         return cut
     staging.rename(cut)
     return cut
+
+
+def _fill(staging: Path, standing: Published, inputs: Sequence[Path], name: str, reason: str) -> None:
+    shutil.rmtree(staging, ignore_errors=True)
+    shutil.copytree(standing.edition, staging, symlinks=True, ignore=shutil.ignore_patterns(KEPT))
+    # That of an edition has a history of the editions before; written from the tables alone it is the same bytes.
+    (staging / DATABASE).unlink()
+    write_database(Published(standing.folder, edition=staging), staging / DATABASE)
+    (staging / "inputs").mkdir()
+    for path in inputs:
+        shutil.copyfile(path, staging / "inputs" / path.name)
+    write_whole(staging / CUT, _description(standing, staging, name, reason))
+
+
+def _first_reason(problem: Exception) -> str:
+    # Copying a folder tells every file that failed, each with its own reason.
+    told = problem.args[0][0][2] if isinstance(problem, shutil.Error) else problem
+    return " ".join(str(told).split())
 
 
 def _description(standing: Published, staging: Path, name: str, reason: str) -> bytes:

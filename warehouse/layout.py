@@ -66,6 +66,16 @@ def refuse_newer(lake: Path) -> None:
         )
 
 
+def refuse_missing_lake(folder: Path) -> None:
+    """Raise LayoutError where a publication stands whose lake is gone: to begin a new one would look like loss."""
+    lake, standing = folder / "lake", folder / "published" / "current"
+    if standing.exists() and found_layout(lake) is None and not noted_url(lake):
+        raise LayoutError(
+            f"{lake} is gone, but {folder / 'published'} was made from it; put it back from where it was moved, "
+            f"or remove {standing} to begin a new lake from the inbox"
+        )
+
+
 def check_layout(lake: Path) -> None:
     """Raise LayoutError for a folder of another layout than the present one."""
     refuse_newer(lake)

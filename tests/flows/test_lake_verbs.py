@@ -1,7 +1,9 @@
 """What an analyst does with a published programme beside asking: trace, compare, promote, freeze, export, verify."""
 
 import json
+import resource
 import shutil
+import signal
 from datetime import datetime
 from importlib.metadata import version
 from pathlib import Path
@@ -243,3 +245,36 @@ def test_a_folder_of_an_older_version_is_brought_up_by_a_run(capsys, coast, monk
         "patient_code,zone", "code,zone"
     )
     assert main(["verify", str(coast)]) == 0
+
+
+def test_a_lake_that_was_moved_away_is_asked_back(capsys, coast):
+    """Neither a run nor a check begins a new lake beside a publication; tables still answer, and all goes on afterwards."""
+    (coast / "lake").rename(coast / "elsewhere")
+    for verb in ("run", "verify", "tidy"):
+        assert main([verb, str(coast)]) == 1
+        assert (
+            f"{coast / 'lake'} is gone, but {coast / 'published'} was made from it; put it back"
+            in capsys.readouterr().err
+        )
+    assert call(capsys, "sql", coast, "from wear_days")[0] == 0
+    shutil.rmtree(coast / "lake")  # the lock of the run
+    (coast / "elsewhere").rename(coast / "lake")
+    assert call(capsys, "run", coast)[0] == 0
+
+
+def test_an_export_that_fails_leaves_no_half_file(capsys, coast, tmp_path):
+    """A full disk is said with the target; the file of before stays."""
+    target = tmp_path / "out"
+    target.write_text("as it was")
+    limit = resource.getrlimit(resource.RLIMIT_FSIZE)
+    handler = signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
+    resource.setrlimit(resource.RLIMIT_FSIZE, (2000, limit[1]))
+    try:
+        code = main(["export", str(coast), "fhir", "--to", str(target)])
+    finally:
+        resource.setrlimit(resource.RLIMIT_FSIZE, limit)
+        signal.signal(signal.SIGXFSZ, handler)
+    assert code == 1
+    assert f"{target} could not be written" in capsys.readouterr().err
+    assert [path.name for path in tmp_path.iterdir() if path.is_file()] == ["out"]
+    assert target.read_text() == "as it was"

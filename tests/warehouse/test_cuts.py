@@ -1,5 +1,6 @@
 """A cut keeps a publication for good: its bytes, its inputs, and the proof that its numbers still follow from them."""
 
+import shutil
 from pathlib import Path
 from typing import Any
 
@@ -92,6 +93,22 @@ def test_a_cut_is_the_same_bytes_whatever_was_published_before(make_lake: type, 
     files = [path.relative_to(a) for path in sorted(a.rglob("*")) if path.is_file()]
     assert Path("burdenline.duckdb") in files
     assert [file for file in files if (a / file).read_bytes() != (b / file).read_bytes()] == []
+
+
+def test_a_freeze_that_fails_leaves_nothing(programme: Any, monkeypatch: pytest.MonkeyPatch) -> None:
+    """Without room on the disk no cut and no half one is there, and the words say so."""
+    published = _publish(programme)
+
+    def full(*_: object, **__: object) -> None:
+        raise shutil.Error([("a", "b", "[Errno 28] No space left on device: 'b'"), ("c", "d", "the same")])
+
+    monkeypatch.setattr(shutil, "copytree", full)
+    with pytest.raises(
+        CutError, match=r"lock could not be written: \[Errno 28\] No space left on device: 'b'; nothing was"
+    ):
+        cuts.freeze(published, "lock", programme.inputs)
+    assert cuts.cut_names(published) == []
+    assert not list((published / "cuts").glob("*"))
 
 
 def test_every_damage_to_a_cut_is_named(programme: Any) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 from collections.abc import Sequence
 from datetime import datetime
 from pathlib import Path
@@ -11,6 +12,7 @@ import polars as pl
 
 from warehouse import schema
 from warehouse.exports.provenance import provenance
+from warehouse.parts import write_whole
 from warehouse.published import Published
 
 SHEETS = ("patients", "recordings", "wear_days", "local_hours", "therapies", "periods", "changes", "attention")
@@ -48,13 +50,16 @@ def export_excel(published: Published, file: Path, tables: Sequence[str] = SHEET
             raise ExcelError(
                 f"{name} has {frame.height:,} rows, a sheet holds {MAX_ROWS:,}; export it as CSV or Parquet"
             )
-    with xlsxwriter.Workbook(str(file), {**_OPTIONS, "default_date_format": _FORMATS["TIMESTAMP"]}) as book:
+    # The library reports a full disk by an error of its own kind, a stream by that of the system.
+    content = io.BytesIO()
+    with xlsxwriter.Workbook(content, {**_OPTIONS, "default_date_format": _FORMATS["TIMESTAMP"]}) as book:
         book.set_properties({"title": "burdenline export", "created": _CREATED})
         _write_about(book, published)
         for name, frame in frames.items():
             _write_table(book, name, frame)
         dictionary = published.table("data_dictionary").filter(pl.col("table_name").is_in(list(tables)))
         _write_table(book, "data_dictionary", dictionary)
+    write_whole(file, content.getbuffer())
     return [file]
 
 
