@@ -9,6 +9,7 @@ import multiprocessing
 import time
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor, as_completed
+from concurrent.futures.process import BrokenProcessPool
 from dataclasses import asdict, dataclass
 from datetime import UTC, datetime
 from pathlib import Path
@@ -22,9 +23,14 @@ from flows.settings import Settings
 if TYPE_CHECKING:
     from flows.arrivals.ingest import Arrivals
     from flows.last_run import RunEnd
+    from flows.register import Register
     from warehouse.ledger import Ledger
 
 DONE, FAILED, USAGE, DONE_WITH_REFUSALS = 0, 1, 2, 3
+
+
+class ProcessEnded(RuntimeError):
+    """A process of this host that analysed recordings was ended from outside."""
 
 
 @dataclass(frozen=True)
@@ -113,7 +119,7 @@ def _bring_up_to_date(
     end: RunEnd,
     run_id: str,
 ) -> Outcome:
-    from flows import edits, memory, publication, register, run_log
+    from flows import edits, memory, register, run_log
     from flows.arrivals import ingest
     from warehouse import cache, layout
     from warehouse.ledger import Ledger
@@ -136,11 +142,9 @@ def _bring_up_to_date(
     if arrivals.changed or work:
         _note_run(run_id, folder, ledger, arrivals, _outcome(True, arrivals.quarantined))
     ledger.fill_cache()
-    try:
-        changed = publication.refresh(folder, settings, people, ledger, reporter.say)
-    except publication.CheckFailed:
-        _note_run(run_id, folder, ledger, arrivals, "not_published")
-        raise
+    changed = publish(
+        folder, settings, people, ledger, reporter, lambda: _note_run(run_id, folder, ledger, arrivals, "not_published")
+    )
     return Outcome(
         outcome=_outcome(changed, arrivals.quarantined),
         accepted=arrivals.accepted,
@@ -151,6 +155,20 @@ def _bring_up_to_date(
         pages=str(folder / "published" / "site" / "index.html"),
         database=str(folder / "published" / "burdenline.duckdb"),
     )
+
+
+def publish(
+    folder: Path, settings: Settings, people: Register, ledger: Ledger, reporter: Reporter, failed: Callable[[], None]
+) -> bool:
+    """Bring tables and pages up to date; returns whether anything changed. `failed` is called where a check fails."""
+    # Imported only here: scipy and DuckDB take as much memory as half a recording, and would lie beside it.
+    from flows import publication
+
+    try:
+        return publication.refresh(folder, settings, people, ledger, reporter.say)
+    except publication.CheckFailed:
+        failed()
+        raise
 
 
 def _outcome(changed: bool, quarantined: int) -> str:
@@ -206,8 +224,15 @@ def analyse_here(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]
     with ProcessPoolExecutor(processes, mp_context=multiprocessing.get_context("spawn")) as pool:
         running = {pool.submit(analyse_one, item): item for item in work}
         for number, finished in enumerate(as_completed(running), start=1):
-            reporter.say(f"  analysed {running[finished].recording_id} ({number} of {len(work)})")
-            yield finished.result()
+            try:
+                analysed = finished.result()
+            except BrokenProcessPool:
+                raise ProcessEnded(
+                    "a process that analysed recordings was ended, out of memory perhaps; what was done stays: "
+                    "lower [workers] processes or give this host more memory, and run again"
+                ) from None
+            reporter.say(f"  analysed {analysed.recording_id} ({number} of {len(work)})")
+            yield analysed
 
 
 def analyse_one(item: Work, reporter: Reporter = SILENT) -> Analysed:

@@ -94,11 +94,22 @@ def _await_workers(client: Client, address: str) -> None:
     try:
         client.wait_for_workers(1, timeout=WORKERS_AWAY_S)
     except TimeoutError:
-        raise _without_workers(address) from None
+        _refuse_without_workers(client, address)
 
 
-def _without_workers(address: str) -> WorkersAway:
-    return WorkersAway(f"the scheduler at {address} has had no worker for {WORKERS_AWAY_S:g} s; start `dask worker`")
+def _refuse_without_workers(client: Client, address: str) -> None:
+    """Raise WorkersAway unless a worker is there that begins what it is given."""
+    states = {worker["status"] for worker in client.scheduler_info()["workers"].values()}
+    if "running" in states:
+        return
+    if "paused" in states:
+        raise WorkersAway(
+            f"the workers at {address} have paused for want of memory; give them more (--memory-limit), "
+            "or empty [workers] scheduler to analyse on this host"
+        ) from None
+    raise WorkersAway(
+        f"the scheduler at {address} has had no worker for {WORKERS_AWAY_S:g} s; start `dask worker`"
+    ) from None
 
 
 def _as_done(client: Client, running: Sequence[Future], address: str) -> Iterator[Future]:
@@ -111,8 +122,7 @@ def _as_done(client: Client, running: Sequence[Future], address: str) -> Iterato
         except CancelledError:
             pass  # the future that was cancelled says so when it is asked for its result
         except TimeoutError:
-            if not client.nthreads():
-                raise _without_workers(address) from None
+            _refuse_without_workers(client, address)
         ended = {future for future in running if future.done()}
         yield from ended
         running = [future for future in running if future not in ended]
@@ -125,7 +135,7 @@ def _analysed(future: Future, item: Work, address: str) -> Analysed:
         analysed = future.result()
     except CancelledError:
         raise WorkersAway(f"the connection to the Dask scheduler at {address} was lost; run again") from None
-    except KilledWorker:
+    except (KilledWorker, MemoryError):
         raise WorkersError(
             f"{item.recording_id} ended every worker that tried it, out of memory perhaps; give the workers more, "
             "or empty [workers] scheduler to analyse on this host"

@@ -1,12 +1,14 @@
 """Disturb runs at random moments and look whether the next run ends in the tables and pages of an undisturbed one.
 
-Run from the checkout: python -m tests.benchmarks.faults FOLDER [--trials 100] [--seed 1] [--only kill full torn clock store]
+Run from the checkout: python -m tests.benchmarks.faults FOLDER [--trials 100] [--seed 1]
+    [--only kill full torn clock store memory]
 
     kill    kill -9, up to three times
     full    the disk fills up (a small tmpfs; needs root)
     torn    kill -9, then what was not flushed to the disk is cut at random, as a power loss leaves it
     clock   kill -9 under a clock that is days off (needs libfaketime)
     store   lake in an object store that refuses every n-th request, and kill -9
+    memory  a Dask worker that is ended when it takes more than so many MB: the run ends, completed or with a sentence
 
 Every trial starts from a fresh copy of one small invented programme.
 """
@@ -34,6 +36,7 @@ from flows import demo
 OF_RUNS = "runs_of_flow"  # the only table that tells of runs and of the clock
 OF_SETTINGS = "inputs"  # which names the store
 FAKETIME = Path("/usr/lib/x86_64-linux-gnu/faketime/libfaketime.so.1")
+LIMITS_MB = (100, 350)  # of a worker: below its own size, and room for everything
 CACHES = ("lake/seen.json", "lake/assembled.json", "lake/last_run.json")
 
 
@@ -185,8 +188,29 @@ def _store(bench: Bench, rng: np.random.Generator) -> Iterator[tuple[Path, dict[
         server.stop()
 
 
+@contextmanager
+def _memory(bench: Bench, rng: np.random.Generator) -> Iterator[tuple[Path, dict[str, str], str]]:
+    from tests.benchmarks.starved_worker import StarvedWorker
+
+    folder = _copy(bench.fresh, bench.folder / "disturbed")
+    limit_mb = int(rng.integers(*LIMITS_MB))
+    starved = StarvedWorker(bench.folder, limit_mb)
+    try:
+        toml = folder / "programme.toml"
+        toml.write_text(toml.read_text().replace('scheduler = ""', f'scheduler = "{starved.address}"'))
+        said = _run(folder)
+        if said and "burdenline: " not in said:
+            raise RuntimeError(f"a worker with {limit_mb} MB ended the run without a sentence: {said}")
+        starved.feed()
+        yield folder, {}, f"a worker with {limit_mb} MB: {said or 'it was enough'}"
+    finally:
+        starved.stop()
+
+
 Fault = Callable[[Bench, np.random.Generator], Any]
-FAULTS: dict[str, Fault] = {"kill": _killed, "full": _full, "torn": _torn, "clock": _clock, "store": _store}
+FAULTS: dict[str, Fault] = {
+    "kill": _killed, "full": _full, "torn": _torn, "clock": _clock, "store": _store, "memory": _memory,
+}  # fmt: skip
 
 
 def _missing(name: str) -> str:

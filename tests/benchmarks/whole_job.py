@@ -1,51 +1,66 @@
-"""Time and memory of the whole job on one long recording, as ratios to a plain copy with hash of the same file.
+"""Time and memory of each stage of the whole job on one long recording, as ratios to the floor of that stage.
 
 Run from the checkout: python -m tests.benchmarks.whole_job FOLDER [--days 14] [--fs-hz 250]
-The recording is made in FOLDER once and kept; the programme folder beside it is made anew each time.
+The recording is made in FOLDER once and kept; the programme folder beside it is made anew each time. A floor does as
+little as can be done with the same bytes or rows, measured in the same run: see FLOORS.
 """
 
 from __future__ import annotations
 
 import argparse
 import hashlib
+import json
 import os
 import shutil
 import subprocess
 import sys
 import threading
 import time
+from collections import defaultdict
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from datetime import datetime, timedelta
 from pathlib import Path
+from typing import Any
+
+import numpy as np
+import polars as pl
 
 from flows import demo
 from flows.programme import make_folder
+from warehouse.parts import BLOCK_SAMPLES
 
 BLOCK_BYTES = 2**20
-STAGES = ("ingest", "detect", "publish", "nothing new")
+REST, IDLE = "rest", "nothing new"
+FLOORS = {
+    "read": "copy and SHA-256 of the file",
+    "land": "its samples as Parquet with zstd",
+    "detect": "unpacking the landed samples",
+    "stitch": "the landed beats as Parquet with zstd",
+    "tables": "copy of database and tables",
+    "pages": "copy of the pages",
+}
 
 
 def main() -> None:
     """Make the recording when it is not there, run the job in a process of its own, print the table."""
     asked = _arguments()
+    programme = asked.folder / "programme"
     if asked.inside:
-        _job(asked.folder / "programme")
+        print(json.dumps(_job(programme)))
         return
     asked.folder.mkdir(parents=True, exist_ok=True)
     recording = asked.folder / f"long-{asked.days:g}d-{asked.fs_hz}hz.edf"
     if not recording.exists():
         demo.write_long_recording(recording, days=asked.days, fs_hz=asked.fs_hz)
-    copy_s = _copy_and_hash(recording, asked.folder / "copy")
-    _programme(asked.folder / "programme", recording, asked.days)
+    _programme(programme, recording, asked.days)
     print(f"{recording.stat().st_size / 1e6:.0f} MB, {asked.days:g} days at {asked.fs_hz} Hz")
-    print(f"{'copy and hash':14} {copy_s:7.2f} s")
     told = subprocess.run(
         [sys.executable, "-m", "tests.benchmarks.whole_job", str(asked.folder), "--inside"],
         check=True, capture_output=True, text=True,
     ).stdout  # fmt: skip
-    for line in told.splitlines():
-        stage, seconds, peak_mb = line.split("\t")
-        ratio = float(seconds) / copy_s
-        print(f"{stage:14} {float(seconds):7.2f} s  {ratio:6.2f} x copy  at most {peak_mb:>4} MB anonymous")
+    floors = _floors(programme, recording, asked.folder / "floor")
+    _print(json.loads(told), floors)
 
 
 def _arguments() -> argparse.Namespace:
@@ -57,16 +72,118 @@ def _arguments() -> argparse.Namespace:
     return parser.parse_args()
 
 
-def _copy_and_hash(source: Path, target: Path) -> float:
-    """Seconds to read, hash and write a file in one pass."""
-    begun = time.perf_counter()
-    digest, block = hashlib.sha256(), bytearray(BLOCK_BYTES)
-    with source.open("rb", buffering=0) as read, target.open("wb", buffering=0) as write:
-        while count := read.readinto(block):
-            digest.update(memoryview(block)[:count])
-            write.write(memoryview(block)[:count])
-    target.unlink()
-    return time.perf_counter() - begun
+def _print(found: dict[str, dict[str, float]], floors: dict[str, float]) -> None:
+    for stage, floor_s in floors.items():
+        seconds, peak_mb = found[stage]["seconds"], found[stage]["peak_mb"]
+        print(
+            f"{stage:12} {seconds:6.2f} s {seconds / floor_s:7.1f} x {floor_s:6.3f} s ({FLOORS[stage]})"
+            f"  at most {peak_mb:.0f} MB anonymous"
+        )
+    print(f"{REST:12} {found[REST]['seconds']:6.2f} s  at most {found[REST]['peak_mb']:.0f} MB anonymous")
+    whole_s = sum(one["seconds"] for stage, one in found.items() if stage != IDLE)
+    floor_s = floors["read"] + floors["land"]
+    print(f"{'whole job':12} {whole_s:6.2f} s {whole_s / floor_s:7.1f} x {floor_s:6.3f} s (floors of read and land)")
+    print(f"{IDLE:12} {found[IDLE]['seconds']:6.2f} s  at most {found[IDLE]['peak_mb']:.0f} MB anonymous")
+
+
+# The job, inside a process of its own
+
+
+def _job(folder: Path) -> dict[str, dict[str, float]]:
+    """Seconds and peak anonymous memory in MB of each stage of a run, and of a run that finds nothing new."""
+    import detectors.analyse
+    from flows import nightly
+    from flows.arrivals import ingest
+
+    stages = Stages()
+    copied = ingest.staged
+
+    @contextmanager
+    def staged(*given: Any, **named: Any) -> Iterator[Any]:
+        with stages.of("read"):
+            opened = copied(*given, **named)
+            copy = opened.__enter__()
+        try:
+            yield copy
+        finally:
+            opened.__exit__(*sys.exc_info())
+
+    published = nightly.publish
+
+    def publish(*given: Any) -> bool:
+        from flows import publication
+
+        publication.build_site = stages.timed("pages", publication.build_site)
+        return published(*given)
+
+    ingest.staged = staged
+    nightly.publish = stages.timed("tables", publish)
+    for stage, owner, name in (
+        ("land", ingest, "ingest"),
+        ("stitch", nightly, "analyse_one"),
+        ("detect", detectors.analyse, "gather"),
+    ):
+        setattr(owner, name, stages.timed(stage, getattr(owner, name)))
+    with stages:
+        nightly.run(folder)
+    idle = Stages()
+    with idle:
+        nightly.run(folder)
+    return stages.found() | {IDLE: idle.found()[REST]}
+
+
+class Stages:
+    """Seconds of each stage without those inside it, and the process's peak anonymous memory meanwhile (Linux)."""
+
+    def __init__(self) -> None:
+        self._seconds: defaultdict[str, float] = defaultdict(float)
+        self._peak_mb: defaultdict[str, float] = defaultdict(float)
+        self._open, self._since, self._done = [REST], time.perf_counter(), threading.Event()
+        self._watch = threading.Thread(target=self._look, daemon=True)
+
+    def __enter__(self) -> None:
+        self._watch.start()
+
+    def __exit__(self, *problem: object) -> None:
+        self._switch()
+        self._done.set()
+        self._watch.join()
+
+    @contextmanager
+    def of(self, stage: str) -> Iterator[None]:
+        """The body belongs to this stage."""
+        self._switch()
+        self._open.append(stage)
+        try:
+            yield
+        finally:
+            self._switch()
+            self._open.pop()
+
+    def timed(self, stage: str, work: Callable[..., Any]) -> Callable[..., Any]:
+        """The same function, which belongs to this stage."""
+
+        def timed(*given: Any, **named: Any) -> Any:
+            with self.of(stage):
+                return work(*given, **named)
+
+        return timed
+
+    def found(self) -> dict[str, dict[str, float]]:
+        """Per stage: seconds and peak_mb."""
+        return {name: {"seconds": self._seconds[name], "peak_mb": self._peak_mb[name]} for name in self._seconds}
+
+    def _switch(self) -> None:
+        now = time.perf_counter()
+        self._seconds[self._open[-1]] += now - self._since
+        self._since = now
+
+    def _look(self) -> None:
+        while not self._done.wait(0.02):
+            lines = Path("/proc/self/status").read_text().splitlines()
+            anonymous_kb = next(int(line.split()[1]) for line in lines if line.startswith("RssAnon"))
+            stage = self._open[-1]
+            self._peak_mb[stage] = max(self._peak_mb[stage], anonymous_kb / 1024)
 
 
 def _programme(folder: Path, recording: Path, days: float) -> None:
@@ -80,54 +197,53 @@ def _programme(folder: Path, recording: Path, days: float) -> None:
     os.link(recording, folder / "inbox" / "SK9000_20260202.edf")
 
 
-def _job(folder: Path) -> None:
-    """Run ingest, detection, publication and an idle run; print stage, seconds and peak anonymous memory in MB."""
-    from flows import nightly, publication, register
-    from flows.arrivals import ingest
-    from flows.progress import Silent
-    from flows.settings import load
-    from warehouse.ledger import Ledger
-
-    settings, silent = load(folder / "programme.toml"), Silent()
-    people, ledger = register.load(folder, settings.programme.zone), Ledger(folder / "lake")
-
-    def detect() -> None:
-        work = [nightly.Work(folder, name, settings) for name in nightly.unanalysed(ledger, settings)]
-        for loads in nightly.analyse_here(work, silent):
-            ledger.commit(loads, note="detect")
-
-    steps = (
-        lambda: ingest.ingest(folder, settings, people, ledger, silent.say),
-        detect,
-        lambda: publication.refresh(folder, settings, people, ledger, silent.say),
-        lambda: nightly.run(folder),
-    )
-    for stage, step in zip(STAGES, steps, strict=True):
-        with Watch() as watch:
-            begun = time.perf_counter()
-            step()
-            seconds = time.perf_counter() - begun
-        print(stage, f"{seconds:.3f}", f"{watch.peak_mb:.0f}", sep="\t")
+# Floors
 
 
-class Watch:
-    """Peak anonymous memory of this process while the block runs, looked at fifty times a second (Linux)."""
+def _floors(programme: Path, recording: Path, scratch: Path) -> dict[str, float]:
+    """Seconds of the least that can be done with the bytes or rows of each stage."""
+    lake, published = programme / "lake", programme / "published"
+    samples = np.memmap(recording, dtype="<i2", mode="r", shape=(recording.stat().st_size // 2,))
+    beats = [pl.read_parquet(path) for path in (lake / "beats").rglob("*.parquet")]
+    steps = {
+        "read": lambda: _copy_and_hash(recording, scratch),
+        "land": lambda: _write_samples(samples, scratch),
+        "detect": lambda: [pl.read_parquet(path).height for path in (lake / "signal").rglob("*.parquet")],
+        "stitch": lambda: [rows.write_parquet(scratch, compression="zstd") for rows in beats],
+        "tables": lambda: _copy([published / "burdenline.duckdb", *_files(published / "tables")], scratch),
+        "pages": lambda: _copy(_files(published / "site"), scratch),
+    }
+    floors = {}
+    for stage, step in steps.items():
+        begun = time.perf_counter()
+        step()
+        floors[stage] = time.perf_counter() - begun
+    scratch.unlink()
+    return floors
 
-    def __enter__(self) -> Watch:
-        self.peak_mb, self._done = 0.0, threading.Event()
-        self._thread = threading.Thread(target=self._look, daemon=True)
-        self._thread.start()
-        return self
 
-    def __exit__(self, *problem: object) -> None:
-        self._done.set()
-        self._thread.join()
+def _copy_and_hash(source: Path, target: Path) -> None:
+    """Read, hash and write a file in one pass."""
+    digest, block = hashlib.sha256(), bytearray(BLOCK_BYTES)
+    with source.open("rb", buffering=0) as read, target.open("wb", buffering=0) as write:
+        while count := read.readinto(block):
+            digest.update(memoryview(block)[:count])
+            write.write(memoryview(block)[:count])
 
-    def _look(self) -> None:
-        while not self._done.wait(0.02):
-            lines = Path("/proc/self/status").read_text().splitlines()
-            anonymous_kb = next(int(line.split()[1]) for line in lines if line.startswith("RssAnon"))
-            self.peak_mb = max(self.peak_mb, anonymous_kb / 1024)
+
+def _write_samples(samples: np.ndarray, target: Path) -> None:
+    for begin in range(0, samples.size, BLOCK_SAMPLES):
+        block = pl.DataFrame({"sample": samples[begin : begin + BLOCK_SAMPLES]})
+        block.write_parquet(target, compression="zstd", compression_level=1)
+
+
+def _files(folder: Path) -> list[Path]:
+    return [path for path in folder.rglob("*") if path.is_file()]
+
+
+def _copy(files: list[Path], target: Path) -> None:
+    for file in files:
+        shutil.copyfile(file, target)
 
 
 if __name__ == "__main__":

@@ -94,13 +94,13 @@ def tables_after_run(folder, **how):
 class Cluster:
     """A scheduler and two workers of one thread, each a process of its own."""
 
-    def __init__(self, folder):
+    def __init__(self, folder, memory_limit="0"):
         file = folder / "scheduler.json"
         local = ("--host", "127.0.0.1", "--port", "0", "--no-dashboard", "--no-show")
         self.scheduler = self._start(folder, "dask_scheduler", "--scheduler-file", str(file), *local)
         wait_until(file.exists)
         self.address = json.loads(file.read_text())["address"]
-        single = ("--nthreads", "1", "--no-nanny", "--no-dashboard", "--memory-limit", "0")
+        single = ("--nthreads", "1", "--no-nanny", "--no-dashboard", "--memory-limit", memory_limit)
         place = ("--local-directory", str(folder), "--host", "127.0.0.1")
         self.workers = [self._start(folder, "dask_worker", self.address, *single, *place) for _ in range(2)]
 
@@ -230,12 +230,32 @@ def test_a_scheduler_without_workers_is_one_sentence(coast, cluster, monkeypatch
 
 
 @needs_dask
-def test_a_recording_that_ends_every_worker_is_named(coast):
-    """A recording on which one worker after the other died is named, with what to do."""
+def test_workers_that_pause_for_want_of_memory_end_the_run(coast, tmp_path, monkeypatch):
+    """Workers that are larger than they may be never begin; the run says so after a while instead of waiting on."""
+    from distributed import Client
+
+    cluster = Cluster(tmp_path, memory_limit="20MB")
+    use_scheduler(coast, cluster.address)
+    try:
+        with Client(cluster.address, timeout=START_S, set_as_default=False) as client:
+            wait_until(lambda: len(client.scheduler_info()["workers"]) == 2)
+        monkeypatch.setattr(workers, "WORKERS_AWAY_S", 2.0)
+        with pytest.raises(WorkersAway, match="have paused for want of memory; give them more"):
+            run(coast)
+    finally:
+        cluster.stop()
+    assert not (coast / "published").exists()
+
+
+@needs_dask
+@pytest.mark.parametrize("problem", ["killed", "refused"])
+def test_a_recording_that_ends_every_worker_is_named(coast, problem):
+    """A recording on which one worker after the other died or got no memory is named, with what to do."""
     from distributed import Future, KilledWorker
 
     future = create_autospec(Future, instance=True)
-    future.result.side_effect = KilledWorker("analyse-SRL-1_20260301", None, 3)
+    killed = KilledWorker("analyse-SRL-1_20260301", None, 3)
+    future.result.side_effect = killed if problem == "killed" else MemoryError()
     with pytest.raises(WorkersError, match="SRL-1_20260301 ended every worker that tried it, out of memory perhaps"):
         workers._analysed(future, Work(coast, "SRL-1_20260301", load(coast / "programme.toml")), "tcp://host:8786")
 
