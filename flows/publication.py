@@ -19,7 +19,7 @@ from dashboards.site import build_site
 from flows.change import trends
 from flows.change.lending import NOTHING_KEPT, Kept
 from flows.change.patient_families import patient_families
-from flows.change.visits import responders, visit_changes, visits
+from flows.change.visits import responders, unchanged, visit_changes, visits
 from flows.over_read import add_reviewed
 from flows.promotion import published_fingerprint
 from flows.register import Register
@@ -31,7 +31,7 @@ from warehouse.publish import publish
 from warehouse.published import Published
 
 SHOWN_ROWS = 3
-EVIDENCE_OF_CHANGES = "change_evidence"
+EVIDENCE_OF_CHANGES, EVIDENCE_OF_VISITS, COMPARED_VISITS = "change_evidence", "visit_evidence", "visits_compared"
 
 
 class CheckFailed(RuntimeError):
@@ -100,7 +100,7 @@ def built(
             build.add(name, frame)
         build.hand_on(EVIDENCE_OF_CHANGES, made.evidence)
         build.add("patient_families", patient_families(build.frame("family_shapes")))
-        for name, frame in _trial_tables(people, measured, settings).items():
+        for name, frame in _trial_tables(build, people, measured, settings).items():
             build.add(name, frame)
         yield build
 
@@ -136,12 +136,26 @@ def _check(build: TrendBuild) -> None:
         )
 
 
-def _trial_tables(people: Register, measured: dict[str, pl.DataFrame], settings: Settings) -> dict[str, pl.DataFrame]:
+def _trial_tables(
+    build: TrendBuild, people: Register, measured: dict[str, pl.DataFrame], settings: Settings
+) -> dict[str, pl.DataFrame]:
     of_visits = visits(people.visits, measured["wear_days"], settings.trial)
     hours_and_days = measured["local_hours"], measured["wear_days"]
-    compared = visit_changes(of_visits, *hours_and_days, settings.change, settings.trial)
-    counted = responders(compared, settings.change.success_limit_pct)
-    return {"visits": of_visits, "visit_changes": compared, "responders": counted}
+    kept = _kept_visits(build, of_visits)
+    table, compared = visit_changes(of_visits, *hours_and_days, settings.change, settings.trial, kept)
+    build.hand_on(EVIDENCE_OF_VISITS, compared.evidence)
+    build.hand_on(COMPARED_VISITS, compared.published["changes"])
+    counted = responders(table, settings.change.success_limit_pct)
+    return {"visits": of_visits, "visit_changes": table, "responders": counted}
+
+
+def _kept_visits(build: TrendBuild, of_visits: pl.DataFrame) -> Kept:
+    """The same of visits, for patients whose visits are planned as they were."""
+    evidence, rows = build.handed(EVIDENCE_OF_VISITS), build.handed(COMPARED_VISITS)
+    if evidence is None or rows is None or build.standing is None:
+        return NOTHING_KEPT
+    patients = [code for code in unchanged(of_visits, build.standing.table("visits")) if code in build.kept]
+    return Kept(patients, evidence, {"changes": rows.filter(pl.col("patient_code").is_in(patients))})
 
 
 def _register_frames(people: Register, change: ChangeSettings) -> dict[str, pl.DataFrame]:

@@ -17,6 +17,7 @@ from detectors.change import Seen, usual_level
 from detectors.spread import GRID, UsualSpread, nothing_lent, programme_spread
 from detectors.variability import UsualLevel, usual_of
 from flows.change.measures import MEASURES, Measure
+from warehouse.schema import PUBLISHED
 
 KEYS = ("patient_code", "therapy_id", "measure")
 FIT = pl.Array(pl.Float64, len(GRID))
@@ -54,6 +55,17 @@ def evidence_of(measure: str, events: pl.DataFrame, of: Seen) -> pl.DataFrame:
         error_variance=pl.Series(error_variance),
         fit=pl.Series(of.fit, dtype=FIT),
     )
+
+
+def all_evidence(kept: Kept, fresh: pl.DataFrame) -> pl.DataFrame:
+    """Evidence of kept patients and of those that were looked at."""
+    return pl.concat([kept.evidence.filter(pl.col("patient_code").is_in(kept.patients)), fresh])
+
+
+def with_kept(kept: Kept, table: str, fresh: pl.DataFrame) -> pl.DataFrame:
+    """Rows of a published table of kept patients and of those that were looked at, in the order of its key."""
+    rows = [kept.rows[table], fresh] if kept.patients else [fresh]
+    return pl.concat(rows).sort(PUBLISHED[table].key)
 
 
 def lent(evidence: pl.DataFrame) -> dict[str, Lent]:

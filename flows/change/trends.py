@@ -17,7 +17,7 @@ from flows.change.clock_rates import rate_by_clock_hour
 from flows.change.cohorts import cohort
 from flows.change.courses import Drift, compared, drift_of, recurrence_days, seen
 from flows.change.extremes import EXTREMES, compared_by_rank, excess_of_runs
-from flows.change.lending import NOTHING_KEPT, Kept, Lent, evidence_of, is_same, lent
+from flows.change.lending import NOTHING_KEPT, Kept, Lent, all_evidence, evidence_of, is_same, lent, with_kept
 from flows.change.level_shifts import level_shifts
 from flows.change.measures import HEART_RATE, MEASURES, Measure, MeasuredDays, measured_days
 from flows.change.rate_effects import rate_effects
@@ -85,7 +85,7 @@ def tables(inputs: Inputs, change: ChangeSettings, wear: WearSettings, kept: Kep
     """
     fresh = inputs.without(kept.patients) if kept.patients else inputs
     looked = _look(fresh, change)
-    evidence = pl.concat([kept.evidence.filter(pl.col("patient_code").is_in(kept.patients)), looked.evidence()])
+    evidence = all_evidence(kept, looked.evidence())
     now = lent(evidence)
     if kept.patients and not is_same(now, lent(kept.evidence)):
         return tables(inputs, change, wear)
@@ -97,16 +97,19 @@ def tables(inputs: Inputs, change: ChangeSettings, wear: WearSettings, kept: Kep
         "series_fits": series_fits(looked.events, looked.cells, fresh.periods),
         "level_shifts": level_shifts(fresh.local_hours, fresh.wear_days),
     }
-    rows = {name: pl.concat([*([kept.rows[name]] if kept.patients else []), made[name]]) for name in PER_PATIENT}
-    whole = {name: table.sort(PUBLISHED[name].key) for name, table in rows.items()}
+    whole = {name: with_kept(kept, name, table) for name, table in made.items()}
     of_all = {"cohort": cohort(whole["changes"], inputs.therapies, change.success_limit_pct)}
     return Tables(whole | of_all, evidence)
 
 
-def changes(inputs: Inputs, change: ChangeSettings, wear: WearSettings) -> pl.DataFrame:
+def changes(inputs: Inputs, change: ChangeSettings, wear: WearSettings, kept: Kept = NOTHING_KEPT) -> Tables:
     """The `changes` table alone, for whatever `therapies` names and `periods` spans."""
-    looked = _look(inputs, change)
-    return _changes(looked, lent(looked.evidence()), change, wear)
+    looked = _look(inputs.without(kept.patients) if kept.patients else inputs, change)
+    evidence = all_evidence(kept, looked.evidence())
+    now = lent(evidence)
+    if kept.patients and not is_same(now, lent(kept.evidence)):
+        return changes(inputs, change, wear)
+    return Tables({"changes": with_kept(kept, "changes", _changes(looked, now, change, wear))}, evidence)
 
 
 def _look(inputs: Inputs, change: ChangeSettings) -> _Looked:

@@ -13,7 +13,8 @@ from typing import Any
 import polars as pl
 
 from flows.change.cohorts import cohort_rows
-from flows.change.trends import Inputs, changes
+from flows.change.lending import NOTHING_KEPT, Kept
+from flows.change.trends import Inputs, Tables, changes
 from flows.settings import ChangeSettings, TrialSettings, WearSettings
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
@@ -60,8 +61,12 @@ def visit_changes(
     wear_days: pl.DataFrame,
     change: ChangeSettings,
     trial: TrialSettings,
-) -> pl.DataFrame:
-    """Rows of `schema.PUBLISHED["visit_changes"]`: every visit against the patient's first, as events are compared."""
+    kept: Kept = NOTHING_KEPT,
+) -> tuple[pl.DataFrame, Tables]:
+    """Rows of `schema.PUBLISHED["visit_changes"]`: every visit against the patient's first, as events are compared.
+
+    Beside them the comparison with all columns of `changes`, of which the next publication may take over rows (`kept`).
+    """
     ordered = of_visits.sort("patient_code", "target_day")
     first = ordered.unique("patient_code", keep="first", maintain_order=True)
     later = ordered.join(first, on=_KEYS, how="anti").select(*_KEYS, "arm", "first_day", "last_day")
@@ -75,8 +80,17 @@ def visit_changes(
         therapies=later.rename({"visit": "therapy_id"}),
     )
     wear = WearSettings(trial.min_analysable_h_per_day, trial.min_days_per_visit)
-    compared = changes(inputs, change, wear)
-    return _published("visit_changes", compared.rename({"therapy_id": "visit"}).join(later, on=_KEYS))
+    compared = changes(inputs, change, wear, kept)
+    rows = compared.published["changes"].rename({"therapy_id": "visit"})
+    return _published("visit_changes", rows.join(later, on=_KEYS)), compared
+
+
+def unchanged(of_visits: pl.DataFrame, standing: pl.DataFrame) -> list[str]:
+    """Patients whose visits are those of the `standing` edition's table, column by column."""
+    same = of_visits.join(standing, on=of_visits.columns, how="inner", nulls_equal=True)
+    counts = [rows.group_by("patient_code").len() for rows in (of_visits, standing, same)]
+    whole = counts[0].join(counts[1], on=["patient_code", "len"]).join(counts[2], on=["patient_code", "len"])
+    return whole["patient_code"].sort().to_list()
 
 
 def responders(compared: pl.DataFrame, success_limit_pct: float) -> pl.DataFrame:

@@ -9,7 +9,8 @@ import pytest
 from detectors.spread import UsualSpread
 from flows.change import trends
 from flows.change.lending import Kept, is_same, lent
-from flows.settings import ChangeSettings, WearSettings
+from flows.change.visits import visit_changes, visits
+from flows.settings import ChangeSettings, TrialSettings, WearSettings
 
 EVENT = date(2026, 3, 20)
 PERIODS = {"baseline": (-28, -1), "settling": (0, 6), "after": (7, 96)}
@@ -38,7 +39,11 @@ def programme(seeds: dict[int, int]) -> trends.Inputs:
     """Patients by number with the seed of their hours, one ablation each."""
     hours = pl.concat([hours_of(patient, seed) for patient, seed in seeds.items()])
     by_day = hours.group_by("patient_code", "local_day")
-    days = by_day.agg(analysable_h=pl.col("analysable_s").sum() / 3600, is_valid_day=pl.lit(True))
+    days = by_day.agg(
+        pl.col("v_beats", "s_beats", "all_beats").sum(),
+        analysable_h=pl.col("analysable_s").sum() / 3600,
+        is_valid_day=pl.lit(True),
+    )
     events = hours.select("patient_code").unique().sort("patient_code").with_columns(
         therapy_id="patient_code", therapy_kind=pl.lit("ablation"), therapy_day=pl.lit(EVENT)
     )  # fmt: skip
@@ -113,3 +118,25 @@ def test_what_is_lent_is_rounded():
     assert [value / 0.05 for value in (spread.log_median - np.log(0.6), spread.sd)] == pytest.approx(
         [round(value / 0.05) for value in (spread.log_median - np.log(0.6), spread.sd)]
     )
+
+
+def test_visits_taken_over_are_those_made_anew():
+    """With new days of one patient, comparisons of visits are the same whether or not the others' are taken over."""
+    trial, before, now = TrialSettings(5.0, 1), programme(BEFORE), programme(BEFORE | {3: 12})
+    codes = before.therapies["patient_code"].to_list()
+    days = [EVENT - timedelta(3), EVENT + timedelta(9)]
+    planned = pl.DataFrame(
+        {"patient_code": codes * 2, "visit": ["first"] * 24 + ["second"] * 24, "target_day": [day for day in days for _ in codes],
+         "days_before": 5, "days_after": 5, "arm": "A"}
+    )  # fmt: skip
+
+    def compared(inputs, *kept):
+        table = visits(planned, inputs.wear_days, trial)
+        return visit_changes(table, inputs.local_hours, inputs.wear_days, ChangeSettings(), trial, *kept)
+
+    _, standing = compared(before)
+    others = [code for code in codes if code != "P03"]
+    rows = {"changes": standing.published["changes"].filter(pl.col("patient_code").is_in(others))}
+    anew, over = compared(now), compared(now, Kept(others, standing.evidence, rows))
+    assert over[0].sort("patient_code", "measure").equals(anew[0].sort("patient_code", "measure"))
+    assert anew[0]["ratio"].is_not_null().sum() > 20

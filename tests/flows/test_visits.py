@@ -7,7 +7,7 @@ import polars as pl
 import pytest
 import statsmodels.api as sm
 
-from flows.change.visits import responders, visit_changes, visits
+from flows.change.visits import responders, unchanged, visit_changes, visits
 from flows.register import RegisterError, load
 from flows.settings import ChangeSettings, TrialSettings
 from warehouse.parts import empty_frame
@@ -70,7 +70,7 @@ def test_no_trial_gives_an_empty_table():
     table = visits(planned(("P1", "V1", None, 0, 5)).clear(), worn("P1", [0]), TrialSettings())
     assert (table.height, tuple(table.columns)) == (0, PUBLISHED["visits"].columns)
     hours = empty_frame(PUBLISHED["local_hours"])
-    compared = visit_changes(table, hours, worn("P1", [0]), ChangeSettings(), TrialSettings())
+    compared, _ = visit_changes(table, hours, worn("P1", [0]), ChangeSettings(), TrialSettings())
     assert (compared.height, responders(compared, 80.0).height) == (0, 0)
 
 
@@ -94,7 +94,7 @@ def test_visits_are_compared_with_the_first_and_responders_counted():
         pl.lit(24.0).alias("analysable_h"), pl.col("v_beats", "s_beats", "all_beats").sum()
     )
     trial = TrialSettings()
-    table = visit_changes(visits(plan, days, trial), hours, days, ChangeSettings(), trial)
+    table, _ = visit_changes(visits(plan, days, trial), hours, days, ChangeSettings(), trial)
     burden = table.filter(pl.col("measure") == "v_burden_pct").sort("patient_code", "visit")
     assert burden["visit"].to_list() == ["V2", "V3"] * 3
     assert burden["verdict"].to_list() == ["fell_beyond_chance", "within_chance"] * 3
@@ -192,3 +192,18 @@ def test_a_rate_model_takes_up_the_table(trial):
     ).fit()
     low, high = fit.conf_int()[3]
     assert low < np.log(0.5) < high < 0
+
+
+def test_visits_planned_as_before_are_unchanged():
+    """A patient with a moved, added or removed visit, or other days worn, is not among the unchanged."""
+    planned = pl.DataFrame(
+        {
+            "patient_code": ["P1", "P1", "P2", "P3"],
+            "visit": ["a", "b", "a", "a"],
+            "arm": None,
+            "wear_days": [3, 4, 2, 1],
+        }
+    )
+    assert unchanged(planned, planned) == ["P1", "P2", "P3"]
+    assert unchanged(planned.with_columns(wear_days=pl.col("wear_days").replace({2: 9})), planned) == ["P1", "P3"]
+    assert unchanged(planned.slice(1), planned) == unchanged(planned, planned.slice(1)) == ["P2", "P3"]
