@@ -22,7 +22,7 @@ class StarvedWorker:
         self._folder = folder
         self._scheduler = self._start("dask_scheduler", "--port", "0", "--no-show", "--scheduler-file", str(file))
         deadline_s = time.monotonic() + START_S
-        while not file.exists() and time.monotonic() < deadline_s:
+        while not (file.exists() and file.read_text().endswith("}")) and time.monotonic() < deadline_s:
             time.sleep(0.1)
         self.address = json.loads(file.read_text())["address"]
         self._worker = self._start_worker(f"{limit_mb}MB")

@@ -98,7 +98,7 @@ class Cluster:
         file = folder / "scheduler.json"
         local = ("--host", "127.0.0.1", "--port", "0", "--no-dashboard", "--no-show")
         self.scheduler = self._start(folder, "dask_scheduler", "--scheduler-file", str(file), *local)
-        wait_until(file.exists)
+        wait_until(lambda: file.exists() and file.read_text().endswith("}"))
         self.address = json.loads(file.read_text())["address"]
         single = ("--nthreads", "1", "--no-nanny", "--no-dashboard", "--memory-limit", memory_limit)
         place = ("--local-directory", str(folder), "--host", "127.0.0.1")
