@@ -108,4 +108,5 @@ def export(folder: Path, what: str, to: Path, *, cut: str = "", study_code: str 
             "Free space or restore write access, then export again"
         ) from problem
     finally:
-        beside.unlink(missing_ok=True)
+        if beside.exists():  # a folder that cannot be written refuses even to remove what is not there
+            beside.unlink()

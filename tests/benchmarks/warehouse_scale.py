@@ -31,6 +31,7 @@ from warehouse.published import Published
 DAYS = 14
 QUARTERS = DAYS * 96
 BEATS = 1_300_000
+EPISODES = 1500
 FINGERPRINT = "bench"
 FIRST_UTC = datetime.fromisoformat("2026-01-01T00:00")
 SETTINGS = {
@@ -81,6 +82,43 @@ def quarter_hours(recording_id: str, seed: int) -> pl.DataFrame:
     )
 
 
+def found_tables(recording_id: str, seed: int) -> dict[str, pl.DataFrame]:
+    """What else is found in 14 days: 5 families with their shapes and quarter hours, 1,500 episodes, a finding."""
+    rng = np.random.default_rng(seed)
+    quarters = [FIRST_UTC + timedelta(minutes=15 * n) for n in range(QUARTERS)]
+    start_s = np.sort(rng.choice(DAYS * 86400, EPISODES, replace=False))
+    rows = {
+        "segments": pl.DataFrame({"segment": [0], "start_utc": FIRST_UTC, "end_utc": FIRST_UTC + timedelta(days=DAYS)}),
+        "findings": pl.DataFrame({"finding_code": ["invented"], "finding_detail": str(seed)}),
+        "families": pl.DataFrame(
+            {"family": range(5), "family_class": "N", "beat_count": 1000 + seed, "shape_mv": rng.normal(size=(5, 90))}
+        ).with_columns(pl.col("shape_mv").arr.to_list()),
+        "family_quarters": pl.DataFrame(
+            {
+                "family": np.repeat(range(5), QUARTERS),
+                "quarter_utc": quarters * 5,
+                "beat_count": rng.poisson(200, 5 * QUARTERS),
+            }
+        ),
+        "episodes": pl.DataFrame(
+            {
+                "episode_kind": "couplet",
+                "segment": 0,
+                "first_sample": start_s * 250,
+                "last_sample": start_s * 250 + 200,
+                "start_utc": [FIRST_UTC + timedelta(seconds=int(start)) for start in start_s],
+                "beat_count": 2,
+                "rate_bpm": rng.normal(140, 9, EPISODES),
+            }
+        ).with_columns(end_utc=pl.col("start_utc") + timedelta(seconds=1), duration_s=pl.lit(1.0)),
+    }
+    own = {"recording_id": pl.lit(recording_id), "fingerprint": pl.lit(FINGERPRINT)}
+    return {
+        table: filled(table, frame.with_columns(**{n: own[n] for n in own if n in schema.LAKE[table].columns}))
+        for table, frame in rows.items()
+    }
+
+
 def beats() -> pl.DataFrame:
     """1.3 M beats of 14 days, one in 25 ventricular."""
     rng = np.random.default_rng(0)
@@ -123,13 +161,17 @@ def land_recording(lake: Path, number: int, seed: int, beats_part: Part) -> dict
         "end_utc": FIRST_UTC + timedelta(days=DAYS),
         "recorded_h": DAYS * 24.0,
     }
-    tallies = write_part(lake, "quarter_hours", name, quarter_hours(name, seed), fingerprint=FINGERPRINT)
-    header = write_part(lake, "recordings", name, filled("recordings", pl.DataFrame([recording])))
-    return {
-        ("recordings", name): [header],
-        ("quarter_hours", name): [tallies],
-        ("beats", name): [beats_part._replace(key=name, path=path)],
+    tables = found_tables(name, seed) | {
+        "quarter_hours": quarter_hours(name, seed),
+        "recordings": filled("recordings", pl.DataFrame([recording])),
     }
+    loads = {
+        (table, name): [
+            write_part(lake, table, name, rows, fingerprint=FINGERPRINT if "fingerprint" in rows.columns else "")
+        ]
+        for table, rows in tables.items()
+    }
+    return loads | {("beats", name): [beats_part._replace(key=name, path=path)]}
 
 
 def register(recordings: int) -> dict[str, pl.DataFrame]:
@@ -153,11 +195,11 @@ def register(recordings: int) -> dict[str, pl.DataFrame]:
 
 @contextmanager
 def timed(what: str, found: dict[str, float]) -> Iterator[None]:
-    """Print and keep the seconds of a block."""
-    begin = time.perf_counter()
+    """Print the seconds of a block; keep those of the processor, which other work on the host moves less."""
+    begin, cpu = time.perf_counter(), time.process_time()
     yield
-    found[what] = time.perf_counter() - begin
-    print(f"{found[what]:8.2f} s  {what}", flush=True)
+    found[what] = time.process_time() - cpu
+    print(f"{time.perf_counter() - begin:8.2f} s, {found[what]:6.2f} s of the processor  {what}", flush=True)
 
 
 def publication(folder: Path, recordings: int, found: dict[str, float], what: str) -> None:
@@ -230,9 +272,10 @@ def measure(folder: Path, recordings: int) -> dict[str, float]:
             loads |= land_recording(lake, number, number, original)
         ledger.commit(loads)
     publication(folder, recordings, found, "first")
-    with timed("commit one recording", found):
-        ledger.commit(land_recording(lake, 1, 999_999, original))
-    publication(folder, recordings, found, "again after one changed")
+    for seed in (999_998, 999_999):  # the second time everything that is done once a process is done
+        with timed("commit one recording", found):
+            ledger.commit(land_recording(lake, 1, seed, original))
+        publication(folder, recordings, found, "again after one changed")
     median_cold(
         folder,
         "daily burden of one patient",
