@@ -11,8 +11,9 @@ from numpy.typing import NDArray
 from detectors import beats, chunks, classify, doubt, episodes, features, findings, quality, rhythm, signal
 from detectors.families import FamilyBook
 from detectors.results import Analysis, Beats, Episodes, QualityWindows, Segment
+from detectors.timing import Timing
 
-DETECTOR_VERSION = "1"
+DETECTOR_VERSION = "2"
 BATCH_BEATS = 4096  # beats that are grouped into families at a time, wherever the chunks were cut
 CHUNK_S = 3600.0
 
@@ -31,7 +32,7 @@ class Gathered(NamedTuple):
 
     found: beats.Kept
     sample: NDArray[np.int64]
-    timing: classify.Timing
+    timing: Timing
     book: FamilyBook
     bad: QualityWindows
     lengths: NDArray[np.int64]  # samples per segment
@@ -171,10 +172,10 @@ def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Foun
     )
 
 
-def conclude(gathered: Gathered, options: Options, weights: NDArray[np.float64] = classify.WEIGHTS) -> Analysis:
+def conclude(gathered: Gathered, options: Options, models: classify.Models = classify.MODELS) -> Analysis:
     """Classes, episodes and findings of gathered beats, with the whole recording as context."""
     found, sample, timing, _, bad, lengths, fs_hz = gathered
-    labels = classify.classify(timing, found.member, found.spread_ms, gathered.book.shape_mv, weights)
+    labels = classify.classify(timing, found.member, found.spread_ms, gathered.book.shape_mv, models)
     is_analysable = quality.is_outside(bad, found.segment, sample)
     bad = _with_doubtful_runs(bad, found, sample, timing, labels, is_analysable)
     is_analysable = quality.is_outside(bad, found.segment, sample)
@@ -199,7 +200,7 @@ def _with_doubtful_runs(
     bad: QualityWindows,
     found: beats.Kept,
     sample: NDArray[np.int64],
-    timing: classify.Timing,
+    timing: Timing,
     labels: classify.Labels,
     is_analysable: NDArray[np.bool_],
 ) -> QualityWindows:
@@ -216,7 +217,7 @@ def _with_doubtful_runs(
 
 def timing_of(
     found: beats.Found, bad: QualityWindows, lengths: NDArray[np.int64], fs_hz: float
-) -> tuple[NDArray[np.int64], classify.Timing]:
+) -> tuple[NDArray[np.int64], Timing]:
     """Stored sample of every beat, and the intervals around it."""
     position = signal.working_to_sample(found.working, fs_hz)
     sample = np.rint(position).astype(np.int64)
@@ -224,7 +225,7 @@ def timing_of(
     gap = quality.has_gap_before(bad, found.segment, sample)
     before, after = rhythm.rr_intervals_ms(found.segment, position, fs_hz, gap)
     del position
-    return sample, classify.Timing(before, after, rhythm.usual_rr_ms(before, after))
+    return sample, Timing(before, after, rhythm.usual_rr_ms(before, after))
 
 
 def episodes_of(table: Beats, fs_hz: float, options: Options) -> Episodes:

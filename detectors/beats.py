@@ -8,9 +8,10 @@ import numpy as np
 from numpy.typing import NDArray
 
 from detectors import confidence, qrs, rhythm
-from detectors.classify import S_EARLY, Labels, Timing
+from detectors.classify import Labels
 from detectors.families import FamilyBook, Membership
 from detectors.results import Beats, Families
+from detectors.timing import S_EARLY, Timing
 
 FIRST_ROOM = 4096  # beats
 RARE = 3  # beats of a family that may be an artefact

@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from detectors.results import Episodes
 
-IRREGULAR_SHARE = 0.6
+IRREGULAR_SHARE = 0.55
 IRREGULAR_MIN_BEATS = 30
 
 

@@ -62,6 +62,7 @@ class Stretch(NamedTuple):
 
 QRS = Stretch(before=15, length=35)  # 120 ms before to 160 ms after the R peak
 QRS_CENTRE = Stretch(before=6, length=13)  # 48 ms either side: free of a T wave before or after
+P_WAVE = Stretch(before=30, length=19)  # 240 to 88 ms before the R peak
 
 
 def unit(stretch_mv: NDArray[np.float32]) -> tuple[NDArray[np.float32], NDArray[np.float32]]:
@@ -82,6 +83,21 @@ def likeness(shape_mv: NDArray[np.float32], stretch: Stretch = QRS) -> NDArray[n
     """Best correlation over all lags of every shape with every other, shape (n, n), amplitude left aside."""
     in_place, shifted = unit(stretch.of(shape_mv))[0], unit(stretch.at_all_lags(shape_mv))[0]
     return np.einsum("ij,klj->ikl", in_place, shifted).max(axis=2, initial=-1)
+
+
+def same_wave(
+    shape_mv: NDArray[np.float32], model: int, stretch: Stretch
+) -> tuple[NDArray[np.float32], NDArray[np.float32], float]:
+    """How like a wave of every shape is to that of shape number `model`, at the best lag; level and slope aside.
+
+    Returns likeness in shape and size (2 ab over aa + bb, 1 the same), the part of the model that a shape holds (ab
+    over bb, which noise does not lower), both of shape (n,), and the root mean square of the model, mV.
+    """
+    direction, size = unit(stretch.at_all_lags(shape_mv))
+    own_direction, own_size = (values[model, REACH] for values in (direction, size))
+    part = (direction @ own_direction) * size / own_size
+    like = 2 * part / (1 + (size / own_size) ** 2)
+    return like.max(axis=1), part.max(axis=1), float(own_size) / stretch.length**0.5
 
 
 def has_mains_ripple(shape_mv: NDArray[np.float32]) -> bool:

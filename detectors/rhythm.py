@@ -16,6 +16,9 @@ QT_AT_60_PER_MIN_MS = 400.0  # from memory: upper middle of normal heart-rate co
 FAST = 0.88  # of the interval before the onset
 MUCH_FASTER = 0.80
 RAMP_BEATS = 3
+FAST_RUN_MS = 650.0  # a longer stretch at under some 90 a minute is a change of rate; ours
+LAGS_BEATS = (1, 2, 3)
+JUMP = 0.08  # of the shorter interval
 ESCAPE_LIMIT = 1.15  # of the usual interval
 
 
@@ -133,7 +136,8 @@ def fast_stretches(
     """Beats of a fast rhythm that begins suddenly, shape (n_beats,): from each onset until an interval is long again.
 
     The intervals stay under FAST of the one before the onset. A stretch of more than RAMP_BEATS counts only when it is
-    much faster or ends in a jump; otherwise the rate merely rose. All onsets advance together, one beat a step.
+    fast in itself (FAST_RUN_MS) and much faster than before or ends in a jump; otherwise the rate merely rose. All
+    onsets advance together, one beat a step.
     """
     onset = np.flatnonzero(is_onset)
     limit = FAST * reference_ms[onset]
@@ -149,8 +153,9 @@ def fast_stretches(
         total[active] += before_ms[at]
     after = np.minimum(onset + length, before_ms.size - 1)
     jump = np.nan_to_num(before_ms[after] / before_ms[np.maximum(after - 1, 0)], nan=0.0) > 1.15
-    much_faster = total / length < MUCH_FASTER * reference_ms[onset]
-    counts = (length <= RAMP_BEATS) | much_faster | jump
+    mean_ms = total / length
+    is_run = (mean_ms < FAST_RUN_MS) & ((mean_ms < MUCH_FASTER * reference_ms[onset]) | jump)
+    counts = (length <= RAMP_BEATS) | is_run
     change = np.zeros(before_ms.size + 1, dtype=np.int32)
     np.add.at(change, onset[counts], 1)
     np.add.at(change, (onset + length)[counts], -1)
@@ -158,24 +163,27 @@ def fast_stretches(
 
 
 def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_beats: int = 24) -> NDArray[np.float32]:
-    """Share of successive RR differences above 8 % near each beat, shape (n_beats,); high in atrial fibrillation.
+    """Share of RR intervals near each beat that differ by over 8 % from an earlier one, shape (n_beats,).
 
-    Only intervals between plain (not ectopic) beats count; 0 where fewer than 8 are near.
+    High in atrial fibrillation. The least share of the three for one, two and three intervals ago: a rhythm in which
+    every second or third beat comes early repeats itself. Only intervals between plain (not ectopic) beats count; 0
+    where fewer than 8 are near.
     """
-    n_beats = rr_ms.size
-    if n_beats < 3:
-        return np.zeros(n_beats, dtype=np.float32)
     is_known = is_plain & ~np.isnan(rr_ms)
     is_known[1:] &= is_plain[:-1]
-    jump = np.zeros(n_beats, dtype=bool)
-    counted = np.zeros(n_beats, dtype=bool)
-    counted[1:] = is_known[1:] & is_known[:-1]
-    jump[1:] = np.abs(np.diff(rr_ms)) > 0.08 * np.minimum(rr_ms[1:], rr_ms[:-1])
-    seen = _near_sum(counted, reach_beats)
-    share = _near_sum(jump & counted, reach_beats).astype(np.float32)
-    share /= np.maximum(seen, 1)
-    share[seen < 8] = 0
-    return share
+    least = np.ones(rr_ms.size, dtype=np.float32)
+    for lag in LAGS_BEATS:
+        jump, counted = np.zeros((2, rr_ms.size), dtype=bool)
+        if rr_ms.size > lag:
+            now, then = rr_ms[lag:], rr_ms[:-lag]
+            counted[lag:] = is_known[lag:] & is_known[:-lag]
+            jump[lag:] = np.abs(now - then) > JUMP * np.minimum(now, then)
+        seen = _near_sum(counted, reach_beats)
+        share = _near_sum(jump & counted, reach_beats).astype(np.float32)
+        share /= np.maximum(seen, 1)
+        share[seen < 8] = 0
+        np.minimum(least, share, out=least)
+    return least
 
 
 def _near_sum(flag: NDArray[np.bool_], reach: int) -> NDArray[np.int32]:

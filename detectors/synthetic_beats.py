@@ -33,6 +33,9 @@ _NORMAL_T = Wave(290, 42, 0.30)
 NORMAL = Shape((_P_WAVE, *_NORMAL_QRS), _NORMAL_T)
 WITHOUT_P = Shape(_NORMAL_QRS, _NORMAL_T)
 ATRIAL = Shape((Wave(-125, 16, -0.10), *_NORMAL_QRS), _NORMAL_T)
+BLOCK = Shape(
+    (_P_WAVE, Wave(-28, 16, 0.55), Wave(5, 22, 0.95), Wave(48, 18, 0.35)), Wave(310, 50, -0.30)
+)  # left bundle
 VENTRICULAR = (
     Shape((Wave(-34, 16, 0.35), Wave(0, 25, 1.45), Wave(52, 22, -0.45)), Wave(300, 60, -0.48)),
     Shape((Wave(-42, 18, 0.22), Wave(0, 30, -1.35), Wave(58, 20, 0.25)), Wave(310, 62, 0.50)),
@@ -46,8 +49,11 @@ KINDS: tuple[tuple[str, Shape], ...] = (
     ("S", ATRIAL),
     *(("V", shape) for shape in VENTRICULAR),
     ("N", WITHOUT_P),
+    ("N", BLOCK),
 )
-NORMAL_KIND, ATRIAL_KIND, FIRST_VENTRICULAR_KIND, WITHOUT_P_KIND = 0, 1, 2, 2 + len(VENTRICULAR)
+NORMAL_KIND, ATRIAL_KIND, FIRST_VENTRICULAR_KIND = 0, 1, 2
+WITHOUT_P_KIND = FIRST_VENTRICULAR_KIND + len(VENTRICULAR)
+BLOCK_KIND = WITHOUT_P_KIND + 1
 FIRST_FUSION_KIND = len(KINDS)  # a fusion of the normal beat with a ventricular family
 
 
@@ -94,21 +100,24 @@ def select(beats: TrueBeats, chosen: NDArray[np.bool_] | slice) -> TrueBeats:
 def exact_beats(rhythm_s: list[tuple[str, float]], *, fs_hz: int = 250, first_s: float = 0.5) -> TrueBeats:
     """Beats from (kind, seconds since the beat before); the first interval counts from `first_s`.
 
-    Kinds: N, S, V or V0 to V3 (ventricular family), F or F0 to F3 (fusion of a normal beat with that family).
+    Kinds: N, B (conducted with bundle branch block, class N), S, V or V0 to V3 (ventricular family), F or F0 to F3
+    (fusion of a normal beat with that family).
     """
     names = [name for name, _ in rhythm_s]
     kinds = np.array([_kind(name) for name in names], dtype=np.int64)
     at_s = first_s + np.cumsum([interval_s for _, interval_s in rhythm_s])
-    return TrueBeats(np.round(at_s * fs_hz).astype(np.int64), np.array([name[0] for name in names]), kinds)
+    beat_class = np.array(["N" if name == "B" else name[0] for name in names])
+    return TrueBeats(np.round(at_s * fs_hz).astype(np.int64), beat_class, kinds)
 
 
 def _kind(name: str) -> int:
     family = int(name[1:] or 0)
-    if name[0] in "NS" and name in ("N", "S"):
-        return {"N": NORMAL_KIND, "S": ATRIAL_KIND}[name]
+    plain = {"N": NORMAL_KIND, "S": ATRIAL_KIND, "B": BLOCK_KIND}
+    if name in plain:
+        return plain[name]
     if name[0] in "VF" and family < len(VENTRICULAR):
         return family + (FIRST_VENTRICULAR_KIND if name[0] == "V" else FIRST_FUSION_KIND)
-    raise ValueError(f"kind {name!r}; expected N, S, V0 to V{len(VENTRICULAR) - 1} or F0 to F{len(VENTRICULAR) - 1}")
+    raise ValueError(f"kind {name!r}; expected N, B, S, V0 to V{len(VENTRICULAR) - 1} or F0 to F{len(VENTRICULAR) - 1}")
 
 
 def ventricular_share(rhythm: Rhythm, clock_h: float, seed: int, rng: np.random.Generator) -> float:

@@ -65,6 +65,16 @@ def test_fast_stretch_lasts_until_an_interval_is_long_again() -> None:
     assert not rhythm.fast_stretches(rising, reference, onset).any()
 
 
+def test_long_stretch_at_a_slow_rate_is_a_change_of_rate() -> None:
+    """Thirty beats at 63 a minute after a rate half as fast are no fast stretch, three are."""
+    for n_beats, expected in ((30, 0), (3, 3)):
+        before, _ = around([1860] * 20 + [950] * n_beats + [1860] * 5)
+        onset = np.zeros(before.size, dtype=bool)
+        onset[21] = True
+        reference = np.full(before.size, 1860, dtype=np.float32)
+        assert rhythm.fast_stretches(before, reference, onset).sum() == expected
+
+
 def test_irregularity_tells_fibrillation_from_sinus_rhythm() -> None:
     """Random intervals score near 1, a steady rhythm with some ectopic beats near 0."""
     rng = np.random.default_rng(2)
@@ -75,3 +85,11 @@ def test_irregularity_tells_fibrillation_from_sinus_rhythm() -> None:
     plain = np.ones(steady.size, dtype=bool)
     plain[11::12] = False
     assert np.median(rhythm.irregularity(steady, plain)) < 0.1
+
+
+def test_rhythm_that_repeats_itself_is_not_irregular() -> None:
+    """Every second or third beat early: the intervals jump, but the same ones come back."""
+    for group in ([600, 1150], [900, 600, 1200]):
+        repeated, _ = around(group * 60)
+        plain = np.ones(repeated.size, dtype=bool)
+        assert np.median(rhythm.irregularity(repeated, plain)) < 0.1

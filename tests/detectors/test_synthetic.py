@@ -135,7 +135,7 @@ def test_exact_classes():
 
 def test_unknown_kind_is_refused():
     """A kind that is not drawn is refused with the known ones."""
-    with pytest.raises(ValueError, match="kind 'V7'; expected N, S, V0 to V3"):
+    with pytest.raises(ValueError, match="kind 'V7'; expected N, B, S, V0 to V3"):
         synthetic_beats.exact_beats([("V7", 1.0)])
 
 

@@ -1,0 +1,46 @@
+"""Facts of conduction: block, early beats that repeat, and changes of rate are not ventricular or supraventricular beats.
+
+Common practice, no source, for all of them.
+"""
+
+import numpy as np
+import pytest
+
+from tests.standards.test_trade_facts import FULL_PAUSE, analysed, classes, those
+
+NORMAL_STRETCH = [("N", 0.85)] * 60
+
+
+@pytest.mark.parametrize(
+    "block",
+    [
+        [("B", 0.72)] * 40,  # comes with a faster rate, as it often does
+        [("B", 0.85)] * 40,
+        [("B", 0.85), ("N", 0.85)] * 30,  # every second beat
+    ],
+    ids=["faster", "same rate", "alternating"],
+)
+def test_block_behind_its_p_wave_is_conducted(block):
+    """Wide beats on time at the usual distance behind the P wave are conducted with block, neither V nor S."""
+    _, analysis, _ = analysed((NORMAL_STRETCH + block) * 8)
+    assert np.mean(analysis.beats.beat_class == "N") > 0.99
+
+
+def test_premature_beats_are_found_in_a_blocked_rhythm():
+    """Where all normal beats are wide, early wide beats with a pause are ventricular although their shapes are alike."""
+    beats, analysis, found = analysed(([("B", 1.0)] * 12 + FULL_PAUSE[:1] + [("B", 1.4)]) * 20)
+    assert classes(analysis, those(beats, found, "V")) == {"V"}
+    assert classes(analysis, those(beats, found, "N")) == {"N"}
+
+
+def test_atrial_bigeminy_is_supraventricular():
+    """Every second beat early with an atrial P wave: those beats are S; strict alternation is no fibrillation."""
+    beats, analysis, found = analysed(([("N", 1.0)] * 20 + [("S", 0.6), ("N", 1.15)] * 30) * 6)
+    assert np.mean(analysis.beats.beat_class[those(beats, found, "S")] == "S") > 0.95
+    assert np.mean(analysis.beats.beat_class[those(beats, found, "N")] == "N") > 0.98
+
+
+def test_end_of_a_two_to_one_block_is_no_tachycardia():
+    """When every P wave is conducted again the rate doubles to 63 a minute: normal beats, not a supraventricular run."""
+    _, analysis, _ = analysed(([("N", 0.95)] * 40 + [("N", 1.86)] * 20) * 6)
+    assert np.mean(analysis.beats.beat_class == "N") > 0.99
