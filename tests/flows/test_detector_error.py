@@ -31,7 +31,10 @@ def counted(ectopy: str, *, with_af: bool) -> list[np.ndarray]:
 
 
 def test_what_differs_between_periods_of_one_patient_is_as_measured():
-    """The repeatability is the spread of ln(found / expert) between halves, what missed and false beats count taken off."""
+    """The repeatability is the upper 95 % bound of the spread of ln(found / expert) between halves, counting taken off.
+
+    The bound, as most of what a few records show is the counting of their missed and false beats.
+    """
     differences, by_counting = [], []
     for halves in counted("V", with_af=True):
         beats, expert, found, both = halves.T
