@@ -73,14 +73,16 @@ def classify(
 def beat_terms(marks: Marks, member: families.Membership, judged: Judged) -> Iterator[NDArray[np.float32]]:
     """Terms of the model for every beat, one by one, each of shape (n_beats,): its family, and how it differs from it.
 
-    A beat of no family is compared with the main normal one and takes its family's odds from the one most like it.
+    A beat of no family is compared with the main normal one and takes its family's odds from the one most like it; only
+    an early one is believed to be ventricular for that likeness.
     """
     is_loose = member.family < 0
     own = np.where(is_loose, judged.main, member.family)
     (run_lean,) = ventricular.means(member.family, judged.odds.size, judged.run_lean)
     family_odds = np.clip(judged.odds, -ventricular.SURE, ventricular.SURE).astype(np.float32)
     yield np.ones(own.size, dtype=np.float32)
-    yield family_odds[np.where(is_loose, member.nearest, own)]
+    odds = family_odds[np.where(is_loose, member.nearest, own)]
+    yield np.where(is_loose & ~marks.early, np.minimum(odds, 0), odds)
     for value, usual in (
         (marks.early, judged.habits.early),
         (marks.lean, judged.habits.lean),

@@ -9,6 +9,7 @@ from detectors.chunks import SHAPE_BEFORE, SHAPE_LENGTH
 from detectors.families import Membership
 from detectors.features import spread_ms
 from detectors.rhythm import usual_rr_ms
+from detectors.timing import Timing
 
 T = (np.arange(SHAPE_LENGTH) - SHAPE_BEFORE) * 8.0
 T_WAVE = np.exp(-0.5 * ((T - 290) / 45) ** 2)
@@ -23,7 +24,7 @@ def classified(rr_ms: list[float], family: list[int], *shapes: np.ndarray, narro
     before = np.array(rr_ms, dtype=np.float32)
     after = np.append(before[1:], np.nan).astype(np.float32)
     before[0] = np.nan
-    timing = classify.Timing(before, after, usual_rr_ms(before, after))
+    timing = Timing(before, after, usual_rr_ms(before, after))
     number = np.array(family, dtype=np.int16)
     member = Membership(number, np.maximum(number, 0), np.where(number >= 0, 0.995, 0.7).astype(np.float32))
     shape_mv = np.stack(shapes).astype(np.float32)
@@ -91,11 +92,26 @@ def test_lone_beat_follows_its_nearest_family() -> None:
     number[[20, 40]] = -1
     before = np.array(rr, dtype=np.float32)
     after = np.append(before[1:], 800).astype(np.float32)
-    timing = classify.Timing(before, after, usual_rr_ms(before, after))
+    timing = Timing(before, after, usual_rr_ms(before, after))
     nearest = np.array(family, dtype=np.int16)
     member = Membership(number.astype(np.int16), nearest, np.where(number < 0, 0.8, 0.995).astype(np.float32))
     labels = classify.classify(timing, member, number * np.float32(1), np.stack([NARROW, WIDE]).astype(np.float32))
     assert labels.beat_class[20] == "V" and labels.beat_class[40] == "N"
+
+
+def test_lone_beat_that_is_not_early_is_no_ventricular_one() -> None:
+    """A beat on time without a family is not ventricular for being most like the ventricular family."""
+    rr, family = ([800] * 9 + [500, 1100]) * 10, ([0] * 9 + [1, 0]) * 10
+    number = np.array(family)
+    number[[25, 20]] = -1  # one on time, one early
+    before = np.array(rr, dtype=np.float32)
+    after = np.append(before[1:], 800).astype(np.float32)
+    timing = Timing(before, after, usual_rr_ms(before, after))
+    member = Membership(
+        number.astype(np.int16), np.where(number < 0, 1, number).astype(np.int16), np.full(number.size, 0.9, np.float32)
+    )
+    labels = classify.classify(timing, member, number * np.float32(1), np.stack([NARROW, WIDE]).astype(np.float32))
+    assert labels.beat_class[[20, 25]].tolist() == ["V", "N"]
 
 
 def test_no_family_at_all_is_unclassifiable() -> None:
@@ -103,7 +119,7 @@ def test_no_family_at_all_is_unclassifiable() -> None:
     one = np.array([800.0], dtype=np.float32)
     none = np.array([-1], dtype=np.int16)
     labels = classify.classify(
-        classify.Timing(one, one, one), Membership(none, none, one * 0), one, np.empty((0, SHAPE_LENGTH), np.float32)
+        Timing(one, one, one), Membership(none, none, one * 0), one, np.empty((0, SHAPE_LENGTH), np.float32)
     )
     assert labels.beat_class.tolist() == ["Q"]
 
