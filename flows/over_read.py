@@ -28,7 +28,6 @@ from warehouse.schema import LAKE
 
 NEAR = timedelta(milliseconds=150)  # as for beats
 
-
 _NO_FAMILIES = Families._make(np.empty(0) for _ in Families._fields)
 
 

@@ -29,7 +29,7 @@ def pages(site: Path) -> list[str]:
     return [*whole, *patients, f"recordings/{recording}", f"review/{recording}"]
 
 
-@pytest.fixture(scope="session")
+@pytest.fixture(scope="module")  # no longer: while it is open, playwright keeps an event loop running in this thread
 def browser() -> Iterator[Any]:
     sync_api = pytest.importorskip("playwright.sync_api", reason="playwright is not installed (extra: test)")
     program = os.environ.get("BURDENLINE_BROWSER") or next(filter(None, map(shutil.which, NAMES)), None)
