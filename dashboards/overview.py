@@ -32,8 +32,8 @@ class WearStrip(NamedTuple):
 def context(tables: Tables) -> dict[str, Any]:
     """Return everything that the overview shows."""
     wear_days = tables.whole("wear_days")
-    last_day: date | None = wear_days["local_day"].max()  # type: ignore[assignment]  # a DATE column
-    first_day: date | None = wear_days["local_day"].min()  # type: ignore[assignment]  # a DATE column
+    days: list[date] = wear_days["local_day"].to_list()
+    first_day, last_day = min(days, default=None), max(days, default=None)
     calendar = calendar_days(first_day, last_day) if first_day and last_day else None
     attention = tables.whole("attention").sort("attention_rank", "patient_code", "attention_code")
     ranks = _first_ranks(attention)

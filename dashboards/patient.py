@@ -72,9 +72,9 @@ def range_words(measured: pl.DataFrame) -> str:
     """Return what the timeline shows, in one sentence that names its figures."""
     if measured.is_empty():
         return "No analysable beat yet: ventricular burden is not known"
-    low, high = measured["v_burden_pct"].min(), measured["v_burden_pct"].max()
+    shares_pct = measured["v_burden_pct"].to_list()
     on_days = words.counted(measured.height, "wear day")
-    between = f"{words.number(low, 1)} and {words.number(high, 1)}"  # type: ignore[arg-type]  # a DOUBLE column
+    between = f"{words.number(min(shares_pct), 1)} and {words.number(max(shares_pct), 1)}"
     return f"Ventricular burden between {between} % on {on_days}"
 
 

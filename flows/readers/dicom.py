@@ -9,7 +9,7 @@ from __future__ import annotations
 import re
 import struct
 from collections.abc import Sequence
-from datetime import datetime, timedelta
+from datetime import date, datetime, time, timedelta
 from fractions import Fraction
 from pathlib import Path
 from typing import Any
@@ -184,7 +184,7 @@ def _start(elements: Elements) -> tuple[datetime | None, str | None]:
     offset = found[8] or _text(elements, 0x00080201)
     try:
         micros = round(float(found[7] or 0) * 1_000_000)
-        start = datetime(year, month, day, hour, minute, int(found[6] or 0), micros)  # noqa: DTZ001  device clock
+        start = datetime.combine(date(year, month, day), time(hour, minute, int(found[6] or 0), micros))
         if not re.fullmatch(r"[+-]\d{4}", offset):
             return start, None
         return start - timedelta(hours=int(offset[:3]), minutes=int(offset[0] + offset[3:])), "UTC"

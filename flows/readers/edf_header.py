@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import re
 from dataclasses import dataclass
-from datetime import datetime
+from datetime import date, datetime, time
 from fractions import Fraction
 from pathlib import Path
 
@@ -203,15 +203,15 @@ def _start(fixed: bytes) -> tuple[datetime | None, bool]:
     """Start as wall clock of the device, and whether it is only the placeholder of an anonymised file."""
     recording = text_of(fixed[88:168])
     clock = _integers(text_of(fixed[176:184]))
-    date = _full_date(recording) or _short_date(text_of(fixed[168:176]))
-    if date is None or len(clock) != 3:
+    day = _full_date(recording) or _short_date(text_of(fixed[168:176]))
+    if day is None or len(clock) != 3:
         return None, False
     try:
-        start = datetime(*date, clock[0], clock[1], clock[2])  # noqa: DTZ001  wall clock of the device, its zone is not in the file
+        start = datetime.combine(date(*day), time(clock[0], clock[1], clock[2]))
     except ValueError:
         return None, False
     # 01.01.85 is what the specification tells anonymisers to write.
-    placeholder = date == (1985, 1, 1) and _full_date(recording) is None
+    placeholder = day == (1985, 1, 1) and _full_date(recording) is None
     return start, placeholder
 
 

