@@ -6,6 +6,7 @@
 from __future__ import annotations
 
 import multiprocessing
+import socket
 import time
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor, as_completed
@@ -85,12 +86,14 @@ def run(
     actor_code: str | None = None,
     analyse_all: Analyse | None = None,
     flow_run: str = "",
+    take_over: bool = False,
 ) -> Outcome:
     """Bring the published tables and pages of a programme folder up to date with inbox, register and settings.
 
     `actor_code` stands in the history beside edits of register and settings that this run is the first to see.
-    `flow_run` names the run in the log (`flows.run_log`).
-    Raises SettingsError, RegisterError, FolderBusy, LedgerError or CheckFailed; the publication then stays as it was.
+    `flow_run` names the run in the log (`flows.run_log`). With `take_over` a store of another folder becomes this one's.
+    Raises SettingsError, RegisterError, FolderBusy, StoreError, LedgerError or CheckFailed; the publication then stays as
+    it was.
     """
     from flows import last_run, run_log
     from warehouse import layout
@@ -103,7 +106,7 @@ def run(
     run_id = f"run-{datetime.now(UTC):%Y%m%dT%H%M%S%f}"
     with folder_lock(folder, wait_s), last_run.noted(folder) as end, run_log.opened(folder, flow_run or run_id):
         outcome = _bring_up_to_date(
-            folder, settings, reporter, actor_code, analyse_all or analyse_where_set, end, run_id
+            folder, settings, reporter, actor_code, analyse_all or analyse_where_set, end, run_id, take_over
         )
         end.outcome = outcome.outcome
         run_log.tell("run ended", outcome=outcome.outcome)
@@ -118,15 +121,17 @@ def _bring_up_to_date(
     analyse_all: Analyse,
     end: RunEnd,
     run_id: str,
+    take_over: bool,
 ) -> Outcome:
     from flows import edits, memory, register, run_log
     from flows.arrivals import ingest
-    from warehouse import cache, layout
+    from warehouse import layout, owner
     from warehouse.ledger import Ledger
 
     memory.give_back()
     people = register.load(folder, settings.programme.zone)
-    cache.settle(folder / "lake", settings.lake.store)
+    where = f"the folder {folder.resolve()} of host {socket.gethostname()}"
+    owner.claim(folder / "lake", settings.lake.store, run_id, where, take_over=take_over)
     layout.refuse_missing_lake(folder)
     ledger = Ledger(folder / "lake")
     edits.note_edits(folder / "lake", settings, people, ledger, actor_code)

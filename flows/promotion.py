@@ -11,6 +11,7 @@ from flows.settings import Settings
 from warehouse.audit import Change, change_loads
 from warehouse.cache import PROMOTION_FILE, write_shared
 from warehouse.ledger import Ledger
+from warehouse.owner import refuse_other
 from warehouse.parts import read_part
 
 PRESENT = "present"
@@ -37,9 +38,11 @@ def promote(
 ) -> None:
     """Publish `fingerprint` from the next run on; `present` follows the detector and the settings again.
 
-    Raises PromotionError for a fingerprint without results. The change is kept in the history with its reason.
+    Raises PromotionError for a fingerprint without results, StoreError where the lake's store is another folder's. The
+    change is kept in the history with its reason.
     """
     check_known(ledger, fingerprint)
+    refuse_other(lake)
     change = Change("promotion", "fingerprint", published_fingerprint(lake, settings), fingerprint, reason)
     now = datetime.now(UTC).replace(tzinfo=None)
     ledger.commit(change_loads(lake, [change], actor_code=actor_code, happened_utc=now), note="promote")

@@ -23,6 +23,7 @@ from deltalake.exceptions import DeltaError, TableNotFoundError
 from warehouse import layout, schema
 from warehouse.cache import refresh, store_of
 from warehouse.layout import check_layout, found_layout, note_layout
+from warehouse.owner import refuse_other
 from warehouse.parts import Part, file_sha256
 from warehouse.store import Store, StoreError
 
@@ -258,8 +259,9 @@ def tidy(lake: Path, grace_s: float, *, keep: Collection[str] = ()) -> list[str]
     The ledger's own files that were written anew since go as well.
 
     `keep` holds paths relative to the lake that a publication or a data cut still reads. The grace time protects parts
-    that a running load has written and not yet committed.
+    that a running load has written and not yet committed. Raises StoreError where the store is another folder's.
     """
+    refuse_other(lake)
     # Files are listed before the ledger is read: a part committed in between is then in force, not missed.
     oldest_s, store = time.time() - grace_s, store_of(lake)
     files = [path for table in schema.LAKE for path in (lake / table).glob("*/*") if path.stat().st_mtime <= oldest_s]

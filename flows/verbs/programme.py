@@ -32,6 +32,9 @@ def _run_arguments(parser: argparse.ArgumentParser) -> None:
     json_option(parser)
     actor_option(parser)
     parser.add_argument(
+        "--take-over", action="store_true", help="go on with the lake of a store on which another folder worked last"
+    )
+    parser.add_argument(
         "--wait", metavar="SECONDS", type=float, default=0.0, help="wait this long for another run to end"
     )
 
@@ -40,7 +43,13 @@ def _run(asked: argparse.Namespace) -> int:
     from flows import nightly
     from flows.progress import reporter
 
-    outcome = nightly.run(asked.folder, reporter=reporter(as_json=asked.json), wait_s=asked.wait, actor_code=asked.by)
+    outcome = nightly.run(
+        asked.folder,
+        reporter=reporter(as_json=asked.json),
+        wait_s=asked.wait,
+        actor_code=asked.by,
+        take_over=asked.take_over,
+    )
     if asked.json:
         print(json.dumps(outcome.as_dict()))
     else:

@@ -45,11 +45,12 @@ def test_the_tables_are_those_of_a_lake_in_its_folder(coast, expected):
 
 
 def test_a_lost_cache_is_made_again_from_the_store(coast, expected):
-    """When the lake's folder is lost the next run gets the parts back and analyses nothing anew."""
+    """When the lake's folder is lost a run that takes the store over gets the parts back and analyses nothing anew."""
     run(coast)
     shutil.rmtree(coast / "lake")
+    assert main(["run", str(coast)]) == 1, "by itself it could as well be another folder"
     said = []
-    assert tables_after_run(coast, reporter=Say(said.append)) == expected
+    assert tables_after_run(coast, reporter=Say(said.append), take_over=True) == expected
     assert not any(line.startswith("  analysed") for line in said)
 
 
