@@ -18,8 +18,7 @@ from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.special import polygamma
-from scipy.stats import norm
+from scipy.special import ndtri, polygamma
 
 from detectors.chance import CHANCE_LIMIT, Chance, at_most, fewest_by_chance, interval, mean, most_by_chance, trimmed
 from detectors.spread import (
@@ -178,7 +177,7 @@ def _days_to_settle(chance: Chance, level: Levels, weight: Floats, log_ratio: Fl
     now = mean(chance.weight, chance.sd**2)
     own = mean(weight, level.variance[1::2])
     days = level.days[1::2]
-    allowed = (log_ratio / norm.ppf(1 - CHANCE_LIMIT)) ** 2 - (now - mean(weight, level.day_variance[1::2]))
+    allowed = (log_ratio / ndtri(1 - CHANCE_LIMIT)) ** 2 - (now - mean(weight, level.day_variance[1::2]))
     more = np.ceil(_divide(own * days, allowed)) - days
     return np.where(np.isfinite(log_ratio), np.maximum(more, 1.0), np.nan)
 

@@ -6,7 +6,7 @@ from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.stats import beta, norm, t
+from scipy.special import betaincinv, ndtri, stdtrit
 
 Floats = NDArray[np.float64]
 
@@ -43,7 +43,7 @@ def wilson_share(successes: int, of: int) -> Share:
     _check_share(successes, of)
     if of == 0:
         return Share(np.nan, np.nan, np.nan)
-    z, p = norm.ppf(0.975), successes / of
+    z, p = ndtri(0.975), successes / of
     centre = (p + z**2 / (2 * of)) / (1 + z**2 / of)
     half = z / (1 + z**2 / of) * np.sqrt(p * (1 - p) / of + z**2 / (4 * of**2))
     return Share(p, max(0.0, float(centre - half)), min(1.0, float(centre + half)))
@@ -54,8 +54,8 @@ def exact_share(successes: int, of: int) -> Share:
     _check_share(successes, of)
     if of == 0:
         return Share(np.nan, np.nan, np.nan)
-    low = beta.ppf(0.025, successes, of - successes + 1) if successes else 0.0
-    high = beta.ppf(0.975, successes + 1, of - successes) if successes < of else 1.0
+    low = betaincinv(successes, of - successes + 1, 0.025) if successes else 0.0
+    high = betaincinv(successes + 1, of - successes, 0.975) if successes < of else 1.0
     return Share(successes / of, float(low), float(high))
 
 
@@ -64,7 +64,7 @@ def geometric_mean_ratio(ratios: ArrayLike) -> MeanRatio:
     logs = np.log(np.asarray(ratios, dtype=float))
     if len(logs) < 3:
         return MeanRatio(float(np.exp(logs.mean())) if len(logs) else np.nan, np.nan, np.nan)
-    half = t.ppf(0.975, len(logs) - 1) * logs.std(ddof=1) / np.sqrt(len(logs))
+    half = stdtrit(len(logs) - 1, 0.975) * logs.std(ddof=1) / np.sqrt(len(logs))
     ratio, low, high = np.exp(logs.mean() + np.array([0.0, -half, half]))
     return MeanRatio(float(ratio), float(low), float(high))
 
@@ -79,7 +79,7 @@ def agreement(first: ArrayLike, second: ArrayLike) -> Agreement:
     if n < 3:
         raise ValueError(f"{n} pairs; expected at least three")
     mean, sd = float(difference.mean()), float(difference.std(ddof=1))
-    half = float(t.ppf(0.975, n - 1) * sd / np.sqrt(n))
+    half = float(stdtrit(n - 1, 0.975) * sd / np.sqrt(n))
     return Agreement(mean, sd, mean - 2 * sd, mean + 2 * sd, mean - half, mean + half)
 
 

@@ -9,7 +9,7 @@ from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.stats import norm, rankdata
+from scipy.special import ndtr, ndtri
 
 Floats = NDArray[np.float64]
 
@@ -33,11 +33,18 @@ def rank_shift(before: Floats, after: Floats, excess: float = 0.0) -> RankShift:
     """
     if min(len(before), len(after)) == 0:
         return RankShift(1.0, 1.0)
-    doubled = np.rint(2 * rankdata(np.concatenate([before, after]))).astype(np.int64)
+    doubled = _doubled_ranks(np.concatenate([before, after]))
     seen = int(doubled[len(before) :].sum())
     tails = _exact_tails if len(doubled) <= EXACT_DAYS else _normal_tails
     widening = np.sqrt(1 + excess / (1 / len(before) + 1 / len(after)))
-    return RankShift(*(float(norm.sf(norm.isf(tail) / widening)) for tail in tails(doubled, len(after), seen)))
+    return RankShift(*(float(ndtr(ndtri(tail) / widening)) for tail in tails(doubled, len(after), seen)))
+
+
+def _doubled_ranks(values: Floats) -> NDArray[np.int64]:
+    """Twice the rank of each value, which is whole for tied values too: those share their mean rank."""
+    _, which, count = np.unique(values, return_inverse=True, return_counts=True)
+    last = np.cumsum(count)
+    return (2 * last - count + 1)[which]
 
 
 def _exact_tails(doubled: NDArray[np.int64], chosen: int, seen: int) -> tuple[float, float]:
@@ -58,4 +65,4 @@ def _normal_tails(doubled: NDArray[np.int64], chosen: int, seen: int) -> tuple[f
         return 1.0, 1.0
     sd = rank_sd * np.sqrt(chosen * (n - chosen) / (n - 1))
     off = (seen - chosen * float(doubled.mean())) / 2
-    return float(norm.cdf((off + 0.5) / sd)), float(norm.sf((off - 0.5) / sd))
+    return float(ndtr((off + 0.5) / sd)), float(ndtr((0.5 - off) / sd))

@@ -9,7 +9,7 @@ from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.stats import pearsonr, t
+from scipy.special import stdtr, stdtrit
 
 from detectors.rates import FitError, clustered_covariance, fit_poisson
 
@@ -49,9 +49,13 @@ def dependence(per_hour: ArrayLike, rate_bpm: ArrayLike) -> Dependence:
     beats, rate = np.asarray(per_hour, dtype=float), np.asarray(rate_bpm, dtype=float)
     if len(beats) < FEWEST_HOURS or np.ptp(beats) == 0 or np.ptp(rate) == 0:
         return Dependence(np.nan, np.nan, UNKNOWN)
-    r, p = pearsonr(beats, rate)
+    r = float(np.corrcoef(beats, rate)[0, 1])
+    freedom = len(beats) - 2
+    with np.errstate(divide="ignore"):
+        deviate = abs(r) * np.sqrt(freedom / np.maximum(1 - r**2, 0))
+    p = 2 * float(stdtr(freedom, -deviate))
     kind = INDEPENDENT if p >= SIGNIFICANT else FOLLOWS if r > 0 else OPPOSES
-    return Dependence(float(r), float(p), kind)
+    return Dependence(r, p, kind)
 
 
 def expected_change_pct(rate_change_pct: float, kind: str) -> float:
@@ -86,6 +90,6 @@ def ratio_at_equal_rate(
     except FitError:
         return unknown
     covariance = clustered_covariance(fit, y, design, np.searchsorted(clusters, day))
-    error = t.ppf(0.975, len(clusters) - 2) * np.sqrt(covariance[1, 1] + extra_variance)
+    error = stdtrit(len(clusters) - 2, 0.975) * np.sqrt(covariance[1, 1] + extra_variance)
     low, ratio, high = np.exp(fit.coefficients[1] + np.array([-error, 0.0, error]))
     return EqualRate(float(ratio), float(low), float(high))

@@ -13,8 +13,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.optimize import brentq
-from scipy.special import digamma, gammaln, xlogy
-from scipy.stats import beta, binomtest, norm, t
+from scipy.special import betaincinv, digamma, gammaln, ndtri, stdtrit, xlogy
 
 Floats = NDArray[np.float64]
 
@@ -22,7 +21,7 @@ MAX_STEPS = 100
 TOLERANCE = 1e-11  # change of every coefficient at which a fit has settled
 LOG_ALPHA = (-14.0, 6.0)  # where ln alpha is searched; below it counts are Poisson
 LARGEST_RHO = 0.8  # correlation of a day with the day before beyond which a series is a trend
-TWO_SIDED_95 = float(norm.ppf(0.975))
+TWO_SIDED_95 = float(ndtri(0.975))
 
 
 class FitError(ValueError):
@@ -47,7 +46,7 @@ class RateFit(NamedTuple):
     def student_ratio(self, column: int, inflation: float = 1.0) -> tuple[float, float, float]:
         """The same with Student's t in place of the normal value, the variance multiplied by `inflation`."""
         freedom = len(self.fitted) - len(self.coefficients)
-        return self._ratio(column, t.ppf(0.975, freedom) * np.sqrt(self.covariance[column, column] * inflation))
+        return self._ratio(column, stdtrit(freedom, 0.975) * np.sqrt(self.covariance[column, column] * inflation))
 
     def _ratio(self, column: int, error: float) -> tuple[float, float, float]:
         centre = self.coefficients[column]
@@ -219,11 +218,13 @@ def compare_rates(count_1: int, exposure_1: float, count_2: int, exposure_2: flo
     """
     if exposure_1 <= 0 or exposure_2 <= 0:
         raise FitError(f"exposures are {exposure_1} and {exposure_2}; expected two positive numbers")
+    from scipy.stats import binomtest  # loads for half a second, which every run would pay for
+
     total, scale = count_1 + count_2, exposure_2 / exposure_1
     if total == 0:
         return RateRatio(np.nan, 0.0, np.inf, 1.0)
-    low = beta.ppf(0.025, count_1, count_2 + 1) if count_1 else 0.0
-    high = beta.ppf(0.975, count_1 + 1, count_2) if count_2 else 1.0
+    low = betaincinv(count_1, count_2 + 1, 0.025) if count_1 else 0.0
+    high = betaincinv(count_1 + 1, count_2, 0.975) if count_2 else 1.0
     ratio, low, high = (share / (1 - share) * scale if share < 1 else np.inf for share in (count_1 / total, low, high))
     p = binomtest(count_1, total, exposure_1 / (exposure_1 + exposure_2)).pvalue
     return RateRatio(float(ratio), float(low), float(high), float(p))

@@ -140,7 +140,7 @@ def _beat_counts(analysis: Analysis, clock: _Clock, book: _Book) -> dict[str, ND
         for name in BEAT_CLASSES:
             counts[f"{name.lower()}_beats"] += book.count_rows(quarter[good & (beats.beat_class[rows] == name)])
         counts["all_beats"] += book.count_rows(quarter[good])
-        np.add.at(counts["rr_sum_s"], quarter[usable], beats.rr_before_ms[rows][usable] / 1000.0)
+        counts["rr_sum_s"] += book.total_rows(quarter[usable], beats.rr_before_ms[rows][usable] / 1000.0)
         counts["rr_count"] += book.count_rows(quarter[usable])
     return counts
 
@@ -215,11 +215,12 @@ class _Book:
     def count_rows(self, row: NDArray[np.intp]) -> NDArray[np.int64]:
         return np.bincount(row, minlength=len(self.quarters)).astype(np.int64)
 
-    def total(self, quarter: NDArray[np.int64], amount: NDArray) -> NDArray[np.float64]:
-        return np.bincount(self.row(quarter), weights=amount, minlength=len(self.quarters)).astype(np.float64)
+    def total_rows(self, row: NDArray[np.intp], amount: NDArray) -> NDArray[np.float64]:
+        return np.bincount(row, weights=amount, minlength=len(self.quarters)).astype(np.float64)
 
     def seconds(self, start_us: NDArray[np.int64], end_us: NDArray[np.int64]) -> NDArray[np.float64]:
-        return self.total(*_spread(start_us, end_us)).round(6)
+        quarter, seconds = _spread(start_us, end_us)
+        return self.total_rows(self.row(quarter), seconds).round(6)
 
     def largest(self, quarter: NDArray[np.int64], value: NDArray) -> NDArray[np.float64]:
         best = np.full(len(self.quarters), np.nan)

@@ -10,11 +10,11 @@ from typing import NamedTuple
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
-from scipy.stats import norm, t
+from scipy.special import ndtri, stdtrit
 
 Floats = NDArray[np.float64]
 
-ONE_SIDED_95 = float(norm.ppf(0.95))
+ONE_SIDED_95 = float(ndtri(0.95))
 MIN_PATIENTS = 5  # fewer patients say too little on how patients differ
 TYPICAL_WEAR_DAYS = 7  # length of wear whose spread stands for "within a period" where a period has one day only
 
@@ -108,7 +108,7 @@ def untreated_pairs_limit_pct(baseline: ArrayLike, later: ArrayLike, at_baseline
     s = np.sqrt(residual @ residual / (x.size - 2))
     x0 = np.log(np.asarray(at_baseline, dtype=float))
     error = s * np.sqrt(1 + 1 / x.size + (x0 - x.mean()) ** 2 / spread)
-    lower = y.mean() + slope * (x0 - x.mean()) - t.ppf(0.95, x.size - 2) * error
+    lower = y.mean() + slope * (x0 - x.mean()) - stdtrit(x.size - 2, 0.95) * error
     return -100.0 * np.expm1(lower - x0)
 
 

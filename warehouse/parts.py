@@ -182,9 +182,9 @@ def _steps(samples: NDArray[np.int16]) -> NDArray[np.uint16]:
 def _samples(steps: pl.Series) -> NDArray[np.int16]:
     samples, end, last = np.empty(steps.len(), np.int16), 0, 0
     sums = np.empty(_CACHED_SAMPLES, np.int32)  # adding up is four times as fast in 32 bit, and the low 16 are the same
-    for chunk in steps.get_chunks():  # as Parquet was read: no copy
-        for a in range(0, chunk.len(), _CACHED_SAMPLES):
-            step = chunk[a : a + _CACHED_SAMPLES].to_numpy()
+    for chunk in (chunk.to_numpy() for chunk in steps.get_chunks()):  # as Parquet was read: no copy
+        for a in range(0, chunk.size, _CACHED_SAMPLES):
+            step = chunk[a : a + _CACHED_SAMPLES]
             out, end = samples[end : end + step.size], end + step.size
             np.right_shift(step, 1, out=out.view(np.uint16))
             out ^= -(step & 1).view(np.int16)
@@ -290,7 +290,7 @@ class SignalReader:
         self._ends = {segment: np.cumsum([p.rows for p in blocks]) for segment, blocks in self._blocks.items()}
         self._decoded: deque[tuple[Part, NDArray[np.int16]]] = deque(maxlen=2)
         self._helper = ThreadPoolExecutor(1) if ahead else None
-        self._coming: dict[Part, Future[pl.Series]] = {}
+        self._coming: dict[Part, Future[NDArray[np.int16]]] = {}
 
     @property
     def segment_samples(self) -> dict[int, int]:
@@ -320,11 +320,12 @@ class SignalReader:
         for known, samples in self._decoded:
             if known == part:
                 return samples
-        steps = self._coming[part].result() if part in self._coming else self._steps(part)
+        decoded = self._coming[part].result() if part in self._coming else self._decode(part)
         if self._helper:
-            self._coming = {next_one: self._helper.submit(self._steps, next_one) for next_one in following}
-        self._decoded.append((part, _samples(steps)))
-        return self._decoded[-1][1]
+            self._coming = {next_one: self._helper.submit(self._decode, next_one) for next_one in following}
+        self._decoded.append((part, decoded))
+        return decoded
 
-    def _steps(self, part: Part) -> pl.Series:
-        return pl.read_parquet(_content(self._lake, part, self._check_hash), columns=["step"]).to_series()
+    def _decode(self, part: Part) -> NDArray[np.int16]:
+        content = _content(self._lake, part, self._check_hash)
+        return _samples(pl.read_parquet(content, columns=["step"]).to_series())

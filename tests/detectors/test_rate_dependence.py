@@ -2,6 +2,7 @@
 
 import numpy as np
 import pytest
+from scipy.stats import pearsonr
 
 from detectors.rate_dependence import (
     FOLLOWS,
@@ -31,6 +32,15 @@ def test_kind_of_dependence(slope, kind):
     """Counts that follow, oppose or ignore the rate are sorted so."""
     counts, _, rate, _, _ = days_of_hours(np.random.default_rng(1), slope=slope, ratio=1, rate_change=0, day_sd=0.0)
     assert dependence(counts, rate).kind == kind
+
+
+@pytest.mark.parametrize("noise", [0.0, 0.5, 5.0, 50.0])
+def test_correlation_and_its_probability_are_pearsons(noise):
+    """r and p equal those of scipy, for hours on a line too."""
+    rng = np.random.default_rng(2)
+    rate = 60 + 20 * rng.random(48)
+    counts = 3 * rate + noise * rng.standard_normal(48)
+    assert dependence(counts, rate)[:2] == pytest.approx(pearsonr(counts, rate), rel=1e-9, abs=1e-12)
 
 
 def test_few_or_constant_hours_are_unknown():

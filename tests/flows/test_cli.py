@@ -58,6 +58,13 @@ def test_help_loads_nothing_heavy():
     assert done.stdout.splitlines()[-1] == "[]"
 
 
+def test_a_run_loads_no_library_of_distributions():
+    """scipy.stats takes as long to load as the trend tables of a patient take to make; scipy.special has what is used."""
+    asked = "import sys, flows.publication; print('scipy.stats' in sys.modules)"
+    done = subprocess.run([sys.executable, "-c", asked], capture_output=True, text=True, check=True)
+    assert done.stdout.strip() == "False"
+
+
 @pytest.mark.parametrize(
     ("words", "code", "sentence"),
     [
