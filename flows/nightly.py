@@ -125,7 +125,7 @@ def _bring_up_to_date(
 ) -> Outcome:
     from flows import edits, memory, register, run_log
     from flows.arrivals import ingest
-    from warehouse import layout, owner
+    from warehouse import cache, layout, owner
     from warehouse.ledger import Ledger
 
     memory.give_back()
@@ -150,6 +150,8 @@ def _bring_up_to_date(
     changed = publish(
         folder, settings, people, ledger, reporter, lambda: _note_run(run_id, folder, ledger, arrivals, "not_published")
     )
+    if settings.lake.cache_gb:
+        cache.shrink(folder / "lake", settings.lake.cache_gb * 1e9)
     return Outcome(
         outcome=_outcome(changed, arrivals.quarantined),
         accepted=arrivals.accepted,

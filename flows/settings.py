@@ -139,6 +139,12 @@ class LakeSettings:
     store: str = _setting(
         "", "S3-compatible place of the lake, s3://bucket/prefix; lake/ is then a cache of it; empty: in lake/ alone"
     )
+    cache_gb: float = _setting(
+        0.0,
+        "most of lake/ that stays after a run where there is a store, GB: the oldest samples leave it; 0: any",
+        0,
+        1e6,
+    )
 
 
 @dataclass(frozen=True)

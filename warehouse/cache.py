@@ -82,6 +82,28 @@ def complete(lake: Path, sha256_of: Mapping[str, str]) -> list[str]:
     return store.fetch(lake, sha256_of) if store else []
 
 
+def shrink(lake: Path, most_bytes: float) -> list[str]:
+    """Remove samples from the cache, those landed or got longest ago first, until the folder holds at most `most_bytes`.
+
+    Only what the store holds goes, and only samples, which are got again one by one when they are read. Returns the paths
+    that went; nothing goes where there is no store.
+    """
+    store = store_of(lake)
+    files = [(path.stat(), path) for path in lake.rglob("*") if path.is_file()] if store else []
+    too_much = sum(stat.st_size for stat, _ in files) - most_bytes
+    if store is None or too_much <= 0:
+        return []
+    there = {found.path: found.bytes for found in store.objects("signal")}
+    went = []
+    for stat, path in sorted(files, key=lambda file: (file[0].st_mtime_ns, file[1])):
+        name = path.relative_to(lake).as_posix()
+        if too_much > 0 and there.get(name) == stat.st_size:
+            path.unlink()
+            too_much -= stat.st_size
+            went.append(name)
+    return went
+
+
 def refresh(lake: Path, store: Store) -> None:
     """Bring the shared files of the cache up to date; those that the store does not hold are left as they are."""
     for name in SHARED_FILES:

@@ -110,6 +110,16 @@ def test_every_verb_works_on_a_lake_in_a_store(coast, bucket_url, capsys):
     assert main(["thaw", str(coast), "visit-1", "--check"]) == 0, "the cut's parts come back from the store"
 
 
+def test_a_limited_cache_keeps_no_samples_that_it_need_not(coast, expected):
+    """With a small [lake] cache_gb the samples leave lake/ after the run; tables are the same and nothing is done anew."""
+    toml = coast / "programme.toml"
+    toml.write_text(toml.read_text().replace("cache_gb = 0.0", "cache_gb = 1e-6"))
+    assert tables_after_run(coast) == expected
+    assert not list((coast / "lake" / "signal").rglob("*.parquet"))
+    assert run(coast).outcome == "unchanged"
+    assert main(["verify", str(coast)]) == 0
+
+
 def test_a_store_away_leaves_the_folder_as_it_was(coast, s3_server, monkeypatch):
     """When the store stops answering in the night the run ends with a sentence; the publication stands, files stay."""
     run(coast)

@@ -1,18 +1,20 @@
 """A lake in an object store: the folder is a cache, the ledger at the URL says what is in force, nothing is half there."""
 
+import os
 import shutil
 import socket
 import sys
 import threading
 from pathlib import Path
 
+import numpy as np
 import polars as pl
 import pytest
 
 from warehouse import cache, store
-from warehouse.cache import settle
+from warehouse.cache import settle, shrink
 from warehouse.ledger import Ledger, tidy, verify
-from warehouse.parts import Part, PartError, file_sha256, read_part, write_part
+from warehouse.parts import Part, PartError, SignalReader, file_sha256, read_part, write_part, write_signal
 from warehouse.store import Store, StoreAway, StoreError
 
 pytestmark = pytest.mark.filterwarnings("ignore")  # of the server's libraries
@@ -121,6 +123,22 @@ def test_tidy_removes_what_nothing_refers_to_in_both_places(lake: Path, bucket_u
     left = [found.path for found in Store(bucket_url).objects("fingerprints")]
     assert sorted(left) == sorted([kept.path, present.path])
     assert Ledger(lake).parts() == [present]
+
+
+def test_the_oldest_samples_leave_a_cache_that_grew_too_large(lake: Path) -> None:
+    """Samples that the store holds go, the oldest first and no more than needed; all others stay, and what went is read."""
+    rows = _row_part(lake, "a")
+    old, new = (write_signal(lake, key, 0, 0, np.arange(n, dtype=np.int16)) for key, n in (("old", 900), ("new", 901)))
+    Ledger(lake).commit(_load(rows) | _load(old) | _load(new))
+    uncommitted = write_signal(lake, "uncommitted", 0, 0, np.arange(902, dtype=np.int16))
+    for age_s, part in enumerate((new, old, rows, uncommitted)):
+        os.utime(lake / part.path, (1e9 - age_s, 1e9 - age_s))
+    size = sum(path.stat().st_size for path in lake.rglob("*") if path.is_file())
+    assert shrink(lake, size) == []
+    assert shrink(lake, size - 1) == [old.path]
+    assert shrink(lake, 0) == [new.path]
+    assert (lake / rows.path).is_file() and (lake / uncommitted.path).is_file()
+    assert SignalReader(lake, [old]).read(0, 0, 900).tolist() == list(range(900))
 
 
 def test_a_lake_of_its_own_moves_into_an_empty_store(tmp_path: Path, bucket_url: str) -> None:
@@ -237,6 +255,7 @@ def test_a_lake_without_store_asks_nothing(tmp_path: Path, monkeypatch: pytest.M
     part = _row_part(tmp_path, "a")
     Ledger(tmp_path).commit(_load(part))
     assert read_part(tmp_path, part).height == 1 and verify(tmp_path) == [] and tidy(tmp_path, -1.0) == []
+    assert shrink(tmp_path, 0) == []
     shutil.rmtree(tmp_path / "fingerprints")
     with pytest.raises(PartError, match="is missing in"):
         read_part(tmp_path, part)
