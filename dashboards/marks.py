@@ -5,7 +5,7 @@ A mark's text is the patient's or the clinic's and is shown as published, or not
 
 from __future__ import annotations
 
-from datetime import date, timedelta
+from datetime import date, datetime, timedelta
 from typing import Any, NamedTuple
 
 import polars as pl
@@ -38,16 +38,15 @@ def _told(said: list[str]) -> str:
     return "; ".join(said[:TOLD_A_DAY]) + (f"; {more} more" if more > 0 else "")
 
 
-def within(strip: dict[str, Any], marks: pl.DataFrame, zone: str) -> list[StripMark]:
-    """Return the marks that lie within a strip (a row of `strips`), in order of time."""
-    start = strip["start_utc"]
-    end = start + timedelta(seconds=len(strip["samples_mv"]) / strip["fs_hz"])
-    inside = marks.filter(pl.col("mark_utc").is_between(start, end, closed="left")).sort("mark_utc", "mark_text")
+def within(start_utc: datetime, length_s: float, pressed: list[dict[str, Any]], zone: str) -> list[StripMark]:
+    """Return the marks (rows of `marks`, in order of time) that lie within a strip."""
+    end_utc = start_utc + timedelta(seconds=length_s)
     return [
         StripMark(
-            round((mark["mark_utc"] - start).total_seconds() * UNITS_PER_S),
+            round((mark["mark_utc"] - start_utc).total_seconds() * UNITS_PER_S),
             f"{words.local_time(mark['mark_utc'], zone):%H:%M:%S}",
             mark["mark_text"],
         )
-        for mark in inside.iter_rows(named=True)
+        for mark in pressed
+        if start_utc <= mark["mark_utc"] < end_utc
     ]

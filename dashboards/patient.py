@@ -2,12 +2,13 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from typing import Any
 
 import polars as pl
 
-from dashboards import addresses, charts, marks, strips, words
+from dashboards import addresses, charts, words
+from dashboards.drawings import Drawings
 from dashboards.tables import Tables
 
 FAMILIES_SHOWN = 5  # of each recording
@@ -16,8 +17,8 @@ ECTOPIC = ("V", "F", "S")
 TIED = "\N{NO-BREAK SPACE}"
 
 
-def context(tables: Tables, patient_code: str) -> dict[str, Any]:
-    """Return everything that the page of one patient shows."""
+def context(tables: Tables, patient_code: str, drawings: Mapping[str, Drawings]) -> dict[str, Any]:
+    """Return everything that the page of one patient shows; `drawings` are of the patient's recordings, by their id."""
     rows = {name: tables.of_patient(name, patient_code) for name in Tables.BY_PATIENT}
     wear_days = rows["wear_days"].sort("local_day")
     therapies = rows["therapies"].sort("therapy_day", "therapy_id")
@@ -46,8 +47,8 @@ def context(tables: Tables, patient_code: str) -> dict[str, Any]:
         "level_shifts": rows["level_shifts"].sort("local_day").rows(named=True),
         "densest": _densest(rows["local_hours"]),
         "clock_hours": _by_clock(rows["local_hours"]),
-        "recordings": [_recording(tables, row) for row in recordings.rows(named=True)],
-        "strips": list(_strips(tables, recordings)),
+        "recordings": [_recording(tables, row, drawings[row["recording_id"]]) for row in recordings.rows(named=True)],
+        "strips": list(_strips(drawings[recording_id] for recording_id in _ends(recordings["recording_id"].to_list()))),
     }
 
 
@@ -162,40 +163,22 @@ def _ectopic(tables: Tables, recording_id: str) -> pl.DataFrame:
     return families.sort("beat_count", "family", descending=[True, False]).head(FAMILIES_SHOWN)
 
 
-def _recording(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
+def _recording(tables: Tables, recording: dict[str, Any], drawings: Drawings) -> dict[str, Any]:
     return recording | {
         "page": addresses.recording_page(recording["recording_id"]),
         "reviewed": next(tables.of_recording("reviewed", recording["recording_id"]).iter_rows(named=True), None),
-        "families": draw_families(_ectopic(tables, recording["recording_id"])),
+        "families": [row for row in drawings.families if row["family_class"] in ECTOPIC][:FAMILIES_SHOWN],
     }
 
 
-def draw_families(families: pl.DataFrame) -> list[dict[str, Any]]:
-    """Return family rows with the drawing of their averaged beat."""
-    drawings = strips.draw_shapes(families)
-    rows = families.drop("shape_mv").rows(named=True)
-    return [row | {"drawing": drawing} for row, drawing in zip(rows, drawings, strict=True)]
+def _ends(recording_ids: list[str]) -> list[str]:
+    """First and last of the recordings, which may be one or none."""
+    return list(dict.fromkeys([*recording_ids[:1], *recording_ids[-1:]]))
 
 
-def _strips(tables: Tables, recordings: pl.DataFrame) -> Iterable[dict[str, Any]]:
-    """Yield the first ectopic strips of the first and the last recording; the calmest of each goes on paper."""
-    ends = (
-        list(dict.fromkeys(recordings["recording_id"].gather([0, recordings.height - 1]))) if recordings.height else []
-    )
-    for recording_id in ends:
-        kept = tables.large("strips", recording_id).filter(pl.col("beat_class").is_in(ECTOPIC)).head(STRIPS_SHOWN)
-        zone = recordings.row(by_predicate=pl.col("recording_id") == recording_id, named=True)["zone"]
-        drawn = draw_rows(kept, zone, tables.of_recording("marks", recording_id))
+def _strips(ends: Iterable[Drawings]) -> Iterable[dict[str, Any]]:
+    """Yield the first ectopic strips of some recordings; the calmest of each goes on paper."""
+    for drawings in ends:
+        drawn = [row for row in drawings.strips if row["beat_class"] in ECTOPIC][:STRIPS_SHOWN]
         calmest = min(drawn, key=lambda row: row["drawing"].height, default=None)
         yield from (row | {"on_paper": row is calmest} for row in drawn)
-
-
-def draw_rows(rows: pl.DataFrame, zone: str, of_patient: pl.DataFrame) -> list[dict[str, Any]]:
-    """Return strip rows with their drawing, their local time and the patient's marks within them."""
-    drawings = strips.draw_strips(rows)
-    inside = [marks.within(row, of_patient, zone) for row in rows.iter_rows(named=True)]
-    kept = rows.drop("samples_mv", "beat_samples", "beat_classes").rows(named=True)
-    return [
-        row | {"drawing": drawing, "zone": zone, "page": addresses.recording_page(row["recording_id"]), "marks": found}
-        for row, drawing, found in zip(kept, drawings, inside, strict=True)
-    ]

@@ -8,6 +8,7 @@ import os
 import shutil
 from collections.abc import Callable, Iterable, Mapping
 from importlib.resources import files
+from io import BytesIO
 from pathlib import Path
 from typing import Any
 
@@ -93,7 +94,9 @@ class Press:
 
     def _csv(self, frame: pl.DataFrame) -> str:
         head = [f"{self._frame['programme_name']}, burdenline {self._frame['version']}", *CAUTIONS]
-        return "".join(f"# {' '.join(line.split())}\n" for line in head) + frame.with_columns(_NO_FORMULA).write_csv()
+        rows = BytesIO()
+        frame.lazy().with_columns(_NO_FORMULA).sink_csv(rows)
+        return "".join(f"# {' '.join(line.split())}\n" for line in head) + rows.getvalue().decode()
 
     def _write(self, name: str, text: str) -> None:
         target = self._site / name

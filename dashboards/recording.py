@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+from itertools import takewhile
 from typing import Any
 
 import polars as pl
 
 from dashboards import addresses, charts, words
-from dashboards.patient import ECTOPIC, draw_families, draw_rows
+from dashboards.drawings import Drawings
+from dashboards.patient import ECTOPIC
 from dashboards.tables import Tables
 
 EPISODES_SHOWN = 60
@@ -18,17 +20,16 @@ FAMILIES_ALWAYS = 4
 LISTED_EPISODES = ("run", "sv_run", "pause", "bigeminy", "trigeminy", "irregular")
 
 
-def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
+def context(tables: Tables, recording: dict[str, Any], drawings: Drawings) -> dict[str, Any]:
     """Return everything that the page of one recording (a row of `recordings`) shows."""
     recording_id, zone = recording["recording_id"], recording["zone"]
     hours = tables.of_recording("hours", recording_id).sort("hour_utc")
-    families = tables.of_recording("families", recording_id).sort("beat_count", "family", descending=[True, False])
     episodes = tables.large("episodes", recording_id)
     counted = episodes.filter("is_counted")
     windows = tables.large("quality_windows", recording_id).sort("duration_s", "start_utc", descending=[True, False])
-    drawn_families = _large(families)
+    families = drawings.families
+    shown = _large(families)
     marks = tables.of_recording("marks", recording_id).sort("mark_utc", "mark_text")
-    drawn = draw_rows(tables.large("strips", recording_id), zone, marks)
     return {
         "recording": recording,
         "patient_page": addresses.patient_page(recording["patient_code"]) if recording["patient_code"] else None,
@@ -39,17 +40,17 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
         "hours": hours.rows(named=True),
         "wearing": charts.wearing(hours, marks, zone) if hours.height else None,
         "marks": marks.rows(named=True),
-        "families": draw_families(drawn_families),
-        "other_families": families.tail(-drawn_families.height).drop("shape_mv").rows(named=True),
-        "families_count": families.height,
-        "families_share_pct": drawn_families["share_pct"].sum(),
+        "families": shown,
+        "other_families": families[len(shown) :],
+        "families_count": len(families),
+        "families_share_pct": sum(row["share_pct"] for row in shown),
         "episode_counts": _counts(counted, "episode_kind"),
         "episodes_left_out": episodes.filter(pl.col("is_automatic") & ~pl.col("is_counted")).height,
         "episodes": _longest(counted),
         "episodes_shown": EPISODES_SHOWN,
         "windows": windows.head(WINDOWS_SHOWN).rows(named=True),
         "windows_count": windows.height,
-        "strips": [(name, of_class) for name, of_class in _by_class(drawn) if of_class],
+        "strips": [(name, of_class) for name, of_class in _by_class(drawings.strips) if of_class],
     }
 
 
@@ -73,10 +74,10 @@ def _findings(recording: dict[str, Any], of_detector: pl.DataFrame) -> list[str]
     ]
 
 
-def _large(families: pl.DataFrame) -> pl.DataFrame:
+def _large(families: list[dict[str, Any]]) -> list[dict[str, Any]]:
     """Return the families worth drawing, of rows that are sorted by size: the first few, and others of some share."""
-    is_large = (pl.col("share_pct") >= SMALLEST_SHARE_PCT) | (pl.int_range(pl.len()) < FAMILIES_ALWAYS)
-    return families.filter(is_large).head(FAMILIES_SHOWN)
+    others = takewhile(lambda row: row["share_pct"] >= SMALLEST_SHARE_PCT, families[FAMILIES_ALWAYS:FAMILIES_SHOWN])
+    return [*families[:FAMILIES_ALWAYS], *others]
 
 
 def _counts(frame: pl.DataFrame, column: str) -> dict[str, int]:

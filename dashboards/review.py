@@ -11,7 +11,7 @@ from typing import Any
 import polars as pl
 
 from dashboards import addresses
-from dashboards.patient import draw_families, draw_rows
+from dashboards.drawings import Drawings
 from dashboards.tables import Tables
 
 FAMILIES_SHOWN = 40
@@ -20,19 +20,17 @@ EPISODES_SHOWN = 30
 READ_EPISODES = ("run", "sv_run", "pause")
 
 
-def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
+def context(tables: Tables, recording: dict[str, Any], drawings: Drawings) -> dict[str, Any]:
     """Return everything that the over-read sheet of one recording (a row of `recordings`) shows."""
     recording_id = recording["recording_id"]
     sheet = tables.of_recording("review_sheet", recording_id).sort("review_rank")
-    shapes = {row["family"]: row for row in draw_families(tables.of_recording("families", recording_id))}
-    marks = tables.of_recording("marks", recording_id)
-    drawn = draw_rows(tables.large("strips", recording_id), recording["zone"], marks)
+    shapes = {row["family"]: row for row in drawings.families}
     said = _said(tables.of_recording("decisions", recording_id), recording["fingerprint"])
     items = [
         row | {"shape": shapes[row["family"]], "said": said.get(row["family"], [])}
         for row in sheet.head(FAMILIES_SHOWN).rows(named=True)
     ]
-    shown = _with_strips(items, drawn)
+    shown = _with_strips(items, drawings.strips)
     beside = [strip for item in shown for strip in item["strips"]]
     return {
         "recording": recording,
@@ -40,7 +38,7 @@ def context(tables: Tables, recording: dict[str, Any]) -> dict[str, Any]:
         "items": shown,
         "families_count": sheet.height,
         "effort": next(tables.of_recording("review_effort", recording_id).iter_rows(named=True), None),
-        "other_strips": [strip for strip in drawn if not any(strip is shown for shown in beside)],
+        "other_strips": [strip for strip in drawings.strips if not any(strip is shown for shown in beside)],
         "episodes": _episodes(tables.large("episodes", recording_id)),
     }
 

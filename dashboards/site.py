@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from dashboards import addresses, cohort, methods, overview, patient, recording, review, trail
+from dashboards.drawings import Drawings
 from dashboards.press import Press
 from dashboards.tables import PublishedTables, Tables
 
@@ -26,8 +27,6 @@ def build_site(
     _write_programme(press, tables)
     for code in tables.whole("patients")["patient_code"]:
         _write_patient(press, tables, code)
-    for row in tables.whole("recordings").iter_rows(named=True):
-        _write_recording(press, tables, row)
     press.close()
 
 
@@ -55,20 +54,25 @@ def _write_programme(press: Press, tables: Tables) -> None:
 
 
 def _write_patient(press: Press, tables: Tables, code: str) -> None:
+    """Write a patient's page and those of the patient's recordings."""
+    recordings = tables.of_patient("recordings", code).rows(named=True)
+    drawings = {row["recording_id"]: Drawings(tables, row) for row in recordings}
     press.page(
         addresses.patient_page(code), "patient.html.j2", tables.marks_of_patient(code),
-        lambda: patient.context(tables, code), lambda: patient.data_files(tables, code),
+        lambda: patient.context(tables, code, drawings), lambda: patient.data_files(tables, code),
     )  # fmt: skip
+    for row in recordings:
+        _write_recording(press, tables, row, drawings[row["recording_id"]])
 
 
-def _write_recording(press: Press, tables: Tables, row: dict[str, Any]) -> None:
+def _write_recording(press: Press, tables: Tables, row: dict[str, Any], drawings: Drawings) -> None:
     """Write a recording's page and its over-read sheet."""
     recording_id = row["recording_id"]
     marks = tables.marks_of_recording(recording_id)
     press.page(
         addresses.recording_page(recording_id), "recording.html.j2", marks,
-        lambda: recording.context(tables, row), lambda: recording.data_files(tables, recording_id),
+        lambda: recording.context(tables, row, drawings), lambda: recording.data_files(tables, recording_id),
     )  # fmt: skip
     press.page(
-        addresses.review_page(recording_id), "review.html.j2", marks, lambda: review.context(tables, row)
+        addresses.review_page(recording_id), "review.html.j2", marks, lambda: review.context(tables, row, drawings)
     )  # fmt: skip

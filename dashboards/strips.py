@@ -67,37 +67,41 @@ def draw_shapes(families: pl.DataFrame) -> list[Drawing]:
 def _points(traces: pl.DataFrame) -> list[tuple[str, int, int]]:
     """Return path text, lowest and highest y (mV units, upwards) of each row, computed for all rows at once."""
     long = (
-        traces.with_row_index("row")
-        .explode("samples_mv", empty_as_null=True)
-        .with_columns(x=((pl.int_range(pl.len()).over("row")) * UNITS_PER_S / pl.col("fs_hz")).round().cast(pl.Int32))
-        .with_columns(mv=pl.col("samples_mv") - pl.col("samples_mv").median().over("row"))
-        .with_columns(y=(pl.col("mv") * UNITS_PER_MV).round().cast(pl.Int32))
+        traces.lazy()
+        .with_row_index("row")
+        .with_columns(
+            place=pl.int_ranges(pl.col("samples_mv").list.len()),
+            mv=pl.col("samples_mv").list.eval(pl.element() - pl.element().median()),
+        )
+        .explode("place", "mv", empty_as_null=True)
+        .select(
+            "row",
+            x=(pl.col("place") * UNITS_PER_S / pl.col("fs_hz")).round().cast(pl.Int32),
+            y=(pl.col("mv") * UNITS_PER_MV).round().cast(pl.Int32),
+        )
         .drop_nulls("y")
     )
-    long = long.filter(
-        (pl.len().over("row", "x") <= 2)
-        | (pl.col("y") == pl.col("y").min().over("row", "x"))
-        | (pl.col("y") == pl.col("y").max().over("row", "x"))
-    )
+    if traces.filter(pl.col("fs_hz") > UNITS_PER_S).height:
+        long = long.filter(
+            (pl.len().over("row", "x") <= 2)
+            | (pl.col("y") == pl.col("y").min().over("row", "x"))
+            | (pl.col("y") == pl.col("y").max().over("row", "x"))
+        )
     return _paths(traces.height, long)
 
 
-def _paths(count: int, long: pl.DataFrame) -> list[tuple[str, int, int]]:
+def _paths(count: int, long: pl.LazyFrame) -> list[tuple[str, int, int]]:
     """Join the points of each row into one path of relative steps; a step over missing samples lifts the pen."""
-    step = pl.col("x").diff().over("row")
-    rise = -pl.col("y").diff().over("row")
-    widest = 2 * pl.col("x").diff().over("row").median().over("row").clip(1)
+    step, rise = pl.col("x").diff(), -pl.col("y").diff()
     text = (
-        pl.when(step.is_null() | (step > widest))
+        pl.when(step.is_null() | (step > 2 * step.median().clip(1)))
         .then(pl.format("M{} {}l", "x", -pl.col("y")))
         .otherwise(pl.format("{} {} ", step, rise))
     )
-    joined = (
-        long.with_columns(text=text)
-        .group_by("row", maintain_order=True)
-        .agg(pl.col("text").str.join(""), low=pl.col("y").min(), high=pl.col("y").max())
+    joined = long.group_by("row", maintain_order=True).agg(
+        text.str.join("").alias("text"), low=pl.col("y").min(), high=pl.col("y").max()
     )
-    found = {row: (path, low, high) for row, path, low, high in joined.iter_rows()}
+    found = {row: (path, low, high) for row, path, low, high in joined.collect().iter_rows()}
     return [found.get(row, ("", 0, 0)) for row in range(count)]
 
 

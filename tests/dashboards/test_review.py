@@ -5,6 +5,7 @@ from __future__ import annotations
 from datetime import datetime
 
 from dashboards import review
+from dashboards.drawings import Drawings
 from dashboards.tables import Tables
 
 RECORDING = "CN0000-20260302"
@@ -13,7 +14,7 @@ RECORDING = "CN0000-20260302"
 def sheet_of(rows, publish) -> dict:
     tables = Tables(publish(rows))
     (recording,) = (row for row in tables.whole("recordings").rows(named=True) if row["recording_id"] == RECORDING)
-    return review.context(tables, recording)
+    return review.context(tables, recording, Drawings(tables, recording))
 
 
 def test_families_stand_in_the_order_of_the_sheet(rows, publish):

@@ -96,3 +96,14 @@ def test_a_shape_is_as_long_as_its_samples_say():
     """Ninety values at 125 a second are 0.72 s: 18 mm."""
     (drawing,) = draw_shapes(pl.DataFrame({"shape_mv": [[0.0] * 90]}))
     assert drawing.width == 18 * UNITS_PER_MM
+
+
+def test_strips_drawn_together_are_drawn_as_if_alone():
+    """A strip's path, box and marks do not depend on the strips beside it, whatever their rates and gaps."""
+    rows = [
+        strip([0.0, 1.0, None, None, None, None, 0.5, 0.2, 0.1], beats=(1,), classes=("V",)),
+        strip([0.1, -0.4, 0.2] * 400, fs_hz=1000.0),
+        strip([None] * 5),
+        strip([0.3] * 40, fs_hz=180.0),
+    ]
+    assert draw_strips(pl.concat(rows)) == [drawing for row in rows for drawing in draw_strips(row)]
