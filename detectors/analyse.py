@@ -248,7 +248,8 @@ def episodes_of(table: Beats, fs_hz: float, options: Options) -> Episodes:
     """All episodes of labelled beats; beats that are not analysable take no part and break the rhythm."""
     good = table.is_analysable
     follows_good = np.concatenate([[False], good[:-1]]) if good.size else good
-    before_ms = np.where(follows_good, table.rr_before_ms, np.float32(np.nan))[good]
+    before_ms = table.rr_before_ms[good]
+    before_ms[~follows_good[good]] = np.nan
     irregular = rhythm.irregularity(before_ms, table.beat_class[good] == "N")
     return episodes.find_episodes(
         episodes.Rhythm(table.segment[good], table.sample[good], table.beat_class[good], before_ms, irregular),

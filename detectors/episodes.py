@@ -70,8 +70,8 @@ def _alternation(is_v: NDArray[np.bool_], starts: NDArray[np.bool_], cycle: int,
     v = np.flatnonzero(is_v)
     if v.size < 2:
         return Span(v[:0], v[:0])
-    breaks = np.cumsum(starts, dtype=np.int32)
-    linked = (np.diff(v) == cycle) & (breaks[v[1:]] == breaks[v[:-1]])
+    breaks = np.searchsorted(np.flatnonzero(starts), v, side="right")
+    linked = (np.diff(v) == cycle) & (np.diff(breaks) == 0)
     runs = stretches(linked, np.zeros(linked.size, dtype=bool))
     long_enough = runs.last - runs.first >= min_cycles
     return Span(v[runs.first[long_enough]], v[runs.last[long_enough]] + 1)

@@ -169,6 +169,15 @@ def irregularity(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_
     every second or third beat comes early repeats itself. Only intervals between plain (not ectopic) beats count; 0
     where fewer than 8 are near.
     """
+    share, margin = np.empty(rr_ms.size, dtype=np.float32), reach_beats + max(LAGS_BEATS) + 1
+    for begin in range(0, rr_ms.size, SLAB_ROWS):  # with all beats at once the tables between would outweigh the beats
+        first, end = max(begin - margin, 0), begin + SLAB_ROWS
+        near = _share_of_jumps(rr_ms[first : end + margin], is_plain[first : end + margin], reach_beats)
+        share[begin:end] = near[begin - first : end - first]
+    return share
+
+
+def _share_of_jumps(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], reach_beats: int) -> NDArray[np.float32]:
     is_known = is_plain & ~np.isnan(rr_ms)
     is_known[1:] &= is_plain[:-1]
     least = np.ones(rr_ms.size, dtype=np.float32)

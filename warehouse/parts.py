@@ -277,8 +277,8 @@ class SignalReader:
     """Samples of one recording, read piece by piece from its signal parts.
 
     The blocks of a segment follow each other in the order of their number and may be of any length up to BLOCK_SAMPLES.
-    The last two decoded blocks are kept: pieces overlap, and the overlap can lie across the end of a block. With
-    `ahead`, for reading from begin to end, a thread unpacks the next block meanwhile.
+    The last decoded block is kept, and with `ahead`, for reading from begin to end, the last two: pieces overlap, and
+    the overlap can lie across the end of a block. A thread unpacks the next block meanwhile then.
     """
 
     def __init__(self, lake: Path, parts: Iterable[Part], *, check_hash: bool = False, ahead: bool = False) -> None:
@@ -288,7 +288,7 @@ class SignalReader:
         for part in sorted((p for p in parts if p.table == "signal"), key=lambda part: (part.segment, part.block)):
             self._blocks.setdefault(part.segment or 0, []).append(part)
         self._ends = {segment: np.cumsum([p.rows for p in blocks]) for segment, blocks in self._blocks.items()}
-        self._decoded: deque[tuple[Part, NDArray[np.int16]]] = deque(maxlen=2)
+        self._decoded: deque[tuple[Part, NDArray[np.int16]]] = deque(maxlen=2 if ahead else 1)
         self._helper = ThreadPoolExecutor(1) if ahead else None
         self._coming: dict[Part, Future[NDArray[np.int16]]] = {}
 

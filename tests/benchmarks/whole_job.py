@@ -181,10 +181,15 @@ class Stages:
 
     def _look(self) -> None:
         while not self._done.wait(0.02):
-            lines = Path("/proc/self/status").read_text().splitlines()
-            anonymous_kb = next(int(line.split()[1]) for line in lines if line.startswith("RssAnon"))
             stage = self._open[-1]
-            self._peak_mb[stage] = max(self._peak_mb[stage], anonymous_kb / 1024)
+            self._peak_mb[stage] = max(self._peak_mb[stage], _anonymous_mb())
+
+
+def _anonymous_mb() -> float:
+    """Memory of this process that no file backs, without pages it gave back that the system has not yet taken."""
+    lines = Path("/proc/self/smaps_rollup").read_text().splitlines()[1:]
+    kb = {name: int(rest.split()[0]) for name, rest in (line.split(":") for line in lines)}
+    return (kb["Anonymous"] - kb["LazyFree"]) / 1024
 
 
 def _programme(folder: Path, recording: Path, days: float) -> None:

@@ -93,3 +93,13 @@ def test_rhythm_that_repeats_itself_is_not_irregular() -> None:
         repeated, _ = around(group * 60)
         plain = np.ones(repeated.size, dtype=bool)
         assert np.median(rhythm.irregularity(repeated, plain)) < 0.1
+
+
+def test_irregularity_does_not_depend_on_where_slabs_end(monkeypatch) -> None:
+    """Beats are looked at slab by slab; the share near a slab's end is that of the whole recording."""
+    rng = np.random.default_rng(3)
+    rr_ms, _ = around(np.where(rng.random(700) < 0.5, rng.uniform(450, 1100, 700), 800).tolist())
+    plain = rng.random(701) < 0.9
+    whole = rhythm.irregularity(rr_ms, plain)
+    monkeypatch.setattr(rhythm, "SLAB_ROWS", 37)
+    assert np.array_equal(rhythm.irregularity(rr_ms, plain), whole)
