@@ -22,6 +22,7 @@ from typing import NamedTuple
 import numpy as np
 import polars as pl
 from numpy.typing import NDArray
+from polars.datatypes import DataTypeClass
 
 from warehouse import schema
 
@@ -114,9 +115,9 @@ def _typed(table: schema.Table, values: pl.Series) -> pl.Series:
     return values
 
 
-def _is_castable(found: pl.DataType, expected: pl.DataType) -> bool:
+def _is_castable(found: pl.DataType | DataTypeClass, expected: pl.DataType | DataTypeClass) -> bool:
     if isinstance(found, pl.List) and isinstance(expected, pl.List):
-        return _is_castable(found.inner, expected.inner) or found.inner == expected.inner  # type: ignore[arg-type]  # inner types
+        return _is_castable(found.inner, expected.inner) or found.inner == expected.inner
     both_integer = found.is_integer() and expected.is_integer()
     return found == pl.Null or both_integer or (found.is_numeric() and expected.is_float())
 

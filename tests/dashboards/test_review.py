@@ -55,7 +55,11 @@ def test_the_sheet_tells_what_readers_decided_before(rows, publish):
          ("C", "S", False, "0ld"))
     ):  # fmt: skip
         more = {"delivery_id": f"D{order}", "decision_order": 0, "reader_code": reader, "decision": decided}
-        more |= {"is_mixed": is_mixed, "read_fingerprint": fingerprint, "reviewed_utc": datetime(2026, 4, order + 1)}  # noqa: DTZ001  UTC
+        more |= {
+            "is_mixed": is_mixed,
+            "read_fingerprint": fingerprint,
+            "reviewed_utc": datetime.fromisoformat(f"2026-04-{order + 1:02}"),
+        }
         rows["decisions"].append(decision | more)
     first, second, *_ = sheet_of(rows, publish)["items"]
     assert first["said"] == ["A: accepted as V", "B: different shapes"]

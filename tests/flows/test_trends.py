@@ -61,11 +61,11 @@ def programme(hours: list[pl.DataFrame], events: dict[str, str]) -> dict[str, pl
     }
 
 
-def tables_of(inputs, change=DAYS_ALONE, wear=WearSettings()):  # noqa: B008 - frozen settings
+def tables_of(inputs, change=DAYS_ALONE, wear=WearSettings()):
     return trends.tables(trends.Inputs(**inputs), change, wear).published
 
 
-def changes(hours, events, change=DAYS_ALONE, wear=WearSettings()):  # noqa: B008 - frozen settings
+def changes(hours, events, change=DAYS_ALONE, wear=WearSettings()):
     return tables_of(programme(hours, events), change, wear)["changes"]
 
 

@@ -55,7 +55,7 @@ def _width(values: pl.Series) -> int:
     for value in values.unique().sort():
         if value is None or not value.isascii() or len(value) > MAX_TEXT:
             raise TransportError(f"{values.name}: {value!r}; expected at most {MAX_TEXT} ASCII characters")
-    return max(1, int(values.str.len_bytes().max() or 0))  # type: ignore[arg-type]  # the maximum of lengths
+    return max(1, *values.str.len_bytes().drop_nulls())
 
 
 def _header(name: str, label: str, variables: int) -> bytes:

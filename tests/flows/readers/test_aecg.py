@@ -34,7 +34,7 @@ SIGNAL = np.round(900 * np.sin(np.arange(200_000) / 9)).astype(int)
 def opened(tmp_path):
     """Function that makes and opens a document."""
 
-    def make(values=SIGNAL, *, names=("II",), doctype="", cut=None, site=Site(), **changes):  # noqa: B008  frozen
+    def make(values=SIGNAL, *, names=("II",), doctype="", cut=None, site=Site(), **changes):
         fields = {
             "head": "20260301083000.250",
             "increment": "4",

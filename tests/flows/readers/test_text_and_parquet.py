@@ -18,7 +18,7 @@ START = datetime.fromisoformat("2026-03-01T08:30:00")
 def opened(tmp_path):
     """Function that writes text or a frame and opens it."""
 
-    def make(content, site=Site()):  # noqa: B008  an immutable tuple
+    def make(content, site=Site()):
         path = tmp_path / "export"
         if isinstance(content, pl.DataFrame):
             content.write_parquet(path)
