@@ -6,6 +6,7 @@ The server that Prefect starts by itself for a single run never schedules anythi
 from __future__ import annotations
 
 import os
+import signal
 import socket
 import subprocess
 import sys
@@ -21,7 +22,7 @@ END_S = 30.0
 
 
 class ServerError(RuntimeError):
-    """The server did not start; the message says where its own words are."""
+    """There is no server; the message says what was tried and where to look."""
 
 
 @contextmanager
@@ -41,17 +42,37 @@ def local_server(log: Path) -> Iterator[str]:
     log.parent.mkdir(parents=True, exist_ok=True)
     with log.open("wb") as words:
         command = [sys.executable, "-m", "prefect", "server", "start"]
-        server = subprocess.Popen(command, env=environment, stdout=words, stderr=words)
+        # In a session of its own: Ctrl-C is for the schedule, which still needs its server to end in order.
+        server = subprocess.Popen(command, env=environment, stdout=words, stderr=words, start_new_session=True)
     try:
-        _await(server, f"{api}/health", log)
-        yield api
+        with _unwinding():
+            _await(server, f"{api}/health", log)
+            yield api
     finally:
-        server.terminate()
-        try:
-            server.wait(END_S)
-        except subprocess.TimeoutExpired:
-            server.kill()
-            server.wait()
+        _end(server)
+
+
+@contextmanager
+def _unwinding() -> Iterator[None]:
+    """Let a request to end, and a terminal that closes, unwind the body, so that no server outlives it."""
+    before = {request: signal.getsignal(request) for request in (signal.SIGTERM, signal.SIGHUP)}
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit(0))
+    if before[signal.SIGHUP] is signal.SIG_DFL:  # nohup has it ignored
+        signal.signal(signal.SIGHUP, lambda *_: signal.raise_signal(signal.SIGTERM))
+    try:
+        yield
+    finally:
+        for request, handler in before.items():
+            signal.signal(request, handler)
+
+
+def _end(server: subprocess.Popen[bytes]) -> None:
+    server.terminate()
+    try:
+        server.wait(END_S)
+    except subprocess.TimeoutExpired:
+        server.kill()
+        server.wait()
 
 
 def _free_port() -> int:

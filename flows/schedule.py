@@ -30,6 +30,7 @@ from prefect.artifacts import (
     create_table_artifact,
     update_progress_artifact,
 )
+from prefect.client.orchestration import get_client
 from prefect.client.schemas.objects import StateType
 from prefect.futures import PrefectFuture
 from prefect.runtime import flow_run
@@ -38,7 +39,7 @@ from prefect.settings import PREFECT_API_URL, temporary_settings
 from prefect.states import State
 
 from flows import due, nightly, settings
-from flows.local_server import local_server
+from flows.local_server import ServerError, local_server
 from flows.lock import FolderBusy, schedule_lock
 from flows.nightly import Analysed, Work
 from flows.notify import notify
@@ -187,20 +188,34 @@ def serve_nightly(folder: Path, cron: str, zone: str = "") -> None:
     """Serve the nightly flow on this host until stopped, with a Prefect server of its own where none is named.
 
     Raises CronError for cron fields that cannot be read, SettingsError for a folder that is no programme or a zone that
-    is not known, FolderBusy for a folder that is scheduled already.
+    is not known, ServerError where the server does not answer or start, FolderBusy for a folder that is scheduled already.
     """
     programme = settings.load(folder / "programme.toml").programme
     if zone:
         settings.check_zone("--zone", zone)
-    schedule = nightly_schedule(cron, zone or programme.zone)
+    zone = zone or programme.zone
+    schedule, gap_h = nightly_schedule(cron, zone), longest_gap_h(cron, zone)
+    _refuse_dead_server()
     with schedule_lock(folder):
-        due.promise(folder, cron, zone or programme.zone, longest_gap_h(cron, zone or programme.zone))
+        due.promise(folder, cron, zone, gap_h)
         with _server(folder):
             nightly_flow.serve(
                 name=f"{folder.resolve().name} nightly",
                 parameters={"folder": str(folder.resolve())},
                 schedule=schedule,
                 limit=1,
+            )
+
+
+def _refuse_dead_server() -> None:
+    """Raise ServerError where a server is named that does not answer."""
+    if not (named := PREFECT_API_URL.value()):
+        return
+    with get_client(sync_client=True) as client:
+        if client.api_healthcheck() is not None:
+            raise ServerError(
+                f"no Prefect server answers at {named}; start it, mend PREFECT_API_URL, or unset it: "
+                "the schedule then brings a server of its own"
             )
 
 

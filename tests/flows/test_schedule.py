@@ -3,7 +3,9 @@
 import contextlib
 import json
 import os
+import re
 import signal
+import socket
 import subprocess
 import sys
 import time
@@ -16,6 +18,7 @@ import yaml  # comes with Prefect
 
 from flows.cli import main
 from flows.edf_write import EdfHeader, Piece, write_edf
+from flows.local_server import ServerError
 from flows.lock import FolderBusy
 from tests.flows.test_quiet_network import GUARD
 
@@ -172,7 +175,21 @@ def test_a_day_that_never_comes_is_one_sentence(coast, capsys):
     """A cron field for 30 February is refused before anything is served."""
     assert main(["schedule", str(coast), "--cron", "0 0 30 2 *"]) == 1
     assert "names a day that never comes" in capsys.readouterr().err
-    assert not (coast / "lake" / "schedule.json").exists()
+    assert not (coast / "lake").exists()
+
+
+def test_a_named_server_that_is_away_is_one_sentence(coast):
+    """Where the server that PREFECT_API_URL names does not answer nothing is served, and the folder stays as it was."""
+    from prefect.settings import PREFECT_API_URL, temporary_settings
+
+    from flows.schedule import serve_nightly
+
+    with socket.socket() as free:
+        free.bind(("127.0.0.1", 0))
+        api = f"http://127.0.0.1:{free.getsockname()[1]}/api"
+    with temporary_settings({PREFECT_API_URL: api}), pytest.raises(ServerError, match=f"no Prefect server .* {api}"):
+        serve_nightly(coast, "0 3 * * *")
+    assert not (coast / "lake").exists()
 
 
 def test_a_served_schedule_runs_and_ends_with_its_server(coast, tmp_path):
@@ -199,9 +216,13 @@ def test_a_served_schedule_runs_and_ends_with_its_server(coast, tmp_path):
         while not (coast / "published" / "current").exists():
             assert served.poll() is None and time.monotonic() < deadline_s, (tmp_path / "words").read_text()[-3000:]
             time.sleep(1)
-        served.send_signal(signal.SIGTERM)
+        os.killpg(served.pid, signal.SIGINT)  # as Ctrl-C does
         assert served.wait(LONGEST_WAIT_S) == 0
         wait_until_no_process_is_left(served.pid)
+        words = (tmp_path / "words").read_text()
+        assert "Traceback" not in words
+        with pytest.raises(ConnectionRefusedError):
+            socket.create_connection(("127.0.0.1", int(re.findall(r"http://127\.0\.0\.1:(\d+)", words)[0])))
         assert not (tmp_path / "tried").exists(), "a connection beyond this host was tried"
     finally:
         with contextlib.suppress(ProcessLookupError):
