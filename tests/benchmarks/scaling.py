@@ -43,6 +43,9 @@ class Cost(NamedTuple):
     wall_s: float
     cpu_s: float
 
+    def __str__(self) -> str:
+        return f"{self.wall_s:.2f} s ({self.cpu_s:.2f} CPU s)"
+
 
 def main() -> None:
     """Print costs per recording and patient-day, measured speed-up and the modelled night."""
