@@ -58,7 +58,10 @@ def _acquire(descriptor: int, path: Path, deadline: float) -> None:
     while True:
         try:
             return fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except OSError:
+        except BlockingIOError:
             if time.monotonic() >= deadline:
                 raise _Held(path.read_text(encoding="utf-8") or "another process") from None
+        except OSError as problem:
+            told = f"{problem.strerror}; expected a disk that knows file locks"
+            raise OSError(problem.errno, told, str(path)) from None
         time.sleep(min(0.5, max(0.0, deadline - time.monotonic())))

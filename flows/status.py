@@ -217,7 +217,7 @@ def status_text(found: dict[str, Any]) -> str:
         return "\n".join([*lines, "nothing published yet"])
     counts = ", ".join(f"{count} {name}" for name, count in found["deliveries"].items())
     lines += [
-        f"deliveries: {counts}; {found['inbox_files']} files in the inbox",
+        f"deliveries: {counts or 'none'}; {found['inbox_files']} files in the inbox",
         *(f"waits: {row['file_name']}: {row['reason']}" for row in found["waiting"]),
         *(f"refused: {row['file_name']}: {row['reason']}" for row in found["refused"]),
         *(_patient_text(row) for row in found["patients"]),

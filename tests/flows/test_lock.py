@@ -1,3 +1,5 @@
+import errno
+import fcntl
 import subprocess
 import sys
 
@@ -36,6 +38,17 @@ def test_a_killed_holder_leaves_no_lock(tmp_path, holder):
     holder.kill()
     holder.wait(30)
     with folder_lock(tmp_path):
+        pass
+
+
+def test_a_disk_without_locks_is_not_taken_for_another_run(tmp_path, monkeypatch):
+    """Where the file system refuses locks the error says so and names the file; nobody is said to hold the folder."""
+
+    def refuse(descriptor, how):
+        raise OSError(errno.ENOLCK, "No locks available")
+
+    monkeypatch.setattr(fcntl, "flock", refuse)
+    with pytest.raises(OSError, match=r"expected a disk that knows file locks.*run\.lock"), folder_lock(tmp_path):
         pass
 
 

@@ -77,6 +77,12 @@ def test_an_idle_run_counts_as_a_run(coast):
     assert after["last_publication_utc"] == before["last_publication_utc"]
 
 
+def test_a_publication_without_deliveries_says_so(empty):
+    """A programme that ran before anything arrived has none."""
+    run(empty)
+    assert "deliveries: none; 0 files in the inbox" in status_text(status(empty))
+
+
 def test_a_missed_schedule_is_told(empty):
     """With an expectation, no run at all and a last run too long ago are trouble; a fresh one is not."""
     assert status(empty)["trouble"] == []
