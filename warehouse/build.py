@@ -16,7 +16,7 @@ patient by patient read `anew`, models about the whole programme read the table 
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from datetime import datetime
 from functools import cached_property
 from importlib import resources
@@ -217,14 +217,8 @@ class TrendBuild:
 
     def _load_lake(self) -> None:
         for name, table in schema.LAKE.items():
-            if name in (*_NOT_FOR_MODELS, *OF_RECORDING):
-                continue
-            parts = [part for part in self.parts if part.table == name]
-            if name in READ_IN_PLACE and parts:
-                query = parts_query(table, [str(self.lake / part.path) for part in parts])
-                self.connection.execute(f"CREATE VIEW lake.{name} AS {query}")
-            else:
-                self._insert_parts(table, parts)
+            if name not in (*_NOT_FOR_MODELS, *OF_RECORDING, *READ_IN_PLACE):
+                self._insert_parts(table, [part for part in self.parts if part.table == name])
 
     def _keep_patients(self) -> None:
         own = patient_grounds(
@@ -266,9 +260,13 @@ class TrendBuild:
         return frozenset(recording_id for (recording_id,) in wears)
 
     def _load_recordings(self) -> None:
-        for name in OF_RECORDING:
+        for name in (*OF_RECORDING, *READ_IN_PLACE):
             parts = [part for part in self.parts if part.table == name and part.key not in self._kept_recordings]
-            self._insert_parts(schema.LAKE[name], parts)
+            if name in READ_IN_PLACE and parts:
+                query = parts_query(schema.LAKE[name], [f"{self.lake}/{part.path}" for part in parts])
+                self.connection.execute(f"CREATE VIEW lake.{name} AS {query}")
+            else:
+                self._insert_parts(schema.LAKE[name], parts)
 
     def _insert_parts(self, table: schema.Table, parts: Iterable[Part]) -> None:
         types = {column: schema.COLUMNS[column].type for column in table.columns}
@@ -398,11 +396,12 @@ def parts_query(table: schema.Table, paths: Iterable[str]) -> str:
     return f"SELECT {columns} FROM {source}"
 
 
-def parts_frame(parts: Iterable[Part]) -> pl.DataFrame:
+def parts_frame(parts: Sequence[Part]) -> pl.DataFrame:
     """Rows of the published table `parts`."""
     columns = schema.PUBLISHED["parts"].columns
     types = {name: polars_type(schema.COLUMNS[name].type) for name in columns}
-    return pl.DataFrame([tuple(part) for part in parts], schema=types, orient="row").sort("part_path")
+    values = {name: [part[n] for part in parts] for n, name in enumerate(types)}
+    return pl.DataFrame(values, schema=types).sort("part_path")
 
 
 def dictionary_frame() -> pl.DataFrame:

@@ -22,6 +22,7 @@ _STORAGE_VERSION = "v1.2.0"
 _SETTINGS = (
     "SET threads = 1",  # several would lay down blocks in the order in which they happen to end
     "SET disabled_compression_methods = 'fsst'",  # it chooses its symbols from a random sample
+    "SET checkpoint_threshold = '1KB'",  # the commit writes the tables at once, and no log of them first
 )
 
 
@@ -45,7 +46,7 @@ def write_database(edition: Published, path: Path, before: Published | None = No
         elif before and name in schema.SLICED:
             _replace_slices(connection, table, before, edition)
         elif not before or _hashes(before, name) != _hashes(edition, name):
-            _make_table(connection, table, edition.files(name))
+            _make_table(connection, table, list(edition.files(name)))
     connection.execute("COMMIT")
     connection.execute("USE memory")
     connection.execute("DETACH edition")
@@ -77,14 +78,15 @@ def _replace_slices(
     connection: duckdb.DuckDBPyConnection, table: schema.Table, before: Published, edition: Published
 ) -> None:
     owner = "patient_code" if "patient_code" in table.columns else "recording_id"
-    for old, new in zip(before.files(table.name), edition.files(table.name), strict=True):
-        if before.described(old) != edition.described(new):
+    slices = zip(before.files(table.name).items(), edition.files(table.name).items(), strict=True)
+    for (old, told_before), (new, told) in slices:
+        if told_before != told:
             connection.execute(f"DELETE FROM {table.name} WHERE {owner} IN (SELECT {owner} FROM {_rows([old])})")
             connection.execute(f"INSERT INTO {table.name} BY NAME FROM {_rows([new])}")
 
 
 def _hashes(edition: Published, name: str) -> list[str]:
-    return [edition.described(file)["sha256"] for file in edition.files(name)]
+    return [told["sha256"] for told in edition.files(name).values()]
 
 
 def _rows(files: Iterable[Path]) -> str:

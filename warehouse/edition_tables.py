@@ -20,7 +20,6 @@ import polars as pl
 from warehouse import schema
 from warehouse.build import READ_IN_PLACE, TrendBuild
 from warehouse.parts import file_sha256
-from warehouse.published import Published
 from warehouse.slices import slice_of
 
 _ROW_GROUP_ROWS = 8192  # small, so that one recording's rows are read without the others'
@@ -49,20 +48,23 @@ def _whole(build: TrendBuild, name: str, edition: Path) -> Iterator[tuple[Path, 
 def _slices(build: TrendBuild, name: str, edition: Path) -> Iterator[tuple[Path, dict[str, Any]]]:
     folder = edition / "tables" / f"{name}.parquet"
     folder.mkdir()
-    anew = _by_slice(build, name)
+    anew = _rows_anew(build, name)
+    standing = list(build.standing.files(name).items()) if build.standing else []
     for number in range(build.slices):
         path = folder / f"{number:02}.parquet"
-        if build.standing is None:
+        if not standing:
             yield path, _write(anew[number], path)
         elif number in build.slices_anew:
-            before = _kept_rows(build, name, build.standing.files(name)[number])
+            before = _kept_rows(build, name, standing[number][0])
             yield path, _write(pl.concat([before, anew[number]]).sort(schema.PUBLISHED[name].key), path)
         else:
-            yield path, _further_name(build.standing, build.standing.files(name)[number], path)
+            file, told = standing[number]
+            _further_name(file, path)
+            yield path, told
 
 
-def _by_slice(build: TrendBuild, name: str) -> list[pl.DataFrame]:
-    """Rows of the patients built anew, by slice, in the order of the key."""
+def _rows_anew(build: TrendBuild, name: str) -> dict[int, pl.DataFrame]:
+    """Rows of the patients built anew, by slice that is written anew, in the order of the key."""
     rows = build.frame(f"anew.{name}").sort(schema.PUBLISHED[name].key)
     if "patient_code" in rows.columns:
         owners = rows["patient_code"]
@@ -75,7 +77,7 @@ def _by_slice(build: TrendBuild, name: str) -> list[pl.DataFrame]:
     numbers = owners.replace_strict(
         codes, [slice_of(code, build.slices) for code in codes], return_dtype=pl.Int64, default=None
     )
-    return [rows.filter(numbers == number) for number in range(build.slices)]
+    return {number: rows.filter(numbers == number) for number in build.slices_anew}
 
 
 def _kept_rows(build: TrendBuild, name: str, file: Path) -> pl.DataFrame:
@@ -84,12 +86,11 @@ def _kept_rows(build: TrendBuild, name: str, file: Path) -> pl.DataFrame:
     return rows.join(build.frame(f"kept.{of}"), on=column, how="semi", maintain_order="left")
 
 
-def _further_name(standing: Published, file: Path, path: Path) -> dict[str, Any]:
+def _further_name(file: Path, path: Path) -> None:
     try:
         os.link(file, path)
     except OSError:  # a file system without links, or one that has no more room for names of this file
         shutil.copyfile(file, path)
-    return standing.described(file)
 
 
 def _write(rows: pl.DataFrame, path: Path) -> dict[str, Any]:

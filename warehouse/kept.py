@@ -12,7 +12,9 @@ from __future__ import annotations
 import hashlib
 import io
 import json
+from collections import defaultdict
 from collections.abc import Iterable, Mapping
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from typing import Any, NamedTuple
 
@@ -32,6 +34,9 @@ OF_RECORDING = (
     "recordings", "segments", "families", "episodes", "findings", "marks", "quarter_hours", "family_quarters",
 )  # fmt: skip
 """Lake tables with a load per recording, of which a build reads the parts of changed patients only."""
+
+_FOUND_IN_RECORDING = frozenset((*OF_RECORDING, "beats", "quality_windows"))
+_DECIDED_IN_DELIVERY = frozenset(("decisions", "reviews"))
 
 
 class Grounds(NamedTuple):
@@ -58,18 +63,21 @@ def patient_grounds(
     `decisions` names recordings that were over-read, each with a delivery that says something of it; `zone_rules` says
     the rules of each zone.
     """
-    of_load: dict[tuple[str, str], list[str]] = {}
+    landed, found, decided = set(), defaultdict(list), defaultdict(list)
     for part in parts:
-        of_load.setdefault((part.table, part.key), []).append(part.sha256)
-    loads: dict[str, list[tuple[str, str]]] = {}
-    for recording_id, delivery_id in sorted(decisions):
-        loads.setdefault(recording_id, []).extend([("decisions", delivery_id), ("reviews", delivery_id)])
+        if part.table in _FOUND_IN_RECORDING:
+            found[part.key].append(f"{part.table} {part.sha256}")
+        elif part.table in _DECIDED_IN_DELIVERY:
+            decided[part.key].append(f"{part.table} {part.sha256}")
+        if part.table == "recordings":
+            landed.add(part.key)
+    for recording_id, delivery_id in decisions:
+        found[recording_id] += decided[delivery_id]
     said = {code: [zone_rules[zone]] for code, zone in register["patients"].select("patient_code", "zone").iter_rows()}
     wears = register["wears"].select("patient_code", "recording_id").sort(pl.all())
     for code, recording_id in wears.iter_rows():
-        if ("recordings", recording_id) in of_load and code in said:
-            own = [(table, recording_id) for table in (*OF_RECORDING, "beats", "quality_windows")]
-            said[code] += [f"{load} {sorted(of_load.get(load, []))}" for load in own + loads.get(recording_id, [])]
+        if recording_id in landed and code in said:
+            said[code] += [recording_id, *sorted(found[recording_id])]
     for row in register["therapies"].sort("therapy_id").iter_rows(named=True):
         if row["patient_code"] in said:
             said[row["patient_code"]].append(repr(sorted(row.items())))
@@ -83,7 +91,7 @@ def write_kept(edition: Path, grounds: Grounds, handed_on: Mapping[str, pl.DataF
         frame.write_parquet(content)
         write_whole(edition / KEPT / f"{name}.parquet", content.getbuffer())
     told = {**grounds._asdict(), "database": file_sha256(edition / DATABASE)}
-    write_whole(edition / KEPT / _GROUNDS, json.dumps(told, indent=1, sort_keys=True).encode())
+    write_whole(edition / KEPT / _GROUNDS, json.dumps(told, sort_keys=True).encode())
 
 
 def read_handed(edition: Published, name: str) -> pl.DataFrame | None:
@@ -111,8 +119,9 @@ def is_whole(edition: Published) -> bool:
     """Tell whether the tables and the database of an edition are the bytes that were written."""
     hashes = {edition.edition / DATABASE: _read(edition).get("database")}
     for name in edition.manifest["tables"]:
-        hashes |= {path: edition.described(path)["sha256"] for path in edition.files(name)}
-    return all(path.is_file() and file_sha256(path) == digest for path, digest in hashes.items())
+        hashes |= {path: told["sha256"] for path, told in edition.files(name).items()}
+    with ThreadPoolExecutor(2) as pool:  # hashing leaves the interpreter to the other one
+        return all(path.is_file() for path in hashes) and [*pool.map(file_sha256, hashes)] == [*hashes.values()]
 
 
 def offer(connection: duckdb.DuckDBPyConnection, patients: Iterable[str]) -> None:

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import difflib
 import json
+import re
 from collections.abc import Mapping
 from functools import cached_property
 from importlib import resources
@@ -25,6 +26,8 @@ from warehouse.slices import slice_of
 DATABASE = "burdenline.duckdb"
 MANIFEST = "manifest.json"
 
+_WORD = re.compile(r"\w+")
+_UNKNOWN_TABLE = re.compile(r'Table with name "?(?:\w+\.)?(\w+)"? does not exist')
 _READING = {duckdb.StatementType.SELECT, duckdb.StatementType.EXPLAIN, duckdb.StatementType.PRAGMA}
 
 
@@ -79,14 +82,12 @@ class Published:
         """Whether the edition has a table of this name."""
         return name in self.manifest["tables"] or name in self._read_in_place()
 
-    def files(self, name: str) -> list[Path]:
-        """Parquet files of a table that is not read in place: one, or one per slice in their order."""
-        return [self._edition / path for path in self.manifest["tables"][name]["files"]]
+    def files(self, name: str) -> dict[Path, dict[str, Any]]:
+        """Parquet files of a table that is not read in place: one, or one per slice in their order.
 
-    def described(self, file: Path) -> dict[str, Any]:
-        """Rows and SHA-256 of a Parquet file of the edition, as they were written."""
-        path = file.relative_to(self._edition)
-        return self.manifest["tables"][path.parts[1].removesuffix(".parquet")]["files"][path.as_posix()]
+        With each its rows and its SHA-256, as they were written.
+        """
+        return {self._edition / path: told for path, told in self.manifest["tables"][name]["files"].items()}
 
     def part_paths(self, name: str, key: str | None = None) -> list[str]:
         """Paths within the lake of the parts of a lake table behind the edition, of one load where given."""
@@ -115,7 +116,7 @@ class Published:
         return rows.filter(conditions) if conditions else rows
 
     def _scan_files(self, name: str, where: Mapping[str, object]) -> pl.LazyFrame:
-        files = self.files(name)
+        files = list(self.files(name))
         if len(files) > 1 and (code := self._patient_of(where)):
             files = [files[slice_of(code, len(files))]]
         rows = pl.scan_parquet(files, glob=False, hive_partitioning=False)
@@ -139,28 +140,21 @@ class Published:
 
     def frame(self, sql: str) -> pl.DataFrame:
         """Answer one query as a frame. Raises QueryError for anything but reading, and for names that are unknown."""
-        return pl.DataFrame(self._answer(sql))
-
-    def query(self, sql: str) -> tuple[list[str], list[tuple[Any, ...]]]:
-        """Answer one query as column names and rows."""
-        answer = self._answer(sql)
-        return list(answer.columns), answer.fetchall()
-
-    def _answer(self, sql: str) -> duckdb.DuckDBPyRelation:
         connection = self._connect()
         try:
             statements = connection.extract_statements(sql)
             if len(statements) != 1 or statements[0].type not in _READING:
                 raise QueryError("expected one query that reads (SELECT, FROM, WITH, DESCRIBE, SUMMARIZE, EXPLAIN)")
+            reads_parts = not self._read_in_place().isdisjoint(_WORD.findall(sql))
             # Run to the end here, so that an error in the last row is still a QueryError.
-            return connection.sql(sql).materialize()
+            return _held(connection, sql) if reads_parts else pl.DataFrame(connection.sql(sql).materialize())
         except duckdb.IOException as problem:
             raise QueryError(
                 f"parts of the lake that the publication reads are not where they were: {problem}; "
                 f"put the lake back at {self.lake}, or run again to publish anew"
             ) from None
         except duckdb.Error as problem:
-            raise QueryError(str(problem).strip()) from None
+            raise QueryError(_told(problem)) from None
 
     def _connect(self) -> duckdb.DuckDBPyConnection:
         if self._connection is None:
@@ -193,6 +187,31 @@ def _open_read_only(database: Path, folder: Path, lake: str) -> duckdb.DuckDBPyC
     connection.execute("SET enable_external_access = false")
     connection.execute("SET lock_configuration = true")
     return connection
+
+
+def _held(connection: duckdb.DuckDBPyConnection, sql: str) -> pl.DataFrame:
+    """Rows of a query over views of parts, held as a table on the way.
+
+    A relation is bound once to be made and once to be run, and binding a view looks at every part. What no table can be
+    made of, an explanation or a mistake, is asked as it was written.
+    """
+    try:
+        connection.execute(f"CREATE TEMP TABLE answer AS {sql}")
+    except duckdb.Error:
+        return pl.DataFrame(connection.sql(sql).materialize())
+    rows = pl.DataFrame(connection.sql("FROM answer"))
+    connection.execute("DROP TABLE answer")
+    return rows
+
+
+def _told(problem: duckdb.Error) -> str:
+    """What DuckDB says of a query; for a table that is not published our names, because it would offer its own, too."""
+    unknown = _UNKNOWN_TABLE.search(str(problem))
+    if unknown:
+        return f"no published table {unknown[1]!r}; {_nearest(unknown[1], schema.PUBLISHED)}"
+    if isinstance(problem, duckdb.BinderException):
+        return f"{str(problem).strip()}\n`FROM data_dictionary` lists every table and column"
+    return str(problem).strip()
 
 
 def _nearest(name: str, known: Mapping[str, object]) -> str:

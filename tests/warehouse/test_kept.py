@@ -148,7 +148,7 @@ def test_other_settings_build_every_patient_anew(make_lake: type, tmp_path: Path
         assert _kept(build) == set(CODES)
     with lake.built(standing=standing, min_analysable_h_per_day=3.0) as build:
         assert _kept(build) == set()
-    table = standing.files("hours")[0]
+    table = next(iter(standing.files("hours")))
     table.write_bytes(table.read_bytes()[:-1] + b"?")
     with lake.built(standing=standing) as build:
         assert _kept(build) == set()

@@ -65,8 +65,11 @@ def test_rows_of_one_recording_come_alone(standing: Path) -> None:
 @pytest.mark.parametrize(
     ("sql", "words"),
     [
-        ("FROM wear_day", 'Did you mean "wear_days"'),
+        ("FROM wear_day", "no published table 'wear_day'; did you mean wear_days?"),
+        ("FROM main.wear_day", "no published table 'wear_day'; did you mean wear_days?"),
+        ("FROM patients JOIN constraints USING (zone)", "no published table 'constraints'; published are: patients, "),
         ("SELECT v_burden FROM wear_days", "v_burden_pct"),
+        ("SELECT xyzzy FROM wear_days", "`FROM data_dictionary` lists every table and column"),
         ("DROP TABLE wear_days", "expected one query that reads"),
         ("CREATE TABLE x (i INTEGER)", "expected one query that reads"),
         ("COPY wear_days TO 'x.csv'", "expected one query that reads"),
@@ -85,6 +88,18 @@ def test_a_query_that_does_not_read_the_publication_is_refused(standing: Path, s
     """Unknown names come with the nearest ones; writing and reading elsewhere is refused."""
     with pytest.raises(QueryError, match=re.escape(words)):
         Published(standing).frame(sql)
+
+
+def test_tables_that_are_read_in_place_answer_every_kind_of_question(standing: Path) -> None:
+    """Rows keep their order, and a description or an explanation of a view over parts is an answer, too."""
+    published = Published(standing)
+    beats = published.table("beats")
+    assert published.frame("FROM beats ORDER BY recording_id DESC, sample DESC;").equals(
+        beats.sort("recording_id", "sample", descending=True)
+    )
+    assert published.frame("DESCRIBE beats")["column_name"].to_list() == beats.columns
+    assert published.frame("EXPLAIN FROM beats").height
+    assert set(published.frame("SHOW TABLES")["name"]) == set(schema.PUBLISHED)
 
 
 def test_an_unknown_table_comes_with_near_names(standing: Path) -> None:
