@@ -1,14 +1,11 @@
-"""Frozen cuts and exports of a programme folder: the warehouse keeps them, here they get their inputs."""
+"""Frozen cuts of a programme folder: the warehouse keeps them, here they get their inputs."""
 
 from __future__ import annotations
 
-import difflib
 import shutil
 import tempfile
 from datetime import UTC, datetime
 from pathlib import Path
-
-import polars as pl
 
 from flows import register
 from flows import settings as programme_settings
@@ -17,16 +14,8 @@ from flows.publication import built
 from flows.unmasking import ARMS, masked_copy
 from warehouse import cuts
 from warehouse.audit import Change, change_loads
-from warehouse.exports.catalogue import EXPORTS
 from warehouse.ledger import Ledger
 from warehouse.published import Published
-
-STRIPS = {"strips": "svg", "strips-png": "png"}
-"""The exports that draw, which the warehouse cannot, with their form; all others are in its catalogue."""
-
-
-class ExportError(ValueError):
-    """The export is not known; the message names the nearest."""
 
 
 def freeze_standing(folder: Path, name: str, reason: str, actor_code: str | None) -> Path:
@@ -80,33 +69,3 @@ def _folder_as_it_was(inputs: Path, scratch: Path) -> Path:
     for path in inputs.glob("*.csv"):
         shutil.copyfile(path, scratch / "register" / path.name)
     return scratch
-
-
-def export(folder: Path, what: str, to: Path, *, cut: str = "", study_code: str = "STUDY") -> list[Path]:
-    """Write one export of the standing publication or of a cut; returns the files. Raises ExportError.
-
-    A single file is written beside and renamed, so that it is never a half one.
-    """
-    known = (*EXPORTS, *STRIPS)
-    if what not in known:
-        near = difflib.get_close_matches(what, known, n=1)
-        raise ExportError(f"unknown export {what!r}; {f'did you mean {near[0]}?' if near else ', '.join(known)}")
-    published = Published(folder / "published", edition=cut_folder(folder, cut) if cut else None)
-    beside = to.with_name(f".writing-{to.name}")
-    try:
-        if what in STRIPS:
-            from flows.strip_export import export_strips
-
-            return export_strips(published, to, STRIPS[what])
-        if EXPORTS[what].writes == "folder":
-            return EXPORTS[what].export(published, to, study_code)
-        EXPORTS[what].export(published, beside, study_code)
-        return [beside.replace(to)]
-    except (OSError, pl.exceptions.ComputeError) as problem:
-        raise ExportError(
-            f"{to} could not be written: {' '.join(str(problem).split())}; what lies there of this export is not whole. "
-            "Free space or restore write access, then export again"
-        ) from problem
-    finally:
-        if beside.exists():  # a folder that cannot be written refuses even to remove what is not there
-            beside.unlink()

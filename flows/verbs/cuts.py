@@ -57,7 +57,7 @@ def _export_arguments(parser: argparse.ArgumentParser) -> None:
 
 
 def _export(asked: argparse.Namespace) -> int:
-    from flows.data_cuts import export
+    from flows.exports import export
 
     for path in export(asked.folder, asked.what, asked.to, cut=asked.cut, study_code=asked.study):
         print(path)

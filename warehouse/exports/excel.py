@@ -50,15 +50,18 @@ def export_excel(published: Published, file: Path, tables: Sequence[str] = SHEET
             raise ExcelError(
                 f"{name} has {frame.height:,} rows, a sheet holds {MAX_ROWS:,}; export it as CSV or Parquet"
             )
-    # The library reports a full disk by an error of its own kind, a stream by that of the system.
+    file.parent.mkdir(parents=True, exist_ok=True)
+    options = {**_OPTIONS, "default_date_format": _FORMATS["TIMESTAMP"], "tmpdir": str(file.parent)}
     content = io.BytesIO()
-    with xlsxwriter.Workbook(content, {**_OPTIONS, "default_date_format": _FORMATS["TIMESTAMP"]}) as book:
-        book.set_properties({"title": "burdenline export", "created": _CREATED})
-        _write_about(book, published)
-        for name, frame in frames.items():
-            _write_table(book, name, frame)
-        dictionary = published.table("data_dictionary").filter(pl.col("table_name").is_in(list(tables)))
-        _write_table(book, "data_dictionary", dictionary)
+    dictionary = published.table("data_dictionary").filter(pl.col("table_name").is_in(list(tables)))
+    try:
+        with xlsxwriter.Workbook(content, options) as book:
+            book.set_properties({"title": "burdenline export", "created": _CREATED})
+            _write_about(book, published)
+            for name, frame in {**frames, "data_dictionary": dictionary}.items():
+                _write_table(book, name, frame)
+    except xlsxwriter.exceptions.FileCreateError as problem:  # the library's word for a full disk
+        raise OSError(str(problem)) from problem
     write_whole(file, content.getbuffer())
     return [file]
 
