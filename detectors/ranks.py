@@ -53,8 +53,8 @@ def _exact_tails(doubled: NDArray[np.int64], chosen: int, seen: int) -> tuple[fl
     ways[0, 0] = 1
     for rank in doubled:
         ways[1:, rank:] += ways[:-1, : ways.shape[1] - rank].copy()
-    of_sum = ways[chosen] / ways[chosen].sum()
-    return float(of_sum[: seen + 1].sum()), float(of_sum[seen:].sum())
+    of_sum = ways[chosen]  # whole numbers: shares of them could add up to more than 1
+    return float(of_sum[: seen + 1].sum() / of_sum.sum()), float(of_sum[seen:].sum() / of_sum.sum())
 
 
 def _normal_tails(doubled: NDArray[np.int64], chosen: int, seen: int) -> tuple[float, float]:
