@@ -37,6 +37,7 @@ class Gathered(NamedTuple):
     timing: Timing
     book: FamilyBook
     bad: QualityWindows
+    suspect: QualityWindows  # wider: time that is not quiet
     lengths: NDArray[np.int64]  # samples per segment
     fs_hz: float
 
@@ -113,13 +114,13 @@ def gather(
     book = FamilyBook()
     table = beats.Growing()
     seen = [_read(segment, n, scale, chunk_s, book, table, progress) for n, segment in enumerate(segments)]
-    bad = quality.windows(seen, scale.fs_hz)
+    bad, suspect = (quality.windows(seen, scale.fs_hz, noisy) for noisy in (quality.NOISY, quality.SUSPECT))
     lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
     del seen
     every = table.since(0)
     artefact = beats.is_artefact(every, timing_of(every, bad, lengths, scale.fs_hz)[1])
     found = every.keep(~artefact)
-    return Gathered(found.kept, *timing_of(found, bad, lengths, scale.fs_hz), book, bad, lengths, scale.fs_hz)
+    return Gathered(found.kept, *timing_of(found, bad, lengths, scale.fs_hz), book, bad, suspect, lengths, scale.fs_hz)
 
 
 def _read(
@@ -190,10 +191,9 @@ def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Foun
 
 def conclude(gathered: Gathered, options: Options, models: classify.Models = classify.MODELS) -> Analysis:
     """Classes, episodes and findings of gathered beats, with the whole recording as context."""
-    found, sample, timing, _, bad, lengths, fs_hz = gathered
+    found, sample, timing, _, bad, suspect, lengths, fs_hz = gathered
     labels = classify.classify(timing, found.member, found.spread_ms, gathered.book.shape_mv, models)
-    is_analysable = quality.is_outside(bad, found.segment, sample)
-    bad = _with_doubtful_runs(bad, found, sample, timing, labels, is_analysable)
+    bad = _with_doubtful_runs(bad, suspect, found, sample, timing, labels)
     is_analysable = quality.is_outside(bad, found.segment, sample)
     widths = features.qrs_width_ms(gathered.book.shape_mv)
     table = beats.beat_table(found, sample, timing, labels, widths, is_analysable, options.full_pause_tolerance_pct)
@@ -214,15 +214,16 @@ def conclude(gathered: Gathered, options: Options, models: classify.Models = cla
 
 def _with_doubtful_runs(
     bad: QualityWindows,
+    suspect: QualityWindows,
     found: beats.Kept,
     sample: NDArray[np.int64],
     timing: Timing,
     labels: classify.Labels,
-    is_analysable: NDArray[np.bool_],
 ) -> QualityWindows:
     """The windows, and doubtful runs as noise: from half-way to the beat before to half-way to the beat after."""
     starts = np.isnan(timing.before_ms)
-    runs = doubt.doubtful_runs(labels.beat_class == "V", starts, found.family, is_analysable)
+    is_analysable, is_quiet = (quality.is_outside(windows, found.segment, sample) for windows in (bad, suspect))
+    runs = doubt.doubtful_runs(labels.beat_class == "V", starts, found.family, is_analysable, is_quiet)
     before, after = np.maximum(runs.first - 1, 0), np.minimum(runs.last, sample.size - 1)
     before = np.where(found.segment[before] == found.segment[runs.first], before, runs.first)
     after = np.where(found.segment[after] == found.segment[runs.first], after, runs.last - 1)

@@ -1,10 +1,10 @@
 """Which time is analysable: flat, rail, missing, lead-off and noisy stretches.
 
-Noise is judged from two measures that look at different things: the slope energy between the beats, against that of the
-recording's own quiet time, and how far the beats lie from the shapes of their families. Both together, or one of them
-strongly, make a stretch noisy; a fast or irregular rhythm of steady shapes raises neither. The limits are ours, set on
+Noise is the product of two measures that look at different things: the slope energy between the beats, over that of the
+recording's own quiet time, and how much farther than there the beats lie from the shapes of their families. Slope that
+leaves the beats readable harms nothing, and odd beats in quiet time are arrhythmia, not noise. The limit is ours, set on
 recordings with added noise; fixed limits do not carry over between recordings (J R Soc Interface 2022;19:20220012), so
-the first is relative.
+both measures are relative.
 """
 
 from __future__ import annotations
@@ -21,11 +21,10 @@ from detectors.signal import WORKING_FS_HZ
 
 REACH_BLOCKS = 2  # either side: 7.7 s in all
 QUIET_PERCENTILE = 25
-NOISY = 2.0  # times the quiet level, together with ODD
-ODD = 0.012  # mean distance of the best beats from their families
-VERY_NOISY = 2.5
-VERY_ODD = 0.06
-DISTANCE_CAP = 0.3  # one stretch without any known shape must not condemn its neighbours
+NOISY = 0.06  # times quiet noise, times distance beyond the quiet one
+SUSPECT = NOISY / 2  # enough against beats whose shape lives in noise
+MOST_QUIET_DISTANCE = 0.04  # more is noise throughout the recording, not its usual scatter
+DISTANCE_CAP = 0.3  # one beat without any known shape must not condemn its neighbours
 MARGIN_BLOCKS = 1  # noise begins and ends somewhere in the means of its first and last blocks
 LEAD_OFF = 0.15  # of the recording's usual QRS level
 
@@ -35,29 +34,33 @@ class Seen(NamedTuple):
 
     n_samples: int
     blocks: Blocks
-    distance: NDArray[
-        np.float64
-    ]  # shape (n_blocks,), 1 - correlation of the best beat with its family, NaN without beats
+    distance: NDArray[np.float32]  # shape (n_blocks,), sum over beats of 1 - correlation with the most similar family
+    n_beats: NDArray[np.int16]  # shape (n_blocks,)
+
+
+class Quiet(NamedTuple):
+    """What is usual in a recording."""
+
+    noise: float  # over the QRS level, in quiet time
+    distance: float  # mean of the beats, in quiet time
+    level: float  # of the QRS
 
 
 def look(n_samples: int, blocks: Blocks, working: NDArray[np.float64], likeness: NDArray[np.float32]) -> Seen:
-    """What quality keeps of one segment: its blocks, and how far even the best beat of each lies from its family.
-
-    The best, not the mean: noise moves every beat, an ectopic or a fused one only itself.
-    """
+    """What quality keeps of one segment: its blocks, its beats per block, and how far they lie from their families."""
     n_blocks = blocks.noise.size
     block = working.astype(np.int64)
     block //= qrs.BLOCK
     np.minimum(block, n_blocks - 1, out=block)
-    distance = np.full(n_blocks, np.inf)
-    np.minimum.at(distance, block, np.minimum(1 - likeness, DISTANCE_CAP))
-    return Seen(n_samples, blocks, np.where(np.isinf(distance), np.nan, distance))
+    distance = np.bincount(block, np.minimum(1 - likeness, DISTANCE_CAP), n_blocks)
+    n_beats = np.bincount(block, minlength=n_blocks)
+    return Seen(n_samples, blocks, distance.astype(np.float32), n_beats.astype(np.int16))
 
 
-def windows(seen: list[Seen], fs_hz: float) -> QualityWindows:
-    """Stretches of all segments that are not analysable, each with its reason."""
-    quiet, usual_level = _usual(seen)
-    parts = [_stretches(_reasons(one, quiet, usual_level), one.n_samples, fs_hz) for one in seen]
+def windows(seen: list[Seen], fs_hz: float, noisy: float = NOISY) -> QualityWindows:
+    """Stretches of all segments that are not analysable, each with its reason; a lower `noisy` finds suspect time."""
+    quiet = _quiet(seen)
+    parts = [_stretches(_reasons(one, quiet, noisy), one.n_samples, fs_hz) for one in seen]
     number = np.repeat(np.arange(len(parts)), [reason.size for _, _, reason in parts])
     first, last, reason = (np.concatenate(column) for column in zip(*parts, strict=True)) if parts else _NOTHING
     return QualityWindows(number.astype(np.int16), first, last, reason)
@@ -71,27 +74,42 @@ def analysable_s(n_samples: int, bad: QualityWindows, fs_hz: float) -> float:
     return (n_samples - int((bad.last_sample - bad.first_sample + 1).sum())) / fs_hz
 
 
-def _usual(seen: list[Seen]) -> tuple[float, float]:
-    """Noise of the recording's quiet time and usual QRS level; noise relative to the level."""
-    noise = [_relative_noise(one.blocks) for one in seen]
-    known = np.concatenate([part[~np.isnan(part)] for part in noise]) if noise else np.empty(0)
-    level = np.concatenate([one.blocks.level[np.isfinite(one.blocks.level)] for one in seen]) if seen else np.empty(0)
-    quiet = float(np.percentile(known, QUIET_PERCENTILE)) if known.size else np.inf
-    return quiet, float(np.median(level)) if level.size else 0.0
+def _quiet(seen: list[Seen]) -> Quiet:
+    level = np.concatenate([one.blocks.level for one in seen]) if seen else np.empty(0)
+    level = level[np.isfinite(level)]
+    distance = _low([_near_distance(one) for one in seen])
+    return Quiet(
+        _low([_near_noise(one) for one in seen]),
+        min(distance, MOST_QUIET_DISTANCE),
+        float(np.median(level)) if level.size else 0.0,
+    )
 
 
-def _relative_noise(blocks: Blocks) -> NDArray[np.float64]:
+def _low(parts: list[NDArray[np.float64]]) -> float:
+    """Lower quartile of the known values of all segments, infinite where none is known."""
+    values = np.concatenate(parts) if parts else np.empty(0)
+    values = values[~np.isnan(values)]
+    return float(np.percentile(values, QUIET_PERCENTILE)) if values.size else np.inf
+
+
+def _near_noise(one: Seen) -> NDArray[np.float64]:
     """Noise over the QRS level, mean of the blocks near by, NaN where nothing is known."""
-    return _near_mean(blocks.noise / blocks.level)
+    noise = one.blocks.noise / one.blocks.level
+    known = np.isfinite(noise)
+    return _near_mean(np.where(known, noise, 0), known)
 
 
-def _near_mean(values: NDArray[np.floating]) -> NDArray[np.float64]:
-    known = np.isfinite(values)
-    count, total = _near_sum(known.astype(np.float64)), _near_sum(np.where(known, values, 0))
-    return np.divide(total, count, out=np.full(values.size, np.nan), where=count > 0)
+def _near_distance(one: Seen) -> NDArray[np.float64]:
+    """Mean distance of the beats near by from their families, NaN where there is none."""
+    return _near_mean(one.distance, one.n_beats)
 
 
-def _near_sum(values: NDArray[np.float64], reach: int = REACH_BLOCKS) -> NDArray[np.float64]:
+def _near_mean(total: NDArray[np.floating], count: NDArray[np.integer | np.bool_]) -> NDArray[np.float64]:
+    near, known = _near_sum(total), _near_sum(count)
+    return np.divide(near, known, out=np.full(known.size, np.nan), where=known > 0)
+
+
+def _near_sum(values: NDArray[np.generic], reach: int = REACH_BLOCKS) -> NDArray[np.float64]:
     """Sum of the values within `reach` blocks of each block, shape (n_blocks,)."""
     total = np.zeros(values.size + 2 * reach + 1)
     np.cumsum(values, out=total[reach + 1 : reach + 1 + values.size])
@@ -99,16 +117,15 @@ def _near_sum(values: NDArray[np.float64], reach: int = REACH_BLOCKS) -> NDArray
     return total[2 * reach + 1 :] - total[: values.size]
 
 
-def _reasons(one: Seen, quiet: float, usual_level: float) -> NDArray[np.int8]:
+def _reasons(one: Seen, quiet: Quiet, noisy: float) -> NDArray[np.int8]:
     """Reason per block why it is not analysable, index into QUALITY_REASONS, -1 when it is."""
     blocks = one.blocks
     if blocks.noise.size == 0:
         return np.empty(0, dtype=np.int8)
-    noise, odd = (np.nan_to_num(v, nan=0.0) for v in (_relative_noise(blocks), _near_mean(one.distance)))
-    is_noisy = (noise > NOISY * quiet) & (odd > ODD) | (noise > VERY_NOISY * quiet) | (odd > VERY_ODD)
+    is_noisy = _near_noise(one) * (_near_distance(one) - quiet.distance) > noisy * quiet.noise
     reason = np.full(blocks.noise.size, -1, dtype=np.int8)
-    reason[_near_sum(is_noisy.astype(np.float64), MARGIN_BLOCKS) > 0] = QUALITY_REASONS.index("noise")
-    has_qrs = (blocks.level >= LEAD_OFF * usual_level) & np.isfinite(blocks.level) & ~blocks.is_dropped
+    reason[_near_sum(is_noisy, MARGIN_BLOCKS) > 0] = QUALITY_REASONS.index("noise")
+    has_qrs = (blocks.level >= LEAD_OFF * quiet.level) & np.isfinite(blocks.level) & ~blocks.is_dropped
     reason[~has_qrs] = QUALITY_REASONS.index("lead_off")
     reason[blocks.is_flat] = QUALITY_REASONS.index("flat")
     reason[blocks.is_rail] = QUALITY_REASONS.index("rail")

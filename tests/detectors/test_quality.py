@@ -14,9 +14,11 @@ N_BLOCKS = 60
 
 
 def seen(noise: np.ndarray, distance: np.ndarray, level: np.ndarray | None = None) -> quality.Seen:
+    """A segment with one beat in each block."""
     flag = np.zeros(N_BLOCKS, dtype=bool)
     level = np.full(N_BLOCKS, 10, dtype=np.float32) if level is None else level.astype(np.float32)
-    return quality.Seen(N_BLOCKS * BLOCK, Blocks(flag, flag, flag, flag, noise.astype(np.float32), level), distance)
+    blocks = Blocks(flag, flag, flag, flag, noise.astype(np.float32), level)
+    return quality.Seen(N_BLOCKS * BLOCK, blocks, distance.astype(np.float32), np.ones(N_BLOCKS, dtype=np.int16))
 
 
 def quiet() -> tuple[np.ndarray, np.ndarray]:
@@ -37,14 +39,31 @@ def test_quiet_time_is_analysable() -> None:
 
 
 def test_noise_needs_slope_and_odd_shapes_together() -> None:
-    """More slope between beats alone, or odd beats alone, leave time analysable; both together do not."""
+    """Much slope between beats that stay readable, or odd beats alone, leave time analysable; both together do not."""
     noise, distance = quiet()
-    noise[20:30], distance[40:50] = 0.9, 0.02
+    noise[20:30], distance[40:50] = 1.6, 0.05
     assert quality.windows([seen(noise, distance)], FS_HZ).segment.size == 0
-    distance[20:30] = 0.02
+    distance[20:30] = 0.05
     bad = quality.windows([seen(noise, distance)], FS_HZ)
     assert bad.quality_reason.tolist() == ["noise"]
     assert bad.first_sample[0] <= 21 * BLOCK and bad.last_sample[0] >= 29 * BLOCK - 1
+
+
+def test_suspect_time_holds_all_noise_and_more() -> None:
+    """A lower limit finds the same noise, and weaker noise beside it."""
+    noise, distance = quiet()
+    noise[10:30], distance[10:20], distance[20:30] = 1.6, 0.05, 0.016
+    bad, suspect = (
+        quality.windows([seen(noise, distance)], FS_HZ, limit) for limit in (quality.NOISY, quality.SUSPECT)
+    )
+    assert bad.last_sample[0] < 24 * BLOCK
+    assert suspect.first_sample[0] <= bad.first_sample[0] and suspect.last_sample[0] >= 29 * BLOCK - 1
+
+
+def test_beats_unlike_any_throughout_are_noise() -> None:
+    """In a recording without any quiet time, beats far from every family are not taken for its usual scatter."""
+    noise, _ = quiet()
+    assert quality.windows([seen(noise, np.full(N_BLOCKS, 0.2))], FS_HZ).last_sample[0] == N_BLOCKS * BLOCK - 1
 
 
 def test_limits_follow_the_recordings_own_quiet_time() -> None:
