@@ -10,7 +10,7 @@ import pytest
 from detectors.annotations import beat_annotations
 from detectors.results import Analysis
 from detectors.scoring import compare_beats, statistics
-from flows.scoring import score_record
+from flows.scoring import score, score_record
 from flows.scoring.score_record import Labelled
 
 # Source: labels of the MIT-BIH Arrhythmia Database (Moody & Mark, IEEE Eng Med Biol 2001;20:45).
@@ -29,10 +29,8 @@ def analysed(folder: Path, name: str) -> tuple[Labelled, Analysis]:
     return record, score_record._analyse(record.signal)
 
 
-@pytest.mark.parametrize("name", FLOORS)
-def test_accuracy_does_not_fall_under_its_floor(reference_ecg: Path, name: str) -> None:
-    """Sensitivity and predictivity for QRS and ventricular beats stay at or above the recorded floor."""
-    record, analysis = analysed(reference_ecg, name)
+def figures_in_analysable_time(record: Labelled, analysis: Analysis) -> tuple[float, ...]:
+    """QRS Se, QRS +P, V Se and V +P."""
     beats, bad, opened = analysis.beats, analysis.quality, record.signal
     result = compare_beats(
         record.labels,
@@ -42,8 +40,25 @@ def test_accuracy_does_not_fall_under_its_floor(reference_ecg: Path, name: str) 
         left_out=np.stack([bad.first_sample, bad.last_sample], axis=1),
     )
     figures = statistics(result.matrix)
-    reached = tuple(figures[key].pct for key in ("qrs_se", "qrs_ppv", "veb_se", "veb_ppv"))
+    return tuple(figures[key].pct for key in ("qrs_se", "qrs_ppv", "veb_se", "veb_ppv"))
+
+
+@pytest.mark.parametrize("name", FLOORS)
+def test_accuracy_does_not_fall_under_its_floor(reference_ecg: Path, name: str) -> None:
+    """Sensitivity and predictivity for QRS and ventricular beats stay at or above the recorded floor."""
+    reached = figures_in_analysable_time(*analysed(reference_ecg, name))
     assert all(value >= floor for value, floor in zip(reached, FLOORS[name], strict=True)), reached
+
+
+def test_electrode_motion_is_left_out_where_it_harms(reference_ecg: Path) -> None:
+    """Electrode motion at 12 dB in two fifths of the time leaves most of it analysable and few false beats in it."""
+    record = score_record.open_labelled(reference_ecg / "mitdb" / "119.hea", 0)
+    noise = score_record.open_signal(reference_ecg / "nstdb" / "em.hea", 0)
+    noisy = score._stressed(record, noise, 12)
+    analysis = score_record._analyse(noisy.signal)
+    # 95 % of what the same record reaches without noise (99.7): our goal, common practice, no source
+    assert figures_in_analysable_time(noisy, analysis)[3] > 95
+    assert analysis.analysable_s > 0.85 * record.signal.n_samples / float(record.signal.rate)
 
 
 def test_real_arrhythmia_is_not_gated_away(reference_ecg: Path) -> None:
