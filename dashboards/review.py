@@ -10,7 +10,7 @@ from typing import Any
 
 import polars as pl
 
-from dashboards import addresses
+from dashboards import addresses, words
 from dashboards.drawings import Drawings
 from dashboards.tables import Tables
 
@@ -27,7 +27,7 @@ def context(tables: Tables, recording: dict[str, Any], drawings: Drawings) -> di
     shapes = {row["family"]: row for row in drawings.families}
     said = _said(tables.of_recording("decisions", recording_id), recording["fingerprint"])
     items = [
-        row | {"shape": shapes[row["family"]], "said": said.get(row["family"], [])}
+        row | {"shape": shapes[row["family"]], "said": said.get(row["family"], []), "parts": _parts(row)}
         for row in sheet.head(FAMILIES_SHOWN).rows(named=True)
     ]
     shown = _with_strips(items, drawings.strips)
@@ -55,9 +55,18 @@ def _said(decisions: pl.DataFrame, fingerprint: str | None) -> dict[int, list[st
     return said
 
 
+def _parts(family: dict[str, Any]) -> list[tuple[str, int]]:
+    """Return the parts into which a family can be split: the classes found in it and their beats; none for one class."""
+    counts = [(letter, family[f"{letter.lower()}_beats"] or 0) for letter in words.CLASSES]
+    held = [(letter, count) for letter, count in counts if count]
+    return held if len(held) > 1 else []
+
+
 def _in_words(row: dict[str, Any]) -> str:
     if row["is_mixed"]:
-        return "different shapes"
+        return "split"
+    if row["decision"] == "withdraw":
+        return "withdrawn"
     if row["decision"] is None:
         return (
             f"same shape as family {row['same_as_family']}" if row["same_as_family"] is not None else "nothing decided"

@@ -10,14 +10,24 @@ from dashboards import addresses
 from dashboards.tables import Tables
 
 PAGE = "trail.html"
-TABLES = ("audit", "reader_agreement", "reader_conflicts", "reviewed", "undecided_families", "recordings")
+TABLES = (
+    "audit",
+    "reader_agreement",
+    "reader_conflicts",
+    "reviewed",
+    "undecided_families",
+    "unmet_decisions",
+    "recordings",
+)
 EDITS_SHOWN = 100
+UNMET_SHOWN = 100
 
 
 def context(tables: Tables) -> dict[str, Any]:
     """Return what the page shows."""
     audit = tables.whole("audit").filter(pl.col("change_kind") != "delivery")
     conflicts = tables.whole("reader_conflicts")
+    unmet = tables.whole("unmet_decisions").sort("recording_id", "start_utc", "reader_code")
     return {
         "agreement": tables.whole("reader_agreement").rows(named=True),
         "conflicts": [row | {"page": addresses.review_page(row["recording_id"])} for row in conflicts.rows(named=True)],
@@ -25,6 +35,11 @@ def context(tables: Tables) -> dict[str, Any]:
             row | {"page": addresses.review_page(row["recording_id"])}
             for row in tables.whole("undecided_families").rows(named=True)
         ],
+        "unmet": [
+            row | {"page": addresses.review_page(row["recording_id"])}
+            for row in unmet.head(UNMET_SHOWN).rows(named=True)
+        ],
+        "unmet_count": unmet.height,
         "reviewed": [
             row | {"page": addresses.recording_page(row["recording_id"])}
             for row in tables.whole("reviewed").rows(named=True)

@@ -51,26 +51,33 @@ class FamilyQuarters(NamedTuple):
     quarter_us: NDArray[np.int64]  # start of the quarter, microseconds since 1970 UTC
     family: NDArray[np.int16]  # -1 for beats of no family
     beat_count: NDArray[np.int64]  # analysable beats
+    n_beats: NDArray[np.int64]  # those of them that were found as N, and so on
+    s_beats: NDArray[np.int64]
+    v_beats: NDArray[np.int64]
+    f_beats: NDArray[np.int64]
+    q_beats: NDArray[np.int64]
 
 
 def family_quarters(analysis: Analysis, segment_start_us: NDArray[np.int64]) -> FamilyQuarters:
-    """Count the analysable beats of every family in every quarter of a UTC hour, by quarter and family.
+    """Count the analysable beats of every family in every quarter of a UTC hour, all and by class.
 
     `segment_start_us` as for `quarter_hours`.
     """
     beats, n_columns = analysis.beats, len(analysis.families.beat_count) + 1
     clock = _Clock(segment_start_us, analysis.fs_hz)
     quarters = np.unique(_spread(*_recorded(analysis, clock))[0])
-    count = np.zeros(len(quarters) * n_columns, dtype=np.int64)
+    count = np.zeros((len(quarters) * n_columns, len(BEAT_CLASSES)), dtype=np.int64)
     for rows in _slabs(len(beats.sample)):
         good = beats.is_analysable[rows]
         quarter = clock.quarter(beats.segment[rows][good], beats.sample[rows][good])
         cell = np.searchsorted(quarters, quarter) * n_columns + beats.family[rows][good] + 1
-        count += np.bincount(cell, minlength=len(count))
-    held = np.flatnonzero(count)
-    return FamilyQuarters(
-        quarters[held // n_columns] * QUARTER_US, (held % n_columns - 1).astype(np.int16), count[held]
-    )
+        for column, name in enumerate(BEAT_CLASSES):
+            of_class = cell[beats.beat_class[rows][good] == name]
+            count[:, column] += np.bincount(of_class, minlength=len(count))
+    total = count.sum(axis=1)
+    held = np.flatnonzero(total)
+    family = (held % n_columns - 1).astype(np.int16)
+    return FamilyQuarters(quarters[held // n_columns] * QUARTER_US, family, total[held], *count[held].T)
 
 
 def quarter_hours(analysis: Analysis, segment_start_us: NDArray[np.int64]) -> QuarterHours:

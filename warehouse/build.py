@@ -43,7 +43,7 @@ from warehouse.slices import slice_count, slice_of
 from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets, zone_rules
 
 MODELS: dict[str, tuple[str, ...]] = {
-    "decided": ("decided_beats", "rejected_episodes"),
+    "decided": ("latest_reviews", "met_reviews", "latest_decisions", "decided_beats", "rejected_episodes"),
     "staging": ("patients", "therapies", "recording_wears", "counted_quarters", "patient_quarters"),
     "intermediate": ("hours", "recording_tallies", "local_hours", "burden_intervals", "wear_days", "period_spans", "periods",
         "family_days", "family_shapes",
@@ -51,7 +51,7 @@ MODELS: dict[str, tuple[str, ...]] = {
     "marts": (
         "deliveries", "recordings", "segments", "families", "episodes", "findings", "marks", "attention_from_days",
         "attention_from_therapies", "attention_from_recordings", "attention", "review_sheet", "decisions", "reviews",
-        "undecided_families", "reviewed", "review_effort", "latest_decisions", "reader_conflicts", "reader_agreement",
+        "undecided_families", "unmet_decisions", "reviewed", "review_effort", "reader_conflicts", "reader_agreement",
         "runs_of_flow", "audit", "fingerprints",
     ),
 }  # fmt: skip

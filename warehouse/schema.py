@@ -331,14 +331,20 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("attention_rank", "INTEGER", "", "Order on the attention list, 1 first."),
     ("decision_order", "INTEGER", "", "Place of the decision within its file, from 0."),
     ("read_fingerprint", "VARCHAR", "", "Fingerprint of the analysis that the over-reader saw."),
-    ("decision_subject", "VARCHAR", "", "What was decided: family, beat, episode, or note for the reader's remark."),
+    (
+        "decision_subject",
+        "VARCHAR",
+        "",
+        "What was decided: family, part (beats of a family found as one class), beat, episode, or note for a remark.",
+    ),
     ("automatic_class", "VARCHAR", "", "Class found automatically when the decision was taken."),
     ("same_as_family", "SMALLINT", "", "Family that has the same shape in the reader's eyes."),
-    ("is_mixed", "BOOLEAN", "", "The family holds different shapes in the reader's eyes."),
+    ("is_mixed", "BOOLEAN", "", "The family holds different beats in the reader's eyes and is split."),
     ("note", "VARCHAR", "", "Remark of the reader."),
     ("reader_codes", "VARCHAR", "", "Codes of all readers, separated by blanks."),
     ("decided_beats", "BIGINT", "beats", "Analysable beats whose class an over-reader decided; the counts hold it."),
-    ("unmet_decisions", "BIGINT", "beats", "Decisions without a published beat within 150 ms."),
+    ("unmet_decisions", "BIGINT", "", "Decided beats, runs and pauses that the published analysis does not have."),
+    ("part_class", "VARCHAR", "", "Class found automatically that marks a part of a split family; NULL for the whole."),
     (
         "rejected_episodes",
         "BIGINT",
@@ -353,7 +359,7 @@ COLUMNS: dict[str, Column] = _dictionary(
     ),
     ("automatic_couplets", "BIGINT", "", "Ventricular couplets found automatically, before any decision."),
     ("automatic_runs", "BIGINT", "", "Ventricular runs found automatically, before any decision."),
-    ("undecided_families", "BIGINT", "", "Shape families that a reader marked as holding different shapes."),
+    ("undecided_families", "BIGINT", "", "Shape families that a reader split and of which something is undecided."),
     ("undecided_v_beats", "BIGINT", "beats", "Analysable V beats of such a family on which nothing is decided."),
     ("undecided_other_beats", "BIGINT", "beats", "Its analysable beats of other classes on which nothing is decided."),
     ("v_burden_least_pct", "DOUBLE", "%", "Ventricular burden if no undecided beat of such families were V."),
@@ -395,7 +401,12 @@ COLUMNS: dict[str, Column] = _dictionary(
     ("settled_pct", "DOUBLE", "%", "Share that is settled once this family and all before it are decided."),
     ("reader_code", "VARCHAR", "", "Code of the person who over-read."),
     ("reviewed_utc", "TIMESTAMP", "UTC", "Instant of the review."),
-    ("decision", "VARCHAR", "", "What the reader decided."),
+    (
+        "decision",
+        "VARCHAR",
+        "",
+        "What the reader decided: accept, a class, noise, reject, or withdraw for no word any more.",
+    ),
     ("run_id", "VARCHAR", "", "Code of one run of the nightly flow."),
     ("finished_utc", "TIMESTAMP", "UTC", "Instant at which the run ended."),
     ("accepted_count", "BIGINT", "", "Deliveries accepted in the run."),
@@ -448,7 +459,8 @@ def _tables(*tables: Table) -> dict[str, Table]:
     return {table.name: table for table in tables}
 
 
-_COUNTS = ("n_beats", "s_beats", "v_beats", "f_beats", "q_beats", "all_beats")
+_CLASS_COUNTS = ("n_beats", "s_beats", "v_beats", "f_beats", "q_beats")
+_COUNTS = (*_CLASS_COUNTS, "all_beats")
 _RHYTHM = (
     "couplets", "runs", "sv_runs", "pauses", "longest_run_beats", "fastest_run_bpm", "longest_pause_ms",
     "bigeminy_s", "trigeminy_s", "irregular_s",
@@ -531,7 +543,7 @@ LAKE: dict[str, Table] = _tables(
     Table(
         "family_quarters", "one row per shape family and quarter of a UTC hour with analysable beats of it",
         ("recording_id", "family", "quarter_utc"),
-        ("recording_id", "fingerprint", "family", "quarter_utc", "beat_count"),
+        ("recording_id", "fingerprint", "family", "quarter_utc", "beat_count", *_CLASS_COUNTS),
     ),
     Table(
         "episodes", "one row per couplet, run, bigeminy or trigeminy stretch, pause or irregular stretch",
@@ -592,7 +604,7 @@ LAKE: dict[str, Table] = _tables(
 
 OF_PATIENT = (
     "recordings", "segments", "families", "patient_families", "family_days", "episodes", "findings", "marks", "hours",
-    "local_hours", "wear_days", "periods", "review_sheet", "undecided_families", "reviewed",
+    "local_hours", "wear_days", "periods", "review_sheet", "undecided_families", "unmet_decisions", "reviewed",
 )  # fmt: skip
 """Published tables that follow patient by patient: a row belongs to one patient and follows from no other's data."""
 
@@ -727,7 +739,8 @@ PUBLISHED: dict[str, Table] = _tables(
         "review_sheet",
         "one row per recording and shape family with counted beats, in the order in which an over-reader decides",
         ("recording_id", "family"),
-        ("recording_id", "review_rank", "family", "family_class", "beat_count", "v_share_pct", "settled_pct"),
+        ("recording_id", "review_rank", "family", "family_class", "beat_count", *_CLASS_COUNTS, "v_share_pct",
+         "settled_pct"),
     ),
     LAKE["decisions"],
     LAKE["reviews"],
@@ -739,9 +752,15 @@ PUBLISHED: dict[str, Table] = _tables(
          "v_burden_least_pct", "v_burden_most_pct"),
     ),
     Table(
-        "undecided_families", "one row per shape family that an over-reader marked as holding different shapes",
+        "undecided_families", "one row per shape family that an over-reader split and of which something is undecided",
         ("recording_id", "family"),
         ("recording_id", "patient_code", "family", "reader_codes", "undecided_v_beats", "undecided_other_beats"),
+    ),
+    Table(
+        "unmet_decisions", "one row per reader and decided beat, run or pause that the published analysis does not have",
+        ("recording_id", "reader_code", "decision_subject", "start_utc", "episode_kind"),
+        ("recording_id", "patient_code", "reader_code", "decision_subject", "start_utc", "episode_kind", "decision",
+         "reviewed_utc", "delivery_id", "reason"),
     ),
     Table(
         "review_effort", "one row per recording with a ventricular family: what it takes to settle its burden",
@@ -750,10 +769,10 @@ PUBLISHED: dict[str, Table] = _tables(
          "decided_v_pct"),
     ),
     Table(
-        "reader_conflicts", "one row per family or beat that two readers decided differently",
-        ("recording_id", "read_fingerprint", "decision_subject", "family", "segment", "sample", "reader_code",
-         "other_reader_code"),
-        ("recording_id", "read_fingerprint", "decision_subject", "family", "segment", "sample", "beat_count",
+        "reader_conflicts", "one row per family, part of a family or beat that two readers decided differently",
+        ("recording_id", "read_fingerprint", "decision_subject", "family", "part_class", "segment", "sample",
+         "reader_code", "other_reader_code"),
+        ("recording_id", "read_fingerprint", "decision_subject", "family", "part_class", "segment", "sample", "beat_count",
          "reader_code", "decision", "other_reader_code", "other_decision"),
     ),
     Table(

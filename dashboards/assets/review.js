@@ -2,8 +2,8 @@
 "use strict";
 
 (function overRead() {
-  const KIND = "burdenline-decisions", VERSION = 1;
-  const CLASSES = ["N", "S", "V", "F", "Q"], KEYS = { a: "accept", n: "N", s: "S", v: "V", f: "F", q: "Q", x: "noise" };
+  const KIND = "burdenline-decisions", VERSION = 2, READ = [1, 2];
+  const CLASSES = ["N", "S", "V", "F", "Q"], KEYS = { a: "accept", n: "N", s: "S", v: "V", f: "F", q: "Q", x: "noise", w: "withdraw" };
   const sheet = document.getElementById("sheet");
   const { recording, fingerprint } = sheet.dataset;
   const shelf = `burdenline-review:${recording}:${fingerprint}`;
@@ -16,12 +16,16 @@
   const empty = () => ({ reader_code: "", note: "", families: {}, beats: {}, episodes: {} });
   let state = empty();
   const familyOf = (item) => state.families[item.dataset.family] || {};
-  // What is decided of a family: nothing when it holds different shapes, else its own decision or that of the family it looks like.
+  const partsOf = (item) => [...item.querySelectorAll(".part")];
+  const decisionOn = (item, part) => (familyOf(item).parts || {})[part.dataset.automatic];
+  // What is decided of a family: of a split one whether all parts are, else its own decision or that of the family it looks like.
   function classOf(item) {
     const { decision, same_as, is_mixed } = familyOf(item);
-    if (is_mixed) return undefined;
+    const parts = partsOf(item);
+    if (is_mixed) return parts.length && parts.every((part) => decisionOn(item, part)) ? "parts" : undefined;
     const alike = state.families[same_as];
-    return decision || (alike && !alike.is_mixed ? alike.decision : undefined);
+    const word = decision || (alike && !alike.is_mixed ? alike.decision : undefined);
+    return word === "withdraw" ? undefined : word;
   }
   const beatName = (mark) => `${mark.dataset.segment}:${mark.dataset.sample}`;
   const episodeName = (row) => `${row.dataset.kind}:${row.dataset.segment}:${row.dataset.first}`;
@@ -36,22 +40,24 @@
     for (const item of items) {
       const { decision, same_as, is_mixed } = familyOf(item);
       item.classList.toggle("decided", Boolean(classOf(item)));
-      item.classList.toggle("open", Boolean(is_mixed));
-      press(item, is_mixed ? undefined : decision);
+      item.classList.toggle("open", Boolean(is_mixed) && !classOf(item));
+      press(item.querySelector(".choices"), is_mixed ? undefined : decision);
       item.querySelector(".open-note").hidden = !is_mixed;
+      for (const box of item.querySelectorAll(".parts")) box.hidden = !is_mixed;
+      for (const part of partsOf(item)) press(part, decisionOn(item, part));
       item.querySelector("[data-same-as]").value = same_as ?? "";
       item.querySelector("[data-mixed]").checked = Boolean(is_mixed);
     }
     for (const row of episodes) press(row, state.episodes[episodeName(row)]);
     for (const mark of marks) {
       const decision = state.beats[beatName(mark)];
-      mark.textContent = decision === "noise" ? "✕" : decision || mark.dataset.automatic;
+      mark.textContent = { noise: "✕", withdraw: "↶" }[decision] || decision || mark.dataset.automatic;
       mark.classList.toggle("changed", Boolean(decision));
     }
     reader.value = state.reader_code;
     note.value = state.note;
     const decided = items.filter(classOf);
-    const left = items.filter((item) => familyOf(item).is_mixed);
+    const left = items.filter((item) => familyOf(item).is_mixed && !classOf(item));
     const share = (some) => some.reduce((sum, item) => sum + Number(item.dataset.share), 0).toFixed(1);
     const single = Object.keys(state.beats).length;
     const told = [`${share(decided)} % of the ventricular beats settled`, `${decided.length} of ${items.length} families decided`];
@@ -61,12 +67,18 @@
   }
 
   function press(place, decision) {
-    for (const button of place.querySelectorAll(".choices [data-decision]")) button.setAttribute("aria-pressed", String(button.dataset.decision === decision));
+    for (const button of place.querySelectorAll("[data-decision]")) button.setAttribute("aria-pressed", String(button.dataset.decision === decision));
   }
 
   function decideFamily(item, change) {
     state.families[item.dataset.family] = { ...familyOf(item), ...change };
     keep();
+  }
+
+  function decidePart(item, part, decision) {
+    const parts = { ...familyOf(item).parts };
+    if (decision) parts[part.dataset.automatic] = decision; else delete parts[part.dataset.automatic];
+    decideFamily(item, { parts, is_mixed: true });
   }
 
   function decideBeat(mark, decision) {
@@ -84,8 +96,9 @@
   sheet.addEventListener("click", (click) => {
     const button = click.target.closest("[data-decision]");
     if (!button) return;
-    const row = button.closest(".episode");
-    if (row) { state.episodes[episodeName(row)] = button.dataset.decision; keep(); }
+    const row = button.closest(".episode"), part = button.closest(".part");
+    if (part) decidePart(part.closest(".item"), part, button.dataset.decision);
+    else if (row) { state.episodes[episodeName(row)] = button.dataset.decision; keep(); }
     else decideFamily(button.closest(".item"), { decision: button.dataset.decision, is_mixed: false });
   });
   sheet.addEventListener("change", (change) => {
@@ -108,8 +121,19 @@
     if (event.key === "j") goTo(items[Math.min(here + 1, items.length - 1)]);
     if (event.key === "k") goTo(items[Math.max(here - 1, 0)]);
     if (here < 0) return;
-    const item = items[here];
-    if (event.key === "d") decideFamily(item, { is_mixed: !familyOf(item).is_mixed });
+    const item = items[here], part = event.target.closest(".part"), parts = partsOf(item);
+    if (event.key === "d") {
+      decideFamily(item, { is_mixed: !familyOf(item).is_mixed });
+      (familyOf(item).is_mixed && parts.length ? parts[0] : item).focus({ preventScroll: true });
+      return;
+    }
+    if (part && event.key === "u") { decidePart(item, part, undefined); return; }
+    if (part && decision && decision !== "withdraw") {
+      decidePart(item, part, decision === part.dataset.automatic ? "accept" : decision);
+      const next = parts[parts.indexOf(part) + 1];
+      if (next) next.focus({ preventScroll: true }); else goTo(items[here + 1]);
+      return;
+    }
     if (event.key === "u") { delete state.families[item.dataset.family]; keep(); }
     if (decision) {
       decideFamily(item, { decision: decision === item.dataset.automatic ? "accept" : decision, is_mixed: false });
@@ -117,12 +141,17 @@
     }
   });
 
+  const decidedParts = (item) => partsOf(item).filter((part) => decisionOn(item, part)).map((part) => ({
+    automatic: part.dataset.automatic, beat_count: Number(part.dataset.beats), decision: decisionOn(item, part),
+  }));
+
   // The file: lists with everything that applying them needs, described by decisions.schema.json.
   function file() {
     const numbered = (name) => name.split(":").map((part) => (/^-?\d+$/.test(part) ? Number(part) : part));
     const families = items.filter((item) => state.families[item.dataset.family]).map((item) => ({
       family: Number(item.dataset.family), automatic: item.dataset.automatic, beat_count: Number(item.dataset.beats),
       decision: familyOf(item).decision ?? null, same_as: familyOf(item).same_as ?? null, is_mixed: Boolean(familyOf(item).is_mixed),
+      parts: familyOf(item).is_mixed ? decidedParts(item) : [],
     }));
     const automatic = Object.fromEntries(marks.map((mark) => [beatName(mark), mark.dataset.automatic]));
     const beats = Object.entries(state.beats).map(([name, decision]) => {
@@ -152,14 +181,17 @@
   // What keeps a file from being loaded; nothing is applied in part.
   function objection(content) {
     if (!content || content.kind !== KIND) return "this is not a file of over-read decisions";
-    if (content.version !== VERSION) return `the file has version ${content.version}, this page reads version ${VERSION}`;
+    if (!READ.includes(content.version)) return `the file has version ${content.version}, this page reads versions ${READ.join(" and ")}`;
     if (content.recording_id !== recording) return `the decisions belong to recording ${content.recording_id}`;
     if (content.fingerprint !== fingerprint) return "the decisions were taken on another analysis of this recording";
     const lists = ["families", "beats", "episodes"].every((name) => Array.isArray(content[name]));
-    const known = [...CLASSES, "accept", "noise", null];
+    const known = [...CLASSES, "accept", "noise", "withdraw", null];
     if (!lists || typeof content.reader_code !== "string" || typeof content.note !== "string") return "the file is not complete";
     if (content.families.some((each) => !items.some((item) => Number(item.dataset.family) === each.family && item.dataset.automatic === each.automatic))) return "it names families that this sheet does not have";
     if (content.families.some((each) => !known.includes(each.decision)) || content.beats.some((each) => !known.includes(each.decision))) return "it holds decisions that do not exist";
+    const parts = content.families.flatMap(({ family, parts }) => (parts || []).map((part) => ({ ...part, family })));
+    const item = (family) => items.find((each) => Number(each.dataset.family) === family);
+    if (parts.some((part) => !partsOf(item(part.family)).some((each) => each.dataset.automatic === part.automatic) || !known.includes(part.decision))) return "it names parts of families that this sheet does not have";
     return "";
   }
 
@@ -173,7 +205,9 @@
     if (problem) { say(`Not loaded: ${problem}. Nothing was changed.`); return; }
     state = {
       reader_code: content.reader_code, note: content.note,
-      families: Object.fromEntries(content.families.map(({ family, decision, same_as, is_mixed }) => [family, { decision: decision ?? undefined, same_as, is_mixed }])),
+      families: Object.fromEntries(content.families.map(({ family, decision, same_as, is_mixed, parts }) => [family, {
+        decision: decision ?? undefined, same_as, is_mixed, parts: Object.fromEntries((parts || []).map((part) => [part.automatic, part.decision])),
+      }])),
       beats: Object.fromEntries(content.beats.map((each) => [`${each.segment}:${each.sample}`, each.decision])),
       episodes: Object.fromEntries(content.episodes.map((each) => [`${each.episode_kind}:${each.segment}:${each.first_sample}`, each.decision])),
     };

@@ -1,7 +1,7 @@
 """Decisions of over-readers: the file that the over-read sheet saves, checked as a whole and landed as rows.
 
-`dashboards/assets/decisions.schema.json` says what a file may hold. Families are turned into their beats here, while
-the analysis that the reader saw is still in force, so that the decisions outlive it.
+`dashboards/assets/decisions.schema.json` says what a file may hold. Families and their parts are turned into their beats
+here, while the analysis that the reader saw is still in force, so that the decisions outlive it.
 """
 
 from __future__ import annotations
@@ -22,8 +22,10 @@ from warehouse.ledger import Ledger
 from warehouse.parts import Part, read_part, write_part
 
 KIND = "burdenline-decisions"
+VERSIONS = (1, 2)
 FORMAT = "over-read decisions"
 LARGEST_BYTES = 20_000_000
+NEAR = "150ms"  # as decisions meet beats
 
 
 def is_decisions(head: bytes) -> bool:
@@ -40,7 +42,8 @@ def land(lake: Path, ledger: Ledger, path: Path, delivery_id: str) -> tuple[str,
     content = read(path)
     beats = _beats_in_force(lake, ledger, content)
     loads: Loads = {}
-    for table, rows in (("decisions", decisions(content, beats)), ("reviews", reviews(content, beats))):
+    earlier = _earlier_reviews(lake, ledger, content)
+    for table, rows in (("decisions", decisions(content, beats)), ("reviews", reviews(content, beats, earlier))):
         frame = rows.with_columns(delivery_id=pl.lit(delivery_id))
         typed = typed_frame(table, frame.rows(named=True))
         loads[table, delivery_id] = [write_part(lake, table, delivery_id, typed)] if typed.height else []
@@ -55,10 +58,10 @@ def read(path: Path) -> dict[str, Any]:
         content = json.loads(path.read_text(encoding="utf-8"))
     except ValueError as problem:
         raise Refused("decisions_unreadable", f"the decisions file is no JSON: {problem}. Save it again.") from None
-    if isinstance(content, dict) and content.get("version") != 1:
+    if isinstance(content, dict) and content.get("version") not in VERSIONS:
         raise Refused(
             "decisions_of_other_version",
-            f"the decisions file has version {str(content.get('version'))[:20]}, expected 1. "
+            f"the decisions file has version {str(content.get('version'))[:20]}, expected 1 or 2. "
             "Update burdenline, or save the decisions again from a page of this programme.",
         )
     try:
@@ -108,6 +111,7 @@ def _fitting(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
     lost, beginless = (places.join(beats, on=("segment", "sample"), how="anti").height for places in (single, begins))
     twice = len(content["families"]) - len(named)
     twice += sum(places.height - places.unique().height for places in (single, begins))
+    twice += len(_parts(content)) - _part_frame(content).select("family", "beat_class").n_unique()
     if unknown or lost or beginless or twice:
         raise Refused(
             "decisions_do_not_fit",
@@ -116,6 +120,19 @@ def _fitting(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
             "Save them again.",
         )
     return beats
+
+
+def _earlier_reviews(lake: Path, ledger: Ledger, content: dict[str, Any]) -> pl.Series:
+    """Instants of the beats on which the reader decided in files before; asked only where a family is withdrawn."""
+    found = pl.Series(dtype=pl.Datetime("us"))
+    if any(row["decision"] == "withdraw" for row in content["families"]):
+        for part in ledger.parts("reviews"):
+            rows = read_part(lake, part)
+            same = (pl.col("recording_id") == content["recording_id"]) & (
+                pl.col("reader_code") == content["reader_code"]
+            )
+            found = found.append(rows.filter(same)["beat_utc"])
+    return found.unique().sort()
 
 
 _PLACE = {"segment": pl.Int16, "sample": pl.Int64}
@@ -133,14 +150,20 @@ def _begins(content: dict[str, Any]) -> pl.DataFrame:
 
 
 def decisions(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
-    """Return one row per decision of a file, in the order of the file: families, beats, episodes, note.
+    """Return one row per decision of a file, in the order of the file: families, their parts, beats, episodes, note.
 
-    An episode gets the instant at which it begins, so that it is met again when segments are numbered anew.
+    An episode gets the instant at which it begins, so that it is met again when segments are numbered anew; a beat gets
+    its family.
     """
     rows = [
         {"decision_subject": "family", "automatic_class": row["automatic"], "same_as_family": row["same_as"]}
         | {name: row[name] for name in ("family", "beat_count", "decision", "is_mixed")}
         for row in content["families"]
+    ]
+    rows += [
+        {"decision_subject": "part", "family": family, "automatic_class": part["automatic"]}
+        | {name: part[name] for name in ("beat_count", "decision")}
+        for family, part in _parts(content)
     ]
     rows += [
         {"decision_subject": "beat", "automatic_class": row["automatic"], "beat_count": 1}
@@ -158,14 +181,22 @@ def decisions(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
     instants = (
         _begins(content).join(beats, on=("segment", "sample")).select(*_PLACE, "episode_kind", start_utc="beat_utc")
     )
+    of_beats = _single(content).join(beats, on=("segment", "sample")).select(*_PLACE, of_beat="family")
     frame = typed_frame("decisions", numbered).drop("delivery_id", "start_utc")
-    return frame.join(instants, on=(*_PLACE, "episode_kind"), how="left", maintain_order="left")
+    located = frame.join(instants, on=(*_PLACE, "episode_kind"), how="left", maintain_order="left")
+    is_beat = pl.when(decision_subject="beat")
+    return (
+        located.join(of_beats, on=tuple(_PLACE), how="left", maintain_order="left")
+        .with_columns(family=is_beat.then("of_beat").otherwise("family"))
+        .drop("of_beat")
+    )
 
 
-def reviews(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
-    """Return one row per beat that a file decides; a single beat's decision goes before its family's.
+def reviews(content: dict[str, Any], beats: pl.DataFrame, earlier_utc: pl.Series) -> pl.DataFrame:
+    """Return one row per beat that a file decides; a single beat's decision goes before its part's or family's.
 
-    Accepted normal beats are left out: they are most of a recording and change nothing.
+    Accepted normal beats are left out: they are most of a recording and change nothing. A withdrawn family gives a row for
+    each of its beats near one of `earlier_utc`, the sorted instants on which the reader decided before.
     """
     families = pl.DataFrame(
         list(_of_families(content).items()),
@@ -175,23 +206,39 @@ def reviews(content: dict[str, Any], beats: pl.DataFrame) -> pl.DataFrame:
     by_beat = _single(content).with_columns(
         of_beat=pl.Series([row["decision"] for row in content["beats"]], dtype=pl.String)
     )
+    said_before = earlier_utc.to_frame("beat_utc").with_columns(is_said=pl.lit(True))
     decided = (
         beats.join(families, on="family", how="left")
+        .join(_part_frame(content), on=("family", "beat_class"), how="left")
         .join(by_beat, on=("segment", "sample"), how="left")
-        .with_columns(decision=pl.coalesce("of_beat", "of_family"))
+        .with_columns(decision=pl.coalesce("of_beat", "of_part", "of_family"))
         .drop_nulls("decision")
         .with_columns(decision=pl.when(decision="accept").then("beat_class").otherwise("decision"))
         .filter((pl.col("beat_class") != "N") | (pl.col("decision") != "N"))
+        .sort("beat_utc")
+        .join_asof(said_before, on="beat_utc", strategy="nearest", tolerance=NEAR)
+        .filter((pl.col("decision") != "withdraw") | pl.col("of_beat").is_not_null() | pl.col("is_said"))
         .sort("segment", "sample")
     )
     who = {name: pl.lit(value) for name, value in _who(content).items()}
     return decided.select("segment", "sample", "beat_utc", "decision", automatic_class="beat_class").with_columns(**who)
 
 
+def _parts(content: dict[str, Any]) -> list[tuple[int, dict[str, Any]]]:
+    """Decided parts of the families that are split, each with the number of its family."""
+    return [(row["family"], part) for row in content["families"] if row["is_mixed"] for part in row.get("parts", ())]
+
+
+def _part_frame(content: dict[str, Any]) -> pl.DataFrame:
+    rows = [(family, part["automatic"], part["decision"]) for family, part in _parts(content)]
+    schema = {"family": pl.Int16, "beat_class": pl.String, "of_part": pl.String}
+    return pl.DataFrame(rows, schema=schema, orient="row")
+
+
 def _of_families(content: dict[str, Any]) -> dict[int, str]:
     """Return what is decided of each family that has a decision, its own or that of the family it looks like.
 
-    A family that holds different shapes has none: no single class would be right for its beats.
+    A family that is split has none: no single class would be right for its beats.
     """
     rows = {row["family"]: row for row in content["families"] if not row["is_mixed"]}
     decided = {family: row["decision"] for family, row in rows.items() if row["decision"]}

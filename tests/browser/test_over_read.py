@@ -48,15 +48,56 @@ def test_keys_decide_and_tell_what_is_settled(decided):
     )
 
 
-def test_a_family_of_different_shapes_is_left_open(decided):
+def test_a_mixed_family_that_was_found_as_one_class_is_left_open(decided):
     """One key marks it; its share is told as open, not as settled, and a decision takes the mark away."""
-    decided.locator(".item").first.focus()
+    second = decided.locator(".item").nth(1)
+    second.focus()
     decided.keyboard.press("d")
-    assert "11.2 % of the ventricular beats settled" in progress(decided)
-    assert "1 left open with 88.8 %" in progress(decided)
-    assert decided.locator(".item").first.get_by_text("Left open").is_visible()
+    assert "88.8 % of the ventricular beats settled" in progress(decided)
+    assert "1 left open with 11.2 %" in progress(decided)
+    assert second.get_by_text("Left open").is_visible()
     decided.keyboard.press("a")
     assert "100.0 % of the ventricular beats settled" in progress(decided)
+
+
+def test_a_split_family_is_decided_part_by_part(decided, tmp_path):
+    """Three keys split a family and decide its two parts; the file names them, and it loads again."""
+    first = decided.locator(".item").first
+    first.focus()
+    for key in "dva":
+        decided.keyboard.press(key)
+    assert "100.0 % of the ventricular beats settled, 2 of 3 families decided" in progress(decided)
+    kept = save(decided, tmp_path)
+    content = json.loads(kept.read_text("utf-8"))
+    jsonschema.validate(content, SCHEMA)
+    family = content["families"][0]
+    assert (family["family"], family["is_mixed"]) == (1, True)
+    assert [tuple(part.values()) for part in family["parts"]] == [("V", 600, "accept"), ("F", 40, "accept")]
+    before = progress(decided)
+    decided.get_by_role("button", name="Start over").click()
+    decided.locator("#load").set_input_files(kept)
+    decided.get_by_text("Loaded.").wait_for()
+    assert progress(decided) == before
+
+
+def test_an_undecided_part_leaves_the_family_open(decided):
+    """Undo on a part opens it again, and the family counts as open."""
+    decided.locator(".item").first.focus()
+    for key in "dva":
+        decided.keyboard.press(key)
+    decided.locator(".part").nth(1).focus()
+    decided.keyboard.press("u")
+    assert "1 left open with 88.8 %" in progress(decided)
+
+
+def test_a_decision_of_an_earlier_file_is_withdrawn_with_a_key(decided, tmp_path):
+    """A withdrawn family settles nothing and stands in the file as withdrawn."""
+    decided.locator(".item").first.focus()
+    decided.keyboard.press("w")
+    assert "11.2 % of the ventricular beats settled, 1 of 3 families decided" in progress(decided)
+    content = json.loads(save(decided, tmp_path).read_text("utf-8"))
+    jsonschema.validate(content, SCHEMA)
+    assert content["families"][0]["decision"] == "withdraw"
 
 
 def test_a_family_of_the_same_shape_counts_as_settled(decided):
@@ -116,11 +157,19 @@ def test_a_saved_file_loads_into_an_empty_sheet(decided, visit, tmp_path):
     [
         ({"recording_id": "CN9999-20260101"}, "belong to recording CN9999-20260101"),
         ({"fingerprint": "0ld"}, "another analysis"),
-        ({"version": 2}, "has version 2"),
+        ({"version": 3}, "has version 3"),
         ({"kind": "holiday plans"}, "not a file of over-read decisions"),
         (
             {"families": [{"family": 77, "automatic": "V", "decision": "accept"}]},
             "families that this sheet does not have",
+        ),
+        (
+            {
+                "families": [
+                    {"family": 1, "automatic": "V", "decision": None, "parts": [{"automatic": "Q", "decision": "N"}]}
+                ]
+            },
+            "parts of families that this sheet does not have",
         ),
         (
             {"beats": [{"segment": 0, "sample": 1, "automatic": "V", "decision": "maybe"}]},

@@ -135,6 +135,10 @@ def add_patient(
     _add_change(rows, code, therapy_id, before, after, verdict)
 
 
+SPLIT = {0: {"n_beats": 5000, "s_beats": 120}, 1: {"v_beats": 600, "f_beats": 40}, 2: {"v_beats": 80}}
+"""Beats of the invented families by the class found."""
+
+
 def _add_recording(rows: Any, rng: random.Random, code: str, recording_id: str, start: datetime, burden: float) -> None:
     total = v_total = 0
     for offset in range(5):
@@ -180,7 +184,7 @@ def _add_recording(rows: Any, rng: random.Random, code: str, recording_id: str, 
         found = rows["families"][family - 3]
         rows["review_sheet"].append(
             {"recording_id": recording_id, "review_rank": rank, "family": family, "family_class": found["family_class"],
-             "beat_count": found["beat_count"], "v_share_pct": share, "settled_pct": settled}
+             "beat_count": found["beat_count"], **SPLIT[family], "v_share_pct": share, "settled_pct": settled}
         )  # fmt: skip
     rows["review_effort"].append(
         {"recording_id": recording_id, "patient_code": code, "decisions_to_goal": 2, "settled_pct": 100.0,

@@ -62,7 +62,7 @@ def test_the_sheet_tells_what_readers_decided_before(rows, publish):
         }
         rows["decisions"].append(decision | more)
     first, second, *_ = sheet_of(rows, publish)["items"]
-    assert first["said"] == ["A: accepted as V", "B: different shapes"]
+    assert first["said"] == ["A: accepted as V", "B: split"]
     assert second["said"] == []
 
 
@@ -72,3 +72,9 @@ def test_a_recording_without_families_has_an_empty_sheet(rows, publish):
     rows["review_effort"].clear()
     sheet = sheet_of(rows, publish)
     assert sheet["items"] == [] and sheet["effort"] is None
+
+
+def test_a_family_found_as_several_classes_can_be_split(rows, publish):
+    """Its parts are the classes found in it, each with its beats; a family of one class has none."""
+    parts = {item["family"]: item["parts"] for item in sheet_of(rows, publish)["items"]}
+    assert parts == {1: [("V", 600), ("F", 40)], 2: [], 0: [("N", 5000), ("S", 120)]}

@@ -113,4 +113,9 @@ def test_family_beats_are_counted_by_quarter():
     assert list(zip(quarters, rows.family.tolist(), rows.beat_count.tolist(), strict=True)) == [
         (1, -1, 1), (1, 0, 1), (2, 0, 2), (2, 1, 1),
     ]  # fmt: skip
+    by_class = np.stack([rows.n_beats, rows.s_beats, rows.v_beats, rows.f_beats, rows.q_beats])
+    assert (by_class.sum(axis=0) == rows.beat_count).all()
+    assert by_class.sum(axis=1).tolist() == [
+        np.count_nonzero(found.beats.is_analysable & (found.beats.beat_class == name)) for name in "NSVFQ"
+    ]
     assert rows.beat_count.sum() == quarter_hours(found, start(QUARTER_US)).all_beats.sum()

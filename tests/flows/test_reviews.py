@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import copy
 import json
-from datetime import datetime
+from datetime import datetime, timedelta
 from pathlib import Path
 from typing import Any
 
@@ -50,6 +50,9 @@ BEATS = pl.DataFrame(
 )
 
 
+NOTHING_EARLIER = pl.Series(dtype=pl.Datetime("us"))
+
+
 def family(number: int, decision: str | None, automatic: str = "V") -> dict[str, Any]:
     return {
         "family": number,
@@ -66,7 +69,7 @@ def beat(sample: int, decision: str) -> dict[str, Any]:
 
 
 def classes(content: dict[str, Any]) -> dict[int, str]:
-    return dict(reviews.reviews(content, BEATS).select("sample", "decision").rows())
+    return dict(reviews.reviews(content, BEATS, NOTHING_EARLIER).select("sample", "decision").rows())
 
 
 def test_a_family_is_decided_with_all_its_beats():
@@ -105,15 +108,55 @@ def test_a_family_of_the_same_shape_takes_the_class_decided_for_the_other():
 
 
 def test_a_family_of_different_shapes_stays_as_found():
-    """No class is applied to a family that is to be split; beats relabelled one by one count."""
+    """No class is applied to a family that is split; beats relabelled one by one count."""
     mixed = family(1, "S") | {"is_mixed": True}
     assert classes(CONTENT | {"families": [mixed], "beats": [beat(200, "noise")]}) == {200: "noise"}
+
+
+def part(automatic: str, decision: str) -> dict[str, Any]:
+    return {"automatic": automatic, "beat_count": 1, "decision": decision}
+
+
+def split(number: int, *parts: dict[str, Any]) -> dict[str, Any]:
+    return family(number, None) | {"is_mixed": True, "parts": list(parts)}
+
+
+def test_parts_of_a_split_family_are_decided_each_by_itself():
+    """A part is the family's beats of one automatic class; single beats go before it, a part not named stays open."""
+    mixed = BEATS.with_columns(
+        beat_class=pl.Series(list("NVSNVF")), family=pl.Series([0, 1, 1, 1, 1, 1], dtype=pl.Int16)
+    )
+    content = CONTENT | {"version": 2, "families": [split(1, part("V", "N"), part("S", "accept"), part("N", "accept"))]}
+    content |= {"beats": [beat(400, "noise")]}
+    found = dict(reviews.reviews(content, mixed, NOTHING_EARLIER).select("sample", "decision").rows())
+    assert found == {100: "N", 200: "S", 400: "noise"}
+    rows = reviews.decisions(content, mixed).rows(named=True)
+    assert [(row["decision_subject"], row["family"], row["automatic_class"], row["decision"]) for row in rows] == [
+        ("family", 1, "V", None), ("part", 1, "V", "N"), ("part", 1, "S", "accept"), ("part", 1, "N", "accept"),
+        ("beat", 1, "V", "noise"),
+    ]  # fmt: skip
+
+
+def test_parts_of_a_family_that_is_whole_again_do_not_count():
+    """A decision on the whole family goes before parts that were decided before it on the same sheet."""
+    whole = split(1, part("V", "N")) | {"is_mixed": False, "decision": "accept"}
+    assert classes(CONTENT | {"families": [whole]}) == {100: "V", 200: "V"}
+
+
+def test_a_withdrawn_family_takes_back_what_was_decided_on_its_beats():
+    """Only beats near one that the reader decided before are withdrawn, whatever their class; a single beat at once."""
+    beats = BEATS.with_columns(beat_utc=pl.col("beat_utc") + pl.duration(seconds=pl.col("sample")))
+    earlier_utc = beats["beat_utc"].gather([2, 3]) + timedelta(milliseconds=100)
+    content = CONTENT | {"version": 2, "families": [family(0, "withdraw", "N"), family(1, "withdraw")]}
+    found = reviews.reviews(content, beats, earlier_utc)
+    assert dict(found.select("sample", "decision").rows()) == {200: "withdraw", 300: "withdraw"}
+    assert classes(CONTENT | {"version": 2, "beats": [beat(200, "withdraw")]}) == {200: "withdraw"}
 
 
 @pytest.mark.parametrize(
     ("change", "code"),
     [
-        ({"version": 2}, "decisions_of_other_version"),
+        ({"version": 3}, "decisions_of_other_version"),
         ({"reader_code": ""}, "decisions_unreadable"),
         ({"families": [family(1, "maybe")]}, "decisions_unreadable"),
         ({"surprise": 1}, "decisions_unreadable"),
@@ -191,6 +234,27 @@ def test_decisions_move_the_published_numbers_and_say_so(programme: Path):
     assert run(programme).outcome == "unchanged"
 
 
+def test_withdrawn_decisions_leave_the_automatic_numbers(programme: Path):
+    """After the reader withdraws the family, recording and day count as found; the decisions stay on record."""
+    published = Published(programme / "published")
+    automatic = published.table("reviewed").row(0, named=True)
+    (largest,) = published.table("decisions").filter(pl.col("decision") == "N")["family"]
+    withdrawn = decided(
+        programme, version=2, reviewed_utc="2026-06-02T12:00:00Z", families=[family(largest, "withdraw")]
+    )
+    (programme / "inbox" / "decisions-2.json").write_text(json.dumps(withdrawn))
+    assert run(programme).exit_code == DONE
+    published = Published(programme / "published")
+    after = published.table("reviewed").row(0, named=True)
+    assert (after["v_beats"], after["decided_beats"], after["unmet_decisions"]) == (
+        automatic["automatic_v_beats"],
+        0,
+        0,
+    )
+    assert (after["couplets"], after["runs"]) == (automatic["automatic_couplets"], automatic["automatic_runs"])
+    assert published.table("decisions").height == 2
+
+
 @pytest.mark.parametrize(
     "change",
     [
@@ -198,9 +262,10 @@ def test_decisions_move_the_published_numbers_and_say_so(programme: Path):
         {"recording_id": "SN999_20260101"},
         {"families": [family(999, "N")]},
         {"beats": [beat(1, "N")]},
+        {"families": [split(1, part("V", "N"), part("V", "S"))]},
         {"episodes": [{"episode_kind": "run", "segment": 0, "first_sample": 1, "decision": "reject"}]},
     ],
-    ids=["another analysis", "another recording", "unknown family", "unknown beat", "unknown run"],
+    ids=["another analysis", "another recording", "unknown family", "unknown beat", "part named twice", "unknown run"],
 )
 def test_decisions_that_do_not_fit_change_nothing(programme: Path, change: dict[str, Any]):
     """Decisions for another analysis or recording, or on what it does not have, go to quarantine as a whole."""

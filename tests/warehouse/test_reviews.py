@@ -258,6 +258,105 @@ def test_a_family_of_different_shapes_leaves_the_burden_open(with_runs: Any) -> 
     assert found["v_burden_most_pct"] == pytest.approx(100 * 119 / 120)
 
 
+def split(lake: Any, parts: dict[str, str], reader: str = "A") -> None:
+    """Land that a reader splits family 1 and decides these parts of it."""
+    word = {
+        "delivery_id": f"S{reader}", "recording_id": "R1", "read_fingerprint": "f1", "reader_code": reader,
+        "reviewed_utc": NOON, "family": 1,
+    }  # fmt: skip
+    whole = word | {"decision_order": 0, "decision_subject": "family", "is_mixed": True}
+    decided = [
+        word | {"decision_order": order, "decision_subject": "part", "automatic_class": found, "decision": decision}
+        for order, (found, decision) in enumerate(parts.items(), start=1)
+    ]
+    lake.land("decisions", f"S{reader}", [whole, *decided])
+
+
+@pytest.mark.parametrize(
+    ("parts", "v_open", "others_open"),
+    [({}, 14, 106), ({"N": "accept"}, 14, 0), ({"N": "accept", "V": "accept"}, 0, 0)],
+)
+def test_decided_parts_close_a_split_family(
+    with_runs: Any, parts: dict[str, str], v_open: int, others_open: int
+) -> None:
+    """What is undecided of a split family shrinks with each part decided, accepted normal beats included."""
+    split(with_runs, parts)
+    with with_runs.built() as build:
+        assert build.check() == []
+        rows = build.frame("undecided_families").rows(named=True)
+        (found,) = build.frame("reviewed").rows(named=True)
+    # V beats that were accepted have rows of their own; here they do not, so the parts alone close the family
+    assert [(row["undecided_v_beats"], row["undecided_other_beats"]) for row in rows] == (
+        [(v_open, others_open)] if v_open or others_open else []
+    )
+    assert found["undecided_families"] == len(rows)
+
+
+def test_readers_who_decide_a_part_differently_are_listed(with_runs: Any) -> None:
+    """Two readers who split a family alike and call one part differently are a conflict on that part."""
+    split(with_runs, {"N": "accept", "V": "S"})
+    split(with_runs, {"N": "N", "V": "F"}, reader="B")
+    with with_runs.built() as build:
+        assert build.check() == []
+        (conflict,) = build.frame("reader_conflicts").rows(named=True)
+    assert (conflict["decision_subject"], conflict["part_class"]) == ("part", "V")
+    assert (conflict["decision"], conflict["other_decision"]) == ("S", "F")
+
+
+def test_a_reader_who_accepts_normal_beats_differs_from_one_who_relabels_them(with_runs: Any) -> None:
+    """Accepted normal beats have no rows, yet where another reader calls them V they keep the automatic class."""
+    relabel(with_runs, {1: "V", 3: "V"})
+    assert counted(with_runs)["v_beats"] == 16
+    families(with_runs, "B", {1: ("accept", 120)})
+    assert counted(with_runs)["v_beats"] == 14
+
+
+def test_a_withdrawn_decision_leaves_the_other_reader_alone(read: Any) -> None:
+    """Once one of two readers withdraws, the other's decision holds, and there is no conflict any more."""
+    review(read, "D1", {0: "N", 10: "N"}, hour=9)
+    review(read, "D2", {0: "S"}, hour=10, reader="B")
+    assert reviewed(read)["v_beats"] == 9
+    review(read, "D3", {0: "withdraw"}, hour=11, reader="B")
+    found = reviewed(read)
+    assert (found["v_beats"], found["unmet_decisions"]) == (8, 0)
+    review(read, "D4", {0: "withdraw", 10: "withdraw"}, hour=12)
+    assert (reviewed(read)["v_beats"], reviewed(read)["decided_beats"]) == (10, 0)
+
+
+def test_a_withdrawn_rejection_counts_again(with_runs: Any) -> None:
+    """An episode whose rejection is withdrawn counts as before."""
+    reject(with_runs, "A", {("run", 20): "reject"})
+    assert counted(with_runs)["runs"] == 1
+    reject(with_runs, "A", {("run", 20): "withdraw"})
+    assert counted(with_runs)["runs"] == 2
+
+
+def test_decisions_that_meet_nothing_are_listed_with_the_reason(with_runs: Any) -> None:
+    """Beats, runs and pauses that the analysis does not have are named, with reader, time and why; met ones are not."""
+    reject(
+        with_runs,
+        "A",
+        {("run", 20): "reject", ("run", 40): "reject", ("pause", 60): "accept", ("pause", 40): "withdraw"},
+    )
+    review(with_runs, "D1", {0: "N", 500: "V", 2000: "N"}, hour=9, reader="B")
+    with with_runs.built() as build:
+        assert build.check() == []
+        rows = build.frame("unmet_decisions").rows(named=True)
+        (found,) = build.frame("reviewed").rows(named=True)
+    assert found["unmet_decisions"] == 4
+    told = {
+        (row["episode_kind"] or row["decision_subject"], row["reader_code"], row["decision"]): row["reason"]
+        for row in rows
+    }
+    assert {key: reason.split()[-2] for key, reason in told.items()} == {
+        ("run", "A", "reject"): "150", ("pause", "A", "accept"): "150", ("beat", "B", "V"): "150", ("beat", "B", "N"): "any",
+    }  # fmt: skip
+    gone = next(row for row in rows if row["decision"] == "N")
+    # Source: the recording lasts 15 minutes, the beat was decided at 2,000 s
+    assert gone["start_utc"] == START + timedelta(seconds=2000)
+    assert gone["reason"] == "The recording has no signal at this time any more."
+
+
 def families(lake: Any, reader: str, decided: dict[int, tuple[str, int]]) -> None:
     """Land decisions on whole families: number -> class and beats."""
     rows = [

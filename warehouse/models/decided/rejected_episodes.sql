@@ -14,5 +14,6 @@ WITH latest AS (
 
 SELECT recording_id, episode_kind, start_utc
 FROM latest
+WHERE decision <> 'withdraw'
 GROUP BY ALL
 HAVING bool_and(decision = 'reject')

@@ -18,9 +18,9 @@ SELECT
     reviewed_utc,
     reader_code,
     'review',
-    concat_ws(' ', recording_id, coalesce(episode_kind, decision_subject), family, coalesce(strftime(start_utc, 'at %Y-%m-%d %H:%M:%S UTC'),
+    concat_ws(' ', recording_id, coalesce(episode_kind, decision_subject), CASE WHEN decision_subject <> 'beat' THEN family END, coalesce(strftime(start_utc, 'at %Y-%m-%d %H:%M:%S UTC'),
         'at sample ' || sample || ' of segment ' || segment)),
     automatic_class,
-    CASE WHEN is_mixed THEN 'different shapes' ELSE coalesce(decision, 'same shape as family ' || same_as_family) END,
+    CASE WHEN is_mixed THEN 'split' ELSE coalesce(decision, 'same shape as family ' || same_as_family) END,
     note
 FROM lake.decisions

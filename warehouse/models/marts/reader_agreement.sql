@@ -4,8 +4,8 @@ WITH pairs AS (
     SELECT
         one.reader_code,
         other.reader_code AS other_reader_code,
-        one.decision,
-        other.decision AS other_decision,
+        one.decided_class AS decision,
+        other.decided_class AS other_decision,
         sum(one.beat_count) AS beats
     FROM latest_decisions AS one
     INNER JOIN latest_decisions AS other
@@ -13,6 +13,7 @@ WITH pairs AS (
         AND one.read_fingerprint = other.read_fingerprint
         AND one.decision_subject = other.decision_subject
         AND one.family IS NOT DISTINCT FROM other.family
+        AND one.part_class IS NOT DISTINCT FROM other.part_class
         AND one.segment IS NOT DISTINCT FROM other.segment
         AND one.sample IS NOT DISTINCT FROM other.sample
         AND one.reader_code < other.reader_code

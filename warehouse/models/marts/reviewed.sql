@@ -22,17 +22,14 @@ counted AS (
     GROUP BY recording_id
 ),
 
-decisions AS (
-    SELECT recording_id, count(DISTINCT beat_utc) AS beats
-    FROM lake.reviews
+unmet AS (
+    SELECT recording_id, count(*) AS decisions
+    FROM anew.unmet_decisions
     GROUP BY recording_id
 ),
 
 met AS (
-    SELECT
-        recording_id,
-        count(*) AS beats,
-        count(*) FILTER (WHERE is_analysable AND beat_class = 'V') AS v_beats
+    SELECT recording_id, count(*) FILTER (WHERE is_analysable AND beat_class = 'V') AS v_beats
     FROM decided_beats
     GROUP BY recording_id
 ),
@@ -59,7 +56,7 @@ SELECT
     patient_code,
     reader_codes,
     decided_beats,
-    greatest(coalesce(decisions.beats, 0) - coalesce(met.beats, 0), 0) AS unmet_decisions,
+    coalesce(unmet.decisions, 0) AS unmet_decisions,
     coalesce(rejected.episodes, 0) AS rejected_episodes,
     100 * coalesce(met.v_beats, 0) / nullif(automatic_v_beats, 0) AS decided_v_pct,
     automatic_v_beats,
@@ -79,7 +76,7 @@ FROM readers
 INNER JOIN anew.recordings AS recordings USING (recording_id)
 LEFT JOIN automatic USING (recording_id)
 LEFT JOIN counted USING (recording_id)
-LEFT JOIN decisions USING (recording_id)
+LEFT JOIN unmet USING (recording_id)
 LEFT JOIN met USING (recording_id)
 LEFT JOIN rejected USING (recording_id)
 LEFT JOIN undecided USING (recording_id)
