@@ -13,14 +13,14 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 from scipy.optimize import brentq
-from scipy.special import betaincinv, digamma, gammaln, ndtri, stdtrit, xlogy
+from scipy.special import betaincinv, digamma, gammaln, ndtri, stdtr, stdtrit, xlogy
 
 Floats = NDArray[np.float64]
 
 MAX_STEPS = 100
 TOLERANCE = 1e-11  # change of every coefficient at which a fit has settled
 LOG_ALPHA = (-14.0, 6.0)  # where ln alpha is searched; below it counts are Poisson
-LARGEST_RHO = 0.8  # correlation of a day with the day before beyond which a series is a trend
+RHOS = np.arange(0.0, 1.0, 0.05)  # correlations of a day with the day before
 TWO_SIDED_95 = float(ndtri(0.975))
 
 
@@ -39,18 +39,11 @@ class RateFit(NamedTuple):
     pearson_chi2: float
     fitted: Floats  # expected counts
 
-    def ratio(self, column: int) -> tuple[float, float, float]:
-        """Rate ratio of one column with its 95 % interval (normal theory on logarithms)."""
-        return self._ratio(column, TWO_SIDED_95 * np.sqrt(self.covariance[column, column]))
-
-    def student_ratio(self, column: int, inflation: float = 1.0) -> tuple[float, float, float]:
-        """The same with Student's t in place of the normal value, the variance multiplied by `inflation`."""
-        freedom = len(self.fitted) - len(self.coefficients)
-        return self._ratio(column, stdtrit(freedom, 0.975) * np.sqrt(self.covariance[column, column] * inflation))
-
-    def _ratio(self, column: int, error: float) -> tuple[float, float, float]:
+    def ratio(self, column: int, error: float | None = None) -> tuple[float, float, float]:
+        """Rate ratio of one column, and `error` off on the log scale both ways (by default 95 %, normal theory)."""
         centre = self.coefficients[column]
-        return float(np.exp(centre)), float(np.exp(centre - error)), float(np.exp(centre + error))
+        off = TWO_SIDED_95 * np.sqrt(self.covariance[column, column]) if error is None else error
+        return float(np.exp(centre)), float(np.exp(centre - off)), float(np.exp(centre + off))
 
 
 def fit_poisson(counts: ArrayLike, design: ArrayLike, exposure: ArrayLike | None = None) -> RateFit:
@@ -110,24 +103,46 @@ def clustered_covariance(fit: RateFit, counts: ArrayLike, design: ArrayLike, clu
     return np.asarray(few * bread @ scores.T @ scores @ bread)
 
 
-def serial_inflation(fit: RateFit, counts: ArrayLike, day: ArrayLike) -> float:
-    """By what to multiply variances of a fit whose counts, on days of number `day` (n,), resemble those a day before.
+def serial_ratio(
+    fit: RateFit, counts: ArrayLike, design: ArrayLike, day: ArrayLike, column: int
+) -> tuple[float, float, float]:
+    """Rate ratio of one column of a fit with its 95 % interval where days may resemble their neighbours.
 
-    (1 + rho) / (1 - rho), the variance of a mean of an autoregressive series over that of an independent one (Zwiers and
-    von Storch, J Climate 1995;8:336). rho is the lag-one correlation of Pearson's residuals over days with a day before
-    them, lifted by what p coefficients take from n residuals ((n rho + p) / (n - p), common practice, no source), never
-    below 0 nor above LARGEST_RHO.
+    `day` are the ascending day numbers of the counts, shape (n,); further as for the fit. Pearson's residuals of days
+    k days apart correlate with rho^k. rho is not known: the interval is Student's, averaged over RHOS by the restricted
+    likelihood of rho (Patterson and Thompson, Biometrika 1971;58:545, from memory) and a prior 1 - rho^2 (common
+    practice, no source). The variance at each rho is that of the fit as it stands, not reweighted.
     """
-    y = np.asarray(counts, dtype=float)
-    residual = (y - fit.fitted) / np.sqrt(fit.fitted)
-    n, p = len(y), len(fit.coefficients)
-    follows = np.diff(np.asarray(day)) == 1
-    if not follows.any() or n <= p or not residual.any():
-        return 1.0
-    scale = (n - 1) / follows.sum() / (residual @ residual)
-    seen = scale * (residual[1:] * residual[:-1])[follows].sum()
-    rho = float(np.clip((n * seen + p) / (n - p), 0.0, LARGEST_RHO))
-    return (1 + rho) / (1 - rho)
+    days, root = np.asarray(day), np.sqrt(fit.fitted)
+    columns = root[:, None] * np.asarray(design, dtype=float)
+    residual = (np.asarray(counts, dtype=float) - fit.fitted) / root
+    freedom = len(root) - columns.shape[1]
+    log_likelihood, scale = _of_rho(columns, residual, days)
+    alike = RHOS[:, None, None] ** np.abs(np.subtract.outer(days, days))
+    bread = np.linalg.inv(columns.T @ columns)
+    sd = np.sqrt(scale * (bread @ columns.T @ alike @ columns @ bread)[:, column, column])
+    weight = (1 - RHOS**2) * np.exp(log_likelihood - log_likelihood.max())
+
+    def beyond(error: float) -> float:
+        return float(weight @ (stdtr(freedom, -error / sd) - 0.025))
+
+    widest = stdtrit(freedom, 0.975) * float(sd.max())
+    return fit.ratio(column, brentq(beyond, 0.0, widest) if widest > 0 else 0.0)
+
+
+def _of_rho(columns: Floats, residual: Floats, day: NDArray[np.generic]) -> tuple[Floats, Floats]:
+    """Restricted log likelihood and variance of the residuals for each of RHOS, every day told by the one before it."""
+    n, p = columns.shape
+    table = np.column_stack([columns, residual])
+    fade = RHOS[:, None] ** np.diff(day)
+    kept = np.sqrt(1 - fade**2)
+    news = (table[1:] - fade[:, :, None] * table[:-1]) / kept[:, :, None]
+    square = news.transpose(0, 2, 1) @ news + np.outer(table[0], table[0])
+    information, cross = square[:, :p, :p], square[:, :p, p:]
+    left = square[:, p, p] - (cross * np.linalg.solve(information, cross)).sum(axis=(1, 2))
+    left = np.maximum(left, np.finfo(float).tiny)
+    determinants = np.linalg.slogdet(information)[1] / 2 + np.log(kept).sum(axis=1)
+    return -(n - p) / 2 * np.log(left) - determinants, left / (n - p)
 
 
 def _checked(counts: ArrayLike, design: ArrayLike, exposure: ArrayLike | None) -> tuple[Floats, Floats, Floats]:

@@ -9,7 +9,7 @@ import numpy as np
 import polars as pl
 from numpy.typing import NDArray
 
-from detectors.rates import FitError, fit_quasi_poisson, serial_inflation, series_design
+from detectors.rates import FitError, fit_quasi_poisson, serial_ratio, series_design
 from flows.change.measures import V_PER_H, MeasuredDays, measured_days
 from warehouse.parts import polars_type
 from warehouse.schema import COLUMNS, PUBLISHED
@@ -24,7 +24,7 @@ def series_fits(events: pl.DataFrame, cells: pl.DataFrame, periods: pl.DataFrame
 
     The step is at the first day after the settling time of the therapy kind, so that wash-in and blanking are its lag;
     the slope from there on is beside the trend before. Intervals are Student's on the variance of over-dispersed
-    days, inflated where days resemble the day before (`rates.serial_inflation`).
+    days that may resemble their neighbours (`rates.serial_ratio`).
     """
     days = measured_days(V_PER_H, cells, len(events))
     keys = ["patient_code", "therapy_id"]
@@ -51,10 +51,9 @@ def _fit(days: MeasuredDays, start_day: int | None) -> dict[str, Any]:
         fit = fit_quasi_poisson(days.counts, design, days.exposure)
     except FitError:
         return {}
-    inflation = serial_inflation(fit, days.counts, days.local_day)
     named = {"dispersion": fit.dispersion}
     for column, name in (("step", "step_ratio"), ("slope", "slope_ratio_per_week")):
-        ends = fit.student_ratio(names.index(column), inflation)
+        ends = serial_ratio(fit, days.counts, design, days.local_day, names.index(column))
         named |= dict(zip((name, f"{name}_low", f"{name}_high"), ends, strict=True))
     return named
 
