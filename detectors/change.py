@@ -122,9 +122,10 @@ def compare(
 ) -> Comparison:
     """Compare baseline and after of every event.
 
-    `excess`, shape (n_events,), is the variance that the time between the periods adds, as a multiple of the variance
-    between days (`variability.excess_of_gap`; 0 to ignore it). `usual` is what the programme lends, by default what these
-    events say together. Periods with fewer than `min_days` days give too_little_wear.
+    `excess`, shape (n_events, n_grid), is the variance that the time between the periods adds, as a multiple of the
+    variance between days, for each SD of the grid (`variability.excess_of_gap`; 0 to ignore it). `usual` is what the
+    programme lends, by default what these events say together. Periods with fewer than `min_days` days give
+    too_little_wear.
     """
     level, grid = of.level, of.grid
     n_events = len(of.fit)
@@ -194,7 +195,7 @@ def _typical_day(level: Levels, weight: Floats) -> tuple[Floats, Floats, Floats]
 def _variances(level: Levels, grid: Floats, excess: Floats, detection: float) -> _Variances:
     before, after = level.day_variance[0::2], level.day_variance[1::2]
     counting = level.variance[0::2] - before
-    gap = grid**2 * np.asarray(excess, dtype=float)[:, None]
+    gap = grid**2 * np.asarray(excess, dtype=float)
     return _Variances(counting, before + after, gap, np.full_like(gap, detection))
 
 

@@ -22,7 +22,9 @@ LEAST_WEIGHT = 1e-12  # of a period without days
 RICH_BEATS_PER_DAY = 12.0  # independent beats per day from which the logarithm of a day is nearly normal
 GRID = np.geomspace(1 / 16, 5, 32)  # of s, relative to the typical value of the measure
 # Candidates for a programme: its median s, relative to the typical value, and the SD of ln s between its patients.
-PRIOR_MEDIANS, PRIOR_SPREADS = (table.ravel() for table in np.meshgrid(np.geomspace(0.15, 4.0, 57), (0.2, 0.4, 0.7)))
+PRIOR_MEDIANS, PRIOR_SPREADS = (
+    table.ravel() for table in np.meshgrid(np.geomspace(0.15, 4.0, 57), (0.1, 0.2, 0.4, 0.7))
+)
 ROUNDED_TO = 0.05  # of ln s: what the programme lends
 MEDIAN_DOUBT = 1.0  # SD of ln median before any patient of the programme is seen
 LEVEL_NODES = np.arange(-5.0, 5.1, 0.5)  # SDs around the level of a sparse period
@@ -68,8 +70,11 @@ def levels(days: Periods, n_periods: int, grid: Floats, independent: Floats | No
     `independent`, shape (n_periods,), says what share of the likelihood of s counts where days resemble their
     neighbours (`variability.independent_share`; all of it by default).
 
-    Rich periods: normal theory on the days' logarithms, a count c standing for ln level with mean digamma(c + 1/2)
-    and variance trigamma(c + 1/2), the likelihood of s integrated over the level (restricted likelihood). Sparse
+    Rich periods: normal theory on the days' ln(c + 1/2) of counts c, which vary as ln level does (Anscombe, Biometrika
+    1948;35:246, from memory), all together lowered to digamma of their total, so that a period of one day has the level
+    of its count. Their counting noise is trigamma(m + 1/2) for the m beats that a day of the period usually holds
+    (harmonic mean of lognormal days): noise by its own count would make light of days with few beats. The likelihood of
+    s is integrated over the level (restricted likelihood). Sparse
     periods: their total, the mean of n lognormal days taken as lognormal (Fenton 1960), and the likelihood of s that
     of Poisson counts of lognormal days, integrated over the level; fewer than two days or beats say nothing on s.
     """
@@ -77,7 +82,8 @@ def levels(days: Periods, n_periods: int, grid: Floats, independent: Floats | No
     n = np.bincount(days.period, minlength=n_periods)
     total, total_exposure = _sums(days.period, beats, n_periods), _sums(days.period, exposure, n_periods)
     is_sparse = total < RICH_BEATS_PER_DAY * n
-    by_logs = _by_logarithms(days.period, beats, exposure, n_periods, grid)
+    rich = ~is_sparse[days.period]
+    by_logs = _by_logarithms(days.period[rich], beats[rich], exposure[rich], n_periods, grid)
     by_total = _by_total(n, total, total_exposure, grid)
     tells_spread = is_sparse & (n >= 2) & (total >= 2)
     sparse_days = Periods._make(column[tells_spread[days.period]] for column in days)
@@ -100,17 +106,21 @@ def _sums(period: Ints, values: Floats, n_periods: int) -> Floats:
 def _by_logarithms(period: Ints, beats: Floats, exposure: Floats, n_periods: int, grid: Floats) -> tuple[Floats, ...]:
     seen = exposure > 0
     period, beats, exposure = period[seen], beats[seen], exposure[seen]
-    log_day = digamma(beats + 0.5) - np.log(exposure)
-    noise = polygamma(1, beats + 0.5)
-    log_level, variance, fit = (np.zeros((n_periods, len(grid))) for _ in range(3))
+    log_day = np.log((beats + 0.5) / exposure)
+    days = np.maximum(np.bincount(period, minlength=n_periods), 1)
+    usual_beats = np.exp(_sums(period, log_day, n_periods) / days)[period] * exposure
+    total = _sums(period, beats, n_periods) + 0.5
+    log_level, variance, counting, fit = (np.zeros((n_periods, len(grid))) for _ in range(4))
     for k, s in enumerate(grid):
+        noise = polygamma(1, usual_beats * np.exp(-(s**2) / 2) + 0.5)
         weight = 1 / (s**2 + noise)
         of_all = np.maximum(_sums(period, weight, n_periods), LEAST_WEIGHT)
         mean = _sums(period, weight * log_day, n_periods) / of_all
         misfit = _sums(period, weight * (log_day - mean[period]) ** 2 - np.log(weight), n_periods)
         log_level[:, k], variance[:, k], fit[:, k] = mean, 1 / of_all, -0.5 * (misfit + np.log(of_all))
-    counting = 1 / np.maximum(_sums(period, 1 / noise, n_periods), LEAST_WEIGHT)
-    return log_level, variance, np.maximum(variance - counting[:, None], 0.0), fit
+        counting[:, k] = 1 / np.maximum(_sums(period, 1 / noise, n_periods), LEAST_WEIGHT)
+    log_level += (digamma(total) - np.log(total))[:, None]
+    return log_level, variance, np.maximum(variance - counting, 0.0), fit
 
 
 def _by_total(n: Ints, total: Floats, exposure: Floats, grid: Floats) -> tuple[Floats, ...]:

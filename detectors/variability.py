@@ -141,23 +141,26 @@ def independent_share(day: tuple[int, ...], series: SpontaneousSeries) -> float:
 
 
 def excess_of_gap(
-    before_d: ArrayLike, after_d: ArrayLike, series: SpontaneousSeries, seen: tuple[float, float] = (1.0, 1.0)
-) -> float:
+    before_d: ArrayLike, after_d: ArrayLike, series: SpontaneousSeries, seen: tuple[ArrayLike, ArrayLike] = (1.0, 1.0)
+) -> Floats:
     """Variance that the time between two periods adds, as a multiple of the variance between days of a period.
 
     `before_d` and `after_d` are day numbers. With independent days the log ratio of the period means has variance
     s^2 (1/n1 + 1/n2); the published series makes it s^2 (1/n1 + 1/n2 + excess), where s^2 is what the days of one
     period show. The series gives the shape only: a patient whose days vary little also drifts little. `seen` is how
-    much of the days' variation shows through the counting noise on each side (1 all, 0 none): s^2 comes from there.
+    much of the days' variation shows through the counting noise on each side (1 all, 0 none), which depends on s: s^2
+    comes from there. Returned is an excess for each entry of `seen`.
     """
     before, after = np.asarray(before_d, dtype=float), np.asarray(after_d, dtype=float)
     between = variogram(before[:, None] - after[None, :], series).mean()
     within = [variogram(days[:, None] - days[None, :], series) for days in (before, after)]
     contrast = 2 * between - sum(table.mean() for table in within)
-    freedom = sum(share * (len(table) - 1) for share, table in zip(seen, within, strict=True))
-    shown = sum(share * table.sum() / len(table) for share, table in zip(seen, within, strict=True))
-    scale = shown / freedom if freedom > 0 else _typical_within(series)
-    return max(0.0, float(contrast / scale - 1 / len(before) - 1 / len(after)))
+    shares = [np.asarray(share, dtype=float) for share in seen]
+    freedom = sum(share * (len(table) - 1) for share, table in zip(shares, within, strict=True))
+    shown = sum(share * table.sum() / len(table) for share, table in zip(shares, within, strict=True))
+    typical = np.full(np.shape(freedom), _typical_within(series))
+    scale = np.divide(shown, freedom, out=typical, where=freedom > 0)
+    return np.maximum(0.0, contrast / scale - 1 / len(before) - 1 / len(after))
 
 
 class UsualLevel(NamedTuple):

@@ -7,11 +7,11 @@ from itertools import pairwise
 from typing import NamedTuple
 
 import numpy as np
-from numpy.typing import NDArray
+from numpy.typing import ArrayLike, NDArray
 
 from detectors import change as statistics
 from detectors.shifts import shifts
-from detectors.spread import Periods, UsualSpread, nothing_lent, shown_share
+from detectors.spread import GRID, Periods, UsualSpread, nothing_lent, shown_share
 from detectors.variability import excess_of_gap, independent_share
 from flows.change.measures import Measure, MeasuredDays
 from flows.settings import ChangeSettings, WearSettings
@@ -25,15 +25,16 @@ MEDIAN_STEP = 0.6745 * np.sqrt(2)  # median of |difference| of two normal values
 class Drift(NamedTuple):
     """What the published drift of the level means for the days of every event."""
 
-    excess: NDArray[np.float64]  # shape (n_events,): variance that the time between the sides adds, 0 without both
-    independent: NDArray[
-        np.float64
-    ]  # shape (2 n_events,): share of the days that tell their spread as independent ones
+    # variance that the time between the sides adds, for each SD between days, shape (n_events, n_grid); 0 without both
+    excess: NDArray[np.float64]
+    # share of the days that tell their spread as independent ones, shape (2 n_events,)
+    independent: NDArray[np.float64]
 
 
 def drift_of(measure: Measure, days: MeasuredDays, n_events: int, share: float) -> Drift:
     """`variability.excess_of_gap` and `variability.independent_share` of every event; `share` of the published drift."""
-    drift = Drift(np.zeros(n_events), np.ones(2 * n_events))
+    grid = GRID * measure.day_sd
+    drift = Drift(np.zeros((n_events, len(grid))), np.ones(2 * n_events))
     if measure.drift is None or share == 0:
         return drift
     beats = days.counts / days.dispersion
@@ -47,11 +48,17 @@ def drift_of(measure: Measure, days: MeasuredDays, n_events: int, share: float) 
             drift.independent[period] = 1 - share * float(seen_share) * dependent
     for event, (before, after) in enumerate(zip(sides[::2], sides[1::2], strict=True)):
         if before.start < before.stop and after.start < after.stop:
-            of_sides = np.array([beats[side].mean() for side in (before, after)])
-            told = shown_share(of_sides, measure.day_sd) * drift.independent[2 * event : 2 * event + 2]
+            of_sides = np.array([[beats[side].mean()] for side in (before, after)])
+            told = shown_share(of_sides, grid) * drift.independent[2 * event : 2 * event + 2, None]
             gap = excess_of_gap(days.local_day[before], days.local_day[after], measure.drift, (told[0], told[1]))
             drift.excess[event] = share * gap
     return drift
+
+
+def excess_at(measure: Measure, drift: Drift, sd: ArrayLike) -> NDArray[np.float64]:
+    """Excess of every event for its SD between days, or one of all, shape (n_events,): that of the nearest in the grid."""
+    off = np.log(GRID * measure.day_sd)[:, None] - np.log(np.broadcast_to(sd, len(drift.excess)))
+    return drift.excess[np.arange(len(drift.excess)), np.abs(off).argmin(axis=0)]
 
 
 def seen(measure: Measure, days: MeasuredDays, n_events: int, drift: Drift) -> statistics.Seen:

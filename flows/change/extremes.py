@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 from detectors.change import CHANCE_LIMIT, FELL, ROSE, TOO_LITTLE, WITHIN
 from detectors.ranks import rank_shift
 from detectors.spread import shown_share
-from flows.change.courses import drift_of
+from flows.change.courses import drift_of, excess_at
 from flows.change.measures import RUNS_PER_24H, measured_days
 from flows.settings import ChangeSettings, WearSettings
 
@@ -87,7 +87,8 @@ def excess_of_runs(cells: pl.DataFrame, n_events: int, change: ChangeSettings) -
     runs = np.bincount(days.event, days.counts / days.dispersion, n_events)
     per_day = runs / np.maximum(np.bincount(days.event, minlength=n_events), 1)
     share = np.sqrt(shown_share(per_day, RUNS_PER_24H.day_sd))
-    return np.asarray(drift_of(RUNS_PER_24H, days, n_events, change.gap_drift_share).excess * share)
+    drift = drift_of(RUNS_PER_24H, days, n_events, change.gap_drift_share)
+    return np.asarray(excess_at(RUNS_PER_24H, drift, RUNS_PER_24H.day_sd) * share)
 
 
 def rank_reason(row: Mapping[str, Any], wear: WearSettings) -> str:

@@ -49,12 +49,12 @@ class Measure:
         return DetectorError(share * REPEATABILITY_SD_LN * self.beats_each, share * self.false_rate)
 
 
-_HOURS = pl.col("analysable_s") / 3600
+_HOURS, _MINUTES = pl.col("analysable_s") / 3600, pl.col("analysable_s") / 60
 _V, _S, _BEATS = pl.col("v_beats"), pl.col("s_beats"), pl.col("all_beats")
 HEART_RATE = Measure(
     "mean_rate_bpm",
-    pl.col("mean_rate_bpm") * _HOURS,
-    _HOURS,
+    pl.col("mean_rate_bpm") * _MINUTES,
+    _MINUTES,
     1,
     RATE_DAY_SD,
     None,

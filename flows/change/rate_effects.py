@@ -10,7 +10,7 @@ import numpy as np
 import polars as pl
 
 from detectors import rate_dependence as effects
-from flows.change.courses import drift_of
+from flows.change.courses import drift_of, excess_at
 from flows.change.measures import HEART_RATE, V_PER_H, measured_days
 from flows.settings import ChangeSettings
 from warehouse.parts import polars_type
@@ -29,7 +29,9 @@ def rate_effects(
     """
     per_event = _columns_of_changes(events, compared)
     days = measured_days(V_PER_H, cells, len(events))
-    excess = drift_of(V_PER_H, days, len(events), change.gap_drift_share).excess
+    day_sd = per_event["day_sd_ln"].fill_null(V_PER_H.day_sd).to_numpy()
+    drift = drift_of(V_PER_H, days, len(events), change.gap_drift_share)
+    extra = day_sd**2 * excess_at(V_PER_H, drift, day_sd)
     hours = cells.filter(pl.col("mean_rate_bpm").is_not_null() & (pl.col("analysable_s") >= LEAST_ANALYSABLE_S))
     names = ("v_beats", "analysable_s", "mean_rate_bpm", "side", "day")
     beats, seconds, rate, side, day = (hours[name].to_numpy() for name in names)
@@ -40,9 +42,8 @@ def rate_effects(
         before = np.flatnonzero(side[of_event] == 0) + first
         kind = effects.dependence(beats[before] / seconds[before], rate[before])
         known = per_event.row(event, named=True)
-        extra = (known["day_sd_ln"] or 0.0) ** 2 * excess[event]
         equal = effects.ratio_at_equal_rate(
-            beats[of_event], seconds[of_event] / 3600, rate[of_event], side[of_event] == 1, day[of_event], extra
+            beats[of_event], seconds[of_event] / 3600, rate[of_event], side[of_event] == 1, day[of_event], extra[event]
         )
         rows.append(known | _row(kind, equal, known["rate_change_pct"]))
     return _published(rows)

@@ -25,7 +25,7 @@ def compare(
 ) -> change.Comparison:
     n_events = int(days.period.max()) // 2 + 1
     return change.compare(
-        change.seen(days, n_events, typical_sd), excess=np.full(n_events, excess),
+        change.seen(days, n_events, typical_sd), excess=np.full((n_events, len(spread.GRID)), excess),
         success_limit_pct=success_limit_pct, error=error, min_days=min_days,
     )  # fmt: skip
 
@@ -170,11 +170,12 @@ def test_the_answer_does_not_depend_on_which_other_events_are_asked(data):
     )
     of_all = change.seen(periods(events), len(events), 0.6)
     lent = spread.programme_spread(of_all.fit, of_all.grid, 0.6)
+    drift = np.ones((len(events), len(spread.GRID)))
 
     def answer(some):
         of = change.seen(periods(some), len(some), 0.6)
         error = change.DetectorError(0.1, 2.0)
-        return change.compare(of, usual=lent, excess=np.ones(len(some)), success_limit_pct=80, error=error)
+        return change.compare(of, usual=lent, excess=drift[: len(some)], success_limit_pct=80, error=error)
 
     together, alone = answer(events), answer(events[:1])
     for name, column in alone._asdict().items():
@@ -233,6 +234,22 @@ def test_spread_of_days_is_found_in_dense_and_sparse_counts():
     for beats in (2000, 2):
         days = simulated(rng, patients=300, days=(7, 7), ratio=1.0, sd=0.7, beats=beats)
         assert np.median(compare(days).day_sd) == pytest.approx(0.7, rel=0.1)
+
+
+def test_few_beats_a_day_do_not_hide_how_days_differ():
+    """Days of some 20 beats show the spread between them as it is: those with few beats weigh like the others."""
+    days = simulated(np.random.default_rng(21), patients=300, days=(12, 12), ratio=1.0, sd=1.0, beats=20)
+    assert np.median(compare(days).day_sd) == pytest.approx(1.0, rel=0.035)
+
+
+def test_patients_whose_days_differ_alike_lend_a_narrow_spread():
+    """A programme in which all patients have one spread lends that spread with little doubt."""
+    days = simulated(np.random.default_rng(22), patients=400, days=(7, 7), ratio=1.0, sd=0.5, beats=2000)
+    of = change.seen(days, 400, 0.6)
+    lent = spread.programme_spread(of.fit, of.grid, 0.6)
+    # Source: what is lent is rounded to 0.05; half of that beside the rounding of the grid of candidates
+    assert np.exp(lent.log_median) == pytest.approx(0.5, rel=0.04)
+    assert lent.sd <= 0.15
 
 
 def test_levels_of_a_sparse_period_are_those_of_its_total():

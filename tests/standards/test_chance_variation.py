@@ -92,6 +92,19 @@ def test_more_time_between_periods_never_narrows_the_limit(n_before, n_after, ga
     assert 0 <= near <= far + 1e-12
 
 
+def test_the_excess_is_that_of_the_days_whose_spread_shows():
+    """Three days show less of a drift than fourteen: where counting hides the fourteen, the time between adds more."""
+    before, after = np.arange(3), 10 + np.arange(14)
+    of_all, of_three = v.excess_of_gap(before, after, v.SINGLE_BEATS, ([1, 1], [1, 0]))
+    assert of_three > 1.5 * of_all
+    half = v.variogram(np.subtract.outer(before, before), v.SINGLE_BEATS)
+    # Source: the contrast of the published variogram over the variance that the three days show, by hand
+    between = v.variogram(np.subtract.outer(before, after), v.SINGLE_BEATS).mean()
+    within = v.variogram(np.subtract.outer(after, after), v.SINGLE_BEATS).mean()
+    expected = (2 * between - half.mean() - within) / (half.sum() / 6) - 1 / 3 - 1 / 14
+    assert of_three == pytest.approx(expected)
+
+
 def test_regression_of_untreated_pairs_gives_the_prediction_limit():
     """The limit from untreated pairs is the one-sided prediction limit of a straight line on logarithms."""
     rng = np.random.default_rng(4)
