@@ -1,7 +1,7 @@
 """One build of the trend tables: lake parts and register in, SQL models run in layers, checks asked.
 
 The build happens in a scratch database that is thrown away; `warehouse.publish` copies the result. Models are SQL files
-named after the table they make; the order in which they run is `MODELS`, and a model sees the tables before it, plus
+named after the table they make; the order in which they run is `layers.MODELS`, and a model sees the tables before it, plus
 
 - `lake.*`: the parts in force of the published fingerprint, with the columns of `schema.LAKE`,
 - `register.*`: patients, wears, therapies,
@@ -16,18 +16,20 @@ patient by patient read `anew`, models about the whole programme read the table 
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Iterator, Mapping, Sequence
+from collections.abc import Iterable, Iterator, Mapping
 from datetime import datetime
 from functools import cached_property
-from importlib import resources
 from pathlib import Path
-from typing import NamedTuple, Self
+from typing import Self
 
 import duckdb
 import polars as pl
 
 from warehouse import schema
-from warehouse.database import open_database
+from warehouse.build_inputs import REGISTER, REVIEWED, SETTINGS
+from warehouse.claims import Failure, claims
+from warehouse.database import ArrowStream, open_database
+from warehouse.dictionary import column_definitions, dictionary_frame, parts_query, typed_query
 from warehouse.kept import (
     OF_RECORDING,
     Grounds,
@@ -37,98 +39,23 @@ from warehouse.kept import (
     patient_grounds,
     read_handed,
 )
-from warehouse.parts import Part, checked_frame, polars_type, scan_parts
+from warehouse.layers import MODELS, READ_IN_PLACE, model_sql
+from warehouse.parts import Part, checked_frame, parts_frame, polars_type, scan_parts
 from warehouse.published import DATABASE, Published
 from warehouse.slices import slice_count, slice_of
 from warehouse.zones import DAYS, OFFSETS, local_days, zone_offsets, zone_rules
 
-MODELS: dict[str, tuple[str, ...]] = {
-    "decided": ("latest_reviews", "met_reviews", "latest_decisions", "decided_beats", "rejected_episodes"),
-    "staging": ("patients", "therapies", "recording_wears", "counted_quarters", "patient_quarters"),
-    "intermediate": ("hours", "recording_tallies", "local_hours", "burden_intervals", "wear_days", "period_spans", "periods",
-        "family_days", "family_shapes",
-    ),
-    "marts": (
-        "deliveries", "recordings", "segments", "families", "episodes", "findings", "marks", "attention_from_days",
-        "attention_from_therapies", "attention_from_recordings", "attention", "review_sheet", "decisions", "reviews",
-        "undecided_families", "unmet_decisions", "reviewed", "review_effort", "reader_conflicts", "reader_agreement",
-        "runs_of_flow", "audit", "fingerprints",
-    ),
-}  # fmt: skip
-
-READ_IN_PLACE = ("beats", "quality_windows", "strips")
-"""Published tables that are too large to copy: views over the parts, in the build and in the publication."""
-
-COMPUTED_OUTSIDE = tuple(
-    name
-    for name in schema.PUBLISHED
-    if name
-    not in (*READ_IN_PLACE, "parts", "data_dictionary", *(model for layer in MODELS.values() for model in layer))
-)
-"""Published tables that no model makes: statistics, which the caller adds between intermediate and marts."""
-
-REVIEWED: dict[str, dict[str, str]] = {
-    "quarter_hours": {
-        name: schema.COLUMNS[name].type for name in (*schema.LAKE["quarter_hours"].columns, "decided_beats")
-    },
-    "episodes": {name: schema.COLUMNS[name].type for name in (*schema.LAKE["episodes"].columns, "is_counted")},
-}
-
 _NOT_FOR_MODELS = ("signal", "pieces", "delivered_marks", "inputs")
-
-REGISTER: dict[str, dict[str, str]] = {
-    "patients": {"patient_code": "VARCHAR", "zone": "VARCHAR"},
-    "wears": {
-        "recording_id": "VARCHAR", "device_serial": "VARCHAR", "patient_code": "VARCHAR", "from_utc": "TIMESTAMP",
-        "to_utc": "TIMESTAMP",
-    },
-    "therapies": {
-        "therapy_id": "VARCHAR", "patient_code": "VARCHAR", "therapy_kind": "VARCHAR", "therapy_detail": "VARCHAR",
-        "therapy_day": "DATE", "settling_days": "INTEGER",
-    },
-}  # fmt: skip
-
-SETTINGS: dict[str, str] = {
-    "min_analysable_h_per_day": "DOUBLE",
-    "min_days_per_period": "INTEGER",
-    "baseline_days": "INTEGER",
-    "after_days": "INTEGER",
-    "attention_v_burden_pct": "DOUBLE",
-    "attention_run_beats": "INTEGER",
-    "attention_fast_run_bpm": "DOUBLE",
-    "attention_pause_ms": "DOUBLE",
-    "attention_sustained_run_s": "DOUBLE",
-    "attention_short_coupling_ms": "DOUBLE",
-    "attention_patch_end_days": "INTEGER",
-}
 
 
 class BuildError(RuntimeError):
     """A model or a frame does not fit; the message names the table and what DuckDB or the dictionary objects to."""
 
 
-class Failure(NamedTuple):
-    """A claim about the tables that does not hold, with the rows that contradict it."""
-
-    claim: str
-    rows: pl.DataFrame
-
-
-class ArrowStream:
-    """Hands a polars frame to DuckDB through the Arrow C interface, which needs no pyarrow."""
-
-    def __init__(self, frame: pl.DataFrame) -> None:
-        self._frame = frame
-
-    def __arrow_c_stream__(self, requested_schema: object = None) -> object:
-        """Arrow stream of the frame."""
-        return self._frame.__arrow_c_stream__(requested_schema)
-
-
 class TrendBuild:
     """Scratch database in which the trend tables are built; use it as a context manager.
 
-    `register` has the frames of REGISTER and `settings` the values of SETTINGS (further ones are ignored).
+    `register` has the frames of `build_inputs.REGISTER`, `settings` the values of SETTINGS there (further ones are ignored).
     Of `parts` those without a fingerprint and those of `fingerprint` are used. Rows of patients without changes are
     taken over from `standing`, an edition whose checks were asked; the tables are the same without it. `program` says
     what else rows of `schema.OF_PATIENT` follow from that the caller adds: another text builds every patient anew.
@@ -213,7 +140,7 @@ class TrendBuild:
         yield from (duckdb.__version__, self._program, self.fingerprint, f"{self.slices} slices")
         yield from (f"{name} {self._settings[name]!r}" for name in SETTINGS)
         yield from (f"{table.name} {column_definitions(table)}" for table in schema.PUBLISHED.values())
-        yield from (_model(layer, name) for layer in MODELS for name in MODELS[layer])
+        yield from (model_sql(layer, name) for layer in MODELS for name in MODELS[layer])
 
     def _load_lake(self) -> None:
         for name, table in schema.LAKE.items():
@@ -301,9 +228,9 @@ class TrendBuild:
         return frozenset(slice_of(code, self.slices) for code in codes - self.kept)
 
     def run_models(self, layer: str) -> None:
-        """Make the tables of one layer of MODELS, in order; published tables get the dictionary's columns and types."""
+        """Make the tables of one layer, in order; published tables get the dictionary's columns and types."""
         for name in MODELS[layer]:
-            query = _model(layer, name)
+            query = model_sql(layer, name)
             if name in schema.PUBLISHED:
                 query = typed_query(schema.PUBLISHED[name], query)
             try:
@@ -340,7 +267,7 @@ class TrendBuild:
         return read_handed(self.standing, name) if self.standing else None
 
     def add_reviewed(self, quarter_hours: pl.DataFrame, episodes: pl.DataFrame) -> None:
-        """Add what an over-read recording holds by the classes decided; columns as in REVIEWED."""
+        """Add what an over-read recording holds by the classes decided; columns as in `build_inputs.REVIEWED`."""
         self._append("reviewed.quarter_hours", quarter_hours)
         self._append("reviewed.episodes", episodes)
 
@@ -355,60 +282,10 @@ class TrendBuild:
         return pl.DataFrame(self.connection.sql(f"FROM {table}{order}"))
 
     def check(self) -> list[Failure]:
-        """Ask every claim; returns those that do not hold. Claims are the files of `checks/` and the unique keys.
+        """Ask every claim; returns those that do not hold.
 
         Rows taken over were asked when they were made.
         """
-        claims = {
-            file.name.removesuffix(".sql"): file.read_text(encoding="utf-8")
-            for file in sorted(resources.files("warehouse").joinpath("checks").iterdir(), key=lambda file: file.name)
-        }
-        for name, table in schema.PUBLISHED.items():
-            if name not in READ_IN_PLACE:
-                key = ", ".join(table.key)
-                query = f"SELECT {key} FROM {self._made(name)} GROUP BY {key} HAVING count(*) > 1"
-                claims[f"{name}_has_one_row_per_key"] = query
-        failures = (Failure(claim, pl.DataFrame(self.connection.sql(query))) for claim, query in claims.items())
+        asked = claims(self._made).items()
+        failures = (Failure(claim, pl.DataFrame(self.connection.sql(query))) for claim, query in asked)
         return [failure for failure in failures if failure.rows.height]
-
-
-def _model(layer: str, name: str) -> str:
-    return resources.files("warehouse").joinpath("models", layer, f"{name}.sql").read_text(encoding="utf-8")
-
-
-def column_definitions(table: schema.Table) -> str:
-    """Columns of a table as in CREATE TABLE."""
-    return ", ".join(f"{name} {schema.COLUMNS[name].type}" for name in table.columns)
-
-
-def typed_query(table: schema.Table, query: str) -> str:
-    """A query whose columns are the table's, in order and type, with rows in the order of its key."""
-    columns = ", ".join(f"{name}::{schema.COLUMNS[name].type} AS {name}" for name in table.columns)
-    return f"SELECT {columns} FROM (\n{query}\n) ORDER BY {', '.join(table.key)}"
-
-
-def parts_query(table: schema.Table, paths: Iterable[str]) -> str:
-    """Query over an explicit list of part files; one recording's rows open only that recording's files."""
-    files = ", ".join(f"'{path.replace(chr(39), chr(39) * 2)}'" for path in paths)
-    pruned = "true" if table.key[:1] == ("recording_id",) else "false"
-    source = f"read_parquet([{files}], hive_partitioning = {pruned}, hive_types_autocast = false)"
-    columns = ", ".join(f"{name}::{schema.COLUMNS[name].type} AS {name}" for name in table.columns)
-    return f"SELECT {columns} FROM {source}"
-
-
-def parts_frame(parts: Sequence[Part]) -> pl.DataFrame:
-    """Rows of the published table `parts`."""
-    columns = schema.PUBLISHED["parts"].columns
-    types = {name: polars_type(schema.COLUMNS[name].type) for name in columns}
-    values = {name: [part[n] for part in parts] for n, name in enumerate(types)}
-    return pl.DataFrame(values, schema=types).sort("part_path")
-
-
-def dictionary_frame() -> pl.DataFrame:
-    """Rows of the published table `data_dictionary`."""
-    rows = [
-        (table.name, table.grain, column.name, column.type, column.unit, column.meaning)
-        for table in schema.PUBLISHED.values()
-        for column in (schema.COLUMNS[name] for name in table.columns)
-    ]
-    return pl.DataFrame(rows, schema=list(schema.PUBLISHED["data_dictionary"].columns), orient="row")

@@ -7,8 +7,8 @@ from typing import NamedTuple
 
 import polars as pl
 
-from warehouse.build import ArrowStream, TrendBuild
-from warehouse.database import open_database
+from warehouse.build import TrendBuild
+from warehouse.database import ArrowStream, open_database
 
 
 class Comparison(NamedTuple):

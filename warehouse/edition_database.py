@@ -14,8 +14,9 @@ from pathlib import Path
 import duckdb
 
 from warehouse import schema
-from warehouse.build import READ_IN_PLACE, column_definitions, parts_query
 from warehouse.database import open_database
+from warehouse.dictionary import column_definitions, parts_query
+from warehouse.layers import READ_IN_PLACE
 from warehouse.published import DATABASE, Published
 
 _STORAGE_VERSION = "v1.2.0"

@@ -18,7 +18,8 @@ from typing import Any
 import polars as pl
 
 from warehouse import schema
-from warehouse.build import READ_IN_PLACE, TrendBuild
+from warehouse.build import TrendBuild
+from warehouse.layers import READ_IN_PLACE
 from warehouse.parts import file_sha256
 from warehouse.slices import slice_of
 

@@ -14,7 +14,7 @@ import os
 import re
 import tempfile
 from collections import deque
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from pathlib import Path
 from typing import NamedTuple
@@ -78,6 +78,14 @@ _POLARS_TYPES: dict[str, pl.DataType] = {
 def frame_schema(table: schema.Table) -> dict[str, pl.DataType]:
     """Polars types of a table of the dictionary, in the table's column order."""
     return {name: polars_type(schema.COLUMNS[name].type) for name in table.columns}
+
+
+def parts_frame(parts: Sequence[Part]) -> pl.DataFrame:
+    """Rows of the published table `parts`."""
+    columns = schema.PUBLISHED["parts"].columns
+    types = {name: polars_type(schema.COLUMNS[name].type) for name in columns}
+    values = {name: [part[n] for part in parts] for n, name in enumerate(types)}
+    return pl.DataFrame(values, schema=types).sort("part_path")
 
 
 def empty_frame(table: schema.Table) -> pl.DataFrame:

@@ -26,7 +26,8 @@ import polars as pl
 
 from warehouse import ledger as ledgers
 from warehouse import schema
-from warehouse.build import COMPUTED_OUTSIDE, TrendBuild
+from warehouse.build import TrendBuild
+from warehouse.layers import COMPUTED_OUTSIDE
 from warehouse.ledger import Ledger
 from warehouse.parts import frame_schema, write_part, write_signal
 from warehouse.publish import publish

@@ -22,7 +22,8 @@ import numpy as np
 import polars as pl
 
 from warehouse import schema
-from warehouse.build import COMPUTED_OUTSIDE, TrendBuild
+from warehouse.build import TrendBuild
+from warehouse.layers import COMPUTED_OUTSIDE
 from warehouse.ledger import Ledger
 from warehouse.parts import Part, frame_schema, write_part
 from warehouse.publish import publish

@@ -11,7 +11,8 @@ import pytest
 
 from flows.over_read import add_reviewed
 from warehouse import parts, schema
-from warehouse.build import COMPUTED_OUTSIDE, TrendBuild
+from warehouse.build import TrendBuild
+from warehouse.layers import COMPUTED_OUTSIDE
 from warehouse.ledger import Ledger
 from warehouse.parts import write_part
 from warehouse.publish import publish

@@ -8,8 +8,8 @@ from pathlib import Path
 import polars as pl
 
 from warehouse import schema
-from warehouse.build import READ_IN_PLACE
 from warehouse.exports.provenance import provenance
+from warehouse.layers import READ_IN_PLACE
 from warehouse.published import Published
 
 TREND_TABLES = tuple(name for name in schema.PUBLISHED if name not in READ_IN_PLACE)
