@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from detectors import beats, chunks, classify, doubt, episodes, features, findings, quality, rhythm, signal
 from detectors.families import FamilyBook
+from detectors.p_waves import PWaveBook
 from detectors.results import Analysis, Beats, Episodes, QualityWindows, Segment
 from detectors.timing import Timing
 
@@ -27,6 +28,13 @@ class Options(NamedTuple):
     trigeminy_min_cycles: int = 3
     pause_ms: float = 2000
     full_pause_tolerance_pct: float = 8.0
+
+
+class Books(NamedTuple):
+    """What is learned while reading."""
+
+    families: FamilyBook
+    p_waves: PWaveBook
 
 
 class Gathered(NamedTuple):
@@ -111,16 +119,18 @@ def gather(
     segments: Sequence[Segment], scale: chunks.Scale, chunk_s: float, progress: Callable[[int], None]
 ) -> Gathered:
     """Read all segments once: beats with their families, and the quality of the time around them."""
-    book = FamilyBook()
+    books = Books(FamilyBook(), PWaveBook())
     table = beats.Growing()
-    seen = [_read(segment, n, scale, chunk_s, book, table, progress) for n, segment in enumerate(segments)]
+    seen = [_read(segment, n, scale, chunk_s, books, table, progress) for n, segment in enumerate(segments)]
     bad, suspect = (quality.windows(seen, scale.fs_hz, noisy) for noisy in (quality.NOISY, quality.SUSPECT))
     lengths = np.array([one.n_samples for one in seen], dtype=np.int64)
     del seen
     every = table.since(0)
     artefact = beats.is_artefact(every, timing_of(every, bad, lengths, scale.fs_hz)[1])
     found = every.keep(~artefact)
-    return Gathered(found.kept, *timing_of(found, bad, lengths, scale.fs_hz), book, bad, suspect, lengths, scale.fs_hz)
+    return Gathered(
+        found.kept, *timing_of(found, bad, lengths, scale.fs_hz), books.families, bad, suspect, lengths, scale.fs_hz
+    )
 
 
 def _read(
@@ -128,16 +138,16 @@ def _read(
     number: int,
     scale: chunks.Scale,
     chunk_s: float,
-    book: FamilyBook,
+    books: Books,
     table: beats.Growing,
     progress: Callable[[int], None],
 ) -> quality.Seen:
-    """Read a segment chunk by chunk: its beats go into `book` and `table`, what quality needs is returned."""
+    """Read a segment chunk by chunk: its beats go into `books` and `table`, what quality needs is returned."""
     waiting: list[chunks.ChunkBeats] = []
     blocks: list[chunks.Blocks] = []
     done, first_beat = 0, table.n_beats
     for end, found, quiet in _chunks_ahead(segment, scale, chunk_s):
-        waiting = _enter_full_batches(book, table, number, [*waiting, found])
+        waiting = _enter_full_batches(books, table, number, [*waiting, found])
         blocks.append(quiet)
         now = min(round(end * scale.fs_hz / signal.WORKING_FS_HZ), segment.n_samples)
         progress(now - done)
@@ -145,7 +155,7 @@ def _read(
     progress(segment.n_samples - done)
     for rest in waiting:
         if rest.working.size:
-            table.append(_enter(book, number, rest))
+            table.append(_enter(books, number, rest))
     mine = table.since(first_beat)
     return quality.look(segment.n_samples, chunks.join_blocks(blocks), mine.working, mine.likeness)
 
@@ -166,24 +176,26 @@ def _chunks_ahead(
 
 
 def _enter_full_batches(
-    book: FamilyBook, table: beats.Growing, segment: int, waiting: list[chunks.ChunkBeats]
+    books: Books, table: beats.Growing, segment: int, waiting: list[chunks.ChunkBeats]
 ) -> list[chunks.ChunkBeats]:
     """Enter the waiting beats by whole batches and return the rest, so that batches do not depend on the cuts."""
     beats_now = chunks.join(waiting)
     while beats_now.working.size >= BATCH_BEATS:
-        table.append(_enter(book, segment, beats_now.part(slice(BATCH_BEATS))))
+        table.append(_enter(books, segment, beats_now.part(slice(BATCH_BEATS))))
         beats_now = beats_now.part(slice(BATCH_BEATS, None))
     return [beats_now]
 
 
-def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Found:
-    shape_mv = book.prepare(now.shape_mv)
-    member = book.enter(shape_mv, now.is_clean)
+def _enter(books: Books, segment: int, now: chunks.ChunkBeats) -> beats.Found:
+    shape_mv = books.families.prepare(now.shape_mv)
+    member = books.families.enter(shape_mv, now.is_clean)
+    books.p_waves.enter(shape_mv, now.working, member.family, books.families.n_beats.size)
     return beats.Found(
         np.full(now.working.size, segment, dtype=np.int16),
         now.working,
         now.energy,
         *member,
+        books.p_waves.marks(shape_mv, member.nearest, books.families.shape_mv),
         features.amplitude_mv(shape_mv),
         features.spread_ms(shape_mv),
     )
@@ -192,7 +204,7 @@ def _enter(book: FamilyBook, segment: int, now: chunks.ChunkBeats) -> beats.Foun
 def conclude(gathered: Gathered, options: Options, models: classify.Models = classify.MODELS) -> Analysis:
     """Classes, episodes and findings of gathered beats, with the whole recording as context."""
     found, sample, timing, _, bad, suspect, lengths, fs_hz = gathered
-    labels = classify.classify(timing, found.member, found.spread_ms, gathered.book.shape_mv, models)
+    labels = classify.classify(timing, found.member, found.p_wave, found.spread_ms, gathered.book.shape_mv, models)
     bad = _with_doubtful_runs(bad, suspect, found, sample, timing, labels)
     is_analysable = quality.is_outside(bad, found.segment, sample)
     widths = features.qrs_width_ms(gathered.book.shape_mv)

@@ -26,13 +26,14 @@ class Found(NamedTuple):
     family: NDArray[np.int16]
     nearest: NDArray[np.int16]
     likeness: NDArray[np.float32]
+    p_wave: NDArray[np.int8]  # marks of p_waves
     amplitude_mv: NDArray[np.float32]
     spread_ms: NDArray[np.float32]
 
     @property
     def kept(self) -> Kept:
         """The columns that are needed once instants and intervals are known."""
-        return Kept(self.segment, self.family, self.nearest, self.likeness, self.amplitude_mv, self.spread_ms)
+        return Kept(*(getattr(self, name) for name in Kept._fields))
 
     def keep(self, chosen: NDArray[np.bool_]) -> Found:
         """The chosen beats only; the columns are closed up in place, which spares a second table."""
@@ -49,6 +50,7 @@ class Kept(NamedTuple):
     family: NDArray[np.int16]
     nearest: NDArray[np.int16]
     likeness: NDArray[np.float32]
+    p_wave: NDArray[np.int8]  # marks of p_waves
     amplitude_mv: NDArray[np.float32]
     spread_ms: NDArray[np.float32]
 
@@ -62,7 +64,7 @@ class Growing:
     """Found beats batch by batch, in columns that double when they are full; no batch is kept beside them."""
 
     def __init__(self) -> None:
-        kinds = ("int16", "float64", "float32", "int16", "int16", "float32", "float32", "float32")
+        kinds = ("int16", "float64", "float32", "int16", "int16", "float32", "int8", "float32", "float32")
         self.n_beats = 0
         self._columns = [np.empty(FIRST_ROOM, dtype=kind) for kind in kinds]
 

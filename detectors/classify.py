@@ -13,7 +13,7 @@ from typing import NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import families, fusion, timing, ventricular
+from detectors import families, fusion, p_waves, timing, ventricular
 from detectors.supraventricular import supraventricular
 from detectors.timing import Marks, Timing
 from detectors.ventricular import Judged
@@ -47,6 +47,7 @@ class Labels(NamedTuple):
 def classify(
     beat_timing: Timing,
     member: families.Membership,
+    p_wave: NDArray[np.int8],
     beat_spread_ms: NDArray[np.float32],
     family_shape_mv: NDArray[np.float32],
     models: Models = MODELS,
@@ -66,8 +67,14 @@ def classify(
     is_f = (member.family >= 0) & (family_class[member.family] == "F")
     is_f |= is_v & _merges(beat_timing, member, beat_spread_ms, judged)
     is_v &= ~is_f
-    is_s = supraventricular(beat_timing, is_v | is_f)
+    is_s = supraventricular(beat_timing, _of_main(p_wave, member, judged), is_v | is_f)
     return Labels(np.select([is_f, is_v, is_s], ["F", "V", "S"], "N"), odds, family_class)
+
+
+def _of_main(p_wave: NDArray[np.int8], member: families.Membership, judged: Judged) -> NDArray[np.int8]:
+    """Marks of P waves that hold for the main family's P wave, too; hidden where the own family has another one."""
+    is_kept = judged.shapes.p_kept > ventricular.P_KEPT
+    return np.where(is_kept[member.nearest], p_wave, np.int8(p_waves.HIDDEN))
 
 
 def beat_terms(marks: Marks, member: families.Membership, judged: Judged) -> Iterator[NDArray[np.float32]]:

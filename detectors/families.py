@@ -207,10 +207,21 @@ class FamilyBook:
         begin = np.searchsorted(member.family[order], np.arange(count.size))
         for family in np.flatnonzero(count):
             mine = order[begin[family] : begin[family] + count[family]]
-            mine = mine[:: -(-mine.size // MEAN_SAMPLE)]
-            weight = count[family] / (min(self.n_beats[family], MEMORY_BEATS) + count[family])
-            self.shape_mv[family] += np.float32(weight) * (shape_mv[mine].mean(axis=0) - self.shape_mv[family])
+            learned = mean_of(shape_mv, mine)
+            self.shape_mv[family] += weight(int(self.n_beats[family]), int(count[family])) * (
+                learned - self.shape_mv[family]
+            )
         self.n_beats += count
+
+
+def mean_of(rows: NDArray[np.float32], chosen: NDArray[np.int64]) -> NDArray[np.float32]:
+    """Mean of an even sample of the chosen rows."""
+    return rows[chosen[:: -(-chosen.size // MEAN_SAMPLE)]].mean(axis=0)
+
+
+def weight(n_known: int, n_new: int) -> np.float32:
+    """How much of what new beats show goes into an average that knows so many beats."""
+    return np.float32(n_new / (min(n_known, MEMORY_BEATS) + n_new))
 
 
 def _least_beats(n_families: int) -> int:

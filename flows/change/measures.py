@@ -20,7 +20,7 @@ RATE_DAY_SD = 0.06  # common practice, no source: a mean heart rate varies by so
 # dashboards/development_figures.json in tests/flows/test_detector_error.py.
 REPEATABILITY_SD_LN = 0.04  # of ln(found / true ventricular beats) between halves, counting taken off; upper 95 % bound
 # False beats per beat: root mean square over records with little of that ectopy, or the upper bound where none was seen.
-FALSE_V_PER_BEAT, FALSE_S_PER_BEAT = 0.0002, 0.0034
+FALSE_V_PER_BEAT, FALSE_S_PER_BEAT = 0.0002, 0.0021
 BEATS_PER_H = 4200  # 70 beats a minute, to state false beats by the hour
 
 

@@ -16,7 +16,7 @@ from detectors.results import Segment
 
 def batch(first: int, n_beats: int) -> Found:
     number = np.arange(first, first + n_beats)
-    kinds = ("int16", "float64", "float32", "int16", "int16", "float32", "float32", "float32")
+    kinds = ("int16", "float64", "float32", "int16", "int16", "float32", "int8", "float32", "float32")
     return Found(*((number + offset).astype(kind) for offset, kind in enumerate(kinds)))
 
 

@@ -17,6 +17,7 @@ NARROW = np.exp(-0.5 * (T / 12) ** 2) + 0.2 * T_WAVE
 WIDE = 1.2 * np.exp(-0.5 * (T / 34) ** 2) - 0.6 * np.exp(-0.5 * ((T - 70) / 25) ** 2) - 0.3 * T_WAVE
 BLOCK = 0.9 * np.exp(-0.5 * (T / 14) ** 2) - 0.5 * np.exp(-0.5 * ((T - 48) / 16) ** 2) + 0.2 * T_WAVE
 ABERRANT = 0.4 * np.exp(-0.5 * ((T + 8) / 30) ** 2) + 0.2 * T_WAVE
+NARROW_AND_WIDE = np.stack([NARROW, WIDE]).astype(np.float32)
 
 
 def classified(rr_ms: list[float], family: list[int], *shapes: np.ndarray, narrow: tuple[int, ...] = ()) -> list[str]:
@@ -30,7 +31,12 @@ def classified(rr_ms: list[float], family: list[int], *shapes: np.ndarray, narro
     shape_mv = np.stack(shapes).astype(np.float32)
     spread = spread_ms(shape_mv)[number]
     spread[list(narrow)] *= 0.7
-    return classify.classify(timing, member, spread, shape_mv).beat_class.tolist()
+    return classify.classify(timing, member, no_marks(number), spread, shape_mv).beat_class.tolist()
+
+
+def no_marks(beats: np.ndarray) -> np.ndarray:
+    """P waves of which nothing is known."""
+    return np.zeros(beats.size, dtype=np.int8)
 
 
 def test_early_wide_family_is_ventricular() -> None:
@@ -95,7 +101,9 @@ def test_lone_beat_follows_its_nearest_family() -> None:
     timing = Timing(before, after, usual_rr_ms(before, after))
     nearest = np.array(family, dtype=np.int16)
     member = Membership(number.astype(np.int16), nearest, np.where(number < 0, 0.8, 0.995).astype(np.float32))
-    labels = classify.classify(timing, member, number * np.float32(1), np.stack([NARROW, WIDE]).astype(np.float32))
+    labels = classify.classify(
+        timing, member, no_marks(number), number * np.float32(1), np.stack([NARROW, WIDE]).astype(np.float32)
+    )
     assert labels.beat_class[20] == "V" and labels.beat_class[40] == "N"
 
 
@@ -110,7 +118,9 @@ def test_lone_beat_that_is_not_early_is_no_ventricular_one() -> None:
     member = Membership(
         number.astype(np.int16), np.where(number < 0, 1, number).astype(np.int16), np.full(number.size, 0.9, np.float32)
     )
-    labels = classify.classify(timing, member, number * np.float32(1), np.stack([NARROW, WIDE]).astype(np.float32))
+    labels = classify.classify(
+        timing, member, no_marks(number), number * np.float32(1), np.stack([NARROW, WIDE]).astype(np.float32)
+    )
     assert labels.beat_class[[20, 25]].tolist() == ["V", "N"]
 
 
@@ -119,7 +129,11 @@ def test_no_family_at_all_is_unclassifiable() -> None:
     one = np.array([800.0], dtype=np.float32)
     none = np.array([-1], dtype=np.int16)
     labels = classify.classify(
-        Timing(one, one, one), Membership(none, none, one * 0), one, np.empty((0, SHAPE_LENGTH), np.float32)
+        Timing(one, one, one),
+        Membership(none, none, one * 0),
+        no_marks(none),
+        one,
+        np.empty((0, SHAPE_LENGTH), np.float32),
     )
     assert labels.beat_class.tolist() == ["Q"]
 

@@ -40,6 +40,19 @@ def test_atrial_bigeminy_is_supraventricular():
     assert np.mean(analysis.beats.beat_class[those(beats, found, "N")] == "N") > 0.98
 
 
+def test_atrial_groups_that_outnumber_the_sinus_beats_are_supraventricular():
+    """Groups of atrial beats between single sinus beats after pauses are S, although the short interval is the usual one."""
+    beats, analysis, found = analysed(([("N", 1.7)] + [("S", 0.65)] * 7) * 30)
+    assert np.mean(analysis.beats.beat_class[those(beats, found, "S")] == "S") > 0.9
+    assert np.mean(analysis.beats.beat_class[those(beats, found, "N")] == "N") > 0.9
+
+
+def test_pauses_of_the_sinus_node_make_no_supraventricular_beats():
+    """The same timing with the sinus P wave before every beat is sinus rhythm with pauses."""
+    _, analysis, _ = analysed(([("N", 1.7)] + [("N", 0.65)] * 7) * 30)
+    assert np.mean(analysis.beats.beat_class == "N") > 0.99
+
+
 def test_end_of_a_two_to_one_block_is_no_tachycardia():
     """When every P wave is conducted again the rate doubles to 63 a minute: normal beats, not a supraventricular run."""
     _, analysis, _ = analysed(([("N", 0.95)] * 40 + [("N", 1.86)] * 20) * 6)
