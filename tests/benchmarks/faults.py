@@ -175,7 +175,8 @@ def _store(bench: Bench, rng: np.random.Generator) -> Iterator[tuple[Path, dict[
 
     folder = _copy(bench.fresh, bench.folder / "disturbed")
     toml = folder / "programme.toml"
-    toml.write_text(toml.read_text().replace('store = ""', f'store = "s3://{BUCKET}/lake"'))
+    place = f"lake-{rng.integers(2**32)}"  # of this trial alone: what a server holds outlives it
+    toml.write_text(toml.read_text().replace('store = ""', f'store = "s3://{BUCKET}/{place}"'))
     server = S3Server()
     every, code = int(rng.integers(2, 40)), str(rng.choice(["SlowDown", "AccessDenied"]))
     [moment_s] = _moments(bench, rng, 1)
