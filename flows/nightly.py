@@ -11,6 +11,7 @@ import time
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor, as_completed
 from concurrent.futures.process import BrokenProcessPool
+from contextlib import contextmanager
 from dataclasses import asdict, dataclass
 from datetime import UTC, datetime
 from pathlib import Path
@@ -227,19 +228,44 @@ def analyse_here(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]
     if processes <= 1:
         yield from (analyse_one(item, reporter) for item in work)
         return
-    # Fresh processes: a fork would inherit the threads of polars in an unknown state.
-    with ProcessPoolExecutor(processes, mp_context=multiprocessing.get_context("spawn")) as pool:
+    with _fresh_processes(processes) as pool:
         running = {pool.submit(analyse_one, item): item for item in work}
         for number, finished in enumerate(as_completed(running), start=1):
-            try:
+            with _ends_told():
                 analysed = finished.result()
-            except BrokenProcessPool:
-                raise ProcessEnded(
-                    "a process that analysed recordings was ended, out of memory perhaps; what was done stays: "
-                    "lower [workers] processes or give this host more memory, and run again"
-                ) from None
             reporter.say(f"  analysed {analysed.recording_id} ({number} of {len(work)})")
             yield analysed
+
+
+@contextmanager
+def analyser(processes: int) -> Iterator[Callable[[Work], Analysed]]:
+    """A function that analyses one recording: here, or in one of several processes, so that threads can call it at once."""
+    if processes <= 1:
+        yield analyse_one
+        return
+
+    def apart(item: Work) -> Analysed:
+        with _ends_told():
+            return pool.submit(analyse_one, item).result()
+
+    with _fresh_processes(processes) as pool:
+        yield apart
+
+
+def _fresh_processes(count: int) -> ProcessPoolExecutor:
+    """A fork would inherit the threads of polars in an unknown state."""
+    return ProcessPoolExecutor(count, mp_context=multiprocessing.get_context("spawn"))
+
+
+@contextmanager
+def _ends_told() -> Iterator[None]:
+    try:
+        yield
+    except BrokenProcessPool:
+        raise ProcessEnded(
+            "a process that analysed recordings was ended, out of memory perhaps; what was done stays: "
+            "lower [workers] processes or give this host more memory, and run again"
+        ) from None
 
 
 def analyse_one(item: Work, reporter: Reporter = SILENT) -> Analysed:

@@ -9,7 +9,7 @@ from __future__ import annotations
 import asyncio
 import os
 from collections import deque
-from collections.abc import Iterator, Sequence
+from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from datetime import UTC, datetime, timedelta
 from itertools import pairwise
@@ -30,6 +30,7 @@ from prefect.artifacts import (
     create_table_artifact,
     update_progress_artifact,
 )
+from prefect.cache_policies import NO_CACHE
 from prefect.client.orchestration import get_client
 from prefect.client.schemas.objects import StateType
 from prefect.futures import PrefectFuture
@@ -64,27 +65,30 @@ class CronError(ValueError):
     retries=2,
     retry_delay_seconds=[10, 60],
     timeout_seconds=3600,
+    cache_policy=NO_CACHE,
 )
-def analyse_recording_task(item: Work) -> Analysed:
-    """Analyse one recording and write its parts; repeating it writes the same files."""
-    return nightly.analyse_one(item)
+def analyse_recording_task(item: Work, analyse: Callable[[Work], Analysed]) -> Analysed:
+    """Analyse one recording by `analyse`, which writes its parts; repeating it writes the same files."""
+    return analyse(item)
 
 
 def analyse_as_tasks(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]:
-    """Run one Prefect task per recording, as many at a time as the settings allow; yields them as they are done.
+    """Run one Prefect task per recording, as many at a time as the settings allow, each in a process where they are several.
 
     A Dask scheduler repeats failed recordings by itself, so it gets them without tasks around them.
     """
     if work and work[0].settings.workers.scheduler:
         yield from nightly.analyse_where_set(work, reporter)
         return
+    processes = min(len(work), work[0].settings.workers.processes) if work else 0
     running: deque[tuple[Work, PrefectFuture[Analysed]]] = deque()
-    for item in work:
-        running.append((item, analyse_recording_task.submit(item)))
-        if len(running) >= item.settings.workers.processes:
+    with nightly.analyser(processes) as analyse:
+        for item in work:
+            running.append((item, analyse_recording_task.submit(item, analyse)))
+            if len(running) >= processes:
+                yield _finished(*running.popleft(), reporter)
+        while running:
             yield _finished(*running.popleft(), reporter)
-    while running:
-        yield _finished(*running.popleft(), reporter)
 
 
 def analyse_with_progress(work: Sequence[Work], reporter: Reporter) -> Iterator[Analysed]:

@@ -2,6 +2,7 @@
 
 import contextlib
 import json
+import multiprocessing
 import os
 import re
 import signal
@@ -9,6 +10,7 @@ import socket
 import subprocess
 import sys
 import time
+import unittest.mock
 from datetime import datetime
 from pathlib import Path
 
@@ -16,11 +18,13 @@ import pytest
 import sleepecg
 import yaml  # comes with Prefect
 
+from flows import nightly
 from flows.cli import main
 from flows.edf_write import EdfHeader, Piece, write_edf
 from flows.local_server import ServerError
 from flows.lock import FolderBusy
 from tests.flows.test_quiet_network import GUARD
+from warehouse.published import Published
 
 ROOT = Path(__file__).parents[2]
 LONGEST_WAIT_S = 420
@@ -75,6 +79,32 @@ def test_the_nightly_flow_ends_in_states_that_tell(prefect_here, coast, tmp_path
     assert nightly_flow(str(coast), return_state=True).name == "Unchanged"
 
 
+def test_several_processes_analyse_the_recordings_of_the_flow(prefect_here, coast):
+    """With [workers] processes = 2 the flow's recordings are analysed in other processes than its own, and published."""
+    from flows import schedule
+
+    toml = coast / "programme.toml"
+    toml.write_text(toml.read_text().replace("processes = 1", "processes = 2"))
+    with (coast / "register" / "wears.csv").open("a") as wears:
+        wears.write("SRL-2,P-1,2026-03-02T08:00,,\n")
+    second = (coast / "inbox" / "SRL-1.edf").read_bytes()
+    second = (
+        second.replace(b"SRL-1", b"SRL-2").replace(b"01-MAR-2026", b"02-MAR-2026").replace(b"01.03.26", b"02.03.26")
+    )
+    (coast / "inbox" / "SRL-2.edf").write_bytes(second[:-2000] + bytes(2000))
+    with unittest.mock.patch.object(nightly, "analyse_one", analysed_by_a_child):
+        assert schedule.nightly_flow(str(coast), return_state=True).name == "Published with refusals"
+    found = Published(coast / "published").table("recordings")
+    assert found["recording_id"].to_list() == ["SRL-1_20260301", "SRL-2_20260302"]
+    assert (found["all_beats"] > 0).all()
+
+
+def analysed_by_a_child(item):
+    """Analyse a recording, in any other process than that of the tests."""
+    assert multiprocessing.parent_process() is not None
+    return nightly.analyse_one(item)
+
+
 def test_what_somebody_must_mend_ends_as_not_published(prefect_here, coast):
     """A wrong setting ends the flow at once as Not published, with the sentence; the folder stays as it was."""
     from flows.schedule import nightly_flow
@@ -118,7 +148,7 @@ def test_no_more_recordings_at_a_time_than_the_settings_allow(monkeypatch):
             return {"of": self.item.recording_id}
 
     class Task:
-        def submit(self, item):
+        def submit(self, item, analyse):
             begun.append(item.recording_id)
             at_once.append(len(begun) - len(ended))
             return Future(item)
