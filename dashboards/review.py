@@ -6,6 +6,7 @@ decided here, and no number is made that `review_sheet` does not hold.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from typing import Any
 
 import polars as pl
@@ -38,7 +39,7 @@ def context(tables: Tables, recording: dict[str, Any], drawings: Drawings) -> di
         "items": shown,
         "families_count": sheet.height,
         "effort": next(tables.of_recording("review_effort", recording_id).iter_rows(named=True), None),
-        "other_strips": [strip for strip in drawings.strips if not any(strip is shown for shown in beside)],
+        "other_strips": [strip for strip in drawings.strips if not _stands(strip, beside)],
         "episodes": _episodes(tables.large("episodes", recording_id)),
     }
 
@@ -75,15 +76,30 @@ def _in_words(row: dict[str, Any]) -> str:
 
 
 def _with_strips(items: list[dict[str, Any]], drawn: list[dict[str, Any]]) -> list[dict[str, Any]]:
-    """Give each family the strips that show it; a strip stands beside the first family that takes it."""
+    """Give each family the strips that show it, each of its parts first; a strip stands beside the first family that takes it."""
     free = drawn
     for item in items:
         showing = [strip for strip in free if item["family"] in (strip["beat_families"] or ())]
         # Strips chosen for a beat of the family's class tell more than those in which it only happens to occur.
         showing.sort(key=lambda strip: strip["beat_class"] != item["family_class"])
-        item["strips"] = showing[:STRIPS_OF_A_FAMILY]
-        free = [strip for strip in free if not any(strip is taken for taken in item["strips"])]
+        of_parts = [
+            next((s for s in showing if _shows(s, item["family"], letter)), None) for letter, _ in item["parts"]
+        ]
+        needed = [strip for place, strip in enumerate(of_parts) if strip and not _stands(strip, of_parts[:place])]
+        others = [strip for strip in showing if not _stands(strip, needed)]
+        item["strips"] = [*needed, *others[: max(STRIPS_OF_A_FAMILY - len(needed), 0)]]
+        free = [strip for strip in free if not _stands(strip, item["strips"])]
     return items
+
+
+def _shows(strip: dict[str, Any], family: int, letter: str) -> bool:
+    """Tell whether a beat of the family that was found as this class lies in a strip."""
+    beats = zip(strip["beat_families"], strip["drawing"].marks, strict=True)
+    return any(found == family and mark.beat_class == letter for found, mark in beats)
+
+
+def _stands(strip: dict[str, Any], among: Sequence[dict[str, Any] | None]) -> bool:
+    return any(strip is other for other in among)
 
 
 def _episodes(episodes: pl.DataFrame) -> list[dict[str, Any]]:

@@ -78,3 +78,16 @@ def test_a_family_found_as_several_classes_can_be_split(rows, publish):
     """Its parts are the classes found in it, each with its beats; a family of one class has none."""
     parts = {item["family"]: item["parts"] for item in sheet_of(rows, publish)["items"]}
     assert parts == {1: [("V", 600), ("F", 40)], 2: [], 0: [("N", 5000), ("S", 120)]}
+
+
+def test_each_part_of_a_family_stands_with_a_strip_that_shows_it(rows, publish):
+    """A strip with a beat of the family that was found as the part's class comes before others, however many there are."""
+    strips = [row for row in rows["strips"] if row["recording_id"] == RECORDING]
+    for row in strips[:3]:
+        row["beat_classes"] = ["V" if kind == "S" else kind for kind in row["beat_classes"]]
+        row["beat_families"] = [1 if kind == "V" else 0 for kind in row["beat_classes"]]
+    last = strips[2]
+    last["beat_classes"] = ["F" if kind == "V" else kind for kind in last["beat_classes"]]
+    first = sheet_of(rows, publish)["items"][0]
+    assert first["parts"] == [("V", 600), ("F", 40)]
+    assert [strip["first_sample"] for strip in first["strips"]] == [strips[0]["first_sample"], last["first_sample"]]

@@ -5,7 +5,7 @@ from __future__ import annotations
 import csv
 import io
 import re
-from datetime import date
+from datetime import date, datetime
 from html.parser import HTMLParser
 from pathlib import Path
 
@@ -239,6 +239,32 @@ def test_a_patient_without_anything_has_a_page(rows, publish, tmp_path):
     pages = pages_of(build(publish(rows), tmp_path / "site"))
     assert "no wear yet" in pages["index.html"].text
     assert "No wear yet" in pages["patients/SKERRY-0099.html"].text
+
+
+def test_a_patient_without_therapy_has_the_days_and_no_change(rows, publish, tmp_path):
+    """Where the register holds no therapy event the page tells the range of the burden, draws the days and judges nothing."""
+    code = "SKERRY-0002"
+    for table in ("therapies", "periods", "changes"):
+        rows[table] = [row for row in rows[table] if row["patient_code"] != code]
+    page = pages_of(build(publish(rows), tmp_path / "site"))[f"patients/{code}.html"]
+    (burdens,) = [[row["v_burden_pct"] for row in rows["wear_days"] if row["patient_code"] == code]]
+    told = " ".join(page.text.split())
+    assert f"Ventricular burden between {min(burdens):.1f} and {max(burdens):.1f} % on 10 wear days" in told
+    assert "chance" not in told.split("Before you rely on this page")[0]
+
+
+def test_decisions_that_meet_nothing_are_named(rows, publish, tmp_path):
+    """The trail names what was decided, by whom, when, and why it meets nothing; the recording leads there."""
+    at = datetime.fromisoformat
+    rows["unmet_decisions"].append(
+        {"recording_id": "CN0000-20260302", "patient_code": "SKERRY-0001", "reader_code": "R-07",
+         "decision_subject": "episode", "episode_kind": "run", "start_utc": at("2026-03-03T05:00:00"),
+         "decision": "reject", "reviewed_utc": at("2026-04-01T07:30:00"), "delivery_id": "D1", "reason": "No such run."}
+    )  # fmt: skip
+    told = " ".join(pages_of(build(publish(rows), tmp_path / "site"))["trail.html"].text.split())
+    assert "1 decision meets nothing in the published analysis" in told
+    assert "ventricular run at 3 Mar 2026, 05:00:00" in told
+    assert all(word in told for word in ("R-07", "1 Apr 2026, 07:30:00", "No such run."))
 
 
 def test_missing_burden_is_never_shown_as_a_number(rows, publish, tmp_path):

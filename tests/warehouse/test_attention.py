@@ -141,7 +141,7 @@ def test_verdicts_on_the_latest_therapy_event_are_listed(lake: Any) -> None:
         reasons = build.frame("attention").sort("attention_rank")["attention_reason"].to_list()
     assert "rose by 400 %" in reasons[0]
     assert "up to 210 %" in reasons[0]
-    assert reasons[1] == "one day"
+    assert reasons[1] == "too little wear to judge the therapy event of 2026-05-10: one day"
 
 
 def test_a_recurrence_is_listed_since_its_day(lake: Any) -> None:

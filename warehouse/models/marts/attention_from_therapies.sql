@@ -56,6 +56,6 @@ SELECT
     'too_little_wear',
     date_diff('day', therapy_day, now.latest_day),
     therapy_day,
-    coalesce(reason, 'too little wear for a verdict')
+    printf('too little wear to judge the therapy event of %s', therapy_day::VARCHAR) || coalesce(': ' || reason, '')
 FROM latest, now
 WHERE verdict = 'too_little_wear' AND wear_days > 0
