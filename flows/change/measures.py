@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -19,8 +20,11 @@ RATE_DAY_SD = 0.06  # common practice, no source: a mean heart rate varies by so
 # What the detector does differently in two periods of one patient. Measured on the development records; derived from
 # dashboards/development_figures.json in tests/flows/test_detector_error.py.
 REPEATABILITY_SD_LN = 0.04  # of ln(found / true ventricular beats) between halves, counting taken off; upper 95 % bound
+PLACEMENT_SD_LN = 0.07  # of the same between a lead and leads turned from it by up to 30 degrees: another patch
 # False beats per beat: root mean square over records with little of that ectopy, or the upper bound where none was seen.
 FALSE_V_PER_BEAT, FALSE_S_PER_BEAT = 0.0002, 0.0021
+# None was seen in 3.3 hours of such records: the root mean square of what that leaves open.
+FALSE_COUPLETS_PER_H, FALSE_RUNS_PER_H = 0.26, 0.26
 BEATS_PER_H = 4200  # 70 beats a minute, to state false beats by the hour
 
 
@@ -43,10 +47,11 @@ class Measure:
     def error(self, share: float) -> DetectorError:
         """What the detector adds to a comparison; `share` of what was measured.
 
-        Runs fail with each of their beats, so that their error is the larger. Records with little ectopy were too few
-        hours to hold a false couplet or run; their false rate is taken as 0.
+        Runs fail with each of their beats, so that their error is the larger. The two periods are taken to be worn on
+        two patches. The false rate of bigeminy, of which no record without any held some, is taken as 0.
         """
-        return DetectorError(share * REPEATABILITY_SD_LN * self.beats_each, share * self.false_rate)
+        sd_ln = math.hypot(REPEATABILITY_SD_LN, PLACEMENT_SD_LN)
+        return DetectorError(share * sd_ln * self.beats_each, share * self.false_rate)
 
 
 _HOURS, _MINUTES = pl.col("analysable_s") / 3600, pl.col("analysable_s") / 60
@@ -79,6 +84,7 @@ RUNS_PER_24H = Measure(
     "runs per 24 h",
     "per 24 h",
     beats_each=3,
+    false_rate=FALSE_RUNS_PER_H,
 )
 MEASURES = (
     V_BURDEN,
@@ -91,7 +97,7 @@ MEASURES = (
     HEART_RATE,
     Measure(
         "couplets_per_24h", pl.col("couplets"), _HOURS, 24, ECTOPY_DAY_SD, REPETITIVE_FORMS, "couplets per 24 h", "per 24 h",
-        beats_each=2,
+        beats_each=2, false_rate=FALSE_COUPLETS_PER_H,
     ),
     Measure(
         "bigeminy_pct", pl.col("bigeminy_s"), pl.col("analysable_s"), 100, ECTOPY_DAY_SD, REPETITIVE_FORMS, "bigeminy", "%",

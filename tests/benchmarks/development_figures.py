@@ -10,9 +10,14 @@ import json
 import sys
 from pathlib import Path
 
+import numpy as np
+from numpy.typing import NDArray
+
 from detectors.annotations import CLASSES
 from flows.scoring.score import score_folder
-from flows.scoring.score_report import RecordScore
+from flows.scoring.score_record import score_record
+from flows.scoring.score_report import Options, RecordScore
+from tests.benchmarks.ways import TURNED, open_in
 
 TARGET = Path(__file__).parents[2] / "dashboards" / "development_figures.json"
 KEPT = (
@@ -31,10 +36,32 @@ OF_RECORD = ("record", "has_af", "v_burden_found_pct", "v_burden_expert_pct")
 
 def halves(record: RecordScore, ectopy: str) -> list[dict[str, int]]:
     """What the expert and the detector counted in each half, and how many of it both did."""
+    return [counts(half.matrix, ectopy) for half in record.halves]
+
+
+def counts(matrix: NDArray[np.int64], ectopy: str) -> dict[str, int]:
+    """Beats, those of one ectopy by the expert and by the detector, and those by both."""
     row = CLASSES.index(ectopy)
-    tables = (half.matrix for half in record.halves)
-    counted = [(m[:, : len(CLASSES)].sum(), m[row].sum(), m[:, row].sum(), m[row, row]) for m in tables]
-    return [dict(zip(("beats", "expert", "found", "both"), map(int, counts), strict=True)) for counts in counted]
+    counted = matrix[:, : len(CLASSES)].sum(), matrix[row].sum(), matrix[:, row].sum(), matrix[row, row]
+    return dict(zip(("beats", "expert", "found", "both"), map(int, counted), strict=True))
+
+
+def turned(header: Path) -> dict[str, object]:
+    """Ventricular beats of a record in its lead and in leads between its two, as if electrodes lay elsewhere."""
+    scores = [score_record(open_in(way, header), Options("S", 0.0, 0, "")) for way in ("as they are", *TURNED)]
+    whole = (sum(half.matrix for half in score.halves) for score in scores)
+    return {"record": header.stem, "leads": [counts(np.asarray(matrix), "V") for matrix in whole]}
+
+
+def forms(record: RecordScore) -> dict[str, object]:
+    """Ventricular couplets and runs: how many the expert sees, and how many found ones are shorter by the expert."""
+    by_expert, found = record.runs["V"]
+    spans = {"couplets": slice(2, 3), "runs": slice(3, None)}
+    counted = {
+        name: {"expert": int(by_expert[span].sum()), "false": int(found[: span.start, span].sum())}
+        for name, span in spans.items()
+    }
+    return {"record": record.record, "has_af": record.has_af, **counted}
 
 
 def main(reference: Path) -> None:
@@ -52,6 +79,8 @@ def main(reference: Path) -> None:
             ectopy: [{"record": r.record, "has_af": r.has_af, "halves": halves(r, ectopy)} for r in report.records]
             for ectopy in "VS"
         },
+        "turned": [turned(header) for header in sorted((reference / "mitdb").glob("*.hea"))],
+        "forms": [forms(record) for record in report.records],
     }
     TARGET.write_text(json.dumps(figures, indent=1) + "\n", encoding="utf-8")
 

@@ -120,6 +120,7 @@ def _above(edge_hz: float, mv: Millivolts, fs_hz: float) -> Millivolts:
 
 
 Opening = Callable[[Path], Labelled]
+TURNED = {f"lead turned {degrees:+d}": partial(_turned, degrees) for degrees in (-30, -20, -10, 10, 20, 30)}
 RATES = (125, 128, 200, 250, 256, 500)
 WAYS: dict[str, Opening] = {
     "as they are": _first,
@@ -137,7 +138,7 @@ WAYS: dict[str, Opening] = {
     "first half": partial(_part, 0, 905),
     "last 20 min": partial(_part, 605, 1806),
     "middle 25 min": partial(_part, 152, 1653),
-    **{f"lead turned {degrees:+d}": partial(_turned, degrees) for degrees in (-30, -20, -10, 10, 20, 30)},
+    **TURNED,
 }
 HARD_WAYS: dict[str, Opening] = {
     "inverted": partial(_changed, partial(_times, -1.0)),

@@ -13,7 +13,7 @@ from dashboards import words
 from detectors.change import VERDICTS
 from flows.change import trends
 from flows.change.extremes import EXTREMES
-from flows.change.measures import MEASURES, REPEATABILITY_SD_LN
+from flows.change.measures import MEASURES, V_BURDEN
 from flows.settings import ChangeSettings, WearSettings
 from warehouse.schema import PUBLISHED
 
@@ -213,7 +213,7 @@ def test_time_between_the_periods_widens_the_chance_limit():
 def test_the_error_of_the_detector_widens_the_chance_limit():
     """However steady the days, a fall that the detector's own error explains is not beyond chance; its share is told."""
     steady = [400.0] * 20
-    change = replace(DAYS_ALONE, detector_error_share=0.2 / REPEATABILITY_SD_LN)
+    change = replace(DAYS_ALONE, detector_error_share=0.2 / V_BURDEN.error(1.0).sd_ln)
     found = row(changes(wearing("P1", steady, [0.7 * level for level in steady]), {"T1": "P1"}, change=change))
     # Source: normal theory, 1 - exp(-1.645 x 0.2 x sqrt(2)) = 37.2 %, by hand
     assert 37 < found["chance_fall_limit_pct"] < 45
