@@ -127,6 +127,7 @@ def gather(
     del seen
     every = table.since(0)
     artefact = beats.is_artefact(every, timing_of(every, bad, lengths, scale.fs_hz)[1])
+    artefact |= np.append(books.p_waves.is_p_wave(books.families.shape_mv), False)[every.family]  # False for none
     found = every.keep(~artefact)
     return Gathered(
         found.kept, *timing_of(found, bad, lengths, scale.fs_hz), books.families, bad, suspect, lengths, scale.fs_hz

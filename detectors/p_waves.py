@@ -6,9 +6,11 @@ Common practice, no source: a conducted beat that the sinus node did not begin h
 from __future__ import annotations
 
 import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
 from detectors import families
+from detectors.chunks import SHAPE_BEFORE
 from detectors.families import P_WAVE, QRS
 
 HIDDEN, SAME, NEITHER, OTHER = range(
@@ -21,6 +23,10 @@ HELD_REST = 0.8  # what else there is is smaller than this share of the P wave
 LOST = 0.35  # part of the P wave in a beat that has another one or none, where
 LOST_REST = 1.3  # what else there is is little larger than the P wave
 SHORTENS = 0.88  # interval after a beat over the one before it
+ALONE_LAG = 8  # working samples: how far the steepest bend of a P wave lies from the middle of the stretch
+ALONE_LIKE = 0.9  # correlation with the main P wave, and
+ALONE_SIZE = 0.5  # log of the size over its size, either side, and
+ALONE_SMALL = 0.5  # of the main QRS at most
 LAST_BEATS = 16  # that many tell a P wave from noise
 
 
@@ -46,6 +52,21 @@ class PWaveBook:
             learned = families.mean_of(wave_mv, last if last.size >= LAST_BEATS else mine)
             self.wave_mv[row] += families.weight(int(known[row]), int(count[row])) * (learned - self.wave_mv[row])
         self.n_beats = known + count
+
+    def is_p_wave(self, family_shape_mv: NDArray[np.float32]) -> NDArray[np.bool_]:
+        """Families whose beats are P waves that no QRS follows, shape (n_families,): the largest family's, alone in a gap."""
+        if self.n_beats.size == 0:
+            return np.zeros(0, dtype=bool)
+        main = int(self.n_beats.argmax())
+        wave, size = families.unit(self.wave_mv[main])
+        begin = SHAPE_BEFORE - P_WAVE.length // 2
+        stretches = sliding_window_view(family_shape_mv, P_WAVE.length, axis=1)[
+            :, begin - ALONE_LAG : begin + ALONE_LAG + 1
+        ]
+        direction, own_size = families.unit(stretches)
+        is_alike = (direction @ wave > ALONE_LIKE) & (np.abs(np.log(own_size / size)) < ALONE_SIZE)
+        qrs_size = families.unit(QRS.of(family_shape_mv))[1]
+        return is_alike.any(axis=1) & (qrs_size < ALONE_SMALL * qrs_size[main])
 
     def marks(
         self, shape_mv: NDArray[np.float32], family: NDArray[np.int16], family_shape_mv: NDArray[np.float32]

@@ -72,3 +72,13 @@ def test_book_goes_on_learning_and_takes_new_families() -> None:
     book.enter(late, working, one, 2)
     assert set(book.marks(late, one, np.stack([sinus[0], late[0]]))) == {SAME}
     assert book.n_beats.tolist() == [100, 100]
+
+
+def test_family_of_p_waves_alone_is_told_from_small_beats() -> None:
+    """A family that is the P wave of the others without a QRS is no family of beats; a small QRS is one."""
+    book = PWaveBook()
+    family = np.array([0] * 30 + [1] * 5 + [2] * 5, dtype=np.int16)
+    means = np.stack([SINUS, wave(20, 20, 0.12), wave(0, 12, 0.3)]).astype(np.float32)
+    book.enter(means[family], np.arange(40) * 100.0, family, 3)
+    assert book.is_p_wave(means).tolist() == [False, True, False]
+    assert PWaveBook().is_p_wave(means[:0]).size == 0

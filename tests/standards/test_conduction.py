@@ -6,7 +6,8 @@ Common practice, no source, for all of them.
 import numpy as np
 import pytest
 
-from tests.standards.test_trade_facts import FULL_PAUSE, analysed, classes, those
+from detectors import analyse_signal, synthetic, synthetic_beats
+from tests.standards.test_trade_facts import FS_HZ, FULL_PAUSE, analysed, classes, those
 
 NORMAL_STRETCH = [("N", 0.85)] * 60
 
@@ -51,6 +52,20 @@ def test_pauses_of_the_sinus_node_make_no_supraventricular_beats():
     """The same timing with the sinus P wave before every beat is sinus rhythm with pauses."""
     _, analysis, _ = analysed(([("N", 1.7)] + [("N", 0.65)] * 7) * 30)
     assert np.mean(analysis.beats.beat_class == "N") > 0.99
+
+
+def test_blocked_p_waves_are_no_beats():
+    """P waves that no QRS follows, alone in the pauses of a second-degree block, are neither beats nor ventricular."""
+    beats = synthetic_beats.exact_beats(([("N", 0.8)] * 3 + [("N", 1.6)]) * 60)
+    n_samples = int(beats.sample[-1]) + 2 * FS_HZ
+    blocked_s = beats.sample[3::4] / FS_HZ - 0.8 - 0.165
+    ecg_mv = 0.5 * synthetic.draw(beats, n_samples=n_samples, fs_hz=FS_HZ)  # a small QRS, so that P waves stand out
+    t_s = np.arange(n_samples) / FS_HZ
+    for at_s in [*blocked_s, *(beats.sample / FS_HZ - 0.165)]:
+        ecg_mv += 0.1 * np.exp(-0.5 * ((t_s - at_s) / 0.016) ** 2).astype(np.float32)
+    analysis = analyse_signal(ecg_mv + 0.005 * np.random.default_rng(1).standard_normal(n_samples), fs_hz=FS_HZ)
+    assert analysis.beats.sample.size == beats.sample.size
+    assert set(analysis.beats.beat_class.tolist()) == {"N"}
 
 
 def test_end_of_a_two_to_one_block_is_no_tachycardia():
