@@ -14,6 +14,7 @@ from flows.publication import built
 from flows.unmasking import ARMS, masked_copy
 from warehouse import cuts
 from warehouse.audit import Change, change_loads
+from warehouse.layout import refuse_missing_lake
 from warehouse.ledger import Ledger
 from warehouse.published import Published
 
@@ -21,6 +22,7 @@ from warehouse.published import Published
 def freeze_standing(folder: Path, name: str, reason: str, actor_code: str | None) -> Path:
     """Freeze the standing publication with register and settings, and keep that in the history; returns its folder."""
     lake = folder / "lake"
+    refuse_missing_lake(folder)
     with folder_lock(folder), tempfile.TemporaryDirectory(prefix="freeze-", dir=lake) as scratch:
         is_new = name not in cuts.cut_names(folder / "published")
         cut = cuts.freeze(folder / "published", name, _inputs(folder, Path(scratch)), reason=reason)
@@ -50,6 +52,7 @@ def cut_folder(folder: Path, name: str) -> Path:
 def check_cut(folder: Path, name: str) -> list[str]:
     """Recompute a cut from its parts and inputs; one sentence for each thing that is no longer the same."""
     published = folder / "published"
+    refuse_missing_lake(folder)
     damages = [f"{damage.path}: {damage.problem}" for damage in cuts.damages(published, name)]
     if damages:
         return damages

@@ -32,6 +32,11 @@ def export(folder: Path, what: str, to: Path, *, cut: str = "", study_code: str 
         raise ExportError(f"unknown export {what!r}; {f'did you mean {near[0]}?' if near else ', '.join(known)}")
     published = Published(folder / "published", edition=cut_folder(folder, cut) if cut else None)
     is_file = what in EXPORTS and EXPORTS[what].writes == "file"
+    if to.exists() and to.is_dir() == is_file:
+        raise ExportError(
+            f"{to} is a {'folder' if is_file else 'file'}, but {what} is {'one file' if is_file else 'a folder of files'}; "
+            "name another target"
+        )
     home = to.parent if is_file else to
     was_there, beside = home.exists(), home / f".writing-{what}"
     try:

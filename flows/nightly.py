@@ -126,14 +126,13 @@ def _bring_up_to_date(
 ) -> Outcome:
     from flows import edits, memory, register, run_log
     from flows.arrivals import ingest
-    from warehouse import cache, layout, owner
+    from warehouse import cache, owner
     from warehouse.ledger import Ledger
 
     memory.give_back()
     people = register.load(folder, settings.programme.zone)
     where = f"the folder {folder.resolve()} of host {socket.gethostname()}"
     owner.claim(folder / "lake", settings.lake.store, run_id, where, take_over=take_over)
-    layout.refuse_missing_lake(folder)
     ledger = Ledger(folder / "lake")
     edits.note_edits(folder / "lake", settings, people, ledger, actor_code)
     arrivals = ingest.ingest(folder, settings, people, ledger, reporter.say)

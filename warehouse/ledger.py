@@ -22,7 +22,7 @@ from deltalake.exceptions import DeltaError, TableNotFoundError
 
 from warehouse import layout, schema
 from warehouse.cache import refresh, store_of
-from warehouse.layout import check_layout, found_layout, note_layout
+from warehouse.layout import check_layout, found_layout, note_layout, refuse_missing_lake
 from warehouse.owner import refuse_other
 from warehouse.parts import Part, file_sha256
 from warehouse.store import Store, StoreError
@@ -196,18 +196,20 @@ def _open_or_create(lake: Path, store: Store | None) -> DeltaTable:
     if store:
         refresh(lake, store)
     address, options = (f"{store.url}/ledger", store.delta_options) if store else (_address(lake / "ledger"), None)
+    where = address if store else lake / "ledger"
     check_layout(lake)
+    refuse_missing_lake(lake.parent)
     if found_layout(lake) is not None:
         try:
             with _told_by(store):
                 return DeltaTable(address, storage_options=options)
         except TableNotFoundError:
             raise LedgerError(
-                f"{address} is gone, but {lake} holds landed parts; restore the ledger folder from a copy, "
+                f"{where} is gone, but {lake} holds landed parts; restore the ledger folder from a copy, "
                 f"or remove {lake} whole and run again over the inbox"
             ) from None
         except DeltaError as problem:
-            raise _damaged(address, problem) from None
+            raise _damaged(where, problem) from None
     (lake / "ledger").mkdir(parents=True, exist_ok=True)
     with _told_by(store):
         delta = DeltaTable.create(

@@ -10,10 +10,8 @@ from flows.verbs.verb import Verb, actor_option, folder_argument, json_option
 
 
 def _verify(asked: argparse.Namespace) -> int:
-    from warehouse.layout import refuse_missing_lake
     from warehouse.ledger import verify
 
-    refuse_missing_lake(asked.folder)
     damages = verify(asked.folder / "lake")
     if asked.json:
         print(json.dumps([damage._asdict() for damage in damages]))
@@ -37,11 +35,9 @@ def _tidy_arguments(parser: argparse.ArgumentParser) -> None:
 def _tidy(asked: argparse.Namespace) -> int:
     from flows.lock import folder_lock
     from warehouse.cuts import kept_parts
-    from warehouse.layout import refuse_missing_lake
     from warehouse.ledger import tidy
     from warehouse.published import Published
 
-    refuse_missing_lake(asked.folder)
     published = asked.folder / "published"
     with folder_lock(asked.folder):
         keep = kept_parts(published)

@@ -249,10 +249,14 @@ def test_a_folder_of_an_older_version_is_brought_up_by_a_run(capsys, coast, monk
 
 
 def test_a_lake_that_was_moved_away_is_asked_back(capsys, coast):
-    """Neither a run nor a check begins a new lake beside a publication; tables still answer, and all goes on afterwards."""
+    """No command begins a new lake beside a publication; tables still answer, and all goes on afterwards."""
+    call(capsys, "freeze", coast, "visit-1")
     (coast / "lake").rename(coast / "elsewhere")
-    for verb in ("run", "verify", "tidy"):
-        assert main([verb, str(coast)]) == 1
+    for verb, *words in (
+        ("run",), ("verify",), ("tidy",), ("freeze", "x"), ("thaw", "visit-1", "--check"), ("compare", "present", "present"),
+        ("promote", "present", "--reason", "x"), ("unmask", "--reason", "x"),
+    ):  # fmt: skip
+        assert main([verb, str(coast), *words]) == 1
         assert (
             f"{coast / 'lake'} is gone, but {coast / 'published'} was made from it; put it back"
             in capsys.readouterr().err
@@ -296,3 +300,15 @@ def files_of_at_most(size_bytes):
     finally:
         resource.setrlimit(resource.RLIMIT_FSIZE, limit)
         signal.signal(signal.SIGXFSZ, handler)
+
+
+@pytest.mark.parametrize(
+    ("what", "words"), [("fhir", "is a folder, but fhir is one file"), ("csv", "is a file, but csv")]
+)
+def test_an_export_into_the_wrong_kind_of_target_is_refused(capsys, coast, tmp_path, what, words):
+    """A folder where one file is written, and a file where a folder is, are said in words of the user."""
+    target = tmp_path / "out"
+    target.mkdir() if what == "fhir" else target.write_text("as it was")
+    assert main(["export", str(coast), what, "--to", str(target)]) == 1
+    assert f"{target} {words}" in capsys.readouterr().err
+    assert list(tmp_path.rglob("*")).count(target) == 1
