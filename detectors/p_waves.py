@@ -13,9 +13,8 @@ from detectors import families
 from detectors.chunks import SHAPE_BEFORE
 from detectors.families import P_WAVE, QRS
 
-HIDDEN, SAME, NEITHER, OTHER = range(
-    4
-)  # marks of a beat: nothing can be told, its family's P wave, in doubt, another or none
+# Marks of a beat: nothing can be told, its family's P wave, in doubt, another or none.
+HIDDEN, SAME, NEITHER, OTHER = range(4)
 LAGS = (-3, 0, 3)  # working samples: with the rate a P wave moves by 24 ms
 SEEN = 0.03  # size of a P wave over its QRS, root mean squares: less is no P wave
 HELD = 0.6  # part of the P wave in a beat that has it, where
@@ -60,10 +59,8 @@ class PWaveBook:
         main = int(self.n_beats.argmax())
         wave, size = families.unit(self.wave_mv[main])
         begin = SHAPE_BEFORE - P_WAVE.length // 2
-        stretches = sliding_window_view(family_shape_mv, P_WAVE.length, axis=1)[
-            :, begin - ALONE_LAG : begin + ALONE_LAG + 1
-        ]
-        direction, own_size = families.unit(stretches)
+        stretches = sliding_window_view(family_shape_mv, P_WAVE.length, axis=1)
+        direction, own_size = families.unit(stretches[:, begin - ALONE_LAG : begin + ALONE_LAG + 1])
         is_alike = (direction @ wave > ALONE_LIKE) & (np.abs(np.log(own_size / size)) < ALONE_SIZE)
         qrs_size = families.unit(QRS.of(family_shape_mv))[1]
         return is_alike.any(axis=1) & (qrs_size < ALONE_SMALL * qrs_size[main])

@@ -94,7 +94,8 @@ def _low(parts: list[NDArray[np.float64]]) -> float:
 
 def _near_noise(one: Seen) -> NDArray[np.float64]:
     """Noise over the QRS level, mean of the blocks near by, NaN where nothing is known."""
-    noise = one.blocks.noise / one.blocks.level
+    with np.errstate(divide="ignore", invalid="ignore"):  # silence has no level
+        noise = one.blocks.noise / one.blocks.level
     known = np.isfinite(noise)
     return _near_mean(np.where(known, noise, 0), known)
 

@@ -58,7 +58,7 @@ def usual_rr_outside_ms(
     middle = around[1:-3] & around[2:-2] & around[3:-1]
     if not middle.any():
         return usual_ms
-    in_run = near_sum(middle, 2) > 0  # the beats of the run and one on each side
+    in_run = _near_sum(middle, 2) > 0  # the beats of the run and one on each side
     return _usual(before_ms, after_ms, in_run)
 
 
@@ -187,15 +187,15 @@ def _share_of_jumps(rr_ms: NDArray[np.float32], is_plain: NDArray[np.bool_], rea
             now, then = rr_ms[lag:], rr_ms[:-lag]
             counted[lag:] = is_known[lag:] & is_known[:-lag]
             jump[lag:] = np.abs(now - then) > JUMP * np.minimum(now, then)
-        seen = near_sum(counted, reach_beats)
-        share = near_sum(jump & counted, reach_beats).astype(np.float32)
+        seen = _near_sum(counted, reach_beats)
+        share = _near_sum(jump & counted, reach_beats).astype(np.float32)
         share /= np.maximum(seen, 1)
         share[seen < 8] = 0
         np.minimum(least, share, out=least)
     return least
 
 
-def near_sum(flag: NDArray[np.bool_], reach: int) -> NDArray[np.int32]:
+def _near_sum(flag: NDArray[np.bool_], reach: int) -> NDArray[np.int32]:
     """Flags set within `reach` beats of each beat, shape (n_beats,)."""
     total = np.zeros(flag.size + 2 * reach + 1, dtype=np.int32)
     np.cumsum(flag, out=total[reach + 1 : reach + 1 + flag.size])

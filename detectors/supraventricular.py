@@ -19,11 +19,9 @@ RHYTHM_BEATS = 3  # with another P wave
 NEAR_BEATS = 100  # among which another P wave is the exception
 BEGINS = 0.88  # of the interval before: a group begins
 ENDS = 1.15  # of the interval before: a group ends
-P_EVIDENCE = np.array([0.0, -2.0, 0.5, 2.0])  # that a beat of a group is ectopic: HIDDEN, SAME, NEITHER, OTHER
-ENOUGH = 1.0  # evidence in sum over a group
-RELIABLE = (
-    0.8  # of the beats near by that begin or end such groups show the sinus P wave: else its absence says nothing
-)
+P_EVIDENCE = np.array([0, -4, 1, 4], dtype=np.int8)  # that a beat is ectopic: HIDDEN, SAME, NEITHER, OTHER
+ENOUGH = 2  # evidence in sum over a group
+RELIABLE = 0.8  # of the beats around groups near by that show the sinus P wave: with less its absence says nothing
 
 
 def supraventricular(beat_timing: Timing, p_wave: NDArray[np.int8], is_v: NDArray[np.bool_]) -> NDArray[np.bool_]:
@@ -48,29 +46,24 @@ def supraventricular(beat_timing: Timing, p_wave: NDArray[np.int8], is_v: NDArra
 
 def _from_elsewhere(before_ms: NDArray[np.float32], mark: NDArray[np.int8]) -> NDArray[np.bool_]:
     """Stretches with another P wave than most beats near by, that begin early or last for some beats."""
-    is_exception = rhythm.near_sum(mark == p_waves.SAME, NEAR_BEATS) > rhythm.near_sum(
-        mark == p_waves.OTHER, NEAR_BEATS
-    )
     first = np.flatnonzero(np.diff(mark, prepend=p_waves.HIDDEN))
     end = np.append(first[1:], mark.size)
+    is_exception = _count_near(mark == p_waves.SAME, first) > _count_near(mark == p_waves.OTHER, first)
     shortening = before_ms[first] / before_ms[np.maximum(first - 1, 0)]
     chosen = (shortening < SHORTER) | (end - first >= RHYTHM_BEATS) & (shortening < NOT_LATER)
-    chosen &= (mark[first] == p_waves.OTHER) & is_exception[first]
+    chosen &= (mark[first] == p_waves.OTHER) & is_exception
     return _inside(mark.size, first[chosen], end[chosen])
 
 
-def _in_groups(
-    before_ms: NDArray[np.float32],
-    mark: NDArray[np.int8],
-    breaks: NDArray[np.bool_],
-) -> NDArray[np.bool_]:
+def _in_groups(before_ms: NDArray[np.float32], mark: NDArray[np.int8], breaks: NDArray[np.bool_]) -> NDArray[np.bool_]:
     """Groups that begin and end at once between sinus beats and lack their P wave, even where they outnumber those.
 
     Where the sinus node itself pauses, the beats between two pauses have its P wave.
     """
     if mark.size < 2:
         return np.zeros(mark.size, dtype=bool)
-    ratio = np.concatenate([[np.nan], before_ms[1:] / before_ms[:-1]])
+    ratio = np.full_like(before_ms, np.nan)
+    np.divide(before_ms[1:], before_ms[:-1], out=ratio[1:])
     is_steady = (ratio > BEGINS) & (ratio < ENDS) & ~breaks  # False next to a gap
     edge = np.flatnonzero(~is_steady)
     first, end = edge[:-1], edge[1:]
@@ -78,12 +71,19 @@ def _in_groups(
     first, end = first[is_group], end[is_group]
     around = np.zeros(mark.size, dtype=bool)
     around[first - 1], around[end] = True, True
-    seen = rhythm.near_sum(around & (mark == p_waves.SAME), NEAR_BEATS)
-    is_reliable = seen > RELIABLE * rhythm.near_sum(around, NEAR_BEATS)
-    evidence = np.concatenate([[0.0], np.cumsum(P_EVIDENCE[mark])])
-    chosen = is_reliable[first] & (evidence[end] - evidence[first] > ENOUGH)
+    seen = _count_near(around & (mark == p_waves.SAME), first)
+    evidence = np.zeros(mark.size + 1, dtype=np.int32)
+    np.cumsum(P_EVIDENCE[mark], out=evidence[1:])
+    chosen = (seen > RELIABLE * _count_near(around, first)) & (evidence[end] - evidence[first] > ENOUGH)
     chosen &= (mark[first - 1] == p_waves.SAME) & (mark[end] == p_waves.SAME)
     return _inside(mark.size, first[chosen], end[chosen])
+
+
+def _count_near(flag: NDArray[np.bool_], beat: NDArray[np.int64]) -> NDArray[np.int32]:
+    """Flags set within NEAR_BEATS of the given beats, shape of `beat`."""
+    before = np.zeros(flag.size + 1, dtype=np.int32)
+    np.cumsum(flag, out=before[1:])
+    return before[np.minimum(beat + NEAR_BEATS + 1, flag.size)] - before[np.maximum(beat - NEAR_BEATS, 0)]
 
 
 def _inside(size: int, first: NDArray[np.int64], end: NDArray[np.int64]) -> NDArray[np.bool_]:
