@@ -46,13 +46,19 @@ def context(tables: Tables, recording: dict[str, Any], drawings: Drawings) -> di
 
 def _said(decisions: pl.DataFrame, fingerprint: str | None) -> dict[int, list[str]]:
     """Return what each reader last said of each family in decisions that count already, in words."""
-    of_families = decisions.filter(
-        (pl.col("decision_subject") == "family") & (pl.col("read_fingerprint") == fingerprint)
-    ).sort("reviewed_utc", "delivery_id")
+    seen = decisions.filter(pl.col("read_fingerprint") == fingerprint).sort(
+        "reviewed_utc", "delivery_id", "decision_order"
+    )
+    parts: dict[tuple[str, int], list[str]] = {}
+    for row in seen.filter(pl.col("decision_subject") == "part").iter_rows(named=True):
+        told = f"{row['automatic_class']} {_as_word(row)}"
+        parts.setdefault((row["delivery_id"], row["family"]), []).append(told)
+    of_families = seen.filter(pl.col("decision_subject") == "family")
     latest = of_families.unique(("family", "reader_code"), keep="last", maintain_order=True).sort("reader_code")
     said: dict[int, list[str]] = {}
-    for row in latest.iter_rows(named=True):
-        said.setdefault(row["family"], []).append(f"{row['reader_code']}: {_in_words(row)}")
+    for row in latest.filter(pl.col("decision").ne_missing("withdraw")).iter_rows(named=True):
+        told = _in_words(row, parts.get((row["delivery_id"], row["family"]), []))
+        said.setdefault(row["family"], []).append(f"{row['reader_code']}: {told}")
     return said
 
 
@@ -63,16 +69,18 @@ def _parts(family: dict[str, Any]) -> list[tuple[str, int]]:
     return held if len(held) > 1 else []
 
 
-def _in_words(row: dict[str, Any]) -> str:
+def _in_words(row: dict[str, Any], parts: list[str]) -> str:
     if row["is_mixed"]:
-        return "split"
-    if row["decision"] == "withdraw":
-        return "withdrawn"
+        return f"split, {'; '.join(parts) or 'nothing decided'}"
     if row["decision"] is None:
         return (
             f"same shape as family {row['same_as_family']}" if row["same_as_family"] is not None else "nothing decided"
         )
     return f"accepted as {row['automatic_class']}" if row["decision"] == "accept" else str(row["decision"])
+
+
+def _as_word(row: dict[str, Any]) -> str:
+    return "accepted" if row["decision"] == "accept" else f"as {row['decision']}"
 
 
 def _with_strips(items: list[dict[str, Any]], drawn: list[dict[str, Any]]) -> list[dict[str, Any]]:

@@ -48,7 +48,7 @@ def test_strips_beside_no_family_stand_at_the_end(rows, publish):
 
 
 def test_the_sheet_tells_what_readers_decided_before(rows, publish):
-    """Beside a family stands the latest word of each reader on it, under the analysis that the sheet shows only."""
+    """Beside a family stands the latest word of each reader on it, unless withdrawn, under the analysis of the sheet only."""
     decision = {"recording_id": RECORDING, "decision_subject": "family", "automatic_class": "V", "family": 1}
     for order, (reader, decided, is_mixed, fingerprint) in enumerate(
         (("A", "N", False, "f00dfeed"), ("A", "accept", False, "f00dfeed"), ("B", None, True, "f00dfeed"),
@@ -61,8 +61,12 @@ def test_the_sheet_tells_what_readers_decided_before(rows, publish):
             "reviewed_utc": datetime.fromisoformat(f"2026-04-{order + 1:02}"),
         }
         rows["decisions"].append(decision | more)
+    part = rows["decisions"][2] | {"decision_subject": "part", "is_mixed": None}
+    rows["decisions"].append(part | {"decision_order": 1, "automatic_class": "V", "decision": "accept"})
+    rows["decisions"].append(part | {"decision_order": 2, "automatic_class": "F", "decision": "noise"})
+    rows["decisions"].append(rows["decisions"][0] | {"delivery_id": "D9", "family": 2, "decision": "withdraw"})
     first, second, *_ = sheet_of(rows, publish)["items"]
-    assert first["said"] == ["A: accepted as V", "B: split"]
+    assert first["said"] == ["A: accepted as V", "B: split, V accepted; F as noise"]
     assert second["said"] == []
 
 
