@@ -8,7 +8,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from detectors import p_waves, rhythm, timing
+from detectors import p_waves, timing
 from detectors.timing import Timing
 from detectors.ventricular import P_ROOM_MS
 
@@ -21,7 +21,8 @@ BEGINS = 0.88  # of the interval before: a group begins
 ENDS = 1.15  # of the interval before: a group ends
 P_EVIDENCE = np.array([0, -4, 1, 4], dtype=np.int8)  # that a beat is ectopic: HIDDEN, SAME, NEITHER, OTHER
 ENOUGH = 2  # evidence in sum over a group
-RELIABLE = 0.8  # of the beats around groups near by that show the sinus P wave: with less its absence says nothing
+RELIABLE = 0.8  # of the late beats, or of those around groups, that show the sinus P wave: with less its absence says nothing
+LATE_BEATS = 20  # near by: fewer do not tell of fibrillation
 
 
 def supraventricular(beat_timing: Timing, p_wave: NDArray[np.int8], is_v: NDArray[np.bool_]) -> NDArray[np.bool_]:
@@ -30,18 +31,29 @@ def supraventricular(beat_timing: Timing, p_wave: NDArray[np.int8], is_v: NDArra
     `p_wave` holds marks of `p_waves`. Early beats and the fast rhythms that such a beat begins, where early means
     against the intervals near by or those of 12 beats ago, and at once: not a rate that rises beat by beat, not the beat
     after a ventricular one, and not a little early behind the sinus P wave. Beats with another P wave or none. Neither
-    where the rhythm is irregular as in atrial fibrillation.
+    where the rhythm is irregular as in atrial fibrillation, unless late beats show the sinus P wave.
     """
-    is_regular = rhythm.irregularity(beat_timing.before_ms, ~is_v) < timing.AF_IRREGULARITY
+    is_regular = timing.is_regular(beat_timing, ~is_v)
+    irregular = np.flatnonzero(~is_regular)
+    is_regular[irregular] = _are_among_sinus_beats(irregular, beat_timing, p_wave, is_v)
     is_told = is_regular & ~is_v & ((beat_timing.before_ms > P_ROOM_MS) | (p_wave == p_waves.OTHER))
     mark = np.where(is_told, p_wave, p_waves.HIDDEN)
     follows_v = np.concatenate([is_v[:1], is_v[:-1]])
     is_sinus = (mark == p_waves.SAME) & (beat_timing.before > CLEARLY_EARLY)
     may_begin = ~is_v & ~follows_v & timing.is_early(beat_timing) & ~is_sinus
-    found = timing.fast(beat_timing, ~is_v, may_begin, ~is_v)
+    found = timing.fast(beat_timing, is_regular, may_begin, ~is_v)
     found |= _from_elsewhere(beat_timing.before_ms, mark)
     found |= _in_groups(beat_timing.before_ms, mark, is_v | ~is_regular)
     return found & ~is_v
+
+
+def _are_among_sinus_beats(
+    beat: NDArray[np.int64], beat_timing: Timing, p_wave: NDArray[np.int8], is_v: NDArray[np.bool_]
+) -> NDArray[np.bool_]:
+    """Beats near which nearly all late ones show the sinus P wave: no fibrillation, however irregular the intervals are."""
+    is_late = (beat_timing.before_ms > beat_timing.after_ms) & (beat_timing.before_ms > P_ROOM_MS) & ~is_v
+    late, seen = _count_near(is_late, beat), _count_near(is_late & (p_wave == p_waves.SAME), beat)
+    return (late >= LATE_BEATS) & (seen > RELIABLE * late)
 
 
 def _from_elsewhere(before_ms: NDArray[np.float32], mark: NDArray[np.int8]) -> NDArray[np.bool_]:

@@ -47,7 +47,7 @@ class Marks(NamedTuple):
 def marks(timing: Timing) -> Marks:
     """Early, on time, and how a beat leans."""
     everything = np.ones(timing.before_ms.size, dtype=bool)
-    in_fast = fast(timing, everything, is_early(timing), everything)
+    in_fast = fast(timing, is_regular(timing, everything), is_early(timing), everything)
     return Marks(
         (timing.before < EARLY) | in_fast, keeps_time(timing) & ~in_fast, _lean(timing.before_ms, timing.after_ms)
     )
@@ -76,14 +76,18 @@ def lean_of_stretches(timing: Timing, lean: NDArray[np.float32], is_odd: NDArray
 
 
 def fast(
-    timing: Timing, is_plain: NDArray[np.bool_], may_begin: NDArray[np.bool_], may_be: NDArray[np.bool_]
+    timing: Timing, regular: NDArray[np.bool_], may_begin: NDArray[np.bool_], may_be: NDArray[np.bool_]
 ) -> NDArray[np.bool_]:
-    """Beats of stretches of short intervals that begin at once, outside irregular rhythm; one beat is a stretch."""
-    regular = rhythm.irregularity(timing.before_ms, is_plain) < AF_IRREGULARITY
+    """Beats of stretches of short intervals that begin at once, in regular rhythm; one beat is a stretch."""
     last_ms = np.concatenate([timing.before_ms[:1], timing.before_ms[:-1]])
     onset = may_begin & regular & (timing.before_ms < S_SUDDEN * last_ms)
     reference_ms = np.maximum(timing.usual_ms, rhythm.earlier_rr_ms(timing.usual_ms))
     return rhythm.fast_stretches(timing.before_ms, reference_ms, onset) & may_be & regular
+
+
+def is_regular(timing: Timing, is_plain: NDArray[np.bool_]) -> NDArray[np.bool_]:
+    """Where the intervals between plain beats are not as irregular as in fibrillation, shape (n_beats,)."""
+    return rhythm.irregularity(timing.before_ms, is_plain) < AF_IRREGULARITY
 
 
 def is_early(timing: Timing) -> NDArray[np.bool_]:

@@ -62,6 +62,18 @@ def test_irregular_rhythm_says_nothing() -> None:
     assert found([(rr, OTHER if n % 2 else SAME) for n, rr in enumerate(rng.uniform(500, 1200, 300))]) == []
 
 
+def test_sinus_p_wave_before_late_beats_is_no_fibrillation() -> None:
+    """Intervals as irregular as in fibrillation: early beats count where the late ones show the sinus P wave."""
+    early = np.random.default_rng(3).random(300) < 0.5
+    early[1:] &= ~early[:-1]
+    rr = np.where(early, 520, np.where(np.roll(early, 1), 1150, np.random.default_rng(4).uniform(800, 1100, 300)))
+    with_p, without = (
+        [(ms, HIDDEN if e else mark) for ms, e in zip(rr, early, strict=True)] for mark in (SAME, HIDDEN)
+    )
+    assert len(set(np.flatnonzero(early)) - set(found(with_p))) < 0.05 * early.sum()
+    assert len(found(without)) < 0.2 * early.sum()
+
+
 def test_few_beats() -> None:
     """No beat and one beat are no trouble."""
     assert found([]) == [] and found([(800, OTHER)]) == []

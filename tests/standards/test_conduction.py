@@ -41,6 +41,14 @@ def test_atrial_bigeminy_is_supraventricular():
     assert np.mean(analysis.beats.beat_class[those(beats, found, "N")] == "N") > 0.98
 
 
+def test_atrial_beats_in_irregular_turn_are_supraventricular():
+    """After one or two sinus beats an early atrial one, by chance: irregular, yet the sinus P waves rule out fibrillation."""
+    turns = np.random.default_rng(1).integers(0, 2, 150)
+    beats, analysis, found = analysed([step for n in turns for step in ([("N", 0.9)] * n + [("S", 0.6), ("N", 1.0)])])
+    assert np.mean(analysis.beats.beat_class[those(beats, found, "S")] == "S") > 0.9
+    assert np.mean(analysis.beats.beat_class[those(beats, found, "N")] == "N") > 0.97
+
+
 def test_atrial_groups_that_outnumber_the_sinus_beats_are_supraventricular():
     """Groups of atrial beats between single sinus beats after pauses are S, although the short interval is the usual one."""
     beats, analysis, found = analysed(([("N", 1.7)] + [("S", 0.65)] * 7) * 30)
