@@ -21,7 +21,7 @@ BEGINS = 0.88  # of the interval before: a group begins
 ENDS = 1.15  # of the interval before: a group ends
 P_EVIDENCE = np.array([0, -4, 1, 4], dtype=np.int8)  # that a beat is ectopic: HIDDEN, SAME, NEITHER, OTHER
 ENOUGH = 2  # evidence in sum over a group
-RELIABLE = 0.8  # of the late beats, or of those around groups, that show the sinus P wave: with less its absence says nothing
+RELIABLE = 0.8  # of late beats, or of those around groups, that show the sinus P wave: else its absence says nothing
 LATE_BEATS = 20  # near by: fewer do not tell of fibrillation
 
 
