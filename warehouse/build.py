@@ -16,6 +16,7 @@ patient by patient read `anew`, models about the whole programme read the table 
 
 from __future__ import annotations
 
+from collections import defaultdict
 from collections.abc import Iterable, Iterator, Mapping
 from datetime import datetime
 from functools import cached_property
@@ -75,6 +76,9 @@ class TrendBuild:
     ) -> None:
         self.lake = lake
         self.parts = [p for p in parts if p.table == "fingerprints" or p.fingerprint in ("", fingerprint)]
+        self._parts_of: defaultdict[str, list[Part]] = defaultdict(list)
+        for part in self.parts:
+            self._parts_of[part.table].append(part)
         self.fingerprint = fingerprint
         self._register = register
         self._settings = settings
@@ -145,7 +149,7 @@ class TrendBuild:
     def _load_lake(self) -> None:
         for name, table in schema.LAKE.items():
             if name not in (*_NOT_FOR_MODELS, *OF_RECORDING, *READ_IN_PLACE):
-                self._insert_parts(table, [part for part in self.parts if part.table == name])
+                self._insert_parts(table, self._parts_of[name])
 
     def _keep_patients(self) -> None:
         own = patient_grounds(
@@ -162,7 +166,7 @@ class TrendBuild:
     def _recorded_span(self) -> tuple[datetime, datetime]:
         """First and last instant of all recordings, of withdrawn ones too where the standing edition had them."""
         read_before = set(self.standing.part_paths("recordings")) if self.standing else set()
-        fresh = [part.path for part in self.parts if part.table == "recordings" and part.path not in read_before]
+        fresh = [part.path for part in self._parts_of["recordings"] if part.path not in read_before]
         spans = scan_parts(self.lake, schema.LAKE["recordings"], fresh).select("start_utc", "end_utc").collect()
         if self.standing:
             spans = pl.concat([spans, self.standing.table("recordings").select("start_utc", "end_utc")])
@@ -188,7 +192,7 @@ class TrendBuild:
 
     def _load_recordings(self) -> None:
         for name in (*OF_RECORDING, *READ_IN_PLACE):
-            parts = [part for part in self.parts if part.table == name and part.key not in self._kept_recordings]
+            parts = [part for part in self._parts_of[name] if part.key not in self._kept_recordings]
             if name in READ_IN_PLACE and parts:
                 query = parts_query(schema.LAKE[name], [f"{self.lake}/{part.path}" for part in parts])
                 self.connection.execute(f"CREATE VIEW lake.{name} AS {query}")
