@@ -22,8 +22,8 @@ MERGED_ON_TIME = 0.08  # either side of the usual interval
 MERGED_WIDTH = 0.85  # of the family's
 MERGED_EARLY = 0.6  # of the family's beats
 
-BEAT_TERMS = ("constant", "family", "early", "lean", "run_lean", "loose")
-BEAT_WEIGHTS = np.array([-0.2, 1.38, 1.11, 1.13, 0.52, -1.35])
+BEAT_TERMS = ("constant", "family", "early", "on_time", "lean", "run_lean", "loose")
+BEAT_WEIGHTS = np.array([-0.17, 1.48, 0.87, -0.68, 1.16, 0.63, -0.83])
 
 
 class Models(NamedTuple):
@@ -92,6 +92,7 @@ def beat_terms(marks: Marks, member: families.Membership, judged: Judged) -> Ite
     yield np.where(is_loose & ~marks.early, np.minimum(odds, 0), odds)
     for value, usual in (
         (marks.early, judged.habits.early),
+        (marks.on_time, judged.habits.on_time),
         (marks.lean, judged.habits.lean),
         (judged.run_lean, run_lean),
     ):

@@ -20,7 +20,13 @@ ABERRANT = 0.4 * np.exp(-0.5 * ((T + 8) / 30) ** 2) + 0.2 * T_WAVE
 NARROW_AND_WIDE = np.stack([NARROW, WIDE]).astype(np.float32)
 
 
-def classified(rr_ms: list[float], family: list[int], *shapes: np.ndarray, narrow: tuple[int, ...] = ()) -> list[str]:
+def classified(
+    rr_ms: list[float],
+    family: list[int],
+    *shapes: np.ndarray,
+    narrow: tuple[int, ...] = (),
+    models: classify.Models = classify.MODELS,
+) -> list[str]:
     """Classes of a chain of beats with given intervals before them and families; beats `narrow` are 0.7 times as wide."""
     before = np.array(rr_ms, dtype=np.float32)
     after = np.append(before[1:], np.nan).astype(np.float32)
@@ -31,7 +37,7 @@ def classified(rr_ms: list[float], family: list[int], *shapes: np.ndarray, narro
     shape_mv = np.stack(shapes).astype(np.float32)
     spread = spread_ms(shape_mv)[number]
     spread[list(narrow)] *= 0.7
-    return classify.classify(timing, member, no_marks(number), spread, shape_mv).beat_class.tolist()
+    return classify.classify(timing, member, no_marks(number), spread, shape_mv, models).beat_class.tolist()
 
 
 def no_marks(beats: np.ndarray) -> np.ndarray:
@@ -122,6 +128,16 @@ def test_lone_beat_that_is_not_early_is_no_ventricular_one() -> None:
         timing, member, no_marks(number), number * np.float32(1), np.stack([NARROW, WIDE]).astype(np.float32)
     )
     assert labels.beat_class[[20, 25]].tolist() == ["V", "N"]
+
+
+def test_beats_on_time_are_told_from_the_others_of_their_family() -> None:
+    """Timing on both sides is evidence within a family: on its own it parts beats on time from those between pauses."""
+    only_on_time = np.where(np.array(classify.BEAT_TERMS) == "on_time", classify.BEAT_WEIGHTS, 0)
+    rr, family = ([800] * 9 + [500, 1100] + [800] * 4) * 12, ([0] * 9 + [1, 0] + [0, 1, 0, 0]) * 12
+    classes = classified(rr, family, NARROW, WIDE, models=classify.MODELS._replace(beat=only_on_time))
+    of_family = [(c, before) for c, f, before in zip(classes, family, rr, strict=True) if f == 1]
+    assert {c for c, before in of_family if before == 500} == {"V"}
+    assert {c for c, before in of_family if before == 800} == {"N"}
 
 
 def test_no_family_at_all_is_unclassifiable() -> None:
