@@ -22,6 +22,7 @@ ENDS = 1.15  # of the interval before: a group ends
 P_EVIDENCE = np.array([0, -4, 1, 4], dtype=np.int8)  # that a beat is ectopic: HIDDEN, SAME, NEITHER, OTHER
 ENOUGH = 2  # evidence in sum over a group
 RELIABLE = 0.8  # of late beats, or of those around groups, that show the sinus P wave: else its absence says nothing
+SHARED = 0.5  # of early beats with the P wave of the late ones: it is a flutter wave
 LATE_BEATS = 20  # near by: fewer do not tell of fibrillation
 
 
@@ -50,10 +51,17 @@ def supraventricular(beat_timing: Timing, p_wave: NDArray[np.int8], is_v: NDArra
 def _are_among_sinus_beats(
     beat: NDArray[np.int64], beat_timing: Timing, p_wave: NDArray[np.int8], is_v: NDArray[np.bool_]
 ) -> NDArray[np.bool_]:
-    """Beats near which nearly all late ones show the sinus P wave: no fibrillation, however irregular the intervals are."""
+    """Beats near which nearly all late ones show the sinus P wave and early ones do not: no fibrillation.
+
+    In flutter the same atrial wave precedes late and early beats.
+    """
     is_late = (beat_timing.before_ms > beat_timing.after_ms) & (beat_timing.before_ms > P_ROOM_MS) & ~is_v
-    late, seen = _count_near(is_late, beat), _count_near(is_late & (p_wave == p_waves.SAME), beat)
-    return (late >= LATE_BEATS) & (seen > RELIABLE * late)
+    is_early = (beat_timing.before_ms < BEGINS * beat_timing.after_ms) & ~is_v
+    is_same = p_wave == p_waves.SAME
+    late, early, seen, shared = (
+        _count_near(c, beat) for c in (is_late, is_early, is_late & is_same, is_early & is_same)
+    )
+    return (late >= LATE_BEATS) & (seen > RELIABLE * late) & (shared < SHARED * early)
 
 
 def _from_elsewhere(before_ms: NDArray[np.float32], mark: NDArray[np.int8]) -> NDArray[np.bool_]:

@@ -77,3 +77,9 @@ def test_sinus_p_wave_before_late_beats_is_no_fibrillation() -> None:
 def test_few_beats() -> None:
     """No beat and one beat are no trouble."""
     assert found([]) == [] and found([(800, OTHER)]) == []
+
+
+def test_wave_before_early_beats_too_is_a_flutter_wave() -> None:
+    """Flutter with variable block: the same wave before late and early beats is no sinus P wave, so none is ectopic."""
+    rr = 230.0 * np.random.default_rng(5).choice([3, 4, 5], 300)
+    assert len(found([(ms, SAME) for ms in rr])) < 0.05 * rr.size
