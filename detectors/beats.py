@@ -84,11 +84,12 @@ class Growing:
 
 
 def is_artefact(found: Found, timing: Timing) -> NDArray[np.bool_]:
-    """Detections of rare shape that are no QRS, shape (n_beats,)."""
+    """Detections that are no QRS, shape (n_beats,): T waves of wide beats, and what is of rare shape."""
     in_family = np.bincount(found.family.astype(np.int64) + 1, minlength=1)
     in_family[0] = 0
     is_rare = in_family[found.family + 1] <= RARE
-    return qrs.is_interloper(found.energy, timing.before_ms, timing.after_ms, timing.usual_ms, is_rare)
+    is_stray = qrs.is_interloper(found.energy, timing.before_ms, timing.after_ms, timing.usual_ms, is_rare)
+    return is_stray | qrs.is_t_wave(found.energy, timing.before_ms)
 
 
 def beat_table(

@@ -33,6 +33,7 @@ THRESHOLD = 0.32  # of the local level
 LOW_THRESHOLD = 0.13  # of the local level, for the search in gaps
 REFRACTORY_S = 0.24
 TWIN_S = 0.20  # two bends of one wide QRS; no two beats come so close
+SHORTEST_MS = 230.0  # before a beat that has less slope than the one before it: else it is the T wave of that one
 T_WAVE_S = 0.38
 T_WAVE_ENERGY = 0.8  # a T wave has less energy than this share of its QRS
 T_WAVE_SHARPNESS = 0.45  # and bends less sharply than this share of its QRS
@@ -249,6 +250,15 @@ def without_twins(working: NDArray[np.float64], energy: NDArray[np.float32]) -> 
     drop[1:] |= is_close & later_is_weaker
     drop[:-1] |= is_close & ~later_is_weaker
     return order[~drop]
+
+
+def is_t_wave(energy: NDArray[np.float32], before_ms: NDArray[np.float32]) -> NDArray[np.bool_]:
+    """Detections that follow a steeper one sooner than any beat could, judged once all are known, shape (n_beats,).
+
+    Judged late, because they belong to the families by which the steeper one is known: dropped at once, those change.
+    """
+    is_weaker = np.diff(energy, prepend=0) < 0
+    return is_weaker & (before_ms < SHORTEST_MS)
 
 
 def is_interloper(

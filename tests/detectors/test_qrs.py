@@ -47,6 +47,14 @@ def test_level_survives_one_huge_artefact() -> None:
     assert len(missed) <= 1
 
 
+def test_a_weaker_detection_sooner_than_any_beat_is_a_t_wave() -> None:
+    """The second one goes where it follows a steeper one within 230 ms; the steeper and the later ones stay."""
+    energy = np.array([5, 3, 5, 3, 3, 5], dtype=np.float32)
+    before = np.array([np.nan, 205, 700, 250, 205, 205], dtype=np.float32)
+    # The shortest interval of two beats in the reference records is 250 ms (203); common practice, no source.
+    assert qrs.is_t_wave(energy, before).tolist() == [False, True, False, False, False, False]
+
+
 def test_weak_rare_detection_between_beats_on_time_is_an_interloper() -> None:
     """Of rare beats, those far weaker than both neighbours, or weak between beats that keep time, are no QRS."""
     energy = np.array([1.0, 0.3, 1.0, 0.7, 1.0, 0.7, 1.0], dtype=np.float32)
