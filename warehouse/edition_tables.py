@@ -78,7 +78,8 @@ def _rows_anew(build: TrendBuild, name: str) -> dict[int, pl.DataFrame]:
     numbers = owners.replace_strict(
         codes, [slice_of(code, build.slices) for code in codes], return_dtype=pl.Int64, default=None
     )
-    return {number: rows.filter(numbers == number) for number in build.slices_anew}
+    written = build.slices_anew if build.standing else range(build.slices)
+    return {number: rows.filter(numbers == number) for number in written}
 
 
 def _kept_rows(build: TrendBuild, name: str, file: Path) -> pl.DataFrame:

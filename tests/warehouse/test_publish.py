@@ -54,6 +54,16 @@ def test_the_same_tables_make_the_same_bytes(programme: Any, tmp_path: Path) -> 
         assert (a / file).read_bytes() == (b / file).read_bytes(), file
 
 
+def test_a_first_publication_has_slices_without_a_patient(programme: Any) -> None:
+    """Patients fall into slices by a checksum, and a slice that none falls into is a file without rows."""
+    with programme.built() as build:
+        build.slices = 64
+        publish(build, programme.folder / "published", site=_site, stamp={})
+    published = Published(programme.folder / "published")
+    assert min(told["rows"] for told in published.files("hours").values()) == 0
+    assert published.table("hours").height > 0
+
+
 def test_an_open_reader_stays_with_its_edition(programme: Any) -> None:
     """A reader that opened before a switch sees the old tables to the end, a new one sees the new ones."""
     _publish(programme)
