@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-from collections import deque
-from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import Future, ThreadPoolExecutor
+from collections.abc import Callable, Sequence
 from typing import NamedTuple
 
 import numpy as np
@@ -147,7 +145,8 @@ def _read(
     waiting: list[chunks.ChunkBeats] = []
     blocks: list[chunks.Blocks] = []
     done, first_beat = 0, table.n_beats
-    for end, found, quiet in _chunks_ahead(segment, scale, chunk_s):
+    for begin, end in chunks.cuts(segment.n_samples, scale.fs_hz, chunk_s):
+        found, quiet = chunks.read_chunk(segment, begin, end, scale)
         waiting = _enter_full_batches(books, table, number, [*waiting, found])
         blocks.append(quiet)
         now = min(round(end * scale.fs_hz / signal.WORKING_FS_HZ), segment.n_samples)
@@ -159,21 +158,6 @@ def _read(
             table.append(_enter(books, number, rest))
     mine = table.since(first_beat)
     return quality.look(segment.n_samples, chunks.join_blocks(blocks), mine.working, mine.likeness)
-
-
-def _chunks_ahead(
-    segment: Segment, scale: chunks.Scale, chunk_s: float
-) -> Iterator[tuple[int, chunks.ChunkBeats, chunks.Blocks]]:
-    """End in working samples and content of each chunk; a thread reads the next one while this one is used."""
-    with ThreadPoolExecutor(1) as helper:
-        coming: deque[tuple[int, Future[tuple[chunks.ChunkBeats, chunks.Blocks]]]] = deque()
-        for begin, end in chunks.cuts(segment.n_samples, scale.fs_hz, chunk_s):
-            coming.append((end, helper.submit(chunks.read_chunk, segment, begin, end, scale)))
-            if len(coming) == 2:
-                now, read = coming.popleft()
-                yield now, *read.result()
-        for now, read in coming:
-            yield now, *read.result()
 
 
 def _enter_full_batches(

@@ -299,7 +299,7 @@ class SignalReader:
         self._ends = {segment: np.cumsum([p.rows for p in blocks]) for segment, blocks in self._blocks.items()}
         self._decoded: deque[tuple[Part, NDArray[np.int16]]] = deque(maxlen=2 if ahead else 1)
         self._helper = ThreadPoolExecutor(1) if ahead else None
-        self._coming: dict[Part, Future[NDArray[np.int16]]] = {}
+        self._coming: dict[Part, Future[pl.Series]] = {}
 
     @property
     def segment_samples(self) -> dict[int, int]:
@@ -329,12 +329,11 @@ class SignalReader:
         for known, samples in self._decoded:
             if known == part:
                 return samples
-        decoded = self._coming[part].result() if part in self._coming else self._decode(part)
+        steps = self._coming[part].result() if part in self._coming else self._steps(part)
         if self._helper:
-            self._coming = {next_one: self._helper.submit(self._decode, next_one) for next_one in following}
-        self._decoded.append((part, decoded))
-        return decoded
+            self._coming = {next_one: self._helper.submit(self._steps, next_one) for next_one in following}
+        self._decoded.append((part, _samples(steps)))
+        return self._decoded[-1][1]
 
-    def _decode(self, part: Part) -> NDArray[np.int16]:
-        content = _content(self._lake, part, self._check_hash)
-        return _samples(pl.read_parquet(content, columns=["step"]).to_series())
+    def _steps(self, part: Part) -> pl.Series:
+        return pl.read_parquet(_content(self._lake, part, self._check_hash), columns=["step"]).to_series()

@@ -31,6 +31,7 @@ from flows.programme import make_folder
 from warehouse.parts import BLOCK_SAMPLES
 
 BLOCK_BYTES = 2**20
+ONE_THREAD = {"OPENBLAS_NUM_THREADS": "1"}  # as `flows` sets before it loads numpy, which this script loads first
 REST, IDLE = "rest", "nothing new"
 FLOORS = {
     "read": "copy and SHA-256 of the file",
@@ -57,7 +58,7 @@ def main() -> None:
     print(f"{recording.stat().st_size / 1e6:.0f} MB, {asked.days:g} days at {asked.fs_hz} Hz")
     told = subprocess.run(
         [sys.executable, "-m", "tests.benchmarks.whole_job", str(asked.folder), "--inside"],
-        check=True, capture_output=True, text=True,
+        check=True, capture_output=True, text=True, env=os.environ | ONE_THREAD,
     ).stdout  # fmt: skip
     floors = _floors(programme, recording, asked.folder / "floor")
     _print(json.loads(told), floors)
