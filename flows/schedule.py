@@ -238,7 +238,8 @@ def nightly_schedule(cron: str, zone: str) -> Schedule:
         return Cron(cron, timezone=zone)
     except ValueError:
         raise CronError(
-            f'--cron {cron!r} cannot be read; expected five fields, for example "0 3 * * *" for every night at three'
+            f"--cron {cron!r} cannot be read; expected five fields, minute 0-59, hour 0-23, day, month and day of the "
+            'week, for example "0 3 * * *" for every night at three'
         ) from None
 
 

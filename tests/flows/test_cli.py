@@ -82,6 +82,7 @@ def test_a_run_loads_no_library_of_distributions():
         (["retry", "{coast}", "none.edf"], 1, "none.edf"),
         (["score", "{empty}"], 1, "no record can be scored"),
         (["schedule", "{coast}", "--cron", "at night"], 1, "expected five fields"),
+        (["schedule", "{coast}", "--cron", "99 3 * * *"], 1, "minute 0-59"),
     ],
     ids=lambda value: " ".join(value) if isinstance(value, list) else "",
 )
